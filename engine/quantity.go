@@ -1,0 +1,138 @@
+package engine
+
+import (
+	"strconv"
+	"time"
+
+	"leadline.example/engine/decide"
+)
+
+// QuantityID names a quantity; see CheckID for its form.
+type QuantityID string
+
+// InstrumentID names an instrument; same form as a QuantityID.
+type InstrumentID string
+
+// ReadingID names a reading among those of one quantity; 1 to 128 bytes of
+// UTF-8, or empty for a reading without one.
+type ReadingID string
+
+// QuantityNumber is the ledger's short name of a quantity: 1, 2, 3 ... in the
+// order of first declaration, never used again.
+type QuantityNumber uint32
+
+// PriorForm tells which fields of a Prior count.
+type PriorForm uint8
+
+const (
+	PriorVague    PriorForm = iota // flat over the whole line
+	PriorNormal                    // Mean, StandardDeviation
+	PriorInterval                  // Low, High, Probability: a central interval
+)
+
+// Prior is what was known of the level before any reading. It is kept as it
+// was declared; Moments gives the normal distribution it stands for.
+type Prior struct {
+	Form              PriorForm
+	Mean              float64
+	StandardDeviation float64
+	Low, High         float64
+	Probability       float64
+	HasTime           bool
+	Time              Instant // when it holds; without HasTime, at the earliest applied reading
+}
+
+// RepeatabilityForm tells which fields of a Repeatability count.
+type RepeatabilityForm uint8
+
+const (
+	RepeatabilityAbsent           RepeatabilityForm = iota // every reading brings its own
+	RepeatabilityKnown                                     // StandardDeviation
+	RepeatabilityLearned                                   // Guess, Worth
+	RepeatabilityLearnedReference                          // the reference prior 1/r
+)
+
+// Repeatability is the random part of one reading, as a standard deviation r.
+type Repeatability struct {
+	Form              RepeatabilityForm
+	StandardDeviation float64 // r, above 0
+	Guess             float64 // r^2 ~ scaled inverse chi-squared(Worth, Guess^2)
+	Worth             float64 // degrees of freedom, above 0
+}
+
+// Learned tells whether r is learned from the readings.
+func (r Repeatability) Learned() bool {
+	return r.Form == RepeatabilityLearned || r.Form == RepeatabilityLearnedReference
+}
+
+// DynamicsForm tells how the true value may move.
+type DynamicsForm uint8
+
+const (
+	DynamicsConstant   DynamicsForm = iota
+	DynamicsRandomWalk              // StandardDeviation, Per
+)
+
+// Dynamics says how the true value may move: Var[theta(t+h) - theta(t)] is
+// StandardDeviation^2 h / Per for a random walk.
+type Dynamics struct {
+	Form              DynamicsForm
+	StandardDeviation float64
+	Per               time.Duration
+}
+
+// Tolerance is the range of permissible true values; the limits conform.
+type Tolerance struct {
+	HasLower, HasUpper bool
+	Lower, Upper       float64
+}
+
+// Declared tells whether there is any limit.
+func (t Tolerance) Declared() bool { return t.HasLower || t.HasUpper }
+
+// Declaration is all that a user states of a quantity. Two declarations are
+// the same if they compare equal with ==.
+type Declaration struct {
+	Unit          string
+	Description   string
+	Prior         Prior
+	Repeatability Repeatability
+	Dynamics      Dynamics
+	Tolerance     Tolerance
+	Rule          decide.Rule // the zero Rule means decide.DefaultRule
+}
+
+// SameBelief tells whether d and e give every set of readings the same belief,
+// so that going from one to the other needs no refolding.
+func (d Declaration) SameBelief(e Declaration) bool {
+	return d.Prior == e.Prior && d.Repeatability == e.Repeatability && d.Dynamics == e.Dynamics
+}
+
+// DecisionRule returns the rule in force: the declared one or the default.
+func (d Declaration) DecisionRule() decide.Rule {
+	if d.Rule == (decide.Rule{}) {
+		return decide.DefaultRule
+	}
+	return d.Rule
+}
+
+// Quantity is a declaration with what the service adds to it.
+type Quantity struct {
+	ID          QuantityID
+	Number      QuantityNumber
+	Declaration Declaration
+	Revision    uint32 // from 1, one more at each change of the declaration and at each revival
+	CreateTime  Instant
+	UpdateTime  Instant
+	Retired     bool
+	RetireTime  Instant
+}
+
+// ETag changes whenever anything of the quantity but its belief does.
+func (q Quantity) ETag() string {
+	tag := strconv.FormatUint(uint64(q.Revision), 10)
+	if q.Retired {
+		tag += "-retired"
+	}
+	return tag
+}

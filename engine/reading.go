@@ -1,0 +1,54 @@
+package engine
+
+// Reading is one indication as it was sent.
+type Reading struct {
+	Quantity                  QuantityID
+	Value                     float64 // in the quantity's unit
+	HasTime                   bool
+	Time                      Instant // if not HasTime, the receipt instant of its request
+	Instrument                InstrumentID
+	HasUncertainty            bool
+	RandomStandardUncertainty float64
+	Unit                      string // empty: the quantity's
+	ID                        ReadingID
+}
+
+// Status is what became of a reading.
+type Status uint8
+
+const (
+	Applied Status = iota + 1
+	Duplicate
+	Refused
+)
+
+// String returns the word of the interface.
+func (s Status) String() string {
+	switch s {
+	case Applied:
+		return "APPLIED"
+	case Duplicate:
+		return "DUPLICATE"
+	case Refused:
+		return "REFUSED"
+	}
+	return "UNSPECIFIED"
+}
+
+// Result is the answer to one reading of a batch.
+type Result struct {
+	ReadingID ReadingID
+	Time      Instant // the reading's, or the one it was given
+	Status    Status
+	Reason    Reason // of a refusal, else empty
+	Detail    string // of a refusal: one sentence with field and remedy
+	Position  Position
+}
+
+// Batch is the readings of one request.
+type Batch struct {
+	Readings  []Reading
+	Receive   Instant
+	Principal string
+	RequestID string
+}

@@ -1,0 +1,3 @@
+module leadline.example
+
+go 1.26
