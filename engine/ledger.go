@@ -37,7 +37,7 @@ type Record struct {
 
 	// Of declarations.
 	Quantity    QuantityID
-	Declaration Declaration
+	Declaration *Declaration // never changed once recorded
 }
 
 // Row is the index entry of an applied reading: what a fold needs of it.

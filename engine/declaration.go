@@ -1,0 +1,195 @@
+package engine
+
+import (
+	"math"
+
+	"leadline.example/engine/decide"
+	"leadline.example/engine/posterior"
+)
+
+// Magnitudes that a value, a limit or a standard deviation may have. Within
+// them no square of a ratio that the statistics form overflows.
+const (
+	MinMagnitude = 1e-100
+	MaxMagnitude = 1e100
+	// maxRatio bounds |value| / r: a reading whose square in units of r would
+	// overflow is refused.
+	maxRatio = 1e150
+	maxWorth = 1e9
+)
+
+// Check returns an *Error for the first thing wrong with d, else nil.
+func (d *Declaration) Check() error {
+	checks := []func() *Error{
+		d.checkText, d.checkPrior, d.checkRepeatability, d.checkDynamics, d.checkTolerance, d.checkRule,
+	}
+	for _, check := range checks {
+		if err := check(); err != nil {
+			return err
+		}
+	}
+	return nil
+}
+
+func (d *Declaration) checkText() *Error {
+	if len(d.Unit) > MaxUnitBytes || !printable(d.Unit) {
+		return refuse(InvalidField, "unit", "unit has %d bytes or a character that isn't printable; give at most %d printable bytes", len(d.Unit), MaxUnitBytes)
+	}
+	if len(d.Description) > MaxDescriptionBytes || !printable(d.Description) {
+		return refuse(InvalidField, "description", "description has %d bytes or a character that isn't printable; give at most %d printable bytes", len(d.Description), MaxDescriptionBytes)
+	}
+	return nil
+}
+
+func (d *Declaration) checkPrior() *Error {
+	p := &d.Prior
+	if p.HasTime && !p.Time.Valid() {
+		return refuse(InvalidField, "prior.time", "prior.time lies outside 1678 to 2262; give a time within")
+	}
+	switch p.Form {
+	case PriorNormal:
+		if err := checkNumber("prior.mean", p.Mean); err != nil {
+			return err
+		}
+		return checkDeviation("prior.standard_deviation", p.StandardDeviation)
+	case PriorInterval:
+		return p.checkInterval()
+	}
+	return nil
+}
+
+func (p *Prior) checkInterval() *Error {
+	if err := checkNumber("prior.low", p.Low); err != nil {
+		return err
+	}
+	if err := checkNumber("prior.high", p.High); err != nil {
+		return err
+	}
+	if p.Low >= p.High {
+		return refuse(InvalidField, "prior.high", "prior.high is %v, not above prior.low %v; give low < high", p.High, p.Low)
+	}
+	if !(p.Probability > 0 && p.Probability < 1) {
+		return refuse(InvalidField, "prior.probability", "prior.probability is %v; give a number above 0 and below 1", p.Probability)
+	}
+	sd := posterior.IntervalPrior(p.Low, p.High, p.Probability).SD
+	if !(sd >= MinMagnitude && sd <= MaxMagnitude) {
+		return refuse(InvalidField, "prior.probability", "prior.low, prior.high and prior.probability %v give a standard deviation of %v; give an interval that leads to 1e-100 to 1e100", p.Probability, sd)
+	}
+	return nil
+}
+
+func (d *Declaration) checkRepeatability() *Error {
+	r := &d.Repeatability
+	switch r.Form {
+	case RepeatabilityKnown:
+		return checkDeviation("repeatability.standard_deviation", r.StandardDeviation)
+	case RepeatabilityLearned:
+		if err := checkDeviation("repeatability.learned.guess", r.Guess); err != nil {
+			return err
+		}
+		if !(r.Worth > 0 && r.Worth <= maxWorth) {
+			return refuse(InvalidField, "repeatability.learned.worth", "repeatability.learned.worth is %v; give the number of degrees of freedom that the guess is worth, above 0 and at most 1e9", r.Worth)
+		}
+	}
+	return nil
+}
+
+func (d *Declaration) checkDynamics() *Error {
+	if d.Dynamics.Form != DynamicsRandomWalk {
+		return nil
+	}
+	if d.Repeatability.Learned() {
+		return refuse(NotSupported, "repeatability.learned", "repeatability.learned is not supported together with dynamics.random_walk; give repeatability.standard_deviation, or dynamics.constant")
+	}
+	if err := checkDeviation("dynamics.random_walk.standard_deviation", d.Dynamics.StandardDeviation); err != nil {
+		return err
+	}
+	if d.Dynamics.Per <= 0 {
+		return refuse(InvalidField, "dynamics.random_walk.per", "dynamics.random_walk.per is %v; give a duration above 0, such as \"86400s\"", d.Dynamics.Per)
+	}
+	return nil
+}
+
+func (d *Declaration) checkTolerance() *Error {
+	t := &d.Tolerance
+	if t.HasLower {
+		if err := checkNumber("tolerance.lower", t.Lower); err != nil {
+			return err
+		}
+	}
+	if t.HasUpper {
+		if err := checkNumber("tolerance.upper", t.Upper); err != nil {
+			return err
+		}
+	}
+	if t.HasLower && t.HasUpper && t.Lower >= t.Upper {
+		return refuse(InvalidField, "tolerance.upper", "tolerance.upper is %v, not above tolerance.lower %v; give lower < upper", t.Upper, t.Lower)
+	}
+	return nil
+}
+
+func (d *Declaration) checkRule() *Error {
+	if d.Rule == (decide.Rule{}) {
+		return nil
+	}
+	if p := d.Rule.ConformProbability; !(p > 0.5 && p <= 1) {
+		return refuse(InvalidField, "decision_rule.conform_probability", "decision_rule.conform_probability is %v; give a number above 0.5 and at most 1", p)
+	}
+	if p := d.Rule.BreachProbability; !(p > 0.5 && p <= 1) {
+		return refuse(InvalidField, "decision_rule.breach_probability", "decision_rule.breach_probability is %v; give a number above 0.5 and at most 1", p)
+	}
+	return nil
+}
+
+// checkNumber accepts 0 and what inRange accepts.
+func checkNumber(field string, x float64) *Error {
+	if !inRange(x) {
+		return refuse(InvalidField, field, "%s is %v; give 0 or a number of magnitude 1e-100 to 1e100", field, x)
+	}
+	return nil
+}
+
+func checkDeviation(field string, s float64) *Error {
+	if !(s >= MinMagnitude && s <= MaxMagnitude) {
+		return refuse(InvalidField, field, "%s is %v; give a number above 0, from 1e-100 to 1e100", field, s)
+	}
+	return nil
+}
+
+// inRange tells whether x is 0 or of an admissible magnitude; NaN is not.
+func inRange(x float64) bool {
+	a := math.Abs(x)
+	return x == 0 || a >= MinMagnitude && a <= MaxMagnitude
+}
+
+// levelPrior returns the prior of the level as moments.
+func (d *Declaration) levelPrior() posterior.Prior {
+	switch p := d.Prior; p.Form {
+	case PriorNormal:
+		return posterior.Prior{Mean: p.Mean, SD: p.StandardDeviation}
+	case PriorInterval:
+		return posterior.IntervalPrior(p.Low, p.High, p.Probability)
+	}
+	return posterior.Prior{Vague: true}
+}
+
+// noise returns what is declared of the repeatability.
+func (d *Declaration) noise() posterior.Noise {
+	switch r := d.Repeatability; r.Form {
+	case RepeatabilityKnown:
+		return posterior.Noise{Known: true, SD: r.StandardDeviation}
+	case RepeatabilityLearned:
+		return posterior.Noise{Guess: r.Guess, Worth: r.Worth}
+	case RepeatabilityLearnedReference:
+		return posterior.Noise{}
+	}
+	return posterior.Noise{Absent: true}
+}
+
+// walkVariance returns the variance that a random walk gains in a time given
+// in nanoseconds: d^2 h / T (design: Var[theta(t+h) - theta(t)]; Harvey 1989,
+// Forecasting, Structural Time Series Models, 9.1, from memory).
+func (d *Declaration) walkVariance(nanoseconds float64) float64 {
+	s := d.Dynamics.StandardDeviation
+	return s * s * (nanoseconds / float64(d.Dynamics.Per))
+}

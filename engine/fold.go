@@ -1,0 +1,135 @@
+package engine
+
+import (
+	"cmp"
+
+	"leadline.example/engine/posterior"
+)
+
+// entry is a row with the reading's ID, which the canonical order may need.
+// IDs of rows that come from storage are filled in only where times tie.
+type entry struct {
+	Row
+	ID ReadingID
+}
+
+// compareEntries is the canonical order: time, then instrument (none so far),
+// then reading ID, then value. What is left equal folds the same either way;
+// the position makes the order total.
+func compareEntries(a, b entry) int {
+	if c := cmp.Compare(a.Time, b.Time); c != 0 {
+		return c
+	}
+	return cmp.Or(cmp.Compare(a.ID, b.ID), cmp.Compare(a.Value, b.Value), cmp.Compare(a.Position, b.Position))
+}
+
+// fold is the belief after a set of readings, as the numbers from which the
+// posterior follows. The zero value is the belief before any reading. It is
+// a plain value: copies share nothing.
+type fold struct {
+	count    int
+	lastTime Instant // of the latest reading in count
+	constant posterior.Constant
+	walk     posterior.Walk
+	walkTime Instant // to which walk has moved
+}
+
+// ordered tells whether a fold under d depends on the order of its readings;
+// where it doesn't, readings are added as they arrive.
+func (d *Declaration) ordered() bool { return d.Dynamics.Form == DynamicsRandomWalk }
+
+// add folds one reading in; under ordered dynamics e must not precede any
+// reading already in f in canonical order.
+func (f *fold) add(d *Declaration, e *Row) {
+	if d.ordered() {
+		f.addWalk(d, e)
+	} else {
+		f.addConstant(d, e)
+	}
+	if f.count == 0 || e.Time > f.lastTime {
+		f.lastTime = e.Time
+	}
+	f.count++
+}
+
+func (f *fold) addConstant(d *Declaration, e *Row) {
+	switch {
+	case e.HasUncertainty:
+		f.constant.AddKnown(e.Value, e.Uncertainty)
+	case d.Repeatability.Form == RepeatabilityKnown:
+		f.constant.AddKnown(e.Value, d.Repeatability.StandardDeviation)
+	default:
+		f.constant.AddLearned(e.Value)
+	}
+}
+
+func (f *fold) addWalk(d *Declaration, e *Row) {
+	if f.count == 0 {
+		f.walk = posterior.NewWalk(d.levelPrior())
+		f.walkTime = e.Time
+		if d.Prior.HasTime {
+			f.walkTime = d.Prior.Time
+		}
+	}
+	f.walk.Predict(d.walkVariance(e.Time.Sub(f.walkTime)))
+	f.walkTime = e.Time
+	u := d.Repeatability.StandardDeviation
+	if e.HasUncertainty {
+		u = e.Uncertainty
+	}
+	f.walk.Update(e.Value, u)
+}
+
+// level returns the distribution of the level at an instant that is not
+// before the last reading in f.
+func (f *fold) level(d *Declaration, at Instant) posterior.Posterior {
+	if !d.ordered() {
+		return f.constant.Posterior(d.levelPrior(), d.noise())
+	}
+	w, ok := f.walkAt(d, at)
+	if !ok {
+		return posterior.Posterior{}
+	}
+	return w.Posterior()
+}
+
+// predictive returns the distribution of an indication at that instant.
+func (f *fold) predictive(d *Declaration, at Instant) posterior.Posterior {
+	if !d.ordered() {
+		return f.constant.Predictive(d.levelPrior(), d.noise())
+	}
+	w, ok := f.walkAt(d, at)
+	if !ok || d.Repeatability.Form != RepeatabilityKnown {
+		return posterior.Posterior{}
+	}
+	return w.Predictive(d.Repeatability.StandardDeviation)
+}
+
+// repeatability returns what is known of r.
+func (f *fold) repeatability(d *Declaration, coverage float64) posterior.Repeatability {
+	switch d.Repeatability.Form {
+	case RepeatabilityAbsent:
+		return posterior.Repeatability{}
+	case RepeatabilityKnown:
+		return posterior.Repeatability{Known: true, StandardDeviation: d.Repeatability.StandardDeviation}
+	}
+	return f.constant.Repeatability(d.levelPrior(), d.noise(), coverage)
+}
+
+// walkAt moves the walk on to an instant. Before a stated prior time nothing
+// is known: not ok.
+func (f *fold) walkAt(d *Declaration, at Instant) (posterior.Walk, bool) {
+	w, from := f.walk, f.walkTime
+	if f.count == 0 {
+		w = posterior.NewWalk(d.levelPrior())
+		if !d.Prior.HasTime {
+			return w, true // the prior's time is that of a reading yet to come
+		}
+		from = d.Prior.Time
+	}
+	if at < from {
+		return w, false
+	}
+	w.Predict(d.walkVariance(at.Sub(from)))
+	return w, true
+}
