@@ -1,0 +1,3 @@
+module leadline.example/ci/tools/openapi
+
+go 1.26
