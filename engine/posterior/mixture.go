@@ -1,0 +1,299 @@
+package posterior
+
+import "math"
+
+// mixture is the distribution of a level known beforehand as N(m, s^2),
+// independently of r, after n readings with mean ybar and sum of squares S that
+// inform r; or of the next indication. With nu the degrees of freedom and
+// A = Worth Guess^2 + S, integrating the level out leaves for u = ln r
+//
+//	p(u) ~ r^-nu exp(-A / (2 r^2)) N(ybar; m, s^2 + r^2 / n),  nu = Worth + n - 1
+//
+// (without the last factor and with nu = Worth if n = 0), and given r the level
+// is normal by precision weighting (Gelman et al. 2013, 2.5 and 5.4 for the same
+// algebra; derived for this package: prior r^-Worth exp(-Worth Guess^2 / 2 r^2)
+// for u, likelihood r^-n exp(-(S + n (ybar - level)^2) / 2 r^2)).
+//
+// The variable is x = u - ln(A/nu)/2, and rho = r^2 / (n s^2) = c exp(2x) tells
+// how much less the readings say of the level than what was known before.
+type mixture struct {
+	before     normal
+	data       Level
+	n          float64
+	nu         float64
+	r0         float64 // sqrt(A / nu): r at x = 0
+	logC       float64 // ln rho at x = 0
+	conflict   float64 // (ybar - m) / s
+	difference float64 // ybar - m
+	predictive bool
+
+	origin  float64 // x at which logWeight is 0: its highest maximum
+	rho     float64 // there
+	chi     float64 // exp(-2x) there
+	reach   reach
+	nodes   []node
+	total   float64 // ln of the integral of exp(logWeight)
+	median  float64 // of x, near enough for a start
+	hasMean bool
+	hasSD   bool
+}
+
+// node is one normal of the mixture.
+type node struct {
+	weight float64 // sums to 1
+	x      float64
+}
+
+// component is the normal given r.
+type component struct {
+	kept float64 // weight of what was known before in the mean: rho / (1 + rho)
+	won  float64 // weight of the readings: 1 / (1 + rho)
+	sd   float64
+}
+
+// newMixture computes the nodes and moments.
+func newMixture(before normal, s spread, predictive bool) Posterior {
+	m := &mixture{
+		before: before, data: s.mean, n: s.n, nu: s.worth,
+		r0: math.Sqrt(s.sum / s.worth), chi: 1, predictive: predictive,
+	}
+	if s.n > 0 {
+		m.logC = 2 * math.Log(m.r0/math.Sqrt(s.n)/before.sd)
+		m.difference = s.mean.Minus(before.mean)
+		m.conflict = m.difference / before.sd
+	}
+	m.locate()
+	m.fill()
+	return m.publish()
+}
+
+// component returns the normal at x.
+func (m *mixture) component(x float64) component {
+	c := component{kept: 1, sd: m.before.sd}
+	if m.n > 0 {
+		rho := math.Exp(m.logC + 2*x)
+		c.won = 1 / (1 + rho)
+		c.kept = 1 / (1 + 1/rho)
+		c.sd = m.before.sd * math.Sqrt(c.kept)
+	}
+	if m.predictive {
+		c.sd = math.Hypot(c.sd, m.r0*math.Exp(x))
+	}
+	return c
+}
+
+// logWeight is ln p(x) less its value at the origin, written in differences so
+// that large terms of nearly equal size never meet.
+func (m *mixture) logWeight(x float64) float64 {
+	y := x - m.origin
+	grow := math.Expm1(2 * y)
+	w := -m.nu / 2 * chiTerm(y, m.chi)
+	if m.n == 0 {
+		return w
+	}
+	// 1 + rho(x) = (1 + rho0) (1 + share * grow), share = rho0 / (1 + rho0)
+	share := 1 / (1 + 1/m.rho)
+	rest := m.conflict / math.Sqrt(1+m.rho)
+	if y > 300 { // rho alone matters, and its exponential could overflow
+		return w - (y + math.Log(share)/2) + rest*rest/2
+	}
+	ratio := share * grow
+	return w - math.Log1p(ratio)/2 + rest*rest/2*(ratio/(1+ratio))
+}
+
+// chiTerm returns chi (exp(-2y) - 1) + 2y.
+func chiTerm(y, chi float64) float64 {
+	if math.Abs(y) < 0.02 && math.Abs(chi-1) < 0.5 {
+		// exp(-2y) - 1 + 2y by its series, then the rest
+		t := -2 * y
+		series := t * t / 2 * (1 + t/3*(1+t/4*(1+t/5*(1+t/6*(1+t/7*(1+t/8))))))
+		return series + (chi-1)*math.Expm1(t)
+	}
+	return chi*math.Expm1(-2*y) + 2*y
+}
+
+// locate finds the highest maximum of p(x), makes it the origin and surveys.
+func (m *mixture) locate() {
+	m.rho = math.Exp(m.logC)
+	first, last := m.features()
+	r := survey(m.logWeight, m.below(first), last+4)
+	m.origin = r.peak
+	m.rho = math.Exp(m.logC + 2*r.peak)
+	m.chi = math.Exp(-2 * r.peak)
+	m.reach = survey(m.logWeight, m.below(first), last+4)
+}
+
+// features returns the smallest and largest x at which p(x) changes its course.
+func (m *mixture) features() (first, last float64) {
+	if m.n == 0 {
+		return 0, 0
+	}
+	even := -m.logC / 2 // rho = 1
+	split := even + math.Log(math.Max(1, math.Abs(m.conflict)))
+	return math.Min(0, even), math.Max(0, math.Max(even, split))
+}
+
+// below returns an x under which the exponential has won for good: nu/2 exp(-2x)
+// exceeds by far all that any other term can gain.
+func (m *mixture) below(first float64) float64 {
+	gain := 1600 + m.nu + math.Max(0, m.logC)
+	return math.Min(first-1, -math.Log(2*gain/m.nu+1)/2-1)
+}
+
+// fill sets nodes, weights and the total.
+func (m *mixture) fill() {
+	r := m.reach
+	step := r.step
+	even := r.sum(m.logWeight, step, 0)
+	for {
+		odd := r.sum(m.logWeight, step, step/2)
+		done := math.Abs(odd-even) <= 1e-9*even || (r.hi-r.lo)/step > maxNodes
+		even += odd
+		step /= 2
+		if done {
+			break
+		}
+	}
+	m.total = r.height + math.Log(even*step)
+	run, top := 0.0, 0.0
+	for i := math.Ceil((r.lo - r.peak) / step); ; i++ {
+		x := r.peak + i*step
+		if x > r.hi {
+			break
+		}
+		w := math.Exp(m.logWeight(x)-r.height) / even
+		m.nodes = append(m.nodes, node{w, x})
+		if run < 0.5 {
+			top = x
+		}
+		run += w
+	}
+	m.median = top
+}
+
+// publish computes the moments. They are integrals against p of functions that
+// p's own nodes resolve; the predictive's second moment, E r^2, is too if it
+// exists: p falls as r^-(nu+1), or r^-nu without readings.
+func (m *mixture) publish() Posterior {
+	falls := m.nu
+	if m.n > 0 {
+		falls++
+	}
+	m.hasMean = !m.predictive || falls > 1
+	m.hasSD = !m.predictive || falls > 2
+	var kept, won float64
+	for _, k := range m.nodes {
+		c := m.component(k.x)
+		kept += k.weight * c.kept
+		won += k.weight * c.won
+	}
+	var variance float64
+	for _, k := range m.nodes {
+		c := m.component(k.x)
+		shift := m.difference * (c.won - won)
+		if won > 0.5 {
+			shift = m.difference * (c.kept - kept)
+		}
+		variance += k.weight * (c.sd*c.sd + shift*shift)
+	}
+	mean := m.before.mean.Plus(m.difference * won)
+	if won > 0.5 {
+		mean = m.data.Plus(-m.difference * kept)
+	}
+	return Posterior{form: FormMixture, location: mean, scale: math.Sqrt(variance), mixture: m}
+}
+
+// place is a point of the line, as seen from both anchors of the mean.
+type place struct{ fromBefore, fromData float64 }
+
+func (m *mixture) place(x float64) place {
+	p := place{fromBefore: LevelOf(x).Minus(m.before.mean)}
+	if m.n > 0 {
+		p.fromData = LevelOf(x).Minus(m.data)
+	}
+	return p
+}
+
+// standard returns (place - mean) / sd of the component; from whichever anchor
+// is nearer in weight.
+func (m *mixture) standard(p place, c component) float64 {
+	if c.won > 0.5 {
+		return (p.fromData + m.difference*c.kept) / c.sd
+	}
+	return (p.fromBefore - m.difference*c.won) / c.sd
+}
+
+// tail returns P(X > x), or P(X < x) for the lower side.
+func (m *mixture) tail(x float64, s side) float64 {
+	switch {
+	case math.IsNaN(x):
+		return math.NaN()
+	case math.IsInf(x, int(s)):
+		return 0
+	case math.IsInf(x, 0):
+		return 1
+	}
+	return math.Exp(m.logTail(x, s))
+}
+
+// logTail returns the logarithm of the tail.
+func (m *mixture) logTail(x float64, s side) float64 {
+	p := m.place(x)
+	if t, ok := m.tailFromNodes(p, s); ok {
+		return math.Log(t)
+	}
+	h := func(x float64) float64 {
+		z := m.standard(p, m.component(x))
+		return m.logWeight(x) + logNormalTail(float64(s)*z)
+	}
+	return math.Min(0, m.integral(h, p)-m.total)
+}
+
+// tailFromNodes averages the normal tails over p's own nodes. That is as good
+// as p's own integral unless the tail is small, when its integrand peaks where
+// p's nodes end, or the normal tail changes faster than their step, which shows
+// as a difference between the even and the odd nodes.
+func (m *mixture) tailFromNodes(p place, s side) (float64, bool) {
+	var half [2]float64
+	for i, k := range m.nodes {
+		z := float64(s) * m.standard(p, m.component(k.x))
+		half[i&1] += k.weight * normalTail(pair{hi: z})
+	}
+	sum := half[0] + half[1]
+	return sum, sum > 1e-9 && math.Abs(half[0]-half[1]) < 1e-8*sum
+}
+
+// integral returns ln of the integral of exp(h), where h is logWeight plus the
+// logarithm of a probability that concerns the place p.
+func (m *mixture) integral(h func(float64) float64, p place) float64 {
+	first, last := m.features()
+	last = math.Max(last, m.spread(p))
+	return survey(h, m.below(first), last+4).trapezoid(h)
+}
+
+// spread returns an x beyond which the probabilities at p no longer change
+// their course: r or r / sqrt(n) exceeds every distance.
+func (m *mixture) spread(p place) float64 {
+	d := math.Max(math.Abs(p.fromBefore), math.Max(math.Abs(p.fromData), math.Abs(m.difference)))
+	return math.Log(math.Max(d, m.before.sd)*math.Sqrt(math.Max(m.n, 1))/m.r0)
+}
+
+// between returns P(lo <= X <= hi), lo < hi.
+func (m *mixture) between(lo, hi float64) float64 {
+	if math.IsInf(lo, -1) {
+		return m.tail(hi, lower)
+	}
+	if math.IsInf(hi, 1) {
+		return m.tail(lo, upper)
+	}
+	a, b := m.place(lo), m.place(hi)
+	h := func(x float64) float64 {
+		c := m.component(x)
+		return m.logWeight(x) + logNormalBetween(m.standard(a, c), m.standard(b, c), (hi-lo)/c.sd)
+	}
+	far := a
+	if math.Abs(b.fromBefore)+math.Abs(b.fromData) > math.Abs(a.fromBefore)+math.Abs(a.fromData) {
+		far = b
+	}
+	return math.Exp(math.Min(0, m.integral(h, far)-m.total))
+}

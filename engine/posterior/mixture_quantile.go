@@ -1,0 +1,54 @@
+package posterior
+
+import "math"
+
+// quantile returns the point that cuts off the tail probability p <= 1/2 on the
+// given side: the root of the logarithm of the tail, by bracketing and then the
+// Illinois variant of the false position (Dowell & Jarratt 1971, BIT 11).
+func (m *mixture) quantile(p float64, s side) float64 {
+	target := math.Log(p)
+	c := m.component(m.median)
+	centre := m.before.mean.Plus(m.difference * c.won).Value()
+	f := func(z float64) float64 { return m.logTail(centre+float64(s)*z*c.sd, s) - target }
+
+	a := -normalQuantile(p)
+	fa := f(a)
+	if fa == 0 {
+		return centre + float64(s)*a*c.sd
+	}
+	// f falls as z grows; step towards its zero until it is passed.
+	step := math.Copysign(math.Max(0.1, math.Abs(a)/8), fa)
+	b, fb := a+step, f(a+step)
+	for (fa > 0) == (fb > 0) && math.Abs(b) < 1e300 {
+		step *= 2
+		a, fa = b, fb
+		b += step
+		fb = f(b)
+	}
+	return centre + float64(s)*falsePosition(f, a, fa, b, fb)*c.sd
+}
+
+// falsePosition returns the zero of f between a and b, where f has different
+// signs.
+func falsePosition(f func(float64) float64, a, fa, b, fb float64) float64 {
+	for range 100 {
+		if fb == 0 || math.Abs(b-a) <= 1e-14*math.Max(math.Abs(a), math.Abs(b))+1e-16 {
+			return b
+		}
+		x := b - fb*(b-a)/(fb-fa)
+		if math.IsNaN(x) || x <= math.Min(a, b) || x >= math.Max(a, b) {
+			x = a + (b-a)/2
+		}
+		fx := f(x)
+		if math.Abs(x-b) <= 1e-15*math.Abs(x) {
+			return x
+		}
+		if (fx > 0) != (fb > 0) {
+			a, fa = b, fb
+		} else {
+			fa /= 2
+		}
+		b, fb = x, fx
+	}
+	return b
+}

@@ -1,0 +1,227 @@
+package posterior
+
+import "math"
+
+// Form is the family of a distribution.
+type Form uint8
+
+const (
+	FormNone    Form = iota // nothing is known
+	FormNormal              // normal
+	FormStudent             // Student t, shifted and scaled
+	FormMixture             // normals mixed over r
+)
+
+// String returns the word of the interface.
+func (f Form) String() string {
+	switch f {
+	case FormNormal:
+		return "NORMAL"
+	case FormStudent:
+		return "STUDENT"
+	case FormMixture:
+		return "MIXTURE"
+	}
+	return "NONE"
+}
+
+// Posterior is a distribution on the line: of the level or of the next
+// indication. It is an immutable value; the zero value is FormNone, for which
+// every number is NaN.
+type Posterior struct {
+	form     Form
+	location Level
+	scale    float64
+	dof      float64
+	mixture  *mixture
+}
+
+// Normal returns the normal distribution with the given mean and standard
+// deviation > 0.
+func Normal(mean Level, sd float64) Posterior {
+	return Posterior{form: FormNormal, location: mean, scale: sd}
+}
+
+// Student returns the Student t distribution shifted to location, scaled by
+// scale > 0, with dof > 0 degrees of freedom.
+func Student(location Level, scale, dof float64) Posterior { return student(location, scale, dof) }
+
+func student(location Level, scale, dof float64) Posterior {
+	return Posterior{form: FormStudent, location: location, scale: scale, dof: dof}
+}
+
+// Form returns the family.
+func (p Posterior) Form() Form { return p.form }
+
+// Mean returns the mean, and whether it exists: Student t has none with one
+// degree of freedom or fewer.
+func (p Posterior) Mean() (float64, bool) {
+	switch p.form {
+	case FormNormal:
+		return p.location.Value(), true
+	case FormStudent:
+		return p.location.Value(), p.dof > 1
+	case FormMixture:
+		return p.location.Value(), p.mixture.hasMean
+	}
+	return math.NaN(), false
+}
+
+// StandardDeviation returns the standard deviation, and whether it exists:
+// scale sqrt(nu / (nu - 2)) for Student t with nu > 2 degrees of freedom, none
+// up to 2 (JCGM 101:2008, 6.4.9.4).
+func (p Posterior) StandardDeviation() (float64, bool) {
+	switch {
+	case p.form == FormNormal:
+		return p.scale, true
+	case p.form == FormStudent && p.dof > 2:
+		return p.scale * math.Sqrt(p.dof/(p.dof-2)), true
+	case p.form == FormMixture:
+		return p.scale, p.mixture.hasSD
+	}
+	return math.NaN(), false
+}
+
+// Location returns the centre of a normal or Student distribution, the mean of
+// a mixture.
+func (p Posterior) Location() float64 {
+	if p.form == FormNone {
+		return math.NaN()
+	}
+	return p.location.Value()
+}
+
+// Scale returns the scale of a Student distribution, the standard deviation of
+// a normal one; NaN for others.
+func (p Posterior) Scale() float64 {
+	if p.form == FormNormal || p.form == FormStudent {
+		return p.scale
+	}
+	return math.NaN()
+}
+
+// DegreesOfFreedom returns those of a Student distribution; NaN for others.
+func (p Posterior) DegreesOfFreedom() float64 {
+	if p.form == FormStudent {
+		return p.dof
+	}
+	return math.NaN()
+}
+
+// LowerTail returns P(X < x), with full relative accuracy however small it is.
+func (p Posterior) LowerTail(x float64) float64 {
+	switch p.form {
+	case FormNormal:
+		return normalTail(p.standard(x).negative())
+	case FormStudent:
+		return studentTail(-p.standard(x).value(), p.dof)
+	case FormMixture:
+		return p.mixture.tail(x, lower)
+	}
+	return math.NaN()
+}
+
+// UpperTail returns P(X > x), with full relative accuracy however small it is.
+func (p Posterior) UpperTail(x float64) float64 {
+	switch p.form {
+	case FormNormal:
+		return normalTail(p.standard(x))
+	case FormStudent:
+		return studentTail(p.standard(x).value(), p.dof)
+	case FormMixture:
+		return p.mixture.tail(x, upper)
+	}
+	return math.NaN()
+}
+
+// Between returns P(lo <= X <= hi), 0 if hi <= lo, without cancellation where
+// both limits lie on one side or close together.
+func (p Posterior) Between(lo, hi float64) float64 {
+	switch {
+	case p.form == FormNone || math.IsNaN(lo) || math.IsNaN(hi):
+		return math.NaN()
+	case hi <= lo:
+		return 0
+	case p.form == FormNormal:
+		return normalBetween(p.standard(lo), p.standard(hi), (hi-lo)/p.scale)
+	case p.form == FormStudent:
+		return studentBetween(p.standard(lo).value(), p.standard(hi).value(), (hi-lo)/p.scale, p.dof)
+	}
+	return p.mixture.between(lo, hi)
+}
+
+// Quantile returns the x with P(X < x) = q, 0 < q < 1; -Inf at 0, +Inf at 1,
+// NaN outside.
+func (p Posterior) Quantile(q float64) float64 {
+	switch {
+	case p.form == FormNone || !(q >= 0 && q <= 1):
+		return math.NaN()
+	case q == 0:
+		return math.Inf(-1)
+	case q == 1:
+		return math.Inf(1)
+	case q <= 0.5:
+		return p.quantile(q, lower)
+	}
+	return p.quantile(1-q, upper)
+}
+
+// Interval returns the probabilistically symmetric coverage interval: equal
+// tails of (1 - coverage) / 2 (JCGM 101:2008, 3.12 and 7.7; JCGM 106:2012,
+// 3.2.8). 0 < coverage < 1.
+func (p Posterior) Interval(coverage float64) (lo, hi float64) {
+	if p.form == FormNone || !(coverage > 0 && coverage < 1) {
+		return math.NaN(), math.NaN()
+	}
+	tail := (1 - coverage) / 2
+	switch p.form {
+	case FormNormal:
+		return p.around(-normalQuantile(tail))
+	case FormStudent:
+		return p.around(studentQuantile(tail, p.dof))
+	}
+	return p.quantile(tail, lower), p.quantile(tail, upper)
+}
+
+// side names a tail.
+type side int8
+
+const (
+	lower side = -1
+	upper side = 1
+)
+
+// quantile returns the point that cuts off the tail probability, at most 1/2,
+// on the given side.
+func (p Posterior) quantile(tail float64, s side) float64 {
+	switch p.form {
+	case FormNormal:
+		return p.at(float64(s) * -normalQuantile(tail))
+	case FormStudent:
+		return p.at(float64(s) * studentQuantile(tail, p.dof))
+	}
+	return p.mixture.quantile(tail, s)
+}
+
+// around returns the two points z scales away from the location.
+func (p Posterior) around(z float64) (lo, hi float64) { return p.at(-z), p.at(z) }
+
+// at returns the point z scales from the location.
+func (p Posterior) at(z float64) float64 {
+	if math.IsInf(z, 0) {
+		return z
+	}
+	return p.location.Plus(z * p.scale).Value()
+}
+
+// standard returns (x - location) / scale with more digits than a double has: the
+// tail amplifies a relative error of z by z^2.
+func (p Posterior) standard(x float64) pair {
+	if math.IsInf(x, 0) {
+		return pair{hi: x}
+	}
+	return pair{hi: x}.minus(p.location.pair()).over(p.scale)
+}
+
+// negative changes the sign.
+func (p pair) negative() pair { return pair{-p.hi, -p.lo} }
