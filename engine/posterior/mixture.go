@@ -275,7 +275,7 @@ func (m *mixture) integral(h func(float64) float64, p place) float64 {
 // their course: r or r / sqrt(n) exceeds every distance.
 func (m *mixture) spread(p place) float64 {
 	d := math.Max(math.Abs(p.fromBefore), math.Max(math.Abs(p.fromData), math.Abs(m.difference)))
-	return math.Log(math.Max(d, m.before.sd)*math.Sqrt(math.Max(m.n, 1))/m.r0)
+	return math.Log(math.Max(d, m.before.sd) * math.Sqrt(math.Max(m.n, 1)) / m.r0)
 }
 
 // between returns P(lo <= X <= hi), lo < hi.
