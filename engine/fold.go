@@ -28,7 +28,7 @@ func compareEntries(a, b entry) int {
 // a plain value: copies share nothing.
 type fold struct {
 	count    int
-	lastTime Instant // of the latest reading in count
+	last     entry // the latest in canonical order
 	constant posterior.Constant
 	walk     posterior.Walk
 	walkTime Instant // to which walk has moved
@@ -40,14 +40,14 @@ func (d *Declaration) ordered() bool { return d.Dynamics.Form == DynamicsRandomW
 
 // add folds one reading in; under ordered dynamics e must not precede any
 // reading already in f in canonical order.
-func (f *fold) add(d *Declaration, e *Row) {
+func (f *fold) add(d *Declaration, e *entry) {
 	if d.ordered() {
-		f.addWalk(d, e)
+		f.addWalk(d, &e.Row)
 	} else {
-		f.addConstant(d, e)
+		f.addConstant(d, &e.Row)
 	}
-	if f.count == 0 || e.Time > f.lastTime {
-		f.lastTime = e.Time
+	if f.count == 0 || e.Time >= f.last.Time && compareEntries(*e, f.last) > 0 {
+		f.last = *e
 	}
 	f.count++
 }

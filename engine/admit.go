@@ -1,0 +1,137 @@
+package engine
+
+import (
+	"errors"
+	"fmt"
+	"math"
+	"time"
+)
+
+// admit decides on one reading: it returns the result and whether a record is
+// to be written. r.Time is set if it was missing.
+func (k *Keeper) admit(r *Reading, receive Instant) (t *Track, res Result, write bool) {
+	res = Result{ReadingID: r.ID, Time: r.Time}
+	t = k.byID[r.Quantity]
+	if reason, detail := k.objection(t, r, receive); reason != "" {
+		res.Status, res.Reason, res.Detail = Refused, reason, detail
+		return t, res, true
+	}
+	if r.ID == "" {
+		res.Status = Applied
+		return t, res, true
+	}
+	h := k.window.hash(t.number, r.ID)
+	earlier, found := k.window.find(h)
+	if !found || r.HasTime && !earlier.untimed && earlier.time != r.Time {
+		if older, ok, err := k.findStored(t, r); err != nil {
+			k.fail(fmt.Errorf("look up reading %q of %q: %w", r.ID, t.id, errors.Join(err, ErrStorageFailed)))
+		} else if ok {
+			earlier, found = older, true
+		}
+	}
+	switch {
+	case !found:
+		res.Status = Applied
+		k.window.add(h, seenID{time: r.Time, value: r.Value, position: k.decidedTo + 1, untimed: !r.HasTime}, receive)
+		return t, res, true
+	case earlier.value == r.Value && (earlier.time == r.Time || earlier.untimed || !r.HasTime):
+		res.Status, res.Time, res.Position = Duplicate, earlier.time, earlier.position
+		return t, res, false
+	}
+	res.Status, res.Reason = Refused, ReadingIDConflict
+	res.Detail = fmt.Sprintf("reading_id %q stands for the reading of %v at %v already; give a new reading another reading_id, and send a retry unchanged", r.ID, earlier.value, earlier.time)
+	return t, res, true
+}
+
+// objection returns why a reading can't be applied, or "".
+func (k *Keeper) objection(t *Track, r *Reading, receive Instant) (Reason, string) {
+	switch {
+	case t == nil:
+		return UnknownQuantity, fmt.Sprintf("quantity %q is not declared; declare it with PUT /v1/quantities/{id}, then put the reading through with :apply_refused or send it again", r.Quantity)
+	case t.decided.Retired:
+		return QuantityRetired, fmt.Sprintf("quantity %q was retired at %v; declare it again to revive it", r.Quantity, t.decided.RetireTime)
+	case r.Instrument != "":
+		return UnknownInstrument, fmt.Sprintf("instrument %q is not known; leave instrument out", r.Instrument)
+	}
+	d := &t.decided.Declaration
+	if r.Unit != "" && r.Unit != d.Unit {
+		return UnitMismatch, fmt.Sprintf("unit is %q but the quantity is in %q; convert the value, or leave unit out", r.Unit, d.Unit)
+	}
+	if reason, detail := objectionToNumbers(d, r); reason != "" {
+		return reason, detail
+	}
+	return k.objectionToTime(d, r, receive)
+}
+
+func objectionToNumbers(d *Declaration, r *Reading) (Reason, string) {
+	if !inRange(r.Value) {
+		return ValueOutOfRange, fmt.Sprintf("value is %v; give 0 or a number of magnitude 1e-100 to 1e100", r.Value)
+	}
+	u := r.RandomStandardUncertainty
+	if !r.HasUncertainty {
+		switch d.Repeatability.Form {
+		case RepeatabilityAbsent:
+			return NoRepeatability, "random_standard_uncertainty is missing and the quantity declares no repeatability; give one of the two"
+		case RepeatabilityKnown:
+			u = d.Repeatability.StandardDeviation
+		case RepeatabilityLearned:
+			u = d.Repeatability.Guess
+		default:
+			u = 1
+		}
+	} else if !(u >= MinMagnitude && u <= MaxMagnitude) {
+		return RandomUncertaintyInvalid, fmt.Sprintf("random_standard_uncertainty is %v; give a number above 0, from 1e-100 to 1e100", u)
+	}
+	if math.Abs(r.Value)/u > maxRatio {
+		return ValueOutOfRange, fmt.Sprintf("value %v is more than 1e150 times its random standard uncertainty %v; check both", r.Value, u)
+	}
+	return "", ""
+}
+
+func (k *Keeper) objectionToTime(d *Declaration, r *Reading, receive Instant) (Reason, string) {
+	switch {
+	case !r.Time.Valid():
+		return TimeOutOfRange, "time lies outside 1678 to 2262; check the clock of the sender"
+	case r.Time.Sub(receive) > float64(k.options.MaxClockSkew):
+		return TimeInFuture, fmt.Sprintf("time %v is more than %v after the receipt at %v; check the clock of the sender", r.Time, k.options.MaxClockSkew, receive)
+	case d.Prior.HasTime && r.Time < d.Prior.Time:
+		return BeforePrior, fmt.Sprintf("time %v is before the prior's time %v; send readings from then on, or declare an earlier prior.time", r.Time, d.Prior.Time)
+	}
+	return "", ""
+}
+
+// findStored looks for an applied reading with r's ID and time among those
+// that the window no longer holds.
+func (k *Keeper) findStored(t *Track, r *Reading) (seenID, bool, error) {
+	if !k.window.evicted || !r.HasTime || t.decidedTally.count == 0 || r.Time > t.decidedTally.last {
+		return seenID{}, false, nil
+	}
+	for i := range t.rows {
+		if e := &t.rows[i]; e.Time == r.Time && e.HasID && e.ID == r.ID {
+			return seenID{time: e.Time, value: e.Value, position: e.Position}, true, nil
+		}
+	}
+	var at []Position
+	err := k.ledger.Rows(t.number, r.Time, func(rows []Row) error {
+		for _, row := range rows {
+			if row.Time == r.Time && row.HasID {
+				at = append(at, row.Position)
+			}
+		}
+		return nil
+	})
+	if err != nil || len(at) == 0 {
+		return seenID{}, false, err
+	}
+	var found seenID
+	err = k.ledger.Records(at, func(rec *Record) error {
+		if rec.Reading.ID == r.ID {
+			found = seenID{time: rec.Reading.Time, value: rec.Reading.Value, position: rec.Position}
+		}
+		return nil
+	})
+	return found, found.position != 0, err
+}
+
+// skewDefault is the clock skew allowed to senders.
+const skewDefault = 5 * time.Minute

@@ -1,0 +1,118 @@
+package engine
+
+import "context"
+
+// Condition makes a change depend on what is there.
+type Condition struct {
+	IfMatch     string // the ETag that the quantity must have; empty for any, * for any existing one
+	IfNoneMatch bool   // the quantity must not exist
+}
+
+func (c Condition) check(t *Track) error {
+	if c.IfNoneMatch && t != nil {
+		return refuse(AlreadyExists, "", "quantity %q exists; leave If-None-Match out to replace its declaration", t.id)
+	}
+	if c.IfMatch == "" {
+		return nil
+	}
+	if t == nil {
+		return refuse(ETagMismatch, "etag", "etag is %q but the quantity doesn't exist; leave etag and If-Match out to declare it", c.IfMatch)
+	}
+	if tag := t.decided.ETag(); c.IfMatch != "*" && c.IfMatch != tag {
+		return refuse(ETagMismatch, "etag", "etag is %q but the quantity has %q; read it again and repeat the change on what is there", c.IfMatch, tag)
+	}
+	return nil
+}
+
+// Declare declares a quantity, replaces its declaration or revives it; created
+// tells the first case. A declaration equal to the one in force writes
+// nothing. Where prior, dynamics or repeatability change, the belief is folded
+// anew from all its readings.
+func (k *Keeper) Declare(ctx context.Context, id QuantityID, d Declaration, c Condition, receive Instant) (q Quantity, created bool, err error) {
+	if err := CheckID("id", string(id)); err != nil {
+		return Quantity{}, false, err
+	}
+	if err := d.Check(); err != nil {
+		return Quantity{}, false, err
+	}
+	err = k.wait(ctx, &command{action: func(w *work) error {
+		t := k.byID[id]
+		if err := c.check(t); err != nil {
+			return err
+		}
+		if t != nil && t.decided.Declaration == d && !t.decided.Retired {
+			q = *t.decided
+			return nil
+		}
+		if err := t.checkRedeclaration(&d); err != nil {
+			return err
+		}
+		q, created = k.declare(w, t, id, d, receive), t == nil
+		return nil
+	}})
+	return q, created, err
+}
+
+// declare records a declaration.
+func (k *Keeper) declare(w *work, t *Track, id QuantityID, d Declaration, receive Instant) Quantity {
+	q := &Quantity{ID: id, Declaration: d, Revision: 1, CreateTime: receive, UpdateTime: receive}
+	if t == nil {
+		t = k.trackOf(QuantityNumber(len(k.byNumber)+1), id)
+	} else {
+		q.Revision, q.CreateTime = t.decided.Revision+1, t.decided.CreateTime
+	}
+	q.Number = t.number
+	t.decided = q
+	k.decidedTo++
+	w.add(Record{
+		Kind: KindDeclaration, ReceiveTime: receive, Number: q.Number, Revision: q.Revision,
+		Quantity: id, Declaration: &q.Declaration,
+	})
+	return *q
+}
+
+// checkRedeclaration refuses what the readings applied so far don't allow. t
+// may be nil.
+func (t *Track) checkRedeclaration(d *Declaration) error {
+	if t == nil || t.decidedTally.count == 0 {
+		return nil
+	}
+	if was := t.decided.Declaration.Unit; d.Unit != was {
+		return refuse(UnitFixed, "unit", "unit is %q but %d readings in %q have been applied; keep the unit, or declare another quantity", d.Unit, t.decidedTally.count, was)
+	}
+	if first := t.decidedTally.first; d.Prior.HasTime && d.Prior.Time > first {
+		return refuse(InvalidField, "prior.time", "prior.time %v is after the reading of %v, which has been applied; give that time or an earlier one", d.Prior.Time, first)
+	}
+	if bare := t.decidedTally.bare; d.Repeatability.Form == RepeatabilityAbsent && bare > 0 {
+		return refuse(InvalidField, "repeatability", "repeatability is missing but %d readings without a random_standard_uncertainty have been applied; declare one", bare)
+	}
+	return nil
+}
+
+// Retire takes a quantity out of lists and metrics and refuses further
+// readings; it stays readable. Retiring it again changes nothing.
+func (k *Keeper) Retire(ctx context.Context, id QuantityID, c Condition, receive Instant) (q Quantity, err error) {
+	err = k.wait(ctx, &command{action: func(w *work) error {
+		t := k.byID[id]
+		if t == nil {
+			return notDeclared(id)
+		}
+		if err := c.check(t); err != nil {
+			return err
+		}
+		if !t.decided.Retired {
+			retired := *t.decided
+			retired.Retired, retired.RetireTime, retired.UpdateTime = true, receive, receive
+			t.decided = &retired
+			k.decidedTo++
+			w.add(Record{Kind: KindRetirement, ReceiveTime: receive, Number: t.number, Revision: retired.Revision})
+		}
+		q = *t.decided
+		return nil
+	}})
+	return q, err
+}
+
+func notDeclared(id QuantityID) error {
+	return refuse(NotFound, "id", "quantity %q is not declared; declare it with PUT /v1/quantities/{id}", id)
+}

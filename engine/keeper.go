@@ -1,0 +1,338 @@
+package engine
+
+import (
+	"cmp"
+	"errors"
+	"sync"
+	"sync/atomic"
+	"time"
+)
+
+// Options configures a Keeper.
+type Options struct {
+	// Open opens the ledger. It is called again, after the first was closed, to
+	// resume after a full disk.
+	Open func() (Ledger, error)
+	// MaxClockSkew is how far a reading's time may lie after its receipt;
+	// 0 means 5 minutes.
+	MaxClockSkew time.Duration
+	// DuplicateWindow is how many reading IDs are remembered, for 24 hours of
+	// receipts; 0 means 1,000,000. An exact repeat is known for ever.
+	DuplicateWindow int
+	// RefusedLog is how many refused readings can be listed and put through;
+	// 0 means 100,000.
+	RefusedLog int
+	// CheckpointRecords is how many records are written between the beginnings
+	// of two checkpoints at least; 0 means 65,536, or eight for every quantity
+	// if that is more. A start replays up to twice as many.
+	CheckpointRecords int
+	// OnFault is told of each fault of the storage; nil ignores them. It must
+	// not call the Keeper.
+	OnFault func(error)
+}
+
+func (o *Options) validate() error {
+	if o.Open == nil {
+		return errors.New("engine: Options.Open is missing")
+	}
+	if o.MaxClockSkew < 0 || o.DuplicateWindow < 0 || o.RefusedLog < 0 || o.CheckpointRecords < 0 {
+		return errors.New("engine: Options has a negative limit; give 0 for the default")
+	}
+	o.MaxClockSkew = cmp.Or(o.MaxClockSkew, skewDefault)
+	o.DuplicateWindow = cmp.Or(o.DuplicateWindow, 1_000_000)
+	o.RefusedLog = cmp.Or(o.RefusedLog, 100_000)
+	if o.OnFault == nil {
+		o.OnFault = func(error) {}
+	}
+	return nil
+}
+
+// Bounds of one group and of what may wait.
+const (
+	maxGroupRecords   = 2_000
+	maxGroupBytes     = 256 << 10
+	maxQueuedCommands = 4_096
+	maxQueuedReadings = 200_000
+	refoldBudget      = 1_000 // steps that a group may spend on late readings
+)
+
+// Keeper owns all beliefs. One goroutine takes the commands that wait, decides
+// on each, has the ledger commit the records as a group, folds them into the
+// beliefs, publishes the new views and answers. While a group is being made
+// durable the next one is decided on, so what waits batches itself and no
+// timer is needed.
+//
+// Invariants: an answer follows the commit of every record it rests on; a
+// View shows only durable records; state is changed by records alone, in
+// their order, so that a replay of the ledger gives the same state.
+type Keeper struct {
+	options  Options
+	commands chan *command
+	queued   atomic.Int64 // readings in commands
+	stopping chan struct{}
+	stopped  chan struct{}
+	once     sync.Once
+	closeErr error
+
+	// Of the keeper's goroutine.
+	ledger    Ledger
+	byID      map[QuantityID]*Track
+	byNumber  []*Track // index number-1
+	window    *window
+	decidedTo Position // last position given to a record
+	change    uint64   // of the group being folded
+	budget    int      // steps left for its late readings
+	touched   []*Track // by the group being folded
+	arrived   []*Track // declared for the first time by it
+	partial   *command // a batch that goes on in the next group
+	resuming  *command // waits for the group on its way
+	jobs      []*job   // waiting for the rebuilder
+	working   bool     // the rebuilder has a job
+	sweep     sweeper
+	failed    error
+
+	// Written by the keeper's goroutine, read by all.
+	tracks    atomic.Pointer[[]*Track] // sorted by ID
+	refusals  refusals
+	published atomic.Uint64 // newest change
+	position  atomic.Uint64
+	health    atomic.Pointer[error]
+	current   atomic.Pointer[Ledger]
+	counts
+
+	// Between the keeper's goroutine, the committer and the rebuilder.
+	commits   chan *Group
+	committed chan error
+	jobQueue  chan *job
+	jobDone   chan *job
+	workers   sync.WaitGroup
+}
+
+// New opens the ledger, brings every belief up to its end and starts the
+// keeper.
+func New(o Options) (*Keeper, error) {
+	if err := o.validate(); err != nil {
+		return nil, err
+	}
+	k := &Keeper{
+		options:   o,
+		commands:  make(chan *command, maxQueuedCommands),
+		stopping:  make(chan struct{}),
+		stopped:   make(chan struct{}),
+		commits:   make(chan *Group),
+		committed: make(chan error),
+		jobQueue:  make(chan *job),
+		jobDone:   make(chan *job, 1),
+	}
+	if err := k.load(); err != nil {
+		return nil, err
+	}
+	k.workers.Go(k.commitLoop)
+	k.workers.Go(k.rebuildLoop)
+	go k.run()
+	return k, nil
+}
+
+// Close refuses new requests, finishes those that wait, writes a complete
+// checkpoint and closes the ledger. It may be called more than once.
+func (k *Keeper) Close() error {
+	k.once.Do(func() { close(k.stopping) })
+	<-k.stopped
+	return k.closeErr
+}
+
+// run is the keeper's goroutine.
+func (k *Keeper) run() {
+	defer close(k.stopped)
+	next, flying := new(work), new(work)
+	for {
+		if k.partial != nil && !next.full() {
+			k.decide(next, k.partial)
+		}
+		if !flying.started && k.resuming != nil {
+			k.resuming.err = k.resume()
+			next.waiting = append(next.waiting, k.resuming)
+			k.resuming = nil
+		}
+		if !flying.started && !next.empty() {
+			flying, next = next, flying
+			k.begin(flying)
+			continue
+		}
+		switch {
+		case flying.started && (next.full() || k.partial != nil || k.resuming != nil):
+			k.await(flying, nil, nil)
+		case flying.started:
+			k.await(flying, next, k.commands)
+		case !k.idle(next):
+			k.finish()
+			return
+		}
+	}
+}
+
+// work is a group in the making and the commands that it answers.
+type work struct {
+	Group
+	bytes   int
+	waiting []*command
+	started bool
+}
+
+func (w *work) empty() bool { return len(w.Records) == 0 && len(w.waiting) == 0 }
+
+func (w *work) full() bool {
+	return len(w.Records) >= maxGroupRecords || w.bytes >= maxGroupBytes
+}
+
+func (w *work) reset() {
+	clear(w.Records)
+	clear(w.Checkpoint)
+	clear(w.waiting)
+	*w = work{Group: Group{Records: w.Records[:0], Checkpoint: w.Checkpoint[:0]}, waiting: w.waiting[:0]}
+}
+
+// recordBytes is what a record takes about, without its texts.
+const recordBytes = 40
+
+func (w *work) add(r Record) {
+	w.Records = append(w.Records, r)
+	w.bytes += recordBytes + len(r.Reading.ID) + len(r.Reading.Quantity) + len(r.Detail) + len(r.Quantity)
+}
+
+// idle waits for something to do; false when the keeper is to stop and nothing
+// waits.
+func (k *Keeper) idle(next *work) bool {
+	select {
+	case c := <-k.commands:
+		k.take(next, c)
+		return true
+	case j := <-k.jobDone:
+		k.working = false
+		k.finishJob(j)
+		k.dispatch()
+		return true
+	case <-k.stopping:
+		select {
+		case c := <-k.commands:
+			k.take(next, c)
+			return true
+		default:
+			return false
+		}
+	}
+}
+
+// await waits for the flying group, for a rebuild or, if commands isn't nil,
+// for more to do in next.
+func (k *Keeper) await(flying, next *work, commands <-chan *command) {
+	select {
+	case err := <-k.committed:
+		k.land(flying, err)
+	case j := <-k.jobDone:
+		k.working = false
+		k.finishJob(j)
+		k.dispatch()
+	case c := <-commands:
+		k.take(next, c)
+	}
+}
+
+// take decides on c and on whatever waits behind it until the group is full.
+func (k *Keeper) take(w *work, c *command) {
+	for {
+		k.decide(w, c)
+		if w.full() || k.partial != nil || k.resuming != nil {
+			return
+		}
+		select {
+		case c = <-k.commands:
+		default:
+			return
+		}
+	}
+}
+
+// begin sends a group on its way; one without records lands at once, being
+// behind everything that its answers rest on.
+func (k *Keeper) begin(w *work) {
+	if len(w.Records) == 0 || k.failed != nil {
+		k.land(w, nil)
+		return
+	}
+	k.addCheckpoint(w)
+	w.started = true
+	k.commits <- &w.Group
+}
+
+// commitLoop is the committer's goroutine.
+func (k *Keeper) commitLoop() {
+	for g := range k.commits {
+		k.committed <- k.ledger.Append(g)
+	}
+}
+
+// land folds a durable group and answers its commands.
+func (k *Keeper) land(w *work, err error) {
+	if err != nil {
+		k.fail(err)
+	}
+	if k.failed != nil {
+		for _, c := range w.waiting {
+			c.err = cmp.Or(c.err, k.failed)
+		}
+	} else {
+		k.foldGroup(w.Records)
+		k.landCheckpoint(w)
+	}
+	for _, c := range w.waiting {
+		k.queued.Add(-int64(len(c.batch.Readings)))
+		c.done()
+	}
+	w.reset()
+}
+
+// foldGroup folds records that are durable and publishes what they change.
+func (k *Keeper) foldGroup(records []Record) {
+	if len(records) == 0 {
+		return
+	}
+	k.change++
+	for i := range records {
+		k.apply(&records[i])
+	}
+	k.settleTouched()
+	k.publish(records[len(records)-1].Position)
+}
+
+// finish ends the keeper: a complete checkpoint, then everything is closed.
+func (k *Keeper) finish() {
+	if k.failed == nil {
+		if err := k.finalCheckpoint(); err != nil {
+			k.fail(err)
+		}
+	}
+	close(k.commits)
+	close(k.jobQueue)
+	k.workers.Wait()
+	k.closeErr = k.ledger.Close()
+	for {
+		select {
+		case c := <-k.commands: // came while the keeper was stopping
+			c.err = errStopping
+			c.done()
+		default:
+			return
+		}
+	}
+}
+
+// fail takes note that a group could not be made durable: nothing further is
+// decided or written, and views stay as they are.
+func (k *Keeper) fail(err error) {
+	if k.failed == nil {
+		k.failed = err
+		k.health.Store(&err)
+		k.options.OnFault(err)
+	}
+}

@@ -1,0 +1,252 @@
+package engine
+
+import (
+	"errors"
+	"fmt"
+)
+
+// load opens the ledger and brings the state up to its end: from the last
+// complete checkpoint and the records after it. It also serves to begin again
+// after a full disk.
+func (k *Keeper) load() error {
+	l, err := k.options.Open()
+	if err != nil {
+		return err
+	}
+	if err := k.loadFrom(l); err != nil {
+		return errors.Join(fmt.Errorf("replay the ledger: %w", err), l.Close())
+	}
+	return nil
+}
+
+func (k *Keeper) loadFrom(l Ledger) error {
+	k.ledger = l
+	k.current.Store(&l)
+	k.byID, k.byNumber = make(map[QuantityID]*Track), nil
+	k.window = newWindow(k.options.DuplicateWindow)
+	k.refusals.init(k.options.RefusedLog)
+	k.touched, k.arrived, k.jobs, k.partial = nil, nil, nil, nil
+	k.change++
+	k.working = true // no job is dispatched while loading
+
+	sweep, err := l.Checkpoint(k.restore)
+	if err != nil {
+		return err
+	}
+	k.sweep = sweeper{segment: sweep.Segment, stored: sweep.Through, trim: len(k.byNumber)}
+	countedTo, err := k.restoreSummary(sweep.Summary)
+	if err != nil {
+		return err
+	}
+	if err := k.replayFrom(sweep.Through, countedTo); err != nil {
+		return err
+	}
+	return k.present()
+}
+
+// restore takes the checkpoint of one quantity.
+func (k *Keeper) restore(e CheckpointEntry) error {
+	if int(e.Number) != len(k.byNumber)+1 {
+		return fmt.Errorf("checkpoint of quantity number %d follows that of %d", e.Number, len(k.byNumber))
+	}
+	t := k.trackOf(e.Number, e.Quantity.ID)
+	t.quantity, t.basis, t.savedQuantity = e.Quantity, e.Quantity, e.Quantity
+	t.position, t.saved, t.foldedTo = e.Through, e.Through, e.Through
+	t.reset()
+	rebuild, err := t.decodeState(e.State)
+	if err != nil {
+		return err
+	}
+	t.marks[0] = t.fold
+	t.hollow = rebuild
+	k.arrived = append(k.arrived, t)
+	return nil
+}
+
+// restoreSummary takes the counts and the log of refusals, which include every
+// record up to the position returned.
+func (k *Keeper) restoreSummary(b []byte) (Position, error) {
+	k.applied.Store(0)
+	for i := range k.refused {
+		k.refused[i].Store(0)
+	}
+	if len(b) == 0 {
+		return 0, nil
+	}
+	if b[0] != summaryVersion {
+		return 0, fmt.Errorf("checkpoint summary has version %d, not %d", b[0], summaryVersion)
+	}
+	r := stateReader{rest: b[1:]}
+	for i := range r.uvarint() {
+		if n := r.uvarint(); int(i) < len(k.refused) {
+			k.refused[i].Store(n)
+		}
+	}
+	k.applied.Store(r.uvarint())
+	countedTo := Position(r.uvarint())
+	var at []Position
+	for last := Position(0); r.err == nil && len(r.rest) > 0; {
+		last += Position(r.uvarint())
+		at = append(at, last)
+	}
+	if r.err != nil {
+		return 0, fmt.Errorf("checkpoint summary: %w", r.err)
+	}
+	return countedTo, k.ledger.Records(at, func(r *Record) error {
+		k.refusals.add(k.refusalOf(r))
+		return nil
+	})
+}
+
+// replayFrom applies the records after through, and reads those before it that
+// the window of reading IDs covers.
+func (k *Keeper) replayFrom(through, countedTo Position) error {
+	from := Position(1)
+	if size := Position(len(k.window.order)); through > size {
+		from, k.window.evicted = through-size+1, true
+	}
+	k.position.Store(uint64(through))
+	n := 0
+	err := k.ledger.Replay(from, func(r *Record) error {
+		if err := k.checkReplayed(r); err != nil {
+			return err
+		}
+		k.remember(r)
+		if r.Position <= through {
+			return nil
+		}
+		k.replay(r, countedTo)
+		k.position.Store(uint64(r.Position))
+		if n++; n%maxGroupRecords == 0 {
+			k.settleReplayed()
+		}
+		return nil
+	})
+	k.settleReplayed()
+	return err
+}
+
+// checkReplayed guards against a ledger that no keeper wrote.
+func (k *Keeper) checkReplayed(r *Record) error {
+	known := int(r.Number) <= len(k.byNumber)
+	switch {
+	case r.Kind == KindDeclaration && r.Declaration != nil && r.Number != 0 && int(r.Number) <= len(k.byNumber)+1,
+		(r.Kind == KindRetirement || r.Kind == KindReading) && r.Number != 0 && known,
+		r.Kind == KindRefusal && known:
+		return nil
+	}
+	return fmt.Errorf("record %d of kind %d is about quantity number %d, of which there are %d", r.Position, r.Kind, r.Number, len(k.byNumber))
+}
+
+// remember puts an applied reading's ID into the window.
+func (k *Keeper) remember(r *Record) {
+	if r.Kind == KindReading && r.Reading.ID != "" {
+		s := seenID{time: r.Reading.Time, value: r.Reading.Value, position: r.Position, untimed: !r.Reading.HasTime}
+		k.window.add(k.window.hash(r.Number, r.Reading.ID), s, r.ReceiveTime)
+	}
+}
+
+// replay applies one record, but for what the checkpoint includes already.
+func (k *Keeper) replay(r *Record, countedTo Position) {
+	if r.Position > countedTo {
+		k.count(r)
+	}
+	if r.Number == 0 || r.Kind == KindRefusal {
+		return
+	}
+	if int(r.Number) <= len(k.byNumber) {
+		if t := k.byNumber[r.Number-1]; r.Position <= t.saved {
+			if r.Kind == KindReading {
+				t.rows = append(t.rows, entry{Row: *rowOf(r), ID: r.Reading.ID})
+				t.markFrom = len(t.rows)
+			}
+			return
+		}
+	}
+	k.applyToTrack(r)
+}
+
+func (k *Keeper) settleReplayed() {
+	k.settleTouched()
+	for _, t := range k.touched {
+		t.touched = false
+	}
+	k.touched = k.touched[:0]
+}
+
+// present rebuilds what the checkpoint left to be rebuilt and publishes all.
+func (k *Keeper) present() error {
+	for _, t := range k.byNumber {
+		if t.hollow && t.job == nil {
+			k.startJob(t)
+		}
+		t.hollow = false
+	}
+	for len(k.jobs) > 0 {
+		j := k.jobs[0]
+		k.jobs = k.jobs[1:]
+		if j.track.job != j {
+			continue
+		}
+		if j.run(k.ledger); j.err != nil {
+			return j.err
+		}
+		k.finishJob(j)
+	}
+	k.working = false
+	for _, t := range k.byNumber {
+		t.decided, t.decidedTally = t.quantity, t.tally
+		k.touch(t)
+	}
+	k.decidedTo = Position(k.position.Load())
+	k.tracks.Store(nil)
+	k.publish(k.decidedTo)
+	return nil
+}
+
+// Resume tries to take up writing again after a full disk: it closes the
+// ledger, opens it anew and commits an empty group. It returns nil at once
+// while nothing is wrong, and an error if writing is still impossible.
+func (k *Keeper) Resume() error {
+	err := k.Health()
+	if !errors.Is(err, ErrDiskFull) {
+		return err
+	}
+	c := &command{resume: true}
+	done := make(chan struct{})
+	c.done = func() { close(done) }
+	select {
+	case k.commands <- c:
+	case <-k.stopping:
+		return errStopping
+	}
+	select {
+	case <-done:
+		return c.err
+	case <-k.stopped:
+		return errStopping
+	}
+}
+
+// resume is Resume in the keeper's goroutine, while no group is on its way.
+func (k *Keeper) resume() error {
+	if !errors.Is(k.failed, ErrDiskFull) {
+		return k.failed
+	}
+	err := k.ledger.Close()
+	if err == nil {
+		err = k.load()
+	}
+	if err == nil {
+		err = k.ledger.Append(&Group{})
+	}
+	if err != nil {
+		if !errors.Is(err, ErrDiskFull) {
+			k.options.OnFault(err)
+		}
+		return err
+	}
+	k.failed = nil
+	k.health.Store(nil)
+	return nil
+}

@@ -1,0 +1,109 @@
+package engine
+
+import (
+	"slices"
+)
+
+// job is a rebuild: the belief of one quantity, folded anew from all its
+// readings. It works on copies and reads of the ledger, so ingest goes on.
+type job struct {
+	track    *Track
+	quantity *Quantity // the declaration to fold under
+	number   QuantityNumber
+	recent   []entry // the track's rows when the job began
+	position Position
+
+	fold  fold
+	rows  []entry // canonical if ordered, else the recent ones
+	marks []fold
+	err   error
+}
+
+// run does the work.
+func (j *job) run(l Ledger) {
+	all, err := loadEntries(l, j.number, MinInstant, j.recent)
+	if err != nil {
+		j.err = err
+		return
+	}
+	var t Track
+	t.basis = j.quantity
+	t.reset()
+	if t.basis.Declaration.ordered() {
+		t.extend(all)
+		j.rows, j.marks = t.rows, t.marks
+	} else {
+		for i := range all {
+			t.fold.add(&t.basis.Declaration, &all[i])
+		}
+		j.rows, j.marks = j.recent, t.marks
+	}
+	j.fold = t.fold
+}
+
+// loadEntries returns, in canonical order, the readings of a quantity that are
+// not earlier than since: those in the ledger's complete segments and the
+// recent ones, some of which may be in both.
+func loadEntries(l Ledger, number QuantityNumber, since Instant, recent []entry) ([]entry, error) {
+	all := make([]entry, 0, len(recent))
+	known := make(map[Position]struct{}, len(recent))
+	for _, e := range recent {
+		if e.Time >= since {
+			all = append(all, e)
+			known[e.Position] = struct{}{}
+		}
+	}
+	err := l.Rows(number, since, func(rows []Row) error {
+		for _, r := range rows {
+			if _, both := known[r.Position]; !both && r.Time >= since {
+				all = append(all, entry{Row: r})
+			}
+		}
+		return nil
+	})
+	if err != nil {
+		return nil, err
+	}
+	slices.SortFunc(all, compareEntries)
+	return all, orderTies(l, all)
+}
+
+// orderTies completes the canonical order of entries sorted without their IDs:
+// where times tie, the IDs are read from the ledger.
+func orderTies(l Ledger, all []entry) error {
+	for i := 0; i < len(all); {
+		n := i + 1
+		for n < len(all) && all[n].Time == all[i].Time {
+			n++
+		}
+		if n-i > 1 {
+			if err := nameEntries(l, all[i:n]); err != nil {
+				return err
+			}
+			slices.SortFunc(all[i:n], compareEntries)
+		}
+		i = n
+	}
+	// The last entry is what later readings are compared with.
+	return nameEntries(l, all[max(0, len(all)-1):])
+}
+
+// nameEntries fills in the reading IDs that are missing.
+func nameEntries(l Ledger, entries []entry) error {
+	var at []Position
+	var nameless []*entry
+	for i := range entries {
+		if e := &entries[i]; e.HasID && e.ID == "" {
+			at, nameless = append(at, e.Position), append(nameless, e)
+		}
+	}
+	if len(at) == 0 {
+		return nil
+	}
+	i := 0
+	return l.Records(at, func(r *Record) error {
+		nameless[i].ID = r.Reading.ID
+		i++
+		return nil
+	})
+}

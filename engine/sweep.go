@@ -1,0 +1,184 @@
+package engine
+
+import (
+	"encoding/binary"
+	"slices"
+)
+
+// sweeper writes checkpoints: it goes through the quantities by number and,
+// with each group, writes the states and index rows of the next few, so that
+// no commit carries much of it. When it has been through all, every record up
+// to the position at which it began is in states and rows, and a start replays
+// only what came later.
+type sweeper struct {
+	active  bool
+	segment uint32   // being written; the last complete one if not active
+	from    Position // rows after this ...
+	through Position // ... and up to this belong to segment
+	next    int      // index of the next track
+	rows    []Row    // of the track before next, what is left of them
+	chunk   uint32
+	stored  Position // every applied reading up to this is in complete segments
+	trim    int      // tracks trimmed since the last complete sweep
+}
+
+const (
+	// A sweep begins after this many records, or after eight for every
+	// quantity if that is more: states then cost little beside the rows.
+	sweepRecords     = 1 << 16
+	sweepPerQuantity = 8
+	// minCheckpointBytes fill about a page.
+	minCheckpointBytes = 3_000
+	rowBytes           = 16
+	stateBytes         = 230
+	trimsPerGroup      = 1_000
+)
+
+// addCheckpoint adds the next piece of a sweep to a group: of about a third of
+// the bytes of its records, so a quarter of the whole.
+func (k *Keeper) addCheckpoint(w *work) {
+	s := &k.sweep
+	at := Position(k.position.Load())
+	every := k.options.CheckpointRecords
+	if every == 0 {
+		every = max(sweepRecords, sweepPerQuantity*len(k.byNumber))
+	}
+	if !s.active && at-s.stored >= Position(every) {
+		s.begin(at)
+	}
+	if s.active {
+		k.sweepPiece(&w.Group, max(minCheckpointBytes, w.bytes/3))
+	}
+}
+
+func (s *sweeper) begin(at Position) {
+	*s = sweeper{active: true, segment: s.segment + 1, from: s.stored, through: at, stored: s.stored, trim: s.trim}
+}
+
+// sweepPiece adds checkpoint entries of about that many bytes to g and, at the
+// end, what completes the sweep.
+func (k *Keeper) sweepPiece(g *Group, budget int) {
+	s := &k.sweep
+	for budget > 0 {
+		if len(s.rows) > 0 {
+			budget -= s.rowsEntry(g, k.byNumber[s.next-1].number)
+			continue
+		}
+		if s.next == len(k.byNumber) || k.byNumber[s.next].quantity == nil {
+			g.Sweep = &Sweep{Segment: s.segment, Through: s.through, Summary: k.summary()}
+			s.active = false
+			return
+		}
+		t := k.byNumber[s.next]
+		s.next++
+		if t.position <= s.from {
+			continue // neither a row nor anything else since the last sweep
+		}
+		if t.position > t.saved {
+			budget -= stateBytes
+			g.Checkpoint = append(g.Checkpoint, t.checkpoint())
+		}
+		s.rows, s.chunk = t.rowsBetween(s.from, s.through), 0
+	}
+}
+
+// checkpoint returns the entry of t's state.
+func (t *Track) checkpoint() CheckpointEntry {
+	e := CheckpointEntry{Number: t.number, State: t.appendState(nil), Through: t.position}
+	if t.quantity != t.savedQuantity {
+		e.Quantity = t.quantity
+	}
+	t.saved, t.savedQuantity = t.position, t.quantity
+	return e
+}
+
+// rowsEntry adds the next chunk of rows.
+func (s *sweeper) rowsEntry(g *Group, number QuantityNumber) (bytes int) {
+	n := min(len(s.rows), MaxChunkRows)
+	g.Checkpoint = append(g.Checkpoint, CheckpointEntry{
+		Number: number, Segment: s.segment, Chunk: s.chunk, Rows: s.rows[:n:n],
+	})
+	s.rows = s.rows[n:]
+	s.chunk++
+	return n*rowBytes + 2*rowBytes
+}
+
+// rowsBetween returns the rows of the positions after from and up to through,
+// in canonical order.
+func (t *Track) rowsBetween(from, through Position) []Row {
+	var found []entry
+	for _, e := range t.rows {
+		if from < e.Position && e.Position <= through {
+			found = append(found, e)
+		}
+	}
+	slices.SortFunc(found, compareEntries)
+	rows := make([]Row, len(found))
+	for i := range found {
+		rows[i] = found[i].Row
+	}
+	return rows
+}
+
+// landCheckpoint takes note of what a group completed.
+func (k *Keeper) landCheckpoint(w *work) {
+	s := &k.sweep
+	if w.Sweep != nil {
+		s.stored, s.trim = w.Sweep.Through, 0
+	}
+	for n := 0; n < trimsPerGroup && s.trim < len(k.byNumber); n++ {
+		if t := k.byNumber[s.trim]; t.basis != nil {
+			t.trim(s.stored)
+		}
+		s.trim++
+	}
+}
+
+// finalCheckpoint completes the sweep under way and makes another of what came
+// since, so that the next start has nothing to replay.
+func (k *Keeper) finalCheckpoint() error {
+	for range 2 {
+		if at := Position(k.position.Load()); !k.sweep.active {
+			if at == k.sweep.stored {
+				return nil
+			}
+			k.sweep.begin(at)
+		}
+		for k.sweep.active {
+			var g Group
+			k.sweepPiece(&g, maxGroupBytes)
+			if err := k.ledger.Append(&g); err != nil {
+				return err
+			}
+			if g.Sweep != nil {
+				k.sweep.stored = g.Sweep.Through
+			}
+		}
+	}
+	return nil
+}
+
+// Versions of the texts that are opaque to the ledger. A reader of another
+// version folds the belief anew.
+const (
+	stateVersion   = 1
+	summaryVersion = 1
+)
+
+// summary is what a sweep keeps beside the quantities: the counts and the log
+// of refusals.
+func (k *Keeper) summary() []byte {
+	b := []byte{summaryVersion}
+	b = binary.AppendUvarint(b, uint64(len(ReadingReasons)))
+	for i := range ReadingReasons {
+		b = binary.AppendUvarint(b, k.refused[i].Load())
+	}
+	b = binary.AppendUvarint(b, k.applied.Load())
+	b = binary.AppendUvarint(b, k.position.Load())
+	last := Position(0)
+	for _, r := range k.refusals.all() {
+		b = binary.AppendUvarint(b, uint64(r.Position-last))
+		last = r.Position
+	}
+	return b
+}

@@ -1,0 +1,198 @@
+package engine
+
+import (
+	"slices"
+	"sort"
+	"sync/atomic"
+)
+
+// markSpacing is the number of rows from one mark to the next: a late reading
+// refolds at most that many more than come after it.
+const markSpacing = 64
+
+// Track is one quantity's place in the keeper. All but its View belongs to the
+// keeper's goroutine.
+//
+// The rows of an ordered track are a canonical run that ends with the latest
+// reading, and marks[i] is the fold of everything before rows[markFrom +
+// i*markSpacing]; so a reading that comes late, but not before marks[0], costs
+// one merge and a short refold. The obvious way, to fold on arrival, would make
+// the belief depend on the order of arrival; refolding everything would make a
+// late reading cost as much as the quantity's whole life.
+type Track struct {
+	id     QuantityID
+	number QuantityNumber
+	view   atomic.Pointer[View]
+
+	// What has been decided, including records that aren't durable yet.
+	decided      *Quantity
+	decidedTally tally
+
+	// What is durable.
+	quantity *Quantity
+	basis    *Quantity
+	tally    tally
+	position Position
+	fold     fold
+	foldedTo Position
+	rows     []entry
+	marks    []fold
+	markFrom int
+
+	fresh         []entry   // of the group being folded
+	touched       bool      // in the group being folded
+	job           *job      // the rebuild under way or waiting; rows[job.rows:] then stand in order of arrival
+	saved         Position  // the last record that its checkpoint includes
+	savedQuantity *Quantity // as in its checkpoint
+	hollow        bool      // restored without a fold
+}
+
+// tally is what deciding on a reading or a declaration needs to know of the
+// readings applied before.
+type tally struct {
+	count       int
+	bare        int // without an uncertainty of their own
+	first, last Instant
+}
+
+func (a *tally) add(r *Row) {
+	if a.count == 0 || r.Time < a.first {
+		a.first = r.Time
+	}
+	if a.count == 0 || r.Time > a.last {
+		a.last = r.Time
+	}
+	a.count++
+	if !r.HasUncertainty {
+		a.bare++
+	}
+}
+
+// ID returns the quantity's ID.
+func (t *Track) ID() QuantityID { return t.id }
+
+// View returns the present picture; nil before the declaration is durable.
+func (t *Track) View() *View { return t.view.Load() }
+
+// publish makes the present state visible.
+func (t *Track) publish(change uint64) {
+	t.view.Store(&View{
+		Quantity: t.quantity, Position: t.position, Change: change,
+		ReadingCount: t.fold.count, HasLast: t.fold.count > 0, LastTime: t.fold.last.Time,
+		Rebuilding: t.job != nil,
+		basis:      t.basis, fold: t.fold, foldedTo: t.foldedTo,
+		rows: t.rows, canonical: t.job == nil && t.basis.Declaration.ordered(),
+		marks: t.marks, markFrom: t.markFrom,
+	})
+}
+
+// reset makes t the track of a quantity without readings.
+func (t *Track) reset() {
+	t.fold, t.rows, t.markFrom = fold{}, nil, 0
+	t.marks = []fold{{}}
+}
+
+// settle folds the fresh readings in, as long as that takes at most budget
+// refolded steps. It returns the steps taken, and false if a rebuild is needed
+// instead; the fresh rows are then in rows, in order of arrival.
+func (t *Track) settle(budget int) (steps int, ok bool) {
+	fresh := t.fresh
+	t.fresh = t.fresh[:0]
+	d := &t.basis.Declaration
+	switch {
+	case len(fresh) == 0:
+		return 0, true
+	case t.job != nil:
+		t.rows = append(t.rows, fresh...)
+		return 0, true
+	case !d.ordered():
+		for i := range fresh {
+			t.fold.add(d, &fresh[i])
+		}
+		t.rows = append(t.rows, fresh...)
+		return 0, true
+	}
+	if !slices.IsSortedFunc(fresh, compareEntries) {
+		slices.SortFunc(fresh, compareEntries)
+	}
+	if t.fold.count == 0 || compareEntries(t.fold.last, fresh[0]) <= 0 {
+		t.extend(fresh)
+		return 0, true
+	}
+	return t.insert(fresh, budget)
+}
+
+// extend appends rows that come after all others.
+func (t *Track) extend(fresh []entry) {
+	d := &t.basis.Declaration
+	for _, e := range fresh {
+		if i := len(t.rows) - t.markFrom; i == len(t.marks)*markSpacing {
+			t.marks = append(t.marks, t.fold)
+		}
+		t.fold.add(d, &e)
+		t.rows = append(t.rows, e)
+	}
+}
+
+// insert merges rows of which the first is late. The slices that Views share
+// are left as they are.
+func (t *Track) insert(fresh []entry, budget int) (steps int, ok bool) {
+	if base := &t.marks[0]; base.count > 0 && compareEntries(fresh[0], base.last) < 0 {
+		t.rows = append(t.rows, fresh...)
+		return 0, false
+	}
+	at := t.markFrom + sort.Search(len(t.rows)-t.markFrom, func(i int) bool {
+		return compareEntries(t.rows[t.markFrom+i], fresh[0]) > 0
+	})
+	mark := (at - t.markFrom) / markSpacing
+	mark = min(mark, len(t.marks)-1)
+	from := t.markFrom + mark*markSpacing
+	steps = len(t.rows) - from + len(fresh)
+	if steps > budget+len(fresh) {
+		t.rows = append(t.rows, fresh...)
+		return 0, false
+	}
+	tail := mergeEntries(t.rows[from:], fresh)
+	t.rows = append(slices.Clone(t.rows[:from]), make([]entry, 0, len(tail))...)
+	t.fold = t.marks[mark]
+	t.marks = slices.Clone(t.marks[:mark+1])
+	t.extend(tail)
+	return steps, true
+}
+
+// mergeEntries merges two canonical runs into a new one.
+func mergeEntries(a, b []entry) []entry {
+	out := make([]entry, 0, len(a)+len(b))
+	for len(a) > 0 && len(b) > 0 {
+		if compareEntries(b[0], a[0]) < 0 {
+			out, b = append(out, b[0]), b[1:]
+		} else {
+			out, a = append(out, a[0]), a[1:]
+		}
+	}
+	return append(append(out, a...), b...)
+}
+
+// trim drops rows that complete segments hold, where nothing needs them.
+func (t *Track) trim(stored Position) {
+	if t.job != nil {
+		return
+	}
+	if !t.basis.Declaration.ordered() {
+		if slices.ContainsFunc(t.rows, func(e entry) bool { return e.Position <= stored }) {
+			t.rows = slices.DeleteFunc(slices.Clone(t.rows), func(e entry) bool { return e.Position <= stored })
+		}
+		return
+	}
+	n := 0
+	for n < len(t.rows) && t.rows[n].Position <= stored {
+		n++
+	}
+	if n < t.markFrom || n == 0 {
+		return
+	}
+	mark := min((n-t.markFrom)/markSpacing, len(t.marks)-1)
+	t.rows = slices.Clone(t.rows[t.markFrom+mark*markSpacing:])
+	t.marks = slices.Clone(t.marks[mark:])
+	t.markFrom = 0
+}

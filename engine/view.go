@@ -1,0 +1,56 @@
+package engine
+
+import (
+	"sync/atomic"
+
+	"leadline.example/engine/posterior"
+)
+
+// View is an immutable picture of one quantity after some record of the
+// ledger. Any goroutine may keep and read it.
+type View struct {
+	Quantity     *Quantity // as last declared or retired
+	Position     Position  // of the last record about the quantity
+	ReadingCount int       // readings in the belief
+	HasLast      bool
+	LastTime     Instant // of the latest reading in the belief
+	Rebuilding   bool    // the belief is that of an earlier position, until a rebuild is done
+	Change       uint64  // grows with each View of any quantity
+
+	basis     *Quantity // declaration on which fold rests
+	fold      fold
+	foldedTo  Position
+	rows      []entry // the applied readings that need not be in storage yet
+	canonical bool    // rows are in canonical order, after marks[0]
+	marks     []fold  // fold before rows[markFrom + i*markSpacing]
+	markFrom  int
+	still     atomic.Pointer[Figures] // of a belief that time doesn't move, once asked for
+}
+
+// Breach is the probability that the true value lies outside the tolerance.
+type Breach struct {
+	Below, Above, Either float64
+	Conformance          float64 // 1 - Either, without cancellation
+}
+
+// DefaultCoverage is the coverage probability where none is asked for.
+const DefaultCoverage = 0.95
+
+// breachOf returns the breach probabilities of a level under a tolerance with
+// at least one limit.
+func breachOf(p posterior.Posterior, t Tolerance) Breach {
+	var b Breach
+	switch {
+	case t.HasLower && t.HasUpper:
+		b.Below, b.Above = p.LowerTail(t.Lower), p.UpperTail(t.Upper)
+		b.Conformance = p.Between(t.Lower, t.Upper)
+	case t.HasLower:
+		b.Below = p.LowerTail(t.Lower)
+		b.Conformance = p.UpperTail(t.Lower)
+	default:
+		b.Above = p.UpperTail(t.Upper)
+		b.Conformance = p.LowerTail(t.Upper)
+	}
+	b.Either = min(1, b.Below+b.Above)
+	return b
+}
