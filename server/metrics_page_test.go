@@ -1,0 +1,319 @@
+package server
+
+import (
+	"bytes"
+	"compress/gzip"
+	"errors"
+	"io"
+	"math"
+	"strings"
+	"testing"
+
+	dto "github.com/prometheus/client_model/go"
+	"github.com/prometheus/common/expfmt"
+	"github.com/prometheus/common/model"
+
+	"leadline.example/engine"
+	"leadline.example/engine/decide"
+)
+
+// quantityWith returns an invented quantity as the page sees it.
+func quantityWith(id, unit, description string) published {
+	q := &engine.Quantity{
+		ID: engine.QuantityID(id),
+		Declaration: engine.Declaration{
+			Unit: unit, Description: description,
+			Tolerance: engine.Tolerance{HasLower: true, Lower: 0.7, HasUpper: true, Upper: 0.9},
+		},
+	}
+	return published{
+		labels: labelsOf(q), tolerance: q.Declaration.Tolerance,
+		Figures: engine.Figures{
+			ReadingCount: 12, HasLast: true, LastTime: 1772366400_250000000,
+			HasMean: true, Mean: 0.8123, HasStandardDeviation: true, StandardDeviation: 0.0071,
+			HasInterval: true, Lower: 0.7984, Upper: 0.8262,
+			HasBreach: true, Breach: engine.Breach{Below: 1.2e-56, Above: 2.4e-35, Either: 2.4e-35, Conformance: 1},
+			Verdict: decide.Conforms,
+		},
+	}
+}
+
+func renderQuantities(t testing.TB, quantities []published) string {
+	t.Helper()
+	var out bytes.Buffer
+	w := newPageWriter()
+	if err := w.begin(&out, false); err != nil {
+		t.Fatal(err)
+	}
+	w.quantities(families(), quantities)
+	if err := w.end(); err != nil {
+		t.Fatal(err)
+	}
+	return out.String()
+}
+
+func parsePage(t testing.TB, text string) map[string]*dto.MetricFamily {
+	t.Helper()
+	parser := expfmt.NewTextParser(model.UTF8Validation)
+	families, err := parser.TextToMetricFamilies(strings.NewReader(text))
+	if err != nil {
+		t.Fatalf("the page can't be parsed: %v", err)
+	}
+	return families
+}
+
+// seriesOf maps name{label=value,...} to the value, as an independent parser
+// reads the page.
+func seriesOf(t testing.TB, text string) map[string]float64 {
+	t.Helper()
+	out := map[string]float64{}
+	for name, f := range parsePage(t, text) {
+		for _, m := range f.GetMetric() {
+			var labels []string
+			for _, l := range m.GetLabel() {
+				labels = append(labels, l.GetName()+"="+l.GetValue())
+			}
+			key := name + "{" + strings.Join(labels, ",") + "}"
+			if _, double := out[key]; double {
+				t.Errorf("series %s is published twice", key)
+			}
+			switch {
+			case f.GetType() == dto.MetricType_COUNTER:
+				out[key] = m.GetCounter().GetValue()
+			case f.GetType() == dto.MetricType_GAUGE:
+				out[key] = m.GetGauge().GetValue()
+			}
+		}
+	}
+	return out
+}
+
+func TestPageCarriesWhatABeliefSays(t *testing.T) {
+	got := seriesOf(t, renderQuantities(t, []published{quantityWith("pump-3.gap", "mm", "coupling gap")}))
+	want := map[string]float64{
+		"leadline_quantity_info{quantity=pump-3.gap,unit=mm,description=coupling gap}":             1,
+		"leadline_posterior_mean{quantity=pump-3.gap,unit=mm}":                                     0.8123,
+		"leadline_posterior_standard_deviation{quantity=pump-3.gap,unit=mm}":                       0.0071,
+		"leadline_posterior_interval_lower{quantity=pump-3.gap,unit=mm,coverage_probability=0.95}": 0.7984,
+		"leadline_posterior_interval_upper{quantity=pump-3.gap,unit=mm,coverage_probability=0.95}": 0.8262,
+		"leadline_breach_probability{quantity=pump-3.gap,side=below}":                              1.2e-56,
+		"leadline_breach_probability{quantity=pump-3.gap,side=above}":                              2.4e-35,
+		"leadline_breach_probability{quantity=pump-3.gap,side=either}":                             2.4e-35,
+		"leadline_tolerance_limit{quantity=pump-3.gap,unit=mm,side=lower}":                         0.7,
+		"leadline_tolerance_limit{quantity=pump-3.gap,unit=mm,side=upper}":                         0.9,
+		"leadline_verdict{quantity=pump-3.gap,verdict=CONFORMS}":                                   1,
+		"leadline_verdict{quantity=pump-3.gap,verdict=BREACHES}":                                   0,
+		"leadline_verdict{quantity=pump-3.gap,verdict=INCONCLUSIVE}":                               0,
+		"leadline_quantity_readings_total{quantity=pump-3.gap}":                                    12,
+		"leadline_last_reading_timestamp_seconds{quantity=pump-3.gap}":                             1772366400.25,
+	}
+	for k, v := range want {
+		if g, ok := got[k]; !ok || g != v {
+			t.Errorf("%s is %v (published: %t), want %v", k, g, ok, v)
+		}
+	}
+	if len(got) != len(want) {
+		t.Errorf("%d series are published, want %d: %v", len(got), len(want), got)
+	}
+	if len(got) > 16 {
+		t.Errorf("a quantity has %d series, the interface promises at most 16", len(got))
+	}
+}
+
+func TestPageLeavesOutWhatDoesNotExist(t *testing.T) {
+	q := quantityWith("winch.rope", "mm", "")
+	q.tolerance, q.Figures = engine.Tolerance{}, engine.Figures{}
+	got := seriesOf(t, renderQuantities(t, []published{q}))
+	want := map[string]float64{
+		"leadline_quantity_info{quantity=winch.rope,unit=mm,description=}": 1,
+		"leadline_quantity_readings_total{quantity=winch.rope}":            0,
+	}
+	if len(got) != len(want) {
+		t.Errorf("published are %v, want only %v", got, want)
+	}
+	for k, v := range want {
+		if g, ok := got[k]; !ok || g != v {
+			t.Errorf("%s is %v (published: %t), want %v", k, g, ok, v)
+		}
+	}
+}
+
+func TestPageKeepsEveryBitOfANumber(t *testing.T) {
+	for _, tt := range []struct {
+		name  string
+		value float64
+		why   string
+	}{
+		{"third", 1.0 / 3, "endless in decimals"},
+		{"smallest", math.SmallestNonzeroFloat64, "denormal"},
+		{"greatest", math.MaxFloat64, "309 digits"},
+		{"negative zero", math.Copysign(0, -1), "has a sign"},
+		{"tail", 1e-300, "breach probabilities reach it"},
+		{"whole", 123456789, "written without exponent"},
+		{"whole beyond 2^53", 1 << 60, "more digits than a float64 has"},
+		{"negative whole", -40, "written without exponent"},
+	} {
+		t.Run(tt.name, func(t *testing.T) {
+			q := quantityWith("room", "Cel", "")
+			q.Mean = tt.value
+			got := seriesOf(t, renderQuantities(t, []published{q}))["leadline_posterior_mean{quantity=room,unit=Cel}"]
+			if math.Float64bits(got) != math.Float64bits(tt.value) {
+				t.Errorf("%v comes back as %v (%s)", tt.value, got, tt.why)
+			}
+		})
+	}
+}
+
+func TestPageWritesMomentsInSeconds(t *testing.T) {
+	for _, tt := range []struct {
+		name string
+		at   engine.Instant
+		want string
+	}{
+		{"whole", 1772366400_000000000, "1772366400"},
+		{"quarter", 1772366400_250000000, "1772366400.25"},
+		{"a millisecond", 1772366400_001000000, "1772366400.001"},
+		{"a nanosecond", 1772366400_000000001, "1772366400.000000001"},
+		{"before 1970", -1_500000000, "-1.5"},
+		{"1970", 0, "0"},
+	} {
+		t.Run(tt.name, func(t *testing.T) {
+			if got := string(appendSeconds(nil, tt.at)); got != tt.want {
+				t.Errorf("%d ns is written %s, want %s", tt.at, got, tt.want)
+			}
+		})
+	}
+}
+
+func TestPageEscapesLabels(t *testing.T) {
+	for _, tt := range []struct{ name, description, want string }{
+		{"quote", `the "old" pump`, `the "old" pump`},
+		{"backslash", `C:\ice`, `C:\ice`},
+		{"line feed", "first\nsecond", "first\nsecond"},
+		{"backslash before n", `\n`, `\n`},
+		{"not UTF-8", "a\xffb", "a\uFFFDb"},
+		{"forged series", "\"} 1\nleadline_ready 0", "\"} 1\nleadline_ready 0"},
+	} {
+		t.Run(tt.name, func(t *testing.T) {
+			page := renderQuantities(t, []published{quantityWith("q", "mm", tt.description)})
+			info := parsePage(t, page)["leadline_quantity_info"].GetMetric()
+			if len(info) != 1 {
+				t.Fatalf("%d series of leadline_quantity_info, want 1:\n%s", len(info), page)
+			}
+			for _, l := range info[0].GetLabel() {
+				if l.GetName() == "description" && l.GetValue() != tt.want {
+					t.Errorf("description comes back as %q, want %q", l.GetValue(), tt.want)
+				}
+			}
+		})
+	}
+}
+
+func TestPageKeepsFamiliesTogether(t *testing.T) {
+	page := renderQuantities(t, []published{quantityWith("a", "mm", ""), quantityWith("b", "Cel", ""), quantityWith("c", "m3/h", "")})
+	seen := map[string]bool{}
+	var open string
+	for line := range strings.Lines(page) {
+		name := strings.FieldsFunc(strings.TrimPrefix(strings.TrimPrefix(line, "# HELP "), "# TYPE "),
+			func(r rune) bool { return r == '{' || r == ' ' })[0]
+		if name == open {
+			continue
+		}
+		if seen[name] {
+			t.Fatalf("metric %s is opened again at %q", name, line)
+		}
+		seen[name], open = true, name
+	}
+	if len(seen) != len(families()) {
+		t.Errorf("%d metrics, want %d", len(seen), len(families()))
+	}
+}
+
+func TestPageIsTheSameCompressed(t *testing.T) {
+	quantities := make([]published, 500)
+	for i := range quantities {
+		quantities[i] = quantityWith("room-"+string(rune('a'+i%26))+strings.Repeat("x", i/26), "Cel", "store room")
+	}
+	want := renderQuantities(t, quantities)
+	w := newPageWriter()
+	for range 2 { // the writer is used again
+		var out bytes.Buffer
+		if err := w.begin(&out, true); err != nil {
+			t.Fatal(err)
+		}
+		w.quantities(families(), quantities)
+		if err := w.end(); err != nil {
+			t.Fatal(err)
+		}
+		if out.Len() >= len(want) {
+			t.Errorf("%d bytes compressed, %d plain", out.Len(), len(want))
+		}
+		z, err := gzip.NewReader(&out)
+		if err != nil {
+			t.Fatal(err)
+		}
+		got, err := io.ReadAll(z)
+		if err != nil {
+			t.Fatal(err)
+		}
+		if string(got) != want {
+			t.Error("the compressed page differs from the plain one")
+		}
+	}
+}
+
+// brokenPipe fails from its second write on.
+type brokenPipe struct{ writes int }
+
+var errBroken = errors.New("broken pipe")
+
+func (b *brokenPipe) Write(p []byte) (int, error) {
+	if b.writes++; b.writes > 1 {
+		return 0, errBroken
+	}
+	return len(p), nil
+}
+
+func TestPageStopsAtABrokenConnection(t *testing.T) {
+	quantities := make([]published, 5000)
+	for i := range quantities {
+		quantities[i] = quantityWith("q", "mm", "")
+	}
+	var out brokenPipe
+	w := newPageWriter()
+	if err := w.begin(&out, false); err != nil {
+		t.Fatal(err)
+	}
+	w.quantities(families(), quantities)
+	if err := w.end(); !errors.Is(err, errBroken) {
+		t.Errorf("error is %v, want %v", err, errBroken)
+	}
+	if out.writes != 2 {
+		t.Errorf("%d writes, want 2: one that worked and the one that failed", out.writes)
+	}
+}
+
+func TestGzipIsNegotiated(t *testing.T) {
+	for _, tt := range []struct {
+		name    string
+		headers []string
+		want    bool
+		source  string
+	}{
+		{"none", nil, false, "RFC 9110, 12.5.3: without the field any coding, identity is safe"},
+		{"gzip", []string{"gzip"}, true, "RFC 9110, 12.5.3"},
+		{"second", []string{"zstd, gzip;q=0.5"}, true, "RFC 9110, 12.5.3"},
+		{"second field", []string{"zstd", "GZIP"}, true, "RFC 9110, 8.4.1: codings are case-insensitive"},
+		{"refused", []string{"gzip;q=0"}, false, "RFC 9110, 12.4.2: weight 0 is not acceptable"},
+		{"refused with decimals", []string{"gzip; q=0.000"}, false, "RFC 9110, 12.4.2"},
+		{"least weight", []string{"gzip; q=0.001"}, true, "RFC 9110, 12.4.2"},
+		{"identity", []string{"identity"}, false, "RFC 9110, 12.5.3"},
+		{"another", []string{"x-gzip-not"}, false, "whole names count"},
+	} {
+		t.Run(tt.name, func(t *testing.T) {
+			if got := acceptsGzip(tt.headers); got != tt.want {
+				t.Errorf("Accept-Encoding %q: %t, want %t (%s)", tt.headers, got, tt.want, tt.source)
+			}
+		})
+	}
+}

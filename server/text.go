@@ -1,0 +1,263 @@
+package server
+
+import (
+	"cmp"
+	"fmt"
+	"strings"
+	"text/tabwriter"
+	"unicode"
+
+	"leadline.example/engine"
+	"leadline.example/engine/decide"
+	"leadline.example/engine/posterior"
+)
+
+// caution ends every page with a judgement on it.
+const caution = "This informs people; it is not a safety system and replaces no protection of the plant.\n"
+
+// sheet is text/plain for a person: a heading and lines of label and text.
+type sheet struct{ strings.Builder }
+
+func (p *sheet) line(label, format string, args ...any) {
+	fmt.Fprintf(p, "  %-14s", label)
+	fmt.Fprintf(p, format, args...)
+	p.WriteByte('\n')
+}
+
+// table returns a writer of aligned columns; the caller flushes it.
+func (p *sheet) table(headings string) *tabwriter.Writer {
+	w := tabwriter.NewWriter(p, 0, 8, 2, ' ', tabwriter.StripEscape)
+	fmt.Fprintln(w, headings)
+	return w
+}
+
+// more ends a page of a list.
+func (p *sheet) more(token string) {
+	if token != "" {
+		fmt.Fprintf(p, "More: page_token=%s\n", token)
+	}
+}
+
+// oneLine keeps users' text from breaking a page's lines and columns.
+func oneLine(s string) string {
+	return strings.Map(func(r rune) rune {
+		if unicode.IsControl(r) {
+			return ' '
+		}
+		return r
+	}, s)
+}
+
+// beliefText renders a belief in a few lines.
+func beliefText(b *engine.Belief) string {
+	p := new(sheet)
+	p.belief(b)
+	p.WriteString(caution)
+	return p.String()
+}
+
+func (p *sheet) belief(b *engine.Belief) {
+	d := &b.Quantity.Declaration
+	fmt.Fprintf(p, "%s at %s\n", b.Quantity.ID, b.Time)
+	if d.Description != "" {
+		p.line("what", "%s", oneLine(d.Description))
+	}
+	p.level(b)
+	p.judgement(b)
+	p.prediction(b)
+	p.repeatability(b)
+	if b.HasLast {
+		p.line("readings", "%d, the last %s before (%s)", b.ReadingCount, elapsed(b.Time.Sub(b.LastTime)), b.LastTime)
+	} else {
+		p.line("readings", "none yet")
+	}
+	p.line("basis", "revision %d, ledger position %d", b.Quantity.Revision, b.Position)
+	if b.Rebuilding {
+		p.line("note", "the belief is being rebuilt; this is the one before")
+	}
+}
+
+// level writes the result with its standard uncertainty, the interval and
+// where the threshold asked for lies.
+func (p *sheet) level(b *engine.Belief) {
+	unit := b.Quantity.Declaration.Unit
+	if b.Level.Form() == posterior.FormNone {
+		p.line("result", "nothing is known yet")
+		return
+	}
+	p.line("result", "%s", resultText(b.Level, b.Lower, b.Upper, unit))
+	last, ok := levelPlace(b.Level, b.Lower, b.Upper)
+	lower, upper := shortest(b.Lower), shortest(b.Upper)
+	if ok {
+		lower, upper = roundTo(b.Lower, last), roundTo(b.Upper, last)
+	}
+	p.line("interval", "%s to %s (coverage probability %s)", lower, within(upper, unit), shortest(b.Coverage))
+	if b.HasThreshold {
+		p.line("threshold", "below %s with probability %s", within(shortest(b.Threshold), unit), probabilityText(b.ProbabilityBelow))
+	}
+}
+
+// levelPlace is the place to which a level is rounded: that of its standard
+// uncertainty, or where none exists that of the interval's half width.
+func levelPlace(l posterior.Posterior, lower, upper float64) (place, bool) {
+	if u, ok := l.StandardDeviation(); ok {
+		return uncertaintyPlace(u)
+	}
+	return uncertaintyPlace(upper/2 - lower/2)
+}
+
+// resultText writes "0.8123 mm, u = 0.0071 mm", or says why there is no u.
+func resultText(l posterior.Posterior, lower, upper float64, unit string) string {
+	value := shortest(l.Location())
+	last, ok := levelPlace(l, lower, upper)
+	if ok {
+		value = roundTo(l.Location(), last)
+	}
+	if u, exists := l.StandardDeviation(); exists && ok {
+		return fmt.Sprintf("%s, u = %s", within(value, unit), within(roundTo(u, last), unit))
+	}
+	centre := "median"
+	if _, exists := l.Mean(); exists {
+		centre = "mean"
+	}
+	return fmt.Sprintf("%s (%s; too few readings for a standard uncertainty)", within(value, unit), centre)
+}
+
+// judgement writes tolerance, breach probabilities and verdict.
+func (p *sheet) judgement(b *engine.Belief) {
+	d := &b.Quantity.Declaration
+	if !d.Tolerance.Declared() {
+		p.line("verdict", "none, as no tolerance is declared")
+		return
+	}
+	p.line("tolerance", "%s", toleranceText(d.Tolerance, d.Unit))
+	if b.HasBreach {
+		p.line("breach", "%s", breachText(b))
+	}
+	p.line("verdict", "%s", verdictText(b))
+}
+
+func toleranceText(t engine.Tolerance, unit string) string {
+	switch {
+	case t.HasLower && t.HasUpper:
+		return shortest(t.Lower) + " to " + within(shortest(t.Upper), unit)
+	case t.HasLower:
+		return "at least " + within(shortest(t.Lower), unit)
+	case t.HasUpper:
+		return "at most " + within(shortest(t.Upper), unit)
+	}
+	return "none"
+}
+
+func breachText(b *engine.Belief) string {
+	t := b.Quantity.Declaration.Tolerance
+	switch {
+	case t.HasLower && t.HasUpper:
+		return fmt.Sprintf("probability %s (below %s, above %s)",
+			probabilityText(b.Either), probabilityText(b.Below), probabilityText(b.Above))
+	case t.HasLower:
+		return "probability " + probabilityText(b.Below) + " (below)"
+	}
+	return "probability " + probabilityText(b.Above) + " (above)"
+}
+
+// verdictText gives the verdict with the rule that led to it.
+func verdictText(b *engine.Belief) string {
+	rule := b.Quantity.Declaration.DecisionRule()
+	conform, breach := shortest(rule.ConformProbability), shortest(rule.BreachProbability)
+	switch {
+	case b.Verdict == decide.Conforms:
+		return fmt.Sprintf("CONFORMS: inside with probability %s (rule: at least %s)", probabilityText(b.Conformance), conform)
+	case b.Verdict == decide.Breaches:
+		return fmt.Sprintf("BREACHES: outside with probability %s (rule: at least %s)", probabilityText(b.Either), breach)
+	case !b.HasBreach:
+		return "INCONCLUSIVE: too little is known"
+	}
+	return fmt.Sprintf("INCONCLUSIVE: inside with probability %s (rule: at least %s), outside %s (at least %s)",
+		probabilityText(b.Conformance), conform, probabilityText(b.Either), breach)
+}
+
+func (p *sheet) prediction(b *engine.Belief) {
+	if b.Predictive.Form() == posterior.FormNone {
+		return
+	}
+	unit := b.Quantity.Declaration.Unit
+	p.line("next reading", "%s", resultText(b.Predictive, b.PredictiveLower, b.PredictiveUpper, unit))
+}
+
+func (p *sheet) repeatability(b *engine.Belief) {
+	r, unit := b.Repeatability, b.Quantity.Declaration.Unit
+	switch {
+	case r.Known:
+		p.line("repeatability", "%s (declared)", within(shortest(r.StandardDeviation), unit))
+	case r.HasMedian:
+		last, ok := uncertaintyPlace(r.Median)
+		text := [...]string{shortest(r.Median), shortest(r.Lower), shortest(r.Upper)}
+		if ok {
+			text = [...]string{roundTo(r.Median, last), roundTo(r.Lower, last), roundTo(r.Upper, last)}
+		}
+		p.line("repeatability", "%s (learned; %s to %s)", within(text[0], unit), text[1], within(text[2], unit))
+	}
+}
+
+// beliefsText renders a list of beliefs, a line each.
+func beliefsText(beliefs []engine.Belief, nextPage string) string {
+	p := new(sheet)
+	if len(beliefs) == 0 {
+		p.WriteString("No quantities.\n")
+		return p.String()
+	}
+	w := p.table("QUANTITY\tRESULT\tBREACH\tVERDICT\tLAST READING")
+	for i := range beliefs {
+		b := &beliefs[i]
+		result, breach, verdict, last := "nothing known", "-", "-", "none"
+		if b.Level.Form() != posterior.FormNone {
+			result = resultText(b.Level, b.Lower, b.Upper, b.Quantity.Declaration.Unit)
+		}
+		if b.HasBreach {
+			breach = probabilityText(b.Either)
+		}
+		if b.Verdict != 0 {
+			verdict = b.Verdict.String()
+		}
+		if b.HasLast {
+			last = elapsed(b.Time.Sub(b.LastTime)) + " before"
+		}
+		fmt.Fprintf(w, "%s\t%s\t%s\t%s\t%s\n", b.Quantity.ID, result, breach, verdict, last)
+	}
+	_ = w.Flush() // into memory
+	fmt.Fprintf(p, "At %s.\n", beliefs[0].Time)
+	p.more(nextPage)
+	p.WriteString(caution)
+	return p.String()
+}
+
+// elapsed writes a duration in nanoseconds with its two greatest units.
+func elapsed(nanos float64) string {
+	seconds := int64(nanos / 1e9)
+	if seconds < 1 {
+		return "less than 1 s"
+	}
+	for _, u := range [...]struct {
+		size, part int64
+		name, sub  string
+	}{{86400, 3600, "d", "h"}, {3600, 60, "h", "min"}, {60, 1, "min", "s"}} {
+		whole, rest := seconds/u.size, seconds%u.size/u.part
+		switch {
+		case whole > 0 && rest > 0:
+			return fmt.Sprintf("%d %s %d %s", whole, u.name, rest, u.sub)
+		case whole > 0:
+			return fmt.Sprintf("%d %s", whole, u.name)
+		}
+	}
+	return fmt.Sprintf("%d s", seconds)
+}
+
+// errorText renders a refused request.
+func errorText(e *engine.Error) string {
+	p := new(sheet)
+	p.WriteString(oneLine(e.Message) + "\n")
+	p.line("reason", "%s", e.Reason)
+	p.line("field", "%s", cmp.Or(e.Field, "-"))
+	return p.String()
+}

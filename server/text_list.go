@@ -1,0 +1,157 @@
+package server
+
+import (
+	"fmt"
+	"time"
+
+	"leadline.example/engine"
+)
+
+// quantityText renders a declaration in words.
+func quantityText(q *engine.Quantity) string {
+	d := &q.Declaration
+	p := new(sheet)
+	fmt.Fprintf(p, "%s, revision %d\n", q.ID, q.Revision)
+	if d.Description != "" {
+		p.line("what", "%s", oneLine(d.Description))
+	}
+	p.line("unit", "%s", d.Unit)
+	p.line("prior", "%s", priorText(&d.Prior, d.Unit))
+	p.line("repeatability", "%s", repeatabilityText(d.Repeatability, d.Unit))
+	p.line("dynamics", "%s", dynamicsText(d.Dynamics, d.Unit))
+	p.line("tolerance", "%s", toleranceText(d.Tolerance, d.Unit))
+	if d.Tolerance.Declared() {
+		r := d.DecisionRule()
+		p.line("decision rule", "conforms from probability %s, breaches from %s",
+			shortest(r.ConformProbability), shortest(r.BreachProbability))
+	}
+	p.line("created", "%s", q.CreateTime)
+	p.line("updated", "%s", q.UpdateTime)
+	if q.Retired {
+		p.line("retired", "%s", q.RetireTime)
+	}
+	return p.String()
+}
+
+func priorText(prior *engine.Prior, unit string) string {
+	text := "vague: nothing was known"
+	switch prior.Form {
+	case engine.PriorNormal:
+		text = fmt.Sprintf("mean %s, standard deviation %s", shortest(prior.Mean), within(shortest(prior.StandardDeviation), unit))
+	case engine.PriorInterval:
+		text = fmt.Sprintf("%s to %s with probability %s",
+			shortest(prior.Low), within(shortest(prior.High), unit), shortest(prior.Probability))
+	}
+	if prior.HasTime {
+		text += ", at " + prior.Time.String()
+	}
+	return text
+}
+
+func repeatabilityText(r engine.Repeatability, unit string) string {
+	switch r.Form {
+	case engine.RepeatabilityKnown:
+		return within(shortest(r.StandardDeviation), unit)
+	case engine.RepeatabilityLearned:
+		return fmt.Sprintf("learned, from a guess of %s worth %s degrees of freedom", within(shortest(r.Guess), unit), shortest(r.Worth))
+	case engine.RepeatabilityLearnedReference:
+		return "learned from the readings alone"
+	}
+	return "comes with each reading"
+}
+
+func dynamicsText(d engine.Dynamics, unit string) string {
+	switch d.Form {
+	case engine.DynamicsRandomWalk:
+		return fmt.Sprintf("random walk, %s in %s", within(shortest(d.StandardDeviation), unit), elapsedOrShort(d.Per))
+	}
+	return "constant"
+}
+
+// elapsedOrShort writes a declared duration exactly.
+func elapsedOrShort(d time.Duration) string {
+	if d%time.Second != 0 || d <= 0 {
+		return d.String()
+	}
+	s := int64(d / time.Second)
+	for _, u := range [...]struct {
+		size int64
+		name string
+	}{{86400, "d"}, {3600, "h"}, {60, "min"}} {
+		if s%u.size == 0 {
+			return fmt.Sprintf("%d %s", s/u.size, u.name)
+		}
+	}
+	return fmt.Sprintf("%d s", s)
+}
+
+// quantitiesText renders a list of declarations, a line each.
+func quantitiesText(quantities []engine.Quantity, nextPage string) string {
+	p := new(sheet)
+	if len(quantities) == 0 {
+		p.WriteString("No quantities.\n")
+		return p.String()
+	}
+	w := p.table("QUANTITY\tUNIT\tTOLERANCE\tDYNAMICS\tDESCRIPTION")
+	for i := range quantities {
+		q := &quantities[i]
+		d := &q.Declaration
+		what := oneLine(d.Description)
+		if q.Retired {
+			what = "(retired " + q.RetireTime.String() + ") " + what
+		}
+		fmt.Fprintf(w, "%s\t%s\t%s\t%s\t%s\n", q.ID, d.Unit, toleranceText(d.Tolerance, d.Unit), dynamicsText(d.Dynamics, d.Unit), what)
+	}
+	_ = w.Flush() // into memory
+	p.more(nextPage)
+	return p.String()
+}
+
+// readingsText renders stored readings, a line each.
+func readingsText(readings []engine.StoredReading, nextPage string) string {
+	p := new(sheet)
+	if len(readings) == 0 {
+		p.WriteString("No readings.\n")
+		return p.String()
+	}
+	w := p.table("TIME\tQUANTITY\tVALUE\tREADING ID\tSTATUS\tDETAIL")
+	for i := range readings {
+		r := &readings[i]
+		value := within(shortest(r.Value), r.Unit)
+		if r.HasUncertainty {
+			value += ", u = " + shortest(r.RandomStandardUncertainty)
+		}
+		fmt.Fprintf(w, "%s\t%s\t%s\t%s\t%s\t%s\n", r.Time, r.Quantity, value, oneLine(string(r.ID)),
+			outcomeText(r.Status, r.Reason), oneLine(r.Detail))
+	}
+	_ = w.Flush() // into memory
+	p.more(nextPage)
+	return p.String()
+}
+
+// resultsText renders what became of the readings of a request; those that
+// were refused are listed with the remedy.
+func resultsText(results []engine.Result) string {
+	var applied, duplicate, refused int
+	p := new(sheet)
+	for i := range results {
+		switch r := &results[i]; r.Status {
+		case engine.Applied:
+			applied++
+		case engine.Duplicate:
+			duplicate++
+		default:
+			refused++
+			fmt.Fprintf(p, "readings[%d] %s: %s\n", i, outcomeText(r.Status, r.Reason), oneLine(r.Detail))
+		}
+	}
+	fmt.Fprintf(p, "%d applied, %d duplicate, %d refused\n", applied, duplicate, refused)
+	return p.String()
+}
+
+func outcomeText(s engine.Status, r engine.Reason) string {
+	if r == "" {
+		return s.String()
+	}
+	return s.String() + " " + string(r)
+}
