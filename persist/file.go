@@ -1,0 +1,189 @@
+package persist
+
+import (
+	"encoding/binary"
+	"errors"
+	"fmt"
+	"io/fs"
+	"os"
+	"path/filepath"
+	"runtime/debug"
+	"time"
+
+	bolt "go.etcd.io/bbolt"
+	berrors "go.etcd.io/bbolt/errors"
+)
+
+// Buckets of the file. doc.go draws their keys and values.
+var (
+	metaBucket       = []byte("meta")
+	ledgerBucket     = []byte("ledger")
+	quantitiesBucket = []byte("quantities")
+	statesBucket     = []byte("states")
+	segmentsBucket   = []byte("segments")
+
+	formatKey = []byte("format")
+	sweepKey  = []byte("sweep")
+)
+
+// magic begins the value of formatKey; the version follows in four bytes.
+const magic = "leadline ledger\x00"
+
+// temporarySuffix is of files that take a ledger's name once they are complete.
+const temporarySuffix = ".new-*"
+
+// lockWait is how long Open waits for another process to let go of the file.
+const lockWait = time.Second
+
+// ensure creates the file if there is none: under another name, synced, and
+// then linked to its own, so that a power loss leaves either no ledger or a
+// whole one, and no ledger of another process is overwritten.
+func ensure(path string) error {
+	info, err := os.Stat(path)
+	if err == nil && info.Size() == 0 {
+		return fmt.Errorf("%w: the file is empty", ErrDamaged)
+	}
+	if !errors.Is(err, fs.ErrNotExist) {
+		return err
+	}
+	temporary, err := createTemporary(path)
+	if err != nil {
+		return err
+	}
+	defer os.Remove(temporary)
+	if err := os.Link(temporary, path); err != nil && !errors.Is(err, fs.ErrExist) {
+		return err
+	}
+	if err := os.Remove(temporary); err != nil {
+		return err
+	}
+	return syncDirectory(path)
+}
+
+// createTemporary writes an empty ledger beside path and returns its name.
+func createTemporary(path string) (string, error) {
+	f, err := os.CreateTemp(filepath.Dir(path), filepath.Base(path)+temporarySuffix)
+	if err != nil {
+		return "", err
+	}
+	name := f.Name()
+	if err := f.Close(); err != nil {
+		return "", err
+	}
+	if err := format(name); err != nil {
+		return "", errors.Join(err, os.Remove(name))
+	}
+	return name, nil
+}
+
+// format makes an empty file an empty ledger.
+func format(path string) error {
+	db, err := bolt.Open(path, 0o600, &bolt.Options{FreelistType: bolt.FreelistMapType, NoSync: noSync})
+	if err != nil {
+		return err
+	}
+	err = db.Update(func(tx *bolt.Tx) error {
+		for _, name := range [][]byte{metaBucket, ledgerBucket, quantitiesBucket, statesBucket, segmentsBucket} {
+			if _, err := tx.CreateBucket(name); err != nil {
+				return err
+			}
+		}
+		return tx.Bucket(metaBucket).Put(formatKey, binary.BigEndian.AppendUint32([]byte(magic), formatVersion))
+	})
+	return errors.Join(err, db.Close())
+}
+
+func syncDirectory(path string) error {
+	d, err := os.Open(filepath.Dir(path))
+	if err != nil {
+		return err
+	}
+	return errors.Join(d.Sync(), d.Close())
+}
+
+// openFile opens the bbolt file, which must exist. bbolt can panic on a damaged
+// one. NoFreelistSync is set for as long as the file may be a foreign one: else
+// bbolt would write a freelist into it.
+func openFile(path string, o bolt.Options) (db *bolt.DB, file *os.File, err error) {
+	o.Timeout = lockWait
+	o.FreelistType = bolt.FreelistMapType
+	o.NoFreelistSync = true
+	o.OpenFile = func(name string, flag int, mode os.FileMode) (*os.File, error) {
+		var err error
+		file, err = os.OpenFile(name, flag&^os.O_CREATE, mode)
+		return file, err
+	}
+	err = guarded(func() error {
+		db, err = bolt.Open(path, 0o600, &o)
+		return err
+	})
+	switch {
+	case errors.Is(err, berrors.ErrTimeout):
+		err = ErrHeld
+	case errors.Is(err, berrors.ErrInvalid), errors.Is(err, berrors.ErrVersionMismatch):
+		err = ErrForeign
+	case errors.Is(err, berrors.ErrChecksum):
+		err = fmt.Errorf("%w: both meta pages fail their checksum", ErrDamaged)
+	}
+	if errors.Is(err, ErrDamaged) {
+		file.Close() // after a panic bbolt hasn't; the lock goes with it
+	}
+	if err != nil {
+		return nil, nil, err
+	}
+	return db, file, nil
+}
+
+// checkFormat tells whether the file is a ledger that this version reads.
+func checkFormat(tx *bolt.Tx) error {
+	if info := tx.Bucket(metaBucket); info == nil {
+		return ErrForeign
+	}
+	v := tx.Bucket(metaBucket).Get(formatKey)
+	if len(v) != len(magic)+4 || string(v[:len(magic)]) != magic {
+		return ErrForeign
+	}
+	if version := binary.BigEndian.Uint32(v[len(magic):]); version > formatVersion {
+		return fmt.Errorf("%w: its format is %d, this program's %d", ErrNewer, version, formatVersion)
+	}
+	for _, name := range [][]byte{ledgerBucket, quantitiesBucket, statesBucket, segmentsBucket} {
+		if tx.Bucket(name) == nil {
+			return fmt.Errorf("%w: the bucket %s is missing", ErrDamaged, name)
+		}
+	}
+	return nil
+}
+
+// guarded calls fn and turns a panic, or a fault from touching a page that
+// isn't there, into ErrDamaged. fn must be our own reading of the file and call
+// nothing of the callers'.
+func guarded(fn func() error) (err error) {
+	defer debug.SetPanicOnFault(debug.SetPanicOnFault(true))
+	defer func() {
+		if p := recover(); p != nil {
+			err = fmt.Errorf("%w: reading a page: %v", ErrDamaged, p)
+		}
+	}()
+	return fn()
+}
+
+// view calls fn with a read transaction of what is durable, guarded.
+func (l *Ledger) view(fn func(*bolt.Tx) error) error {
+	l.frozenMu.Lock()
+	if l.frozen != nil {
+		defer l.frozenMu.Unlock()
+		return guarded(func() error { return fn(l.frozen) })
+	}
+	l.frozenMu.Unlock()
+	return guarded(func() error {
+		tx, err := l.db.Begin(false)
+		if errors.Is(err, berrors.ErrDatabaseNotOpen) {
+			return ErrClosed
+		}
+		if err != nil {
+			return err
+		}
+		defer tx.Rollback()
+		return fn(tx)
+	})
+}
