@@ -186,10 +186,9 @@ type journey struct {
 	model model
 	now   engine.Instant
 	names int
+	ids   []engine.QuantityID
 	sent  []engine.Reading
 }
-
-var journeyIDs = []engine.QuantityID{"brine-pump-3.gap", "store/1/temperature", "dosing:residual", "winch"}
 
 func (j *journey) declaration() engine.Declaration {
 	d := engine.Declaration{Unit: "mm"}
@@ -217,7 +216,7 @@ func (j *journey) declaration() engine.Declaration {
 }
 
 func (j *journey) declareOne() {
-	id := journeyIDs[j.rng.IntN(len(journeyIDs))]
+	id := j.ids[j.rng.IntN(len(j.ids))]
 	d := j.declaration()
 	_, _, err := j.keeper.Declare(context.Background(), id, d, engine.Condition{}, j.now)
 	q := j.model.quantities[id]
@@ -252,7 +251,7 @@ func (j *journey) reading() engine.Reading {
 		return r
 	}
 	r := engine.Reading{
-		Quantity: journeyIDs[j.rng.IntN(len(journeyIDs))],
+		Quantity: j.ids[j.rng.IntN(len(j.ids))],
 		Value:    math.Round(50*j.rng.NormFloat64()) / 10,
 	}
 	if j.rng.IntN(5) > 0 {
@@ -310,6 +309,23 @@ func (r *rig) settled(id engine.QuantityID, q engine.BeliefQuery) engine.Belief 
 	return engine.Belief{}
 }
 
+// count compares the counts, which outlive restarts.
+func (j *journey) count() {
+	applied, refused := 0, uint64(0)
+	for _, q := range j.model.quantities {
+		applied += len(q.applied)
+	}
+	counts := j.keeper.Stats().Counts
+	for outcome, n := range counts {
+		if outcome.Status == engine.Refused {
+			refused += n
+		}
+	}
+	if got := counts[engine.Outcome{Status: engine.Applied}]; got != uint64(applied) || refused != uint64(j.model.refused) {
+		j.t.Fatalf("%d readings counted as applied and %d as refused, want %d and %d", got, refused, applied, j.model.refused)
+	}
+}
+
 // list compares the stored readings with the model's.
 func (j *journey) list() {
 	for id, q := range j.model.quantities {
@@ -349,6 +365,15 @@ func TestKeeperEqualsNaiveModel(t *testing.T) {
 				rng:   rng,
 				model: model{quantities: map[engine.QuantityID]*modelQuantity{}},
 				now:   start,
+				ids:   []engine.QuantityID{"brine-pump-3.gap", "store/1/temperature", "dosing:residual", "winch"},
+			}
+			if s%3 == 0 { // so many that a checkpoint is spread over several groups
+				for i := range 60 {
+					j.ids = append(j.ids, engine.QuantityID(fmt.Sprint("store/", i+2)))
+				}
+				for range 60 {
+					j.declareOne()
+				}
 			}
 			for range 60 {
 				j.now += engine.Instant(j.rng.IntN(60)) * engine.Instant(time.Second)
@@ -365,6 +390,7 @@ func TestKeeperEqualsNaiveModel(t *testing.T) {
 					j.postSome()
 				}
 				j.ask()
+				j.count()
 			}
 			j.list()
 		})
@@ -372,7 +398,7 @@ func TestKeeperEqualsNaiveModel(t *testing.T) {
 }
 
 func (j *journey) retireOne() {
-	id := journeyIDs[j.rng.IntN(len(journeyIDs))]
+	id := j.ids[j.rng.IntN(len(j.ids))]
 	_, err := j.keeper.Retire(context.Background(), id, engine.Condition{}, j.now)
 	q := j.model.quantities[id]
 	if (err == nil) != (q != nil) {
