@@ -147,8 +147,16 @@ func (k *Keeper) publish(through Position) {
 
 // index adds tracks to the sorted list that readers use.
 func (k *Keeper) index(arrived []*Track) {
-	all := slices.Concat(k.Tracks(), arrived)
-	slices.SortFunc(all, func(a, b *Track) int { return strings.Compare(string(a.id), string(b.id)) })
+	byID := func(a, b *Track) int { return strings.Compare(string(a.id), string(b.id)) }
+	slices.SortFunc(arrived, byID)
+	old := k.Tracks()
+	all := make([]*Track, 0, len(old)+len(arrived))
+	for _, t := range arrived {
+		n, _ := slices.BinarySearchFunc(old, t, byID)
+		all = append(append(all, old[:n]...), t)
+		old = old[n:]
+	}
+	all = append(all, old...)
 	k.tracks.Store(&all)
 }
 

@@ -21,7 +21,7 @@ type job struct {
 
 // run does the work.
 func (j *job) run(l Ledger) {
-	all, err := loadEntries(l, j.number, MinInstant, j.recent)
+	all, err := loadEntries(l, j.number, j.position, j.recent)
 	if err != nil {
 		j.err = err
 		return
@@ -41,21 +41,18 @@ func (j *job) run(l Ledger) {
 	j.fold = t.fold
 }
 
-// loadEntries returns, in canonical order, the readings of a quantity that are
-// not earlier than since: those in the ledger's complete segments and the
-// recent ones, some of which may be in both.
-func loadEntries(l Ledger, number QuantityNumber, since Instant, recent []entry) ([]entry, error) {
-	all := make([]entry, 0, len(recent))
+// loadEntries returns, in canonical order, the readings of a quantity up to a
+// ledger position: those in the ledger's complete segments, which may go
+// beyond it, and the recent ones, some of which may be in segments too.
+func loadEntries(l Ledger, number QuantityNumber, through Position, recent []entry) ([]entry, error) {
+	all := slices.Clone(recent)
 	known := make(map[Position]struct{}, len(recent))
-	for _, e := range recent {
-		if e.Time >= since {
-			all = append(all, e)
-			known[e.Position] = struct{}{}
-		}
+	for i := range recent {
+		known[recent[i].Position] = struct{}{}
 	}
-	err := l.Rows(number, since, func(rows []Row) error {
+	err := l.Rows(number, MinInstant, func(rows []Row) error {
 		for _, r := range rows {
-			if _, both := known[r.Position]; !both && r.Time >= since {
+			if _, both := known[r.Position]; !both && r.Position <= through {
 				all = append(all, entry{Row: r})
 			}
 		}
