@@ -48,39 +48,30 @@ func (k *Keeper) objection(t *Track, r *Reading, receive Instant) (Reason, strin
 	switch {
 	case t == nil:
 		return UnknownQuantity, fmt.Sprintf("quantity %q is not declared; declare it with PUT /v1/quantities/{id}, then put the reading through with :apply_refused or send it again", r.Quantity)
-	case t.decided.Retired:
+	case t.rules.retired:
 		return QuantityRetired, fmt.Sprintf("quantity %q was retired at %v; declare it again to revive it", r.Quantity, t.decided.RetireTime)
 	case r.Instrument != "":
 		return UnknownInstrument, fmt.Sprintf("instrument %q is not known; leave instrument out", r.Instrument)
+	case r.Unit != "" && r.Unit != t.rules.unit:
+		return UnitMismatch, fmt.Sprintf("unit is %q but the quantity is in %q; convert the value, or leave unit out", r.Unit, t.rules.unit)
 	}
-	d := &t.decided.Declaration
-	if r.Unit != "" && r.Unit != d.Unit {
-		return UnitMismatch, fmt.Sprintf("unit is %q but the quantity is in %q; convert the value, or leave unit out", r.Unit, d.Unit)
-	}
-	if reason, detail := objectionToNumbers(d, r); reason != "" {
+	if reason, detail := t.rules.objectionToNumbers(r); reason != "" {
 		return reason, detail
 	}
-	return k.objectionToTime(d, r, receive)
+	return k.objectionToTime(&t.rules, r, receive)
 }
 
-func objectionToNumbers(d *Declaration, r *Reading) (Reason, string) {
-	if !inRange(r.Value) {
+func (a *rules) objectionToNumbers(r *Reading) (Reason, string) {
+	u := a.scale
+	switch {
+	case !inRange(r.Value):
 		return ValueOutOfRange, fmt.Sprintf("value is %v; give 0 or a number of magnitude 1e-100 to 1e100", r.Value)
-	}
-	u := r.RandomStandardUncertainty
-	if !r.HasUncertainty {
-		switch d.Repeatability.Form {
-		case RepeatabilityAbsent:
-			return NoRepeatability, "random_standard_uncertainty is missing and the quantity declares no repeatability; give one of the two"
-		case RepeatabilityKnown:
-			u = d.Repeatability.StandardDeviation
-		case RepeatabilityLearned:
-			u = d.Repeatability.Guess
-		default:
-			u = 1
+	case r.HasUncertainty:
+		if u = r.RandomStandardUncertainty; !(u >= MinMagnitude && u <= MaxMagnitude) {
+			return RandomUncertaintyInvalid, fmt.Sprintf("random_standard_uncertainty is %v; give a number above 0, from 1e-100 to 1e100", u)
 		}
-	} else if !(u >= MinMagnitude && u <= MaxMagnitude) {
-		return RandomUncertaintyInvalid, fmt.Sprintf("random_standard_uncertainty is %v; give a number above 0, from 1e-100 to 1e100", u)
+	case a.needsOwnNoise:
+		return NoRepeatability, "random_standard_uncertainty is missing and the quantity declares no repeatability; give one of the two"
 	}
 	if math.Abs(r.Value)/u > maxRatio {
 		return ValueOutOfRange, fmt.Sprintf("value %v is more than 1e150 times its random standard uncertainty %v; check both", r.Value, u)
@@ -88,14 +79,14 @@ func objectionToNumbers(d *Declaration, r *Reading) (Reason, string) {
 	return "", ""
 }
 
-func (k *Keeper) objectionToTime(d *Declaration, r *Reading, receive Instant) (Reason, string) {
+func (k *Keeper) objectionToTime(a *rules, r *Reading, receive Instant) (Reason, string) {
 	switch {
 	case !r.Time.Valid():
 		return TimeOutOfRange, "time lies outside 1678 to 2262; check the clock of the sender"
 	case r.Time.Sub(receive) > float64(k.options.MaxClockSkew):
 		return TimeInFuture, fmt.Sprintf("time %v is more than %v after the receipt at %v; check the clock of the sender", r.Time, k.options.MaxClockSkew, receive)
-	case d.Prior.HasTime && r.Time < d.Prior.Time:
-		return BeforePrior, fmt.Sprintf("time %v is before the prior's time %v; send readings from then on, or declare an earlier prior.time", r.Time, d.Prior.Time)
+	case r.Time < a.priorTime:
+		return BeforePrior, fmt.Sprintf("time %v is before the prior's time %v; send readings from then on, or declare an earlier prior.time", r.Time, a.priorTime)
 	}
 	return "", ""
 }

@@ -152,7 +152,7 @@ func (k *Keeper) record(w *work, t *Track, r *Reading, res *Result, b *Batch, or
 		rec.ReceiveTime = origin.ReceiveTime
 	}
 	if t != nil {
-		rec.Number, rec.Revision, rec.Reading.Quantity = t.number, t.decided.Revision, ""
+		rec.Number, rec.Revision, rec.Reading.Quantity = t.number, t.rules.revision, ""
 	}
 	if res.Status == Refused {
 		rec.Kind = KindRefusal

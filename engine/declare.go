@@ -62,7 +62,7 @@ func (k *Keeper) declare(w *work, t *Track, id QuantityID, d Declaration, receiv
 		q.Revision, q.CreateTime = t.decided.Revision+1, t.decided.CreateTime
 	}
 	q.Number = t.number
-	t.decided = q
+	t.decide(q)
 	k.decidedTo++
 	w.add(Record{
 		Kind: KindDeclaration, ReceiveTime: receive, Number: q.Number, Revision: q.Revision,
@@ -86,6 +86,9 @@ func (t *Track) checkRedeclaration(d *Declaration) error {
 	if bare := t.decidedTally.bare; d.Repeatability.Form == RepeatabilityAbsent && bare > 0 {
 		return refuse(InvalidField, "repeatability", "repeatability is missing but %d readings without a random_standard_uncertainty have been applied; declare one", bare)
 	}
+	if largest := t.decidedTally.largest; largest/d.Repeatability.scale() > maxRatio {
+		return refuse(InvalidField, "repeatability", "repeatability is less than 1e-150 times the reading %v, which has been applied; give a larger one", largest)
+	}
 	return nil
 }
 
@@ -103,7 +106,7 @@ func (k *Keeper) Retire(ctx context.Context, id QuantityID, c Condition, receive
 		if !t.decided.Retired {
 			retired := *t.decided
 			retired.Retired, retired.RetireTime, retired.UpdateTime = true, receive, receive
-			t.decided = &retired
+			t.decide(&retired)
 			k.decidedTo++
 			w.add(Record{Kind: KindRetirement, ReceiveTime: receive, Number: t.number, Revision: retired.Revision})
 		}

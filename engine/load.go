@@ -195,7 +195,8 @@ func (k *Keeper) present() error {
 	}
 	k.working = false
 	for _, t := range k.byNumber {
-		t.decided, t.decidedTally = t.quantity, t.tally
+		t.decide(t.quantity)
+		t.decidedTally = t.tally
 		k.touch(t)
 	}
 	k.decidedTo = Position(k.position.Load())

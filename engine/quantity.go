@@ -65,6 +65,18 @@ func (r Repeatability) Learned() bool {
 	return r.Form == RepeatabilityLearned || r.Form == RepeatabilityLearnedReference
 }
 
+// scale returns r as far as it is known, else 1: what a value is compared with
+// to see that its square won't overflow.
+func (r Repeatability) scale() float64 {
+	switch r.Form {
+	case RepeatabilityKnown:
+		return r.StandardDeviation
+	case RepeatabilityLearned:
+		return r.Guess
+	}
+	return 1
+}
+
 // DynamicsForm tells how the true value may move.
 type DynamicsForm uint8
 

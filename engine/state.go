@@ -19,6 +19,7 @@ func (t *Track) appendState(b []byte) []byte {
 	b = append(b, stateVersion, rebuild)
 	b = binary.AppendUvarint(b, uint64(t.tally.count))
 	b = binary.AppendUvarint(b, uint64(t.tally.bare))
+	b = binary.BigEndian.AppendUint64(b, math.Float64bits(t.tally.largest))
 	b = binary.AppendVarint(b, int64(t.tally.first))
 	b = binary.AppendVarint(b, int64(t.tally.last))
 	if t.job != nil {
@@ -60,7 +61,10 @@ func (t *Track) decodeState(b []byte) (rebuild bool, err error) {
 		return true, fmt.Errorf("state of quantity %q has version %d, not %d", t.id, version, stateVersion)
 	}
 	rebuild = r.byte() == 1
-	t.tally = tally{count: int(r.uvarint()), bare: int(r.uvarint()), first: Instant(r.varint()), last: Instant(r.varint())}
+	t.tally = tally{
+		count: int(r.uvarint()), bare: int(r.uvarint()), largest: r.float(),
+		first: Instant(r.varint()), last: Instant(r.varint()),
+	}
 	if !rebuild {
 		f := &t.fold
 		f.count = int(r.uvarint())

@@ -1,6 +1,7 @@
 package engine
 
 import (
+	"math"
 	"slices"
 	"sort"
 	"sync/atomic"
@@ -26,6 +27,7 @@ type Track struct {
 
 	// What has been decided, including records that aren't durable yet.
 	decided      *Quantity
+	rules        rules
 	decidedTally tally
 
 	// What is durable.
@@ -47,11 +49,36 @@ type Track struct {
 	hollow        bool      // restored without a fold
 }
 
+// rules is what a declaration asks of readings, close together because a batch
+// over many quantities waits for memory more than for anything else.
+type rules struct {
+	unit          string
+	scale         float64 // r as far as it is known, to compare values with
+	priorTime     Instant // MinInstant without one
+	retired       bool
+	needsOwnNoise bool // no repeatability is declared
+	revision      uint32
+}
+
+// decide makes q the quantity that readings are decided by.
+func (t *Track) decide(q *Quantity) {
+	d := &q.Declaration
+	t.decided = q
+	t.rules = rules{
+		unit: d.Unit, scale: d.Repeatability.scale(), priorTime: MinInstant, retired: q.Retired,
+		needsOwnNoise: d.Repeatability.Form == RepeatabilityAbsent, revision: q.Revision,
+	}
+	if d.Prior.HasTime {
+		t.rules.priorTime = d.Prior.Time
+	}
+}
+
 // tally is what deciding on a reading or a declaration needs to know of the
 // readings applied before.
 type tally struct {
 	count       int
-	bare        int // without an uncertainty of their own
+	bare        int     // without an uncertainty of their own
+	largest     float64 // magnitude of those
 	first, last Instant
 }
 
@@ -65,6 +92,7 @@ func (a *tally) add(r *Row) {
 	a.count++
 	if !r.HasUncertainty {
 		a.bare++
+		a.largest = max(a.largest, math.Abs(r.Value))
 	}
 }
 
