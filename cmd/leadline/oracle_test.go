@@ -194,7 +194,7 @@ func freshBelief(ctx context.Context, k *engine.Keeper, id engine.QuantityID, at
 			return believed{}, err
 		}
 		if !b.Rebuilding {
-			return comparable(b), nil
+			return believedOf(b), nil
 		}
 		select {
 		case <-ctx.Done():
@@ -204,10 +204,15 @@ func freshBelief(ctx context.Context, k *engine.Keeper, id engine.QuantityID, at
 	}
 }
 
-func comparable(b engine.Belief) believed {
+// believedOf leaves at 0 what doesn't exist, as the wire does.
+func believedOf(b engine.Belief) believed {
 	out := believed{ReadingCount: b.ReadingCount}
-	out.Mean, _ = b.Level.Mean()
-	out.StandardDeviation, _ = b.Level.StandardDeviation()
+	if mean, ok := b.Level.Mean(); ok {
+		out.Mean = mean
+	}
+	if sd, ok := b.Level.StandardDeviation(); ok {
+		out.StandardDeviation = sd
+	}
 	out.Interval.Lower, out.Interval.Upper = b.Lower, b.Upper
 	return out
 }
