@@ -35,6 +35,9 @@ type Options struct {
 	Metrics http.Handler
 	// Observations counts gRPC requests; nil counts none.
 	Observations *Observations
+	// BodyTime is how long an HTTP request may take to arrive, with its body; 0
+	// means 30 s.
+	BodyTime time.Duration
 	// DrainTime is how long requests under way may take after the service was
 	// told to stop; 0 means 20 s.
 	DrainTime time.Duration
@@ -46,11 +49,16 @@ func (o *Options) validate() error {
 		return errors.New("Options.Keeper is nil; give the keeper to serve")
 	case o.Now == nil:
 		return errors.New("Options.Now is nil; give the service's clock")
+	case o.BodyTime < 0:
+		return errors.New("Options.BodyTime is below 0; give a time, or 0 for 30 s")
 	case o.DrainTime < 0:
 		return errors.New("Options.DrainTime is below 0; give a time, or 0 for 20 s")
 	}
 	if o.Logger == nil {
 		o.Logger = slog.Default()
+	}
+	if o.BodyTime == 0 {
+		o.BodyTime = bodyTime
 	}
 	if o.DrainTime == 0 {
 		o.DrainTime = 20 * time.Second
@@ -132,7 +140,7 @@ func (s *Server) Serve(ctx context.Context, httpListener, grpcListener net.Liste
 	web := &http.Server{
 		Handler:           s.rest,
 		ReadHeaderTimeout: headerTime,
-		ReadTimeout:       bodyTime,
+		ReadTimeout:       s.options.BodyTime,
 		WriteTimeout:      answerTime,
 		IdleTimeout:       idleTime,
 		MaxHeaderBytes:    maxHeaderBytes,
