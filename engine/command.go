@@ -1,9 +1,6 @@
 package engine
 
-import (
-	"context"
-	"errors"
-)
+import "context"
 
 // command is one request on its way through the keeper: a batch of readings,
 // or an action that decides on something else.
@@ -24,7 +21,7 @@ var errOverloaded = &Error{Reason: Overloaded, Message: "more requests wait than
 
 // submit queues a command; c.done is called from the keeper's goroutine.
 func (k *Keeper) submit(c *command) error {
-	if err := k.Health(); err != nil && !errors.Is(err, ErrDiskFull) {
+	if err := k.Health(); err != nil {
 		return err
 	}
 	select {

@@ -27,21 +27,23 @@ type mixture struct {
 	difference float64 // ybar - m
 	predictive bool
 
-	origin  float64 // x at which logWeight is 0: its highest maximum
-	rho     float64 // there
-	chi     float64 // exp(-2x) there
-	reach   reach
-	nodes   []node
-	total   float64 // ln of the integral of exp(logWeight)
-	median  float64 // of x, near enough for a start
-	hasMean bool
-	hasSD   bool
+	origin   float64 // x at which logWeight is 0: the highest maximum of p
+	chi      float64 // exp(-2x) there
+	logShare float64 // ln(rho / (1 + rho)) there
+	rest     float64 // conflict / sqrt(1 + rho) there
+	reach    reach
+	nodes    []node
+	total    float64 // ln of the integral of exp(logWeight)
+	median   float64 // of x, near enough for a start
+	hasMean  bool
+	hasSD    bool
 }
 
 // node is one normal of the mixture.
 type node struct {
-	weight float64 // sums to 1
+	component
 	x      float64
+	weight float64 // sums to 1
 }
 
 // component is the normal given r.
@@ -55,13 +57,14 @@ type component struct {
 func newMixture(before normal, s spread, predictive bool) Posterior {
 	m := &mixture{
 		before: before, data: s.mean, n: s.n, nu: s.worth,
-		r0: math.Sqrt(s.sum / s.worth), chi: 1, predictive: predictive,
+		r0: math.Sqrt(s.sum / s.worth), predictive: predictive,
 	}
 	if s.n > 0 {
 		m.logC = 2 * math.Log(m.r0/math.Sqrt(s.n)/before.sd)
 		m.difference = s.mean.Minus(before.mean)
 		m.conflict = m.difference / before.sd
 	}
+	m.moments()
 	m.locate()
 	m.fill()
 	return m.publish()
@@ -82,23 +85,37 @@ func (m *mixture) component(x float64) component {
 	return c
 }
 
+// start makes x the origin.
+func (m *mixture) start(x float64) {
+	m.origin = x
+	m.chi = math.Exp(-2 * x)
+	logRho := m.logC + 2*x
+	m.rest = m.conflict / math.Sqrt(1+math.Exp(logRho))
+	m.logShare = logRho - math.Log1p(math.Exp(logRho))
+	if logRho > 0 {
+		m.logShare = -math.Log1p(math.Exp(-logRho))
+	}
+}
+
 // logWeight is ln p(x) less its value at the origin, written in differences so
-// that large terms of nearly equal size never meet.
+// that large terms of nearly equal size never meet. With
+//
+//	1 + rho(x) = (1 + rho0) (1 + q),  q = rho0 / (1 + rho0) (exp(2y) - 1)
+//
+// the normal factor changes by -ln(1 + q) / 2 + rest^2 / 2 * q / (1 + q).
 func (m *mixture) logWeight(x float64) float64 {
 	y := x - m.origin
-	grow := math.Expm1(2 * y)
 	w := -m.nu / 2 * chiTerm(y, m.chi)
-	if m.n == 0 {
+	switch {
+	case m.n == 0:
 		return w
+	case y > 150: // exp(2y) could overflow
+		e := m.logShare + 2*y
+		return w - math.Max(e, 0)/2 - math.Log1p(math.Exp(-math.Abs(e)))/2 + m.rest*m.rest/2/(1+math.Exp(-e))
 	}
-	// 1 + rho(x) = (1 + rho0) (1 + share * grow), share = rho0 / (1 + rho0)
-	share := 1 / (1 + 1/m.rho)
-	rest := m.conflict / math.Sqrt(1+m.rho)
-	if y > 300 { // rho alone matters, and its exponential could overflow
-		return w - (y + math.Log(share)/2) + rest*rest/2
-	}
-	ratio := share * grow
-	return w - math.Log1p(ratio)/2 + rest*rest/2*(ratio/(1+ratio))
+	q := math.Exp(m.logShare) * math.Expm1(2*y)
+	f := m.rest * math.Sqrt(math.Abs(q/(1+q)))
+	return w - math.Log1p(q)/2 + math.Copysign(f*f/2, q)
 }
 
 // chiTerm returns chi (exp(-2y) - 1) + 2y.
@@ -112,15 +129,42 @@ func chiTerm(y, chi float64) float64 {
 	return chi*math.Expm1(-2*y) + 2*y
 }
 
-// locate finds the highest maximum of p(x), makes it the origin and surveys.
+// locate finds the highest maximum of p(x), makes it the origin and finds the
+// reach of p, widened to that of the second moment, which falls more slowly. It
+// begins with an origin at which no term is out of range.
 func (m *mixture) locate() {
-	m.rho = math.Exp(m.logC)
 	first, last := m.features()
+	m.start(last)
 	r := survey(m.logWeight, m.below(first), last+4)
-	m.origin = r.peak
-	m.rho = math.Exp(m.logC + 2*r.peak)
-	m.chi = math.Exp(-2 * r.peak)
-	m.reach = survey(m.logWeight, m.below(first), last+4)
+	m.start(r.peak)
+	r.height = 0
+	if m.hasSD {
+		r = r.join(survey(func(x float64) float64 {
+			return m.logWeight(x) + 2*math.Log(m.component(x).sd)
+		}, m.below(first), math.Max(last, m.overtaken())+4))
+	}
+	m.reach = r
+}
+
+// overtaken returns the x at which r begins to outweigh the level in the
+// predictive's standard deviation, if it does.
+func (m *mixture) overtaken() float64 {
+	if !m.predictive {
+		return 0
+	}
+	return math.Log(m.before.sd / m.r0)
+}
+
+// moments tells which the distribution has. The level always has both, as it
+// is bounded by what was known before; the predictive has them if E r and
+// E r^2 exist: p falls as r^-(nu+1), or r^-nu without readings.
+func (m *mixture) moments() {
+	falls := m.nu
+	if m.n > 0 {
+		falls++
+	}
+	m.hasMean = !m.predictive || falls > 1
+	m.hasSD = !m.predictive || falls > 2
 }
 
 // features returns the smallest and largest x at which p(x) changes its course.
@@ -147,7 +191,7 @@ func (m *mixture) fill() {
 	even := r.sum(m.logWeight, step, 0)
 	for {
 		odd := r.sum(m.logWeight, step, step/2)
-		done := math.Abs(odd-even) <= 1e-9*even || (r.hi-r.lo)/step > maxNodes
+		done := agree(even, odd) || (r.hi-r.lo)/step > maxNodes
 		even += odd
 		step /= 2
 		if done {
@@ -155,46 +199,36 @@ func (m *mixture) fill() {
 		}
 	}
 	m.total = r.height + math.Log(even*step)
-	run, top := 0.0, 0.0
-	for i := math.Ceil((r.lo - r.peak) / step); ; i++ {
-		x := r.peak + i*step
-		if x > r.hi {
-			break
-		}
+	run := 0.0
+	first := math.Ceil((r.lo - r.peak) / step)
+	m.nodes = make([]node, 0, int((r.hi-r.peak)/step-first)+2)
+	for x := r.peak + first*step; x <= r.hi; first, x = first+1, r.peak+(first+1)*step {
 		w := math.Exp(m.logWeight(x)-r.height) / even
-		m.nodes = append(m.nodes, node{w, x})
+		m.nodes = append(m.nodes, node{m.component(x), x, w})
 		if run < 0.5 {
-			top = x
+			m.median = x
 		}
 		run += w
 	}
-	m.median = top
 }
 
-// publish computes the moments. They are integrals against p of functions that
-// p's own nodes resolve; the predictive's second moment, E r^2, is too if it
-// exists: p falls as r^-(nu+1), or r^-nu without readings.
+// publish sums the moments: of the mean in terms of whichever anchor is nearer,
+// of the variance as that within and that between the normals.
 func (m *mixture) publish() Posterior {
-	falls := m.nu
-	if m.n > 0 {
-		falls++
-	}
-	m.hasMean = !m.predictive || falls > 1
-	m.hasSD = !m.predictive || falls > 2
 	var kept, won float64
-	for _, k := range m.nodes {
-		c := m.component(k.x)
-		kept += k.weight * c.kept
-		won += k.weight * c.won
+	for i := range m.nodes {
+		k := &m.nodes[i]
+		kept += k.weight * k.kept
+		won += k.weight * k.won
 	}
 	var variance float64
-	for _, k := range m.nodes {
-		c := m.component(k.x)
-		shift := m.difference * (c.won - won)
+	for i := range m.nodes {
+		k := &m.nodes[i]
+		shift := m.difference * (k.won - won)
 		if won > 0.5 {
-			shift = m.difference * (c.kept - kept)
+			shift = m.difference * (k.kept - kept)
 		}
-		variance += k.weight * (c.sd*c.sd + shift*shift)
+		variance += k.weight * (k.sd*k.sd + shift*shift)
 	}
 	mean := m.before.mean.Plus(m.difference * won)
 	if won > 0.5 {
@@ -216,7 +250,7 @@ func (m *mixture) place(x float64) place {
 
 // standard returns (place - mean) / sd of the component; from whichever anchor
 // is nearer in weight.
-func (m *mixture) standard(p place, c component) float64 {
+func (m *mixture) standard(p place, c *component) float64 {
 	if c.won > 0.5 {
 		return (p.fromData + m.difference*c.kept) / c.sd
 	}
@@ -239,28 +273,28 @@ func (m *mixture) tail(x float64, s side) float64 {
 // logTail returns the logarithm of the tail.
 func (m *mixture) logTail(x float64, s side) float64 {
 	p := m.place(x)
-	if t, ok := m.tailFromNodes(p, s); ok {
-		return math.Log(t)
+	var half [2]float64
+	for i := range m.nodes {
+		k := &m.nodes[i]
+		half[i&1] += k.weight * math.Erfc(float64(s)*m.standard(p, &k.component)*sqrtHalf.hi) / 2
+	}
+	if served(half) {
+		return math.Log(half[0] + half[1])
 	}
 	h := func(x float64) float64 {
-		z := m.standard(p, m.component(x))
-		return m.logWeight(x) + logNormalTail(float64(s)*z)
+		c := m.component(x)
+		return m.logWeight(x) + logNormalTail(float64(s)*m.standard(p, &c))
 	}
 	return math.Min(0, m.integral(h, p)-m.total)
 }
 
-// tailFromNodes averages the normal tails over p's own nodes. That is as good
-// as p's own integral unless the tail is small, when its integrand peaks where
-// p's nodes end, or the normal tail changes faster than their step, which shows
-// as a difference between the even and the odd nodes.
-func (m *mixture) tailFromNodes(p place, s side) (float64, bool) {
-	var half [2]float64
-	for i, k := range m.nodes {
-		z := float64(s) * m.standard(p, m.component(k.x))
-		half[i&1] += k.weight * normalTail(pair{hi: z})
-	}
-	sum := half[0] + half[1]
-	return sum, sum > 1e-9 && math.Abs(half[0]-half[1]) < 1e-8*sum
+// served tells whether p's own nodes serve for a probability that was averaged
+// over the even and the odd ones. They are as good for it as for p itself
+// unless it is small, when its integrand peaks where the nodes end, or
+// the probability given r changes faster than their step, which shows as a
+// difference between the halves.
+func served(half [2]float64) bool {
+	return half[0]+half[1] > 1e-7 && agree(half[0], half[1])
 }
 
 // integral returns ln of the integral of exp(h), where h is logWeight plus the
@@ -287,9 +321,18 @@ func (m *mixture) between(lo, hi float64) float64 {
 		return m.tail(lo, upper)
 	}
 	a, b := m.place(lo), m.place(hi)
+	var half [2]float64
+	for i := range m.nodes {
+		k := &m.nodes[i]
+		za, zb := m.standard(a, &k.component), m.standard(b, &k.component)
+		half[i&1] += k.weight * normalBetween(pair{hi: za}, pair{hi: zb}, (hi-lo)/k.sd)
+	}
+	if served(half) {
+		return half[0] + half[1]
+	}
 	h := func(x float64) float64 {
 		c := m.component(x)
-		return m.logWeight(x) + logNormalBetween(m.standard(a, c), m.standard(b, c), (hi-lo)/c.sd)
+		return m.logWeight(x) + logNormalBetween(m.standard(a, &c), m.standard(b, &c), (hi-lo)/c.sd)
 	}
 	far := a
 	if math.Abs(b.fromBefore)+math.Abs(b.fromData) > math.Abs(a.fromBefore)+math.Abs(a.fromData) {

@@ -166,32 +166,49 @@ func studentBetween(a, b, width, dof float64) float64 {
 //
 // It starts from the smaller of Wallace's (1959) normal approximation, turned
 // round, and the power law that bounds the tail from above, and goes on by
-// Newton steps: of ln P against ln t in the tail, where that curve is concave,
-// of P against t near the centre, where it is convex, so that either way the
-// steps close in from one side.
+// Halley's steps (DLMF 3.8(v)): of ln P against ln t in the tail, where that curve is
+// concave, of P against t near the centre, where it is convex, so that Newton's
+// step, taken where Halley's is out of its depth, closes in from one side.
 func studentQuantile(p, dof float64) float64 {
 	if p >= 0.5 {
 		return 0
 	}
 	t := studentStart(p, dof)
 	for range 60 {
-		tail := studentTail(t, dof)
-		next := t + (tail-p)/studentDensity(t, dof)
-		if p < 0.2 {
-			// t times the hazard: the density alone can underflow
-			slope := t * math.Exp(logStudentDensity(t, dof)-math.Log(tail))
-			next = t * math.Exp(math.Log(tail/p)/slope)
-		}
+		next := studentStep(t, p, dof)
 		if math.IsNaN(next) || math.IsInf(next, 0) || next < 0 {
 			next = t / 2 // beyond the doubles: come back
 		}
 		step := math.Abs(next - t)
 		t = next
-		if step <= 1e-9*t {
+		if step <= 1e-5*t { // leaves its cube
 			break
 		}
 	}
 	return t
+}
+
+// studentStep returns the next approximation.
+func studentStep(t, p, dof float64) float64 {
+	tail := studentTail(t, dof)
+	bend := (dof + 1) / (dof/t + t) // -f'/f
+	if p >= 0.2 {
+		newton := (tail - p) / studentDensity(t, dof)
+		return t + newton/halley(-newton*bend/2)
+	}
+	// t times the hazard: the density alone can underflow
+	slope := t * math.Exp(logStudentDensity(t, dof)-math.Log(tail))
+	newton := math.Log(tail/p) / slope
+	return t * math.Exp(newton/halley(newton*(1-t*bend+slope)/2))
+}
+
+// halley returns the divisor of Newton's step for a correction c, 1 if that is
+// not small.
+func halley(c float64) float64 {
+	if math.Abs(c) < 0.5 {
+		return 1 + c
+	}
+	return 1
 }
 
 // studentStart is within some per cent of the quantile but for few degrees of
