@@ -145,7 +145,7 @@ func (d *strictDecoder) read(kind jsontext.Kind, wanted string) (jsontext.Token,
 func (d *strictDecoder) field() string {
 	var b strings.Builder
 	for i, step := range d.path {
-		if i > 0 && step[0] != '[' {
+		if i > 0 && !strings.HasPrefix(step, "[") {
 			b.WriteByte('.')
 		}
 		b.WriteString(step)

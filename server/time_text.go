@@ -9,19 +9,36 @@ import (
 // Z, at most nine decimals, years 1 to 9999 in UTC.
 func parseTime(text []byte) (time.Time, bool) {
 	var t time.Time
-	if err := t.UnmarshalText(text); err != nil {
+	if !wellFormedTime(text) || t.UnmarshalText(text) != nil {
 		return time.Time{}, false
-	}
-	if dot := bytes.IndexByte(text, '.'); dot >= 0 {
-		if digits := bytes.IndexAny(text[dot:], "Z+-") - 1; digits > 9 {
-			return time.Time{}, false
-		}
 	}
 	t = t.UTC()
 	if year := t.Year(); year < 1 || year > 9999 {
 		return time.Time{}, false
 	}
 	return t, true
+}
+
+// wellFormedTime refuses what package time tolerates though RFC 3339 doesn't:
+// an hour of one digit, a decimal comma, an offset beyond 23:59; and more
+// decimals than nanoseconds.
+func wellFormedTime(text []byte) bool {
+	const whole = len("2006-01-02T15:04:05")
+	if len(text) <= whole || text[13] != ':' || text[16] != ':' {
+		return false
+	}
+	rest := text[whole:]
+	if rest[0] == '.' {
+		digits := bytes.IndexAny(rest, "Z+-") - 1
+		if digits < 1 || digits > 9 {
+			return false
+		}
+		rest = rest[1+digits:]
+	}
+	if len(rest) == len("+23:59") && (rest[0] == '+' || rest[0] == '-') {
+		return string(rest[1:3]) <= "23" && string(rest[4:6]) <= "59"
+	}
+	return string(rest) == "Z"
 }
 
 // appendTime writes t as protobuf's JSON does: UTC, with 0, 3, 6 or 9 decimals.
