@@ -10,8 +10,8 @@ import (
 	leadlinev1 "leadline.example/proto/leadline/v1"
 )
 
-// readingKeeper is what ReadingService needs of the keeper.
-type readingKeeper interface {
+// ReadingKeeper is what ReadingService needs of the keeper.
+type ReadingKeeper interface {
 	Post(ctx context.Context, b engine.Batch) ([]engine.Result, error)
 	Submit(b engine.Batch, done func([]engine.Result, error)) error
 	Readings(ctx context.Context, q engine.ReadingsQuery) (page []engine.StoredReading, more bool, err error)
@@ -23,7 +23,7 @@ type readingKeeper interface {
 // into answers at the edge.
 type readingService struct {
 	leadlinev1.UnimplementedReadingServiceServer
-	keeper   readingKeeper
+	keeper   ReadingKeeper
 	now      func() time.Time
 	stopping <-chan struct{} // closed when streams have to end
 }

@@ -27,6 +27,9 @@ import (
 // Options configures a Server.
 type Options struct {
 	Keeper *engine.Keeper
+	// Readings takes readings in place of Keeper, so that a benchmark can tell
+	// what the server itself costs; nil is Keeper.
+	Readings ReadingKeeper
 	// Now is the clock: the receipt instant of requests.
 	Now func() time.Time
 	// Logger gets faults; nil is the default logger.
@@ -53,6 +56,9 @@ func (o *Options) validate() error {
 		return errors.New("Options.BodyTime is below 0; give a time, or 0 for 30 s")
 	case o.DrainTime < 0:
 		return errors.New("Options.DrainTime is below 0; give a time, or 0 for 20 s")
+	}
+	if o.Readings == nil {
+		o.Readings = o.Keeper
 	}
 	if o.Logger == nil {
 		o.Logger = slog.Default()
@@ -100,7 +106,7 @@ func New(o Options) (*Server, error) {
 	s := &Server{options: o, stopping: make(chan struct{}), health: health.NewServer()}
 	implementations := &services{
 		quantities: &quantityService{keeper: o.Keeper, now: o.Now},
-		readings:   &readingService{keeper: o.Keeper, now: o.Now, stopping: s.stopping},
+		readings:   &readingService{keeper: o.Readings, now: o.Now, stopping: s.stopping},
 		beliefs:    &beliefService{keeper: o.Keeper, now: o.Now, stopping: s.stopping},
 	}
 	h, err := newREST(context.Background(), implementations, o.Logger)
