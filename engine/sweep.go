@@ -158,8 +158,8 @@ func (k *Keeper) finalCheckpoint() error {
 	return nil
 }
 
-// Versions of the texts that are opaque to the ledger. A reader of another
-// version folds the belief anew.
+// Versions of the texts that are opaque to the ledger. One that changes keeps
+// the decoder of the versions before it.
 const (
 	stateVersion   = 1
 	summaryVersion = 1
