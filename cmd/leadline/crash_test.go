@@ -5,6 +5,7 @@ import (
 	"errors"
 	"flag"
 	"fmt"
+	"io"
 	"math/rand/v2"
 	"net/http"
 	"os/exec"
@@ -61,11 +62,7 @@ func TestKilledProcessLosesNothing(t *testing.T) {
 		kills = min(kills, 2)
 	}
 	for done := 0; done < kills; done += killsPerLedger {
-		c := &crashRun{
-			binary: binary, dir: t.TempDir(), random: random,
-			clock: new(atomic.Int64),
-		}
-		c.clock.Store(time.Date(2026, 3, 1, 0, 0, 0, 0, time.UTC).UnixNano())
+		c := newCrashRun(t, binary, random)
 		if err := c.run(t.Context(), min(killsPerLedger, kills-done)); err != nil {
 			t.Fatal(err)
 		}
@@ -75,6 +72,29 @@ func TestKilledProcessLosesNothing(t *testing.T) {
 			t.Error("no kill hit a process under load; the test shows nothing")
 		}
 	}
+}
+
+// TestStoppedProcessFinishes stops the process under the same load, with a
+// watcher connected, as an operator does: it ends by itself with exit code 0,
+// and what it acknowledged is there.
+func TestStoppedProcessFinishes(t *testing.T) {
+	c := newCrashRun(t, buildCommand(t), newRandom(t))
+	if err := c.stopUnderLoad(t.Context(), 0, syscall.SIGTERM); err != nil {
+		t.Fatal(err)
+	}
+	if err := c.checkAfter(t.Context(), 0, engine.MinInstant, true); err != nil {
+		t.Fatal(err)
+	}
+	if c.acknowledged == 0 {
+		t.Error("nothing was acknowledged before the stop; the test shows nothing")
+	}
+}
+
+func newCrashRun(t *testing.T, binary string, random *rand.Rand) *crashRun {
+	t.Helper()
+	c := &crashRun{binary: binary, dir: t.TempDir(), random: random, clock: new(atomic.Int64)}
+	c.clock.Store(time.Date(2026, 3, 1, 0, 0, 0, 0, time.UTC).UnixNano())
+	return c
 }
 
 // crashRun is the life of one ledger.
@@ -98,7 +118,7 @@ func (c *crashRun) run(ctx context.Context, kills int) error {
 			}
 		}
 		start := engine.Instant(c.clock.Load())
-		if err := c.killUnderLoad(ctx, kill); err != nil {
+		if err := c.stopUnderLoad(ctx, kill, syscall.SIGKILL); err != nil {
 			return fmt.Errorf("kill %d: %w", kill+1, err)
 		}
 		if err := c.checkAfter(ctx, kill, start, kill+1 == kills); err != nil {
@@ -129,9 +149,10 @@ func (c *crashRun) killAtStart() error {
 	return nil
 }
 
-// killUnderLoad kills a process 20 to 500 ms after sixteen clients have begun:
-// ten post single readings, four batches, two stream.
-func (c *crashRun) killUnderLoad(ctx context.Context, kill int) error {
+// stopUnderLoad sends a signal to a process 20 to 500 ms after sixteen clients
+// have begun: ten post single readings, four batches, two stream. Another one
+// watches.
+func (c *crashRun) stopUnderLoad(ctx context.Context, round int, signal syscall.Signal) error {
 	process, err := launch(c.command())
 	if err != nil {
 		return err
@@ -147,7 +168,7 @@ func (c *crashRun) killUnderLoad(ctx context.Context, kill int) error {
 	begin := len(c.journals)
 	for n := range 16 {
 		j := &journal{
-			name: fmt.Sprintf("k%dc%d", kill, n), clock: c.clock,
+			name: fmt.Sprintf("k%dc%d", round, n), clock: c.clock,
 			random: rand.New(rand.NewPCG(c.random.Uint64(), 0)),
 		}
 		c.journals = append(c.journals, j)
@@ -157,9 +178,13 @@ func (c *crashRun) killUnderLoad(ctx context.Context, kill int) error {
 			}
 		})
 	}
+	clients.Go(func() { watch(ctx, process.http) })
 	<-time.After(20*time.Millisecond + time.Duration(c.random.Int64N(int64(480*time.Millisecond))))
 	killed.Store(true)
-	_, err = process.stop(syscall.SIGKILL)
+	code, err := process.stop(signal)
+	if signal == syscall.SIGTERM && code != 0 {
+		err = errors.Join(err, fmt.Errorf("after SIGTERM under load the process ended with %d: %s", code, process.stderr))
+	}
 	clients.Wait()
 	if f := fault.Load(); f != nil {
 		return errors.Join(*f, fmt.Errorf("the process said: %s", process.stderr))
@@ -168,6 +193,20 @@ func (c *crashRun) killUnderLoad(ctx context.Context, kill int) error {
 		c.acknowledged += len(j.entries) - len(j.unanswered())
 	}
 	return err
+}
+
+// watch follows the beliefs until the server ends it.
+func watch(ctx context.Context, base string) {
+	request, err := http.NewRequestWithContext(ctx, http.MethodGet, base+"/v1/beliefs:watch", nil)
+	if err != nil {
+		return
+	}
+	client := &http.Client{Transport: &http.Transport{}}
+	defer client.CloseIdleConnections()
+	if response, err := client.Do(request); err == nil {
+		_, _ = io.Copy(io.Discard, response.Body)
+		_ = response.Body.Close()
+	}
 }
 
 // isFault tells whether a client's error is more than the kill it met.

@@ -21,7 +21,7 @@ func TestMain(m *testing.M) {
 // TestJourneys runs testdata/script/*.txtar, each on the real main in a process
 // of its own. Beside the commands of testscript they have:
 //
-//	start NAME ARGS...               leadline ARGS; waits for the ready line, sets $NAME and $NAME_grpc
+//	start NAME ARGS...               leadline ARGS; waits for the ready line, sets $NAME to the URL, $NAME_http and $NAME_grpc
 //	end NAME SIGNAL EXIT-CODE        sends TERM, INT or KILL, waits, compares (KILL: -1)
 //	exit CODE [ARGS...]              runs leadline ARGS to its end, compares the exit code
 //	http STATUS METHOD URL [BODY]    calls, compares the status; the body is stdout
@@ -72,6 +72,7 @@ func startCommand(ts *testscript.TestScript, neg bool, args []string) {
 	})
 	processes(ts)[args[0]] = r
 	ts.Setenv(args[0], r.http)
+	ts.Setenv(args[0]+"_http", strings.TrimPrefix(r.http, "http://"))
 	ts.Setenv(args[0]+"_grpc", r.grpc)
 }
 

@@ -84,8 +84,8 @@ func (s *settings) validate() error {
 	if err := checkAddress("--grpc", s.grpc, s.listenAnywhere); err != nil {
 		return err
 	}
-	if s.maxClockSkew < 0 {
-		return usagef("--max-clock-skew is %v; give 0 or more", s.maxClockSkew)
+	if s.maxClockSkew <= 0 {
+		return usagef("--max-clock-skew is %v; give a duration above 0, such as 5m", s.maxClockSkew)
 	}
 	for _, count := range []struct {
 		flag  string
