@@ -3,6 +3,7 @@ package server
 import (
 	"context"
 	"encoding/binary"
+	"log/slog"
 	"math"
 	"strconv"
 	"time"
@@ -27,6 +28,7 @@ type beliefService struct {
 	keeper   beliefKeeper
 	now      func() time.Time
 	stopping <-chan struct{} // closed when streams have to end
+	logger   *slog.Logger
 }
 
 // GetBelief answers with the belief of one quantity.

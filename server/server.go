@@ -107,7 +107,7 @@ func New(o Options) (*Server, error) {
 	implementations := &services{
 		quantities: &quantityService{keeper: o.Keeper, now: o.Now},
 		readings:   &readingService{keeper: o.Readings, now: o.Now, stopping: s.stopping},
-		beliefs:    &beliefService{keeper: o.Keeper, now: o.Now, stopping: s.stopping},
+		beliefs:    &beliefService{keeper: o.Keeper, now: o.Now, stopping: s.stopping, logger: o.Logger},
 	}
 	h, err := newREST(context.Background(), implementations, o.Logger)
 	if err != nil {

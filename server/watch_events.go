@@ -1,6 +1,7 @@
 package server
 
 import (
+	"log/slog"
 	"net/http"
 	"strings"
 	"time"
@@ -14,12 +15,14 @@ import (
 const eventPause = 15 * time.Second
 
 // eventWriter writes server-sent events (HTML standard, 9.2). Each has a type,
-// "belief" or "retired", and as its data the message of the gRPC stream.
+// "belief" or "retired", and as its data the message of the gRPC stream; the
+// last one may be an "error", with a google.rpc.Status.
 type eventWriter struct {
 	http.ResponseWriter
 	control *http.ResponseController
 	stall   time.Duration
 	last    time.Time
+	gone    bool // the client, so that nothing more can be written
 }
 
 // watchBeliefs serves GET /v1/beliefs:watch.
@@ -37,12 +40,25 @@ func (s *beliefService) watchBeliefs(w http.ResponseWriter, r *http.Request, _ s
 	_ = events.control.SetReadDeadline(time.Time{})
 	w.Header().Set("Content-Type", mediaEvent)
 	w.Header().Set("Cache-Control", "no-store")
-	// An answer that has begun can't become an error: whatever ends it, the
-	// client sees the end and watches again.
-	if events.write(": beliefs, then their changes\n\n") == nil && r.Method != http.MethodHead {
-		_ = watch.run(r.Context(), events.send, events.idle)
+	if events.write(": beliefs, then their changes\n\n") != nil || r.Method == http.MethodHead {
+		return nil
+	}
+	err := watch.run(r.Context(), events.send, events.idle)
+	if !events.gone && r.Context().Err() == nil {
+		events.fail(s.logger, err)
 	}
 	return nil
+}
+
+// fail tells why a watch ends, as an answer that has begun can't become an
+// error. A fault is logged.
+func (e *eventWriter) fail(logger *slog.Logger, err error) {
+	f := failureOf(err)
+	if f.fault {
+		logger.Error("watch failed", "error", err)
+	}
+	body, _ := errorBody(mediaJSON, f)
+	_ = e.write("event: error\ndata: " + strings.TrimSuffix(string(body), "\n") + "\n\n") // or the client is gone
 }
 
 func (e *eventWriter) send(event *leadlinev1.WatchBeliefsResponse) error {
@@ -70,8 +86,10 @@ func (e *eventWriter) write(text string) error {
 	e.last = time.Now()
 	// Writers without deadlines, such as recorders in tests, are served without.
 	_ = e.control.SetWriteDeadline(e.last.Add(e.stall))
-	if _, err := e.ResponseWriter.Write([]byte(text)); err != nil {
-		return err
+	_, err := e.ResponseWriter.Write([]byte(text))
+	if err == nil {
+		err = e.control.Flush()
 	}
-	return e.control.Flush()
+	e.gone = e.gone || err != nil
+	return err
 }
