@@ -6,8 +6,10 @@ import (
 	"fmt"
 	"log/slog"
 	"net/http"
+	"runtime"
 	"strings"
 	"sync"
+	"sync/atomic"
 	"time"
 
 	"github.com/prometheus/client_golang/prometheus"
@@ -33,7 +35,7 @@ type MetricsOptions struct {
 	LedgerBytes   func() int64  // size of the ledger's file; nil publishes none
 	Ready         func() error  // nil while the service takes requests; nil func: the keeper's health
 	Logger        *slog.Logger  // nil: slog.Default
-	WriteTimeout  time.Duration // for a page, from its first byte to its last; 0 means 30 s
+	WriteTimeout  time.Duration // for a page, from its first byte to its last; 0 means 10 s
 }
 
 // DefaultMaxQuantities bounds the page: 10,000 quantities are 150,000 series,
@@ -41,10 +43,13 @@ type MetricsOptions struct {
 const DefaultMaxQuantities = 10_000
 
 const (
-	defaultWriteTimeout = 30 * time.Second
-	// maxScrapes bounds the pages being written at once, and so the memory
-	// that clients who stop reading can hold; the next ones wait.
-	maxScrapes = 16
+	defaultWriteTimeout = 10 * time.Second
+	// maxPages bounds the pages being sent at once, and so the memory that
+	// clients who stop reading can hold; the next ones wait for a client to
+	// finish or to run out of time.
+	maxPages = 8
+	// maxParts bounds the cores that a rendering uses.
+	maxParts = 4
 	// textFormat is the only format served: the quantities are written in it
 	// directly.
 	textFormat = "text/plain; version=0.0.4; charset=utf-8"
@@ -52,12 +57,11 @@ const (
 
 // Metrics serves the Prometheus page: first the quantities, then the service.
 //
-// One scrape at a time evaluates the beliefs, all at one instant, into a slice
-// of its own; formatting and sending then need no lock, so that a client who
-// reads slowly holds up neither ingest nor other scrapes. The slices and
-// buffers are used again: a page costs next to no garbage. A Collector that
-// makes an object of every series would cost some 60 MB of it for 10,000
-// quantities (measured).
+// One scrape at a time evaluates all beliefs, at one instant, and writes the
+// page into memory; sending it then needs no lock, so that a client who reads
+// slowly holds up neither ingest nor other scrapes. The memory is used again:
+// a page costs next to no garbage. A Collector that makes an object of every
+// series would cost some 60 MB of it for 10,000 quantities (measured).
 type Metrics struct {
 	keeper   metricsKeeper
 	registry *prometheus.Registry
@@ -66,30 +70,28 @@ type Metrics struct {
 	ready    func() error
 	logger   *slog.Logger
 	timeout  time.Duration
-	families []family
 
-	slots chan struct{} // holds a token for each page being written
+	slots chan struct{} // holds a token for each page in use
 
 	freeMu sync.Mutex
-	free   []*scrape // guarded by freeMu; the one used last is on top
+	free   []*exposition // guarded by freeMu; the one used last is on top
 
-	evaluating sync.Mutex
-	labels     map[*engine.Track]labelled // guarded by evaluating
+	rendering sync.Mutex
+	known     []known  // guarded by rendering; one for each track, in the same order
+	chosen    []chosen // guarded by rendering; of the page being rendered
 }
 
-// labelled are the labels made for one revision of a quantity.
-type labelled struct {
+// known are the labels made for one revision of a quantity.
+type known struct {
+	track    *engine.Track
 	quantity *engine.Quantity
 	labels   *quantityLabels
 }
 
-// scrape is what one rendering of the page works on.
-type scrape struct {
-	at          engine.Instant
-	quantities  []published
-	unpublished int // beyond the bound
-	unevaluated int // of which the belief could not be evaluated
-	writer      *pageWriter
+// chosen is a quantity that the page carries.
+type chosen struct {
+	known *known
+	view  *engine.View
 }
 
 func (o *MetricsOptions) validate() error {
@@ -122,9 +124,7 @@ func newPage(k metricsKeeper, o MetricsOptions) *Metrics {
 	m := &Metrics{
 		keeper: k, registry: o.Observations.registry, now: o.Now, max: o.MaxQuantities,
 		ready: o.Ready, logger: o.Logger, timeout: o.WriteTimeout,
-		families: families(),
-		slots:    make(chan struct{}, maxScrapes),
-		labels:   map[*engine.Track]labelled{},
+		slots: make(chan struct{}, maxPages),
 	}
 	if m.max == 0 {
 		m.max = DefaultMaxQuantities
@@ -143,24 +143,25 @@ func newPage(k metricsKeeper, o MetricsOptions) *Metrics {
 
 // ServeHTTP writes the page, compressed by gzip if the client takes it.
 func (m *Metrics) ServeHTTP(w http.ResponseWriter, r *http.Request) {
-	s, err := m.take(r.Context())
+	x, err := m.take(r.Context())
 	if err != nil {
 		return // the client has given up
 	}
-	defer m.give(s)
-	m.evaluate(s)
+	defer m.give(x)
+	m.render(x)
 
-	zipped := acceptsGzip(r.Header.Values("Accept-Encoding"))
+	send := x.send
 	h := w.Header()
 	h.Set("Content-Type", textFormat)
 	h.Set("Vary", "Accept-Encoding")
-	if zipped {
+	if acceptsGzip(r.Header.Values("Accept-Encoding")) {
 		h.Set("Content-Encoding", "gzip")
+		send = x.sendZipped
 	}
 	// Recorders and other writers that have no deadline are served without.
 	c := http.NewResponseController(w)
 	_ = c.SetWriteDeadline(time.Now().Add(m.timeout))
-	if err := m.write(s, w, zipped); err != nil {
+	if err := send(w); err != nil {
 		m.logger.Warn("metrics page was cut off", "error", err, "client", r.RemoteAddr)
 		return
 	}
@@ -168,8 +169,8 @@ func (m *Metrics) ServeHTTP(w http.ResponseWriter, r *http.Request) {
 	_ = c.SetWriteDeadline(time.Time{}) // the next request on the connection has its own
 }
 
-// take waits for a slot.
-func (m *Metrics) take(ctx context.Context) (*scrape, error) {
+// take waits for a page to be free.
+func (m *Metrics) take(ctx context.Context) (*exposition, error) {
 	select {
 	case m.slots <- struct{}{}:
 	case <-ctx.Done():
@@ -178,80 +179,115 @@ func (m *Metrics) take(ctx context.Context) (*scrape, error) {
 	m.freeMu.Lock()
 	defer m.freeMu.Unlock()
 	if n := len(m.free); n > 0 {
-		s := m.free[n-1]
+		x := m.free[n-1]
 		m.free = m.free[:n-1]
-		return s, nil
+		return x, nil
 	}
-	return &scrape{writer: newPageWriter()}, nil
+	return newExposition(min(runtime.GOMAXPROCS(0), maxParts)), nil
 }
 
-func (m *Metrics) give(s *scrape) {
+func (m *Metrics) give(x *exposition) {
 	m.freeMu.Lock()
-	m.free = append(m.free, s)
+	m.free = append(m.free, x)
 	m.freeMu.Unlock()
 	<-m.slots
 }
 
-// evaluate fills s with every live quantity at one instant.
-func (m *Metrics) evaluate(s *scrape) {
-	m.evaluating.Lock()
-	defer m.evaluating.Unlock()
-	s.at = cutToMillisecond(engine.InstantOf(m.now()))
-	s.quantities, s.unpublished, s.unevaluated = s.quantities[:0], 0, 0
-	for _, t := range m.keeper.Tracks() {
+// render writes every live quantity at one instant, and then the service.
+func (m *Metrics) render(x *exposition) {
+	m.rendering.Lock()
+	defer m.rendering.Unlock()
+	x.reset()
+	unpublished := m.choose()
+	at := cutToMillisecond(engine.InstantOf(m.now()))
+	unevaluated := m.quantities(x, at)
+	x.timestamp("leadline_evaluation_timestamp_seconds",
+		"Instant at which the beliefs of this page were evaluated, in seconds since 1970.", at)
+	x.scalar("leadline_quantities", "Live quantities.", float64(len(m.chosen)+unpublished))
+	x.scalar("leadline_unpublished_quantities",
+		"Live quantities left out of this page because it is bounded.", float64(unpublished))
+	x.scalar("leadline_unevaluated_quantities",
+		"Quantities of this page whose belief could not be evaluated.", float64(unevaluated))
+	m.service(x)
+	clear(m.chosen) // lets go of the views
+}
+
+// choose picks the first live quantities by ID and counts the others.
+func (m *Metrics) choose() (unpublished int) {
+	tracks := m.keeper.Tracks()
+	m.align(tracks)
+	m.chosen = m.chosen[:0]
+	for i, t := range tracks {
 		v := t.View()
 		switch {
 		case v == nil || v.Quantity.Retired:
-			delete(m.labels, t)
-		case len(s.quantities) == m.max:
-			s.unpublished++
+			m.known[i] = known{track: t}
+		case len(m.chosen) == m.max:
+			unpublished++
 		default:
-			m.add(s, t, v)
+			m.chosen = append(m.chosen, chosen{&m.known[i], v})
 		}
 	}
+	return unpublished
 }
 
-func (m *Metrics) add(s *scrape, t *engine.Track, v *engine.View) {
-	f, err := m.keeper.Figures(v, s.at)
+// quantities writes the chosen quantities, an equal run of them to each part.
+func (m *Metrics) quantities(x *exposition, at engine.Instant) (unevaluated int64) {
+	var all sync.WaitGroup
+	var failed atomic.Int64
+	for i, p := range x.parts {
+		run := m.chosen[len(m.chosen)*i/len(x.parts) : len(m.chosen)*(i+1)/len(x.parts)]
+		all.Go(func() {
+			for _, c := range run {
+				if !m.quantity(p, c, at) {
+					failed.Add(1)
+				}
+			}
+		})
+	}
+	all.Wait()
+	return failed.Load()
+}
+
+// quantity writes one quantity; false means that its belief could not be
+// evaluated and is left out.
+func (m *Metrics) quantity(p *part, c chosen, at engine.Instant) bool {
+	v, k := c.view, c.known
+	f, err := m.keeper.Figures(v, at)
 	if err != nil {
-		s.unevaluated++
 		f = engine.Figures{ReadingCount: v.ReadingCount, HasLast: v.HasLast, LastTime: v.LastTime}
 	}
-	l := m.labels[t]
-	if l.quantity != v.Quantity {
-		l = labelled{v.Quantity, labelsOf(v.Quantity)}
-		m.labels[t] = l
+	if k.quantity != v.Quantity {
+		k.quantity, k.labels = v.Quantity, labelsOf(v.Quantity)
 	}
-	s.quantities = append(s.quantities, published{
-		labels: l.labels, tolerance: v.Quantity.Declaration.Tolerance, Figures: f,
-	})
+	p.quantity(k.labels, &f)
+	return err == nil
 }
 
-func (m *Metrics) write(s *scrape, out http.ResponseWriter, zipped bool) error {
-	w := s.writer
-	if err := w.begin(out, zipped); err != nil {
-		return err
+// align keeps known in step with the tracks, whose number only grows.
+func (m *Metrics) align(tracks []*engine.Track) {
+	if len(tracks) == len(m.known) {
+		return
 	}
-	w.quantities(m.families, s.quantities)
-	w.timestamp("leadline_evaluation_timestamp_seconds",
-		"Instant at which the beliefs of this page were evaluated, in seconds since 1970.", s.at)
-	w.scalar("leadline_quantities", "Live quantities.", float64(len(s.quantities)+s.unpublished))
-	w.scalar("leadline_unpublished_quantities",
-		"Live quantities left out of this page because it is bounded.", float64(s.unpublished))
-	w.scalar("leadline_unevaluated_quantities",
-		"Quantities of this page whose belief could not be evaluated.", float64(s.unevaluated))
-	m.writeService(w)
-	return w.end()
+	before := make(map[*engine.Track]known, len(m.known))
+	for _, k := range m.known {
+		before[k.track] = k
+	}
+	m.known = make([]known, len(tracks))
+	for i, t := range tracks {
+		m.known[i] = before[t]
+		m.known[i].track = t
+	}
 }
 
-// writeService appends the metrics of the service; what could be gathered is
+// service appends the metrics of the service; what could be gathered is
 // written even if a part failed.
-func (m *Metrics) writeService(w *pageWriter) {
+func (m *Metrics) service(x *exposition) {
 	families, err := m.registry.Gather()
 	if err != nil {
 		m.logger.Error("metrics of the service are incomplete", "error", err)
 	}
-	e := expfmt.NewEncoder(w, expfmt.NewFormat(expfmt.TypeTextPlain))
+	e := expfmt.NewEncoder(x, expfmt.NewFormat(expfmt.TypeTextPlain))
 	for _, f := range families {
 		if err := e.Encode(f); err != nil {
 			m.logger.Error("metric of the service can't be written", "metric", f.GetName(), "error", err)

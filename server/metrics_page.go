@@ -11,29 +11,72 @@ import (
 	"leadline.example/engine/decide"
 )
 
-// published is what the page says of one quantity at the instant of a scrape.
-// A copy is taken under Metrics.evaluating; then it is only read.
-type published struct {
-	labels    *quantityLabels
-	tolerance engine.Tolerance
-	engine.Figures
+// metric numbers the metrics of a quantity in the order of the page.
+type metric int
+
+const (
+	infoMetric metric = iota
+	meanMetric
+	deviationMetric
+	lowerMetric
+	upperMetric
+	breachMetric
+	limitMetric
+	verdictMetric
+	readingsMetric
+	lastMetric
+	metricCount
+)
+
+// header is what the page says of a metric before its lines.
+type header struct{ name, kind, help string }
+
+// quantityMetrics heads the metrics of a quantity. With every one present a
+// quantity has 15 series.
+func quantityMetrics() [metricCount]header {
+	const gauge, counter = "gauge", "counter"
+	return [metricCount]header{
+		infoMetric:      {"leadline_quantity_info", gauge, "Constant 1 for each quantity, with its unit and description."},
+		meanMetric:      {"leadline_posterior_mean", gauge, "Mean of the belief about the true value, in the quantity's unit."},
+		deviationMetric: {"leadline_posterior_standard_deviation", gauge, "Standard deviation of the belief (its standard uncertainty), in the quantity's unit."},
+		lowerMetric:     {"leadline_posterior_interval_lower", gauge, "Lower end of the coverage interval of the true value, in the quantity's unit."},
+		upperMetric:     {"leadline_posterior_interval_upper", gauge, "Upper end of the coverage interval of the true value, in the quantity's unit."},
+		breachMetric:    {"leadline_breach_probability", gauge, "Probability that the true value lies outside its tolerance."},
+		limitMetric:     {"leadline_tolerance_limit", gauge, "Limit of permissible true values, in the quantity's unit."},
+		verdictMetric:   {"leadline_verdict", gauge, "1 for the verdict in force under the quantity's decision rule, 0 for the others."},
+		readingsMetric:  {"leadline_quantity_readings_total", counter, "Readings applied to the quantity."},
+		lastMetric:      {"leadline_last_reading_timestamp_seconds", gauge, "Time of the newest reading applied to the quantity, in seconds since 1970."},
+	}
 }
 
-// quantityLabels are the labels of one revision of a quantity, escaped once.
+// quantityLabels is what one revision of a quantity makes of its lines.
 type quantityLabels struct {
 	quantity string // `{quantity="..."`, without the closing brace
 	unit     string // `{quantity="...",unit="..."`
-	info     string // `{quantity="...",unit="...",description="..."`
+	info     string // a whole line but for the metric's name
+	limits   []string
 }
 
 func labelsOf(q *engine.Quantity) *quantityLabels {
+	d := &q.Declaration
 	quantity := `{quantity="` + escapeLabel(string(q.ID)) + `"`
-	unit := quantity + `,unit="` + escapeLabel(q.Declaration.Unit) + `"`
-	return &quantityLabels{
+	unit := quantity + `,unit="` + escapeLabel(d.Unit) + `"`
+	l := &quantityLabels{
 		quantity: quantity,
 		unit:     unit,
-		info:     unit + `,description="` + escapeLabel(q.Declaration.Description) + `"`,
+		info:     unit + `,description="` + escapeLabel(d.Description) + "\"} 1\n",
 	}
+	if d.Tolerance.HasLower {
+		l.limits = append(l.limits, limitLine(unit, "lower", d.Tolerance.Lower))
+	}
+	if d.Tolerance.HasUpper {
+		l.limits = append(l.limits, limitLine(unit, "upper", d.Tolerance.Upper))
+	}
+	return l
+}
+
+func limitLine(unit, side string, limit float64) string {
+	return string(append(appendValue([]byte(unit+`,side="`+side+`"} `), limit), '\n'))
 }
 
 // escapeLabel writes a label value of the text format 0.0.4: backslash, quote
@@ -42,220 +85,174 @@ func escapeLabel(s string) string {
 	return strings.NewReplacer(`\`, `\\`, `"`, `\"`, "\n", `\n`).Replace(strings.ToValidUTF8(s, "\uFFFD"))
 }
 
-// A family is one metric of the page: its lines must stand together.
-type family struct {
-	name, kind, help string
-	lines            func(*pageWriter, *published)
+// An exposition is a page being made. The format wants all lines of a metric
+// together, while all numbers of a quantity come together: hence parts with a
+// buffer for each metric, and one pass over the quantities. The buffers are
+// used again, so that a page of megabytes costs no garbage.
+type exposition struct {
+	heads [metricCount][]byte // what stands before the lines of a metric
+	parts []*part             // each of some quantities, in the order of their IDs
+	rest  []byte              // what follows the quantities
+	zip   *gzip.Writer        // made when first asked for
 }
 
-// The tails of label sets; a line ends at its value.
+// part is the lines of some quantities. Different parts can be written at the
+// same time.
+type part struct {
+	names    [metricCount]string
+	verdicts [len(decide.Verdicts) + 1][]string // ends of the lines, by the verdict in force; none for 0
+	lines    [metricCount][]byte
+}
+
+func newExposition(parts int) *exposition {
+	x := &exposition{}
+	verdicts := verdictEnds()
+	for range parts {
+		x.parts = append(x.parts, &part{verdicts: verdicts})
+	}
+	for i, h := range quantityMetrics() {
+		x.heads[i] = appendHeader(nil, h)
+		for _, p := range x.parts {
+			p.names[i] = h.name
+		}
+	}
+	return x
+}
+
+func verdictEnds() (ends [len(decide.Verdicts) + 1][]string) {
+	for _, inForce := range decide.Verdicts {
+		for _, v := range decide.Verdicts {
+			value := "0\n"
+			if v == inForce {
+				value = "1\n"
+			}
+			ends[inForce] = append(ends[inForce], `,verdict="`+v.String()+`"} `+value)
+		}
+	}
+	return ends
+}
+
+// reset begins a page.
+func (x *exposition) reset() {
+	for _, p := range x.parts {
+		for i := range p.lines {
+			p.lines[i] = p.lines[i][:0]
+		}
+	}
+	x.rest = x.rest[:0]
+}
+
+func appendHeader(b []byte, h header) []byte {
+	for _, s := range [...]string{"# HELP ", h.name, " ", h.help, "\n# TYPE ", h.name, " ", h.kind, "\n"} {
+		b = append(b, s...)
+	}
+	return b
+}
+
+// The ends of label sets, up to the value.
 const (
 	endLabels     = `} `
-	coverageLabel = `,coverage_probability="0.95"} `
+	coverageLabel = `,coverage_probability="0.95"} ` // engine.DefaultCoverage
 	sideBelow     = `,side="below"} `
 	sideAbove     = `,side="above"} `
 	sideEither    = `,side="either"} `
-	limitLower    = `,side="lower"} `
-	limitUpper    = `,side="upper"} `
 )
 
-// families lists the metrics of a quantity in the order of the page. With
-// every one present a quantity has 15 series.
-func families() []family {
-	const gauge, counter = "gauge", "counter"
-	return []family{
-		{"leadline_quantity_info", gauge, "Constant 1 for each quantity, with its unit and description.", infoLines},
-		{"leadline_posterior_mean", gauge, "Mean of the belief about the true value, in the quantity's unit.", meanLines},
-		{"leadline_posterior_standard_deviation", gauge, "Standard deviation of the belief (its standard uncertainty), in the quantity's unit.", deviationLines},
-		{"leadline_posterior_interval_lower", gauge, "Lower end of the coverage interval of the true value, in the quantity's unit.", lowerLines},
-		{"leadline_posterior_interval_upper", gauge, "Upper end of the coverage interval of the true value, in the quantity's unit.", upperLines},
-		{"leadline_breach_probability", gauge, "Probability that the true value lies outside its tolerance.", breachLines},
-		{"leadline_tolerance_limit", gauge, "Limit of permissible true values, in the quantity's unit.", toleranceLines},
-		{"leadline_verdict", gauge, "1 for the verdict in force under the quantity's decision rule, 0 for the others.", verdictLines},
-		{"leadline_quantity_readings_total", counter, "Readings applied to the quantity.", readingsLines},
-		{"leadline_last_reading_timestamp_seconds", gauge, "Time of the newest reading applied to the quantity, in seconds since 1970.", lastLines},
+// quantity writes the lines of a quantity; what doesn't exist has none.
+func (p *part) quantity(l *quantityLabels, f *engine.Figures) {
+	p.text(infoMetric, l.info, "")
+	if f.HasMean {
+		p.number(meanMetric, l.unit, endLabels, f.Mean)
+	}
+	if f.HasStandardDeviation {
+		p.number(deviationMetric, l.unit, endLabels, f.StandardDeviation)
+	}
+	if f.HasInterval {
+		p.number(lowerMetric, l.unit, coverageLabel, f.Lower)
+		p.number(upperMetric, l.unit, coverageLabel, f.Upper)
+	}
+	if f.HasBreach {
+		p.number(breachMetric, l.quantity, sideBelow, f.Breach.Below)
+		p.number(breachMetric, l.quantity, sideAbove, f.Breach.Above)
+		p.number(breachMetric, l.quantity, sideEither, f.Breach.Either)
+	}
+	for _, line := range l.limits {
+		p.text(limitMetric, line, "")
+	}
+	for _, end := range p.verdicts[f.Verdict] {
+		p.text(verdictMetric, l.quantity, end)
+	}
+	p.number(readingsMetric, l.quantity, endLabels, float64(f.ReadingCount))
+	if f.HasLast {
+		p.text(lastMetric, l.quantity, endLabels)
+		p.lines[lastMetric] = append(appendSeconds(p.lines[lastMetric], f.LastTime), '\n')
 	}
 }
 
-func infoLines(w *pageWriter, p *published) { w.line(p.labels.info, endLabels, 1) }
-
-func meanLines(w *pageWriter, p *published) {
-	if p.HasMean {
-		w.line(p.labels.unit, endLabels, p.Mean)
-	}
+// number writes one series.
+func (p *part) number(m metric, labels, end string, v float64) {
+	b := append(p.lines[m], p.names[m]...)
+	b = append(b, labels...)
+	b = append(b, end...)
+	p.lines[m] = append(appendValue(b, v), '\n')
 }
 
-func deviationLines(w *pageWriter, p *published) {
-	if p.HasStandardDeviation {
-		w.line(p.labels.unit, endLabels, p.StandardDeviation)
-	}
+// text writes a metric's name and what follows it.
+func (p *part) text(m metric, labels, end string) {
+	b := append(p.lines[m], p.names[m]...)
+	b = append(b, labels...)
+	p.lines[m] = append(b, end...)
 }
 
-func lowerLines(w *pageWriter, p *published) {
-	if p.HasInterval {
-		w.line(p.labels.unit, coverageLabel, p.Lower)
-	}
+// scalar writes a metric of one series without labels, after the quantities.
+func (x *exposition) scalar(name, help string, v float64) {
+	x.rest = append(appendHeader(x.rest, header{name, "gauge", help}), name...)
+	x.rest = append(appendValue(append(x.rest, ' '), v), '\n')
 }
 
-func upperLines(w *pageWriter, p *published) {
-	if p.HasInterval {
-		w.line(p.labels.unit, coverageLabel, p.Upper)
-	}
+// timestamp writes a metric of one series without labels: a moment.
+func (x *exposition) timestamp(name, help string, at engine.Instant) {
+	x.rest = append(appendHeader(x.rest, header{name, "gauge", help}), name...)
+	x.rest = append(appendSeconds(append(x.rest, ' '), at), '\n')
 }
 
-func breachLines(w *pageWriter, p *published) {
-	if p.HasBreach {
-		w.line(p.labels.quantity, sideBelow, p.Breach.Below)
-		w.line(p.labels.quantity, sideAbove, p.Breach.Above)
-		w.line(p.labels.quantity, sideEither, p.Breach.Either)
-	}
+// Write appends to what follows the quantities.
+func (x *exposition) Write(p []byte) (int, error) {
+	x.rest = append(x.rest, p...)
+	return len(p), nil
 }
 
-func toleranceLines(w *pageWriter, p *published) {
-	if p.tolerance.HasLower {
-		w.line(p.labels.unit, limitLower, p.tolerance.Lower)
-	}
-	if p.tolerance.HasUpper {
-		w.line(p.labels.unit, limitUpper, p.tolerance.Upper)
-	}
-}
-
-func verdictLines(w *pageWriter, p *published) {
-	if p.Verdict == 0 {
-		return
-	}
-	for _, v := range decide.Verdicts {
-		value := 0.0
-		if v == p.Verdict {
-			value = 1
+// send writes the page.
+func (x *exposition) send(out io.Writer) error {
+	for m, head := range x.heads {
+		if _, err := out.Write(head); err != nil {
+			return err
 		}
-		w.line(p.labels.quantity, w.verdicts[v], value)
+		for _, p := range x.parts {
+			if _, err := out.Write(p.lines[m]); err != nil {
+				return err
+			}
+		}
 	}
+	_, err := out.Write(x.rest)
+	return err
 }
 
-func readingsLines(w *pageWriter, p *published) {
-	w.line(p.labels.quantity, endLabels, float64(p.ReadingCount))
-}
-
-func lastLines(w *pageWriter, p *published) {
-	if p.HasLast {
-		w.start(p.labels.quantity, endLabels)
-		w.buffer = append(appendSeconds(w.buffer, p.LastTime), '\n')
-	}
-}
-
-// A pageWriter formats a page piece by piece into a buffer that is used again,
-// so that a page of megabytes costs no garbage. The first error of the client's
-// connection is kept and ends the work.
-type pageWriter struct {
-	out      io.Writer
-	zip      *gzip.Writer // made when first asked for
-	buffer   []byte
-	name     string // of the metric being written
-	verdicts [len(decide.Verdicts) + 1]string
-	err      error
-}
-
-// pieceBytes is the size of one write; larger ones gain nothing (measured).
-const pieceBytes = 64 << 10
-
-func newPageWriter() *pageWriter {
-	w := &pageWriter{buffer: make([]byte, 0, pieceBytes+4096)}
-	for _, v := range decide.Verdicts {
-		w.verdicts[v] = `,verdict="` + v.String() + `"} `
-	}
-	return w
-}
-
-// begin points the writer at a client.
-func (w *pageWriter) begin(out io.Writer, zipped bool) error {
-	w.buffer, w.err, w.out = w.buffer[:0], nil, out
-	if !zipped {
-		return nil
-	}
-	if w.zip == nil {
+// sendZipped writes the page compressed: at the fastest level, as clients are
+// near and a scrape should be short.
+func (x *exposition) sendZipped(out io.Writer) error {
+	if x.zip == nil {
 		var err error
-		if w.zip, err = gzip.NewWriterLevel(out, gzip.BestSpeed); err != nil {
+		if x.zip, err = gzip.NewWriterLevel(out, gzip.BestSpeed); err != nil {
 			return err
 		}
 	}
-	w.zip.Reset(out)
-	w.out = w.zip
-	return nil
-}
-
-// end writes what is left and lets go of the client.
-func (w *pageWriter) end() error {
-	w.flush()
-	if w.out == w.zip && w.err == nil {
-		w.err = w.zip.Close()
+	x.zip.Reset(out)
+	defer x.zip.Reset(nil) // lets go of the client
+	if err := x.send(x.zip); err != nil {
+		return err
 	}
-	w.out = nil
-	return w.err
-}
-
-// Write takes a piece of page that is formatted already.
-func (w *pageWriter) Write(p []byte) (int, error) {
-	w.flush()
-	if w.err == nil {
-		_, w.err = w.out.Write(p)
-	}
-	return len(p), w.err
-}
-
-func (w *pageWriter) flush() {
-	if w.err == nil && len(w.buffer) > 0 {
-		_, w.err = w.out.Write(w.buffer)
-	}
-	w.buffer = w.buffer[:0]
-}
-
-// quantities writes every family of the given quantities.
-func (w *pageWriter) quantities(families []family, quantities []published) {
-	for _, f := range families {
-		w.family(f.name, f.kind, f.help)
-		for i := range quantities {
-			if f.lines(w, &quantities[i]); len(w.buffer) >= pieceBytes {
-				w.flush()
-			}
-			if w.err != nil {
-				return
-			}
-		}
-	}
-}
-
-// family opens the metric to which the following lines belong.
-func (w *pageWriter) family(name, kind, help string) {
-	w.name = name
-	for _, s := range [...]string{"# HELP ", name, " ", help, "\n# TYPE ", name, " ", kind, "\n"} {
-		w.buffer = append(w.buffer, s...)
-	}
-}
-
-// line writes one series of the open family.
-func (w *pageWriter) line(labels, tail string, v float64) {
-	w.start(labels, tail)
-	w.buffer = append(appendValue(w.buffer, v), '\n')
-}
-
-func (w *pageWriter) start(labels, tail string) {
-	w.buffer = append(w.buffer, w.name...)
-	w.buffer = append(w.buffer, labels...)
-	w.buffer = append(w.buffer, tail...)
-}
-
-// scalar writes a family of one series without labels.
-func (w *pageWriter) scalar(name, help string, v float64) {
-	w.family(name, "gauge", help)
-	w.line(" ", "", v)
-}
-
-// timestamp writes a family of one series without labels, of a moment.
-func (w *pageWriter) timestamp(name, help string, at engine.Instant) {
-	w.family(name, "gauge", help)
-	w.start(" ", "")
-	w.buffer = append(appendSeconds(w.buffer, at), '\n')
+	return x.zip.Close()
 }
 
 // appendValue writes v with as few digits as give it back, so that the page

@@ -17,7 +17,13 @@ import (
 	"leadline.example/engine/decide"
 )
 
-// quantityWith returns an invented quantity as the page sees it.
+// published is a quantity as the page sees it.
+type published struct {
+	*quantityLabels
+	engine.Figures
+}
+
+// quantityWith returns an invented quantity.
 func quantityWith(id, unit, description string) published {
 	q := &engine.Quantity{
 		ID: engine.QuantityID(id),
@@ -27,7 +33,7 @@ func quantityWith(id, unit, description string) published {
 		},
 	}
 	return published{
-		labels: labelsOf(q), tolerance: q.Declaration.Tolerance,
+		quantityLabels: labelsOf(q),
 		Figures: engine.Figures{
 			ReadingCount: 12, HasLast: true, LastTime: 1772366400_250000000,
 			HasMean: true, Mean: 0.8123, HasStandardDeviation: true, StandardDeviation: 0.0071,
@@ -38,15 +44,19 @@ func quantityWith(id, unit, description string) published {
 	}
 }
 
+// expose writes the quantities in three parts.
+func expose(quantities []published) *exposition {
+	x := newExposition(3)
+	for i := range quantities {
+		x.parts[i*3/len(quantities)].quantity(quantities[i].quantityLabels, &quantities[i].Figures)
+	}
+	return x
+}
+
 func renderQuantities(t testing.TB, quantities []published) string {
 	t.Helper()
 	var out bytes.Buffer
-	w := newPageWriter()
-	if err := w.begin(&out, false); err != nil {
-		t.Fatal(err)
-	}
-	w.quantities(families(), quantities)
-	if err := w.end(); err != nil {
+	if err := expose(quantities).send(&out); err != nil {
 		t.Fatal(err)
 	}
 	return out.String()
@@ -122,7 +132,7 @@ func TestPageCarriesWhatABeliefSays(t *testing.T) {
 
 func TestPageLeavesOutWhatDoesNotExist(t *testing.T) {
 	q := quantityWith("winch.rope", "mm", "")
-	q.tolerance, q.Figures = engine.Tolerance{}, engine.Figures{}
+	q.limits, q.Figures = nil, engine.Figures{}
 	got := seriesOf(t, renderQuantities(t, []published{q}))
 	want := map[string]float64{
 		"leadline_quantity_info{quantity=winch.rope,unit=mm,description=}": 1,
@@ -224,8 +234,8 @@ func TestPageKeepsFamiliesTogether(t *testing.T) {
 		}
 		seen[name], open = true, name
 	}
-	if len(seen) != len(families()) {
-		t.Errorf("%d metrics, want %d", len(seen), len(families()))
+	if len(seen) != int(metricCount) {
+		t.Errorf("%d metrics, want %d", len(seen), int(metricCount))
 	}
 }
 
@@ -235,14 +245,10 @@ func TestPageIsTheSameCompressed(t *testing.T) {
 		quantities[i] = quantityWith("room-"+string(rune('a'+i%26))+strings.Repeat("x", i/26), "Cel", "store room")
 	}
 	want := renderQuantities(t, quantities)
-	w := newPageWriter()
+	x := expose(quantities)
 	for range 2 { // the writer is used again
 		var out bytes.Buffer
-		if err := w.begin(&out, true); err != nil {
-			t.Fatal(err)
-		}
-		w.quantities(families(), quantities)
-		if err := w.end(); err != nil {
+		if err := x.sendZipped(&out); err != nil {
 			t.Fatal(err)
 		}
 		if out.Len() >= len(want) {
@@ -275,17 +281,9 @@ func (b *brokenPipe) Write(p []byte) (int, error) {
 }
 
 func TestPageStopsAtABrokenConnection(t *testing.T) {
-	quantities := make([]published, 5000)
-	for i := range quantities {
-		quantities[i] = quantityWith("q", "mm", "")
-	}
+	x := expose([]published{quantityWith("q", "mm", "")})
 	var out brokenPipe
-	w := newPageWriter()
-	if err := w.begin(&out, false); err != nil {
-		t.Fatal(err)
-	}
-	w.quantities(families(), quantities)
-	if err := w.end(); !errors.Is(err, errBroken) {
+	if err := x.send(&out); !errors.Is(err, errBroken) {
 		t.Errorf("error is %v, want %v", err, errBroken)
 	}
 	if out.writes != 2 {

@@ -256,7 +256,7 @@ func TestStalledScrapeHoldsUpNobody(t *testing.T) {
 	f := plantFixture(t, nil)
 	ctx, cancel := context.WithTimeout(t.Context(), time.Minute)
 	defer cancel()
-	stalled := make([]*stalledWriter, maxScrapes-1)
+	stalled := make([]*stalledWriter, maxPages-1)
 	done := make(chan struct{})
 	for i := range stalled {
 		stalled[i] = &stalledWriter{ResponseRecorder: httptest.NewRecorder(), reached: make(chan struct{}), release: make(chan struct{})}
@@ -301,7 +301,7 @@ func (w *stalledWriter) Write(p []byte) (int, error) {
 
 func TestScrapeGivesUpWithItsClient(t *testing.T) {
 	f := plantFixture(t, nil)
-	for range maxScrapes {
+	for range maxPages {
 		f.page.slots <- struct{}{}
 	}
 	ctx, cancel := context.WithCancel(t.Context())
