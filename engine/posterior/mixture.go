@@ -77,7 +77,11 @@ func (m *mixture) component(x float64) component {
 		rho := math.Exp(m.logC + 2*x)
 		c.won = 1 / (1 + rho)
 		c.kept = 1 / (1 + 1/rho)
-		c.sd = m.before.sd * math.Sqrt(c.kept)
+		if rho < 1 { // it may have vanished
+			c.sd = m.r0 * math.Exp(x) / math.Sqrt(m.n) * math.Sqrt(c.won)
+		} else {
+			c.sd = m.before.sd * math.Sqrt(c.kept)
+		}
 	}
 	if m.predictive {
 		c.sd = math.Hypot(c.sd, m.r0*math.Exp(x))
@@ -105,7 +109,7 @@ func (m *mixture) start(x float64) {
 // the normal factor changes by -ln(1 + q) / 2 + rest^2 / 2 * q / (1 + q).
 func (m *mixture) logWeight(x float64) float64 {
 	y := x - m.origin
-	w := -m.nu / 2 * chiTerm(y, m.chi)
+	w := -m.nu / 2 * m.chiTerm(y)
 	switch {
 	case m.n == 0:
 		return w
@@ -118,15 +122,18 @@ func (m *mixture) logWeight(x float64) float64 {
 	return w - math.Log1p(q)/2 + math.Copysign(f*f/2, q)
 }
 
-// chiTerm returns chi (exp(-2y) - 1) + 2y.
-func chiTerm(y, chi float64) float64 {
-	if math.Abs(y) < 0.02 && math.Abs(chi-1) < 0.5 {
+// chiTerm returns exp(-2x) - exp(-2 origin) + 2y, x = origin + y.
+func (m *mixture) chiTerm(y float64) float64 {
+	switch {
+	case math.Abs(y) < 0.02 && math.Abs(m.chi-1) < 0.5:
 		// exp(-2y) - 1 + 2y by its series, then the rest
 		t := -2 * y
 		series := t * t / 2 * (1 + t/3*(1+t/4*(1+t/5*(1+t/6*(1+t/7*(1+t/8))))))
-		return series + (chi-1)*math.Expm1(t)
+		return series + (m.chi-1)*math.Expm1(t)
+	case m.chi < 1e-200: // it may have vanished
+		return math.Exp(-2*(m.origin+y)) - m.chi + 2*y
 	}
-	return chi*math.Expm1(-2*y) + 2*y
+	return m.chi*math.Expm1(-2*y) + 2*y
 }
 
 // locate finds the highest maximum of p(x), makes it the origin and finds the
@@ -240,10 +247,13 @@ func (m *mixture) publish() Posterior {
 // place is a point of the line, as seen from both anchors of the mean.
 type place struct{ fromBefore, fromData float64 }
 
-func (m *mixture) place(x float64) place {
-	p := place{fromBefore: LevelOf(x).Minus(m.before.mean)}
+func (m *mixture) place(x float64) place { return m.placed(LevelOf(x), 0) }
+
+// placed is the place at some distance from l.
+func (m *mixture) placed(l Level, distance float64) place {
+	p := place{fromBefore: l.Minus(m.before.mean) + distance}
 	if m.n > 0 {
-		p.fromData = LevelOf(x).Minus(m.data)
+		p.fromData = l.Minus(m.data) + distance
 	}
 	return p
 }
@@ -267,12 +277,11 @@ func (m *mixture) tail(x float64, s side) float64 {
 	case math.IsInf(x, 0):
 		return 1
 	}
-	return math.Exp(m.logTail(x, s))
+	return math.Exp(m.logTail(m.place(x), s))
 }
 
 // logTail returns the logarithm of the tail.
-func (m *mixture) logTail(x float64, s side) float64 {
-	p := m.place(x)
+func (m *mixture) logTail(p place, s side) float64 {
 	var half [2]float64
 	for i := range m.nodes {
 		k := &m.nodes[i]

@@ -5,27 +5,32 @@ import "math"
 // quantile returns the point that cuts off the tail probability p <= 1/2 on the
 // given side: the root of the logarithm of the tail, by bracketing and then the
 // Illinois variant of the false position (Dowell & Jarratt 1971, BIT 11).
+//
+// The search goes by the distance from a centre, so that it has more digits than
+// a double near the centre could have.
 func (m *mixture) quantile(p float64, s side) float64 {
 	target := math.Log(p)
 	c := m.component(m.median)
-	centre := m.before.mean.Plus(m.difference * c.won).Value()
-	f := func(z float64) float64 { return m.logTail(centre+float64(s)*z*c.sd, s) - target }
-
+	centre := m.before.mean.Plus(m.difference * c.won)
+	if c.won > 0.5 {
+		centre = m.data.Plus(-m.difference * c.kept)
+	}
+	f := func(z float64) float64 {
+		return m.logTail(m.placed(centre, float64(s)*z*c.sd), s) - target
+	}
 	a := -normalQuantile(p)
 	fa := f(a)
-	if fa == 0 {
-		return centre + float64(s)*a*c.sd
-	}
 	// f falls as z grows; step towards its zero until it is passed.
 	step := math.Copysign(math.Max(0.1, math.Abs(a)/8), fa)
-	b, fb := a+step, f(a+step)
+	b := a + step
+	fb := f(b)
 	for (fa > 0) == (fb > 0) && math.Abs(b) < 1e300 {
 		step *= 2
 		a, fa = b, fb
 		b += step
 		fb = f(b)
 	}
-	return centre + float64(s)*falsePosition(f, a, fa, b, fb)*c.sd
+	return centre.Plus(float64(s) * falsePosition(f, a, fa, b, fb) * c.sd).Value()
 }
 
 // falsePosition returns the zero of f between a and b, where f has different

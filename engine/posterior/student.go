@@ -148,7 +148,7 @@ func studentTailExpansion(t, dof float64) float64 {
 // studentBetween returns P(a <= T <= b), width = b - a > 0.
 func studentBetween(a, b, width, dof float64) float64 {
 	switch {
-	case narrow(a, b, width):
+	case studentNarrow(a, b, width, dof):
 		sum := 0.0
 		for i, x := range legendreNodes {
 			sum += legendreWeights[i] * studentDensity(a+width*x, dof)
@@ -160,6 +160,17 @@ func studentBetween(a, b, width, dof float64) float64 {
 		return studentTail(-b, dof) - studentTail(-a, dof)
 	}
 	return 1 - (studentTail(-a, dof) + studentTail(b, dof))
+}
+
+// studentNarrow tells whether the density is all but a polynomial between a and b:
+// it changes little and its poles, at +-i sqrt(dof), are far.
+func studentNarrow(a, b, width, dof float64) bool {
+	near := math.Min(math.Abs(a), math.Abs(b))
+	if a < 0 && b > 0 {
+		near = 0
+	}
+	slope := math.Max((dof+1)/(dof/math.Abs(a)+math.Abs(a)), (dof+1)/(dof/math.Abs(b)+math.Abs(b)))
+	return width < 0.25*math.Hypot(near, math.Sqrt(dof)) && width*math.Max(slope, 0.5) < 1
 }
 
 // studentQuantile returns the t >= 0 with P(T > t) = p, 0 < p <= 1/2.
