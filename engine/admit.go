@@ -7,40 +7,67 @@ import (
 	"time"
 )
 
+// resolved is what a caller's goroutine finds out of a reading before the
+// keeper decides on it: most of the time that takes is spent waiting for memory.
+type resolved struct {
+	track *Track // nil: not known then
+	hash  idHash // of the ID, if there is a track and an ID
+}
+
+// resolve looks the readings' quantities up and hashes their IDs.
+func (k *Keeper) resolve(readings []Reading) []resolved {
+	all := make([]resolved, len(readings))
+	for i := range readings {
+		all[i] = k.resolveOne(&readings[i])
+	}
+	return all
+}
+
+func (k *Keeper) resolveOne(r *Reading) resolved {
+	t := k.lookup(r.Quantity)
+	if t == nil || r.ID == "" {
+		return resolved{track: t}
+	}
+	return resolved{t, k.seeds.hash(t.number, r.ID)}
+}
+
 // admit decides on one reading: it returns the result and whether a record is
-// to be written. r.Time is set if it was missing.
-func (k *Keeper) admit(r *Reading, receive Instant) (t *Track, res Result, write bool) {
+// to be written. r.Time is set.
+func (k *Keeper) admit(r *Reading, at resolved, receive Instant) (res Result, write bool) {
 	res = Result{ReadingID: r.ID, Time: r.Time}
-	t = k.byID[r.Quantity]
-	if reason, detail := k.objection(t, r, receive); reason != "" {
+	if reason, detail := k.objection(at.track, r, receive); reason != "" {
 		res.Status, res.Reason, res.Detail = Refused, reason, detail
-		return t, res, true
+		return res, true
 	}
 	if r.ID == "" {
 		res.Status = Applied
-		return t, res, true
+		return res, true
 	}
-	h := k.window.hash(t.number, r.ID)
-	earlier, found := k.window.find(h)
-	if !found || r.HasTime && !earlier.untimed && earlier.time != r.Time {
-		if older, ok, err := k.findStored(t, r); err != nil {
-			k.fail(fmt.Errorf("look up reading %q of %q: %w", r.ID, t.id, errors.Join(err, ErrStorageFailed)))
-		} else if ok {
-			earlier, found = older, true
+	earlier := k.window.find(at.hash)
+	if earlier == nil || r.HasTime && !earlier.untimed && earlier.time != r.Time {
+		older, err := k.findStored(at.track, r)
+		if err != nil {
+			k.fail(fmt.Errorf("look up reading %q of %q: %w", r.ID, r.Quantity, errors.Join(err, ErrStorageFailed)))
+		}
+		if older != nil {
+			earlier = older
 		}
 	}
 	switch {
-	case !found:
+	case earlier == nil:
 		res.Status = Applied
-		k.window.add(h, seenID{time: r.Time, value: r.Value, position: k.decidedTo + 1, untimed: !r.HasTime}, receive)
-		return t, res, true
+		k.window.add(seenID{
+			hash: at.hash, time: r.Time, value: r.Value,
+			position: k.decidedTo + 1, receive: receive, untimed: !r.HasTime,
+		})
+		return res, true
 	case earlier.value == r.Value && (earlier.time == r.Time || earlier.untimed || !r.HasTime):
 		res.Status, res.Time, res.Position = Duplicate, earlier.time, earlier.position
-		return t, res, false
+		return res, false
 	}
 	res.Status, res.Reason = Refused, ReadingIDConflict
 	res.Detail = fmt.Sprintf("reading_id %q stands for the reading of %v at %v already; give a new reading another reading_id, and send a retry unchanged", r.ID, earlier.value, earlier.time)
-	return t, res, true
+	return res, true
 }
 
 // objection returns why a reading can't be applied, or "".
@@ -92,14 +119,14 @@ func (k *Keeper) objectionToTime(a *rules, r *Reading, receive Instant) (Reason,
 }
 
 // findStored looks for an applied reading with r's ID and time among those
-// that the window no longer holds.
-func (k *Keeper) findStored(t *Track, r *Reading) (seenID, bool, error) {
+// that the window no longer holds; nil if there is none.
+func (k *Keeper) findStored(t *Track, r *Reading) (*seenID, error) {
 	if !k.window.evicted || !r.HasTime || t.decidedTally.count == 0 || r.Time > t.decidedTally.last {
-		return seenID{}, false, nil
+		return nil, nil
 	}
 	for i := range t.rows {
 		if e := &t.rows[i]; e.Time == r.Time && e.HasID && e.ID == r.ID {
-			return seenID{time: e.Time, value: e.Value, position: e.Position}, true, nil
+			return &seenID{time: e.Time, value: e.Value, position: e.Position}, nil
 		}
 	}
 	var at []Position
@@ -112,16 +139,16 @@ func (k *Keeper) findStored(t *Track, r *Reading) (seenID, bool, error) {
 		return nil
 	})
 	if err != nil || len(at) == 0 {
-		return seenID{}, false, err
+		return nil, err
 	}
-	var found seenID
+	var found *seenID
 	err = k.ledger.Records(at, func(rec *Record) error {
 		if rec.Reading.ID == r.ID {
-			found = seenID{time: rec.Reading.Time, value: rec.Reading.Value, position: rec.Position}
+			found = &seenID{time: rec.Reading.Time, value: rec.Reading.Value, position: rec.Position}
 		}
 		return nil
 	})
-	return found, found.position != 0, err
+	return found, err
 }
 
 // skewDefault is the clock skew allowed to senders.

@@ -96,7 +96,7 @@ func (k *Keeper) trackOf(n QuantityNumber, id QuantityID) *Track {
 	if int(n) > len(k.byNumber) {
 		t := &Track{id: id, number: n}
 		k.byNumber = append(k.byNumber, t)
-		k.byID[id] = t
+		k.byID.Load().Store(id, t)
 	}
 	return k.byNumber[n-1]
 }

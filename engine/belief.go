@@ -196,14 +196,19 @@ func (k *Keeper) Tracks() []*Track {
 	return nil
 }
 
+// lookup returns the track of a quantity whose declaration may not be durable
+// yet, nil if there is none.
+func (k *Keeper) lookup(id QuantityID) *Track {
+	if t, ok := k.byID.Load().Load(id); ok {
+		return t.(*Track)
+	}
+	return nil
+}
+
 // find returns the track of a quantity whose declaration is durable.
 func (k *Keeper) find(id QuantityID) (*Track, bool) {
-	all := k.Tracks()
-	i := sort.Search(len(all), func(i int) bool { return all[i].id >= id })
-	if i == len(all) || all[i].id != id {
-		return nil, false
-	}
-	return all[i], true
+	t := k.lookup(id)
+	return t, t != nil && t.View() != nil
 }
 
 // from returns the tracks whose IDs begin with prefix and come after an ID.

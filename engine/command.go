@@ -1,13 +1,18 @@
 package engine
 
-import "context"
+import (
+	"context"
+	"sync"
+)
 
 // command is one request on its way through the keeper: a batch of readings,
 // or an action that decides on something else.
 type command struct {
 	batch   Batch
 	origins []Record // the refusals that the batch puts through, one for each reading
-	next    int      // the first reading not decided on
+	found   []resolved
+	within  *sync.Map // where the readings were resolved
+	next    int       // the first reading not decided on
 	results []Result
 	resume  bool
 	action  func(*work) error // runs in the keeper's goroutine, adds what is to be recorded
@@ -34,6 +39,8 @@ func (k *Keeper) submit(c *command) error {
 		k.queued.Add(-n)
 		return errOverloaded
 	}
+	c.within, c.results = k.byID.Load(), make([]Result, 0, len(c.batch.Readings))
+	c.found = k.resolve(c.batch.Readings)
 	select {
 	case k.commands <- c:
 		return nil
@@ -111,9 +118,6 @@ func (k *Keeper) decide(w *work, c *command) {
 // decideBatch decides on readings until the group is full.
 func (k *Keeper) decideBatch(w *work, c *command) {
 	b := &c.batch
-	if c.results == nil {
-		c.results = make([]Result, 0, len(b.Readings))
-	}
 	for c.next < len(b.Readings) && !w.full() {
 		r := &b.Readings[c.next]
 		var origin Record
@@ -127,9 +131,13 @@ func (k *Keeper) decideBatch(w *work, c *command) {
 			c.next++
 			continue
 		}
-		t, res, write := k.admit(r, b.Receive)
+		at := c.found[c.next]
+		if at.track == nil || c.within != k.byID.Load() {
+			at = k.resolveOne(r) // declared since, or the ledger was opened anew
+		}
+		res, write := k.admit(r, at, b.Receive)
 		if write {
-			res.Position = k.record(w, t, r, &res, b, &origin)
+			res.Position = k.record(w, at.track, r, &res, b, &origin)
 		} else {
 			k.duplicates.Add(1)
 		}

@@ -7,74 +7,135 @@ import "hash/maphash"
 // place of the text; the seeds are drawn anew by each process, so nobody can
 // aim for a collision, and by chance two among a million IDs collide with a
 // probability of 1e-27.
+//
+// A map would spend most of its time waiting for memory, and again for each ID
+// that it forgets. Here an ID that is new, the usual case, costs one line of a
+// table, and nothing is ever deleted: the IDs lie in two generations, in the
+// order in which they came, and when the newer one is full the older one is
+// emptied as a whole. An ID counts only while it is among the last capacity
+// and not older than windowAge, whichever generation holds it.
 type window struct {
-	seen    map[idHash]seenID
-	order   []windowEntry // ring, oldest at start
-	start   int
-	used    int
-	evicted bool // something applied is no longer in seen
-	seeds   [2]maphash.Seed
+	capacity int
+	added    uint64 // IDs so far
+	newest   Instant
+	evicted  bool // something applied is no longer remembered
+	current  generation
+	previous generation
+}
+
+// generation is a hash table with linear probing over entries in the order of
+// their arrival. A slot is 0 or holds 32 bits of the hash and an index + 1.
+type generation struct {
+	slots   []uint64
+	entries []seenID
 }
 
 type idHash [2]uint64
 
 // seenID is the reading that an ID stands for.
 type seenID struct {
+	hash     idHash
 	time     Instant
 	value    float64
 	position Position
-	untimed  bool // its time was given by the service
+	receive  Instant
+	sequence uint64 // how many IDs came before
+	untimed  bool   // its time was given by the service
 }
 
-type windowEntry struct {
-	hash    idHash
-	time    Instant
-	receive Instant
-}
-
-// windowAge is how long an ID is remembered at least, if there is room.
+// windowAge is how long an ID is remembered at most, in nanoseconds.
 const windowAge = 24 * 3600 * 1_000_000_000
 
 func newWindow(capacity int) *window {
-	return &window{
-		seen:  make(map[idHash]seenID),
-		order: make([]windowEntry, capacity),
-		seeds: [2]maphash.Seed{maphash.MakeSeed(), maphash.MakeSeed()},
+	return &window{capacity: capacity, current: newGeneration(), previous: newGeneration()}
+}
+
+func newGeneration() generation { return generation{slots: make([]uint64, 1<<10)} }
+
+// idSeeds are the seeds of the hashes; any goroutine may use them.
+type idSeeds [2]maphash.Seed
+
+func newIDSeeds() idSeeds { return idSeeds{maphash.MakeSeed(), maphash.MakeSeed()} }
+
+// hash returns the hash of a reading ID of a quantity. Mixing the number in by
+// a product with an odd constant is one to one, so it keeps quantities apart.
+func (s *idSeeds) hash(number QuantityNumber, id ReadingID) idHash {
+	return idHash{
+		maphash.String(s[0], string(id)) + uint64(number)*0x9e3779b97f4a7c15,
+		maphash.String(s[1], string(id)) ^ uint64(number)*0xbf58476d1ce4e5b9,
 	}
 }
 
-func (w *window) hash(number QuantityNumber, id ReadingID) idHash {
-	h := idHash{maphash.String(w.seeds[0], string(id)), maphash.String(w.seeds[1], string(id))}
-	// Splitting the number over both words keeps pairs apart: the multiplier is
-	// odd, so the map from number to offset is one to one.
-	h[0] += uint64(number) * 0x9e3779b97f4a7c15
-	h[1] ^= uint64(number) * 0xbf58476d1ce4e5b9
-	return h
-}
-
-func (w *window) find(h idHash) (seenID, bool) {
-	s, ok := w.seen[h]
-	return s, ok
-}
-
-// add remembers h, forgetting the oldest if there is no room and what is older
-// than windowAge before receive.
-func (w *window) add(h idHash, s seenID, receive Instant) {
-	for w.used > 0 && (w.used == len(w.order) || receive.Sub(w.order[w.start].receive) > windowAge) {
-		w.forgetOldest()
+// find returns the reading that h stands for, nil if it isn't remembered.
+func (w *window) find(h idHash) *seenID {
+	e := w.current.find(h)
+	if e == nil {
+		e = w.previous.find(h)
 	}
-	w.order[(w.start+w.used)%len(w.order)] = windowEntry{hash: h, time: s.time, receive: receive}
-	w.used++
-	w.seen[h] = s
+	if e == nil || w.added-e.sequence > uint64(w.capacity) || w.newest.Sub(e.receive) > windowAge {
+		return nil
+	}
+	return e
 }
 
-func (w *window) forgetOldest() {
-	e := w.order[w.start]
-	w.start = (w.start + 1) % len(w.order)
-	w.used--
-	w.evicted = true
-	// The ID may have been used again since, with another time.
-	if s, ok := w.seen[e.hash]; ok && s.time == e.time {
-		delete(w.seen, e.hash)
+// add remembers an ID, also one that stood for another reading before.
+func (w *window) add(e seenID) {
+	if len(w.current.entries) == w.capacity {
+		w.current, w.previous = w.previous, w.current
+		clear(w.current.slots)
+		w.current.entries = w.current.entries[:0]
 	}
+	e.sequence = w.added
+	w.added++
+	w.newest = max(w.newest, e.receive)
+	w.evicted = w.evicted || w.added > uint64(w.capacity) || w.newest.Sub(w.oldest()) > windowAge
+	w.current.add(e)
+}
+
+// oldest is the receipt of the oldest ID that is still held.
+func (w *window) oldest() Instant {
+	for _, g := range []*generation{&w.previous, &w.current} {
+		if len(g.entries) > 0 {
+			return g.entries[0].receive
+		}
+	}
+	return w.newest
+}
+
+func (g *generation) find(h idHash) *seenID {
+	mask := uint64(len(g.slots) - 1)
+	for i := h[0] & mask; g.slots[i] != 0; i = (i + 1) & mask {
+		if slot := g.slots[i]; slot>>32 == h[1]>>32 {
+			if e := &g.entries[uint32(slot)-1]; e.hash == h {
+				return e
+			}
+		}
+	}
+	return nil
+}
+
+func (g *generation) add(e seenID) {
+	g.entries = append(g.entries, e)
+	g.place(len(g.entries))
+	if 2*len(g.entries) > len(g.slots) {
+		g.slots = make([]uint64, 2*len(g.slots))
+		for i := range g.entries {
+			g.place(i + 1)
+		}
+	}
+}
+
+// place puts the entry before index n into the table; the later reading takes
+// the place of an earlier one with its ID.
+func (g *generation) place(n int) {
+	h := g.entries[n-1].hash
+	slot := h[1]&^0xffffffff | uint64(n)
+	mask := uint64(len(g.slots) - 1)
+	i := h[0] & mask
+	for ; g.slots[i] != 0; i = (i + 1) & mask {
+		if old := g.slots[i]; old>>32 == slot>>32 && g.entries[uint32(old)-1].hash == h {
+			break
+		}
+	}
+	g.slots[i] = slot
 }

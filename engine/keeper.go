@@ -67,6 +67,7 @@ const (
 // their order, so that a replay of the ledger gives the same state.
 type Keeper struct {
 	options  Options
+	seeds    idSeeds
 	commands chan *command
 	queued   atomic.Int64 // readings in commands
 	stopping chan struct{}
@@ -76,7 +77,6 @@ type Keeper struct {
 
 	// Of the keeper's goroutine.
 	ledger    Ledger
-	byID      map[QuantityID]*Track
 	byNumber  []*Track // index number-1
 	window    *window
 	decidedTo Position // last position given to a record
@@ -92,6 +92,7 @@ type Keeper struct {
 	failed    error
 
 	// Written by the keeper's goroutine, read by all.
+	byID      atomic.Pointer[sync.Map] // QuantityID to *Track, also of declarations not yet durable
 	tracks    atomic.Pointer[[]*Track] // sorted by ID
 	refusals  refusals
 	published atomic.Uint64 // newest change
@@ -116,6 +117,7 @@ func New(o Options) (*Keeper, error) {
 	}
 	k := &Keeper{
 		options:   o,
+		seeds:     newIDSeeds(),
 		commands:  make(chan *command, maxQueuedCommands),
 		stopping:  make(chan struct{}),
 		stopped:   make(chan struct{}),

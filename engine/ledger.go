@@ -44,10 +44,10 @@ type Record struct {
 type Row struct {
 	Time           Instant
 	Value          float64
-	HasUncertainty bool
 	Uncertainty    float64
-	HasID          bool // the reading has an ID, found in the record
 	Position       Position
+	HasUncertainty bool
+	HasID          bool // the reading has an ID, found in the record
 }
 
 // Group is a set of records that become durable together, with the piece of

@@ -3,6 +3,7 @@ package engine
 import (
 	"errors"
 	"fmt"
+	"sync"
 )
 
 // load opens the ledger and brings the state up to its end: from the last
@@ -22,7 +23,8 @@ func (k *Keeper) load() error {
 func (k *Keeper) loadFrom(l Ledger) error {
 	k.ledger = l
 	k.current.Store(&l)
-	k.byID, k.byNumber = make(map[QuantityID]*Track), nil
+	k.byID.Store(new(sync.Map))
+	k.byNumber = nil
 	k.window = newWindow(k.options.DuplicateWindow)
 	k.refusals.init(k.options.RefusedLog)
 	k.touched, k.arrived, k.jobs, k.partial = nil, nil, nil, nil
@@ -102,7 +104,7 @@ func (k *Keeper) restoreSummary(b []byte) (Position, error) {
 // the window of reading IDs covers.
 func (k *Keeper) replayFrom(through, countedTo Position) error {
 	from := Position(1)
-	if size := Position(len(k.window.order)); through > size {
+	if size := Position(k.window.capacity); through > size {
 		from, k.window.evicted = through-size+1, true
 	}
 	k.position.Store(uint64(through))
@@ -141,8 +143,10 @@ func (k *Keeper) checkReplayed(r *Record) error {
 // remember puts an applied reading's ID into the window.
 func (k *Keeper) remember(r *Record) {
 	if r.Kind == KindReading && r.Reading.ID != "" {
-		s := seenID{time: r.Reading.Time, value: r.Reading.Value, position: r.Position, untimed: !r.Reading.HasTime}
-		k.window.add(k.window.hash(r.Number, r.Reading.ID), s, r.ReceiveTime)
+		k.window.add(seenID{
+			hash: k.seeds.hash(r.Number, r.Reading.ID), time: r.Reading.Time, value: r.Reading.Value,
+			position: r.Position, receive: r.ReceiveTime, untimed: !r.Reading.HasTime,
+		})
 	}
 }
 

@@ -34,9 +34,9 @@ func calibrated(t *testing.T, name string, below []float64) {
 		}
 		distance = max(distance, math.Abs(p-float64(i)/n), math.Abs(p-float64(i+1)/n))
 	}
-	error := (inside/n - 0.95) / math.Sqrt(0.95*0.05/n)
-	t.Logf("%-34s coverage %.4f (%+.1f standard errors), distance %.2f", name, inside/n, error, distance*math.Sqrt(n))
-	if math.Abs(error) > 4 || distance*math.Sqrt(n) > 2.2 {
+	off := (inside/n - 0.95) / math.Sqrt(0.95*0.05/n)
+	t.Logf("%-34s coverage %.4f (%+.1f standard errors), distance %.2f", name, inside/n, off, distance*math.Sqrt(n))
+	if math.Abs(off) > 4 || distance*math.Sqrt(n) > 2.2 {
 		t.Errorf("%s: not calibrated", name)
 	}
 }
