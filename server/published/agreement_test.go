@@ -204,6 +204,9 @@ func (s *service) snapshot(at time.Time) map[string]string {
 
 func wantSameSnapshot(t testing.TB, what string, got, want map[string]string) {
 	t.Helper()
+	if len(got) != len(want) {
+		t.Errorf("%s: %d quantities, want %d", what, len(got), len(want))
+	}
 	for id, text := range want {
 		if got[id] != text {
 			t.Errorf("%s: belief of %s\n%s\nwant\n%s", what, id, got[id], text)

@@ -146,6 +146,13 @@ func listen(t testing.TB) net.Listener {
 	return l
 }
 
+// under is the same service seen by a subtest.
+func (s *service) under(t testing.TB) *service {
+	c := *s
+	c.t = t
+	return &c
+}
+
 // restart ends the service in good order and starts another on the same file.
 func (s *service) restart() *service {
 	s.t.Helper()
