@@ -40,9 +40,9 @@ func (k *Keeper) applyToTrack(r *Record) {
 		t.quantity = &q
 		k.rebase(t)
 	case KindReading:
-		row := rowOf(r)
-		t.tally.add(row)
-		t.fresh = append(t.fresh, entry{Row: *row, ID: r.Reading.ID})
+		e := entry{Row: rowOf(r), ID: r.Reading.ID}
+		t.tally.add(&e.Row)
+		t.add(&e)
 	}
 }
 
@@ -84,7 +84,7 @@ func (k *Keeper) rebase(t *Track) {
 // refold folds the rows, which are all there are, under t.quantity.
 func (t *Track) refold() {
 	rows := slices.Clone(t.rows)
-	slices.SortFunc(rows, compareEntries)
+	slices.SortFunc(rows, entry.compare)
 	t.basis = t.quantity
 	t.reset()
 	t.fresh = rows
@@ -203,6 +203,7 @@ func (k *Keeper) finishJob(j *job) {
 	t.job = nil
 	t.basis, t.fold, t.foldedTo = t.quantity, j.fold, j.position
 	t.rows, t.marks, t.markFrom = j.rows, j.marks, 0
+	t.last, t.behind = j.last, entry{}
 	t.trim(k.sweep.stored)
 	t.fresh = since
 	k.change++

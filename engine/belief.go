@@ -122,7 +122,7 @@ func (k *Keeper) belief(v *View, q *BeliefQuery) (Belief, error) {
 	}
 	b := Belief{
 		Quantity: *v.Quantity, Time: at, Coverage: q.Coverage,
-		ReadingCount: m.count, HasLast: m.count > 0, LastTime: m.last.Time,
+		ReadingCount: m.count, HasLast: m.count > 0, LastTime: m.lastTime,
 		Position: v.Position, Rebuilding: v.Rebuilding,
 	}
 	if v.Rebuilding {

@@ -162,15 +162,16 @@ func (k *Keeper) record(w *work, t *Track, r *Reading, res *Result, b *Batch, or
 	if res.Status == Refused {
 		rec.Kind = KindRefusal
 	} else {
-		t.decidedTally.add(rowOf(&rec))
+		row := rowOf(&rec)
+		t.decidedTally.add(&row)
 	}
 	w.add(rec)
 	return k.decidedTo
 }
 
 // rowOf returns the index entry of an applied reading.
-func rowOf(r *Record) *Row {
-	return &Row{
+func rowOf(r *Record) Row {
+	return Row{
 		Time: r.Reading.Time, Value: r.Reading.Value,
 		HasUncertainty: r.Reading.HasUncertainty, Uncertainty: r.Reading.RandomStandardUncertainty,
 		HasID: r.Reading.ID != "", Position: r.Position,

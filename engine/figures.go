@@ -32,7 +32,7 @@ func (k *Keeper) Figures(v *View, at Instant) (Figures, error) {
 		return Figures{}, err
 	}
 	f := figuresOf(m.level(&v.basis.Declaration, at), &v.Quantity.Declaration)
-	f.ReadingCount, f.HasLast, f.LastTime = m.count, m.count > 0, m.last.Time
+	f.ReadingCount, f.HasLast, f.LastTime = m.count, m.count > 0, m.lastTime
 	if !v.basis.Declaration.ordered() && m.count == v.ReadingCount {
 		still := f
 		v.still.Store(&still)
@@ -76,7 +76,7 @@ func (k *Keeper) moment(v *View, at Instant) (*fold, error) {
 		return &v.fold, nil
 	}
 	d := &v.basis.Declaration
-	if base := &v.marks[0]; v.canonical && (base.count == 0 || base.last.Time <= at) {
+	if base := &v.marks[0]; v.canonical && (base.count == 0 || base.lastTime <= at) {
 		return v.recentMoment(d, at), nil
 	}
 	all, err := loadEntries(k.Ledger(), v.Quantity.Number, v.Position, v.rows)
@@ -88,7 +88,7 @@ func (k *Keeper) moment(v *View, at Instant) (*fold, error) {
 		if all[i].Time > at {
 			break
 		}
-		f.add(d, &all[i])
+		f.add(d, &all[i].Row)
 	}
 	return &f, nil
 }
@@ -96,12 +96,12 @@ func (k *Keeper) moment(v *View, at Instant) (*fold, error) {
 // recentMoment folds on from the last mark that is not later than at.
 func (v *View) recentMoment(d *Declaration, at Instant) *fold {
 	mark := 0
-	for mark+1 < len(v.marks) && v.marks[mark+1].last.Time <= at {
+	for mark+1 < len(v.marks) && v.marks[mark+1].lastTime <= at {
 		mark++
 	}
 	f := v.marks[mark]
 	for i := v.markFrom + mark*markSpacing; i < len(v.rows) && v.rows[i].Time <= at; i++ {
-		f.add(d, &v.rows[i])
+		f.add(d, &v.rows[i].Row)
 	}
 	return &f
 }

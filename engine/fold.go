@@ -16,22 +16,23 @@ type entry struct {
 // compareEntries is the canonical order: time, then instrument (none so far),
 // then reading ID, then value. What is left equal folds the same either way;
 // the position makes the order total.
-func compareEntries(a, b entry) int {
+func compareEntries(a, b *entry) int {
 	if c := cmp.Compare(a.Time, b.Time); c != 0 {
 		return c
 	}
 	return cmp.Or(cmp.Compare(a.ID, b.ID), cmp.Compare(a.Value, b.Value), cmp.Compare(a.Position, b.Position))
 }
 
+func (e entry) compare(f entry) int { return compareEntries(&e, &f) }
+
 // fold is the belief after a set of readings, as the numbers from which the
 // posterior follows. The zero value is the belief before any reading. It is
 // a plain value: copies share nothing.
 type fold struct {
 	count    int
-	last     entry // the latest in canonical order
+	lastTime Instant // of the latest reading in count
 	constant posterior.Constant
-	walk     posterior.Walk
-	walkTime Instant // to which walk has moved
+	walk     posterior.Walk // at lastTime
 }
 
 // ordered tells whether a fold under d depends on the order of its readings;
@@ -40,14 +41,14 @@ func (d *Declaration) ordered() bool { return d.Dynamics.Form == DynamicsRandomW
 
 // add folds one reading in; under ordered dynamics e must not precede any
 // reading already in f in canonical order.
-func (f *fold) add(d *Declaration, e *entry) {
+func (f *fold) add(d *Declaration, e *Row) {
 	if d.ordered() {
-		f.addWalk(d, &e.Row)
+		f.addWalk(d, e)
 	} else {
-		f.addConstant(d, &e.Row)
+		f.addConstant(d, e)
 	}
-	if f.count == 0 || e.Time >= f.last.Time && compareEntries(*e, f.last) > 0 {
-		f.last = *e
+	if f.count == 0 || e.Time > f.lastTime {
+		f.lastTime = e.Time
 	}
 	f.count++
 }
@@ -64,15 +65,14 @@ func (f *fold) addConstant(d *Declaration, e *Row) {
 }
 
 func (f *fold) addWalk(d *Declaration, e *Row) {
+	from := f.lastTime
 	if f.count == 0 {
 		f.walk = posterior.NewWalk(d.levelPrior())
-		f.walkTime = e.Time
-		if d.Prior.HasTime {
-			f.walkTime = d.Prior.Time
+		if from = e.Time; d.Prior.HasTime {
+			from = d.Prior.Time
 		}
 	}
-	f.walk.Predict(d.walkVariance(e.Time.Sub(f.walkTime)))
-	f.walkTime = e.Time
+	f.walk.Predict(d.walkVariance(e.Time.Sub(from)))
 	u := d.Repeatability.StandardDeviation
 	if e.HasUncertainty {
 		u = e.Uncertainty
@@ -119,7 +119,7 @@ func (f *fold) repeatability(d *Declaration, coverage float64) posterior.Repeata
 // walkAt moves the walk on to an instant. Before a stated prior time nothing
 // is known: not ok.
 func (f *fold) walkAt(d *Declaration, at Instant) (posterior.Walk, bool) {
-	w, from := f.walk, f.walkTime
+	w, from := f.walk, f.lastTime
 	if f.count == 0 {
 		w = posterior.NewWalk(d.levelPrior())
 		if !d.Prior.HasTime {

@@ -59,7 +59,7 @@ func (k *Keeper) restore(e CheckpointEntry) error {
 	if err != nil {
 		return err
 	}
-	t.marks[0] = t.fold
+	t.marks[0], t.behind = t.fold, t.last
 	t.hollow = rebuild
 	k.arrived = append(k.arrived, t)
 	return nil
@@ -161,7 +161,7 @@ func (k *Keeper) replay(r *Record, countedTo Position) {
 	if int(r.Number) <= len(k.byNumber) {
 		if t := k.byNumber[r.Number-1]; r.Position <= t.saved {
 			if r.Kind == KindReading {
-				t.rows = append(t.rows, entry{Row: *rowOf(r), ID: r.Reading.ID})
+				t.rows = append(t.rows, entry{Row: rowOf(r), ID: r.Reading.ID})
 				t.markFrom = len(t.rows)
 			}
 			return

@@ -14,6 +14,7 @@ type job struct {
 	position Position
 
 	fold  fold
+	last  entry
 	rows  []entry // canonical if ordered, else the recent ones
 	marks []fold
 	err   error
@@ -30,15 +31,17 @@ func (j *job) run(l Ledger) {
 	t.basis = j.quantity
 	t.reset()
 	if t.basis.Declaration.ordered() {
-		t.extend(all)
+		for i := range all {
+			t.extend(&all[i])
+		}
 		j.rows, j.marks = t.rows, t.marks
 	} else {
 		for i := range all {
-			t.fold.add(&t.basis.Declaration, &all[i])
+			t.fold.add(&t.basis.Declaration, &all[i].Row)
 		}
 		j.rows, j.marks = j.recent, t.marks
 	}
-	j.fold = t.fold
+	j.fold, j.last = t.fold, t.last
 }
 
 // loadEntries returns, in canonical order, the readings of a quantity up to a
@@ -61,7 +64,7 @@ func loadEntries(l Ledger, number QuantityNumber, through Position, recent []ent
 	if err != nil {
 		return nil, err
 	}
-	slices.SortFunc(all, compareEntries)
+	slices.SortFunc(all, entry.compare)
 	return all, orderTies(l, all)
 }
 
@@ -77,7 +80,7 @@ func orderTies(l Ledger, all []entry) error {
 			if err := nameEntries(l, all[i:n]); err != nil {
 				return err
 			}
-			slices.SortFunc(all[i:n], compareEntries)
+			slices.SortFunc(all[i:n], entry.compare)
 		}
 		i = n
 	}

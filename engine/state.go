@@ -27,8 +27,8 @@ func (t *Track) appendState(b []byte) []byte {
 	}
 	f := &t.fold
 	b = binary.AppendUvarint(b, uint64(f.count))
-	b = appendEntry(b, &f.last)
-	b = binary.AppendVarint(b, int64(f.walkTime))
+	b = binary.AppendVarint(b, int64(f.lastTime))
+	b = appendEntry(b, &t.last)
 	b = appendBlock(b, f.constant.AppendBinary(nil))
 	return appendBlock(b, f.walk.AppendBinary(nil))
 }
@@ -68,8 +68,8 @@ func (t *Track) decodeState(b []byte) (rebuild bool, err error) {
 	if !rebuild {
 		f := &t.fold
 		f.count = int(r.uvarint())
-		f.last = r.entry()
-		f.walkTime = Instant(r.varint())
+		f.lastTime = Instant(r.varint())
+		t.last = r.entry()
 		f.constant = decodeBlock(&r, posterior.DecodeConstant)
 		f.walk = decodeBlock(&r, posterior.DecodeWalk)
 	}

@@ -106,16 +106,23 @@ func (s *sweeper) rowsEntry(g *Group, number QuantityNumber) (bytes int) {
 // rowsBetween returns the rows of the positions after from and up to through,
 // in canonical order.
 func (t *Track) rowsBetween(from, through Position) []Row {
-	var found []entry
-	for _, e := range t.rows {
-		if from < e.Position && e.Position <= through {
-			found = append(found, e)
+	within := func(e *entry) bool { return from < e.Position && e.Position <= through }
+	n, sorted, last := 0, true, (*entry)(nil)
+	for i := range t.rows {
+		if e := &t.rows[i]; within(e) {
+			sorted = sorted && (last == nil || compareEntries(last, e) < 0)
+			n, last = n+1, e
 		}
 	}
-	slices.SortFunc(found, compareEntries)
-	rows := make([]Row, len(found))
-	for i := range found {
-		rows[i] = found[i].Row
+	source := t.rows
+	if !sorted {
+		source = slices.SortedFunc(slices.Values(t.rows), entry.compare)
+	}
+	rows := make([]Row, 0, n)
+	for i := range source {
+		if within(&source[i]) {
+			rows = append(rows, source[i].Row)
+		}
 	}
 	return rows
 }

@@ -37,9 +37,11 @@ type Track struct {
 	position Position
 	fold     fold
 	foldedTo Position
+	last     entry // the latest of an ordered track, in canonical order
 	rows     []entry
 	marks    []fold
 	markFrom int
+	behind   entry // the latest reading in marks[0]
 
 	fresh         []entry   // of the group being folded
 	touched       bool      // in the group being folded
@@ -106,7 +108,7 @@ func (t *Track) View() *View { return t.view.Load() }
 func (t *Track) publish(change uint64) {
 	t.view.Store(&View{
 		Quantity: t.quantity, Position: t.position, Change: change,
-		ReadingCount: t.fold.count, HasLast: t.fold.count > 0, LastTime: t.fold.last.Time,
+		ReadingCount: t.fold.count, HasLast: t.fold.count > 0, LastTime: t.fold.lastTime,
 		Rebuilding: t.job != nil,
 		basis:      t.basis, fold: t.fold, foldedTo: t.foldedTo,
 		rows: t.rows, canonical: t.job == nil && t.basis.Declaration.ordered(),
@@ -116,7 +118,8 @@ func (t *Track) publish(change uint64) {
 
 // reset makes t the track of a quantity without readings.
 func (t *Track) reset() {
-	t.fold, t.rows, t.markFrom = fold{}, nil, 0
+	t.fold, t.last, t.behind = fold{}, entry{}, entry{}
+	t.rows, t.markFrom = nil, 0
 	t.marks = []fold{{}}
 }
 
@@ -126,51 +129,67 @@ func (t *Track) reset() {
 func (t *Track) settle(budget int) (steps int, ok bool) {
 	fresh := t.fresh
 	t.fresh = t.fresh[:0]
-	d := &t.basis.Declaration
 	switch {
 	case len(fresh) == 0:
 		return 0, true
 	case t.job != nil:
 		t.rows = append(t.rows, fresh...)
 		return 0, true
-	case !d.ordered():
+	case !t.basis.Declaration.ordered():
 		for i := range fresh {
-			t.fold.add(d, &fresh[i])
+			t.extend(&fresh[i])
 		}
-		t.rows = append(t.rows, fresh...)
 		return 0, true
 	}
-	if !slices.IsSortedFunc(fresh, compareEntries) {
-		slices.SortFunc(fresh, compareEntries)
+	if !slices.IsSortedFunc(fresh, entry.compare) {
+		slices.SortFunc(fresh, entry.compare)
 	}
-	if t.fold.count == 0 || compareEntries(t.fold.last, fresh[0]) <= 0 {
-		t.extend(fresh)
+	if t.follows(&fresh[0]) {
+		for i := range fresh {
+			t.extend(&fresh[i])
+		}
 		return 0, true
 	}
 	return t.insert(fresh, budget)
 }
 
-// extend appends rows that come after all others.
-func (t *Track) extend(fresh []entry) {
+// follows tells whether e comes after all readings of an ordered track.
+func (t *Track) follows(e *entry) bool {
+	return t.fold.count == 0 || compareEntries(&t.last, e) <= 0
+}
+
+// add takes one durable reading: it folds it at once if that is right without
+// a merge, else keeps it for settle.
+func (t *Track) add(e *entry) {
+	if t.job == nil && len(t.fresh) == 0 && (!t.basis.Declaration.ordered() || t.follows(e)) {
+		t.extend(e)
+		return
+	}
+	t.fresh = append(t.fresh, *e)
+}
+
+// extend appends and folds a row; on an ordered track it follows all others.
+func (t *Track) extend(e *entry) {
 	d := &t.basis.Declaration
-	for _, e := range fresh {
-		if i := len(t.rows) - t.markFrom; i == len(t.marks)*markSpacing {
+	if d.ordered() {
+		if len(t.rows)-t.markFrom == len(t.marks)*markSpacing {
 			t.marks = append(t.marks, t.fold)
 		}
-		t.fold.add(d, &e)
-		t.rows = append(t.rows, e)
+		t.last = *e
 	}
+	t.fold.add(d, &e.Row)
+	t.rows = append(t.rows, *e)
 }
 
 // insert merges rows of which the first is late. The slices that Views share
 // are left as they are.
 func (t *Track) insert(fresh []entry, budget int) (steps int, ok bool) {
-	if base := &t.marks[0]; base.count > 0 && compareEntries(fresh[0], base.last) < 0 {
+	if t.marks[0].count > 0 && compareEntries(&fresh[0], &t.behind) < 0 {
 		t.rows = append(t.rows, fresh...)
 		return 0, false
 	}
 	at := t.markFrom + sort.Search(len(t.rows)-t.markFrom, func(i int) bool {
-		return compareEntries(t.rows[t.markFrom+i], fresh[0]) > 0
+		return compareEntries(&t.rows[t.markFrom+i], &fresh[0]) > 0
 	})
 	mark := (at - t.markFrom) / markSpacing
 	mark = min(mark, len(t.marks)-1)
@@ -184,7 +203,9 @@ func (t *Track) insert(fresh []entry, budget int) (steps int, ok bool) {
 	t.rows = append(slices.Clone(t.rows[:from]), make([]entry, 0, len(tail))...)
 	t.fold = t.marks[mark]
 	t.marks = slices.Clone(t.marks[:mark+1])
-	t.extend(tail)
+	for i := range tail {
+		t.extend(&tail[i])
+	}
 	return steps, true
 }
 
@@ -192,7 +213,7 @@ func (t *Track) insert(fresh []entry, budget int) (steps int, ok bool) {
 func mergeEntries(a, b []entry) []entry {
 	out := make([]entry, 0, len(a)+len(b))
 	for len(a) > 0 && len(b) > 0 {
-		if compareEntries(b[0], a[0]) < 0 {
+		if compareEntries(&b[0], &a[0]) < 0 {
 			out, b = append(out, b[0]), b[1:]
 		} else {
 			out, a = append(out, a[0]), a[1:]
@@ -220,6 +241,9 @@ func (t *Track) trim(stored Position) {
 		return
 	}
 	mark := min((n-t.markFrom)/markSpacing, len(t.marks)-1)
+	if mark > 0 {
+		t.behind = t.rows[t.markFrom+mark*markSpacing-1]
+	}
 	t.rows = slices.Clone(t.rows[t.markFrom+mark*markSpacing:])
 	t.marks = slices.Clone(t.marks[mark:])
 	t.markFrom = 0
