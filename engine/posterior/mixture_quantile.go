@@ -15,22 +15,28 @@ func (m *mixture) quantile(p float64, s side) float64 {
 	if c.won > 0.5 {
 		centre = m.data.Plus(-m.difference * c.kept)
 	}
-	f := func(z float64) float64 {
+	z := zero(-normalQuantile(p), func(z float64) float64 {
 		return m.logTail(m.placed(centre, float64(s)*z*c.sd), s) - target
-	}
-	a := -normalQuantile(p)
+	})
+	return centre.Plus(float64(s) * z * c.sd).Value()
+}
+
+// zero returns the zero of a falling function, searching outwards from a.
+func zero(a float64, f func(float64) float64) float64 {
 	fa := f(a)
-	// f falls as z grows; step towards its zero until it is passed.
+	if fa == 0 {
+		return a
+	}
 	step := math.Copysign(math.Max(0.1, math.Abs(a)/8), fa)
 	b := a + step
 	fb := f(b)
-	for (fa > 0) == (fb > 0) && math.Abs(b) < 1e300 {
+	for fa*fb > 0 && math.Abs(b) < 1e300 {
 		step *= 2
 		a, fa = b, fb
 		b += step
 		fb = f(b)
 	}
-	return centre.Plus(float64(s) * falsePosition(f, a, fa, b, fb) * c.sd).Value()
+	return falsePosition(f, a, fa, b, fb)
 }
 
 // falsePosition returns the zero of f between a and b, where f has different

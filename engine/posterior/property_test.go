@@ -204,3 +204,16 @@ func TestMixtureLimits(t *testing.T) {
 		near(t, "upper tail as the guess hardens", hard.UpperTail(x), known.UpperTail(x), 1e-7)
 	}
 }
+
+// A prior so firm that the readings don't matter makes the very first guess of
+// a quantile exact; the search must notice.
+func TestQuantileWhereTheFirstGuessIsExact(t *testing.T) {
+	prior := posterior.Prior{Mean: 0, SD: 1e-60}
+	p := learnedAll([]float64{1, -1}).Posterior(prior, posterior.LearnedNoise(1, 1))
+	for _, coverage := range []float64{0.5, 0.9, 0.95, 0.99} {
+		lo, hi := p.Interval(coverage)
+		_, z := posterior.Normal(posterior.Level{}, 1e-60).Interval(coverage)
+		near(t, "lower", lo, -z, 1e-12)
+		near(t, "upper", hi, z, 1e-12)
+	}
+}
