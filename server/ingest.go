@@ -73,11 +73,7 @@ func (h *ingest) postReading(w http.ResponseWriter, r *http.Request, quantity st
 	}
 	body := appendResult(append(make([]byte, 0, 2048), `{"result":`...), 0, &result)
 	if belief != nil {
-		message, err := marshalJSON(beliefMessage(belief))
-		if err != nil {
-			return err
-		}
-		body = append(append(body, `,"belief":`...), message[:len(message)-1]...)
+		body = appendBelief(append(body, `,"belief":`...), beliefMessage(belief))
 	}
 	return answer(w, mediaJSON, append(body, "}\n"...))
 }
