@@ -47,7 +47,7 @@ func declareFlags(flags *flag.FlagSet, s *settings, env func(string) string) {
 	flags.IntVar(&s.duplicateWindow, "duplicate-window", 1_000_000,
 		"how many reading IDs of the last 24 h are recognised whatever their time")
 	flags.IntVar(&s.refusedLog, "refused-log", 100_000,
-		"how many refused readings of unknown quantities can be listed")
+		"how many refused readings, the latest of any reason, can be listed and put through")
 	flags.IntVar(&s.maxQuantities, "max-quantities", 10_000,
 		"how many quantities /metrics publishes, the first by ID")
 	flags.StringVar(&s.logFormat, "log-format", "text", "text or json, on standard error")
