@@ -5,6 +5,8 @@ import (
 	"time"
 
 	"google.golang.org/grpc"
+	"google.golang.org/grpc/encoding"
+	protocodec "google.golang.org/grpc/encoding/proto"
 	healthgrpc "google.golang.org/grpc/health/grpc_health_v1"
 	"google.golang.org/grpc/keepalive"
 	"google.golang.org/grpc/reflection"
@@ -34,6 +36,7 @@ func (s *Server) newGRPC(implementations *services) *grpc.Server {
 		stream = append([]grpc.StreamServerInterceptor{o.StreamInterceptor}, stream...)
 	}
 	g := grpc.NewServer(
+		grpc.ForceServerCodecV2(readingCodec{encoding.GetCodecV2(protocodec.Name)}),
 		grpc.ChainUnaryInterceptor(unary...),
 		grpc.ChainStreamInterceptor(stream...),
 		grpc.MaxRecvMsgSize(maxBodyBytes),

@@ -92,14 +92,15 @@ func (s *readingService) receive(ctx context.Context, stream readingsStream, wai
 		return err
 	}
 	for {
-		message, err := stream.Recv()
+		var message wireBatch
+		err := stream.RecvMsg(&message)
 		if errors.Is(err, io.EOF) {
 			return nil
 		}
 		if err != nil {
 			return err
 		}
-		batch, err := s.submit(message, id)
+		batch, err := s.submit(&message, id)
 		if err != nil {
 			return err
 		}
@@ -116,14 +117,13 @@ func (s *readingService) receive(ctx context.Context, stream readingsStream, wai
 	}
 }
 
-func (s *readingService) submit(message *leadlinev1.StreamReadingsRequest, requestID string) (*inflight, error) {
-	readings, err := readingsOf(message.GetReadings())
-	if err != nil {
-		return nil, err
+func (s *readingService) submit(message *wireBatch, requestID string) (*inflight, error) {
+	if message.err != nil {
+		return nil, message.err
 	}
-	batch := &inflight{sequence: message.GetSequence(), done: make(chan outcomeOfBatch, 1)}
+	batch := &inflight{sequence: message.sequence, done: make(chan outcomeOfBatch, 1)}
 	return batch, s.keeper.Submit(
-		engine.Batch{Readings: readings, Receive: engine.InstantOf(s.now()), RequestID: requestID},
+		engine.Batch{Readings: message.readings, Receive: engine.InstantOf(s.now()), RequestID: requestID},
 		func(results []engine.Result, err error) { batch.done <- outcomeOfBatch{results, err} },
 	)
 }
@@ -138,9 +138,5 @@ func acknowledge(ctx context.Context, stream readingsStream, batch *inflight) er
 	if outcome.err != nil {
 		return outcome.err
 	}
-	n := countResults(outcome.results)
-	return stream.Send(&leadlinev1.StreamReadingsResponse{
-		Sequence: batch.sequence, Results: resultMessages(outcome.results),
-		AppliedCount: n.applied, DuplicateCount: n.duplicate, RefusedCount: n.refused,
-	})
+	return stream.SendMsg(&wireAnswer{batch.sequence, outcome.results})
 }
