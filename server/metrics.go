@@ -77,15 +77,16 @@ type Metrics struct {
 	free   []*exposition // guarded by freeMu; the one used last is on top
 
 	rendering sync.Mutex
-	known     []known  // guarded by rendering; one for each track, in the same order
+	known     []known  // guarded by rendering; one for each track, in their order
 	chosen    []chosen // guarded by rendering; of the page being rendered
 }
 
-// known are the labels made for one revision of a quantity.
+// known is what the last page said of a quantity, and can be said again.
 type known struct {
 	track    *engine.Track
-	quantity *engine.Quantity
+	quantity *engine.Quantity // for which labels were made
 	labels   *quantityLabels
+	numbers  numberTexts
 }
 
 // chosen is a quantity that the page carries.
@@ -260,7 +261,8 @@ func (m *Metrics) quantity(p *part, c chosen, at engine.Instant) bool {
 	if k.quantity != v.Quantity {
 		k.quantity, k.labels = v.Quantity, labelsOf(v.Quantity)
 	}
-	p.quantity(k.labels, &f)
+	k.numbers.update(&f)
+	p.quantity(k.labels, &k.numbers)
 	return err == nil
 }
 

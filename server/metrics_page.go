@@ -3,7 +3,6 @@ package server
 import (
 	"compress/gzip"
 	"io"
-	"math"
 	"strconv"
 	"strings"
 
@@ -159,22 +158,23 @@ const (
 )
 
 // quantity writes the lines of a quantity; what doesn't exist has none.
-func (p *part) quantity(l *quantityLabels, f *engine.Figures) {
+func (p *part) quantity(l *quantityLabels, n *numberTexts) {
+	f := &n.figures
 	p.text(infoMetric, l.info, "")
 	if f.HasMean {
-		p.number(meanMetric, l.unit, endLabels, f.Mean)
+		p.number(meanMetric, l.unit, endLabels, n.text(meanNumber))
 	}
 	if f.HasStandardDeviation {
-		p.number(deviationMetric, l.unit, endLabels, f.StandardDeviation)
+		p.number(deviationMetric, l.unit, endLabels, n.text(deviationNumber))
 	}
 	if f.HasInterval {
-		p.number(lowerMetric, l.unit, coverageLabel, f.Lower)
-		p.number(upperMetric, l.unit, coverageLabel, f.Upper)
+		p.number(lowerMetric, l.unit, coverageLabel, n.text(lowerNumber))
+		p.number(upperMetric, l.unit, coverageLabel, n.text(upperNumber))
 	}
 	if f.HasBreach {
-		p.number(breachMetric, l.quantity, sideBelow, f.Breach.Below)
-		p.number(breachMetric, l.quantity, sideAbove, f.Breach.Above)
-		p.number(breachMetric, l.quantity, sideEither, f.Breach.Either)
+		p.number(breachMetric, l.quantity, sideBelow, n.text(belowNumber))
+		p.number(breachMetric, l.quantity, sideAbove, n.text(aboveNumber))
+		p.number(breachMetric, l.quantity, sideEither, n.text(eitherNumber))
 	}
 	for _, line := range l.limits {
 		p.text(limitMetric, line, "")
@@ -182,7 +182,8 @@ func (p *part) quantity(l *quantityLabels, f *engine.Figures) {
 	for _, end := range p.verdicts[f.Verdict] {
 		p.text(verdictMetric, l.quantity, end)
 	}
-	p.number(readingsMetric, l.quantity, endLabels, float64(f.ReadingCount))
+	p.text(readingsMetric, l.quantity, endLabels)
+	p.lines[readingsMetric] = append(strconv.AppendInt(p.lines[readingsMetric], int64(f.ReadingCount), 10), '\n')
 	if f.HasLast {
 		p.text(lastMetric, l.quantity, endLabels)
 		p.lines[lastMetric] = append(appendSeconds(p.lines[lastMetric], f.LastTime), '\n')
@@ -190,11 +191,12 @@ func (p *part) quantity(l *quantityLabels, f *engine.Figures) {
 }
 
 // number writes one series.
-func (p *part) number(m metric, labels, end string, v float64) {
+func (p *part) number(m metric, labels, end string, value []byte) {
 	b := append(p.lines[m], p.names[m]...)
 	b = append(b, labels...)
 	b = append(b, end...)
-	p.lines[m] = append(appendValue(b, v), '\n')
+	b = append(b, value...)
+	p.lines[m] = append(b, '\n')
 }
 
 // text writes a metric's name and what follows it.
@@ -253,32 +255,4 @@ func (x *exposition) sendZipped(out io.Writer) error {
 		return err
 	}
 	return x.zip.Close()
-}
-
-// appendValue writes v with as few digits as give it back, so that the page
-// carries the same float64 as the JSON answers.
-func appendValue(b []byte, v float64) []byte {
-	if v == math.Trunc(v) && math.Abs(v) < 1e15 && (v != 0 || !math.Signbit(v)) {
-		return strconv.AppendInt(b, int64(v), 10)
-	}
-	return strconv.AppendFloat(b, v, 'g', -1, 64)
-}
-
-// appendSeconds writes a moment in seconds with all its decimals: a division
-// would round twice.
-func appendSeconds(b []byte, at engine.Instant) []byte {
-	if at < 0 {
-		b, at = append(b, '-'), -at
-	}
-	b = strconv.AppendInt(b, int64(at/1e9), 10)
-	rest := at % 1e9
-	if rest == 0 {
-		return b
-	}
-	b = append(b, '.')
-	for digit := engine.Instant(1e8); rest > 0; digit /= 10 {
-		b = append(b, byte('0'+rest/digit))
-		rest %= digit
-	}
-	return b
 }

@@ -6,6 +6,7 @@ import (
 	"errors"
 	"io"
 	"math"
+	"strconv"
 	"strings"
 	"testing"
 
@@ -48,7 +49,9 @@ func quantityWith(id, unit, description string) published {
 func expose(quantities []published) *exposition {
 	x := newExposition(3)
 	for i := range quantities {
-		x.parts[i*3/len(quantities)].quantity(quantities[i].quantityLabels, &quantities[i].Figures)
+		var n numberTexts
+		n.update(&quantities[i].Figures)
+		x.parts[i*3/len(quantities)].quantity(quantities[i].quantityLabels, &n)
 	}
 	return x
 }
@@ -171,6 +174,23 @@ func TestPageKeepsEveryBitOfANumber(t *testing.T) {
 				t.Errorf("%v comes back as %v (%s)", tt.value, got, tt.why)
 			}
 		})
+	}
+}
+
+func TestNumbersFollowTheBelief(t *testing.T) {
+	first := quantityWith("q", "mm", "").Figures
+	greatest, least, above := first, first, first
+	greatest.Mean, greatest.StandardDeviation, greatest.Lower, greatest.Upper = -math.MaxFloat64, math.MaxFloat64, -1.2345678901234567e-300, math.SmallestNonzeroFloat64
+	least.Breach = engine.Breach{Below: 0.25, Either: 0.25, Above: 0}
+	above.Breach = engine.Breach{Below: 0, Either: 0.25, Above: 0.25}
+	var n numberTexts
+	for i, f := range []engine.Figures{first, first, greatest, least, above, first} {
+		n.update(&f)
+		for number, want := range [numberCount]float64{f.Mean, f.StandardDeviation, f.Lower, f.Upper, f.Breach.Below, f.Breach.Either, f.Breach.Above} {
+			if got, err := strconv.ParseFloat(string(n.text(number)), 64); err != nil || got != want {
+				t.Errorf("belief %d: number %d is written %q, want %v", i, number, n.text(number), want)
+			}
+		}
 	}
 }
 
