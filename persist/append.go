@@ -35,7 +35,7 @@ func (l *Ledger) Append(g *engine.Group) error {
 	if len(g.Records) > 0 {
 		h.hash = l.encoder.encode(g.Records, h.hash)
 	}
-	ledgerBytes, checkpointBytes, err := l.commit(g)
+	ledgerBytes, checkpointBytes, err := l.commit(g, h)
 	if err != nil {
 		return l.fail(err)
 	}
@@ -72,7 +72,7 @@ func (l *Ledger) stamp(g *engine.Group) (*head, error) {
 // commit writes the group, encoded before, in one transaction. A panic of
 // bbolt's, which only a damaged file or a failing disk brings about, leaves its
 // locks held.
-func (l *Ledger) commit(g *engine.Group) (ledgerBytes, checkpointBytes int, err error) {
+func (l *Ledger) commit(g *engine.Group, h *head) (ledgerBytes, checkpointBytes int, err error) {
 	var frozen *bolt.Tx
 	l.stuck = true
 	err = guarded(func() error {
@@ -81,7 +81,7 @@ func (l *Ledger) commit(g *engine.Group) (ledgerBytes, checkpointBytes int, err 
 			return err
 		}
 		frozen = l.guard(tx, g)
-		if ledgerBytes, checkpointBytes, err = l.put(tx, g); err != nil {
+		if ledgerBytes, checkpointBytes, err = l.put(tx, g, h); err != nil {
 			tx.Rollback()
 		} else {
 			err = tx.Commit()
@@ -127,7 +127,7 @@ func (l *Ledger) freeze(tx *bolt.Tx) {
 	l.frozen = tx
 }
 
-func (l *Ledger) put(tx *bolt.Tx, g *engine.Group) (ledgerBytes, checkpointBytes int, err error) {
+func (l *Ledger) put(tx *bolt.Tx, g *engine.Group, h *head) (ledgerBytes, checkpointBytes int, err error) {
 	if l.stale {
 		if err := dropStale(tx, l.acknowledged.Load()); err != nil {
 			return 0, 0, err
@@ -135,6 +135,9 @@ func (l *Ledger) put(tx *bolt.Tx, g *engine.Group) (ledgerBytes, checkpointBytes
 	}
 	if len(g.Records) > 0 {
 		if ledgerBytes, err = l.encoder.put(tx); err != nil {
+			return 0, 0, err
+		}
+		if err := tx.Bucket(headBucket).Put(headKey, h.append(nil)); err != nil {
 			return 0, 0, err
 		}
 	}

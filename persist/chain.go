@@ -4,6 +4,7 @@ import (
 	"bytes"
 	"crypto/sha256"
 	"encoding/binary"
+	"errors"
 	"fmt"
 	"hash"
 
@@ -184,35 +185,67 @@ func verifyTail(tx *bolt.Tx) (*head, error) {
 	if err != nil {
 		return nil, err
 	}
-	h := &head{swept: swept, segment: sweep.Segment, through: sweep.Through}
-	cursor := tx.Bucket(ledgerBucket).Cursor()
-	key, value := cursor.Last()
-	if key == nil {
-		if sweep.Through != 0 {
-			return nil, damaged(1, "the checkpoint includes position %d, but the ledger is empty", sweep.Through)
-		}
-		return h, nil
-	}
-	last, err := parseChunk(key, value)
-	if err != nil {
-		return nil, fmt.Errorf("%w: the last chunk: %w", ErrDamaged, err)
-	}
-	if sweep.Through >= last.end() {
-		return nil, damaged(last.end(), "the checkpoint includes position %d, but the ledger ends before", sweep.Through)
-	}
-	c, err := chainAt(cursor, min(sweep.Through+1, last.position))
+	h, err := readHead(tx)
 	if err != nil {
 		return nil, err
+	}
+	h.swept, h.segment, h.through = swept, sweep.Segment, sweep.Through
+	if h.through > h.position {
+		return nil, damaged(h.position, "the checkpoint includes position %d, but the ledger ends before", h.through)
+	}
+	cursor := tx.Bucket(ledgerBucket).Cursor()
+	c := newChain()
+	if h.position > 0 {
+		if c, err = chainAt(cursor, min(h.through+1, h.position)); err != nil {
+			return nil, err
+		}
 	}
 	for key, value := cursor.Seek(positionKey(c.next)); key != nil; key, value = cursor.Next() {
 		if err := c.add(key, value); err != nil {
 			return nil, err
 		}
 	}
+	return h, c.endAt(h)
+}
+
+// endAt checks that the chain has come to where the ledger ends.
+func (c *chain) endAt(h *head) error {
 	if err := c.end(); err != nil {
-		return nil, err
+		return err
 	}
-	h.position, h.commit, h.hash = c.next-1, c.commit, c.hash
+	if c.next != h.position+1 || c.hash != h.hash || h.position > 0 && c.commit != h.commit {
+		return damaged(c.next, "the ledger is to end with position %d and hash %x", h.position, h.hash)
+	}
+	return nil
+}
+
+// append encodes what readHead reads.
+func (h *head) append(b []byte) []byte {
+	b = binary.LittleEndian.AppendUint64(append(b, formatVersion), uint64(h.position))
+	b = binary.LittleEndian.AppendUint64(b, uint64(h.commit))
+	return seal(append(b, h.hash[:]...), headKey, 0)
+}
+
+// readHead reads where the ledger ends; without it a loss at the end would be
+// a shorter ledger that is sound. Its bucket is small enough to lie within the
+// root page, which every commit writes anyway.
+func readHead(tx *bolt.Tx) (*head, error) {
+	value := tx.Bucket(headBucket).Get(headKey)
+	if value == nil {
+		return &head{}, nil
+	}
+	body, err := unseal(headKey, value)
+	if err == nil && len(body) < 16+sha256.Size {
+		err = errors.New("it is too short")
+	}
+	if err != nil {
+		return nil, fmt.Errorf("%w: the head: %w", ErrDamaged, err)
+	}
+	h := &head{
+		position: engine.Position(binary.LittleEndian.Uint64(body)),
+		commit:   engine.Instant(binary.LittleEndian.Uint64(body[8:])),
+	}
+	copy(h.hash[:], body[16:])
 	return h, nil
 }
 

@@ -8,6 +8,7 @@ import (
 	"os"
 	"path/filepath"
 	"runtime/debug"
+	"syscall"
 	"time"
 
 	bolt "go.etcd.io/bbolt"
@@ -17,6 +18,7 @@ import (
 // Buckets of the file. doc.go draws their keys and values.
 var (
 	metaBucket       = []byte("meta")
+	headBucket       = []byte("head")
 	ledgerBucket     = []byte("ledger")
 	quantitiesBucket = []byte("quantities")
 	statesBucket     = []byte("states")
@@ -24,7 +26,12 @@ var (
 
 	formatKey = []byte("format")
 	sweepKey  = []byte("sweep")
+	headKey   = []byte("head")
 )
+
+func buckets() [][]byte {
+	return [][]byte{metaBucket, headBucket, ledgerBucket, quantitiesBucket, statesBucket, segmentsBucket}
+}
 
 // magic begins the value of formatKey; the version follows in four bytes.
 const magic = "leadline ledger\x00"
@@ -83,7 +90,7 @@ func format(path string) error {
 		return err
 	}
 	err = db.Update(func(tx *bolt.Tx) error {
-		for _, name := range [][]byte{metaBucket, ledgerBucket, quantitiesBucket, statesBucket, segmentsBucket} {
+		for _, name := range buckets() {
 			if _, err := tx.CreateBucket(name); err != nil {
 				return err
 			}
@@ -126,12 +133,21 @@ func openFile(path string, o bolt.Options) (db *bolt.DB, file *os.File, err erro
 		err = fmt.Errorf("%w: both meta pages fail their checksum", ErrDamaged)
 	}
 	if errors.Is(err, ErrDamaged) {
-		file.Close() // after a panic bbolt hasn't; the lock goes with it
+		abandon(file) // which bbolt hasn't after a panic
 	}
 	if err != nil {
 		return nil, nil, err
 	}
 	return db, file, nil
+}
+
+// abandon gives up a file that bbolt can't close any more. The mapping stays,
+// and would hold the lock.
+func abandon(file *os.File) error {
+	if file == nil {
+		return nil
+	}
+	return errors.Join(syscall.Flock(int(file.Fd()), syscall.LOCK_UN), file.Close())
 }
 
 // checkFormat tells whether the file is a ledger that this version reads.
@@ -146,7 +162,7 @@ func checkFormat(tx *bolt.Tx) error {
 	if version := binary.BigEndian.Uint32(v[len(magic):]); version > formatVersion {
 		return fmt.Errorf("%w: its format is %d, this program's %d", ErrNewer, version, formatVersion)
 	}
-	for _, name := range [][]byte{ledgerBucket, quantitiesBucket, statesBucket, segmentsBucket} {
+	for _, name := range buckets() {
 		if tx.Bucket(name) == nil {
 			return fmt.Errorf("%w: the bucket %s is missing", ErrDamaged, name)
 		}

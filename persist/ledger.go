@@ -209,8 +209,5 @@ func (l *Ledger) release() error {
 	if l.db != nil && !l.stuck {
 		return l.db.Close()
 	}
-	if l.file != nil {
-		return l.file.Close() // which frees the lock; the mapping stays
-	}
-	return nil
+	return abandon(l.file)
 }

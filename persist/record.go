@@ -165,13 +165,23 @@ func (c *before) decodeBody(body []byte, r *engine.Record) error {
 	}
 	r.Number, r.Revision = c.number, c.revision
 	r.ReceiveTime, r.Principal, r.RequestID = c.receive, c.principal, c.requestID
+	return c.finish(r)
+}
+
+// finish takes what the record leaves out from the one before, and drops what
+// its kind doesn't use.
+func (c *before) finish(r *engine.Record) error {
 	switch r.Kind {
 	case engine.KindReading, engine.KindRefusal:
 		r.Reading.Time, r.Reading.Instrument, r.Reading.Unit = c.time, c.instrument, c.unit
 		r.Reading.HasTime = !r.Reading.HasTime // held time_assigned so far
+		r.Quantity, r.Declaration = "", nil
 		return nil
-	case engine.KindDeclaration, engine.KindRetirement:
-		r.Reading = engine.Reading{}
+	case engine.KindRetirement:
+		r.Declaration = nil
+		fallthrough
+	case engine.KindDeclaration:
+		r.Reading, r.PutThrough, r.Reason, r.Detail = engine.Reading{}, 0, "", ""
 		return nil
 	}
 	return fmt.Errorf("%w: its kind %d is unknown to this version", errRecord, r.Kind)

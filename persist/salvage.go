@@ -104,10 +104,10 @@ func (l *Ledger) copyLedger(to *bolt.DB) error {
 			return err
 		}
 	}
-	if c.hash != end.hash {
-		return damaged(end.position, "the hash of the copy isn't that of the ledger")
+	if err := c.endAt(end); err != nil || end.position == 0 {
+		return err
 	}
-	return nil
+	return to.Update(func(tx *bolt.Tx) error { return tx.Bucket(headBucket).Put(headKey, end.append(nil)) })
 }
 
 // copyCheckpoint copies everything else.

@@ -95,11 +95,7 @@ func (v *verifier) run(tx *bolt.Tx) error {
 		})
 	})
 	v.part("sweep", func() error { return v.sweep(tx) })
-	if !v.broken {
-		for err := range tx.Check() {
-			v.report(fmt.Errorf("%w: page structure: %w", ErrDamaged, err))
-		}
-	}
+	v.part("pages", func() error { return v.pages(tx) })
 	if v.reported > maxReported {
 		fmt.Fprintf(v.w, "and %d more\n", v.reported-maxReported)
 	}
@@ -110,8 +106,6 @@ func (v *verifier) run(tx *bolt.Tx) error {
 }
 
 // part runs one part so that pages that can't be read don't hide the others.
-// After such pages bbolt's own check is left out: it reads them in a goroutine
-// of its own, where the fault would end the process.
 func (v *verifier) part(name string, fn func() error) {
 	finished := false
 	err := guarded(func() error {
@@ -146,7 +140,11 @@ func (v *verifier) ledger(tx *bolt.Tx) error {
 			lost = !v.add(key, value)
 		}
 	}
-	return v.chain.end()
+	h, err := readHead(tx)
+	if err != nil {
+		return err
+	}
+	return v.chain.endAt(h)
 }
 
 // add examines a chunk and tells whether the next one can be examined.
@@ -158,6 +156,32 @@ func (v *verifier) add(key, value []byte) bool {
 	v.damaged++
 	v.report(err)
 	return !v.chain.within && v.chain.next > positionOf(key) // only the hash is wrong
+}
+
+// pages has bbolt check how the pages hang together. It does so in a goroutine
+// of its own, where a fault would end the process, and believes the number of
+// overflow pages; so it is left out where these would do harm.
+func (v *verifier) pages(tx *bolt.Tx) error {
+	if v.reported > 0 {
+		return nil
+	}
+	for id := 2; ; id++ {
+		info, err := tx.Page(id)
+		if err != nil || info == nil {
+			break
+		}
+		if info.Type == "free" {
+			continue
+		}
+		if int64(id+info.OverflowCount) >= tx.Size()/int64(tx.DB().Info().PageSize) {
+			return fmt.Errorf("%w: page %d claims %d pages more than there are", ErrDamaged, id, info.OverflowCount)
+		}
+		id += info.OverflowCount
+	}
+	for err := range tx.Check() {
+		v.report(fmt.Errorf("%w: %w", ErrDamaged, err))
+	}
+	return nil
 }
 
 func positionOf(key []byte) engine.Position {
