@@ -1,6 +1,7 @@
 package engine
 
 import (
+	"cmp"
 	"errors"
 	"fmt"
 	"math"
@@ -109,7 +110,7 @@ func (a *rules) objectionToNumbers(r *Reading) (Reason, string) {
 func (k *Keeper) objectionToTime(a *rules, r *Reading, receive Instant) (Reason, string) {
 	switch {
 	case !r.Time.Valid():
-		return TimeOutOfRange, "time lies outside 1678 to 2262; check the clock of the sender"
+		return TimeOutOfRange, fmt.Sprintf("time %v lies outside 1678 to 2262; check the clock of the sender", cmp.Or(r.SentTime, r.Time.String()))
 	case r.Time.Sub(receive) > float64(k.options.MaxClockSkew):
 		return TimeInFuture, fmt.Sprintf("time %v is more than %v after the receipt at %v; check the clock of the sender", r.Time, k.options.MaxClockSkew, receive)
 	case r.Time < a.priorTime:

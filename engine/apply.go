@@ -40,7 +40,8 @@ func (k *Keeper) applyToTrack(r *Record) {
 		t.quantity = &q
 		k.rebase(t)
 	case KindReading:
-		e := entry{Row: rowOf(r), ID: r.Reading.ID}
+		// The ID may be a piece of a whole request, which it would keep alive.
+		e := entry{Row: rowOf(r), ID: ReadingID(strings.Clone(string(r.Reading.ID)))}
 		t.tally.add(&e.Row)
 		t.add(&e)
 	}

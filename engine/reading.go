@@ -6,6 +6,7 @@ type Reading struct {
 	Value                     float64 // in the quantity's unit
 	HasTime                   bool
 	Time                      Instant // if not HasTime, the receipt instant of its request
+	SentTime                  string  // as it was sent, where Time can't hold it; not recorded but in the detail of the refusal
 	Instrument                InstrumentID
 	HasUncertainty            bool
 	RandomStandardUncertainty float64

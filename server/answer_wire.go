@@ -57,7 +57,9 @@ func appendWireResult(b []byte, index int, r *engine.Result) []byte {
 	at := len(b) + 1
 	b = appendWireUint(append(b, 0), tagIndex, uint64(index))
 	b = appendWireText(b, tagResultID, string(r.ReadingID))
-	b = appendWireTime(append(b, tagResultTime), r.Time.Time())
+	if r.Time.Valid() {
+		b = appendWireTime(append(b, tagResultTime), r.Time.Time())
+	}
 	b = appendWireUint(b, tagStatus, uint64(statusMessage(r.Status)))
 	b = appendWireText(b, tagReason, string(r.Reason))
 	b = appendWireText(b, tagDetail, r.Detail)

@@ -173,7 +173,13 @@ func durationOf(field string, d *durationpb.Duration) (time.Duration, error) {
 	return d.AsDuration(), nil
 }
 
-func timestamp(i engine.Instant) *timestamppb.Timestamp { return timestamppb.New(i.Time()) }
+// timestamp is nil for an instant that stands for one it cannot hold.
+func timestamp(i engine.Instant) *timestamppb.Timestamp {
+	if !i.Valid() {
+		return nil
+	}
+	return timestamppb.New(i.Time())
+}
 
 // quantityMessage writes a quantity. Defaults are spelled out; what doesn't
 // exist is left out.

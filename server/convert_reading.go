@@ -3,6 +3,7 @@ package server
 import (
 	"fmt"
 	"strconv"
+	"time"
 
 	"leadline.example/engine"
 	leadlinev1 "leadline.example/proto/leadline/v1"
@@ -75,9 +76,17 @@ func readingOf(m *leadlinev1.Reading) (engine.Reading, *engine.Error) {
 		if !m.GetTime().IsValid() {
 			return r, refuse(engine.InvalidField, "time", "time is not a time of the years 1 to 9999; give one")
 		}
-		r.Time = engine.InstantOf(m.GetTime().AsTime())
+		setTime(&r, m.GetTime().AsTime())
 	}
 	return r, nil
+}
+
+// setTime sets the time of a reading; one that the engine can't hold is
+// refused there and named as it was sent.
+func setTime(r *engine.Reading, t time.Time) {
+	if r.HasTime, r.Time = true, engine.InstantOf(t); !r.Time.Valid() {
+		r.SentTime = t.UTC().Format(time.RFC3339Nano)
+	}
 }
 
 // overLimit names the first text of r that is too long to be kept, even as

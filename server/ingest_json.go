@@ -111,7 +111,7 @@ func (s *scanner) member(r *engine.Reading, name []byte) (bit int, ok bool) {
 		return sawQuantity, true
 	case "time":
 		t, ok := parseTime(text)
-		r.HasTime, r.Time = true, engine.InstantOf(t)
+		setTime(r, t)
 		return sawTime, ok
 	case "instrument":
 		r.Instrument = reuse(s.last.Instrument, text)
@@ -218,8 +218,10 @@ func appendResults(b []byte, results []engine.Result) []byte {
 func appendResult(b []byte, index int, r *engine.Result) []byte {
 	b = strconv.AppendInt(append(b, `{"index":`...), int64(index), 10)
 	b = appendText(append(b, `,"reading_id":`...), string(r.ReadingID))
-	b = appendTime(append(b, `,"time":"`...), r.Time.Time())
-	b = append(append(b, `","status":"`...), r.Status.String()...)
+	if r.Time.Valid() {
+		b = append(appendTime(append(b, `,"time":"`...), r.Time.Time()), '"')
+	}
+	b = append(append(b, `,"status":"`...), r.Status.String()...)
 	b = appendText(append(b, `","reason":`...), string(r.Reason))
 	return append(appendText(append(b, `,"detail":`...), r.Detail), '}')
 }

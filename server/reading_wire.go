@@ -158,7 +158,7 @@ func scanWireReading(b []byte, text string, r *engine.Reading) bool {
 		case tagValue:
 			r.Value = w.double()
 		case tagTime:
-			r.HasTime, r.Time = true, w.time()
+			setTime(r, w.time())
 		case tagInstrument:
 			r.Instrument = engine.InstrumentID(w.text())
 		case tagUncertainty:
@@ -237,7 +237,7 @@ func (w *wireScanner) double() float64 {
 }
 
 // time reads a Timestamp that is valid.
-func (w *wireScanner) time() engine.Instant {
+func (w *wireScanner) time() time.Time {
 	m := wireScanner{rest: w.bytes()}
 	var seconds, nanoseconds int64
 	for last := byte(0); len(m.rest) > 0 && !m.bad; {
@@ -254,7 +254,7 @@ func (w *wireScanner) time() engine.Instant {
 	}
 	if m.bad || seconds < minSeconds || seconds > maxSeconds || nanoseconds < 0 || nanoseconds > maxNanoseconds {
 		w.bad = true
-		return 0
+		return time.Time{}
 	}
-	return engine.InstantOf(time.Unix(seconds, nanoseconds))
+	return time.Unix(seconds, nanoseconds)
 }

@@ -191,7 +191,8 @@ type ReadingResult struct {
 	Index uint32 `protobuf:"varint,1,opt,name=index,proto3" json:"index,omitempty"`
 	// ID of the reading, as it was sent.
 	ReadingId string `protobuf:"bytes,2,opt,name=reading_id,json=readingId,proto3" json:"reading_id,omitempty"`
-	// Time of the reading: as it was sent, or the one it was given.
+	// Time of the reading: as it was sent, or the one it was given. Absent if it
+	// was refused as TIME_OUT_OF_RANGE; detail then names it.
 	Time *timestamppb.Timestamp `protobuf:"bytes,3,opt,name=time,proto3" json:"time,omitempty"`
 	// What became of it.
 	Status Reading_Status `protobuf:"varint,4,opt,name=status,proto3,enum=leadline.v1.Reading_Status" json:"status,omitempty"`
@@ -285,7 +286,8 @@ type RecordedReading struct {
 	Quantity string `protobuf:"bytes,1,opt,name=quantity,proto3" json:"quantity,omitempty"`
 	// The indication, in the quantity's unit.
 	Value float64 `protobuf:"fixed64,2,opt,name=value,proto3" json:"value,omitempty"`
-	// Time of the reading: as it was sent, or the one it was given.
+	// Time of the reading: as it was sent, or the one it was given. Absent if it
+	// was refused as TIME_OUT_OF_RANGE; detail then names it.
 	Time *timestamppb.Timestamp `protobuf:"bytes,3,opt,name=time,proto3" json:"time,omitempty"`
 	// ID of the instrument, if one was sent.
 	Instrument string `protobuf:"bytes,4,opt,name=instrument,proto3" json:"instrument,omitempty"`
