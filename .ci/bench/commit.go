@@ -22,7 +22,7 @@ func (b *bench) commit() error {
 		if b.quick && n > quantities {
 			continue
 		}
-		if err := b.commitOf(n); err != nil {
+		if err := b.profiled(fmt.Sprint("commit-", n), func() error { return b.commitOf(n) }); err != nil {
 			return err
 		}
 	}
@@ -114,6 +114,7 @@ func postInProcess(ctx context.Context, k *engine.Keeper, feeds []*feed, size in
 	until := time.Now().Add(d)
 	group, ctx := errgroup.WithContext(ctx)
 	for _, f := range feeds {
+		f.catchUp()
 		group.Go(func() error {
 			for time.Now().Before(until) {
 				b := engine.Batch{Receive: engine.InstantOf(time.Now()), Readings: make([]engine.Reading, size)}

@@ -13,7 +13,9 @@ import (
 	"fmt"
 	"os"
 	"os/signal"
+	"path/filepath"
 	"regexp"
+	"runtime/pprof"
 	"syscall"
 	"time"
 )
@@ -121,4 +123,21 @@ func measure(ctx context.Context, s settings) (err error) {
 	b.printTargets()
 	fmt.Printf("\ntook %v\n", time.Since(began).Round(time.Second))
 	return ctx.Err()
+}
+
+// profiled runs fn and, if asked to, writes its CPU profile.
+func (b *bench) profiled(name string, fn func() error) error {
+	if b.profile == "" {
+		return fn()
+	}
+	file, err := os.Create(filepath.Join(b.profile, name+".cpu"))
+	if err != nil {
+		return err
+	}
+	defer file.Close()
+	if err := pprof.StartCPUProfile(file); err != nil {
+		return err
+	}
+	defer pprof.StopCPUProfile()
+	return fn()
 }

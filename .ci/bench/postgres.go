@@ -213,6 +213,7 @@ func (l *databaseLoad) run(d time.Duration) (int, error) {
 	counts, took := make([]int, len(l.conns)), make([][]time.Duration, len(l.conns))
 	group, ctx := errgroup.WithContext(context.Background())
 	for i, c := range l.conns {
+		l.feeds[i].catchUp()
 		group.Go(func() error {
 			for before := time.Now(); before.Before(until); before = time.Now() {
 				n, err := l.step(ctx, c, l.feeds[i])

@@ -147,6 +147,7 @@ func (l *restLoad) run(d time.Duration) (int, error) {
 	took := make([][]time.Duration, len(l.connections))
 	var group errgroup.Group
 	for i, c := range l.connections {
+		l.feeds[i].catchUp()
 		group.Go(func() error {
 			for {
 				before := time.Now()

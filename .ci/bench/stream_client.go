@@ -60,6 +60,7 @@ func (l *streamLoad) runWhile(more func(sent int) bool) (int, error) {
 	counts := make([]int, streams)
 	group, ctx := errgroup.WithContext(context.Background())
 	for i := range streams {
+		l.feeds[i].catchUp()
 		group.Go(func() (err error) {
 			counts[i], err = streamFeed(ctx, l.conns[i], l.feeds[i], more)
 			return err
