@@ -8,30 +8,6 @@ import (
 	"time"
 )
 
-// resolved is what a caller's goroutine finds out of a reading before the
-// keeper decides on it: most of the time that takes is spent waiting for memory.
-type resolved struct {
-	track *Track // nil: not known then
-	hash  idHash // of the ID, if there is a track and an ID
-}
-
-// resolve looks the readings' quantities up and hashes their IDs.
-func (k *Keeper) resolve(readings []Reading) []resolved {
-	all := make([]resolved, len(readings))
-	for i := range readings {
-		all[i] = k.resolveOne(&readings[i])
-	}
-	return all
-}
-
-func (k *Keeper) resolveOne(r *Reading) resolved {
-	t := k.lookup(r.Quantity)
-	if t == nil || r.ID == "" {
-		return resolved{track: t}
-	}
-	return resolved{t, k.seeds.hash(t.number, r.ID)}
-}
-
 // admit decides on one reading: it returns the result and whether a record is
 // to be written. r.Time is set.
 func (k *Keeper) admit(r *Reading, at resolved, receive Instant) (res Result, write bool) {

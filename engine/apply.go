@@ -40,8 +40,7 @@ func (k *Keeper) applyToTrack(r *Record) {
 		t.quantity = &q
 		k.rebase(t)
 	case KindReading:
-		// The ID may be a piece of a whole request, which it would keep alive.
-		e := entry{Row: rowOf(r), ID: ReadingID(strings.Clone(string(r.Reading.ID)))}
+		e := entry{Row: rowOf(r), ID: r.Reading.ID}
 		t.tally.add(&e.Row)
 		t.add(&e)
 	}
@@ -97,7 +96,7 @@ func (k *Keeper) trackOf(n QuantityNumber, id QuantityID) *Track {
 	if int(n) > len(k.byNumber) {
 		t := &Track{id: id, number: n}
 		k.byNumber = append(k.byNumber, t)
-		k.byID.Load().Store(id, t)
+		k.directory.Load().add(t)
 	}
 	return k.byNumber[n-1]
 }

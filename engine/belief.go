@@ -196,18 +196,9 @@ func (k *Keeper) Tracks() []*Track {
 	return nil
 }
 
-// lookup returns the track of a quantity whose declaration may not be durable
-// yet, nil if there is none.
-func (k *Keeper) lookup(id QuantityID) *Track {
-	if t, ok := k.byID.Load().Load(id); ok {
-		return t.(*Track)
-	}
-	return nil
-}
-
 // find returns the track of a quantity whose declaration is durable.
 func (k *Keeper) find(id QuantityID) (*Track, bool) {
-	t := k.lookup(id)
+	t := k.directory.Load().find(id)
 	return t, t != nil && t.View() != nil
 }
 

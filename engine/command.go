@@ -2,7 +2,6 @@ package engine
 
 import (
 	"context"
-	"sync"
 )
 
 // command is one request on its way through the keeper: a batch of readings,
@@ -11,8 +10,8 @@ type command struct {
 	batch   Batch
 	origins []Record // the refusals that the batch puts through, one for each reading
 	found   []resolved
-	within  *sync.Map // where the readings were resolved
-	next    int       // the first reading not decided on
+	within  *directory // where the readings were resolved
+	next    int        // the first reading not decided on
 	results []Result
 	resume  bool
 	action  func(*work) error // runs in the keeper's goroutine, adds what is to be recorded
@@ -39,8 +38,8 @@ func (k *Keeper) submit(c *command) error {
 		k.queued.Add(-n)
 		return errOverloaded
 	}
-	c.within, c.results = k.byID.Load(), make([]Result, 0, len(c.batch.Readings))
-	c.found = k.resolve(c.batch.Readings)
+	c.within, c.results = k.directory.Load(), make([]Result, 0, len(c.batch.Readings))
+	c.found = c.within.resolve(c.batch.Readings, &k.seeds)
 	select {
 	case k.commands <- c:
 		return nil
@@ -132,8 +131,9 @@ func (k *Keeper) decideBatch(w *work, c *command) {
 			continue
 		}
 		at := c.found[c.next]
-		if at.track == nil || c.within != k.byID.Load() {
-			at = k.resolveOne(r) // declared since, or the ledger was opened anew
+		if now := k.directory.Load(); at.track == nil || c.within != now {
+			at.track = now.find(r.Quantity) // declared since, or the ledger was opened anew
+			at.hashID(r, &k.seeds)
 		}
 		res, write := k.admit(r, at, b.Receive)
 		if write {

@@ -36,7 +36,7 @@ func (k *Keeper) Declare(ctx context.Context, id QuantityID, d Declaration, c Co
 		return Quantity{}, false, err
 	}
 	err = k.wait(ctx, &command{action: func(w *work) error {
-		t := k.lookup(id)
+		t := k.directory.Load().find(id)
 		if err := c.check(t); err != nil {
 			return err
 		}
@@ -96,7 +96,7 @@ func (t *Track) checkRedeclaration(d *Declaration) error {
 // readings; it stays readable. Retiring it again changes nothing.
 func (k *Keeper) Retire(ctx context.Context, id QuantityID, c Condition, receive Instant) (q Quantity, err error) {
 	err = k.wait(ctx, &command{action: func(w *work) error {
-		t := k.lookup(id)
+		t := k.directory.Load().find(id)
 		if t == nil {
 			return notDeclared(id)
 		}

@@ -92,7 +92,7 @@ type Keeper struct {
 	failed    error
 
 	// Written by the keeper's goroutine, read by all.
-	byID      atomic.Pointer[sync.Map] // QuantityID to *Track, also of declarations not yet durable
+	directory atomic.Pointer[directory]
 	tracks    atomic.Pointer[[]*Track] // sorted by ID
 	refusals  refusals
 	published atomic.Uint64 // newest change

@@ -3,7 +3,6 @@ package engine
 import (
 	"errors"
 	"fmt"
-	"sync"
 )
 
 // load opens the ledger and brings the state up to its end: from the last
@@ -23,7 +22,7 @@ func (k *Keeper) load() error {
 func (k *Keeper) loadFrom(l Ledger) error {
 	k.ledger = l
 	k.current.Store(&l)
-	k.byID.Store(new(sync.Map))
+	k.directory.Store(&directory{byID: map[QuantityID]*Track{}})
 	k.byNumber = nil
 	k.window = newWindow(k.options.DuplicateWindow)
 	k.refusals.init(k.options.RefusedLog)

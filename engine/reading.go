@@ -10,8 +10,8 @@ type Reading struct {
 	Instrument                InstrumentID
 	HasUncertainty            bool
 	RandomStandardUncertainty float64
-	Unit                      string // empty: the quantity's
-	ID                        ReadingID
+	Unit                      string    // empty: the quantity's
+	ID                        ReadingID // kept for long, so not a piece of a larger text
 }
 
 // Status is what became of a reading.

@@ -3,6 +3,7 @@ package engine
 import (
 	"slices"
 	"sort"
+	"strings"
 	"sync/atomic"
 )
 
@@ -79,7 +80,7 @@ func (f *refusals) publish() {
 
 // refusalOf makes the log entry of a record.
 func (k *Keeper) refusalOf(r *Record) refusal {
-	id := r.Reading.Quantity
+	id := QuantityID(strings.Clone(string(r.Reading.Quantity))) // which may be a piece of a whole request
 	if r.Number != 0 {
 		id = k.byNumber[r.Number-1].id
 	}

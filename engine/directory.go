@@ -1,0 +1,51 @@
+package engine
+
+import "sync"
+
+// directory finds a track by its quantity's ID, also that of a declaration
+// which isn't durable yet. The keeper's goroutine waits for readers only to
+// add a quantity that is new.
+type directory struct {
+	mu   sync.RWMutex // guards byID
+	byID map[QuantityID]*Track
+}
+
+func (d *directory) find(id QuantityID) *Track {
+	d.mu.RLock()
+	defer d.mu.RUnlock()
+	return d.byID[id]
+}
+
+func (d *directory) add(t *Track) {
+	d.mu.Lock()
+	defer d.mu.Unlock()
+	d.byID[t.id] = t
+}
+
+// resolved is what a caller's goroutine finds out of a reading before the
+// keeper decides on it: most of the time that takes is spent waiting for memory.
+type resolved struct {
+	track *Track // nil: not known then
+	hash  idHash // of the ID, if there is a track and an ID
+}
+
+// resolve looks the readings' quantities up and hashes their IDs.
+func (d *directory) resolve(readings []Reading, seeds *idSeeds) []resolved {
+	all := make([]resolved, len(readings))
+	d.mu.RLock()
+	for i := range readings {
+		all[i].track = d.byID[readings[i].Quantity]
+	}
+	d.mu.RUnlock()
+	for i := range readings {
+		all[i].hashID(&readings[i], seeds)
+	}
+	return all
+}
+
+// hashID fills in the hash.
+func (f *resolved) hashID(r *Reading, seeds *idSeeds) {
+	if f.track != nil && r.ID != "" {
+		f.hash = seeds.hash(f.track.number, r.ID)
+	}
+}
