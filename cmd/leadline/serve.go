@@ -11,6 +11,7 @@ import (
 	"net"
 	"os"
 	"path/filepath"
+	"sync"
 	"time"
 
 	"leadline.example/engine"
@@ -171,11 +172,40 @@ func (svc *service) announce(w io.Writer) error {
 // finish.
 func (svc *service) serve(ctx context.Context) error {
 	svc.logger.Info("serving", "http", svc.http.Addr().String(), "grpc", svc.grpc.Addr().String())
+	ctx, stop := context.WithCancel(ctx)
+	var resuming sync.WaitGroup
+	resuming.Go(func() { svc.resume(ctx) })
+	defer resuming.Wait()
+	defer stop()
 	if err := svc.server.Serve(ctx, svc.http, svc.grpc); err != nil {
 		return fmt.Errorf("serve: %w", err)
 	}
 	svc.logger.Info("stopped taking requests")
 	return nil
+}
+
+// resumeInterval is how often a service on a full disk tries to write again.
+const resumeInterval = 5 * time.Second
+
+// resume takes up writing when a full disk has room again, until ctx ends.
+func (svc *service) resume(ctx context.Context) {
+	ticker := time.NewTicker(resumeInterval)
+	defer ticker.Stop()
+	for {
+		select {
+		case <-ctx.Done():
+			return
+		case <-ticker.C:
+		}
+		if !errors.Is(svc.keeper.Health(), engine.ErrDiskFull) {
+			continue
+		}
+		if err := svc.keeper.Resume(); err != nil {
+			svc.logger.Warn("the disk is still full", "error", err)
+			continue
+		}
+		svc.logger.Info("the disk has room again: resumed writing")
+	}
 }
 
 // close commits what was taken and closes the ledger. Sockets that serve has
