@@ -121,12 +121,12 @@ func (k *Keeper) belief(v *View, q *BeliefQuery) (Belief, error) {
 		return Belief{}, err
 	}
 	b := Belief{
-		Quantity: *v.Quantity, Time: at, Coverage: q.Coverage,
+		Quantity: *v.Declared(), Time: at, Coverage: q.Coverage,
 		ReadingCount: m.count, HasLast: m.count > 0, LastTime: m.lastTime,
 		Position: v.Position, Rebuilding: v.Rebuilding,
 	}
 	if v.Rebuilding {
-		b.Quantity, b.Position = *v.basis, v.foldedTo
+		b.Position = v.foldedTo
 	}
 	if b.Coverage == 0 {
 		b.Coverage = DefaultCoverage

@@ -31,7 +31,7 @@ func (k *Keeper) Figures(v *View, at Instant) (Figures, error) {
 	if err != nil {
 		return Figures{}, err
 	}
-	f := figuresOf(m.level(&v.basis.Declaration, at), &v.Quantity.Declaration)
+	f := figuresOf(m.level(&v.basis.Declaration, at), &v.Declared().Declaration)
 	f.ReadingCount, f.HasLast, f.LastTime = m.count, m.count > 0, m.lastTime
 	if !v.basis.Declaration.ordered() && m.count == v.ReadingCount {
 		still := f

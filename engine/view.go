@@ -27,6 +27,15 @@ type View struct {
 	still     atomic.Pointer[Figures] // of a belief that time doesn't move, once asked for
 }
 
+// Declared returns the quantity with the declaration that the belief rests on:
+// while it is rebuilt, the one before.
+func (v *View) Declared() *Quantity {
+	if v.Rebuilding {
+		return v.basis
+	}
+	return v.Quantity
+}
+
 // Breach is the probability that the true value lies outside the tolerance.
 type Breach struct {
 	Below, Above, Either float64

@@ -258,8 +258,8 @@ func (m *Metrics) quantity(p *part, c chosen, at engine.Instant) bool {
 	if err != nil {
 		f = engine.Figures{ReadingCount: v.ReadingCount, HasLast: v.HasLast, LastTime: v.LastTime}
 	}
-	if k.quantity != v.Quantity {
-		k.quantity, k.labels = v.Quantity, labelsOf(v.Quantity)
+	if k.quantity != v.Declared() {
+		k.quantity, k.labels = v.Declared(), labelsOf(v.Declared())
 	}
 	k.numbers.update(&f)
 	p.quantity(k.labels, &k.numbers)
