@@ -19,7 +19,7 @@ func (k *Keeper) count(r *Record) {
 	k.refusals.remove(r.PutThrough)
 	switch r.Kind {
 	case KindReading:
-		k.applied.Add(1)
+		k.fresh++
 	case KindRefusal:
 		k.countRefused(r.Reason)
 		k.refusals.add(k.refusalOf(r))
@@ -140,6 +140,8 @@ func (k *Keeper) publish(through Position) {
 	}
 	clear(k.touched)
 	k.touched = k.touched[:0]
+	k.applied.Add(k.fresh)
+	k.fresh = 0
 	k.refusals.publish()
 	k.position.Store(uint64(through))
 	k.published.Store(k.change)

@@ -83,6 +83,7 @@ type Keeper struct {
 	change    uint64   // of the group being folded
 	budget    int      // steps left for its late readings
 	touched   []*Track // by the group being folded
+	fresh     uint64   // readings applied by it
 	arrived   []*Track // declared for the first time by it
 	partial   *command // a batch that goes on in the next group
 	resuming  *command // waits for the group on its way

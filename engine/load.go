@@ -26,7 +26,7 @@ func (k *Keeper) loadFrom(l Ledger) error {
 	k.byNumber = nil
 	k.window = newWindow(k.options.DuplicateWindow)
 	k.refusals.init(k.options.RefusedLog)
-	k.touched, k.arrived, k.jobs, k.partial = nil, nil, nil, nil
+	k.touched, k.arrived, k.jobs, k.partial, k.fresh = nil, nil, nil, nil, 0
 	k.change++
 	k.working = true // no job is dispatched while loading
 
