@@ -1,6 +1,7 @@
 package published_test
 
 import (
+	"context"
 	"encoding/json"
 	"fmt"
 	"io"
@@ -26,6 +27,11 @@ type answer struct {
 	body   string
 }
 
+// patience is how long any answer may take: far more than it does on a busy
+// machine, and less than any time after which the service cuts clients that
+// stall, so that waiting for one of those is seen.
+const patience = 15 * time.Second
+
 // call sends a request; header lists names and values in turn.
 func (s *service) call(method, path, body string, header ...string) answer {
 	s.t.Helper()
@@ -36,7 +42,7 @@ func (s *service) call(method, path, body string, header ...string) answer {
 	for i := 0; i < len(header); i += 2 {
 		request.Header.Add(header[i], header[i+1])
 	}
-	response, err := (&http.Client{Transport: s.transport}).Do(request)
+	response, err := (&http.Client{Transport: s.transport, Timeout: patience}).Do(request)
 	if err != nil {
 		s.t.Fatalf("%s %s: %v", method, path, err)
 	}
@@ -159,6 +165,18 @@ func (s *service) postHTTP(readings []posted) *leadlinev1.PostReadingsResponse {
 	return response
 }
 
+// postGRPC does the same over gRPC.
+func (s *service) postGRPC(readings []posted) *leadlinev1.PostReadingsResponse {
+	s.t.Helper()
+	ctx, cancel := context.WithTimeout(s.t.Context(), patience)
+	defer cancel()
+	response, err := s.readings.PostReadings(ctx, &leadlinev1.PostReadingsRequest{Readings: messages(readings)})
+	if err != nil {
+		s.t.Fatal(err)
+	}
+	return response
+}
+
 // postAll posts in batches, in turn over HTTP and gRPC, and insists that every
 // reading is applied.
 func (s *service) postAll(readings []posted) {
@@ -170,10 +188,7 @@ func (s *service) postAll(readings []posted) {
 		if i%2 == 0 {
 			response = s.postHTTP(batch)
 		} else {
-			var err error
-			if response, err = s.readings.PostReadings(s.t.Context(), &leadlinev1.PostReadingsRequest{Readings: messages(batch)}); err != nil {
-				s.t.Fatal(err)
-			}
+			response = s.postGRPC(batch)
 		}
 		if int(response.GetAppliedCount()) != len(batch) {
 			s.t.Fatalf("%d of %d readings applied: %v", response.GetAppliedCount(), len(batch), response.GetResults())

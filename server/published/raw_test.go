@@ -33,6 +33,9 @@ func (s *service) dial() *raw {
 		s.t.Fatal(err)
 	}
 	s.t.Cleanup(func() { _ = c.Close() }) // most are closed by then
+	if err := c.SetReadDeadline(time.Now().Add(patience)); err != nil {
+		s.t.Fatal(err)
+	}
 	return &raw{t: s.t, Conn: c, reader: bufio.NewReader(c)}
 }
 

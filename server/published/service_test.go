@@ -87,7 +87,10 @@ func startWith(t testing.TB, file string, c *clock, bodyTime time.Duration) *ser
 		t.Fatal(err)
 	}
 	logger := slog.New(slog.NewTextHandler(t.Output(), &slog.HandlerOptions{Level: slog.LevelWarn}))
-	metrics, err := server.NewMetrics(server.MetricsOptions{Keeper: keeper, Observations: observations, Now: c.Now, Logger: logger})
+	metrics, err := server.NewMetrics(server.MetricsOptions{
+		Keeper: keeper, Observations: observations, Now: c.Now, Logger: logger,
+		WriteTimeout: time.Minute, // longer than patience, so that waiting for a stalled scrape is seen
+	})
 	if err != nil {
 		t.Fatal(err)
 	}

@@ -11,15 +11,16 @@ import (
 	leadlinev1 "leadline.example/proto/leadline/v1"
 )
 
-// stall opens a connection with a small buffer, asks for a path, reads the head
-// of the answer, and nothing after that.
+// stall opens a connection with a small buffer, asks for a path again and again,
+// reads the first line of the first answer, and nothing after that. The answers
+// together are more than the buffers of both ends hold.
 func (s *service) stall(path string) *raw {
 	s.t.Helper()
 	r := s.dial()
 	if err := r.Conn.(*net.TCPConn).SetReadBuffer(4096); err != nil {
 		s.t.Fatal(err)
 	}
-	r.say("GET " + path + " HTTP/1.1\r\nHost: plant\r\n\r\n")
+	r.say(strings.Repeat("GET "+path+" HTTP/1.1\r\nHost: plant\r\n\r\n", 20))
 	line, err := r.reader.ReadString('\n')
 	if err != nil || !strings.Contains(line, "200") {
 		s.t.Fatalf("%s: %q, %v", path, line, err)
