@@ -267,8 +267,7 @@ func (j *journey) reading() posted {
 	return r
 }
 
-// decide says what becomes of a reading; a duplicate is answered with the time
-// of the first.
+// decide says what becomes of a reading.
 func (j *journey) decide(p posted) (leadlinev1.Reading_Status, string) {
 	const refused = leadlinev1.Reading_REFUSED
 	now := j.clock.Now()

@@ -3,6 +3,7 @@ package published_test
 import (
 	"context"
 	"flag"
+	"io"
 	"log/slog"
 	"math/rand/v2"
 	"net"
@@ -64,7 +65,7 @@ type service struct {
 	quantities leadlinev1.QuantityServiceClient
 	readings   leadlinev1.ReadingServiceClient
 	beliefs    leadlinev1.BeliefServiceClient
-	stop       func() // ends it as a signal would, once
+	stop       func() // ends it as a signal would, once, and verifies its ledger
 }
 
 func start(t testing.TB) *service {
@@ -135,6 +136,9 @@ func (s *service) serve(srv *server.Server, keeper *engine.Keeper) {
 		}
 		if err := keeper.Close(); err != nil {
 			s.t.Errorf("close the keeper: %v", err)
+		}
+		if err := persist.Verify(s.file, io.Discard); err != nil {
+			s.t.Errorf("the ledger left behind: %v", err)
 		}
 	}
 	s.t.Cleanup(s.stop)

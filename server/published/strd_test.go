@@ -21,7 +21,7 @@ func digits(got, want float64) float64 {
 	return min(15, -math.Log10(math.Abs(got-want)/math.Abs(want)))
 }
 
-// exactMoments are mean and sample standard deviation of binary values, the
+// exactMoments are mean and standard deviation (by n - 1) of binary values, the
 // sums without rounding.
 func exactMoments(values []float64) (mean, deviation float64) {
 	n := new(big.Rat).SetInt64(int64(len(values)))
