@@ -50,6 +50,8 @@ func (k *Keeper) admit(r *Reading, at resolved, receive Instant) (res Result, wr
 // objection returns why a reading can't be applied, or "".
 func (k *Keeper) objection(t *Track, r *Reading, receive Instant) (Reason, string) {
 	switch {
+	case t == nil && !wellFormedID(string(r.Quantity)):
+		return UnknownQuantity, fmt.Sprintf("quantity %.80q is not an ID; give that of a declared quantity", r.Quantity)
 	case t == nil:
 		return UnknownQuantity, fmt.Sprintf("quantity %q is not declared; declare it with PUT /v1/quantities/{id}, then put the reading through with :apply_refused or send it again", r.Quantity)
 	case t.rules.retired:

@@ -74,7 +74,7 @@ func (k *Keeper) Belief(_ context.Context, id QuantityID, q BeliefQuery) (Belief
 	}
 	t, ok := k.find(id)
 	if !ok {
-		return Belief{}, notDeclared(id)
+		return Belief{}, notDeclared("quantity", id)
 	}
 	return k.belief(t.View(), &q)
 }
@@ -220,7 +220,7 @@ func (k *Keeper) from(prefix string, after QuantityID) []*Track {
 func (k *Keeper) Quantity(id QuantityID) (Quantity, error) {
 	t, ok := k.find(id)
 	if !ok {
-		return Quantity{}, notDeclared(id)
+		return Quantity{}, notDeclared("id", id)
 	}
 	return *t.View().Quantity, nil
 }

@@ -98,7 +98,7 @@ func (k *Keeper) Retire(ctx context.Context, id QuantityID, c Condition, receive
 	err = k.wait(ctx, &command{action: func(w *work) error {
 		t := k.directory.Load().find(id)
 		if t == nil {
-			return notDeclared(id)
+			return notDeclared("id", id)
 		}
 		if err := c.check(t); err != nil {
 			return err
@@ -116,6 +116,6 @@ func (k *Keeper) Retire(ctx context.Context, id QuantityID, c Condition, receive
 	return q, err
 }
 
-func notDeclared(id QuantityID) error {
-	return refuse(NotFound, "id", "quantity %q is not declared; declare it with PUT /v1/quantities/{id}", id)
+func notDeclared(field string, id QuantityID) error {
+	return refuse(NotFound, field, "quantity %q is not declared; declare it with PUT /v1/quantities/{id}", id)
 }

@@ -53,7 +53,7 @@ func (k *Keeper) Readings(ctx context.Context, q ReadingsQuery) (page []StoredRe
 	if q.Quantity != "" {
 		t, ok := k.find(q.Quantity)
 		if !ok && q.Status != Refused {
-			return nil, false, notDeclared(q.Quantity)
+			return nil, false, notDeclared("quantity", q.Quantity)
 		}
 		if ok && q.Status != Refused {
 			if found, err = k.appliedReadings(t.View(), &q); err != nil {
@@ -158,7 +158,7 @@ type PutThrough struct {
 func (k *Keeper) ApplyRefused(ctx context.Context, id QuantityID, receive Instant) (PutThrough, error) {
 	var sum PutThrough
 	if _, ok := k.find(id); !ok {
-		return sum, notDeclared(id)
+		return sum, notDeclared("quantity", id)
 	}
 	var at []Position
 	for _, r := range *k.refusals.shown.Load() {

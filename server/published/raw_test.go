@@ -222,7 +222,7 @@ func TestRefusedCallsChangeNothing(t *testing.T) {
 			err: second(s.beliefs.GetBelief(ctx, &leadlinev1.GetBeliefRequest{Quantity: "pump-3/gap", CoverageProbability: &nan})),
 		},
 		{
-			name: "belief of nobody", code: codes.NotFound, reason: engine.NotFound, field: "id",
+			name: "belief of nobody", code: codes.NotFound, reason: engine.NotFound, field: "quantity",
 			err: second(s.beliefs.GetBelief(ctx, &leadlinev1.GetBeliefRequest{Quantity: "nobody"})),
 		},
 		{
