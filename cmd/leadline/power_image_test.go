@@ -10,6 +10,7 @@ import (
 	"maps"
 	"math/rand/v2"
 	"os"
+	"os/exec"
 	"path/filepath"
 	"slices"
 	"testing"
@@ -25,9 +26,19 @@ type step struct {
 	run  func()
 }
 
-// cutPower tries one image for each of the chosen moments, and returns what
-// went wrong and how many there were.
-func (r *recording) cutPower(t *testing.T, random *rand.Rand, cuts int) (losses []error, tried int) {
+// cutting says how the images of a recording are tried.
+type cutting struct {
+	cuts    int    // moments, besides those before the first answer
+	birth   bool   // try every moment before the first answer too
+	enough  int    // losses after which no more images are tried
+	verify  int    // every how many images the command verify looks at one, before it is opened
+	believe int    // every how many images a keeper starts on one
+	binary  string // that verifies
+}
+
+// cutPower makes one image for each of the chosen moments and returns what is
+// wrong with them and how many there were.
+func (r *recording) cutPower(t *testing.T, random *rand.Rand, c cutting) (losses []error, tried int) {
 	t.Helper()
 	d := newDisk(r.root)
 	promised := map[identity]bool{}
@@ -43,37 +54,46 @@ func (r *recording) cutPower(t *testing.T, random *rand.Rand, cuts int) (losses 
 		}})
 	}
 	slices.SortStableFunc(steps, func(a, b step) int { return a.line - b.line })
-	at := r.chooseCuts(random, steps, cuts)
+	at := r.chooseCuts(random, steps, c)
 	done := 0
 	for i, cut := range at {
 		for ; done < cut; done++ {
 			steps[done].run()
 		}
-		if err := r.tryImage(t, d, random, promised, i%10 == 0); err != nil {
+		tried++
+		if err := r.tryImage(t, d, random, promised, c, i); err != nil {
 			losses = append(losses, fmt.Errorf("cut %d, before step %d of %d: %w", i+1, cut+1, len(steps), err))
 		}
+		if len(losses) >= c.enough {
+			break
+		}
 	}
-	return losses, len(at)
+	return losses, tried
 }
 
-// chooseCuts returns in order, as numbers of steps, every moment until the
-// first answer, so that the making of the ledger is covered, and cuts others.
-func (r *recording) chooseCuts(random *rand.Rand, steps []step, cuts int) []int {
+// chooseCuts returns moments in order, as numbers of steps.
+func (r *recording) chooseCuts(random *rand.Rand, steps []step, c cutting) []int {
 	first := slices.Min(slices.Collect(maps.Keys(r.answered)))
 	var at []int
+	answered := 0
 	for i, s := range steps {
-		if s.line <= first {
+		if s.line > first {
+			answered = i
+			break
+		}
+		if c.birth {
 			at = append(at, i)
 		}
 	}
-	for range cuts {
-		at = append(at, random.IntN(len(steps)+1))
+	for range c.cuts {
+		at = append(at, answered+random.IntN(len(steps)+1-answered))
 	}
 	slices.Sort(at)
 	return at
 }
 
-func (r *recording) tryImage(t *testing.T, d *disk, random *rand.Rand, promised map[identity]bool, believe bool) error {
+func (r *recording) tryImage(t *testing.T, d *disk, random *rand.Rand, promised map[identity]bool, c cutting, i int) error {
+	t.Helper()
 	dir, err := os.MkdirTemp(t.TempDir(), "image")
 	if err != nil {
 		t.Fatal(err)
@@ -86,10 +106,45 @@ func (r *recording) tryImage(t *testing.T, d *disk, random *rand.Rand, promised 
 	if _, err := os.Stat(path); errors.Is(err, fs.ErrNotExist) && len(promised) == 0 {
 		return nil // cut before there was a ledger
 	}
+	if i%c.verify == 0 {
+		if err := verifyImage(t, c.binary, path); err != nil {
+			return err
+		}
+	}
 	found, err := readImage(path)
 	if err != nil {
 		return err
 	}
+	if err := r.compare(promised, found); err != nil {
+		return err
+	}
+	if i%c.believe == 0 {
+		return checkImageBeliefs(t.Context(), path, found)
+	}
+	return nil
+}
+
+// verifyImage lets the command look at an image, in a process of its own. A
+// file that was never synced may hold anything, and the command must come to
+// a verdict on that too.
+func verifyImage(t *testing.T, binary, path string) error {
+	t.Helper()
+	ctx, cancel := context.WithTimeout(t.Context(), time.Minute)
+	defer cancel()
+	cmd := exec.CommandContext(ctx, binary, "verify", path)
+	out, err := cmd.CombinedOutput()
+	if err == nil {
+		return nil
+	}
+	if code := cmd.ProcessState.ExitCode(); code != exitLedger {
+		t.Errorf("verify ends with %d on a damaged image, want %d: %.2000s", code, exitLedger, out)
+	}
+	return fmt.Errorf("verify the image: %w: %.200s", err, out)
+}
+
+// compare tells whether an image holds what was promised and nothing that was
+// never sent.
+func (r *recording) compare(promised map[identity]bool, found map[identity]entry) error {
 	for _, e := range found {
 		key := identity{e.quantity, e.id}
 		if r.sent[key] != sentAs(e) {
@@ -100,9 +155,6 @@ func (r *recording) tryImage(t *testing.T, d *disk, random *rand.Rand, promised 
 		if _, ok := found[key]; !ok {
 			return fmt.Errorf("reading %s was acknowledged and is lost (%d of %d are there)", key.id, len(found), len(promised))
 		}
-	}
-	if believe {
-		return checkImageBeliefs(t.Context(), path, found)
 	}
 	return nil
 }

@@ -30,13 +30,11 @@ var cutCount = flag.Int("cuts", 500, "how many power losses TestPowerLoss tries"
 // answer had begun to leave, and nothing that was never sent.
 func TestPowerLossLosesNothing(t *testing.T) {
 	random := newRandom(t)
-	r := recordRun(t, random, buildCommand(t))
-	losses, tried := r.cutPower(t, random, *cutCount)
-	for _, err := range losses[:min(5, len(losses))] {
+	binary := buildCommand(t)
+	r := recordRun(t, random, binary)
+	losses, tried := r.cutPower(t, random, cutting{cuts: *cutCount, birth: true, enough: 5, verify: 5, believe: 10, binary: binary})
+	for _, err := range losses {
 		t.Error(err)
-	}
-	if len(losses) > 0 {
-		t.Errorf("%d of %d cuts lost something", len(losses), tried)
 	}
 	t.Logf("%d cuts in a history of %d calls with answers to %d readings", tried, len(r.events), len(r.sent))
 }
@@ -45,12 +43,13 @@ func TestPowerLossLosesNothing(t *testing.T) {
 // build that doesn't sync must lose something.
 func TestPowerLossIsNoticedWithoutSync(t *testing.T) {
 	random := newRandom(t)
-	r := recordRun(t, random, buildCommand(t, "-tags", "nosync"))
-	losses, tried := r.cutPower(t, random, 100)
+	binary := buildCommand(t, "-tags", "nosync")
+	r := recordRun(t, random, binary)
+	losses, tried := r.cutPower(t, random, cutting{cuts: 100, enough: 100, verify: 1, believe: 1, binary: binary})
 	if len(losses) == 0 {
 		t.Errorf("a build without sync passes %d cuts; the power loss test proves nothing", tried)
 	}
-	t.Logf("%d of %d cuts lost something, as they must", len(losses), tried)
+	t.Logf("%d of %d cuts lost something, as they must, the first: %v", len(losses), tried, errors.Join(losses[:min(3, len(losses))]...))
 }
 
 // recording is the history of a data directory and what its clients sent.
