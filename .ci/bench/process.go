@@ -95,6 +95,15 @@ func (s *process) cpu() time.Duration {
 	return time.Duration(ticks) * 10 * time.Millisecond // USER_HZ is 100
 }
 
+// ownCPU returns the CPU time that this process has used.
+func ownCPU() time.Duration {
+	var u syscall.Rusage
+	if err := syscall.Getrusage(syscall.RUSAGE_SELF, &u); err != nil {
+		return 0
+	}
+	return time.Duration(u.Utime.Nano() + u.Stime.Nano())
+}
+
 // memory returns the resident bytes of a process, now and at most.
 func (s *process) memory() (now, most int64) {
 	read := func(key string) int64 {

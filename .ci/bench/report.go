@@ -40,6 +40,7 @@ func (s series) over(t series) series {
 func (b *bench) alternate(contenders ...contender) ([]series, error) {
 	all := make([]series, len(contenders))
 	costs := make([]series, len(contenders)) // CPU time of the server a reading
+	own := make([]series, len(contenders))   // likewise of this process
 	for round := -1; round < b.rounds; round++ {
 		for i, c := range contenders {
 			if err := b.ctx.Err(); err != nil {
@@ -50,7 +51,7 @@ func (b *bench) alternate(contenders ...contender) ([]series, error) {
 				window /= 4 // to warm up, not counted
 			}
 			runtime.GC()
-			cpu := c.at.cpu()
+			cpu, ours := c.at.cpu(), ownCPU()
 			began := time.Now()
 			n, err := c.run(window)
 			if err != nil {
@@ -59,6 +60,7 @@ func (b *bench) alternate(contenders ...contender) ([]series, error) {
 			if round >= 0 {
 				all[i] = append(all[i], float64(n)/time.Since(began).Seconds())
 				costs[i] = append(costs[i], float64((c.at.cpu()-cpu).Nanoseconds())/1e3/float64(max(n, 1)))
+				own[i] = append(own[i], float64((ownCPU()-ours).Nanoseconds())/1e3/float64(max(n, 1)))
 			}
 		}
 	}
@@ -66,7 +68,7 @@ func (b *bench) alternate(contenders ...contender) ([]series, error) {
 		low, high := all[i].spread()
 		cost := ""
 		if c.at != nil {
-			cost = fmt.Sprintf("  server's CPU %.2f us each", costs[i].median())
+			cost = fmt.Sprintf("  CPU a reading: server %.2f us, client %.2f us", costs[i].median(), own[i].median())
 		}
 		fmt.Printf("%-58s %9.0f readings/s  (%.0f to %.0f)%s\n", c.name, all[i].median(), low, high, cost)
 	}
