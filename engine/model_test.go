@@ -37,10 +37,9 @@ type model struct {
 }
 
 type modelQuantity struct {
-	d        engine.Declaration
-	retired  bool
-	applied  []engine.Reading
-	revision uint32
+	d       engine.Declaration
+	retired bool
+	applied []engine.Reading
 }
 
 // decide says what becomes of a reading, by the rules of the interface.

@@ -129,7 +129,8 @@ func (c *crashRun) run(ctx context.Context, kills int) error {
 }
 
 func (c *crashRun) command() *exec.Cmd {
-	return exec.Command(c.binary, "serve", "--data-dir", c.dir, "--http", "127.0.0.1:0", "--grpc", "127.0.0.1:0")
+	return exec.Command(c.binary, "serve", "--data-dir", c.dir, "--http", "127.0.0.1:0", "--grpc", "127.0.0.1:0",
+		"--checkpoint-records", "2000") // so that kills fall into checkpoints too
 }
 
 // killAtStart kills a process that may be creating, opening or replaying the

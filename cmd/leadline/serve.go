@@ -78,10 +78,11 @@ func (svc *service) openKeeper(s *settings) error {
 	}
 	path := filepath.Join(s.dataDir, persist.FileName)
 	keeper, err := engine.New(engine.Options{
-		Open:            func() (engine.Ledger, error) { return svc.openLedger(path) },
-		MaxClockSkew:    s.maxClockSkew,
-		DuplicateWindow: s.duplicateWindow,
-		RefusedLog:      s.refusedLog,
+		Open:              func() (engine.Ledger, error) { return svc.openLedger(path) },
+		MaxClockSkew:      s.maxClockSkew,
+		DuplicateWindow:   s.duplicateWindow,
+		RefusedLog:        s.refusedLog,
+		CheckpointRecords: s.checkpointEvery,
 		OnFault: func(err error) {
 			svc.observations.Fault(err)
 			svc.logger.Error("storage fault: nothing is acknowledged until it is mended", "error", err)

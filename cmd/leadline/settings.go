@@ -20,6 +20,7 @@ type settings struct {
 	maxClockSkew    time.Duration
 	duplicateWindow int
 	refusedLog      int
+	checkpointEvery int
 	maxQuantities   int
 	logFormat       string
 	logLevel        slog.Level
@@ -48,6 +49,8 @@ func declareFlags(flags *flag.FlagSet, s *settings, env func(string) string) {
 		"how many reading IDs of the last 24 h are recognised whatever their time")
 	flags.IntVar(&s.refusedLog, "refused-log", 100_000,
 		"how many refused readings, the latest of any reason, can be listed and put through")
+	flags.IntVar(&s.checkpointEvery, "checkpoint-records", 0,
+		"how many records lie between checkpoints; 0 takes 65,536, or eight for every quantity if that is more")
 	flags.IntVar(&s.maxQuantities, "max-quantities", 10_000,
 		"how many quantities /metrics publishes, the first by ID")
 	flags.StringVar(&s.logFormat, "log-format", "text", "text or json, on standard error")
@@ -98,6 +101,9 @@ func (s *settings) validate() error {
 		if count.value < 1 {
 			return usagef("%s is %d; give 1 or more", count.flag, count.value)
 		}
+	}
+	if s.checkpointEvery < 0 {
+		return usagef("--checkpoint-records is %d; give 0 or more", s.checkpointEvery)
 	}
 	if s.logFormat != "text" && s.logFormat != "json" {
 		return usagef("--log-format is %q; give text or json", s.logFormat)

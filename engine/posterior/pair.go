@@ -67,8 +67,3 @@ func (p pair) ratio(q pair) pair {
 
 // value rounds to a plain number.
 func (p pair) value() float64 { return p.hi + p.lo }
-
-// finite tells whether both parts are.
-func (p pair) finite() bool {
-	return !math.IsInf(p.hi, 0) && !math.IsNaN(p.hi) && !math.IsInf(p.lo, 0) && !math.IsNaN(p.lo)
-}
