@@ -33,19 +33,27 @@ func (c *Constant) Repeatability(p Prior, n Noise, coverage float64) Repeatabili
 	if !ok {
 		return out
 	}
-	level := c.informed(p, n)
-	if level.flat {
-		// The level's own degree of freedom is taken out in s already; what is
-		// left is scaled inverse chi-squared (Gelman et al. 2013, 3.2).
-		s.n = 0
-		level.sd = 1
-	}
-	m := newMixture(level, s, false).mixture
 	tail := (1 - coverage) / 2
-	q := m.spreadQuantiles([3]float64{tail, 0.5, 1 - tail})
+	at := [3]float64{tail, 0.5, 1 - tail}
+	var q [3]float64
+	if level := c.informed(p, n); level.flat {
+		q = s.quantiles(at)
+	} else {
+		q = newMixture(level, s, false).mixture.spreadQuantiles(at)
+	}
 	out.HasMedian = true
 	out.Lower, out.Median, out.Upper = q[0], q[1], q[2]
 	return out
+}
+
+// quantiles returns those of r under a flat level, whose own degree of freedom
+// is taken out in s already: sum / r^2 ~ chi-squared with worth degrees of
+// freedom (Gelman et al. 2013, 3.2), so P(r <= x) = P(chi^2 >= sum / x^2).
+func (s *spread) quantiles(p [3]float64) (q [3]float64) {
+	for i := range p {
+		q[i] = math.Sqrt(s.sum / chiSquaredUpper(p[i], s.worth))
+	}
+	return q
 }
 
 // spreadQuantiles returns the quantiles of r for ascending probabilities. The
