@@ -137,9 +137,9 @@ func (l *Ledger) put(tx *bolt.Tx, g *engine.Group, h *head) (ledgerBytes, checkp
 		if ledgerBytes, err = l.encoder.put(tx); err != nil {
 			return 0, 0, err
 		}
-		if err := tx.Bucket(headBucket).Put(headKey, h.append(nil)); err != nil {
-			return 0, 0, err
-		}
+	}
+	if err := tx.Bucket(headBucket).Put(headKey, h.append(nil)); err != nil {
+		return 0, 0, err
 	}
 	checkpointBytes, err = l.putCheckpoint(tx, g)
 	return ledgerBytes, checkpointBytes, err

@@ -189,9 +189,8 @@ func verifyTail(tx *bolt.Tx) (*head, error) {
 	if err != nil {
 		return nil, err
 	}
-	h.swept, h.segment, h.through = swept, sweep.Segment, sweep.Through
-	if h.through > h.position {
-		return nil, damaged(h.position, "the checkpoint includes position %d, but the ledger ends before", h.through)
+	if err := h.agrees(sweep, swept); err != nil {
+		return nil, err
 	}
 	cursor := tx.Bucket(ledgerBucket).Cursor()
 	c := newChain()
@@ -219,11 +218,18 @@ func (c *chain) endAt(h *head) error {
 	return nil
 }
 
-// append encodes what readHead reads.
+// append encodes what parseHead reads.
 func (h *head) append(b []byte) []byte {
 	b = binary.LittleEndian.AppendUint64(append(b, formatVersion), uint64(h.position))
 	b = binary.LittleEndian.AppendUint64(b, uint64(h.commit))
-	return seal(append(b, h.hash[:]...), headKey, 0)
+	b = append(b, h.hash[:]...)
+	swept := byte(0)
+	if h.swept {
+		swept = 1
+	}
+	b = binary.LittleEndian.AppendUint32(append(b, swept), h.segment)
+	b = binary.LittleEndian.AppendUint64(b, uint64(h.through))
+	return seal(b, headKey, 0)
 }
 
 // readHead reads where the ledger ends; without it a loss at the end would be
@@ -234,19 +240,38 @@ func readHead(tx *bolt.Tx) (*head, error) {
 	if value == nil {
 		return &head{}, nil
 	}
-	body, err := unseal(headKey, value)
-	if err == nil && len(body) < 16+sha256.Size {
-		err = errors.New("it is too short")
-	}
+	h, err := parseHead(value)
 	if err != nil {
 		return nil, fmt.Errorf("%w: the head: %w", ErrDamaged, err)
 	}
-	h := &head{
+	return h, nil
+}
+
+func parseHead(value []byte) (*head, error) {
+	const hash, sweep = 16, 16 + sha256.Size
+	body, err := unseal(headKey, value)
+	if err == nil && len(body) < sweep+1+4+8 {
+		err = errors.New("it is too short")
+	}
+	if err != nil {
+		return &head{}, err
+	}
+	return &head{
 		position: engine.Position(binary.LittleEndian.Uint64(body)),
 		commit:   engine.Instant(binary.LittleEndian.Uint64(body[8:])),
+		hash:     [sha256.Size]byte(body[hash:sweep]),
+		swept:    body[sweep] != 0,
+		segment:  binary.LittleEndian.Uint32(body[sweep+1:]),
+		through:  engine.Position(binary.LittleEndian.Uint64(body[sweep+5:])),
+	}, nil
+}
+
+// agrees checks that the sweep stored is the one that the head names.
+func (h *head) agrees(s engine.Sweep, swept bool) error {
+	if swept != h.swept || s.Segment != h.segment || s.Through != h.through || h.through > h.position {
+		return fmt.Errorf("%w: the sweep to position %d, of segment %d, isn't the last one of this ledger", ErrDamaged, s.Through, s.Segment)
 	}
-	copy(h.hash[:], body[16:])
-	return h, nil
+	return nil
 }
 
 // chainAt returns a chain that is to go on with the group of a position.

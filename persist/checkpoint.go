@@ -99,17 +99,24 @@ func readSweep(tx *bolt.Tx) (s engine.Sweep, found bool, err error) {
 	if value == nil {
 		return s, false, nil
 	}
-	body, err := unseal(sweepKey, value)
-	if err == nil && len(body) < 12 {
-		err = errors.New("it is too short")
-	}
-	if err != nil {
+	if s, err = parseSweep(value); err != nil {
 		return s, false, fmt.Errorf("%w: the sweep: %w", ErrDamaged, err)
+	}
+	return s, true, nil
+}
+
+func parseSweep(value []byte) (s engine.Sweep, err error) {
+	body, err := unseal(sweepKey, value)
+	if err != nil {
+		return s, err
+	}
+	if len(body) < 12 {
+		return s, errors.New("it is too short")
 	}
 	s.Segment = binary.LittleEndian.Uint32(body)
 	s.Through = engine.Position(binary.LittleEndian.Uint64(body[4:]))
 	s.Summary = bytes.Clone(body[12:])
-	return s, true, nil
+	return s, nil
 }
 
 // hasStale tells whether rows of an incomplete sweep are stored.

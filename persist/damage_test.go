@@ -84,7 +84,10 @@ func live(t *testing.T, path string) (pages []int, size int) {
 			if err != nil || info == nil {
 				return err
 			}
-			if info.Type == "leaf" || info.Type == "branch" {
+			if id == 2 {
+				pages = append(pages, 0, 1)
+			}
+			if info.Type == "freelist" || info.Type == "leaf" || info.Type == "branch" {
 				pages = append(pages, id)
 				for range info.OverflowCount {
 					id++

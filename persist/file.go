@@ -155,17 +155,23 @@ func checkFormat(tx *bolt.Tx) error {
 	if info := tx.Bucket(metaBucket); info == nil {
 		return ErrForeign
 	}
-	v := tx.Bucket(metaBucket).Get(formatKey)
-	if len(v) != len(magic)+4 || string(v[:len(magic)]) != magic {
-		return ErrForeign
-	}
-	if version := binary.BigEndian.Uint32(v[len(magic):]); version > formatVersion {
-		return fmt.Errorf("%w: its format is %d, this program's %d", ErrNewer, version, formatVersion)
+	if err := checkFormatValue(tx.Bucket(metaBucket).Get(formatKey)); err != nil {
+		return err
 	}
 	for _, name := range buckets() {
 		if tx.Bucket(name) == nil {
 			return fmt.Errorf("%w: the bucket %s is missing", ErrDamaged, name)
 		}
+	}
+	return nil
+}
+
+func checkFormatValue(v []byte) error {
+	if len(v) != len(magic)+4 || string(v[:len(magic)]) != magic {
+		return ErrForeign
+	}
+	if version := binary.BigEndian.Uint32(v[len(magic):]); version > formatVersion {
+		return fmt.Errorf("%w: its format is %d, this program's %d", ErrNewer, version, formatVersion)
 	}
 	return nil
 }

@@ -147,6 +147,13 @@ func (l *Ledger) open() error {
 	}); err != nil {
 		return err
 	}
+	m, err := readMetas(l.file, l.db.Info().PageSize)
+	if err != nil {
+		return err
+	}
+	if err := checkBranches(l.file, m); err != nil {
+		return err
+	}
 	return l.view(func(tx *bolt.Tx) error {
 		if err := checkFormat(tx); err != nil {
 			return err

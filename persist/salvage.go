@@ -104,10 +104,11 @@ func (l *Ledger) copyLedger(to *bolt.DB) error {
 			return err
 		}
 	}
-	if err := c.endAt(end); err != nil || end.position == 0 {
+	if err := c.endAt(end); err != nil {
 		return err
 	}
-	return to.Update(func(tx *bolt.Tx) error { return tx.Bucket(headBucket).Put(headKey, end.append(nil)) })
+	unswept := head{position: end.position, commit: end.commit, hash: end.hash}
+	return to.Update(func(tx *bolt.Tx) error { return tx.Bucket(headBucket).Put(headKey, unswept.append(nil)) })
 }
 
 // copyCheckpoint copies everything else.
@@ -117,18 +118,24 @@ func (l *Ledger) copyCheckpoint(to *bolt.DB) error {
 			return err
 		}
 	}
+	end := l.acknowledged.Load()
+	if !end.swept {
+		return nil
+	}
 	var value []byte
 	if err := l.view(func(tx *bolt.Tx) error {
 		value = append(value, tx.Bucket(metaBucket).Get(sweepKey)...)
-		sweep, _, err := readSweep(tx)
-		if err == nil && sweep.Through > l.acknowledged.Load().position {
-			err = errors.New("the sweep isn't of this ledger")
+		sweep, swept, err := readSweep(tx)
+		if err != nil {
+			return err
 		}
-		return err
-	}); err != nil || value == nil {
+		return end.agrees(sweep, swept)
+	}); err != nil {
 		return err
 	}
-	return to.Update(func(tx *bolt.Tx) error { return tx.Bucket(metaBucket).Put(sweepKey, value) })
+	return to.Update(func(tx *bolt.Tx) error {
+		return errors.Join(tx.Bucket(metaBucket).Put(sweepKey, value), tx.Bucket(headBucket).Put(headKey, end.append(nil)))
+	})
 }
 
 func (l *Ledger) copyBucket(to *bolt.DB, name []byte) error {

@@ -5,6 +5,7 @@ import (
 	"errors"
 	"fmt"
 	"io"
+	"os"
 
 	bolt "go.etcd.io/bbolt"
 
@@ -14,27 +15,19 @@ import (
 // maxReported bounds the lines of Verify about one kind of damage.
 const maxReported = 1_000
 
-// Verify examines a whole ledger that nobody has open for writing: the checksum
-// of every record, positions, commit times, the hash of every group, the
-// checkpoint and the structure of pages. It writes a line for each damage it
-// finds and a summary to w; its error is the first damage, or why the file
-// can't be examined.
+// Verify examines a whole ledger that nobody has open for writing: the structure
+// of pages, the checksum of every record, positions, commit times, the hash of
+// every group, and the checkpoint. It writes a line for each damage it finds
+// and a summary to w; its error is the first damage, or why the file can't be
+// examined.
 func Verify(path string, w io.Writer) error {
-	db, _, err := openFile(path, bolt.Options{ReadOnly: true, PreLoadFreelist: true})
+	db, file, err := openFile(path, bolt.Options{ReadOnly: true}) // for its lock
 	if err != nil {
 		return fmt.Errorf("verify %s: %w", path, err)
 	}
 	defer db.Close()
-	v := verifier{w: w, chain: newChain()}
-	err = guarded(func() error {
-		tx, err := db.Begin(false)
-		if err != nil {
-			return err
-		}
-		defer tx.Rollback()
-		return v.run(tx)
-	})
-	if err != nil {
+	v := verifier{w: w, buckets: map[string]bool{}, chain: newChain(), head: &head{}}
+	if err := v.run(file, db.Info().PageSize); err != nil {
 		v.report(err)
 	}
 	if v.first != nil {
@@ -45,11 +38,18 @@ func Verify(path string, w io.Writer) error {
 
 type verifier struct {
 	w        io.Writer
-	chain    *chain
 	first    error
 	reported int
-	damaged  int // groups
-	broken   bool
+
+	buckets map[string]bool
+	format  bool // its key was there
+	swept   bool // likewise
+	head    *head
+	chain   *chain
+	lost    bool // until the next group begins
+	damaged int  // groups
+
+	quantities, states, rows int
 }
 
 // report writes a damage and keeps the first.
@@ -68,83 +68,82 @@ func (v *verifier) report(err error) {
 	fmt.Fprintf(v.w, "damage: %v\n", err)
 }
 
-func (v *verifier) run(tx *bolt.Tx) error {
-	if err := checkFormat(tx); err != nil {
+func (v *verifier) run(file *os.File, pageSize int) error {
+	m, err := readMetas(file, pageSize)
+	if err != nil {
 		return err
 	}
-	v.part("ledger", func() error { return v.ledger(tx) })
-	entries, states := 0, 0
-	v.part("quantities", func() error {
-		return v.bucket(tx, quantitiesBucket, func(key, value []byte) error {
-			entries++
-			return readQuantity(key, value, new(engine.CheckpointEntry))
-		})
-	})
-	v.part("states", func() error {
-		return v.bucket(tx, statesBucket, func(key, value []byte) error {
-			states++
-			return v.state(key, value)
-		})
-	})
-	rows := 0
-	v.part("segments", func() error {
-		return v.bucket(tx, segmentsBucket, func(key, value []byte) error {
-			n, err := checkRows(key, value)
-			rows += n
-			return err
-		})
-	})
-	v.part("sweep", func() error { return v.sweep(tx) })
-	v.part("pages", func() error { return v.pages(tx) })
+	checkPages(file, m, v.report, v.element)
+	if !v.format {
+		return ErrForeign
+	}
+	for _, name := range buckets() {
+		if !v.buckets[string(name)] {
+			v.report(fmt.Errorf("%w: the bucket %s is missing", ErrDamaged, name))
+		}
+	}
+	if err := v.chain.endAt(v.head); err != nil {
+		v.report(err)
+	}
+	if !v.swept && v.head.swept {
+		v.report(fmt.Errorf("%w: the sweep is missing", ErrDamaged))
+	}
 	if v.reported > maxReported {
 		fmt.Fprintf(v.w, "and %d more\n", v.reported-maxReported)
 	}
-	fmt.Fprintf(v.w, "records %d, groups %d, damaged groups %d, quantities %d, states %d, rows %d\n",
-		v.chain.next-1, v.chain.groups, v.damaged, entries, states, rows)
-	fmt.Fprintf(v.w, "hash %x\n", v.chain.hash)
-	return nil
+	_, err = fmt.Fprintf(v.w, "records %d, groups %d, damaged groups %d, quantities %d, states %d, rows %d\nhash %x\n",
+		v.chain.next-1, v.chain.groups, v.damaged, v.quantities, v.states, v.rows, v.chain.hash)
+	return err
 }
 
-// part runs one part so that pages that can't be read don't hide the others.
-func (v *verifier) part(name string, fn func() error) {
-	finished := false
-	err := guarded(func() error {
-		err := fn()
-		finished = true
-		return err
-	})
-	v.broken = v.broken || !finished
+// element examines one key, or the name of a bucket. Buckets come in the order of their names, so what
+// refers to the ledger comes after it, except for the head.
+func (v *verifier) element(bucket string, key, value []byte) {
+	if key == nil {
+		v.buckets[bucket] = true
+		return
+	}
+	var err error
+	switch bucket {
+	case string(headBucket):
+		if v.head, err = parseHead(value); string(key) != string(headKey) {
+			v.head, err = &head{}, errors.New("it is no key of this version")
+		}
+	case string(ledgerBucket):
+		v.ledger(key, value)
+	case string(metaBucket):
+		err = v.metaKey(key, value)
+	case string(quantitiesBucket):
+		v.quantities++
+		err = readQuantity(key, value, new(engine.CheckpointEntry))
+	case string(segmentsBucket):
+		err = v.segment(key, value)
+	case string(statesBucket):
+		v.states++
+		err = v.state(key, value)
+	}
 	if err != nil {
-		v.report(fmt.Errorf("%s: %w", name, err))
+		v.report(fmt.Errorf("%w: %s, key %x: %w", ErrDamaged, bucket, key, err))
 	}
 }
 
-// ledger examines the groups. After damage it goes on with the next group,
-// whose hash it can verify if the damaged one's is known.
-func (v *verifier) ledger(tx *bolt.Tx) error {
-	lost := false
-	c := tx.Bucket(ledgerBucket).Cursor()
-	for key, value := c.First(); key != nil; key, value = c.Next() {
-		chunk, err := parseChunk(key, value)
-		begins := err == nil && chunk.first
-		if lost && !begins {
-			continue
-		}
-		if lost {
-			v.chain.resume(&chunk)
-		}
-		lost = !v.add(key, value)
-		if lost && begins && !(v.chain.within && v.chain.first == chunk.position) {
-			// The damage is before this group.
-			v.chain.resume(&chunk)
-			lost = !v.add(key, value)
-		}
+// ledger examines a chunk. After damage it goes on with the next group, whose
+// hash it can verify if the damaged one's is known.
+func (v *verifier) ledger(key, value []byte) {
+	chunk, err := parseChunk(key, value)
+	begins := err == nil && chunk.first
+	if v.lost && !begins {
+		return
 	}
-	h, err := readHead(tx)
-	if err != nil {
-		return err
+	if v.lost {
+		v.chain.resume(&chunk)
 	}
-	return v.chain.endAt(h)
+	v.lost = !v.add(key, value)
+	if v.lost && begins && !(v.chain.within && v.chain.first == chunk.position) {
+		// The damage is before this group.
+		v.chain.resume(&chunk)
+		v.lost = !v.add(key, value)
+	}
 }
 
 // add examines a chunk and tells whether the next one can be examined.
@@ -158,32 +157,6 @@ func (v *verifier) add(key, value []byte) bool {
 	return !v.chain.within && v.chain.next > positionOf(key) // only the hash is wrong
 }
 
-// pages has bbolt check how the pages hang together. It does so in a goroutine
-// of its own, where a fault would end the process, and believes the number of
-// overflow pages; so it is left out where these would do harm.
-func (v *verifier) pages(tx *bolt.Tx) error {
-	if v.reported > 0 {
-		return nil
-	}
-	for id := 2; ; id++ {
-		info, err := tx.Page(id)
-		if err != nil || info == nil {
-			break
-		}
-		if info.Type == "free" {
-			continue
-		}
-		if int64(id+info.OverflowCount) >= tx.Size()/int64(tx.DB().Info().PageSize) {
-			return fmt.Errorf("%w: page %d claims %d pages more than there are", ErrDamaged, id, info.OverflowCount)
-		}
-		id += info.OverflowCount
-	}
-	for err := range tx.Check() {
-		v.report(fmt.Errorf("%w: %w", ErrDamaged, err))
-	}
-	return nil
-}
-
 func positionOf(key []byte) engine.Position {
 	if len(key) != 8 {
 		return 0
@@ -191,13 +164,26 @@ func positionOf(key []byte) engine.Position {
 	return engine.Position(binary.BigEndian.Uint64(key))
 }
 
-// bucket examines every value of a bucket.
-func (v *verifier) bucket(tx *bolt.Tx, name []byte, examine func(key, value []byte) error) error {
-	c := tx.Bucket(name).Cursor()
-	for key, value := c.First(); key != nil; key, value = c.Next() {
-		if err := examine(key, value); err != nil {
-			v.report(fmt.Errorf("%w: %s, key %x: %w", ErrDamaged, name, key, err))
-		}
+func (v *verifier) metaKey(key, value []byte) error {
+	if string(key) == string(formatKey) {
+		v.format = true
+		return checkFormatValue(value)
+	}
+	if _, err := unseal(key, value); err != nil || string(key) != string(sweepKey) {
+		return err
+	}
+	s, err := parseSweep(value)
+	if err != nil {
+		return err
+	}
+	v.swept = true
+	return v.head.agrees(s, true)
+}
+
+// includes checks that the ledger has come to a position.
+func (v *verifier) includes(p engine.Position) error {
+	if p >= v.chain.next {
+		return fmt.Errorf("it includes position %d, but the ledger ends at %d", p, v.chain.next-1)
 	}
 	return nil
 }
@@ -207,25 +193,15 @@ func (v *verifier) state(key, value []byte) error {
 	if err := readState(key, value, &e); err != nil {
 		return err
 	}
-	if e.Through >= v.chain.next {
-		return fmt.Errorf("the state includes position %d, but the ledger ends at %d", e.Through, v.chain.next-1)
-	}
-	return nil
+	return v.includes(e.Through)
 }
 
-func checkRows(key, value []byte) (int, error) {
+func (v *verifier) segment(key, value []byte) error {
 	chunk, err := parseRows(key, value)
 	if err != nil {
-		return 0, err
+		return err
 	}
+	v.rows += chunk.count
 	_, err = chunk.appendTo(nil)
-	return chunk.count, err
-}
-
-func (v *verifier) sweep(tx *bolt.Tx) error {
-	s, _, err := readSweep(tx)
-	if err == nil && s.Through >= v.chain.next {
-		err = fmt.Errorf("%w: it includes position %d, but the ledger ends at %d", ErrDamaged, s.Through, v.chain.next-1)
-	}
 	return err
 }
