@@ -1,3 +1,126 @@
 // Package persist keeps the ledger and the checkpoints in one bbolt file. It
 // knows bytes, pages and syncs, and nothing of what a reading means.
+//
+// # Laws
+//
+//   - A group is acknowledged after fdatasync of its pages and then of the meta
+//     page that leads to them. What isn't acknowledged no reader sees.
+//   - The first failure of a commit ends the writing of a file. A full disk,
+//     told by a write before anything was synced, may pass: open the file anew.
+//     After anything else the disk may lack what memory shows, so a copy of
+//     what was acknowledged takes the file's place; see Ledger.Salvage.
+//   - Every value has a checksum that includes its key, and the groups are
+//     chained by hashes. A value that fails is an error, never skipped.
+//
+// # Format, version 1
+//
+// Numbers in keys are big-endian, so that they sort; all others little-endian.
+// "varint" and messages are those of protobuf. crc is CRC-32C (Castagnoli).
+//
+//	bucket      key                          value
+//	meta        "format"                     "leadline ledger\0", version as 4 bytes big-endian
+//	meta        "sweep"                      sealed: segment 4, through 8, summary
+//	head        "head"                       sealed: position 8, commit time 8, hash 32, swept 1, segment 4, through 8
+//	ledger      position 8                   chunk, see below
+//	quantities  number 4                     sealed: message Quantity, see quantity.go
+//	states      number 4                     sealed: through 8, state
+//	segments    segment 4, number 4, chunk 4 sealed: rows, see below
+//
+//	sealed      version 1 | body | crc of key, version and body 4
+//
+// head says where the ledger ends, so that a loss there isn't taken for a
+// shorter ledger. Its bucket lies within the root page, which every commit
+// writes anyway. Rows of segments after that of the sweep belong to a sweep
+// that was interrupted; they are deleted by the next commit of a new handle.
+//
+// A group of records is one or more chunks, each under the position of its
+// first record, at most 996 bytes unless it has only one record:
+//
+//	offset bytes
+//	 0      1    version, 1
+//	 1      1    1: first chunk of a group, 2: further chunk
+//	 2      2    records in this chunk
+//	 4      4    bytes of these records
+//	 8      8    commit time of the group, nanoseconds since 1970
+//	             in a first chunk only:
+//	16      4    records in the group
+//	20      4    chunks of the group
+//	24     32    hash of the group
+//	             in any chunk:
+//	16|56   4    crc of key and all of the header before it
+//	20|60        records
+//
+//	hash = SHA-256(hash of the group before, or 32 zero bytes,
+//	               then of each chunk: key 8 | header bytes 0 to 15 | records)
+//
+// A record is framed as
+//
+//	varint length of body | crc of body 4 | body
+//
+// and its body is a message. Fields marked * are left out where they say what
+// the record before said in the same chunk; before the first record stands
+// number 0, revision 1, the commit time for both times, and empty texts. All
+// others are left out where they are zero or empty.
+//
+//	 1  varint  kind: 0 reading, 1 refusal, 2 declaration, 3 retirement
+//	 2* varint  number of the quantity
+//	 7* sint64  receive time, as a difference
+//	 8* string  principal
+//	 9* string  request ID
+//	10* varint  revision
+//	            of readings and refusals:
+//	 3  double  value
+//	 4* sint64  time, as a difference
+//	 5  varint  1 if the time wasn't sent
+//	 6  string  reading ID
+//	11  double  random standard uncertainty; there if it was sent, also if 0
+//	12* string  instrument
+//	13* string  unit
+//	14  varint  reason: its place in engine.ReadingReasons, from 1
+//	15  string  detail
+//	16  varint  position of the refusal put through
+//	17  string  quantity ID, if it has no number
+//	18  string  reason, if it isn't in that list
+//	            of declarations and retirements:
+//	19  string  quantity ID
+//	20  message Declaration, see quantity.go
+//
+// The rows of a chunk, in canonical order:
+//
+//	rows 1 | scale 1 | earliest time 8 | latest time 8, then of each row
+//	control 1: bit 0 has an ID, bit 1 has an uncertainty, bit 2 reversed, bits 4 to 7 n
+//	sint64 varint: time less that of the row before (of the first: earliest), in units
+//	               of 1 s, 1 ms, 1 us or 1 ns by scale 0 to 3
+//	sint64 varint: position less that of the row before
+//	n bytes: the value's bits xor those of the row before; reversed: byte by byte
+//	with an uncertainty: control 1 (bits 2 and 4 to 7) | n bytes, likewise
+//
+// # Upgrades
+//
+// A reader skips fields of messages that it doesn't know, so fields may be
+// added, under new numbers, while the version stays; so may words at the end
+// of engine.ReadingReasons, though an older program then can't read records
+// that use them. Any other change takes a new version: of a chunk or sealed
+// value if the rest can be read without it, of the file if not. A program
+// reads all versions up to its own and refuses newer ones with ErrNewer,
+// without touching the file. testdata/format1.golden holds the bytes of
+// version 1.
+//
+// # Damage
+//
+// bbolt has no checksums but those of its two meta pages, and believes what it
+// finds in a page. So Open first reads, by itself, the meta pages, the branch
+// pages and the list of free pages, and then verifies the groups after the
+// last sweep; Replay, Records and Rows verify what they read; Verify reads
+// everything. Not found before Verify or a read: damage to an old group, or to
+// the 16 bytes of header of a leaf page.
+//
+// # Choices
+//
+//   - Free pages are listed in the file (no NoFreelistSync): one page more per
+//     commit, but Open needn't scan the file, and bbolt's scan ends the process
+//     when it meets damage. The list stays short: appended groups use it up.
+//   - Chunks, not one key per record: fewer keys are sorted and copied by bbolt,
+//     and the file is smaller. Not one value per group: values above a page cost
+//     whole pages.
 package persist
