@@ -29,7 +29,7 @@ func unseal(key, value []byte) (body []byte, err error) {
 		return nil, errors.New("its checksum doesn't match")
 	}
 	if value[0] > formatVersion {
-		return nil, errVersion
+		return nil, ErrNewer
 	}
 	return value[1:end], nil
 }

@@ -35,9 +35,6 @@ const (
 	maxChunkBytes = 64 << 20
 )
 
-// errVersion is of a value written by a newer version.
-var errVersion = errors.New("it was written by a newer version of the program")
-
 // span is one chunk in the buffer of an encoder.
 type span struct {
 	from, to int
@@ -159,7 +156,7 @@ func parseChunk(key, value []byte) (c chunk, err error) {
 		return c, errors.New("the checksum of its chunk's header doesn't match")
 	}
 	if value[0] > formatVersion {
-		return c, errVersion
+		return c, ErrNewer
 	}
 	c.fixed, c.body = value[:fixedHeader], value[header:]
 	c.records = int(binary.LittleEndian.Uint16(value[2:]))

@@ -6,7 +6,6 @@ import (
 	"encoding/binary"
 	"errors"
 	"fmt"
-	"hash/fnv"
 	"io"
 	"os"
 )
@@ -50,9 +49,7 @@ func readMeta(f io.ReaderAt, offset int64) (m meta, err error) {
 		return m, fmt.Errorf("its flags are %#x", flags)
 	}
 	b = b[pageHeader:]
-	sum := fnv.New64a()
-	sum.Write(b[:metaBytes-8])
-	if binary.LittleEndian.Uint32(b) != metaMagic || binary.LittleEndian.Uint64(b[metaBytes-8:]) != sum.Sum64() {
+	if binary.LittleEndian.Uint32(b) != metaMagic || binary.LittleEndian.Uint64(b[metaBytes-8:]) != fnv1a(b[:metaBytes-8]) {
 		return m, errors.New("its checksum doesn't match")
 	}
 	m = meta{
@@ -61,6 +58,16 @@ func readMeta(f io.ReaderAt, offset int64) (m meta, err error) {
 		pages: binary.LittleEndian.Uint64(b[40:]), transaction: binary.LittleEndian.Uint64(b[48:]),
 	}
 	return m, nil
+}
+
+// fnv1a is the 64-bit FNV-1a hash, by which bbolt sums its meta pages (Fowler,
+// Noll, Vo; constants of the IETF draft draft-eastlake-fnv, from memory).
+func fnv1a(b []byte) uint64 {
+	h := uint64(14695981039346656037)
+	for _, c := range b {
+		h = (h ^ uint64(c)) * 1099511628211
+	}
+	return h
 }
 
 // readMetas reads both meta pages and returns the newer one. One that isn't

@@ -99,7 +99,7 @@ func (c *before) appendBody(b []byte, r *engine.Record) []byte {
 		if r.Declaration == nil {
 			return b
 		}
-		b = protowire.AppendTag(b, fieldDeclaration, protowire.BytesType)
+		b = appendTag(b, fieldDeclaration, protowire.BytesType)
 		return protowire.AppendBytes(b, appendDeclaration(nil, r.Declaration))
 	}
 	return appendText(b, fieldQuantity, string(r.Quantity))
@@ -115,7 +115,7 @@ func (c *before) appendReading(b []byte, r *engine.Record) []byte {
 	b = appendFlag(b, fieldTimeAssigned, !y.HasTime)
 	b = appendText(b, fieldReadingID, string(y.ID))
 	if y.HasUncertainty {
-		b = protowire.AppendTag(b, fieldUncertainty, protowire.Fixed64Type)
+		b = appendTag(b, fieldUncertainty, protowire.Fixed64Type)
 		b = protowire.AppendFixed64(b, math.Float64bits(y.RandomStandardUncertainty))
 	}
 	b = appendChange(b, fieldInstrument, y.Instrument, &c.instrument)

@@ -6,9 +6,18 @@ import (
 	"google.golang.org/protobuf/encoding/protowire"
 )
 
+// appendTag appends a field's tag. Nearly all are one byte, and then this is
+// twice as fast as protowire.AppendTag.
+func appendTag(b []byte, field protowire.Number, wire protowire.Type) []byte {
+	if field < 16 {
+		return append(b, byte(field)<<3|byte(wire))
+	}
+	return protowire.AppendTag(b, field, wire)
+}
+
 // alwaysUint appends a varint field even if it is 0.
 func alwaysUint(b []byte, field protowire.Number, v uint64) []byte {
-	b = protowire.AppendTag(b, field, protowire.VarintType)
+	b = appendTag(b, field, protowire.VarintType)
 	return protowire.AppendVarint(b, v)
 }
 
@@ -35,12 +44,12 @@ func appendFixed(b []byte, field protowire.Number, v uint64) []byte {
 	if v == 0 {
 		return b
 	}
-	b = protowire.AppendTag(b, field, protowire.Fixed64Type)
+	b = appendTag(b, field, protowire.Fixed64Type)
 	return protowire.AppendFixed64(b, v)
 }
 
 func alwaysText(b []byte, field protowire.Number, v string) []byte {
-	b = protowire.AppendTag(b, field, protowire.BytesType)
+	b = appendTag(b, field, protowire.BytesType)
 	return protowire.AppendString(b, v)
 }
 
@@ -67,7 +76,7 @@ func appendMessage(b []byte, field protowire.Number, fn func([]byte) []byte) []b
 	if len(body) == 0 {
 		return b
 	}
-	b = protowire.AppendTag(b, field, protowire.BytesType)
+	b = appendTag(b, field, protowire.BytesType)
 	return protowire.AppendBytes(b, body)
 }
 
