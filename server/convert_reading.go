@@ -2,6 +2,7 @@ package server
 
 import (
 	"fmt"
+	"math"
 	"strconv"
 	"time"
 
@@ -163,19 +164,38 @@ func statusMessage(s engine.Status) leadlinev1.Reading_Status {
 func recordedMessage(r *engine.StoredReading) *leadlinev1.RecordedReading {
 	m := &leadlinev1.RecordedReading{
 		Quantity:       string(r.Quantity),
-		Value:          r.Value,
 		Time:           timestamp(r.Time),
 		Instrument:     string(r.Instrument),
 		Unit:           r.Unit,
 		ReadingId:      string(r.ID),
 		Status:         statusMessage(r.Status),
 		Reason:         string(r.Reason),
-		Detail:         r.Detail,
+		Detail:         detailOf(r),
 		ReceiveTime:    timestamp(r.ReceiveTime),
 		LedgerPosition: uint64(r.Position),
 	}
-	if r.HasUncertainty {
+	if finite(r.Value) {
+		m.Value = &r.Value
+	}
+	if r.HasUncertainty && finite(r.RandomStandardUncertainty) {
 		m.RandomStandardUncertainty = &r.RandomStandardUncertainty
 	}
 	return m
 }
+
+// detailOf returns why a stored reading was refused. What JSON has no number
+// for, and so is left out of the message, is named, also where the reading was
+// refused for something else.
+func detailOf(r *engine.StoredReading) string {
+	detail := r.Detail
+	if !finite(r.Value) && r.Reason != engine.ValueOutOfRange {
+		detail += fmt.Sprintf("; its value is %v", r.Value)
+	}
+	u := r.RandomStandardUncertainty
+	if r.HasUncertainty && !finite(u) && r.Reason != engine.RandomUncertaintyInvalid {
+		detail += fmt.Sprintf("; its random_standard_uncertainty is %v", u)
+	}
+	return detail
+}
+
+func finite(x float64) bool { return !math.IsNaN(x) && !math.IsInf(x, 0) }

@@ -2,6 +2,7 @@ package server_test
 
 import (
 	"encoding/json"
+	"math"
 	"net/url"
 	"strconv"
 	"strings"
@@ -202,6 +203,38 @@ func TestBeliefsSurviveARestart(t *testing.T) {
 	after := startServerOn(t, r.file, r.clock).call("GET", ask, "").want(200)
 	if diff := cmp.Diff(string(before.body), string(after.body)); diff != "" {
 		t.Errorf("belief (-before +after):\n%s", diff)
+	}
+}
+
+// gRPC can send what JSON has no number for. A list leaves it out, and says so.
+func TestValuesWithoutANumberAreNamedInWords(t *testing.T) {
+	r := startServer(t)
+	r.call("PUT", "/v1/quantities/gap", gapDeclaration).want(200)
+	nan, inf, one := math.NaN(), math.Inf(-1), 1.0
+	for _, m := range []*leadlinev1.Reading{
+		{Quantity: "gap", Value: &nan},
+		{Quantity: "gap", Value: &one, RandomStandardUncertainty: &inf},
+		{Quantity: "none", Value: &nan, RandomStandardUncertainty: &inf},
+	} {
+		if _, err := r.readings.PostReadings(t.Context(), &leadlinev1.PostReadingsRequest{Readings: []*leadlinev1.Reading{m}}); err != nil {
+			t.Fatal(err)
+		}
+	}
+	list := r.call("GET", "/v1/readings?status=REFUSED", "").want(200).json("readings").([]any)
+	for i, want := range []struct {
+		value, uncertainty bool
+		detail             string
+	}{
+		{false, false, "value is NaN"},
+		{true, false, "random_standard_uncertainty is -Inf"},
+		{false, false, "; its value is NaN; its random_standard_uncertainty is -Inf"},
+	} {
+		got := list[i].(map[string]any)
+		_, value := got["value"].(json.Number)
+		_, uncertainty := got["random_standard_uncertainty"]
+		if value != want.value || uncertainty != want.uncertainty || got["value"] != nil && !value || !strings.Contains(got["detail"].(string), want.detail) {
+			t.Errorf("reading %d is listed as %v", i, got)
+		}
 	}
 }
 

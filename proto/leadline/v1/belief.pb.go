@@ -184,6 +184,8 @@ type Belief struct {
 	// Ledger position up to which everything of this quantity is included.
 	LedgerPosition uint64 `protobuf:"varint,17,opt,name=ledger_position,json=ledgerPosition,proto3" json:"ledger_position,omitempty"`
 	// A rebuild is under way and the belief does not yet include every reading.
+	// After a new declaration the belief under the earlier one is shown meanwhile,
+	// with the earlier revision.
 	Rebuilding bool `protobuf:"varint,18,opt,name=rebuilding,proto3" json:"rebuilding,omitempty"`
 	// Names of the fields that do not exist for this belief.
 	Undetermined  []string `protobuf:"bytes,19,rep,name=undetermined,proto3" json:"undetermined,omitempty"`

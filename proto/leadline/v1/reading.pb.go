@@ -284,14 +284,16 @@ type RecordedReading struct {
 	state protoimpl.MessageState `protogen:"open.v1"`
 	// ID of the quantity.
 	Quantity string `protobuf:"bytes,1,opt,name=quantity,proto3" json:"quantity,omitempty"`
-	// The indication, in the quantity's unit.
-	Value float64 `protobuf:"fixed64,2,opt,name=value,proto3" json:"value,omitempty"`
+	// The indication, in the quantity's unit. Absent if it was refused and is no
+	// finite number, which gRPC can send; detail then names it.
+	Value *float64 `protobuf:"fixed64,2,opt,name=value,proto3,oneof" json:"value,omitempty"`
 	// Time of the reading: as it was sent, or the one it was given. Absent if it
 	// was refused as TIME_OUT_OF_RANGE; detail then names it.
 	Time *timestamppb.Timestamp `protobuf:"bytes,3,opt,name=time,proto3" json:"time,omitempty"`
 	// ID of the instrument, if one was sent.
 	Instrument string `protobuf:"bytes,4,opt,name=instrument,proto3" json:"instrument,omitempty"`
-	// Random part of its standard uncertainty, if one was sent.
+	// Random part of its standard uncertainty, if one was sent. Absent too if it is
+	// no finite number; detail then names it.
 	RandomStandardUncertainty *float64 `protobuf:"fixed64,5,opt,name=random_standard_uncertainty,json=randomStandardUncertainty,proto3,oneof" json:"random_standard_uncertainty,omitempty"`
 	// Unit, if one was sent.
 	Unit string `protobuf:"bytes,6,opt,name=unit,proto3" json:"unit,omitempty"`
@@ -349,8 +351,8 @@ func (x *RecordedReading) GetQuantity() string {
 }
 
 func (x *RecordedReading) GetValue() float64 {
-	if x != nil {
-		return x.Value
+	if x != nil && x.Value != nil {
+		return *x.Value
 	}
 	return 0
 }
@@ -657,7 +659,8 @@ func (x *PostReadingsResponse) GetRefusedCount() uint32 {
 // StreamReadingsRequest is one batch of a stream.
 type StreamReadingsRequest struct {
 	state protoimpl.MessageState `protogen:"open.v1"`
-	// Number of the batch, chosen by the client and larger than the one before it.
+	// Number of the batch, chosen by the client and larger than the one before it
+	// in the stream; any other ends the stream with INVALID_FIELD.
 	Sequence uint64 `protobuf:"varint,1,opt,name=sequence,proto3" json:"sequence,omitempty"`
 	// The readings, 1 to 10,000.
 	Readings      []*Reading `protobuf:"bytes,2,rep,name=readings,proto3" json:"readings,omitempty"`
@@ -1078,15 +1081,15 @@ const file_leadline_v1_reading_proto_rawDesc = "" +
 	"\x04time\x18\x03 \x01(\v2\x1a.google.protobuf.TimestampR\x04time\x123\n" +
 	"\x06status\x18\x04 \x01(\x0e2\x1b.leadline.v1.Reading.StatusR\x06status\x12\x16\n" +
 	"\x06reason\x18\x05 \x01(\tR\x06reason\x12\x16\n" +
-	"\x06detail\x18\x06 \x01(\tR\x06detail\"\xf8\x03\n" +
+	"\x06detail\x18\x06 \x01(\tR\x06detail\"\x87\x04\n" +
 	"\x0fRecordedReading\x12\x1a\n" +
-	"\bquantity\x18\x01 \x01(\tR\bquantity\x12\x14\n" +
-	"\x05value\x18\x02 \x01(\x01R\x05value\x12.\n" +
+	"\bquantity\x18\x01 \x01(\tR\bquantity\x12\x19\n" +
+	"\x05value\x18\x02 \x01(\x01H\x00R\x05value\x88\x01\x01\x12.\n" +
 	"\x04time\x18\x03 \x01(\v2\x1a.google.protobuf.TimestampR\x04time\x12\x1e\n" +
 	"\n" +
 	"instrument\x18\x04 \x01(\tR\n" +
 	"instrument\x12C\n" +
-	"\x1brandom_standard_uncertainty\x18\x05 \x01(\x01H\x00R\x19randomStandardUncertainty\x88\x01\x01\x12\x12\n" +
+	"\x1brandom_standard_uncertainty\x18\x05 \x01(\x01H\x01R\x19randomStandardUncertainty\x88\x01\x01\x12\x12\n" +
 	"\x04unit\x18\x06 \x01(\tR\x04unit\x12\x1d\n" +
 	"\n" +
 	"reading_id\x18\a \x01(\tR\treadingId\x123\n" +
@@ -1095,7 +1098,8 @@ const file_leadline_v1_reading_proto_rawDesc = "" +
 	"\x06detail\x18\n" +
 	" \x01(\tR\x06detail\x12=\n" +
 	"\freceive_time\x18\v \x01(\v2\x1a.google.protobuf.TimestampR\vreceiveTime\x12'\n" +
-	"\x0fledger_position\x18\f \x01(\x04R\x0eledgerPositionB\x1e\n" +
+	"\x0fledger_position\x18\f \x01(\x04R\x0eledgerPositionB\b\n" +
+	"\x06_valueB\x1e\n" +
 	"\x1c_random_standard_uncertainty\"j\n" +
 	"\x12PostReadingRequest\x12\x1f\n" +
 	"\bquantity\x18\x01 \x01(\tB\x03\xe0A\x02R\bquantity\x123\n" +
