@@ -19,16 +19,25 @@ const caution = "This informs people; it is not a safety system and replaces no 
 type sheet struct{ strings.Builder }
 
 func (p *sheet) line(label, format string, args ...any) {
-	fmt.Fprintf(p, "  %-14s", label)
-	fmt.Fprintf(p, format, args...)
-	p.WriteByte('\n')
+	fmt.Fprintf(p, "  %-14s%s\n", label, cell(fmt.Sprintf(format, args...)))
 }
 
-// table returns a writer of aligned columns; the caller flushes it.
-func (p *sheet) table(headings string) *tabwriter.Writer {
-	w := tabwriter.NewWriter(p, 0, 8, 2, ' ', tabwriter.StripEscape)
-	fmt.Fprintln(w, headings)
-	return w
+// table is a writer of aligned columns.
+type table struct{ *tabwriter.Writer }
+
+// table begins a table; the caller flushes it.
+func (p *sheet) table(headings ...string) table {
+	t := table{tabwriter.NewWriter(p, 0, 8, 2, ' ', 0)}
+	t.row(headings...)
+	return t
+}
+
+// row writes one line of a table.
+func (t table) row(cells ...string) {
+	for i, c := range cells {
+		cells[i] = cell(c)
+	}
+	fmt.Fprintln(t, strings.Join(cells, "\t"))
 }
 
 // more ends a page of a list.
@@ -38,10 +47,13 @@ func (p *sheet) more(token string) {
 	}
 }
 
-// oneLine keeps users' text from breaking a page's lines and columns.
-func oneLine(s string) string {
+// cell keeps what clients sent from breaking a page's lines and columns and from
+// reaching the terminal as anything but visible text: refused readings hold any
+// bytes. All that a page says of such values goes through it. What can't be
+// printed becomes a blank, what isn't UTF-8 the replacement character.
+func cell(s string) string {
 	return strings.Map(func(r rune) rune {
-		if unicode.IsControl(r) {
+		if !unicode.IsPrint(r) {
 			return ' '
 		}
 		return r
@@ -60,7 +72,7 @@ func (p *sheet) belief(b *engine.Belief) {
 	d := &b.Quantity.Declaration
 	fmt.Fprintf(p, "%s at %s\n", b.Quantity.ID, b.Time)
 	if d.Description != "" {
-		p.line("what", "%s", oneLine(d.Description))
+		p.line("what", "%s", d.Description)
 	}
 	p.level(b)
 	p.judgement(b)
@@ -207,7 +219,7 @@ func beliefsText(beliefs []engine.Belief, nextPage string) string {
 		p.WriteString("No quantities.\n")
 		return p.String()
 	}
-	w := p.table("QUANTITY\tRESULT\tBREACH\tVERDICT\tLAST READING")
+	w := p.table("QUANTITY", "RESULT", "BREACH", "VERDICT", "LAST READING")
 	for i := range beliefs {
 		b := &beliefs[i]
 		result, breach, verdict, last := "nothing known", "-", "-", "none"
@@ -223,7 +235,7 @@ func beliefsText(beliefs []engine.Belief, nextPage string) string {
 		if b.HasLast {
 			last = elapsed(b.Time.Sub(b.LastTime)) + " before"
 		}
-		fmt.Fprintf(w, "%s\t%s\t%s\t%s\t%s\n", b.Quantity.ID, result, breach, verdict, last)
+		w.row(string(b.Quantity.ID), result, breach, verdict, last)
 	}
 	_ = w.Flush() // into memory
 	fmt.Fprintf(p, "At %s.\n", beliefs[0].Time)
@@ -256,7 +268,7 @@ func elapsed(nanos float64) string {
 // errorText renders a refused request.
 func errorText(e *engine.Error) string {
 	p := new(sheet)
-	p.WriteString(oneLine(e.Message) + "\n")
+	p.WriteString(cell(e.Message) + "\n")
 	p.line("reason", "%s", e.Reason)
 	p.line("field", "%s", cmp.Or(e.Field, "-"))
 	return p.String()

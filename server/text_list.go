@@ -13,7 +13,7 @@ func quantityText(q *engine.Quantity) string {
 	p := new(sheet)
 	fmt.Fprintf(p, "%s, revision %d\n", q.ID, q.Revision)
 	if d.Description != "" {
-		p.line("what", "%s", oneLine(d.Description))
+		p.line("what", "%s", d.Description)
 	}
 	p.line("unit", "%s", d.Unit)
 	p.line("prior", "%s", priorText(&d.Prior, d.Unit))
@@ -92,15 +92,15 @@ func quantitiesText(quantities []engine.Quantity, nextPage string) string {
 		p.WriteString("No quantities.\n")
 		return p.String()
 	}
-	w := p.table("QUANTITY\tUNIT\tTOLERANCE\tDYNAMICS\tDESCRIPTION")
+	w := p.table("QUANTITY", "UNIT", "TOLERANCE", "DYNAMICS", "DESCRIPTION")
 	for i := range quantities {
 		q := &quantities[i]
 		d := &q.Declaration
-		what := oneLine(d.Description)
+		what := d.Description
 		if q.Retired {
 			what = "(retired " + q.RetireTime.String() + ") " + what
 		}
-		fmt.Fprintf(w, "%s\t%s\t%s\t%s\t%s\n", q.ID, d.Unit, toleranceText(d.Tolerance, d.Unit), dynamicsText(d.Dynamics, d.Unit), what)
+		w.row(string(q.ID), d.Unit, toleranceText(d.Tolerance, d.Unit), dynamicsText(d.Dynamics, d.Unit), what)
 	}
 	_ = w.Flush() // into memory
 	p.more(nextPage)
@@ -114,19 +114,27 @@ func readingsText(readings []engine.StoredReading, nextPage string) string {
 		p.WriteString("No readings.\n")
 		return p.String()
 	}
-	w := p.table("TIME\tQUANTITY\tVALUE\tREADING ID\tSTATUS\tDETAIL")
+	w := p.table("TIME", "QUANTITY", "VALUE", "READING ID", "STATUS", "DETAIL")
 	for i := range readings {
 		r := &readings[i]
 		value := within(shortest(r.Value), r.Unit)
 		if r.HasUncertainty {
 			value += ", u = " + shortest(r.RandomStandardUncertainty)
 		}
-		fmt.Fprintf(w, "%s\t%s\t%s\t%s\t%s\t%s\n", r.Time, r.Quantity, value, oneLine(string(r.ID)),
-			outcomeText(r.Status, r.Reason), oneLine(r.Detail))
+		w.row(timeText(r.Time), string(r.Quantity), value, string(r.ID), outcomeText(r.Status, r.Reason), r.Detail)
 	}
 	_ = w.Flush() // into memory
 	p.more(nextPage)
 	return p.String()
+}
+
+// timeText writes a moment, or "-" for one that the service cannot hold; the
+// detail of its reading names it.
+func timeText(i engine.Instant) string {
+	if !i.Valid() {
+		return "-"
+	}
+	return i.String()
 }
 
 // resultsText renders what became of the readings of a request; those that
@@ -142,7 +150,7 @@ func resultsText(results []engine.Result) string {
 			duplicate++
 		default:
 			refused++
-			fmt.Fprintf(p, "readings[%d] %s: %s\n", i, outcomeText(r.Status, r.Reason), oneLine(r.Detail))
+			fmt.Fprintf(p, "readings[%d] %s: %s\n", i, outcomeText(r.Status, r.Reason), cell(r.Detail))
 		}
 	}
 	fmt.Fprintf(p, "%d applied, %d duplicate, %d refused\n", applied, duplicate, refused)

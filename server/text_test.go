@@ -7,6 +7,7 @@ import (
 	"strings"
 	"testing"
 	"time"
+	"unicode"
 
 	"leadline.example/engine"
 	"leadline.example/engine/decide"
@@ -168,6 +169,40 @@ func TestUsersTextStaysOnItsLine(t *testing.T) {
 	text := beliefText(&b)
 	if n := strings.Count(text, "\n  verdict "); n != 1 {
 		t.Errorf("a description made %d verdict lines, want 1:\n%s", n, text)
+	}
+}
+
+// A refused reading holds any text that fits: none of it may reach a terminal as
+// a command, or pass for another line or column.
+func TestTextOfClientsIsOnlyText(t *testing.T) {
+	const hostile = "a\x1b[2J\x9b\u009b\u202e\u2028\t\r\n\x00\x7f\xffz"
+	const want = "a [2J\uFFFD        \uFFFDz"
+	if got := cell(hostile); got != want {
+		t.Errorf("%q becomes %q, want %q", hostile, got, want)
+	}
+	page := readingsText([]engine.StoredReading{{
+		Reading: engine.Reading{Quantity: hostile, Unit: hostile, ID: hostile, Time: instant(t, "2026-03-01T11:57:30Z")},
+		Status:  engine.Refused, Reason: engine.UnknownQuantity, Detail: hostile,
+	}}, "") +
+		resultsText([]engine.Result{{Status: engine.Refused, Reason: engine.UnitMismatch, Detail: hostile}}) +
+		errorText(&engine.Error{Reason: engine.UnknownField, Field: hostile, Message: hostile})
+	for i, r := range page {
+		if r != '\n' && !unicode.IsPrint(r) {
+			t.Errorf("byte %d of the page is %q", i, r)
+		}
+	}
+	if n := strings.Count(page, "\n"); n != 7 {
+		t.Errorf("the page has %d lines, want 7:\n%s", n, page)
+	}
+}
+
+func TestTimeThatCannotBeHeldIsNotInvented(t *testing.T) {
+	page := readingsText([]engine.StoredReading{{
+		Reading: engine.Reading{Quantity: "gap", Value: 1, Time: engine.InstantOf(time.Date(1500, 1, 1, 0, 0, 0, 0, time.UTC))},
+		Status:  engine.Refused, Reason: engine.TimeOutOfRange, Detail: "time 1500-01-01T00:00:00Z lies outside",
+	}}, "")
+	if !strings.Contains(page, "\n-     gap") || strings.Contains(page, "1677") {
+		t.Errorf("the page shows a time that nobody sent:\n%s", page)
 	}
 }
 
