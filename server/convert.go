@@ -162,7 +162,11 @@ func instantOf(field string, t *timestamppb.Timestamp) (engine.Instant, error) {
 	if !t.IsValid() {
 		return 0, refuse(engine.InvalidField, field, field+" is not a time of the years 1 to 9999; give one")
 	}
-	return engine.InstantOf(t.AsTime()), nil
+	i := engine.InstantOf(t.AsTime())
+	if !i.Valid() {
+		return 0, refuse(engine.InvalidField, field, field+" lies outside 1678 to 2262; give a time within")
+	}
+	return i, nil
 }
 
 func durationOf(field string, d *durationpb.Duration) (time.Duration, error) {

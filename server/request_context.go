@@ -2,6 +2,8 @@ package server
 
 import (
 	"context"
+	"net/http"
+	"slices"
 	"strings"
 
 	"google.golang.org/grpc/metadata"
@@ -18,13 +20,26 @@ const (
 
 const maxRequestIDBytes = 128
 
+// forwardedKeys are the HTTP headers that a service sees.
+var forwardedKeys = [...]string{keyIfMatch, keyIfNoneMatch, keyRequestID}
+
 // forwardedHeader tells the gateway which HTTP headers a service sees.
 func forwardedHeader(name string) (string, bool) {
-	switch key := strings.ToLower(name); key {
-	case keyIfMatch, keyIfNoneMatch, keyRequestID:
-		return key, true
+	key := strings.ToLower(name)
+	return key, slices.Contains(forwardedKeys[:], key)
+}
+
+// gatewayHeader returns the header that the gateway gets. It is built from what
+// is wanted, not cleaned of what isn't: the gateway takes a deadline from
+// Grpc-Timeout and metadata from more headers than one would guess.
+func gatewayHeader(in http.Header, media string) http.Header {
+	out := http.Header{"Accept": {media}, "Content-Type": {media}}
+	for _, key := range forwardedKeys {
+		if values := in.Values(key); len(values) > 0 {
+			out[http.CanonicalHeaderKey(key)] = values
+		}
 	}
-	return "", false
+	return out
 }
 
 // incoming returns the one value of a metadata key, or "".

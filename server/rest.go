@@ -7,12 +7,15 @@ import (
 	"io"
 	"log/slog"
 	"net/http"
+	"net/url"
 	"os"
 	"slices"
 	"strconv"
 	"strings"
 
 	"github.com/grpc-ecosystem/grpc-gateway/v2/runtime"
+	"google.golang.org/protobuf/proto"
+	"google.golang.org/protobuf/reflect/protoreflect"
 
 	"leadline.example/engine"
 	leadlinev1 "leadline.example/proto/leadline/v1"
@@ -140,21 +143,16 @@ func (h *rest) find(r *http.Request) (*route, string, error) {
 }
 
 // prepare returns the request that the gateway gets: one method, one spelling
-// of the path, a checked query, a decoded body, one media type, and none of the
-// headers that change what the gateway does.
+// of the path, a checked query, a decoded body, one media type, and of the
+// headers only those that a service reads.
 func (r *route) prepare(w http.ResponseWriter, in *http.Request, value, query, media string) (*http.Request, error) {
 	ctx := in.Context()
 	if media == mediaText {
 		ctx = withWords(ctx)
 	}
-	out := in.Clone(ctx)
-	out.Method = r.method
+	out := (&http.Request{Method: r.method, URL: new(url.URL), Header: gatewayHeader(in.Header, media), Body: http.NoBody}).WithContext(ctx)
 	out.URL.Path, out.URL.RawPath = r.path(value)
 	out.URL.RawQuery = query
-	out.Header.Set("Accept", media)
-	out.Header.Set("Content-Type", media)
-	out.Header.Del("TE")
-	out.Body = http.NoBody
 	if r.body == "" {
 		return out, nil
 	}
@@ -166,8 +164,25 @@ func (r *route) prepare(w http.ResponseWriter, in *http.Request, value, query, m
 	if err := decodeStrict(body, message, mayBeEmpty); err != nil {
 		return nil, err
 	}
+	if err := r.checkVariable(message, value); err != nil {
+		return nil, err
+	}
 	out.Body = &decodedBody{ReadCloser: http.NoBody, message: message}
 	return out, nil
+}
+
+// checkVariable refuses a body that gives the variable of the path another
+// value, which the gateway would overwrite.
+func (r *route) checkVariable(body proto.Message, value string) error {
+	if r.body != "*" || r.variable == "" {
+		return nil
+	}
+	m := body.ProtoReflect()
+	sent := m.Get(m.Descriptor().Fields().ByName(protoreflect.Name(r.variable))).String()
+	if sent == "" || sent == value {
+		return nil
+	}
+	return refuse(engine.InvalidField, r.variable, fmt.Sprintf("%s is %q, not the %q of the path; leave it out", r.variable, shorten(sent), value))
 }
 
 // readBody reads a body of admissible length, appending it to into.

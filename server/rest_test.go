@@ -30,7 +30,7 @@ func TestRefusedRequestsSayWhy(t *testing.T) {
 		{"double slash", []string{"GET", "/v1//quantities", ""}, 404, engine.NotFound, ""},
 		{"unknown verb", []string{"POST", "/v1/quantities/gap/readings:renew", ""}, 404, engine.NotFound, ""},
 		{"unknown quantity", []string{"GET", "/v1/quantities/none", ""}, 404, engine.NotFound, "id"},
-		{"belief of an unknown quantity", []string{"GET", "/v1/quantities/none/belief", ""}, 404, engine.NotFound, "id"},
+		{"belief of an unknown quantity", []string{"GET", "/v1/quantities/none/belief", ""}, 404, engine.NotFound, "quantity"},
 		{"ID with a blank", []string{"GET", "/v1/quantities/a%20b", ""}, 400, engine.InvalidID, "id"},
 		{"ID with a dot segment", []string{"GET", "/v1/quantities/a%2F..%2Fb", ""}, 400, engine.InvalidID, "id"},
 		{"ID with an encoded percent", []string{"GET", "/v1/quantities/a%252Fb", ""}, 400, engine.InvalidID, "id"},
@@ -57,6 +57,10 @@ func TestRefusedRequestsSayWhy(t *testing.T) {
 		{"time with a bare plus", []string{"GET", "/v1/quantities/gap/belief?time=2026-03-01T12:00:00+01:00", ""}, 400, engine.InvalidField, "time"},
 		{"time out of range", []string{"GET", "/v1/quantities/gap/belief?time=1500-03-01T12:00:00Z", ""}, 400, engine.InvalidField, "time"},
 		{"unknown instrument", []string{"GET", "/v1/quantities/gap/belief?instrument=calliper", ""}, 404, engine.NotFound, "instrument"},
+		{"start out of range", []string{"GET", "/v1/quantities/gap/readings?start=1500-01-01T00:00:00Z", ""}, 400, engine.InvalidField, "start"},
+		{"end out of range", []string{"GET", "/v1/quantities/gap/readings?end=2300-01-01T00:00:00Z", ""}, 400, engine.InvalidField, "end"},
+		{"list at a time out of range", []string{"GET", "/v1/beliefs?time=2300-01-01T00:00:00Z", ""}, 400, engine.InvalidField, "time"},
+		{"refusals of another quantity put through", []string{"POST", "/v1/quantities/gap/readings:apply_refused", `{"quantity":"z"}`}, 400, engine.InvalidField, "quantity"},
 		{"status by number", []string{"GET", "/v1/quantities/gap/readings?status=1", ""}, 400, engine.InvalidField, "status"},
 		{"status UNSPECIFIED", []string{"GET", "/v1/quantities/gap/readings?status=UNSPECIFIED", ""}, 400, engine.InvalidField, "status"},
 		{"status DUPLICATE", []string{"GET", "/v1/quantities/gap/readings?status=DUPLICATE", ""}, 400, engine.InvalidField, "status"},
@@ -99,7 +103,7 @@ func TestRefusedRequestsSayWhy(t *testing.T) {
 		{"ETag of what isn't there", declare(`"etag":"1"`), 409, engine.ETagMismatch, "etag"},
 		{"another quantity in a reading", []string{"POST", "/v1/quantities/gap/readings", `{"quantity":"other","value":1}`}, 400, engine.InvalidField, "quantity"},
 		{"apply_refused with a field", []string{"POST", "/v1/quantities/gap/readings:apply_refused", `{"all":true}`}, 400, engine.UnknownField, "all"},
-		{"apply_refused of an unknown quantity", []string{"POST", "/v1/quantities/none/readings:apply_refused", ``}, 404, engine.NotFound, "id"},
+		{"apply_refused of an unknown quantity", []string{"POST", "/v1/quantities/none/readings:apply_refused", ``}, 404, engine.NotFound, "quantity"},
 	} {
 		t.Run(test.name, func(t *testing.T) {
 			r.t = t
@@ -167,6 +171,20 @@ func TestMethodCannotBeOverridden(t *testing.T) {
 	if r.call("GET", "/v1/quantities/gap", "").json("retire_time") != nil {
 		t.Error("a header retired the quantity")
 	}
+}
+
+// The gateway would take a deadline, metadata and more from headers that are no
+// part of the interface.
+func TestForeignHeadersChangeNothing(t *testing.T) {
+	r := startServer(t)
+	r.call("PUT", "/v1/quantities/gap", gapDeclaration).want(200)
+	for _, header := range [][2]string{
+		{"Grpc-Timeout", "1n"}, {"Grpc-Timeout", "soon"}, {"Grpc-Metadata-If-Match", `"9"`}, {"Te", "trailers"},
+		{"Authorization", "Bearer x"}, {"X-Forwarded-For", "ice"}, {"X-Http-Method-Override", "DELETE"},
+	} {
+		r.call("PUT", "/v1/quantities/gap", gapDeclaration, header[0], header[1]).want(200)
+	}
+	r.call("POST", "/v1/quantities/gap/readings:apply_refused", `{"quantity":"gap"}`).want(200)
 }
 
 func TestHeadIsGetWithoutABody(t *testing.T) {
