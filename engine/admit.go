@@ -2,7 +2,6 @@ package engine
 
 import (
 	"cmp"
-	"errors"
 	"fmt"
 	"math"
 	"time"
@@ -20,16 +19,7 @@ func (k *Keeper) admit(r *Reading, at resolved, receive Instant) (res Result, wr
 		res.Status = Applied
 		return res, true
 	}
-	earlier := k.window.find(at.hash)
-	if earlier == nil || r.HasTime && !earlier.untimed && earlier.time != r.Time {
-		older, err := k.findStored(at.track, r)
-		if err != nil {
-			k.fail(fmt.Errorf("look up reading %q of %q: %w", r.ID, r.Quantity, errors.Join(err, ErrStorageFailed)))
-		}
-		if older != nil {
-			earlier = older
-		}
-	}
+	earlier := k.earlier(r, at)
 	switch {
 	case earlier == nil:
 		res.Status = Applied
@@ -97,37 +87,46 @@ func (k *Keeper) objectionToTime(a *rules, r *Reading, receive Instant) (Reason,
 	return "", ""
 }
 
-// findStored looks for an applied reading with r's ID and time among those
-// that the window no longer holds; nil if there is none.
-func (k *Keeper) findStored(t *Track, r *Reading) (*seenID, error) {
-	if !k.window.evicted || !r.HasTime || t.decidedTally.count == 0 || r.Time > t.decidedTally.last {
-		return nil, nil
+// earlier returns the applied reading that r repeats or contradicts, nil if r
+// is new. An exact repeat is known for as long as the ledger lives: from the
+// window, from the rows in memory, or from the lookup that was made before r
+// came to the keeper.
+func (k *Keeper) earlier(r *Reading, at resolved) *seenID {
+	e := k.window.find(at.hash)
+	if e != nil && e.time == r.Time {
+		return e
 	}
+	if older := k.exact(r, at); older != nil {
+		return older
+	}
+	if e != nil && k.window.recent(e) {
+		return e
+	}
+	return nil
+}
+
+// exact returns the reading with r's ID and time that the window has lost.
+func (k *Keeper) exact(r *Reading, at resolved) *seenID {
+	if k.window.lost == 0 || !r.HasTime || r.Time > at.track.decidedTally.last {
+		return nil
+	}
+	if k.window.lost > k.sweep.trimmed {
+		if e := at.track.inMemory(r); e != nil {
+			return e
+		}
+	}
+	return at.stored
+}
+
+// inMemory looks through the rows of t. It is needed only where the window is
+// shorter than the distance of two checkpoints.
+func (t *Track) inMemory(r *Reading) *seenID {
 	for i := range t.rows {
 		if e := &t.rows[i]; e.Time == r.Time && e.HasID && e.ID == r.ID {
-			return &seenID{time: e.Time, value: e.Value, position: e.Position}, nil
+			return &seenID{time: e.Time, value: e.Value, position: e.Position}
 		}
 	}
-	var at []Position
-	err := k.ledger.Rows(t.number, r.Time, func(rows []Row) error {
-		for _, row := range rows {
-			if row.Time == r.Time && row.HasID {
-				at = append(at, row.Position)
-			}
-		}
-		return nil
-	})
-	if err != nil || len(at) == 0 {
-		return nil, err
-	}
-	var found *seenID
-	err = k.ledger.Records(at, func(rec *Record) error {
-		if rec.Reading.ID == r.ID {
-			found = &seenID{time: rec.Reading.Time, value: rec.Reading.Value, position: rec.Position}
-		}
-		return nil
-	})
-	return found, err
+	return nil
 }
 
 // skewDefault is the clock skew allowed to senders.

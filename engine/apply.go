@@ -144,6 +144,7 @@ func (k *Keeper) publish(through Position) {
 	k.fresh = 0
 	k.refusals.publish()
 	k.position.Store(uint64(through))
+	k.windowLost.Store(uint64(k.window.lost))
 	k.published.Store(k.change)
 }
 
@@ -206,7 +207,7 @@ func (k *Keeper) finishJob(j *job) {
 	t.basis, t.fold, t.foldedTo = t.quantity, j.fold, j.position
 	t.rows, t.marks, t.markFrom = j.rows, j.marks, 0
 	t.last, t.behind = j.last, entry{}
-	t.trim(k.sweep.stored)
+	t.trim(k.sweep.trimmed)
 	t.fresh = since
 	k.change++
 	k.budget = refoldBudget

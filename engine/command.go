@@ -11,6 +11,7 @@ type command struct {
 	origins []Record // the refusals that the batch puts through, one for each reading
 	found   []resolved
 	within  *directory // where the readings were resolved
+	trimmed Position   // the lookup of late ones is complete through this
 	next    int        // the first reading not decided on
 	results []Result
 	resume  bool
@@ -38,8 +39,11 @@ func (k *Keeper) submit(c *command) error {
 		k.queued.Add(-n)
 		return errOverloaded
 	}
-	c.within, c.results = k.directory.Load(), make([]Result, 0, len(c.batch.Readings))
-	c.found = c.within.resolve(c.batch.Readings, &k.seeds)
+	c.results = make([]Result, 0, len(c.batch.Readings))
+	if err := k.resolve(c, false); err != nil {
+		k.queued.Add(-n)
+		return err
+	}
 	select {
 	case k.commands <- c:
 		return nil
@@ -104,6 +108,9 @@ func (k *Keeper) decide(w *work, c *command) {
 		k.partial = nil
 	case c.action != nil:
 		c.err = c.action(w)
+	case c.next == 0 && len(c.found) > 0 && c.trimmed != k.sweep.trimmed && !k.window.complete(len(c.found)):
+		k.workers.Go(func() { k.again(c) })
+		return
 	default:
 		if k.decideBatch(w, c); c.next < len(c.batch.Readings) {
 			k.partial = c

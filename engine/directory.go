@@ -27,6 +27,9 @@ func (d *directory) add(t *Track) {
 type resolved struct {
 	track *Track // nil: not known then
 	hash  idHash // of the ID, if there is a track and an ID
+	// stored is the reading in the ledger with the same quantity, ID and time,
+	// if it was looked for and found.
+	stored *seenID
 }
 
 // resolve looks the readings' quantities up and hashes their IDs.

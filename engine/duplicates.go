@@ -12,13 +12,15 @@ import "hash/maphash"
 // that it forgets. Here an ID that is new, the usual case, costs one line of a
 // table, and nothing is ever deleted: the IDs lie in two generations, in the
 // order in which they came, and when the newer one is full the older one is
-// emptied as a whole. An ID counts only while it is among the last capacity
-// and not older than windowAge, whichever generation holds it.
+// emptied as a whole. Whatever a generation holds serves to know an exact
+// repeat; an ID with another time counts only while the ID is among the last
+// capacity and not older than windowAge.
 type window struct {
 	capacity int
+	size     int    // of a generation
 	added    uint64 // IDs so far
 	newest   Instant
-	evicted  bool // something applied is no longer remembered
+	lost     Position // no reading up to this is remembered, all later ones with an ID are
 	current  generation
 	previous generation
 }
@@ -43,11 +45,19 @@ type seenID struct {
 	untimed  bool   // its time was given by the service
 }
 
-// windowAge is how long an ID is remembered at most, in nanoseconds.
+// windowAge is how long an ID counts for readings with another time, in
+// nanoseconds.
 const windowAge = 24 * 3600 * 1_000_000_000
 
-func newWindow(capacity int) *window {
-	return &window{capacity: capacity, current: newGeneration(), previous: newGeneration()}
+// minGeneration is more than all readings that are decided on but not yet
+// durable: those are found nowhere but in the window.
+const minGeneration = 3 * maxGroupRecords
+
+func newWindow(capacity, least int) *window {
+	return &window{
+		capacity: capacity, size: max(capacity, least),
+		current: newGeneration(), previous: newGeneration(),
+	}
 }
 
 func newGeneration() generation { return generation{slots: make([]uint64, 1<<10)} }
@@ -68,19 +78,45 @@ func (s *idSeeds) hash(number QuantityNumber, id ReadingID) idHash {
 
 // find returns the reading that h stands for, nil if it isn't remembered.
 func (w *window) find(h idHash) *seenID {
-	e := w.current.find(h)
-	if e == nil {
-		e = w.previous.find(h)
+	if e := w.current.find(h); e != nil {
+		return e
 	}
-	if e == nil || w.added-e.sequence > uint64(w.capacity) || w.newest.Sub(e.receive) > windowAge {
-		return nil
+	return w.previous.find(h)
+}
+
+// recent tells whether e counts for readings with another time.
+func (w *window) recent(e *seenID) bool {
+	return w.added-e.sequence <= uint64(w.capacity) && w.newest.Sub(e.receive) <= windowAge
+}
+
+// complete tells whether the window holds every ID and still will after n more.
+func (w *window) complete(n int) bool {
+	room := w.size - len(w.current.entries)
+	if len(w.previous.entries) == 0 {
+		room += w.size
 	}
-	return e
+	return w.lost == 0 && n <= room
+}
+
+// oldest returns the position of the first of the last capacity IDs; 0 if there
+// is none.
+func (w *window) oldest() Position {
+	skip := max(0, len(w.previous.entries)+len(w.current.entries)-w.capacity)
+	for _, g := range []*generation{&w.previous, &w.current} {
+		if skip < len(g.entries) {
+			return g.entries[skip].position
+		}
+		skip -= len(g.entries)
+	}
+	return 0
 }
 
 // add remembers an ID, also one that stood for another reading before.
 func (w *window) add(e seenID) {
-	if len(w.current.entries) == w.capacity {
+	if len(w.current.entries) == w.size {
+		if n := len(w.previous.entries); n > 0 {
+			w.lost = w.previous.entries[n-1].position
+		}
 		w.current, w.previous = w.previous, w.current
 		clear(w.current.slots)
 		w.current.entries = w.current.entries[:0]
@@ -88,18 +124,7 @@ func (w *window) add(e seenID) {
 	e.sequence = w.added
 	w.added++
 	w.newest = max(w.newest, e.receive)
-	w.evicted = w.evicted || w.added > uint64(w.capacity) || w.newest.Sub(w.oldest()) > windowAge
 	w.current.add(e)
-}
-
-// oldest is the receipt of the oldest ID that is still held.
-func (w *window) oldest() Instant {
-	for _, g := range []*generation{&w.previous, &w.current} {
-		if len(g.entries) > 0 {
-			return g.entries[0].receive
-		}
-	}
-	return w.newest
 }
 
 func (g *generation) find(h idHash) *seenID {

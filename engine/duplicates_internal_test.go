@@ -6,33 +6,38 @@ import (
 	"testing"
 )
 
-// The window remembers exactly the last capacity IDs of the last day.
+// The window remembers at least the last capacity IDs, counts exactly those of
+// the last day among them as recent, and knows what it has lost.
 func TestWindowRemembersTheLast(t *testing.T) {
 	rng := rand.New(rand.NewPCG(1, 2))
 	seeds := newIDSeeds()
 	for _, capacity := range []int{1, 7, 3000} {
-		w := newWindow(capacity)
+		w := newWindow(capacity, 5)
 		type added struct {
 			hash    idHash
 			receive Instant
 		}
-		var all []added
+		all := []added{{}} // positions begin with 1
 		receive := Instant(0)
-		for i := range 5 * capacity {
-			receive += Instant(rng.Int64N(3 * windowAge / int64(capacity+1)))
+		for i := 1; i <= 5*w.size; i++ {
+			receive += Instant(rng.Int64N(3 * windowAge / int64(w.size)))
 			h := seeds.hash(QuantityNumber(i%5), ReadingID(fmt.Sprint(i)))
 			w.add(seenID{hash: h, receive: receive, position: Position(i)})
 			all = append(all, added{h, receive})
 			for range 5 {
-				j := rng.IntN(len(all))
-				want := len(all)-j <= capacity && receive-all[j].receive <= windowAge
-				if e := w.find(all[j].hash); (e != nil) != want || e != nil && e.position != Position(j) {
-					t.Fatalf("capacity %d: ID %d of %d is found: %v, want %v", capacity, j, len(all), e != nil, want)
+				j := 1 + rng.IntN(len(all)-1)
+				e := w.find(all[j].hash)
+				if held := Position(j) > w.lost; (e != nil) != held || e != nil && e.position != Position(j) {
+					t.Fatalf("capacity %d: ID %d of %d is held: %v, want %v", capacity, j, i, e != nil, held)
+				}
+				recent := i-j < capacity && receive-all[j].receive <= windowAge
+				if e == nil && recent || e != nil && w.recent(e) != recent {
+					t.Fatalf("capacity %d: ID %d of %d is recent: %v, want %v", capacity, j, i, !recent, recent)
 				}
 			}
 		}
-		if !w.evicted {
-			t.Errorf("capacity %d: nothing was evicted", capacity)
+		if w.lost == 0 {
+			t.Errorf("capacity %d: nothing was lost", capacity)
 		}
 	}
 }

@@ -29,6 +29,8 @@ type Options struct {
 	// OnFault is told of each fault of the storage; nil ignores them. It must
 	// not call the Keeper.
 	OnFault func(error)
+
+	minGeneration int // in place of the constant
 }
 
 func (o *Options) validate() error {
@@ -40,6 +42,7 @@ func (o *Options) validate() error {
 	}
 	o.MaxClockSkew = cmp.Or(o.MaxClockSkew, skewDefault)
 	o.DuplicateWindow = cmp.Or(o.DuplicateWindow, 1_000_000)
+	o.minGeneration = cmp.Or(o.minGeneration, minGeneration)
 	o.RefusedLog = cmp.Or(o.RefusedLog, 100_000)
 	if o.OnFault == nil {
 		o.OnFault = func(error) {}
@@ -93,13 +96,15 @@ type Keeper struct {
 	failed    error
 
 	// Written by the keeper's goroutine, read by all.
-	directory atomic.Pointer[directory]
-	tracks    atomic.Pointer[[]*Track] // sorted by ID
-	refusals  refusals
-	published atomic.Uint64 // newest change
-	position  atomic.Uint64
-	health    atomic.Pointer[error]
-	current   atomic.Pointer[Ledger]
+	directory  atomic.Pointer[directory]
+	tracks     atomic.Pointer[[]*Track] // sorted by ID
+	refusals   refusals
+	published  atomic.Uint64 // newest change
+	position   atomic.Uint64
+	trimmed    atomic.Uint64 // sweep.trimmed
+	windowLost atomic.Uint64 // window.lost
+	health     atomic.Pointer[error]
+	current    atomic.Pointer[Ledger]
 	counts
 
 	// Between the keeper's goroutine, the committer and the rebuilder.

@@ -3,7 +3,10 @@ package engine_test
 import (
 	"context"
 	"errors"
+	"fmt"
 	"math"
+	"slices"
+	"sync/atomic"
 	"testing"
 	"time"
 
@@ -182,7 +185,7 @@ func TestKeeperRefusesWithReason(t *testing.T) {
 
 func TestKeeperKnowsDuplicates(t *testing.T) {
 	for _, window := range []int{0, 1} { // 1: known only from storage
-		r := newRig(t, engine.Options{DuplicateWindow: window, CheckpointRecords: 2})
+		r := newRig(t, engine.WithGeneration(engine.Options{DuplicateWindow: window, CheckpointRecords: 2}, 1))
 		r.declare("gap", gap())
 		r.post(start, reading("gap", start, 100, "a"))
 		r.post(start, reading("gap", seconds(1), 101, "b"))
@@ -334,5 +337,63 @@ func TestFullDiskPasses(t *testing.T) {
 	}
 	if b := r.belief("gap", engine.BeliefQuery{Now: start}); b.ReadingCount != 2 {
 		t.Errorf("%d readings, want 2", b.ReadingCount)
+	}
+}
+
+// countingLedger counts the passes over rows.
+type countingLedger struct {
+	engine.Ledger
+	passes *atomic.Int64
+}
+
+func (l countingLedger) Rows(n engine.QuantityNumber, since engine.Instant, fn func([]engine.Row) error) error {
+	l.passes.Add(1)
+	return l.Ledger.Rows(n, since, fn)
+}
+
+// Late readings that only storage can tell from repeats cost one pass for each
+// quantity of a batch.
+func TestLateBatchLooksStorageUpOnce(t *testing.T) {
+	r := newRig(t, engine.WithGeneration(engine.Options{DuplicateWindow: 10, CheckpointRecords: 300}, 110))
+	var passes atomic.Int64
+	r.keeper.Close()
+	r.option.Open = func() (engine.Ledger, error) {
+		r.ledger = r.ledger.Reopen()
+		return countingLedger{r.ledger, &passes}, nil
+	}
+	k, err := engine.New(r.option)
+	if err != nil {
+		t.Fatal(err)
+	}
+	r.keeper = k
+	r.declare("gap", gap())
+	r.declare("winch", gap())
+	var sent []engine.Reading
+	for i := range 2_000 {
+		id := []engine.QuantityID{"gap", "winch"}[i%2]
+		sent = append(sent, reading(id, seconds(float64(i)), 100, engine.ReadingID(fmt.Sprint(i))))
+	}
+	for chunk := range slices.Chunk(sent, 100) {
+		r.post(seconds(3000), chunk...)
+	}
+	passes.Store(0)
+	late := slices.Clone(sent[:1000])
+	for i := range 500 {
+		late[2*i].ID += "-new"
+	}
+	applied, duplicate := 0, 0
+	for _, res := range r.post(seconds(3000), late...) {
+		switch res.Status {
+		case engine.Applied:
+			applied++
+		case engine.Duplicate:
+			duplicate++
+		}
+	}
+	if applied != 500 || duplicate != 500 {
+		t.Errorf("%d applied and %d duplicate, want 500 of each", applied, duplicate)
+	}
+	if n := passes.Load(); n > 4 { // two quantities, once more if a checkpoint ended meanwhile
+		t.Errorf("%d passes over stored rows, want at most 4", n)
 	}
 }

@@ -24,7 +24,7 @@ func (k *Keeper) loadFrom(l Ledger) error {
 	k.current.Store(&l)
 	k.directory.Store(&directory{byID: map[QuantityID]*Track{}})
 	k.byNumber = nil
-	k.window = newWindow(k.options.DuplicateWindow)
+	k.window = newWindow(k.options.DuplicateWindow, k.options.minGeneration)
 	k.refusals.init(k.options.RefusedLog)
 	k.touched, k.arrived, k.jobs, k.partial, k.fresh = nil, nil, nil, nil, 0
 	k.change++
@@ -34,12 +34,13 @@ func (k *Keeper) loadFrom(l Ledger) error {
 	if err != nil {
 		return err
 	}
-	k.sweep = sweeper{segment: sweep.Segment, stored: sweep.Through, trim: len(k.byNumber)}
-	countedTo, err := k.restoreSummary(sweep.Summary)
+	k.sweep = sweeper{segment: sweep.Segment, stored: sweep.Through, trimmed: sweep.Through, trim: len(k.byNumber)}
+	k.trimmed.Store(uint64(sweep.Through))
+	sum, err := k.restoreSummary(sweep.Summary)
 	if err != nil {
 		return err
 	}
-	if err := k.replayFrom(sweep.Through, countedTo); err != nil {
+	if err := k.replayFrom(sweep.Through, sum); err != nil {
 		return err
 	}
 	return k.present()
@@ -64,18 +65,23 @@ func (k *Keeper) restore(e CheckpointEntry) error {
 	return nil
 }
 
-// restoreSummary takes the counts and the log of refusals, which include every
-// record up to the position returned.
-func (k *Keeper) restoreSummary(b []byte) (Position, error) {
+// summaryPositions are two positions that a summary names.
+type summaryPositions struct {
+	countedTo Position // counts and log include every record up to this
+	window    Position // of the first reading ID to be remembered, 0 if none
+}
+
+// restoreSummary takes the counts and the log of refusals.
+func (k *Keeper) restoreSummary(b []byte) (sum summaryPositions, err error) {
 	k.applied.Store(0)
 	for i := range k.refused {
 		k.refused[i].Store(0)
 	}
 	if len(b) == 0 {
-		return 0, nil
+		return sum, nil
 	}
 	if b[0] != summaryVersion {
-		return 0, fmt.Errorf("checkpoint summary has version %d, not %d", b[0], summaryVersion)
+		return sum, fmt.Errorf("checkpoint summary has version %d, not %d", b[0], summaryVersion)
 	}
 	r := stateReader{rest: b[1:]}
 	for i := range r.uvarint() {
@@ -84,16 +90,16 @@ func (k *Keeper) restoreSummary(b []byte) (Position, error) {
 		}
 	}
 	k.applied.Store(r.uvarint())
-	countedTo := Position(r.uvarint())
+	sum.countedTo, sum.window = Position(r.uvarint()), Position(r.uvarint())
 	var at []Position
 	for last := Position(0); r.err == nil && len(r.rest) > 0; {
 		last += Position(r.uvarint())
 		at = append(at, last)
 	}
 	if r.err != nil {
-		return 0, fmt.Errorf("checkpoint summary: %w", r.err)
+		return sum, fmt.Errorf("checkpoint summary: %w", r.err)
 	}
-	return countedTo, k.ledger.Records(at, func(r *Record) error {
+	return sum, k.ledger.Records(at, func(r *Record) error {
 		k.refusals.add(k.refusalOf(r))
 		return nil
 	})
@@ -101,11 +107,12 @@ func (k *Keeper) restoreSummary(b []byte) (Position, error) {
 
 // replayFrom applies the records after through, and reads those before it that
 // the window of reading IDs covers.
-func (k *Keeper) replayFrom(through, countedTo Position) error {
-	from := Position(1)
-	if size := Position(k.window.capacity); through > size {
-		from, k.window.evicted = through-size+1, true
+func (k *Keeper) replayFrom(through Position, sum summaryPositions) error {
+	from := through + 1
+	if sum.window != 0 {
+		from = min(from, sum.window)
 	}
+	k.window.lost = from - 1
 	k.position.Store(uint64(through))
 	n := 0
 	err := k.ledger.Replay(from, func(r *Record) error {
@@ -116,7 +123,7 @@ func (k *Keeper) replayFrom(through, countedTo Position) error {
 		if r.Position <= through {
 			return nil
 		}
-		k.replay(r, countedTo)
+		k.replay(r, sum.countedTo)
 		k.position.Store(uint64(r.Position))
 		if n++; n%maxGroupRecords == 0 {
 			k.settleReplayed()

@@ -34,12 +34,15 @@ func seeds(n uint64) []uint64 {
 type model struct {
 	quantities map[engine.QuantityID]*modelQuantity
 	refused    int
+	window     int // reading IDs that count for readings with another time
+	named      int // readings with an ID applied so far
 }
 
 type modelQuantity struct {
 	d       engine.Declaration
 	retired bool
 	applied []engine.Reading
+	order   []int // for each applied reading, model.named before it
 }
 
 // decide says what becomes of a reading, by the rules of the interface.
@@ -57,18 +60,33 @@ func (m *model) decide(r engine.Reading, receive engine.Instant) engine.Status {
 		m.refused++
 		return engine.Refused
 	}
-	for _, old := range q.applied {
-		if r.ID == "" || old.ID != r.ID {
-			continue
-		}
+	if old := m.earlier(q, r); old != nil {
 		if old.Value == r.Value && (old.Time == r.Time || untimed || !old.HasTime) {
 			return engine.Duplicate
 		}
 		m.refused++
 		return engine.Refused
 	}
-	q.applied = append(q.applied, r)
+	q.applied, q.order = append(q.applied, r), append(q.order, m.named)
+	if r.ID != "" {
+		m.named++
+	}
 	return engine.Applied
+}
+
+// earlier finds the reading that r's ID stands for: the one of the same time,
+// or else the latest, if it is among the last IDs.
+func (m *model) earlier(q *modelQuantity, r engine.Reading) (found *engine.Reading) {
+	for i := range q.applied {
+		switch old := &q.applied[i]; {
+		case r.ID == "" || old.ID != r.ID:
+		case old.Time == r.Time:
+			return old
+		case m.named-q.order[i] <= m.window:
+			found = old
+		}
+	}
+	return found
 }
 
 // moments folds all readings up to an instant in canonical order.
@@ -360,12 +378,18 @@ func TestKeeperEqualsNaiveModel(t *testing.T) {
 		t.Run(fmt.Sprint("seed=", s), func(t *testing.T) {
 			rng := rand.New(rand.NewPCG(s, 0))
 			j := &journey{
-				rig:   newRig(t, engine.Options{CheckpointRecords: 1 + rng.IntN(200)}),
 				rng:   rng,
-				model: model{quantities: map[engine.QuantityID]*modelQuantity{}},
+				model: model{quantities: map[engine.QuantityID]*modelQuantity{}, window: 1_000_000},
 				now:   start,
 				ids:   []engine.QuantityID{"brine-pump-3.gap", "store/1/temperature", "dosing:residual", "winch"},
 			}
+			o := engine.Options{CheckpointRecords: 1 + rng.IntN(200)}
+			if s%2 == 0 {
+				o.DuplicateWindow = 1 + rng.IntN(300)
+				j.model.window = o.DuplicateWindow
+				o = engine.WithGeneration(o, 130) // a batch has less
+			}
+			j.rig = newRig(t, o)
 			if s%3 == 0 { // so many that a checkpoint is spread over several groups
 				for i := range 60 {
 					j.ids = append(j.ids, engine.QuantityID(fmt.Sprint("store/", i+2)))

@@ -19,7 +19,8 @@ type sweeper struct {
 	rows    []Row    // of the track before next, what is left of them
 	chunk   uint32
 	stored  Position // every applied reading up to this is in complete segments
-	trim    int      // tracks trimmed since the last complete sweep
+	trimmed Position // rows up to this may have been dropped from memory
+	trim    int      // the next track to drop them from
 }
 
 const (
@@ -52,7 +53,10 @@ func (k *Keeper) addCheckpoint(w *work) {
 }
 
 func (s *sweeper) begin(at Position) {
-	*s = sweeper{active: true, segment: s.segment + 1, from: s.stored, through: at, stored: s.stored, trim: s.trim}
+	*s = sweeper{
+		active: true, segment: s.segment + 1, from: s.stored, through: at,
+		stored: s.stored, trimmed: s.trimmed, trim: s.trim,
+	}
 }
 
 // sweepPiece adds checkpoint entries of about that many bytes to g and, at the
@@ -131,11 +135,18 @@ func (t *Track) rowsBetween(from, through Position) []Row {
 func (k *Keeper) landCheckpoint(w *work) {
 	s := &k.sweep
 	if w.Sweep != nil {
-		s.stored, s.trim = w.Sweep.Through, 0
+		s.stored = w.Sweep.Through
+	}
+	if k.partial != nil {
+		return // which was looked up for what is trimmed now
+	}
+	if s.trimmed < s.stored {
+		s.trimmed, s.trim = s.stored, 0
+		k.trimmed.Store(uint64(s.trimmed))
 	}
 	for n := 0; n < trimsPerGroup && s.trim < len(k.byNumber); n++ {
 		if t := k.byNumber[s.trim]; t.basis != nil {
-			t.trim(s.stored)
+			t.trim(s.trimmed)
 		}
 		s.trim++
 	}
@@ -182,6 +193,7 @@ func (k *Keeper) summary() []byte {
 	}
 	b = binary.AppendUvarint(b, k.applied.Load())
 	b = binary.AppendUvarint(b, k.position.Load())
+	b = binary.AppendUvarint(b, uint64(k.window.oldest()))
 	last := Position(0)
 	for _, r := range k.refusals.all() {
 		b = binary.AppendUvarint(b, uint64(r.Position-last))

@@ -110,6 +110,7 @@ func (t *Track) publish(change uint64) {
 		Quantity: t.quantity, Position: t.position, Change: change,
 		ReadingCount: t.fold.count, HasLast: t.fold.count > 0, LastTime: t.fold.lastTime,
 		Rebuilding: t.job != nil,
+		tally:      t.tally,
 		basis:      t.basis, fold: t.fold, foldedTo: t.foldedTo,
 		rows: t.rows, canonical: t.job == nil && t.basis.Declaration.ordered(),
 		marks: t.marks, markFrom: t.markFrom,

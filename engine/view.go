@@ -17,6 +17,7 @@ type View struct {
 	Rebuilding   bool    // the belief is that of an earlier position, until a rebuild is done
 	Change       uint64  // grows with each View of any quantity
 
+	tally     tally     // of all applied readings, also those not in the belief yet
 	basis     *Quantity // declaration on which fold rests
 	fold      fold
 	foldedTo  Position

@@ -242,23 +242,25 @@ func quantity(n engine.QuantityNumber) *engine.Quantity {
 
 func testCheckpoint(t *testing.T, open Store) {
 	l := open(t)
+	rows := Rows(1, 19)
 	appendAll(t, l,
-		&engine.Group{Records: Records(0, 9), Checkpoint: []engine.CheckpointEntry{
+		&engine.Group{Records: Readings(1, rows[:9]), Checkpoint: []engine.CheckpointEntry{
 			{Number: 2, Quantity: quantity(2), State: []byte("old"), Through: 3},
 			{Number: 1, Quantity: quantity(1)},
 		}},
-		&engine.Group{Records: Records(9, 9), Checkpoint: []engine.CheckpointEntry{
+		&engine.Group{Records: Readings(1, rows[9:18]), Checkpoint: []engine.CheckpointEntry{
 			{Number: 2, State: []byte("new"), Through: 9},
-			{Number: 700, Quantity: quantity(700), State: []byte{}, Through: 8},
+			{Number: 3, Quantity: quantity(3), State: []byte{}, Through: 8},
+			rowsEntry(1, 1, 0, rows[:9]),
 		}, Sweep: &engine.Sweep{Segment: 1, Through: 9, Summary: []byte("nine")}},
-		&engine.Group{Records: Records(18, 1), Checkpoint: []engine.CheckpointEntry{
+		&engine.Group{Records: Readings(1, rows[18:]), Checkpoint: []engine.CheckpointEntry{
 			{Number: 1, State: []byte("one"), Through: 18},
 		}})
 	wanted := Snapshot{
 		Entries: []engine.CheckpointEntry{
 			{Number: 1, Quantity: quantity(1), State: []byte("one"), Through: 18},
 			{Number: 2, Quantity: quantity(2), State: []byte("new"), Through: 9},
-			{Number: 700, Quantity: quantity(700), State: []byte{}, Through: 8},
+			{Number: 3, Quantity: quantity(3), State: []byte{}, Through: 8},
 		},
 		Sweep: engine.Sweep{Segment: 1, Through: 9, Summary: []byte("nine")},
 	}
@@ -289,7 +291,11 @@ func testRows(t *testing.T, open Store) {
 	l := open(t)
 	rows := Rows(1, 500)
 	appendAll(t, l,
-		&engine.Group{Records: Records(0, 500)},
+		&engine.Group{Records: Readings(1, rows[:200])},
+		&engine.Group{Records: Readings(3, rows[200:201])},
+		&engine.Group{Records: Readings(2, rows[201:300])},
+		&engine.Group{Records: Readings(3, rows[300:400])},
+		&engine.Group{Records: Readings(1, rows[400:]), Checkpoint: Entries(3, 400)},
 		&engine.Group{Checkpoint: []engine.CheckpointEntry{rowsEntry(1, 1, 0, rows[:128])}},
 		&engine.Group{Checkpoint: []engine.CheckpointEntry{
 			rowsEntry(1, 1, 1, rows[128:200]), rowsEntry(3, 1, 0, rows[200:201]),
@@ -323,7 +329,8 @@ func testInterrupted(t *testing.T, open Store) {
 	l := open(t)
 	rows := Rows(1, 300)
 	appendAll(t, l,
-		&engine.Group{Records: Records(0, 300), Checkpoint: []engine.CheckpointEntry{rowsEntry(1, 1, 0, rows[:10])},
+		&engine.Group{Records: Readings(1, rows[:200]), Checkpoint: Entries(2, 0)},
+		&engine.Group{Records: Readings(2, rows[200:]), Checkpoint: []engine.CheckpointEntry{rowsEntry(1, 1, 0, rows[:10])},
 			Sweep: &engine.Sweep{Segment: 1, Through: 10}},
 		&engine.Group{Checkpoint: []engine.CheckpointEntry{
 			rowsEntry(1, 2, 0, rows[10:100]), rowsEntry(1, 2, 1, rows[100:200]), rowsEntry(2, 2, 0, rows[200:]),
@@ -338,10 +345,9 @@ func testInterrupted(t *testing.T, open Store) {
 
 func testReaderError(t *testing.T, open Store) {
 	l := open(t)
-	appendAll(t, l, &engine.Group{Records: Records(0, 9), Checkpoint: []engine.CheckpointEntry{
-		{Number: 1, Quantity: quantity(1)}, {Number: 2, Quantity: quantity(2)},
+	appendAll(t, l, &engine.Group{Records: Readings(1, Rows(1, 8)), Checkpoint: append(Entries(2, 8),
 		rowsEntry(1, 1, 0, Rows(1, 4)), rowsEntry(1, 1, 1, Rows(5, 4)),
-	}, Sweep: &engine.Sweep{Segment: 1, Through: 9}})
+	), Sweep: &engine.Sweep{Segment: 1, Through: 8}})
 	stop := errors.New("enough")
 	for _, c := range []struct {
 		name string
@@ -369,24 +375,21 @@ func testReaderError(t *testing.T, open Store) {
 
 func testConcurrent(t *testing.T, open Store) {
 	l := open(t)
-	appendAll(t, l, &engine.Group{Records: Records(0, 50)})
+	appendAll(t, l, &engine.Group{Records: Readings(1, Rows(1, 20))})
 	stop := make(chan struct{})
 	var readers sync.WaitGroup
 	for range 2 {
 		readers.Go(func() { readUntil(t, l, stop) })
 	}
 	for i := range 30 {
-		at := engine.Position(50 + 20*i)
-		appendAll(t, l, &engine.Group{Records: Records(int(at), 20),
-			Checkpoint: []engine.CheckpointEntry{
-				{Number: 1, State: []byte("state"), Through: at},
-				rowsEntry(1, uint32(i+1), 0, Rows(at-19, 20)),
-			},
+		at := engine.Position(20 + 20*i)
+		appendAll(t, l, &engine.Group{Records: Readings(1, Rows(at+1, 20)),
+			Checkpoint: append(Entries(1, at), rowsEntry(1, uint32(i+1), 0, Rows(at-19, 20))),
 			Sweep: &engine.Sweep{Segment: uint32(i + 1), Through: at}})
 	}
 	close(stop)
 	readers.Wait()
-	want(t, "rows at the end", Rows(31, 600), AllRows(t, l, 1, engine.MinInstant))
+	want(t, "rows at the end", Rows(1, 600), AllRows(t, l, 1, engine.MinInstant))
 }
 
 // readUntil reads everything and checks that it is whole, until stopped.
@@ -405,7 +408,7 @@ func readUntil(t *testing.T, l engine.Ledger, stop chan struct{}) {
 			next++
 			return nil
 		})
-		from := engine.Position(31)
+		from := engine.Position(1)
 		err = errors.Join(err, l.Rows(1, engine.MinInstant, func(rows []engine.Row) error {
 			if d := cmp.Diff(Rows(from, len(rows)), rows); d != "" {
 				return errors.New(d)
