@@ -1,6 +1,7 @@
 package engine
 
 import (
+	"fmt"
 	"slices"
 	"strings"
 )
@@ -165,7 +166,7 @@ func (k *Keeper) index(arrived []*Track) {
 
 // startJob has the belief of t folded anew by the rebuilder.
 func (k *Keeper) startJob(t *Track) {
-	j := &job{track: t, quantity: t.quantity, number: t.number, recent: t.rows, position: t.position}
+	j := &job{track: t, quantity: t.quantity, number: t.number, recent: t.rows, count: t.tally.count, position: t.position}
 	t.job = j
 	k.jobs = append(k.jobs, j)
 	k.dispatch()
@@ -198,8 +199,12 @@ func (k *Keeper) finishJob(j *job) {
 	if t.job != j {
 		return // superseded by a later declaration
 	}
+	for _, err := range []error{j.fault, j.err} {
+		if err != nil {
+			k.options.OnFault(fmt.Errorf("rebuild the belief of %q: %w", t.id, err))
+		}
+	}
 	if j.err != nil {
-		k.options.OnFault(j.err)
 		return
 	}
 	since := slices.Clone(t.rows[len(j.recent):])

@@ -79,7 +79,7 @@ func (k *Keeper) moment(v *View, at Instant) (*fold, error) {
 	if base := &v.marks[0]; v.canonical && (base.count == 0 || base.lastTime <= at) {
 		return v.recentMoment(d, at), nil
 	}
-	all, err := loadEntries(k.Ledger(), v.Quantity.Number, v.Position, v.rows)
+	all, err := loadEntries(k.Ledger(), v.Quantity.Number, v.Position, v.tally.count, v.rows)
 	if err != nil {
 		return nil, err
 	}

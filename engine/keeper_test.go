@@ -397,3 +397,47 @@ func TestLateBatchLooksStorageUpOnce(t *testing.T) {
 		t.Errorf("%d passes over stored rows, want at most 4", n)
 	}
 }
+
+// leakyLedger has lost a chunk of rows.
+type leakyLedger struct{ engine.Ledger }
+
+func (l leakyLedger) Rows(n engine.QuantityNumber, since engine.Instant, fn func([]engine.Row) error) error {
+	first := true
+	return l.Ledger.Rows(n, since, func(rows []engine.Row) error {
+		if first {
+			first = false
+			return nil
+		}
+		return fn(rows)
+	})
+}
+
+// Where the index lacks readings, a rebuild takes them from the records and
+// says so; a query that needs the index fails and invents nothing.
+func TestRebuildMistrustsTheIndex(t *testing.T) {
+	var faults atomic.Int64
+	ledger := ledgertest.NewMemory(nil)
+	k, err := engine.New(engine.Options{
+		Open:              func() (engine.Ledger, error) { return leakyLedger{ledger}, nil },
+		CheckpointRecords: 100,
+		OnFault:           func(error) { faults.Add(1) },
+	})
+	if err != nil {
+		t.Fatal(err)
+	}
+	r := &rig{t: t, keeper: k}
+	t.Cleanup(func() { k.Close() })
+	r.declare("gap", gap())
+	for i := range 1_000 {
+		r.post(seconds(2e4), reading("gap", seconds(float64(10*i)), 100, ""))
+	}
+	if b, err := k.Belief(context.Background(), "gap", engine.BeliefQuery{HasTime: true, Time: seconds(100)}); err == nil {
+		t.Errorf("a past belief from a leaky index has %d readings and no error", b.ReadingCount)
+	}
+	redeclared := gap()
+	redeclared.Repeatability.StandardDeviation = 2
+	r.declare("gap", redeclared)
+	if b := r.settled("gap", engine.BeliefQuery{Now: start}); b.ReadingCount != 1_000 || faults.Load() == 0 {
+		t.Errorf("%d readings after the rebuild, told of %d faults; want 1000 and at least 1", b.ReadingCount, faults.Load())
+	}
+}

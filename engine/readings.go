@@ -49,25 +49,21 @@ type StoredReading struct {
 // Readings lists readings by time and ledger position; more tells whether
 // there are others. Refusals are those of the bounded log.
 func (k *Keeper) Readings(ctx context.Context, q ReadingsQuery) (page []StoredReading, more bool, err error) {
-	var found []listed
-	if q.Quantity != "" {
+	list := listing{query: &q}
+	if q.Quantity != "" && q.Status != Refused {
 		t, ok := k.find(q.Quantity)
-		if !ok && q.Status != Refused {
+		if !ok {
 			return nil, false, notDeclared("quantity", q.Quantity)
 		}
-		if ok && q.Status != Refused {
-			if found, err = k.appliedReadings(t.View(), &q); err != nil {
-				return nil, false, err
-			}
+		if err := list.applied(ctx, t.View(), k.Ledger()); err != nil {
+			return nil, false, err
 		}
 	}
 	if q.Status != Applied {
-		found = append(found, k.refusedReadings(&q)...)
+		list.refused(*k.refusals.shown.Load())
 	}
-	if err := ctx.Err(); err != nil {
-		return nil, false, err
-	}
-	slices.SortFunc(found, listed.compare)
+	list.prune()
+	found := list.found
 	if more = len(found) > q.Limit; more {
 		found = found[:q.Limit]
 	}
@@ -92,42 +88,54 @@ func (q *ReadingsQuery) since() Instant {
 	return since
 }
 
-func (k *Keeper) appliedReadings(v *View, q *ReadingsQuery) ([]listed, error) {
-	var found []listed
-	add := func(r *Row) {
-		if c := (ReadingCursor{r.Time, r.Position}); q.selects(c) {
-			found = append(found, listed{c, q.Quantity})
-		}
-	}
-	for i := range v.rows {
-		add(&v.rows[i].Row)
-	}
-	// The view was taken before the segments are read, so a row is in one of
-	// them at least; it can be in both.
-	recent := len(found)
-	err := k.Ledger().Rows(v.Quantity.Number, q.since(), func(rows []Row) error {
-		for i := range rows {
-			if rows[i].Position <= v.Position {
-				add(&rows[i])
-			}
-		}
-		return nil
-	})
-	if recent > 0 && len(found) > recent {
-		slices.SortFunc(found, listed.compare)
-		found = slices.Compact(found)
-	}
-	return found, err
+// listing collects the first readings of an answer: it keeps no more than a
+// few pages of what it is shown.
+type listing struct {
+	query *ReadingsQuery
+	found []listed
 }
 
-func (k *Keeper) refusedReadings(q *ReadingsQuery) []listed {
-	var found []listed
-	for _, r := range *k.refusals.shown.Load() {
-		if c := (ReadingCursor{r.Time, r.Position}); (q.Quantity == "" || r.Quantity == q.Quantity) && q.selects(c) {
-			found = append(found, listed{c, r.Quantity})
+func (l *listing) add(at Instant, position Position, id QuantityID) {
+	c := ReadingCursor{at, position}
+	if !l.query.selects(c) {
+		return
+	}
+	if l.found = append(l.found, listed{c, id}); len(l.found) > 4*l.query.Limit+1_000 {
+		l.prune()
+	}
+}
+
+// prune leaves the first readings, one more than the answer has, in order. A
+// reading can be shown twice.
+func (l *listing) prune() {
+	slices.SortFunc(l.found, listed.compare)
+	l.found = slices.Compact(l.found)
+	l.found = l.found[:min(len(l.found), l.query.Limit+1)]
+}
+
+// applied adds the applied readings of a view. The view was taken before the
+// segments are read, so each reading is in one of them at least.
+func (l *listing) applied(ctx context.Context, v *View, from Ledger) error {
+	for i := range v.rows {
+		l.add(v.rows[i].Time, v.rows[i].Position, v.Quantity.ID)
+	}
+	return from.Rows(v.Quantity.Number, l.query.since(), func(rows []Row) error {
+		for i := range rows {
+			if rows[i].Position <= v.Position {
+				l.add(rows[i].Time, rows[i].Position, v.Quantity.ID)
+			}
+		}
+		return ctx.Err()
+	})
+}
+
+// refused adds what the log of refusals has.
+func (l *listing) refused(log []refusal) {
+	for i := range log {
+		if r := &log[i]; l.query.Quantity == "" || r.Quantity == l.query.Quantity {
+			l.add(r.Time, r.Position, r.Quantity)
 		}
 	}
-	return found
 }
 
 func (k *Keeper) storedReadings(found []listed) ([]StoredReading, error) {

@@ -1,6 +1,7 @@
 package engine
 
 import (
+	"fmt"
 	"slices"
 )
 
@@ -11,21 +12,25 @@ type job struct {
 	quantity *Quantity // the declaration to fold under
 	number   QuantityNumber
 	recent   []entry // the track's rows when the job began
+	count    int     // readings applied by then
 	position Position
 
 	fold  fold
 	last  entry
 	rows  []entry // canonical if ordered, else the recent ones
 	marks []fold
+	fault error // of the index, which the ledger made good
 	err   error
 }
 
 // run does the work.
 func (j *job) run(l Ledger) {
-	all, err := loadEntries(l, j.number, j.position, j.recent)
+	all, err := loadEntries(l, j.number, j.position, j.count, j.recent)
 	if err != nil {
-		j.err = err
-		return
+		j.fault = err
+		if all, j.err = replayEntries(l, j.number, j.position); j.err != nil {
+			return
+		}
 	}
 	var t Track
 	t.basis = j.quantity
@@ -45,9 +50,10 @@ func (j *job) run(l Ledger) {
 }
 
 // loadEntries returns, in canonical order, the readings of a quantity up to a
-// ledger position: those in the ledger's complete segments, which may go
-// beyond it, and the recent ones, some of which may be in segments too.
-func loadEntries(l Ledger, number QuantityNumber, through Position, recent []entry) ([]entry, error) {
+// ledger position, of which there are count: those in the ledger's complete
+// segments, which may go beyond it, and the recent ones, some of which may be
+// in segments too.
+func loadEntries(l Ledger, number QuantityNumber, through Position, count int, recent []entry) ([]entry, error) {
 	all := slices.Clone(recent)
 	known := make(map[Position]struct{}, len(recent))
 	for i := range recent {
@@ -64,8 +70,25 @@ func loadEntries(l Ledger, number QuantityNumber, through Position, recent []ent
 	if err != nil {
 		return nil, err
 	}
+	if len(all) != count {
+		return nil, fmt.Errorf("the index of quantity number %d has %d readings up to position %d, not %d", number, len(all), through, count)
+	}
 	slices.SortFunc(all, entry.compare)
 	return all, orderTies(l, all)
+}
+
+// replayEntries is loadEntries from the records themselves, for when the index
+// can't be relied on: it reads the whole ledger.
+func replayEntries(l Ledger, number QuantityNumber, through Position) ([]entry, error) {
+	var all []entry
+	err := l.Replay(1, func(r *Record) error {
+		if r.Kind == KindReading && r.Number == number && r.Position <= through {
+			all = append(all, entry{Row: rowOf(r), ID: r.Reading.ID})
+		}
+		return nil
+	})
+	slices.SortFunc(all, entry.compare)
+	return all, err
 }
 
 // orderTies completes the canonical order of entries sorted without their IDs:
