@@ -51,6 +51,7 @@ type chain struct {
 	groups  int // complete ones
 
 	record engine.Record
+	each   func(*engine.Record) // is given the records, if not nil
 }
 
 func newChain() *chain { return &chain{next: 1, sum: sha256.New()} }
@@ -78,6 +79,9 @@ func (c *chain) add(key, value []byte) error {
 		}
 		if !more {
 			break
+		}
+		if c.each != nil {
+			c.each(&c.record)
 		}
 	}
 	c.next = chunk.end()

@@ -45,7 +45,11 @@ func rowsKey(segment uint32, n engine.QuantityNumber, chunk uint32) []byte {
 	return binary.BigEndian.AppendUint32(b, chunk)
 }
 
-const rowsKeyBytes = 12
+// Lengths of keys.
+const (
+	numberKeyBytes = 4
+	rowsKeyBytes   = 12
+)
 
 // putCheckpoint writes the checkpoint of a group and returns its bytes.
 func (l *Ledger) putCheckpoint(tx *bolt.Tx, g *engine.Group) (int, error) {
@@ -143,14 +147,16 @@ func dropStale(tx *bolt.Tx, h *head) error {
 // checkpointSlice is how many quantities are read in one transaction.
 const checkpointSlice = 1_000
 
-// Checkpoint implements engine.Ledger.
+// Checkpoint implements engine.Ledger. Checksums tell that what is there is
+// what was written; that nothing is missing is seen from quantity and state,
+// which a sweep first writes together, number by number.
 func (l *Ledger) Checkpoint(fn func(engine.CheckpointEntry) error) (engine.Sweep, error) {
 	var sweep engine.Sweep
 	err := l.view(func(tx *bolt.Tx) (err error) {
 		sweep, _, err = readSweep(tx)
 		return err
 	})
-	for next := uint64(0); err == nil && next <= maxNumber; {
+	for next := uint64(1); err == nil && next <= maxNumber; {
 		var entries []engine.CheckpointEntry
 		if err = l.view(func(tx *bolt.Tx) (err error) {
 			entries, next, err = readEntries(tx, engine.QuantityNumber(next))
@@ -172,12 +178,13 @@ func (l *Ledger) Checkpoint(fn func(engine.CheckpointEntry) error) (engine.Sweep
 
 const maxNumber = 1<<32 - 1
 
-// readEntries reads the next quantities from a number on, and the number at
-// which to go on; beyond maxNumber at the end.
+// readEntries reads the next quantities, which are to be there from a number
+// on, and the number at which to go on; beyond maxNumber at the end.
 func readEntries(tx *bolt.Tx, from engine.QuantityNumber) (entries []engine.CheckpointEntry, next uint64, err error) {
 	quantities, states := tx.Bucket(quantitiesBucket).Cursor(), tx.Bucket(statesBucket).Cursor()
 	qk, qv := quantities.Seek(numberKey(from))
 	sk, sv := states.Seek(numberKey(from))
+	next = uint64(from)
 	for len(entries) < checkpointSlice && (qk != nil || sk != nil) {
 		key := qk
 		if qk == nil || sk != nil && bytes.Compare(sk, qk) < 0 {
@@ -185,6 +192,9 @@ func readEntries(tx *bolt.Tx, from engine.QuantityNumber) (entries []engine.Chec
 		}
 		e := engine.CheckpointEntry{Number: engine.QuantityNumber(binary.BigEndian.Uint32(key))}
 		hasQuantity, hasState := bytes.Equal(key, qk), bytes.Equal(key, sk)
+		if err := checkEntry(engine.QuantityNumber(next), e.Number, hasQuantity, hasState); err != nil {
+			return nil, 0, err
+		}
 		if hasQuantity {
 			err = readQuantity(qk, qv, &e)
 			qk, qv = quantities.Next()
@@ -203,6 +213,20 @@ func readEntries(tx *bolt.Tx, from engine.QuantityNumber) (entries []engine.Chec
 		next = maxNumber + 1
 	}
 	return entries, next, nil
+}
+
+// checkEntry tells what a checkpoint lacks at or before the entry of a number,
+// where that of want comes next.
+func checkEntry(want, number engine.QuantityNumber, hasQuantity, hasState bool) error {
+	switch {
+	case number != want:
+		return fmt.Errorf("%w: the checkpoint of quantity %d is missing, that of %d follows", ErrDamaged, want, number)
+	case !hasQuantity:
+		return fmt.Errorf("%w: the checkpoint of quantity %d has a state but no declaration", ErrDamaged, number)
+	case !hasState:
+		return fmt.Errorf("%w: the checkpoint of quantity %d has a declaration but no state", ErrDamaged, number)
+	}
+	return nil
 }
 
 func readQuantity(key, value []byte, e *engine.CheckpointEntry) error {

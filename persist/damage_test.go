@@ -33,13 +33,17 @@ func written(t *testing.T) (image []byte, records []engine.Record) {
 	t.Helper()
 	path := filepath.Join(t.TempDir(), persist.FileName)
 	l := openAt(t, path)
-	for i, n := range []int{1, 60, 1, 30} {
-		g := &engine.Group{Records: ledgertest.Records(100*i, n)}
+	rows := ledgertest.Rows(1, 40)
+	for i, group := range [][]engine.Record{
+		ledgertest.Readings(1, rows[:1]),
+		append(ledgertest.Readings(1, rows[1:]), ledgertest.Records(100, 21)...),
+		ledgertest.Records(200, 1),
+		ledgertest.Records(300, 30),
+	} {
+		g := &engine.Group{Records: group}
 		if i == 2 {
-			g.Checkpoint = []engine.CheckpointEntry{
-				{Number: 1, State: []byte("state"), Through: 60, Segment: 1, Rows: ledgertest.Rows(1, 40)},
-			}
-			g.Sweep = &engine.Sweep{Segment: 1, Through: 61, Summary: []byte("summary")}
+			g.Checkpoint = append(ledgertest.Entries(1, 60), engine.CheckpointEntry{Number: 1, Segment: 1, Rows: rows})
+			g.Sweep = &engine.Sweep{Segment: 1, Through: 40, Summary: []byte("summary")}
 		}
 		if err := l.Append(g); err != nil {
 			t.Fatal(err)

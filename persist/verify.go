@@ -17,7 +17,7 @@ const maxReported = 1_000
 
 // Verify examines a whole ledger that nobody has open for writing: the structure
 // of pages, the checksum of every record, positions, commit times, the hash of
-// every group, and the checkpoint. It writes a line for each damage it finds
+// every group, the checkpoint, and whether it lacks anything. It writes a line for each damage it finds
 // and a summary to w; its error is the first damage, or why the file can't be
 // examined.
 func Verify(path string, w io.Writer) error {
@@ -26,7 +26,8 @@ func Verify(path string, w io.Writer) error {
 		return fmt.Errorf("verify %s: %w", path, err)
 	}
 	defer db.Close()
-	v := verifier{w: w, buckets: map[string]bool{}, chain: newChain(), head: &head{}}
+	v := verifier{w: w, buckets: map[string]bool{}, chain: newChain(), head: &head{}, inventory: inventory{}}
+	v.chain.each = v.record
 	if err := v.run(file, db.Info().PageSize); err != nil {
 		v.report(err)
 	}
@@ -50,6 +51,9 @@ type verifier struct {
 	damaged int  // groups
 
 	quantities, states, rows int
+
+	inventory inventory
+	scratch   []engine.Row
 }
 
 // report writes a damage and keeps the first.
@@ -88,6 +92,9 @@ func (v *verifier) run(file *os.File, pageSize int) error {
 	if !v.swept && v.head.swept {
 		v.report(fmt.Errorf("%w: the sweep is missing", ErrDamaged))
 	}
+	if v.first == nil { // else it is known why something is missing
+		v.inventory.check(v.report)
+	}
 	if v.reported > maxReported {
 		fmt.Fprintf(v.w, "and %d more\n", v.reported-maxReported)
 	}
@@ -103,28 +110,32 @@ func (v *verifier) element(bucket string, key, value []byte) {
 		v.buckets[bucket] = true
 		return
 	}
-	var err error
+	if err := v.value(bucket, key, value); err != nil {
+		v.report(fmt.Errorf("%w: %s, key %x: %w", ErrDamaged, bucket, key, err))
+	}
+}
+
+var errKey = errors.New("it is no key of this version")
+
+func (v *verifier) value(bucket string, key, value []byte) (err error) {
 	switch bucket {
 	case string(headBucket):
-		if v.head, err = parseHead(value); string(key) != string(headKey) {
-			v.head, err = &head{}, errors.New("it is no key of this version")
+		if string(key) != string(headKey) {
+			return errKey
 		}
+		v.head, err = parseHead(value)
 	case string(ledgerBucket):
 		v.ledger(key, value)
 	case string(metaBucket):
-		err = v.metaKey(key, value)
+		return v.metaKey(key, value)
 	case string(quantitiesBucket):
-		v.quantities++
-		err = readQuantity(key, value, new(engine.CheckpointEntry))
+		return v.quantity(key, value)
 	case string(segmentsBucket):
-		err = v.segment(key, value)
+		return v.segment(key, value)
 	case string(statesBucket):
-		v.states++
-		err = v.state(key, value)
+		return v.state(key, value)
 	}
-	if err != nil {
-		v.report(fmt.Errorf("%w: %s, key %x: %w", ErrDamaged, bucket, key, err))
-	}
+	return err
 }
 
 // ledger examines a chunk. After damage it goes on with the next group, whose
@@ -188,7 +199,21 @@ func (v *verifier) includes(p engine.Position) error {
 	return nil
 }
 
+func (v *verifier) quantity(key, value []byte) error {
+	v.quantities++
+	if len(key) != numberKeyBytes {
+		return errKey
+	}
+	v.inventory.of(numberOf(key)).quantity = true
+	return readQuantity(key, value, new(engine.CheckpointEntry))
+}
+
 func (v *verifier) state(key, value []byte) error {
+	v.states++
+	if len(key) != numberKeyBytes {
+		return errKey
+	}
+	v.inventory.of(numberOf(key)).state = true
 	var e engine.CheckpointEntry
 	if err := readState(key, value, &e); err != nil {
 		return err
@@ -197,11 +222,37 @@ func (v *verifier) state(key, value []byte) error {
 }
 
 func (v *verifier) segment(key, value []byte) error {
+	if len(key) != rowsKeyBytes {
+		return errKey
+	}
 	chunk, err := parseRows(key, value)
 	if err != nil {
 		return err
 	}
 	v.rows += chunk.count
-	_, err = chunk.appendTo(nil)
-	return err
+	v.scratch, err = chunk.appendTo(v.scratch[:0])
+	if err != nil || !v.head.complete(binary.BigEndian.Uint32(key)) {
+		return err // rows of an interrupted sweep aren't read by anybody
+	}
+	s := v.inventory.of(numberOf(key[4:]))
+	for i := range v.scratch {
+		s.rows.add(&v.scratch[i])
+	}
+	return nil
+}
+
+// record notes what the checkpoint is to hold of a record.
+func (v *verifier) record(r *engine.Record) {
+	if !v.head.swept || r.Position > v.head.through || r.Kind == engine.KindRefusal {
+		return
+	}
+	s := v.inventory.of(r.Number)
+	s.recorded = true
+	if r.Kind == engine.KindReading {
+		s.readings.add(&engine.Row{
+			Time: r.Reading.Time, Value: r.Reading.Value, Position: r.Position,
+			HasUncertainty: r.Reading.HasUncertainty, Uncertainty: r.Reading.RandomStandardUncertainty,
+			HasID: r.Reading.ID != "",
+		})
+	}
 }
