@@ -36,15 +36,14 @@ func buckets() [][]byte {
 // magic begins the value of formatKey; the version follows in four bytes.
 const magic = "leadline ledger\x00"
 
-// temporarySuffix is of files that take a ledger's name once they are complete.
-const temporarySuffix = ".new-*"
-
 // lockWait is how long Open waits for another process to let go of the file.
 const lockWait = time.Second
 
 // ensure creates the file if there is none: under another name, synced, and
 // then linked to its own, so that a power loss leaves either no ledger or a
-// whole one, and no ledger of another process is overwritten.
+// whole one, and no ledger of another process is overwritten. Another process
+// that creates the file meanwhile may take the unfinished one for a leftover.
+// The new name is durable only once the directory is synced.
 func ensure(path string) error {
 	info, err := os.Stat(path)
 	if err == nil && info.Size() == 0 {
@@ -54,17 +53,16 @@ func ensure(path string) error {
 		return err
 	}
 	temporary, err := createTemporary(path)
-	if err != nil {
+	if err == nil {
+		err = errors.Join(os.Link(temporary, path), os.Remove(temporary))
+	}
+	if err == nil {
+		return nil
+	}
+	if _, absent := os.Stat(path); absent != nil {
 		return err
 	}
-	defer os.Remove(temporary)
-	if err := os.Link(temporary, path); err != nil && !errors.Is(err, fs.ErrExist) {
-		return err
-	}
-	if err := os.Remove(temporary); err != nil {
-		return err
-	}
-	return syncDirectory(path)
+	return nil
 }
 
 // createTemporary writes an empty ledger beside path and returns its name.
@@ -98,14 +96,6 @@ func format(path string) error {
 		return tx.Bucket(metaBucket).Put(formatKey, binary.BigEndian.AppendUint32([]byte(magic), formatVersion))
 	})
 	return errors.Join(err, db.Close())
-}
-
-func syncDirectory(path string) error {
-	d, err := os.Open(filepath.Dir(path))
-	if err != nil {
-		return err
-	}
-	return errors.Join(d.Sync(), d.Close())
 }
 
 // openFile opens the bbolt file, which must exist. bbolt can panic on a damaged

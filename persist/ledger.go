@@ -154,6 +154,14 @@ func (l *Ledger) open() error {
 	if err := checkBranches(l.file, m); err != nil {
 		return err
 	}
+	if err := l.recover(); err != nil {
+		return err
+	}
+	return settleDirectory(l.options.Path, l.file)
+}
+
+// recover finds out where the ledger ends.
+func (l *Ledger) recover() error {
 	return l.view(func(tx *bolt.Tx) error {
 		if err := checkFormat(tx); err != nil {
 			return err
