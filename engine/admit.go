@@ -92,14 +92,14 @@ func (k *Keeper) objectionToTime(a *rules, r *Reading, receive Instant) (Reason,
 // window, from the rows in memory, or from the lookup that was made before r
 // came to the keeper.
 func (k *Keeper) earlier(r *Reading, at resolved) *seenID {
-	e := k.window.find(at.hash)
+	e, recent := k.window.find(at.hash)
 	if e != nil && e.time == r.Time {
 		return e
 	}
 	if older := k.exact(r, at); older != nil {
 		return older
 	}
-	if e != nil && k.window.recent(e) {
+	if recent {
 		return e
 	}
 	return nil

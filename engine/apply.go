@@ -2,6 +2,7 @@ package engine
 
 import (
 	"fmt"
+	"math"
 	"slices"
 	"strings"
 )
@@ -66,9 +67,9 @@ func (k *Keeper) applyDeclaration(t *Track, r *Record) {
 func (k *Keeper) rebase(t *Track) {
 	switch {
 	case t.basis == nil:
-		t.basis = t.quantity
+		t.rest(t.quantity)
 	case t.basis.Declaration.SameBelief(t.quantity.Declaration):
-		t.basis = t.quantity
+		t.rest(t.quantity)
 		if t.job != nil && !t.job.quantity.Declaration.SameBelief(t.quantity.Declaration) {
 			k.startJob(t)
 		}
@@ -86,7 +87,7 @@ func (k *Keeper) rebase(t *Track) {
 func (t *Track) refold() {
 	rows := slices.Clone(t.rows)
 	slices.SortFunc(rows, entry.compare)
-	t.basis = t.quantity
+	t.rest(t.quantity)
 	t.reset()
 	t.fresh = rows
 	t.settle(len(rows))
@@ -96,6 +97,7 @@ func (t *Track) refold() {
 func (k *Keeper) trackOf(n QuantityNumber, id QuantityID) *Track {
 	if int(n) > len(k.byNumber) {
 		t := &Track{id: id, number: n}
+		t.latest.Store(math.MinInt64)
 		k.byNumber = append(k.byNumber, t)
 		k.directory.Load().add(t)
 	}
@@ -209,7 +211,8 @@ func (k *Keeper) finishJob(j *job) {
 	}
 	since := slices.Clone(t.rows[len(j.recent):])
 	t.job = nil
-	t.basis, t.fold, t.foldedTo = t.quantity, j.fold, j.position
+	t.rest(t.quantity)
+	t.fold, t.foldedTo = j.fold, j.position
 	t.rows, t.marks, t.markFrom = j.rows, j.marks, 0
 	t.last, t.behind = j.last, entry{}
 	t.trim(k.sweep.trimmed)

@@ -124,6 +124,9 @@ func (k *Keeper) decide(w *work, c *command) {
 // decideBatch decides on readings until the group is full.
 func (k *Keeper) decideBatch(w *work, c *command) {
 	b := &c.batch
+	if len(c.found) > 1 {
+		k.warmed += k.window.warm(c.found[c.next:])
+	}
 	for c.next < len(b.Readings) && !w.full() {
 		r := &b.Readings[c.next]
 		var origin Record
@@ -139,7 +142,7 @@ func (k *Keeper) decideBatch(w *work, c *command) {
 		}
 		at := c.found[c.next]
 		if now := k.directory.Load(); at.track == nil || c.within != now {
-			at.track = now.find(r.Quantity) // declared since, or the ledger was opened anew
+			at.place = now.place(r.Quantity) // declared since, or the ledger was opened anew
 			at.hashID(r, &k.seeds)
 		}
 		res, write := k.admit(r, at, b.Receive)
@@ -156,7 +159,8 @@ func (k *Keeper) decideBatch(w *work, c *command) {
 // record adds the record of a reading that was decided on.
 func (k *Keeper) record(w *work, t *Track, r *Reading, res *Result, b *Batch, origin *Record) Position {
 	k.decidedTo++
-	rec := Record{
+	rec := w.next(len(r.ID) + len(r.Quantity) + len(res.Detail))
+	*rec = Record{
 		Kind: KindReading, ReceiveTime: b.Receive, Principal: b.Principal, RequestID: b.RequestID,
 		Reading: *r, Reason: res.Reason, Detail: res.Detail, PutThrough: origin.Position,
 	}
@@ -169,10 +173,9 @@ func (k *Keeper) record(w *work, t *Track, r *Reading, res *Result, b *Batch, or
 	if res.Status == Refused {
 		rec.Kind = KindRefusal
 	} else {
-		row := rowOf(&rec)
+		row := rowOf(rec)
 		t.decidedTally.add(&row)
 	}
-	w.add(rec)
 	return k.decidedTo
 }
 

@@ -185,11 +185,3 @@ func (d *Declaration) noise() posterior.Noise {
 	}
 	return posterior.Noise{Absent: true}
 }
-
-// walkVariance returns the variance that a random walk gains in a time given
-// in nanoseconds: d^2 h / T (design: Var[theta(t+h) - theta(t)]; Harvey 1989,
-// Forecasting, Structural Time Series Models, 9.1, from memory).
-func (d *Declaration) walkVariance(nanoseconds float64) float64 {
-	s := d.Dynamics.StandardDeviation
-	return s * s * (nanoseconds / float64(d.Dynamics.Per))
-}

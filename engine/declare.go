@@ -53,6 +53,9 @@ func (k *Keeper) Declare(ctx context.Context, id QuantityID, d Declaration, c Co
 	return q, created, err
 }
 
+// declarationBytes is what a declaration takes about.
+const declarationBytes = 200
+
 // declare records a declaration.
 func (k *Keeper) declare(w *work, t *Track, id QuantityID, d Declaration, receive Instant) Quantity {
 	q := &Quantity{ID: id, Declaration: d, Revision: 1, CreateTime: receive, UpdateTime: receive}
@@ -64,10 +67,10 @@ func (k *Keeper) declare(w *work, t *Track, id QuantityID, d Declaration, receiv
 	q.Number = t.number
 	t.decide(q)
 	k.decidedTo++
-	w.add(Record{
+	*w.next(declarationBytes) = Record{
 		Kind: KindDeclaration, ReceiveTime: receive, Number: q.Number, Revision: q.Revision,
 		Quantity: id, Declaration: &q.Declaration,
-	})
+	}
 	return *q
 }
 
@@ -108,7 +111,7 @@ func (k *Keeper) Retire(ctx context.Context, id QuantityID, c Condition, receive
 			retired.Retired, retired.RetireTime, retired.UpdateTime = true, receive, receive
 			t.decide(&retired)
 			k.decidedTo++
-			w.add(Record{Kind: KindRetirement, ReceiveTime: receive, Number: t.number, Revision: retired.Revision})
+			*w.next(0) = Record{Kind: KindRetirement, ReceiveTime: receive, Number: t.number, Revision: retired.Revision}
 		}
 		q = *t.decided
 		return nil

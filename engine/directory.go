@@ -7,10 +7,18 @@ import "sync"
 // add a quantity that is new.
 type directory struct {
 	mu   sync.RWMutex // guards byID
-	byID map[QuantityID]*Track
+	byID map[QuantityID]place
 }
 
-func (d *directory) find(id QuantityID) *Track {
+// place is a track with its number, which is at hand before the track is.
+type place struct {
+	track  *Track
+	number QuantityNumber
+}
+
+func (d *directory) find(id QuantityID) *Track { return d.place(id).track }
+
+func (d *directory) place(id QuantityID) place {
 	d.mu.RLock()
 	defer d.mu.RUnlock()
 	return d.byID[id]
@@ -19,13 +27,13 @@ func (d *directory) find(id QuantityID) *Track {
 func (d *directory) add(t *Track) {
 	d.mu.Lock()
 	defer d.mu.Unlock()
-	d.byID[t.id] = t
+	d.byID[t.id] = place{t, t.number}
 }
 
 // resolved is what a caller's goroutine finds out of a reading before the
 // keeper decides on it: most of the time that takes is spent waiting for memory.
 type resolved struct {
-	track *Track // nil: not known then
+	place        // no track: not known then
 	hash  idHash // of the ID, if there is a track and an ID
 	// stored is the reading in the ledger with the same quantity, ID and time,
 	// if it was looked for and found.
@@ -37,7 +45,7 @@ func (d *directory) resolve(readings []Reading, seeds *idSeeds) []resolved {
 	all := make([]resolved, len(readings))
 	d.mu.RLock()
 	for i := range readings {
-		all[i].track = d.byID[readings[i].Quantity]
+		all[i].place = d.byID[readings[i].Quantity]
 	}
 	d.mu.RUnlock()
 	for i := range readings {
@@ -49,6 +57,6 @@ func (d *directory) resolve(readings []Reading, seeds *idSeeds) []resolved {
 // hashID fills in the hash.
 func (f *resolved) hashID(r *Reading, seeds *idSeeds) {
 	if f.track != nil && r.ID != "" {
-		f.hash = seeds.hash(f.track.number, r.ID)
+		f.hash = seeds.hash(f.number, r.ID)
 	}
 }

@@ -30,6 +30,7 @@ type window struct {
 type generation struct {
 	slots   []uint64
 	entries []seenID
+	first   uint64 // IDs that came before the first entry
 }
 
 type idHash [2]uint64
@@ -41,8 +42,7 @@ type seenID struct {
 	value    float64
 	position Position
 	receive  Instant
-	sequence uint64 // how many IDs came before
-	untimed  bool   // its time was given by the service
+	untimed  bool // its time was given by the service
 }
 
 // windowAge is how long an ID counts for readings with another time, in
@@ -76,17 +76,21 @@ func (s *idSeeds) hash(number QuantityNumber, id ReadingID) idHash {
 	}
 }
 
-// find returns the reading that h stands for, nil if it isn't remembered.
-func (w *window) find(h idHash) *seenID {
-	if e := w.current.find(h); e != nil {
-		return e
+// find returns the reading that h stands for, nil if it isn't remembered, and
+// whether it counts for readings with another time.
+func (w *window) find(h idHash) (e *seenID, recent bool) {
+	g := &w.current
+	i := g.find(h)
+	if i < 0 {
+		g = &w.previous
+		i = g.find(h)
 	}
-	return w.previous.find(h)
-}
-
-// recent tells whether e counts for readings with another time.
-func (w *window) recent(e *seenID) bool {
-	return w.added-e.sequence <= uint64(w.capacity) && w.newest.Sub(e.receive) <= windowAge
+	if i < 0 {
+		return nil, false
+	}
+	e = &g.entries[i]
+	age := w.added - g.first - uint64(i)
+	return e, age <= uint64(w.capacity) && w.newest.Sub(e.receive) <= windowAge
 }
 
 // complete tells whether the window holds every ID and still will after n more.
@@ -120,23 +124,24 @@ func (w *window) add(e seenID) {
 		w.current, w.previous = w.previous, w.current
 		clear(w.current.slots)
 		w.current.entries = w.current.entries[:0]
+		w.current.first = w.added
 	}
-	e.sequence = w.added
 	w.added++
 	w.newest = max(w.newest, e.receive)
 	w.current.add(e)
 }
 
-func (g *generation) find(h idHash) *seenID {
+// find returns the index of the entry of h, -1 if there is none.
+func (g *generation) find(h idHash) int {
 	mask := uint64(len(g.slots) - 1)
 	for i := h[0] & mask; g.slots[i] != 0; i = (i + 1) & mask {
 		if slot := g.slots[i]; slot>>32 == h[1]>>32 {
-			if e := &g.entries[uint32(slot)-1]; e.hash == h {
-				return e
+			if n := int(uint32(slot)) - 1; g.entries[n].hash == h {
+				return n
 			}
 		}
 	}
-	return nil
+	return -1
 }
 
 func (g *generation) add(e seenID) {

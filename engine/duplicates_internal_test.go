@@ -26,12 +26,12 @@ func TestWindowRemembersTheLast(t *testing.T) {
 			all = append(all, added{h, receive})
 			for range 5 {
 				j := 1 + rng.IntN(len(all)-1)
-				e := w.find(all[j].hash)
+				e, got := w.find(all[j].hash)
 				if held := Position(j) > w.lost; (e != nil) != held || e != nil && e.position != Position(j) {
 					t.Fatalf("capacity %d: ID %d of %d is held: %v, want %v", capacity, j, i, e != nil, held)
 				}
 				recent := i-j < capacity && receive-all[j].receive <= windowAge
-				if e == nil && recent || e != nil && w.recent(e) != recent {
+				if got != recent {
 					t.Fatalf("capacity %d: ID %d of %d is recent: %v, want %v", capacity, j, i, !recent, recent)
 				}
 			}

@@ -83,12 +83,13 @@ func (k *Keeper) moment(v *View, at Instant) (*fold, error) {
 	if err != nil {
 		return nil, err
 	}
+	l := lawOf(d)
 	var f fold
 	for i := range all {
 		if all[i].Time > at {
 			break
 		}
-		f.add(d, &all[i].Row)
+		f.add(&l, &all[i].Row)
 	}
 	return &f, nil
 }
@@ -99,9 +100,9 @@ func (v *View) recentMoment(d *Declaration, at Instant) *fold {
 	for mark+1 < len(v.marks) && v.marks[mark+1].lastTime <= at {
 		mark++
 	}
-	f := v.marks[mark]
+	l, f := lawOf(d), v.marks[mark]
 	for i := v.markFrom + mark*markSpacing; i < len(v.rows) && v.rows[i].Time <= at; i++ {
-		f.add(d, &v.rows[i].Row)
+		f.add(&l, &v.rows[i].Row)
 	}
 	return &f
 }

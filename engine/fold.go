@@ -39,13 +39,39 @@ type fold struct {
 // where it doesn't, readings are added as they arrive.
 func (d *Declaration) ordered() bool { return d.Dynamics.Form == DynamicsRandomWalk }
 
+// law is what folding a reading needs of a declaration, in one place beside the
+// fold.
+type law struct {
+	declaration *Declaration
+	ordered     bool
+	known       bool    // r is
+	r           float64 // where it is known
+	step        float64 // standard deviation that a walk gains in per
+	per         float64 // nanoseconds
+}
+
+func lawOf(d *Declaration) law {
+	return law{
+		declaration: d, ordered: d.ordered(),
+		known: d.Repeatability.Form == RepeatabilityKnown, r: d.Repeatability.StandardDeviation,
+		step: d.Dynamics.StandardDeviation, per: float64(d.Dynamics.Per),
+	}
+}
+
+// variance returns what a random walk gains in a time given in nanoseconds:
+// d^2 h / T (Harvey 1989, Forecasting, Structural Time Series Models, 9.1, from
+// memory).
+func (l *law) variance(nanoseconds float64) float64 {
+	return l.step * l.step * (nanoseconds / l.per)
+}
+
 // add folds one reading in; under ordered dynamics e must not precede any
 // reading already in f in canonical order.
-func (f *fold) add(d *Declaration, e *Row) {
-	if d.ordered() {
-		f.addWalk(d, e)
+func (f *fold) add(l *law, e *Row) {
+	if l.ordered {
+		f.addWalk(l, e)
 	} else {
-		f.addConstant(d, e)
+		f.addConstant(l, e)
 	}
 	if f.count == 0 || e.Time > f.lastTime {
 		f.lastTime = e.Time
@@ -53,27 +79,27 @@ func (f *fold) add(d *Declaration, e *Row) {
 	f.count++
 }
 
-func (f *fold) addConstant(d *Declaration, e *Row) {
+func (f *fold) addConstant(l *law, e *Row) {
 	switch {
 	case e.HasUncertainty:
 		f.constant.AddKnown(e.Value, e.Uncertainty)
-	case d.Repeatability.Form == RepeatabilityKnown:
-		f.constant.AddKnown(e.Value, d.Repeatability.StandardDeviation)
+	case l.known:
+		f.constant.AddKnown(e.Value, l.r)
 	default:
 		f.constant.AddLearned(e.Value)
 	}
 }
 
-func (f *fold) addWalk(d *Declaration, e *Row) {
+func (f *fold) addWalk(l *law, e *Row) {
 	from := f.lastTime
 	if f.count == 0 {
-		f.walk = posterior.NewWalk(d.levelPrior())
-		if from = e.Time; d.Prior.HasTime {
-			from = d.Prior.Time
+		f.walk = posterior.NewWalk(l.declaration.levelPrior())
+		if from = e.Time; l.declaration.Prior.HasTime {
+			from = l.declaration.Prior.Time
 		}
 	}
-	f.walk.Predict(d.walkVariance(e.Time.Sub(from)))
-	u := d.Repeatability.StandardDeviation
+	f.walk.Predict(l.variance(e.Time.Sub(from)))
+	u := l.r
 	if e.HasUncertainty {
 		u = e.Uncertainty
 	}
@@ -130,6 +156,7 @@ func (f *fold) walkAt(d *Declaration, at Instant) (posterior.Walk, bool) {
 	if at < from {
 		return w, false
 	}
-	w.Predict(d.walkVariance(at.Sub(from)))
+	l := lawOf(d)
+	w.Predict(l.variance(at.Sub(from)))
 	return w, true
 }

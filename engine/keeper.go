@@ -94,6 +94,7 @@ type Keeper struct {
 	working   bool     // the rebuilder has a job
 	sweep     sweeper
 	failed    error
+	warmed    uint64 // no number of interest, see warm
 
 	// Written by the keeper's goroutine, read by all.
 	directory  atomic.Pointer[directory]
@@ -203,9 +204,11 @@ func (w *work) reset() {
 // recordBytes is what a record takes about, without its texts.
 const recordBytes = 40
 
-func (w *work) add(r Record) {
-	w.Records = append(w.Records, r)
-	w.bytes += recordBytes + len(r.Reading.ID) + len(r.Reading.Quantity) + len(r.Detail) + len(r.Quantity)
+// next returns the place of one more record, whose texts have that many bytes.
+func (w *work) next(texts int) *Record {
+	w.bytes += recordBytes + texts
+	w.Records = append(w.Records, Record{})
+	return &w.Records[len(w.Records)-1]
 }
 
 // idle waits for something to do; false when the keeper is to stop and nothing
@@ -306,6 +309,7 @@ func (k *Keeper) foldGroup(records []Record) {
 		return
 	}
 	k.change++
+	k.warmed += k.warm(records)
 	for i := range records {
 		k.apply(&records[i])
 	}

@@ -22,7 +22,7 @@ func (k *Keeper) load() error {
 func (k *Keeper) loadFrom(l Ledger) error {
 	k.ledger = l
 	k.current.Store(&l)
-	k.directory.Store(&directory{byID: map[QuantityID]*Track{}})
+	k.directory.Store(&directory{byID: map[QuantityID]place{}})
 	k.byNumber = nil
 	k.window = newWindow(k.options.DuplicateWindow, k.options.minGeneration)
 	k.refusals.init(k.options.RefusedLog)
@@ -52,7 +52,8 @@ func (k *Keeper) restore(e CheckpointEntry) error {
 		return fmt.Errorf("checkpoint of quantity number %d follows that of %d", e.Number, len(k.byNumber))
 	}
 	t := k.trackOf(e.Number, e.Quantity.ID)
-	t.quantity, t.basis, t.savedQuantity = e.Quantity, e.Quantity, e.Quantity
+	t.quantity, t.savedQuantity = e.Quantity, e.Quantity
+	t.rest(e.Quantity)
 	t.position, t.saved, t.foldedTo = e.Through, e.Through, e.Through
 	t.reset()
 	rebuild, err := t.decodeState(e.State)

@@ -46,7 +46,7 @@ func (k *Keeper) lookUp(c *command) (Position, error) {
 		if t == nil || r.ID == "" || !r.HasTime {
 			continue
 		}
-		if v := t.View(); v != nil && v.tally.count > 0 && r.Time <= v.tally.last {
+		if r.Time <= Instant(t.latest.Load()) {
 			byTrack[t] = append(byTrack[t], late{i, r.Time})
 		}
 	}

@@ -33,16 +33,16 @@ func (j *job) run(l Ledger) {
 		}
 	}
 	var t Track
-	t.basis = j.quantity
+	t.rest(j.quantity)
 	t.reset()
-	if t.basis.Declaration.ordered() {
+	if t.law.ordered {
 		for i := range all {
 			t.extend(&all[i])
 		}
 		j.rows, j.marks = t.rows, t.marks
 	} else {
 		for i := range all {
-			t.fold.add(&t.basis.Declaration, &all[i].Row)
+			t.fold.add(&t.law, &all[i].Row)
 		}
 		j.rows, j.marks = j.recent, t.marks
 	}

@@ -10,16 +10,16 @@ import (
 func FuzzDecodeState(f *testing.F) {
 	var t Track
 	t.quantity = &Quantity{}
-	t.basis = t.quantity
+	t.rest(t.quantity)
 	t.reset()
 	f.Add(t.appendState(nil))
 	t.fresh = []entry{{Row: Row{Time: 5, Value: 1.5, HasUncertainty: true, Uncertainty: 0.1, HasID: true, Position: 9}, ID: "r"}}
 	t.settle(0)
 	f.Add(t.appendState(nil))
-	t.basis = &Quantity{Declaration: Declaration{
+	t.rest(&Quantity{Declaration: Declaration{
 		Dynamics:      Dynamics{Form: DynamicsRandomWalk, StandardDeviation: 1, Per: 1},
 		Repeatability: Repeatability{Form: RepeatabilityKnown, StandardDeviation: 1},
-	}}
+	}})
 	t.reset()
 	t.fresh = []entry{{Row: Row{Time: 5, Value: 1.5}}}
 	t.settle(0)

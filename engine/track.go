@@ -29,12 +29,14 @@ type Track struct {
 	decided      *Quantity
 	rules        rules
 	decidedTally tally
+	latest       atomic.Int64 // time of the latest durable reading, for all to read
 
 	// What is durable.
 	quantity *Quantity
 	basis    *Quantity
 	tally    tally
 	position Position
+	law      law // of basis
 	fold     fold
 	foldedTo Position
 	last     entry // the latest of an ordered track, in canonical order
@@ -106,15 +108,23 @@ func (t *Track) View() *View { return t.view.Load() }
 
 // publish makes the present state visible.
 func (t *Track) publish(change uint64) {
+	if t.tally.count > 0 {
+		t.latest.Store(int64(t.tally.last))
+	}
 	t.view.Store(&View{
 		Quantity: t.quantity, Position: t.position, Change: change,
 		ReadingCount: t.fold.count, HasLast: t.fold.count > 0, LastTime: t.fold.lastTime,
 		Rebuilding: t.job != nil,
 		tally:      t.tally,
 		basis:      t.basis, fold: t.fold, foldedTo: t.foldedTo,
-		rows: t.rows, canonical: t.job == nil && t.basis.Declaration.ordered(),
+		rows: t.rows, canonical: t.job == nil && t.law.ordered,
 		marks: t.marks, markFrom: t.markFrom,
 	})
+}
+
+// rest makes q the quantity whose declaration the belief rests on.
+func (t *Track) rest(q *Quantity) {
+	t.basis, t.law = q, lawOf(&q.Declaration)
 }
 
 // reset makes t the track of a quantity without readings.
@@ -136,7 +146,7 @@ func (t *Track) settle(budget int) (steps int, ok bool) {
 	case t.job != nil:
 		t.rows = append(t.rows, fresh...)
 		return 0, true
-	case !t.basis.Declaration.ordered():
+	case !t.law.ordered:
 		for i := range fresh {
 			t.extend(&fresh[i])
 		}
@@ -162,7 +172,7 @@ func (t *Track) follows(e *entry) bool {
 // add takes one durable reading: it folds it at once if that is right without
 // a merge, else keeps it for settle.
 func (t *Track) add(e *entry) {
-	if t.job == nil && len(t.fresh) == 0 && (!t.basis.Declaration.ordered() || t.follows(e)) {
+	if t.job == nil && len(t.fresh) == 0 && (!t.law.ordered || t.follows(e)) {
 		t.extend(e)
 		return
 	}
@@ -171,14 +181,13 @@ func (t *Track) add(e *entry) {
 
 // extend appends and folds a row; on an ordered track it follows all others.
 func (t *Track) extend(e *entry) {
-	d := &t.basis.Declaration
-	if d.ordered() {
+	if t.law.ordered {
 		if len(t.rows)-t.markFrom == len(t.marks)*markSpacing {
 			t.marks = append(t.marks, t.fold)
 		}
 		t.last = *e
 	}
-	t.fold.add(d, &e.Row)
+	t.fold.add(&t.law, &e.Row)
 	t.rows = append(t.rows, *e)
 }
 
@@ -228,7 +237,7 @@ func (t *Track) trim(stored Position) {
 	if t.job != nil {
 		return
 	}
-	if !t.basis.Declaration.ordered() {
+	if !t.law.ordered {
 		if slices.ContainsFunc(t.rows, func(e entry) bool { return e.Position <= stored }) {
 			t.rows = slices.DeleteFunc(slices.Clone(t.rows), func(e entry) bool { return e.Position <= stored })
 		}
