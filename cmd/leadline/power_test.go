@@ -13,6 +13,7 @@ import (
 	"os/exec"
 	"path/filepath"
 	"regexp"
+	"slices"
 	"sync"
 	"sync/atomic"
 	"syscall"
@@ -157,6 +158,9 @@ func (r *recording) add(trace string, first int, journals []*journal) error {
 			events[i].ended += first
 		}
 	}
+	if err := checkNamesSynced(events, r.root, filepath.Join(r.root, "data")); err != nil {
+		return err
+	}
 	r.events = append(r.events, events...)
 	byID := map[engine.ReadingID]identity{}
 	for _, j := range journals {
@@ -166,6 +170,20 @@ func (r *recording) add(trace string, first int, journals []*journal) error {
 		}
 	}
 	return r.findAnswers(events, byID)
+}
+
+// checkNamesSynced wants these directories synced before the first answer of a
+// process: it can't know whether the one before it, which made the names in
+// them, lived to sync them.
+func checkNamesSynced(events []event, directories ...string) error {
+	first := slices.IndexFunc(events, func(e event) bool { return e.kind == eventAnswer })
+	for _, directory := range directories {
+		synced := func(e event) bool { return e.kind == eventSync && e.path == directory }
+		if !slices.ContainsFunc(events[:max(first, 0)], synced) {
+			return fmt.Errorf("%s isn't synced before the first answer", directory)
+		}
+	}
+	return nil
 }
 
 var answeredID = regexp.MustCompile(`"reading_id": ?"([^"]+)"`)
