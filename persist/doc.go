@@ -11,6 +11,17 @@
 //     what was acknowledged takes the file's place; see Ledger.Salvage.
 //   - Every value has a checksum that includes its key, and the groups are
 //     chained by hashes. A value that fails is an error, never skipped.
+//   - The file's name is durable before anything in it is acknowledged: Open
+//     syncs the directory, whoever made the name. The names of the directories
+//     above are the caller's to sync.
+//
+// # Premise
+//
+// A device writes a sector of 512 bytes whole or not at all. A meta page's 80
+// bytes lie within one, so a power loss leaves both meta pages sound, the
+// newer of them perhaps unwritten. Where a device tears even a sector, the file
+// is refused as damaged, though the older meta page leads to a sound state: the
+// torn one can't be told from one that was acknowledged and has rotted since.
 //
 // # Format, version 1
 //
@@ -114,6 +125,13 @@
 // last sweep; Replay, Records and Rows verify what they read; Verify reads
 // everything. Not found before Verify or a read: damage to an old group, or to
 // the 16 bytes of header of a leaf page.
+//
+// Checksums don't tell what is missing. The lack of a group shows in positions
+// and hashes. A sweep writes the first state of a quantity together with its
+// declaration, number by number, so Checkpoint finds the lack of either, and of
+// a number within. That of the last number, and of rows, only Verify finds: it
+// compares the rows of complete segments with the readings that the sweep
+// includes.
 //
 // # Choices
 //

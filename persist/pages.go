@@ -72,8 +72,7 @@ func fnv1a(b []byte) uint64 {
 
 // readMetas reads both meta pages and returns the newer one. One that isn't
 // sound is damage, though bbolt would go by the other: that could be a group
-// older. A power loss leaves both sound, as a meta page's 80 bytes lie within
-// one sector.
+// older. A power loss leaves both sound, see Premise in doc.go.
 func readMetas(f *os.File, pageSize int) (meta, error) {
 	first, err := readMeta(f, 0)
 	if err != nil {
