@@ -104,10 +104,10 @@ func newPlant(t *testing.T) *plant {
 	}
 }
 
-// TestNothingLacksInAKeepersFile copies the file of a keeper after each of its
+// TestAKeepersFileLacksNothing copies the file of a keeper after each of its
 // answers, also within sweeps, as a killed process would leave it. Verify finds
 // nothing, and a start goes on from it.
-func TestNothingLacksInAKeepersFile(t *testing.T) {
+func TestAKeepersFileLacksNothing(t *testing.T) {
 	p := newPlant(t)
 	copied := filepath.Join(t.TempDir(), persist.FileName)
 	p.start(t)
