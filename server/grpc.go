@@ -2,6 +2,7 @@ package server
 
 import (
 	"context"
+	"fmt"
 	"time"
 
 	"google.golang.org/grpc"
@@ -10,12 +11,17 @@ import (
 	healthgrpc "google.golang.org/grpc/health/grpc_health_v1"
 	"google.golang.org/grpc/keepalive"
 	"google.golang.org/grpc/reflection"
+	"google.golang.org/protobuf/proto"
 
+	"leadline.example/engine"
 	leadlinev1 "leadline.example/proto/leadline/v1"
 )
 
 // Bounds of the gRPC server, where the library's own are for trusted peers.
 const (
+	// maxMessageBytes is what gRPC takes: more than the service does, as gRPC
+	// would give no reason.
+	maxMessageBytes         = 2 * maxBodyBytes
 	maxStreamsPerConnection = 1024
 	maxMetadataBytes        = 16 << 10
 	connectTime             = 10 * time.Second
@@ -39,7 +45,7 @@ func (s *Server) newGRPC(implementations *services) *grpc.Server {
 		grpc.ForceServerCodecV2(readingCodec{encoding.GetCodecV2(protocodec.Name)}),
 		grpc.ChainUnaryInterceptor(unary...),
 		grpc.ChainStreamInterceptor(stream...),
-		grpc.MaxRecvMsgSize(maxBodyBytes),
+		grpc.MaxRecvMsgSize(maxMessageBytes),
 		grpc.MaxConcurrentStreams(maxStreamsPerConnection),
 		grpc.MaxHeaderListSize(maxMetadataBytes),
 		grpc.ConnectionTimeout(connectTime),
@@ -59,15 +65,26 @@ func (s *Server) newGRPC(implementations *services) *grpc.Server {
 	return g
 }
 
-// answerUnary turns the errors of the services into statuses.
+// answerUnary turns the errors and panics of the services into statuses.
 func (s *Server) answerUnary(ctx context.Context, request any, info *grpc.UnaryServerInfo, handle grpc.UnaryHandler) (any, error) {
-	response, err := handle(ctx, request)
+	var response any
+	err := recovered(func() (err error) {
+		if m, ok := request.(proto.Message); ok && proto.Size(m) > maxBodyBytes {
+			return messageTooLarge()
+		}
+		response, err = handle(ctx, request)
+		return err
+	})
 	return response, s.statusError(info.FullMethod, err)
+}
+
+func messageTooLarge() error {
+	return refuse(engine.BodyTooLarge, "", fmt.Sprintf("the message is larger than %d bytes; send the readings in several", maxBodyBytes))
 }
 
 // answerStream does the same for streams.
 func (s *Server) answerStream(service any, stream grpc.ServerStream, info *grpc.StreamServerInfo, handle grpc.StreamHandler) error {
-	return s.statusError(info.FullMethod, handle(service, stream))
+	return s.statusError(info.FullMethod, recovered(func() error { return handle(service, stream) }))
 }
 
 func (s *Server) statusError(method string, err error) error {

@@ -35,7 +35,7 @@ func BenchmarkBatchOf1000(b *testing.B) {
 		b.Fatal(err)
 	}
 	s := &services{readings: readings, quantities: &quantityService{}, beliefs: &beliefService{}}
-	h, err := newREST(b.Context(), s, nil)
+	h, err := newREST(b.Context(), s, newOrigins(true), nil)
 	if err != nil {
 		b.Fatal(err)
 	}

@@ -35,7 +35,7 @@ type MetricsOptions struct {
 	LedgerBytes   func() int64  // size of the ledger's file; nil publishes none
 	Ready         func() error  // nil while the service takes requests; nil func: the keeper's health
 	Logger        *slog.Logger  // nil: slog.Default
-	WriteTimeout  time.Duration // for a page, from its first byte to its last; 0 means 10 s
+	WriteTimeout  time.Duration // in which a client has to take the next part of a page; 0 means 5 s
 }
 
 // DefaultMaxQuantities bounds the page: 10,000 quantities are 150,000 series,
@@ -43,10 +43,10 @@ type MetricsOptions struct {
 const DefaultMaxQuantities = 10_000
 
 const (
-	defaultWriteTimeout = 10 * time.Second
+	defaultWriteTimeout = 5 * time.Second
 	// maxPages bounds the pages being sent at once, and so the memory that
-	// clients who stop reading can hold; the next ones wait for a client to
-	// finish or to run out of time.
+	// clients who stop reading can hold. Who comes next waits for a client to
+	// finish, or takes the place of one who stopped reading; see senders.
 	maxPages = 8
 	// maxParts bounds the cores that a rendering uses.
 	maxParts = 4
@@ -71,7 +71,8 @@ type Metrics struct {
 	logger   *slog.Logger
 	timeout  time.Duration
 
-	slots chan struct{} // holds a token for each page in use
+	slots   chan struct{} // holds a token for each page in use
+	senders senders
 
 	freeMu sync.Mutex
 	free   []*exposition // guarded by freeMu; the one used last is on top
@@ -159,23 +160,21 @@ func (m *Metrics) ServeHTTP(w http.ResponseWriter, r *http.Request) {
 		h.Set("Content-Encoding", "gzip")
 		send = x.sendZipped
 	}
-	// Recorders and other writers that have no deadline are served without.
-	c := http.NewResponseController(w)
-	_ = c.SetWriteDeadline(time.Now().Add(m.timeout))
-	if err := send(w); err != nil {
-		m.logger.Warn("metrics page was cut off", "error", err, "client", r.RemoteAddr)
-		return
+	to := m.senders.begin(w, m.timeout)
+	err = send(to)
+	if err == nil {
+		err = to.flush()
 	}
-	_ = c.Flush()
-	_ = c.SetWriteDeadline(time.Time{}) // the next request on the connection has its own
+	m.senders.end(to)
+	if err != nil {
+		m.logger.Warn("metrics page was cut off", "error", err, "client", r.RemoteAddr)
+	}
 }
 
 // take waits for a page to be free.
 func (m *Metrics) take(ctx context.Context) (*exposition, error) {
-	select {
-	case m.slots <- struct{}{}:
-	case <-ctx.Done():
-		return nil, ctx.Err()
+	if err := m.takeSlot(ctx); err != nil {
+		return nil, err
 	}
 	m.freeMu.Lock()
 	defer m.freeMu.Unlock()
@@ -185,6 +184,28 @@ func (m *Metrics) take(ctx context.Context) (*exposition, error) {
 		return x, nil
 	}
 	return newExposition(min(runtime.GOMAXPROCS(0), maxParts)), nil
+}
+
+// takeSlot waits for a slot. While there is none it has clients cut who don't
+// read, one at a time.
+func (m *Metrics) takeSlot(ctx context.Context) error {
+	for {
+		select {
+		case m.slots <- struct{}{}:
+			return nil
+		default:
+		}
+		retry := time.NewTimer(m.senders.cutOne())
+		select {
+		case m.slots <- struct{}{}:
+			retry.Stop()
+			return nil
+		case <-ctx.Done():
+			retry.Stop()
+			return ctx.Err()
+		case <-retry.C:
+		}
+	}
 }
 
 func (m *Metrics) give(x *exposition) {
@@ -199,7 +220,7 @@ func (m *Metrics) render(x *exposition) {
 	m.rendering.Lock()
 	defer m.rendering.Unlock()
 	x.reset()
-	unpublished := m.choose()
+	unpublished, rebuilding := m.choose()
 	at := cutToMillisecond(engine.InstantOf(m.now()))
 	unevaluated := m.quantities(x, at)
 	x.timestamp("leadline_evaluation_timestamp_seconds",
@@ -209,17 +230,23 @@ func (m *Metrics) render(x *exposition) {
 		"Live quantities left out of this page because it is bounded.", float64(unpublished))
 	x.scalar("leadline_unevaluated_quantities",
 		"Quantities of this page whose belief could not be evaluated.", float64(unevaluated))
+	x.scalar("leadline_rebuilding_quantities",
+		"Live quantities whose belief is being rebuilt and is the one before it.", float64(rebuilding))
 	m.service(x)
 	clear(m.chosen) // lets go of the views
 }
 
-// choose picks the first live quantities by ID and counts the others.
-func (m *Metrics) choose() (unpublished int) {
+// choose picks the first live quantities by ID and counts the others, and those
+// of all that are being rebuilt.
+func (m *Metrics) choose() (unpublished, rebuilding int) {
 	tracks := m.keeper.Tracks()
 	m.align(tracks)
 	m.chosen = m.chosen[:0]
 	for i, t := range tracks {
 		v := t.View()
+		if v != nil && v.Rebuilding && !v.Quantity.Retired {
+			rebuilding++
+		}
 		switch {
 		case v == nil || v.Quantity.Retired:
 			m.known[i] = known{track: t}
@@ -229,25 +256,38 @@ func (m *Metrics) choose() (unpublished int) {
 			m.chosen = append(m.chosen, chosen{&m.known[i], v})
 		}
 	}
-	return unpublished
+	return unpublished, rebuilding
 }
 
-// quantities writes the chosen quantities, an equal run of them to each part.
+// quantities writes the chosen quantities, an equal run of them to each part. A
+// panic in one of the goroutines is handed on to the request's.
 func (m *Metrics) quantities(x *exposition, at engine.Instant) (unevaluated int64) {
 	var all sync.WaitGroup
 	var failed atomic.Int64
+	panics := make(chan error, len(x.parts))
 	for i, p := range x.parts {
 		run := m.chosen[len(m.chosen)*i/len(x.parts) : len(m.chosen)*(i+1)/len(x.parts)]
 		all.Go(func() {
-			for _, c := range run {
-				if !m.quantity(p, c, at) {
-					failed.Add(1)
+			err := recovered(func() error {
+				for _, c := range run {
+					if !m.quantity(p, c, at) {
+						failed.Add(1)
+					}
 				}
+				return nil
+			})
+			if err != nil {
+				panics <- err
 			}
 		})
 	}
 	all.Wait()
-	return failed.Load()
+	select {
+	case err := <-panics:
+		panic(err)
+	default:
+		return failed.Load()
+	}
 }
 
 // quantity writes one quantity; false means that its belief could not be

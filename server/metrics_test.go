@@ -225,6 +225,44 @@ func TestPageFollowsARedeclaration(t *testing.T) {
 	}
 }
 
+// heldLedger holds up whoever reads an index, as a rebuild does, until released.
+type heldLedger struct {
+	engine.Ledger
+	release chan struct{}
+}
+
+func (l heldLedger) Rows(number engine.QuantityNumber, since engine.Instant, fn func([]engine.Row) error) error {
+	<-l.release
+	return l.Ledger.Rows(number, since, fn)
+}
+
+func TestPageCountsWhatIsBeingRebuilt(t *testing.T) {
+	held := heldLedger{ledgertest.NewMemory(fixedClock), make(chan struct{})}
+	k, err := engine.New(engine.Options{Open: func() (engine.Ledger, error) { return held, nil }})
+	if err != nil {
+		t.Fatal(err)
+	}
+	m, err := NewMetrics(MetricsOptions{Keeper: k, Observations: NewObservations(), Now: fixedClock})
+	if err != nil {
+		t.Fatal(err)
+	}
+	f := pageFixture{k, m}
+	d := roomDeclaration()
+	f.declare(t, "room-2.temperature", d)
+	f.declare(t, "room-3.temperature", d)
+	many := make([]float64, 1001) // more than are folded on the spot
+	f.post(t, "room-2.temperature", scrapeTime.Add(-time.Second), many...)
+	d.Repeatability.StandardDeviation *= 2
+	f.declare(t, "room-2.temperature", d)
+	if got := seriesOf(t, f.scrape(t))["leadline_rebuilding_quantities{}"]; got != 1 {
+		t.Errorf("%v quantities are being rebuilt, want 1", got)
+	}
+	close(held.release)
+	if err := k.Close(); err != nil {
+		t.Error(err)
+	}
+}
+
 func TestPagePassesTheLinter(t *testing.T) {
 	problems, err := promlint.New(strings.NewReader(plantFixture(t, nil).scrape(t))).Lint()
 	if err != nil {

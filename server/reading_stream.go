@@ -3,6 +3,7 @@ package server
 import (
 	"context"
 	"errors"
+	"fmt"
 	"io"
 
 	"google.golang.org/grpc"
@@ -32,7 +33,9 @@ type outcomeOfBatch struct {
 // StreamReadings posts batches without waiting for each. One goroutine receives
 // and submits, this one acknowledges in order; the channel between them holds
 // what is unacknowledged, and so stops the receiver when it is full. When the
-// service stops, what was submitted is still acknowledged.
+// service stops, what waits in the channel is still acknowledged; a batch that
+// was just being received may be durable without that, so the client has to
+// resend what was not acknowledged, with its IDs and times.
 func (s *readingService) StreamReadings(stream readingsStream) error {
 	ctx, cancel := context.WithCancel(stream.Context())
 	defer cancel()
@@ -41,7 +44,7 @@ func (s *readingService) StreamReadings(stream readingsStream) error {
 	waiting := make(chan *inflight, maxUnacknowledged-2)
 	ended := make(chan error, 1)
 	go func() {
-		ended <- s.receive(ctx, stream, waiting)
+		ended <- recovered(func() error { return s.receive(ctx, stream, waiting) })
 		close(waiting)
 	}()
 	for batch := range s.untilStopping(waiting) {
@@ -91,7 +94,7 @@ func (s *readingService) receive(ctx context.Context, stream readingsStream, wai
 	if err != nil {
 		return err
 	}
-	for {
+	for last, first := uint64(0), true; ; first = false {
 		var message wireBatch
 		err := stream.RecvMsg(&message)
 		if errors.Is(err, io.EOF) {
@@ -100,6 +103,13 @@ func (s *readingService) receive(ctx context.Context, stream readingsStream, wai
 		if err != nil {
 			return err
 		}
+		if message.err != nil {
+			return message.err
+		}
+		if !first && message.sequence <= last {
+			return refuse(engine.InvalidField, "sequence", fmt.Sprintf("sequence is %d after %d; number the batches of a stream upwards", message.sequence, last))
+		}
+		last = message.sequence
 		batch, err := s.submit(&message, id)
 		if err != nil {
 			return err
@@ -118,9 +128,6 @@ func (s *readingService) receive(ctx context.Context, stream readingsStream, wai
 }
 
 func (s *readingService) submit(message *wireBatch, requestID string) (*inflight, error) {
-	if message.err != nil {
-		return nil, message.err
-	}
 	batch := &inflight{sequence: message.sequence, done: make(chan outcomeOfBatch, 1)}
 	return batch, s.keeper.Submit(
 		engine.Batch{Readings: message.readings, Receive: engine.InstantOf(s.now()), RequestID: requestID},

@@ -25,7 +25,7 @@ type readingCodec struct{ encoding.CodecV2 }
 type wireBatch struct {
 	sequence uint64
 	readings []engine.Reading
-	err      error // what readingsOf says of it
+	err      error // why the service refuses it
 }
 
 // Unmarshal decodes a message.
@@ -33,6 +33,10 @@ func (c readingCodec) Unmarshal(data mem.BufferSlice, v any) error {
 	batch, ok := v.(*wireBatch)
 	if !ok {
 		return c.CodecV2.Unmarshal(data, v)
+	}
+	if data.Len() > maxBodyBytes {
+		*batch = wireBatch{err: messageTooLarge()}
+		return nil
 	}
 	buffer := data.MaterializeToBuffer(mem.DefaultBufferPool())
 	*batch, ok = scanBatch(buffer.ReadOnlyData())

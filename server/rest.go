@@ -33,14 +33,15 @@ type rest struct {
 	gateway *runtime.ServeMux
 	special map[string]specialHandler // by method and template
 	pages   map[string]http.Handler   // by path: what isn't the API itself
+	origins *origins
 	logger  *slog.Logger
 }
 
 // specialHandler serves a route by hand. value is that of the path's variable.
 type specialHandler func(w http.ResponseWriter, r *http.Request, value string) error
 
-func newREST(ctx context.Context, s *services, logger *slog.Logger) (*rest, error) {
-	h := &rest{routes: readRoutes(), logger: logger}
+func newREST(ctx context.Context, s *services, o *origins, logger *slog.Logger) (*rest, error) {
+	h := &rest{routes: readRoutes(), origins: o, logger: logger}
 	h.gateway = runtime.NewServeMux(
 		runtime.WithMarshalerOption(runtime.MIMEWildcard, jsonCodec{}),
 		runtime.WithMarshalerOption(mediaJSON, jsonCodec{}),
@@ -66,27 +67,46 @@ func newREST(ctx context.Context, s *services, logger *slog.Logger) (*rest, erro
 	)
 }
 
-// ServeHTTP answers one request.
+// ServeHTTP answers one request. If it panics after the answer has begun, the
+// connection is broken off, so that nobody takes the answer for whole.
 func (h *rest) ServeHTTP(w http.ResponseWriter, r *http.Request) {
-	if page, ok := h.pages[r.URL.Path]; ok {
-		h.servePage(w, r, page)
-		return
+	if r.ContentLength != 0 {
+		arrivalOf(r).begin()
 	}
-	if err := h.serve(w, r); err != nil {
+	answer := &startedWriter{ResponseWriter: w}
+	err := recovered(func() error { return h.serve(answer, r) })
+	switch {
+	case err != nil && answer.started:
+		h.logger.Error("answer was broken off", "method", r.Method, "path", r.URL.Path, "error", err)
+		panic(http.ErrAbortHandler)
+	case err != nil:
+		if isPanic(err) {
+			clear(w.Header()) // of the answer that never was
+		}
 		h.fail(w, r, err)
 	}
 }
 
-// servePage serves what is only read.
-func (h *rest) servePage(w http.ResponseWriter, r *http.Request, page http.Handler) {
-	if r.Method != http.MethodGet && r.Method != http.MethodHead {
-		h.fail(w, r, wrongMethod(r, http.MethodGet, http.MethodHead))
-		return
+func (h *rest) serve(w http.ResponseWriter, r *http.Request) error {
+	if err := h.origins.check(r); err != nil {
+		return err
 	}
-	page.ServeHTTP(w, r)
+	if page, ok := h.pages[r.URL.Path]; ok {
+		return servePage(w, r, page)
+	}
+	return h.serveRoute(w, r)
 }
 
-func (h *rest) serve(w http.ResponseWriter, r *http.Request) error {
+// servePage serves what is only read.
+func servePage(w http.ResponseWriter, r *http.Request, page http.Handler) error {
+	if r.Method != http.MethodGet && r.Method != http.MethodHead {
+		return wrongMethod(r, http.MethodGet, http.MethodHead)
+	}
+	page.ServeHTTP(w, r)
+	return nil
+}
+
+func (h *rest) serveRoute(w http.ResponseWriter, r *http.Request) error {
 	route, value, err := h.find(r)
 	if err != nil {
 		return err
@@ -185,8 +205,21 @@ func (r *route) checkVariable(body proto.Message, value string) error {
 	return refuse(engine.InvalidField, r.variable, fmt.Sprintf("%s is %q, not the %q of the path; leave it out", r.variable, shorten(sent), value))
 }
 
-// readBody reads a body of admissible length, appending it to into.
+// readBody reads a body of admissible length, appending it to into. When the
+// service stops, a body still arriving is cut.
 func readBody(w http.ResponseWriter, r *http.Request, into []byte) ([]byte, error) {
+	body, err := readWhole(w, r, into)
+	if stopping := arrivalOf(r).end(err == nil); stopping != nil {
+		return nil, stopping
+	}
+	return body, err
+}
+
+func readWhole(w http.ResponseWriter, r *http.Request, into []byte) ([]byte, error) {
+	// MaxBytesReader has net/http close the connection, if it knows the writer.
+	if s, ok := w.(*startedWriter); ok {
+		w = s.ResponseWriter
+	}
 	if r.ContentLength > maxBodyBytes {
 		return nil, bodyTooLarge()
 	}

@@ -332,7 +332,7 @@ func TestAnnouncedLengthIsRefusedAtOnce(t *testing.T) {
 		t.Fatal(err)
 	}
 	defer conn.Close()
-	if _, err := fmt.Fprintf(conn, "POST /v1/readings HTTP/1.1\r\nHost: x\r\nContent-Length: 1000000000\r\n\r\n"); err != nil {
+	if _, err := fmt.Fprintf(conn, "POST /v1/readings HTTP/1.1\r\nHost: localhost\r\nContent-Length: 1000000000\r\n\r\n"); err != nil {
 		t.Fatal(err)
 	}
 	response, err := http.ReadResponse(bufio.NewReader(conn), nil)

@@ -60,7 +60,8 @@ func startServer(t testing.TB) *running {
 	return startServerOn(t, filepath.Join(t.TempDir(), "ledger"), newClock())
 }
 
-func startServerOn(t testing.TB, file string, c *clock) *running {
+// startServerOn starts a service with options as change leaves them.
+func startServerOn(t testing.TB, file string, c *clock, change ...func(*server.Options)) *running {
 	t.Helper()
 	keeper, err := engine.New(engine.Options{Open: func() (engine.Ledger, error) {
 		return persist.Open(persist.Options{Path: file, Now: c.Now})
@@ -69,9 +70,13 @@ func startServerOn(t testing.TB, file string, c *clock) *running {
 		t.Fatal(err)
 	}
 	r := &running{t: t, clock: c, file: file, keeper: keeper, log: new(lockedBuffer)}
-	s, err := server.New(server.Options{
+	o := server.Options{
 		Keeper: keeper, Now: c.Now, Logger: slog.New(slog.NewTextHandler(r.log, nil)), Metrics: http.NotFoundHandler(),
-	})
+	}
+	for _, f := range change {
+		f(&o)
+	}
+	s, err := server.New(o)
 	if err != nil {
 		t.Fatal(err)
 	}
@@ -135,6 +140,10 @@ func (r *running) call(method, path, body string, header ...string) answer {
 		r.t.Fatal(err)
 	}
 	for i := 0; i < len(header); i += 2 {
+		if header[i] == "Host" {
+			request.Host = header[i+1]
+			continue
+		}
 		request.Header.Add(header[i], header[i+1])
 	}
 	response, err := http.DefaultClient.Do(request)

@@ -44,6 +44,9 @@ type Options struct {
 	// DrainTime is how long requests under way may take after the service was
 	// told to stop; 0 means 20 s.
 	DrainTime time.Duration
+	// AnyHost admits HTTP requests whatever host they name. Otherwise it has to be
+	// localhost or a loopback address, against DNS rebinding.
+	AnyHost bool
 }
 
 func (o *Options) validate() error {
@@ -87,6 +90,7 @@ type Server struct {
 	rest     *rest
 	grpc     *grpc.Server
 	health   *health.Server
+	arrivals *arrivals
 	stopping chan struct{} // closed when streams have to end
 	once     sync.Once
 }
@@ -103,13 +107,13 @@ func New(o Options) (*Server, error) {
 	if err := o.validate(); err != nil {
 		return nil, fmt.Errorf("server: %w", err)
 	}
-	s := &Server{options: o, stopping: make(chan struct{}), health: health.NewServer()}
+	s := &Server{options: o, stopping: make(chan struct{}), health: health.NewServer(), arrivals: newArrivals()}
 	implementations := &services{
 		quantities: &quantityService{keeper: o.Keeper, now: o.Now},
 		readings:   &readingService{keeper: o.Readings, now: o.Now, stopping: s.stopping},
 		beliefs:    &beliefService{keeper: o.Keeper, now: o.Now, stopping: s.stopping, logger: o.Logger},
 	}
-	h, err := newREST(context.Background(), implementations, o.Logger)
+	h, err := newREST(context.Background(), implementations, newOrigins(o.AnyHost), o.Logger)
 	if err != nil {
 		return nil, fmt.Errorf("server: register the HTTP routes: %w", err)
 	}
@@ -139,9 +143,11 @@ func (s *Server) Ready() error {
 }
 
 // Serve answers on both listeners until ctx ends, and then stops: it tells that
-// it is not ready, ends streams after what they sent is acknowledged, and lets
-// requests under way finish. It closes the listeners, not the keeper, and
-// returns nil if nothing had to be broken off.
+// it is not ready, ends streams after what they sent is acknowledged, cuts
+// requests that are still arriving and lets those under way finish. What takes
+// longer than DrainTime is broken off with a warning in the log: a slow client
+// is no failure of the service. Serve closes the listeners, not the keeper, and
+// returns nil unless a listener failed.
 func (s *Server) Serve(ctx context.Context, httpListener, grpcListener net.Listener) error {
 	web := &http.Server{
 		Handler:           s.rest,
@@ -150,6 +156,8 @@ func (s *Server) Serve(ctx context.Context, httpListener, grpcListener net.Liste
 		WriteTimeout:      answerTime,
 		IdleTimeout:       idleTime,
 		MaxHeaderBytes:    maxHeaderBytes,
+		ConnContext:       s.arrivals.inContext,
+		ConnState:         s.arrivals.follow,
 		ErrorLog:          slog.NewLogLogger(s.options.Logger.Handler(), slog.LevelDebug),
 	}
 	failed := make(chan error, 2)
@@ -163,15 +171,16 @@ func (s *Server) Serve(ctx context.Context, httpListener, grpcListener net.Liste
 	case <-ctx.Done():
 	case err = <-failed:
 	}
-	err = errors.Join(err, s.stop(web))
+	s.stop(web)
 	running.Wait()
 	return err
 }
 
 // stop ends both servers; see Serve.
-func (s *Server) stop(web *http.Server) error {
+func (s *Server) stop(web *http.Server) {
 	s.health.Shutdown()
 	s.once.Do(func() { close(s.stopping) })
+	s.arrivals.cut()
 	ctx, cancel := context.WithTimeout(context.Background(), s.options.DrainTime)
 	defer cancel()
 	drained := make(chan struct{})
@@ -179,19 +188,17 @@ func (s *Server) stop(web *http.Server) error {
 		defer close(drained)
 		s.grpc.GracefulStop()
 	}()
-	var err error
 	if web.Shutdown(ctx) != nil {
 		_ = web.Close()
-		err = fmt.Errorf("HTTP requests were broken off, as they took more than %v to finish", s.options.DrainTime)
+		s.options.Logger.Warn("HTTP requests were broken off, as they took too long to finish", "limit", s.options.DrainTime)
 	}
 	select {
 	case <-drained:
 	case <-ctx.Done():
 		s.grpc.Stop()
 		<-drained
-		err = errors.Join(err, fmt.Errorf("gRPC requests were broken off, as they took more than %v to finish", s.options.DrainTime))
+		s.options.Logger.Warn("gRPC requests were broken off, as they took too long to finish", "limit", s.options.DrainTime)
 	}
-	return err
 }
 
 func serveError(protocol string, err error) error {

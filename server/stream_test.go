@@ -84,6 +84,58 @@ func TestBadBatchEndsTheStream(t *testing.T) {
 	wantStatus(t, err, codes.InvalidArgument, engine.MissingField, "readings[1].value")
 }
 
+func TestSequenceHasToRise(t *testing.T) {
+	r := startServer(t)
+	r.call("PUT", "/v1/quantities/gap", gapDeclaration).want(200)
+	for _, test := range []struct {
+		name string
+		sent []uint64 // all but the last are good
+	}{
+		{"repeated", []uint64{7, 7}},
+		{"repeated 0", []uint64{0, 0}},
+		{"falling", []uint64{1, 5, 4}},
+	} {
+		t.Run(test.name, func(t *testing.T) {
+			stream, err := r.readings.StreamReadings(t.Context())
+			if err != nil {
+				t.Fatal(err)
+			}
+			for _, sequence := range test.sent {
+				message := &leadlinev1.StreamReadingsRequest{Sequence: sequence, Readings: []*leadlinev1.Reading{reading("gap", 0.8, "")}}
+				if err := stream.Send(message); err != nil {
+					t.Fatal(err)
+				}
+			}
+			for _, want := range test.sent[:len(test.sent)-1] {
+				if ack, err := stream.Recv(); err != nil || ack.GetSequence() != want {
+					t.Fatalf("acknowledgement %v, %v; want %d", ack, err, want)
+				}
+			}
+			_, err = stream.Recv()
+			wantStatus(t, err, codes.InvalidArgument, engine.InvalidField, "sequence")
+		})
+	}
+}
+
+func TestMessageOverTheLimitHasAReason(t *testing.T) {
+	r := startServer(t)
+	stream, err := r.readings.StreamReadings(t.Context())
+	if err != nil {
+		t.Fatal(err)
+	}
+	large := reading("gap", 0.8, strings.Repeat("x", 4<<20))
+	if err := stream.Send(&leadlinev1.StreamReadingsRequest{Sequence: 1, Readings: []*leadlinev1.Reading{large}}); err != nil && !errors.Is(err, io.EOF) {
+		t.Fatal(err)
+	}
+	_, err = stream.Recv()
+	wantStatus(t, err, codes.ResourceExhausted, engine.BodyTooLarge, "")
+	_, err = r.readings.PostReadings(t.Context(), &leadlinev1.PostReadingsRequest{Readings: []*leadlinev1.Reading{large}})
+	wantStatus(t, err, codes.ResourceExhausted, engine.BodyTooLarge, "")
+	large.ReadingId += large.ReadingId // beyond what gRPC takes, which gives no reason
+	_, err = r.readings.PostReadings(t.Context(), &leadlinev1.PostReadingsRequest{Readings: []*leadlinev1.Reading{large}})
+	wantStatus(t, err, codes.ResourceExhausted, "", "")
+}
+
 func wantStatus(t testing.TB, err error, code codes.Code, reason engine.Reason, field string) {
 	t.Helper()
 	st := status.Convert(err)

@@ -129,7 +129,7 @@ func sendWithin[M any](limit time.Duration, send func(M) error, body func(send f
 	defer close(messages)
 	go func() {
 		for m := range messages {
-			sent <- send(m)
+			sent <- recovered(func() error { return send(m) })
 		}
 	}()
 	timer := time.NewTimer(limit)

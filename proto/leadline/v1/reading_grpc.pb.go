@@ -40,9 +40,8 @@ type ReadingServiceClient interface {
 	PostReading(ctx context.Context, in *PostReadingRequest, opts ...grpc.CallOption) (*PostReadingResponse, error)
 	// PostReadings posts up to 10,000 readings of any quantities. Either the
 	// request as a whole is an error and nothing is stored, or every reading has
-	// its own result. A request over 4 MiB is BODY_TOO_LARGE over HTTP and in
-	// streams; in a single gRPC call the library refuses it before the service
-	// sees it, so the error is RESOURCE_EXHAUSTED without an ErrorInfo.
+	// its own result. A request over 4 MiB is BODY_TOO_LARGE. One over 8 MiB is
+	// refused by gRPC itself: RESOURCE_EXHAUSTED without an ErrorInfo.
 	PostReadings(ctx context.Context, in *PostReadingsRequest, opts ...grpc.CallOption) (*PostReadingsResponse, error)
 	// StreamReadings posts batches one after the other without waiting: each is
 	// acknowledged by its sequence, in the order sent, once it is durable. At most
@@ -134,9 +133,8 @@ type ReadingServiceServer interface {
 	PostReading(context.Context, *PostReadingRequest) (*PostReadingResponse, error)
 	// PostReadings posts up to 10,000 readings of any quantities. Either the
 	// request as a whole is an error and nothing is stored, or every reading has
-	// its own result. A request over 4 MiB is BODY_TOO_LARGE over HTTP and in
-	// streams; in a single gRPC call the library refuses it before the service
-	// sees it, so the error is RESOURCE_EXHAUSTED without an ErrorInfo.
+	// its own result. A request over 4 MiB is BODY_TOO_LARGE. One over 8 MiB is
+	// refused by gRPC itself: RESOURCE_EXHAUSTED without an ErrorInfo.
 	PostReadings(context.Context, *PostReadingsRequest) (*PostReadingsResponse, error)
 	// StreamReadings posts batches one after the other without waiting: each is
 	// acknowledged by its sequence, in the order sent, once it is durable. At most
