@@ -85,7 +85,7 @@ func (svc *service) openKeeper(s *settings) error {
 		CheckpointRecords: s.checkpointEvery,
 		OnFault: func(err error) {
 			svc.observations.Fault(err)
-			svc.logger.Error("storage fault: nothing is acknowledged until it is mended", "error", err)
+			svc.logger.Error(faultMessage(err), "error", err)
 		},
 	})
 	if err != nil {
@@ -93,6 +93,15 @@ func (svc *service) openKeeper(s *settings) error {
 	}
 	svc.keeper = keeper
 	return nil
+}
+
+// faultMessage tells what a fault of the storage means for readings. One that is
+// not about writing, such as a belief that could not be rebuilt, stops none.
+func faultMessage(err error) string {
+	if errors.Is(err, engine.ErrStorageFailed) || errors.Is(err, engine.ErrDiskFull) {
+		return "storage fault: nothing is acknowledged until it is mended"
+	}
+	return "storage fault: a part of the ledger could not be read; whether readings are taken is told by /readyz"
 }
 
 func (svc *service) openLedger(path string) (engine.Ledger, error) {
@@ -136,6 +145,7 @@ func (svc *service) openServer(s *settings) error {
 		Logger:       svc.logger,
 		Metrics:      metrics,
 		Observations: svc.observations,
+		AnyHost:      s.listenAnywhere,
 	})
 	return err
 }

@@ -42,7 +42,7 @@ func declareFlags(flags *flag.FlagSet, s *settings, env func(string) string) {
 	flags.StringVar(&s.grpc, "grpc", envOr(env, "LEADLINE_GRPC", "127.0.0.1:8081"),
 		"`address` of gRPC; port 0 takes a free one (environment LEADLINE_GRPC)")
 	flags.BoolVar(&s.listenAnywhere, "listen-anywhere", false,
-		"allow addresses beyond loopback, although nobody who reaches them is asked who they are")
+		"allow addresses beyond loopback and requests to any host name, although nobody who reaches them is asked who they are")
 	flags.DurationVar(&s.maxClockSkew, "max-clock-skew", 5*time.Minute,
 		"how far in the future the time of a reading may lie")
 	flags.IntVar(&s.duplicateWindow, "duplicate-window", 1_000_000,

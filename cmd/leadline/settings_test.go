@@ -2,8 +2,30 @@ package main
 
 import (
 	"errors"
+	"fmt"
+	"strings"
 	"testing"
+
+	"leadline.example/engine"
 )
+
+func TestFaultSaysWhetherReadingsAreTaken(t *testing.T) {
+	for _, tt := range []struct {
+		name string
+		err  error
+		want bool // that nothing is acknowledged
+	}{
+		{"failed sync", fmt.Errorf("append: %w", engine.ErrStorageFailed), true},
+		{"full disk", fmt.Errorf("append: %w", engine.ErrDiskFull), true},
+		{"failed rebuild", errors.New("rebuild the belief of \"gap\": checksum"), false},
+	} {
+		t.Run(tt.name, func(t *testing.T) {
+			if got := faultMessage(tt.err); strings.Contains(got, "nothing is acknowledged") != tt.want {
+				t.Errorf("the log says %q", got)
+			}
+		})
+	}
+}
 
 func TestAddressesBeyondLoopbackTakeAFlag(t *testing.T) {
 	for _, tt := range []struct {
