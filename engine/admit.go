@@ -72,6 +72,9 @@ func (a *rules) objectionToNumbers(r *Reading) (Reason, string) {
 	if math.Abs(r.Value)/u > maxRatio {
 		return ValueOutOfRange, fmt.Sprintf("value %v is more than 1e150 times its random standard uncertainty %v; check both", r.Value, u)
 	}
+	if p := &a.prior; !p.Vague && math.Abs(r.Value-p.Mean)/p.SD > maxRatio {
+		return ValueOutOfRange, fmt.Sprintf("value %v is more than 1e150 prior standard deviations %v away from the prior mean %v; check it", r.Value, p.SD, p.Mean)
+	}
 	return "", ""
 }
 

@@ -1,6 +1,7 @@
 package engine
 
 import (
+	"errors"
 	"fmt"
 	"math"
 	"slices"
@@ -133,13 +134,13 @@ func (k *Keeper) settle(t *Track) {
 
 // publish makes the group visible.
 func (k *Keeper) publish(through Position) {
-	if len(k.arrived) > 0 {
-		k.index(k.arrived)
-		k.arrived = k.arrived[:0]
-	}
 	for _, t := range k.touched {
 		t.publish(k.change)
 		t.touched = false
+	}
+	if len(k.arrived) > 0 { // they have their views now
+		k.index(k.arrived)
+		k.arrived = k.arrived[:0]
 	}
 	clear(k.touched)
 	k.touched = k.touched[:0]
@@ -168,7 +169,7 @@ func (k *Keeper) index(arrived []*Track) {
 
 // startJob has the belief of t folded anew by the rebuilder.
 func (k *Keeper) startJob(t *Track) {
-	j := &job{track: t, quantity: t.quantity, number: t.number, recent: t.rows, count: t.tally.count, position: t.position}
+	j := &job{track: t, quantity: t.quantity, number: t.number, recent: t.rows, count: t.tally.count, position: t.position, ledger: k.ledger}
 	t.job = j
 	k.jobs = append(k.jobs, j)
 	k.dispatch()
@@ -190,7 +191,7 @@ func (k *Keeper) dispatch() {
 // so it never waits for the keeper.
 func (k *Keeper) rebuildLoop() {
 	for j := range k.jobQueue {
-		j.run(k.Ledger())
+		j.run()
 		k.jobDone <- j
 	}
 }
@@ -201,12 +202,15 @@ func (k *Keeper) finishJob(j *job) {
 	if t.job != j {
 		return // superseded by a later declaration
 	}
-	for _, err := range []error{j.fault, j.err} {
-		if err != nil {
-			k.options.OnFault(fmt.Errorf("rebuild the belief of %q: %w", t.id, err))
-		}
+	if j.err != nil && j.ledger != k.ledger {
+		k.startJob(t) // it read a ledger that has been closed since
+		return
+	}
+	if j.fault != nil {
+		k.options.OnFault(fmt.Errorf("rebuild the belief of %q: %w", t.id, j.fault))
 	}
 	if j.err != nil {
+		k.fail(errors.Join(j.err, ErrStorageFailed))
 		return
 	}
 	since := slices.Clone(t.rows[len(j.recent):])
@@ -214,7 +218,7 @@ func (k *Keeper) finishJob(j *job) {
 	t.rest(t.quantity)
 	t.fold, t.foldedTo = j.fold, j.position
 	t.rows, t.marks, t.markFrom = j.rows, j.marks, 0
-	t.last, t.behind = j.last, entry{}
+	t.last, t.behind, t.saved = j.last, entry{}, 0 // and the checkpoint, if any, has no fold
 	t.trim(k.sweep.trimmed)
 	t.fresh = since
 	k.change++

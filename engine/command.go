@@ -12,6 +12,7 @@ type command struct {
 	found   []resolved
 	within  *directory // where the readings were resolved
 	trimmed Position   // the lookup of late ones is complete through this
+	lookups int        // beyond the first
 	next    int        // the first reading not decided on
 	results []Result
 	resume  bool
@@ -29,11 +30,6 @@ func (k *Keeper) submit(c *command) error {
 	if err := k.Health(); err != nil {
 		return err
 	}
-	select {
-	case <-k.stopping:
-		return errStopping
-	default:
-	}
 	n := int64(len(c.batch.Readings))
 	if k.queued.Add(n) > maxQueuedReadings && n > 0 {
 		k.queued.Add(-n)
@@ -44,11 +40,25 @@ func (k *Keeper) submit(c *command) error {
 		k.queued.Add(-n)
 		return err
 	}
+	if err := k.enqueue(c); err != nil {
+		k.queued.Add(-n)
+		return err
+	}
+	return nil
+}
+
+// enqueue puts a command into the queue, as long as the keeper will take it out
+// again.
+func (k *Keeper) enqueue(c *command) error {
+	k.gate.RLock()
+	defer k.gate.RUnlock()
+	if k.closed {
+		return errStopping
+	}
 	select {
 	case k.commands <- c:
 		return nil
 	default:
-		k.queued.Add(-n)
 		return errOverloaded
 	}
 }
@@ -88,8 +98,8 @@ func (k *Keeper) Post(ctx context.Context, b Batch) ([]Result, error) {
 	return c.results, nil
 }
 
-// Submit is Post without the wait: done is called once, from the keeper's
-// goroutine, which it must not block. If Submit returns an error, done is not
+// Submit is Post without the wait: done is called once, from a goroutine of the
+// keeper's, which it must not block. If Submit returns an error, done is not
 // called.
 func (k *Keeper) Submit(b Batch, done func([]Result, error)) error {
 	c := &command{batch: b}
@@ -108,7 +118,7 @@ func (k *Keeper) decide(w *work, c *command) {
 		k.partial = nil
 	case c.action != nil:
 		c.err = c.action(w)
-	case c.next == 0 && len(c.found) > 0 && c.trimmed != k.sweep.trimmed && !k.window.complete(len(c.found)):
+	case k.mustLookUp(c):
 		k.workers.Go(func() { k.again(c) })
 		return
 	default:
@@ -146,6 +156,9 @@ func (k *Keeper) decideBatch(w *work, c *command) {
 			at.hashID(r, &k.seeds)
 		}
 		res, write := k.admit(r, at, b.Receive)
+		if !write {
+			k.refusals.release(origin.Position)
+		}
 		if write {
 			res.Position = k.record(w, at.track, r, &res, b, &origin)
 		} else {

@@ -87,8 +87,8 @@ func (d *Declaration) checkRepeatability() *Error {
 		if err := checkDeviation("repeatability.learned.guess", r.Guess); err != nil {
 			return err
 		}
-		if !(r.Worth > 0 && r.Worth <= maxWorth) {
-			return refuse(InvalidField, "repeatability.learned.worth", "repeatability.learned.worth is %v; give the number of degrees of freedom that the guess is worth, above 0 and at most 1e9", r.Worth)
+		if !(r.Worth >= 1 && r.Worth <= maxWorth) {
+			return refuse(InvalidField, "repeatability.learned.worth", "repeatability.learned.worth is %v; give the number of degrees of freedom that the guess is worth, from 1 to 1e9", r.Worth)
 		}
 	}
 	return nil

@@ -1,6 +1,9 @@
 package engine
 
-import "context"
+import (
+	"context"
+	"math"
+)
 
 // Condition makes a change depend on what is there.
 type Condition struct {
@@ -91,6 +94,10 @@ func (t *Track) checkRedeclaration(d *Declaration) error {
 	}
 	if largest := t.decidedTally.largest; largest/d.Repeatability.scale() > maxRatio {
 		return refuse(InvalidField, "repeatability", "repeatability is less than 1e-150 times the reading %v, which has been applied; give a larger one", largest)
+	}
+	p, largest := d.levelPrior(), t.decidedTally.largest
+	if !p.Vague && (largest+math.Abs(p.Mean))/p.SD > maxRatio {
+		return refuse(InvalidField, "prior", "the prior's standard deviation %v is less than 1e-150 times the reading %v, which has been applied; give a wider prior", p.SD, largest)
 	}
 	return nil
 }

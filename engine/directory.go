@@ -30,6 +30,12 @@ func (d *directory) add(t *Track) {
 	d.byID[t.id] = place{t, t.number}
 }
 
+func (d *directory) remove(id QuantityID) {
+	d.mu.Lock()
+	defer d.mu.Unlock()
+	delete(d.byID, id)
+}
+
 // resolved is what a caller's goroutine finds out of a reading before the
 // keeper decides on it: most of the time that takes is spent waiting for memory.
 type resolved struct {

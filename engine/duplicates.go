@@ -127,7 +127,8 @@ func (w *window) add(e seenID) {
 		w.current.first = w.added
 	}
 	w.added++
-	w.newest = max(w.newest, e.receive)
+	e.receive = max(e.receive, w.newest) // the clock may step back
+	w.newest = e.receive
 	w.current.add(e)
 }
 

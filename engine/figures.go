@@ -1,6 +1,8 @@
 package engine
 
 import (
+	"slices"
+
 	"leadline.example/engine/decide"
 	"leadline.example/engine/posterior"
 )
@@ -40,15 +42,6 @@ func (k *Keeper) Figures(v *View, at Instant) (Figures, error) {
 	return f, nil
 }
 
-// Evaluate returns the level at an instant, from the readings up to then.
-func (k *Keeper) Evaluate(v *View, at Instant) (posterior.Posterior, error) {
-	m, err := k.moment(v, at)
-	if err != nil {
-		return posterior.Posterior{}, err
-	}
-	return m.level(&v.basis.Declaration, at), nil
-}
-
 // figuresOf evaluates a level under the declaration in force.
 func figuresOf(p posterior.Posterior, d *Declaration) Figures {
 	var f Figures
@@ -75,15 +68,14 @@ func (k *Keeper) moment(v *View, at Instant) (*fold, error) {
 	if !v.HasLast || at >= v.LastTime {
 		return &v.fold, nil
 	}
-	d := &v.basis.Declaration
-	if base := &v.marks[0]; v.canonical && (base.count == 0 || base.lastTime <= at) {
-		return v.recentMoment(d, at), nil
+	l := lawOf(&v.basis.Declaration)
+	if base := &v.marks[0]; !v.Rebuilding && (base.count == 0 || base.lastTime <= at) {
+		return v.recentMoment(&l, at), nil
 	}
-	all, err := loadEntries(k.Ledger(), v.Quantity.Number, v.Position, v.tally.count, v.rows)
+	all, err := v.entries(k.Ledger(), &l)
 	if err != nil {
 		return nil, err
 	}
-	l := lawOf(d)
 	var f fold
 	for i := range all {
 		if all[i].Time > at {
@@ -95,14 +87,33 @@ func (k *Keeper) moment(v *View, at Instant) (*fold, error) {
 }
 
 // recentMoment folds on from the last mark that is not later than at.
-func (v *View) recentMoment(d *Declaration, at Instant) *fold {
+func (v *View) recentMoment(l *law, at Instant) *fold {
 	mark := 0
-	for mark+1 < len(v.marks) && v.marks[mark+1].lastTime <= at {
+	for l.ordered && mark+1 < len(v.marks) && v.marks[mark+1].lastTime <= at {
 		mark++
 	}
-	l, f := lawOf(d), v.marks[mark]
-	for i := v.markFrom + mark*markSpacing; i < len(v.rows) && v.rows[i].Time <= at; i++ {
-		f.add(&l, &v.rows[i].Row)
+	f := v.marks[mark]
+	for i := v.markFrom + mark*markSpacing; i < len(v.rows); i++ {
+		if e := &v.rows[i]; e.Time <= at {
+			f.add(l, &e.Row)
+		} else if l.ordered {
+			break
+		}
 	}
 	return &f
+}
+
+// entries returns all readings in the belief: while it is rebuilt, those of the
+// position that it shows.
+func (v *View) entries(from Ledger, l *law) ([]entry, error) {
+	through, count, recent := v.Position, v.tally.count, v.rows
+	if v.Rebuilding {
+		through, count = v.foldedTo, v.fold.count
+		recent = slices.DeleteFunc(slices.Clone(recent), func(e entry) bool { return e.Position > through })
+	}
+	all, err := loadEntries(from, v.Quantity.Number, through, count, recent)
+	if err != nil || !l.ordered {
+		return all, err
+	}
+	return all, orderTies(from, all)
 }

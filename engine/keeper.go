@@ -75,7 +75,10 @@ type Keeper struct {
 	queued   atomic.Int64 // readings in commands
 	stopping chan struct{}
 	stopped  chan struct{}
+	gate     sync.RWMutex // guards closed; held to put a command into the queue
+	closed   bool         // nothing more is put into the queue
 	once     sync.Once
+	resumes  sync.Mutex // one Resume at a time
 	closeErr error
 
 	// Of the keeper's goroutine.
@@ -324,6 +327,9 @@ func (k *Keeper) finish() {
 			k.fail(err)
 		}
 	}
+	k.gate.Lock()
+	k.closed = true
+	k.gate.Unlock()
 	close(k.commits)
 	close(k.jobQueue)
 	k.workers.Wait()
@@ -331,6 +337,7 @@ func (k *Keeper) finish() {
 	for {
 		select {
 		case c := <-k.commands: // came while the keeper was stopping
+			k.queued.Add(-int64(len(c.batch.Readings)))
 			c.err = errStopping
 			c.done()
 		default:

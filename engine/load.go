@@ -6,8 +6,7 @@ import (
 )
 
 // load opens the ledger and brings the state up to its end: from the last
-// complete checkpoint and the records after it. It also serves to begin again
-// after a full disk.
+// complete checkpoint and the records after it.
 func (k *Keeper) load() error {
 	l, err := k.options.Open()
 	if err != nil {
@@ -34,7 +33,7 @@ func (k *Keeper) loadFrom(l Ledger) error {
 	if err != nil {
 		return err
 	}
-	k.sweep = sweeper{segment: sweep.Segment, stored: sweep.Through, trimmed: sweep.Through, trim: len(k.byNumber)}
+	k.sweep = sweeper{last: sweep.Segment, stored: sweep.Through, trimmed: sweep.Through, trim: len(k.byNumber)}
 	k.trimmed.Store(uint64(sweep.Through))
 	sum, err := k.restoreSummary(sweep.Summary)
 	if err != nil {
@@ -199,7 +198,7 @@ func (k *Keeper) present() error {
 		if j.track.job != j {
 			continue
 		}
-		if j.run(k.ledger); j.err != nil {
+		if j.run(); j.err != nil {
 			return j.err
 		}
 		k.finishJob(j)
@@ -213,52 +212,5 @@ func (k *Keeper) present() error {
 	k.decidedTo = Position(k.position.Load())
 	k.tracks.Store(nil)
 	k.publish(k.decidedTo)
-	return nil
-}
-
-// Resume tries to take up writing again after a full disk: it closes the
-// ledger, opens it anew and commits an empty group. It returns nil at once
-// while nothing is wrong, and an error if writing is still impossible.
-func (k *Keeper) Resume() error {
-	err := k.Health()
-	if !errors.Is(err, ErrDiskFull) {
-		return err
-	}
-	c := &command{resume: true}
-	done := make(chan struct{})
-	c.done = func() { close(done) }
-	select {
-	case k.commands <- c:
-	case <-k.stopping:
-		return errStopping
-	}
-	select {
-	case <-done:
-		return c.err
-	case <-k.stopped:
-		return errStopping
-	}
-}
-
-// resume is Resume in the keeper's goroutine, while no group is on its way.
-func (k *Keeper) resume() error {
-	if !errors.Is(k.failed, ErrDiskFull) {
-		return k.failed
-	}
-	err := k.ledger.Close()
-	if err == nil {
-		err = k.load()
-	}
-	if err == nil {
-		err = k.ledger.Append(&Group{})
-	}
-	if err != nil {
-		if !errors.Is(err, ErrDiskFull) {
-			k.options.OnFault(err)
-		}
-		return err
-	}
-	k.failed = nil
-	k.health.Store(nil)
 	return nil
 }

@@ -100,16 +100,26 @@ func search(all []late, at Instant) (first int, hit bool) {
 	})
 }
 
+// mustLookUp tells whether the lookup of c doesn't cover what the window lacks.
+func (k *Keeper) mustLookUp(c *command) bool {
+	return c.next == 0 && len(c.found) > 0 && c.trimmed != k.sweep.trimmed && !k.window.complete(len(c.found))
+}
+
+// maxLookups is how often a command is looked up before its sender is asked to
+// come again: each time a checkpoint ended during the lookup.
+const maxLookups = 5
+
 // again looks a command up anew and puts it back into the queue.
 func (k *Keeper) again(c *command) {
 	err := k.resolve(c, true)
+	if c.lookups++; err == nil && c.lookups > maxLookups {
+		err = errOverloaded
+	}
 	if err == nil {
-		select {
-		case k.commands <- c:
-			return
-		case <-k.stopping:
-			err = errStopping
-		}
+		err = k.enqueue(c)
+	}
+	if err == nil {
+		return
 	}
 	c.err = err
 	k.queued.Add(-int64(len(c.batch.Readings)))

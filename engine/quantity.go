@@ -31,7 +31,7 @@ const (
 )
 
 // Prior is what was known of the level before any reading. It is kept as it
-// was declared; Moments gives the normal distribution it stands for.
+// was declared; levelPrior gives the normal distribution it stands for.
 type Prior struct {
 	Form              PriorForm
 	Mean              float64
@@ -57,7 +57,7 @@ type Repeatability struct {
 	Form              RepeatabilityForm
 	StandardDeviation float64 // r, above 0
 	Guess             float64 // r^2 ~ scaled inverse chi-squared(Worth, Guess^2)
-	Worth             float64 // degrees of freedom, above 0
+	Worth             float64 // degrees of freedom, at least 1
 }
 
 // Learned tells whether r is learned from the readings.

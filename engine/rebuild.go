@@ -14,6 +14,7 @@ type job struct {
 	recent   []entry // the track's rows when the job began
 	count    int     // readings applied by then
 	position Position
+	ledger   Ledger
 
 	fold  fold
 	last  entry
@@ -24,33 +25,68 @@ type job struct {
 }
 
 // run does the work.
-func (j *job) run(l Ledger) {
-	all, err := loadEntries(l, j.number, j.position, j.count, j.recent)
+func (j *job) run() {
+	all, err := loadEntries(j.ledger, j.number, j.position, j.count, j.recent)
 	if err != nil {
 		j.fault = err
-		if all, j.err = replayEntries(l, j.number, j.position); j.err != nil {
+		if all, j.err = replayEntries(j.ledger, j.number, j.position); j.err != nil {
 			return
 		}
 	}
 	var t Track
 	t.rest(j.quantity)
 	t.reset()
-	if t.law.ordered {
-		for i := range all {
-			t.extend(&all[i])
-		}
-		j.rows, j.marks = t.rows, t.marks
-	} else {
-		for i := range all {
-			t.fold.add(&t.law, &all[i].Row)
-		}
-		j.rows, j.marks = j.recent, t.marks
+	if !t.law.ordered {
+		j.sum(&t, all)
+		return
 	}
-	j.fold, j.last = t.fold, t.last
+	if j.err = j.order(all); j.err != nil {
+		return
+	}
+	for i := range all {
+		t.extend(&all[i])
+	}
+	j.fold, j.last, j.rows, j.marks = t.fold, t.last, t.rows, t.marks
 }
 
-// loadEntries returns, in canonical order, the readings of a quantity up to a
-// ledger position, of which there are count: those in the ledger's complete
+// sum folds where the order doesn't matter: what is no longer in memory makes
+// the mark, and the recent rows stay.
+func (j *job) sum(t *Track, all []entry) {
+	recent := j.positions()
+	for i := range all {
+		t.fold.add(&t.law, &all[i].Row)
+		if _, in := recent[all[i].Position]; !in {
+			t.marks[0].add(&t.law, &all[i].Row)
+		}
+	}
+	j.fold, j.rows, j.marks = t.fold, slices.Clip(j.recent), t.marks
+}
+
+// positions returns those of the recent rows.
+func (j *job) positions() map[Position]struct{} {
+	all := make(map[Position]struct{}, len(j.recent))
+	for i := range j.recent {
+		all[j.recent[i].Position] = struct{}{}
+	}
+	return all
+}
+
+// order completes the canonical order and names the rows that may stay in
+// memory: from the first recent one on, and as many before as a mark spans.
+func (j *job) order(all []entry) error {
+	if err := orderTies(j.ledger, all); err != nil {
+		return err
+	}
+	recent := j.positions()
+	first := slices.IndexFunc(all, func(e entry) bool { _, in := recent[e.Position]; return in })
+	if first < 0 {
+		first = len(all)
+	}
+	return nameEntries(j.ledger, all[max(0, first-markSpacing-1):])
+}
+
+// loadEntries returns, by time, the readings of a quantity up to a ledger
+// position, of which there are count: those in the ledger's complete
 // segments, which may go beyond it, and the recent ones, some of which may be
 // in segments too.
 func loadEntries(l Ledger, number QuantityNumber, through Position, count int, recent []entry) ([]entry, error) {
@@ -74,7 +110,7 @@ func loadEntries(l Ledger, number QuantityNumber, through Position, count int, r
 		return nil, fmt.Errorf("the index of quantity number %d has %d readings up to position %d, not %d", number, len(all), through, count)
 	}
 	slices.SortFunc(all, entry.compare)
-	return all, orderTies(l, all)
+	return all, nil
 }
 
 // replayEntries is loadEntries from the records themselves, for when the index
@@ -107,8 +143,7 @@ func orderTies(l Ledger, all []entry) error {
 		}
 		i = n
 	}
-	// The last entry is what later readings are compared with.
-	return nameEntries(l, all[max(0, len(all)-1):])
+	return nil
 }
 
 // nameEntries fills in the reading IDs that are missing.

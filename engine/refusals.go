@@ -61,6 +61,10 @@ func (f *refusals) take(at Position) bool {
 	return true
 }
 
+// release gives a reserved refusal back: it turned out to be a duplicate, and
+// stays in the log.
+func (f *refusals) release(at Position) { delete(f.taken, at) }
+
 // all returns the log as the keeper's goroutine sees it.
 func (f *refusals) all() []refusal {
 	if len(f.gone) > 0 {

@@ -12,7 +12,8 @@ import (
 // only what came later.
 type sweeper struct {
 	active  bool
-	segment uint32   // being written; the last complete one if not active
+	segment uint32   // being written, if active
+	last    uint32   // the last complete segment
 	from    Position // rows after this ...
 	through Position // ... and up to this belong to segment
 	next    int      // index of the next track
@@ -48,22 +49,29 @@ func (k *Keeper) addCheckpoint(w *work) {
 		s.begin(at)
 	}
 	if s.active {
-		k.sweepPiece(&w.Group, max(minCheckpointBytes, w.bytes/3))
+		k.sweepPiece(&w.Group, max(minCheckpointBytes, w.bytes/3), s.due(at, every, len(k.byNumber)))
 	}
 }
 
 func (s *sweeper) begin(at Position) {
 	*s = sweeper{
-		active: true, segment: s.segment + 1, from: s.stored, through: at,
+		active: true, segment: s.last + 1, last: s.last, from: s.stored, through: at,
 		stored: s.stored, trimmed: s.trimmed, trim: s.trim,
 	}
 }
 
-// sweepPiece adds checkpoint entries of about that many bytes to g and, at the
-// end, what completes the sweep.
-func (k *Keeper) sweepPiece(g *Group, budget int) {
+// due is how many tracks the sweep must be through at a position for it to end
+// before the next is to begin: the budget gives way where the rows of a sweep
+// take more than it allows.
+func (s *sweeper) due(at Position, every, tracks int) int {
+	return int(float64(tracks) * min(1, float64(at-s.through)/float64(every)))
+}
+
+// sweepPiece adds checkpoint entries to g, of about that many bytes and at least
+// until that many tracks are done, and at the end what completes the sweep.
+func (k *Keeper) sweepPiece(g *Group, budget, due int) {
 	s := &k.sweep
-	for budget > 0 {
+	for budget > 0 || s.next < due {
 		if len(s.rows) > 0 {
 			budget -= s.rowsEntry(g, k.byNumber[s.next-1].number)
 			continue
@@ -75,7 +83,7 @@ func (k *Keeper) sweepPiece(g *Group, budget int) {
 		}
 		t := k.byNumber[s.next]
 		s.next++
-		if t.position <= s.from {
+		if t.position <= s.from && t.position <= t.saved {
 			continue // neither a row nor anything else since the last sweep
 		}
 		if t.position > t.saved {
@@ -135,7 +143,7 @@ func (t *Track) rowsBetween(from, through Position) []Row {
 func (k *Keeper) landCheckpoint(w *work) {
 	s := &k.sweep
 	if w.Sweep != nil {
-		s.stored = w.Sweep.Through
+		s.stored, s.last = w.Sweep.Through, w.Sweep.Segment
 	}
 	if k.partial != nil {
 		return // which was looked up for what is trimmed now
@@ -164,12 +172,12 @@ func (k *Keeper) finalCheckpoint() error {
 		}
 		for k.sweep.active {
 			var g Group
-			k.sweepPiece(&g, maxGroupBytes)
+			k.sweepPiece(&g, maxGroupBytes, 0)
 			if err := k.ledger.Append(&g); err != nil {
 				return err
 			}
 			if g.Sweep != nil {
-				k.sweep.stored = g.Sweep.Through
+				k.sweep.stored, k.sweep.last = g.Sweep.Through, g.Sweep.Segment
 			}
 		}
 	}

@@ -5,6 +5,8 @@ import (
 	"slices"
 	"sort"
 	"sync/atomic"
+
+	"leadline.example/engine/posterior"
 )
 
 // markSpacing is the number of rows from one mark to the next: a late reading
@@ -14,12 +16,14 @@ const markSpacing = 64
 // Track is one quantity's place in the keeper. All but its View belongs to the
 // keeper's goroutine.
 //
-// The rows of an ordered track are a canonical run that ends with the latest
-// reading, and marks[i] is the fold of everything before rows[markFrom +
-// i*markSpacing]; so a reading that comes late, but not before marks[0], costs
+// The rows of an ordered track are, from markFrom on, a canonical run that ends
+// with the latest reading, and marks[i] is the fold of everything before
+// rows[markFrom + i*markSpacing]; so a reading that comes late, but not before marks[0], costs
 // one merge and a short refold. The obvious way, to fold on arrival, would make
 // the belief depend on the order of arrival; refolding everything would make a
-// late reading cost as much as the quantity's whole life.
+// late reading cost as much as the quantity's whole life. Where the order doesn't
+// matter, rows are in order of arrival and marks[0], the only one, is the fold of
+// all that is not in rows[markFrom:].
 type Track struct {
 	id     QuantityID
 	number QuantityNumber
@@ -59,6 +63,7 @@ type rules struct {
 	unit          string
 	scale         float64 // r as far as it is known, to compare values with
 	priorTime     Instant // MinInstant without one
+	prior         posterior.Prior
 	retired       bool
 	needsOwnNoise bool // no repeatability is declared
 	revision      uint32
@@ -71,6 +76,7 @@ func (t *Track) decide(q *Quantity) {
 	t.rules = rules{
 		unit: d.Unit, scale: d.Repeatability.scale(), priorTime: MinInstant, retired: q.Retired,
 		needsOwnNoise: d.Repeatability.Form == RepeatabilityAbsent, revision: q.Revision,
+		prior: d.levelPrior(),
 	}
 	if d.Prior.HasTime {
 		t.rules.priorTime = d.Prior.Time
@@ -82,7 +88,7 @@ func (t *Track) decide(q *Quantity) {
 type tally struct {
 	count       int
 	bare        int     // without an uncertainty of their own
-	largest     float64 // magnitude of those
+	largest     float64 // magnitude
 	first, last Instant
 }
 
@@ -96,8 +102,8 @@ func (a *tally) add(r *Row) {
 	a.count++
 	if !r.HasUncertainty {
 		a.bare++
-		a.largest = max(a.largest, math.Abs(r.Value))
 	}
+	a.largest = max(a.largest, math.Abs(r.Value))
 }
 
 // ID returns the quantity's ID.
@@ -117,8 +123,7 @@ func (t *Track) publish(change uint64) {
 		Rebuilding: t.job != nil,
 		tally:      t.tally,
 		basis:      t.basis, fold: t.fold, foldedTo: t.foldedTo,
-		rows: t.rows, canonical: t.job == nil && t.law.ordered,
-		marks: t.marks, markFrom: t.markFrom,
+		rows: t.rows, marks: t.marks, markFrom: t.markFrom,
 	})
 }
 
@@ -152,6 +157,7 @@ func (t *Track) settle(budget int) (steps int, ok bool) {
 		}
 		return 0, true
 	}
+	first := fresh[0].Position
 	if !slices.IsSortedFunc(fresh, entry.compare) {
 		slices.SortFunc(fresh, entry.compare)
 	}
@@ -161,7 +167,10 @@ func (t *Track) settle(budget int) (steps int, ok bool) {
 		}
 		return 0, true
 	}
-	return t.insert(fresh, budget)
+	if steps, ok = t.insert(fresh, budget); !ok {
+		t.foldedTo = first - 1
+	}
+	return steps, ok
 }
 
 // follows tells whether e comes after all readings of an ordered track.
@@ -210,7 +219,7 @@ func (t *Track) insert(fresh []entry, budget int) (steps int, ok bool) {
 		return 0, false
 	}
 	tail := mergeEntries(t.rows[from:], fresh)
-	t.rows = append(slices.Clone(t.rows[:from]), make([]entry, 0, len(tail))...)
+	t.rows = append(make([]entry, 0, from+len(tail)), t.rows[:from]...)
 	t.fold = t.marks[mark]
 	t.marks = slices.Clone(t.marks[:mark+1])
 	for i := range tail {
@@ -238,9 +247,7 @@ func (t *Track) trim(stored Position) {
 		return
 	}
 	if !t.law.ordered {
-		if slices.ContainsFunc(t.rows, func(e entry) bool { return e.Position <= stored }) {
-			t.rows = slices.DeleteFunc(slices.Clone(t.rows), func(e entry) bool { return e.Position <= stored })
-		}
+		t.trimSum(stored)
 		return
 	}
 	n := 0
@@ -257,4 +264,24 @@ func (t *Track) trim(stored Position) {
 	t.rows = slices.Clone(t.rows[t.markFrom+mark*markSpacing:])
 	t.marks = slices.Clone(t.marks[mark:])
 	t.markFrom = 0
+}
+
+// trimSum is trim where the order doesn't matter: the mark takes in the rows
+// that go.
+func (t *Track) trimSum(stored Position) {
+	if !slices.ContainsFunc(t.rows, func(e entry) bool { return e.Position <= stored }) {
+		return
+	}
+	base, rows, from := t.marks[0], []entry(nil), t.markFrom
+	for i := range t.rows {
+		switch e := &t.rows[i]; {
+		case e.Position > stored:
+			rows = append(rows, *e)
+		case i < from:
+			t.markFrom--
+		default:
+			base.add(&t.law, &e.Row)
+		}
+	}
+	t.rows, t.marks = rows, []fold{base}
 }

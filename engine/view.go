@@ -17,15 +17,14 @@ type View struct {
 	Rebuilding   bool    // the belief is that of an earlier position, until a rebuild is done
 	Change       uint64  // grows with each View of any quantity
 
-	tally     tally     // of all applied readings, also those not in the belief yet
-	basis     *Quantity // declaration on which fold rests
-	fold      fold
-	foldedTo  Position
-	rows      []entry // the applied readings that need not be in storage yet
-	canonical bool    // rows are in canonical order, after marks[0]
-	marks     []fold  // fold before rows[markFrom + i*markSpacing]
-	markFrom  int
-	still     atomic.Pointer[Figures] // of a belief that time doesn't move, once asked for
+	tally    tally     // of all applied readings, also those not in the belief yet
+	basis    *Quantity // declaration on which fold rests
+	fold     fold
+	foldedTo Position
+	rows     []entry // the applied readings that need not be in storage yet
+	marks    []fold  // as in Track
+	markFrom int
+	still    atomic.Pointer[Figures] // of a belief that time doesn't move, once asked for
 }
 
 // Declared returns the quantity with the declaration that the belief rests on:
