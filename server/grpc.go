@@ -2,7 +2,6 @@ package server
 
 import (
 	"context"
-	"fmt"
 	"time"
 
 	"google.golang.org/grpc"
@@ -11,9 +10,7 @@ import (
 	healthgrpc "google.golang.org/grpc/health/grpc_health_v1"
 	"google.golang.org/grpc/keepalive"
 	"google.golang.org/grpc/reflection"
-	"google.golang.org/protobuf/proto"
 
-	"leadline.example/engine"
 	leadlinev1 "leadline.example/proto/leadline/v1"
 )
 
@@ -69,7 +66,7 @@ func (s *Server) newGRPC(implementations *services) *grpc.Server {
 func (s *Server) answerUnary(ctx context.Context, request any, info *grpc.UnaryServerInfo, handle grpc.UnaryHandler) (any, error) {
 	var response any
 	err := recovered(func() (err error) {
-		if m, ok := request.(proto.Message); ok && proto.Size(m) > maxBodyBytes {
+		if isTooLarge(request) {
 			return messageTooLarge()
 		}
 		response, err = handle(ctx, request)
@@ -78,13 +75,9 @@ func (s *Server) answerUnary(ctx context.Context, request any, info *grpc.UnaryS
 	return response, s.statusError(info.FullMethod, err)
 }
 
-func messageTooLarge() error {
-	return refuse(engine.BodyTooLarge, "", fmt.Sprintf("the message is larger than %d bytes; send the readings in several", maxBodyBytes))
-}
-
 // answerStream does the same for streams.
 func (s *Server) answerStream(service any, stream grpc.ServerStream, info *grpc.StreamServerInfo, handle grpc.StreamHandler) error {
-	return s.statusError(info.FullMethod, recovered(func() error { return handle(service, stream) }))
+	return s.statusError(info.FullMethod, recovered(func() error { return handle(service, sizedStream{stream}) }))
 }
 
 func (s *Server) statusError(method string, err error) error {

@@ -30,13 +30,13 @@ type wireBatch struct {
 
 // Unmarshal decodes a message.
 func (c readingCodec) Unmarshal(data mem.BufferSlice, v any) error {
+	if data.Len() > maxBodyBytes {
+		markTooLarge(v)
+		return nil
+	}
 	batch, ok := v.(*wireBatch)
 	if !ok {
 		return c.CodecV2.Unmarshal(data, v)
-	}
-	if data.Len() > maxBodyBytes {
-		*batch = wireBatch{err: messageTooLarge()}
-		return nil
 	}
 	buffer := data.MaterializeToBuffer(mem.DefaultBufferPool())
 	*batch, ok = scanBatch(buffer.ReadOnlyData())

@@ -131,6 +131,12 @@ func TestMessageOverTheLimitHasAReason(t *testing.T) {
 	wantStatus(t, err, codes.ResourceExhausted, engine.BodyTooLarge, "")
 	_, err = r.readings.PostReadings(t.Context(), &leadlinev1.PostReadingsRequest{Readings: []*leadlinev1.Reading{large}})
 	wantStatus(t, err, codes.ResourceExhausted, engine.BodyTooLarge, "")
+	watch, err := r.beliefs.WatchBeliefs(t.Context(), &leadlinev1.WatchBeliefsRequest{Prefix: large.ReadingId})
+	if err != nil {
+		t.Fatal(err)
+	}
+	_, err = watch.Recv()
+	wantStatus(t, err, codes.ResourceExhausted, engine.BodyTooLarge, "")
 	large.ReadingId += large.ReadingId // beyond what gRPC takes, which gives no reason
 	_, err = r.readings.PostReadings(t.Context(), &leadlinev1.PostReadingsRequest{Readings: []*leadlinev1.Reading{large}})
 	wantStatus(t, err, codes.ResourceExhausted, "", "")

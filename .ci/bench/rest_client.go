@@ -34,7 +34,7 @@ func connect(address string) (*connection, error) {
 func (c *connection) post(path, quantity, rest string) error {
 	b := append(c.request[:0], "POST "...)
 	b = append(append(append(b, path...), quantity...), rest...)
-	b = append(b, " HTTP/1.1\r\nHost: bench\r\nContent-Type: application/json\r\nContent-Length: "...)
+	b = append(b, " HTTP/1.1\r\nHost: localhost\r\nContent-Type: application/json\r\nContent-Length: "...)
 	b = strconv.AppendInt(b, int64(len(c.body)), 10)
 	b = append(append(b, "\r\n\r\n"...), c.body...)
 	c.request = b

@@ -20,7 +20,7 @@ func (s *service) stall(path string) *raw {
 	if err := r.Conn.(*net.TCPConn).SetReadBuffer(4096); err != nil {
 		s.t.Fatal(err)
 	}
-	r.say(strings.Repeat("GET "+path+" HTTP/1.1\r\nHost: plant\r\n\r\n", 20))
+	r.say(strings.Repeat("GET "+path+" HTTP/1.1\r\nHost: localhost\r\n\r\n", 20))
 	line, err := r.reader.ReadString('\n')
 	if err != nil || !strings.Contains(line, "200") {
 		s.t.Fatalf("%s: %q, %v", path, line, err)
@@ -85,7 +85,7 @@ type follower struct{ *raw }
 func (s *service) follow(id string) follower {
 	s.t.Helper()
 	r := s.dial()
-	r.say("GET /v1/beliefs:watch?prefix=" + id + " HTTP/1.1\r\nHost: plant\r\n\r\n")
+	r.say("GET /v1/beliefs:watch?prefix=" + id + " HTTP/1.1\r\nHost: localhost\r\n\r\n")
 	return follower{r}
 }
 
