@@ -13,6 +13,7 @@ import (
 	"time"
 
 	"leadline.example/engine"
+	leadlinev1 "leadline.example/proto/leadline/v1"
 	"leadline.example/server"
 )
 
@@ -91,6 +92,31 @@ func (k *blockedKeeper) Post(context.Context, engine.Batch) ([]engine.Result, er
 	k.entered <- struct{}{}
 	<-k.release
 	return nil, context.Canceled
+}
+
+func (k *blockedKeeper) Submit(engine.Batch, func([]engine.Result, error)) error {
+	k.entered <- struct{}{}
+	return nil
+}
+
+// A batch of a stream that the keeper has not answered has an end too.
+func TestStopEndsStreamsWithAnUnansweredBatch(t *testing.T) {
+	k := &blockedKeeper{entered: make(chan struct{})}
+	r := startServerOn(t, filepath.Join(t.TempDir(), "ledger"), newClock(), func(o *server.Options) {
+		k.ReadingKeeper, o.Readings, o.DrainTime = o.Keeper, k, time.Millisecond
+	})
+	stream, err := r.readings.StreamReadings(t.Context())
+	if err != nil {
+		t.Fatal(err)
+	}
+	if err := stream.Send(&leadlinev1.StreamReadingsRequest{Sequence: 1, Readings: []*leadlinev1.Reading{reading("gap", 0.8, "")}}); err != nil {
+		t.Fatal(err)
+	}
+	<-k.entered
+	r.stop()
+	if ack, err := stream.Recv(); err == nil {
+		t.Errorf("the batch was acknowledged, though nobody answered for it: %v", ack)
+	}
 }
 
 // What takes longer than the time to drain is broken off; that is in the log,
