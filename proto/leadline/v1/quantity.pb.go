@@ -872,7 +872,7 @@ type Repeatability_Learned struct {
 	state protoimpl.MessageState `protogen:"open.v1"`
 	// Guess of the repeatability standard deviation, above 0, in the quantity's unit.
 	Guess *float64 `protobuf:"fixed64,1,opt,name=guess,proto3,oneof" json:"guess,omitempty"`
-	// Worth of the guess in degrees of freedom, above 0: about the number of
+	// Worth of the guess in degrees of freedom, from 1 to 1e9: about the number of
 	// readings from which such a guess could have been made.
 	Worth         *float64 `protobuf:"fixed64,2,opt,name=worth,proto3,oneof" json:"worth,omitempty"`
 	unknownFields protoimpl.UnknownFields
