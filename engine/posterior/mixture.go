@@ -27,16 +27,20 @@ type mixture struct {
 	difference float64 // ybar - m
 	predictive bool
 
-	origin   float64 // x at which logWeight is 0: the highest maximum of p
-	chi      float64 // exp(-2x) there
-	logShare float64 // ln(rho / (1 + rho)) there
-	rest     float64 // conflict / sqrt(1 + rho) there
-	reach    reach
-	nodes    []node
-	total    float64 // ln of the integral of exp(logWeight)
-	median   float64 // of x, near enough for a start
-	hasMean  bool
-	hasSD    bool
+	origin float64 // x at which logWeight is 0: the highest maximum of p
+	chi    float64 // exp(-2x) there
+	logWon float64 // ln(1 / (1 + rho)) there
+	won    float64
+	share  float64 // rho / (1 + rho) there
+	rest   float64 // conflict / sqrt(1 + rho) there
+
+	region  region // of p
+	nodes   []node
+	total   float64 // ln of the integral of exp(logWeight)
+	median  float64 // of x, near enough for a start
+	hasMean bool
+	hasSD   bool
+	work    *int // counts the points at which an integrand is computed, if set
 }
 
 // node is one normal of the mixture.
@@ -55,38 +59,64 @@ type component struct {
 
 // newMixture computes the nodes and moments.
 func newMixture(before normal, s spread, predictive bool) Posterior {
+	return prepared(before, s, predictive).build()
+}
+
+// prepared sets the parameters.
+func prepared(before normal, s spread, predictive bool) *mixture {
 	m := &mixture{
 		before: before, data: s.mean, n: s.n, nu: s.worth,
 		r0: math.Sqrt(s.sum / s.worth), predictive: predictive,
 	}
 	if s.n > 0 {
-		m.logC = 2 * math.Log(m.r0/math.Sqrt(s.n)/before.sd)
+		m.logC = 2 * (math.Log(m.r0) - math.Log(s.n)/2 - math.Log(before.sd))
 		m.difference = s.mean.Minus(before.mean)
 		m.conflict = m.difference / before.sd
 	}
-	m.moments()
+	return m
+}
+
+// build computes the rest.
+func (m *mixture) build() Posterior {
+	m.exist()
 	m.locate()
 	m.fill()
-	return m.publish()
+	mean, sd := m.moments()
+	return Posterior{form: FormMixture, location: mean, scale: sd, mixture: m}
 }
 
 // component returns the normal at x.
 func (m *mixture) component(x float64) component {
-	c := component{kept: 1, sd: m.before.sd}
-	if m.n > 0 {
-		rho := math.Exp(m.logC + 2*x)
-		c.won = 1 / (1 + rho)
-		c.kept = 1 / (1 + 1/rho)
-		if rho < 1 { // it may have vanished
-			c.sd = m.r0 * math.Exp(x) / math.Sqrt(m.n) * math.Sqrt(c.won)
-		} else {
-			c.sd = m.before.sd * math.Sqrt(c.kept)
-		}
-	}
+	c := m.level(x)
 	if m.predictive {
-		c.sd = math.Hypot(c.sd, m.r0*math.Exp(x))
+		c.sd = math.Hypot(c.sd, m.r(x))
 	}
 	return c
+}
+
+// level returns the normal of the level at x.
+func (m *mixture) level(x float64) component {
+	c := component{kept: 1, sd: m.before.sd}
+	if m.n == 0 {
+		return c
+	}
+	rho := math.Exp(m.logC + 2*x)
+	c.won = 1 / (1 + rho)
+	c.kept = 1 / (1 + 1/rho)
+	if rho < 1 { // it may have vanished
+		c.sd = m.r(x) / math.Sqrt(m.n) * math.Sqrt(c.won)
+	} else {
+		c.sd = m.before.sd * math.Sqrt(c.kept)
+	}
+	return c
+}
+
+// r returns r at x.
+func (m *mixture) r(x float64) float64 {
+	if x > 600 { // r need not be out of range where exp(x) is
+		return math.Exp(x/2) * m.r0 * math.Exp(x/2)
+	}
+	return m.r0 * math.Exp(x)
 }
 
 // start makes x the origin.
@@ -94,12 +124,17 @@ func (m *mixture) start(x float64) {
 	m.origin = x
 	m.chi = math.Exp(-2 * x)
 	logRho := m.logC + 2*x
-	m.rest = m.conflict / math.Sqrt(1+math.Exp(logRho))
-	m.logShare = logRho - math.Log1p(math.Exp(logRho))
-	if logRho > 0 {
-		m.logShare = -math.Log1p(math.Exp(-logRho))
+	m.logWon = -softplus(logRho)
+	m.won = math.Exp(m.logWon)
+	m.share = math.Exp(-softplus(-logRho))
+	m.rest = m.conflict * math.Sqrt(m.won)
+	if m.won < 1e-200 { // it may have vanished
+		m.rest = math.Copysign(math.Exp(math.Log(math.Abs(m.conflict))+m.logWon/2), m.conflict)
 	}
 }
+
+// softplus returns ln(1 + exp(x)).
+func softplus(x float64) float64 { return math.Max(x, 0) + math.Log1p(math.Exp(-math.Abs(x))) }
 
 // logWeight is ln p(x) less its value at the origin, written in differences so
 // that large terms of nearly equal size never meet. With
@@ -108,18 +143,37 @@ func (m *mixture) start(x float64) {
 //
 // the normal factor changes by -ln(1 + q) / 2 + rest^2 / 2 * q / (1 + q).
 func (m *mixture) logWeight(x float64) float64 {
+	if m.work != nil {
+		*m.work++
+	}
 	y := x - m.origin
 	w := -m.nu / 2 * m.chiTerm(y)
 	switch {
 	case m.n == 0:
 		return w
-	case y > 150: // exp(2y) could overflow
-		e := m.logShare + 2*y
-		return w - math.Max(e, 0)/2 - math.Log1p(math.Exp(-math.Abs(e)))/2 + m.rest*m.rest/2/(1+math.Exp(-e))
+	case math.Abs(y) > 150:
+		return w + m.logFactorFar(x)
 	}
-	q := math.Exp(m.logShare) * math.Expm1(2*y)
-	f := m.rest * math.Sqrt(math.Abs(q/(1+q)))
-	return w - math.Log1p(q)/2 + math.Copysign(f*f/2, q)
+	q := m.share * math.Expm1(2*y)
+	whole := m.won + m.share*math.Exp(2*y) // 1 + q, without cancellation
+	f := m.rest * math.Sqrt(math.Abs(q)/whole)
+	change := math.Log(whole)
+	if math.Abs(y) < 1 {
+		change = math.Log1p(q)
+	}
+	return w - change/2 + math.Copysign(f*f/2, q)
+}
+
+// logFactorFar is the change of the normal factor where exp(2y) or its inverse
+// could leave the range: with 1 - exp(-2|y|) = 1,
+//
+//	rest^2 q / (1 + q) = conflict^2 rho / ((1 + rho0) (1 + rho)),  y > 0,
+//	                   = -conflict^2 rho0 / ((1 + rho0) (1 + rho)), y < 0.
+func (m *mixture) logFactorFar(x float64) float64 {
+	logRho := m.logC + 2*math.Max(x, m.origin)
+	logWon := -softplus(m.logC + 2*x)
+	f := math.Exp(math.Log(math.Abs(m.conflict)) + (logRho+m.logWon+logWon)/2)
+	return (logWon-m.logWon)/2 + math.Copysign(f*f/2, x-m.origin)
 }
 
 // chiTerm returns exp(-2x) - exp(-2 origin) + 2y, x = origin + y.
@@ -134,218 +188,4 @@ func (m *mixture) chiTerm(y float64) float64 {
 		return math.Exp(-2*(m.origin+y)) - m.chi + 2*y
 	}
 	return m.chi*math.Expm1(-2*y) + 2*y
-}
-
-// locate finds the highest maximum of p(x), makes it the origin and finds the
-// reach of p, widened to that of the second moment, which falls more slowly. It
-// begins with an origin at which no term is out of range.
-func (m *mixture) locate() {
-	first, last := m.features()
-	m.start(last)
-	r := survey(m.logWeight, m.below(first), last+4)
-	m.start(r.peak)
-	r.height = 0
-	if m.hasSD {
-		r = r.join(survey(func(x float64) float64 {
-			return m.logWeight(x) + 2*math.Log(m.component(x).sd)
-		}, m.below(first), math.Max(last, m.overtaken())+4))
-	}
-	m.reach = r
-}
-
-// overtaken returns the x at which r begins to outweigh the level in the
-// predictive's standard deviation, if it does.
-func (m *mixture) overtaken() float64 {
-	if !m.predictive {
-		return 0
-	}
-	return math.Log(m.before.sd / m.r0)
-}
-
-// moments tells which the distribution has. The level always has both, as it
-// is bounded by what was known before; the predictive has them if E r and
-// E r^2 exist: p falls as r^-(nu+1), or r^-nu without readings.
-func (m *mixture) moments() {
-	falls := m.nu
-	if m.n > 0 {
-		falls++
-	}
-	m.hasMean = !m.predictive || falls > 1
-	m.hasSD = !m.predictive || falls > 2
-}
-
-// features returns the smallest and largest x at which p(x) changes its course.
-func (m *mixture) features() (first, last float64) {
-	if m.n == 0 {
-		return 0, 0
-	}
-	even := -m.logC / 2 // rho = 1
-	split := even + math.Log(math.Max(1, math.Abs(m.conflict)))
-	return math.Min(0, even), math.Max(0, math.Max(even, split))
-}
-
-// below returns an x under which the exponential has won for good: nu/2 exp(-2x)
-// exceeds by far all that any other term can gain.
-func (m *mixture) below(first float64) float64 {
-	gain := 1600 + m.nu + math.Max(0, m.logC)
-	return math.Min(first-1, -math.Log(2*gain/m.nu+1)/2-1)
-}
-
-// fill sets nodes, weights and the total.
-func (m *mixture) fill() {
-	r := m.reach
-	step := r.step
-	even := r.sum(m.logWeight, step, 0)
-	for {
-		odd := r.sum(m.logWeight, step, step/2)
-		done := agree(even, odd) || (r.hi-r.lo)/step > maxNodes
-		even += odd
-		step /= 2
-		if done {
-			break
-		}
-	}
-	m.total = r.height + math.Log(even*step)
-	run := 0.0
-	first := math.Ceil((r.lo - r.peak) / step)
-	m.nodes = make([]node, 0, int((r.hi-r.peak)/step-first)+2)
-	for x := r.peak + first*step; x <= r.hi; first, x = first+1, r.peak+(first+1)*step {
-		w := math.Exp(m.logWeight(x)-r.height) / even
-		m.nodes = append(m.nodes, node{m.component(x), x, w})
-		if run < 0.5 {
-			m.median = x
-		}
-		run += w
-	}
-}
-
-// publish sums the moments: of the mean in terms of whichever anchor is nearer,
-// of the variance as that within and that between the normals.
-func (m *mixture) publish() Posterior {
-	var kept, won float64
-	for i := range m.nodes {
-		k := &m.nodes[i]
-		kept += k.weight * k.kept
-		won += k.weight * k.won
-	}
-	var variance float64
-	for i := range m.nodes {
-		k := &m.nodes[i]
-		shift := m.difference * (k.won - won)
-		if won > 0.5 {
-			shift = m.difference * (k.kept - kept)
-		}
-		variance += k.weight * (k.sd*k.sd + shift*shift)
-	}
-	mean := m.before.mean.Plus(m.difference * won)
-	if won > 0.5 {
-		mean = m.data.Plus(-m.difference * kept)
-	}
-	return Posterior{form: FormMixture, location: mean, scale: math.Sqrt(variance), mixture: m}
-}
-
-// place is a point of the line, as seen from both anchors of the mean.
-type place struct{ fromBefore, fromData float64 }
-
-func (m *mixture) place(x float64) place { return m.placed(LevelOf(x), 0) }
-
-// placed is the place at some distance from l.
-func (m *mixture) placed(l Level, distance float64) place {
-	p := place{fromBefore: l.Minus(m.before.mean) + distance}
-	if m.n > 0 {
-		p.fromData = l.Minus(m.data) + distance
-	}
-	return p
-}
-
-// standard returns (place - mean) / sd of the component; from whichever anchor
-// is nearer in weight.
-func (m *mixture) standard(p place, c *component) float64 {
-	if c.won > 0.5 {
-		return (p.fromData + m.difference*c.kept) / c.sd
-	}
-	return (p.fromBefore - m.difference*c.won) / c.sd
-}
-
-// tail returns P(X > x), or P(X < x) for the lower side.
-func (m *mixture) tail(x float64, s side) float64 {
-	switch {
-	case math.IsNaN(x):
-		return math.NaN()
-	case math.IsInf(x, int(s)):
-		return 0
-	case math.IsInf(x, 0):
-		return 1
-	}
-	return math.Exp(m.logTail(m.place(x), s))
-}
-
-// logTail returns the logarithm of the tail.
-func (m *mixture) logTail(p place, s side) float64 {
-	var half [2]float64
-	for i := range m.nodes {
-		k := &m.nodes[i]
-		half[i&1] += k.weight * math.Erfc(float64(s)*m.standard(p, &k.component)*sqrtHalf.hi) / 2
-	}
-	if served(half) {
-		return math.Log(half[0] + half[1])
-	}
-	h := func(x float64) float64 {
-		c := m.component(x)
-		return m.logWeight(x) + logNormalTail(float64(s)*m.standard(p, &c))
-	}
-	return math.Min(0, m.integral(h, p)-m.total)
-}
-
-// served tells whether p's own nodes serve for a probability that was averaged
-// over the even and the odd ones. They are as good for it as for p itself
-// unless it is small, when its integrand peaks where the nodes end, or
-// the probability given r changes faster than their step, which shows as a
-// difference between the halves.
-func served(half [2]float64) bool {
-	return half[0]+half[1] > 1e-7 && agree(half[0], half[1])
-}
-
-// integral returns ln of the integral of exp(h), where h is logWeight plus the
-// logarithm of a probability that concerns the place p.
-func (m *mixture) integral(h func(float64) float64, p place) float64 {
-	first, last := m.features()
-	last = math.Max(last, m.spread(p))
-	return survey(h, m.below(first), last+4).trapezoid(h)
-}
-
-// spread returns an x beyond which the probabilities at p no longer change
-// their course: r or r / sqrt(n) exceeds every distance.
-func (m *mixture) spread(p place) float64 {
-	d := math.Max(math.Abs(p.fromBefore), math.Max(math.Abs(p.fromData), math.Abs(m.difference)))
-	return math.Log(math.Max(d, m.before.sd) * math.Sqrt(math.Max(m.n, 1)) / m.r0)
-}
-
-// between returns P(lo <= X <= hi), lo < hi.
-func (m *mixture) between(lo, hi float64) float64 {
-	if math.IsInf(lo, -1) {
-		return m.tail(hi, lower)
-	}
-	if math.IsInf(hi, 1) {
-		return m.tail(lo, upper)
-	}
-	a, b := m.place(lo), m.place(hi)
-	var half [2]float64
-	for i := range m.nodes {
-		k := &m.nodes[i]
-		za, zb := m.standard(a, &k.component), m.standard(b, &k.component)
-		half[i&1] += k.weight * normalBetween(pair{hi: za}, pair{hi: zb}, (hi-lo)/k.sd)
-	}
-	if served(half) {
-		return half[0] + half[1]
-	}
-	h := func(x float64) float64 {
-		c := m.component(x)
-		return m.logWeight(x) + logNormalBetween(m.standard(a, &c), m.standard(b, &c), (hi-lo)/c.sd)
-	}
-	far := a
-	if math.Abs(b.fromBefore)+math.Abs(b.fromData) > math.Abs(a.fromBefore)+math.Abs(a.fromData) {
-		far = b
-	}
-	return math.Exp(math.Min(0, m.integral(h, far)-m.total))
 }

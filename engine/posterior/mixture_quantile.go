@@ -7,7 +7,8 @@ import "math"
 // Illinois variant of the false position (Dowell & Jarratt 1971, BIT 11).
 //
 // The search goes by the distance from a centre, so that it has more digits than
-// a double near the centre could have.
+// a double near the centre could have, and in t = asinh(distance / sd): where the
+// tail is a power, its logarithm is a straight line in t.
 func (m *mixture) quantile(p float64, s side) float64 {
 	target := math.Log(p)
 	c := m.component(m.median)
@@ -15,11 +16,15 @@ func (m *mixture) quantile(p float64, s side) float64 {
 	if c.won > 0.5 {
 		centre = m.data.Plus(-m.difference * c.kept)
 	}
-	z := zero(-normalQuantile(p), func(z float64) float64 {
-		return m.logTail(m.placed(centre, float64(s)*z*c.sd), s) - target
+	distance := func(t float64) float64 { return float64(s) * math.Sinh(t) * c.sd }
+	t := zero(math.Asinh(-normalQuantile(p)), func(t float64) float64 {
+		return m.logTail(m.placed(centre, distance(t)), s) - target
 	})
-	return centre.Plus(float64(s) * z * c.sd).Value()
+	return centre.Plus(distance(t)).Value()
 }
+
+// mostSearched is asinh of a distance beyond all others.
+const mostSearched = 690
 
 // zero returns the zero of a falling function, searching outwards from a.
 func zero(a float64, f func(float64) float64) float64 {
@@ -30,24 +35,30 @@ func zero(a float64, f func(float64) float64) float64 {
 	step := math.Copysign(math.Max(0.1, math.Abs(a)/8), fa)
 	b := a + step
 	fb := f(b)
-	for fa*fb > 0 && math.Abs(b) < 1e300 {
+	for fa*fb > 0 && math.Abs(b) < mostSearched {
 		step *= 2
 		a, fa = b, fb
-		b += step
+		b = math.Max(-mostSearched, math.Min(mostSearched, b+step))
 		fb = f(b)
 	}
 	return falsePosition(f, a, fa, b, fb)
 }
 
 // falsePosition returns the zero of f between a and b, where f has different
-// signs.
+// signs. Where three steps haven't halved the interval it is bisected.
 func falsePosition(f func(float64) float64, a, fa, b, fb float64) float64 {
-	for range 100 {
+	width := math.Abs(b - a)
+	for i := range 100 {
 		if fb == 0 || math.Abs(b-a) <= 1e-14*math.Max(math.Abs(a), math.Abs(b))+1e-16 {
 			return b
 		}
 		x := b - fb*(b-a)/(fb-fa)
-		if math.IsNaN(x) || x <= math.Min(a, b) || x >= math.Max(a, b) {
+		slow := false
+		if i%3 == 2 {
+			slow = math.Abs(b-a) > width/2
+			width = math.Abs(b - a)
+		}
+		if slow || math.IsNaN(x) || x <= math.Min(a, b) || x >= math.Max(a, b) {
 			x = a + (b-a)/2
 		}
 		fx := f(x)

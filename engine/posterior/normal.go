@@ -21,7 +21,10 @@ var sqrtHalf = pair{0.7071067811865476, -4.833646656726457e-17}
 // between -(a + sqrt(a^2 + 2)) and -(a + sqrt(a^2 + 4/pi)) for a > 0 (DLMF
 // 7.8.2); any value between serves, as it multiplies 1e-16.
 func normalTail(z pair) float64 {
-	if math.IsInf(z.hi, 0) || z.hi < 1 {
+	if z.hi > 39 {
+		return 0 // below the smallest double
+	}
+	if z.hi < 1 {
 		return math.Erfc(z.hi*sqrtHalf.hi) / 2
 	}
 	a := z.times(sqrtHalf.hi)
@@ -90,6 +93,9 @@ func logNormalBetween(a, b, width float64) float64 {
 		return logNormalBetween(-b, -a, width)
 	case a > 0:
 		top := logNormalTail(a)
+		if math.IsInf(top, -1) {
+			return top
+		}
 		return top + math.Log1p(-math.Exp(logNormalTail(b)-top))
 	}
 	return math.Log1p(-(normalTail(pair{hi: -a}) + normalTail(pair{hi: b})))

@@ -220,7 +220,11 @@ func (p Posterior) standard(x float64) pair {
 	if math.IsInf(x, 0) {
 		return pair{hi: x}
 	}
-	return pair{hi: x}.minus(p.location.pair()).over(p.scale)
+	d := pair{hi: x}.minus(p.location.pair())
+	if q := d.hi / p.scale; math.IsInf(q, 0) {
+		return pair{hi: q}
+	}
+	return d.over(p.scale)
 }
 
 // negative changes the sign.

@@ -1,141 +1,113 @@
 package posterior
 
-import "math"
+import (
+	"iter"
+	"math"
+)
 
 // The integrals over x = ln r (plus a constant) have smooth integrands exp(h(x))
 // that vanish at both ends at least exponentially. The trapezoid rule then
 // converges faster than any power of its step (Trefethen & Weideman 2014, SIAM
 // Review 56, 385-458, section 5), provided that it covers all that matters and
-// resolves the narrowest peak. h itself, being built from logistic functions of
-// 2x, has no feature narrower than about 1, however narrow exp(h) may be: a scan
-// in steps of scanStep finds every maximum.
+// resolves the narrowest peak.
 const (
-	scanStep = 0.25
 	// dropped is how far below the highest maximum the integrand is cut off,
 	// in natural logarithms: e^-42 is 6e-19.
 	dropped = 42
-	// maxNodes bounds the rule; only distant narrow double peaks come near.
-	maxNodes = 1 << 15
+	// maxNodes bounds the rule; a merged pair of narrow peaks may come near.
+	maxNodes = 1 << 12
 )
 
-// reach is where an integrand matters, with the step that resolves it.
+// reach is an interval in which an integrand matters, with the step that
+// resolves it. Where decay > 0 the integrand goes on beyond hi as exp(-decay x).
 type reach struct {
 	lo, hi float64
 	peak   float64 // where h is largest
 	height float64 // h there
 	step   float64
+	decay  float64
+	open   bool // cut off at the horizon
 }
 
-// survey finds the reach of h, knowing that all maxima lie in [lo, hi] and that
-// h falls outside of it.
-func survey(h func(float64) float64, lo, hi float64) reach {
-	steps := math.Max(8, math.Ceil((hi-lo)/scanStep))
-	d := (hi - lo) / steps
-	var maxima []float64
-	before, here := h(lo-d), h(lo)
-	for i := range int(steps) + 1 {
-		after := h(lo + float64(i+1)*d)
-		if here >= before && here > after {
-			maxima = append(maxima, climb(h, lo+float64(i-1)*d, lo+float64(i+1)*d))
-		}
-		before, here = here, after
-	}
-	if len(maxima) == 0 {
-		maxima = append(maxima, lo)
-		if h(hi) > h(lo) {
-			maxima[0] = hi
-		}
-	}
-	return surround(h, maxima)
+// region is all the intervals in which an integrand matters, in ascending order
+// and disjoint.
+type region struct {
+	top   float64 // the largest value of h
+	parts []reach
 }
 
-// climb narrows a bracketed maximum by golden sections.
-func climb(h func(float64) float64, a, b float64) float64 {
-	const golden = 0.6180339887498949
-	c, d := b-golden*(b-a), a+golden*(b-a)
-	hc, hd := h(c), h(d)
-	for range 24 {
-		if hc >= hd {
-			b, d, hd = d, c, hc
-			c = b - golden*(b-a)
-			hc = h(c)
-			continue
+// peak returns where h is largest.
+func (g region) peak() float64 {
+	for _, r := range g.parts {
+		if r.height == g.top {
+			return r.peak
 		}
-		a, c, hc = c, d, hd
-		d = a + golden*(b-a)
-		hd = h(d)
 	}
-	return (a + b) / 2
+	return g.parts[0].peak
 }
 
-// surround spans what matters about the maxima, given in ascending order.
-func surround(h func(float64) float64, maxima []float64) reach {
-	r := reach{height: math.Inf(-1), step: math.Inf(1)}
-	for _, x := range maxima {
-		if v := h(x); v > r.height {
-			r.peak, r.height = x, v
-		}
+// lift adds to all heights.
+func (g *region) lift(d float64) {
+	g.top += d
+	for i := range g.parts {
+		g.parts[i].height += d
 	}
-	floor := r.height - dropped
-	first := true
-	for _, x := range maxima {
-		if h(x) < floor {
-			continue
-		}
-		if first {
-			r.lo = x - fall(h, x, -1, floor)
-			first = false
-		}
-		r.hi = x + fall(h, x, 1, floor)
-		r.step = math.Min(r.step, width(h, x))
-	}
-	return r
 }
 
-// fall returns how far from x, going in direction s, h sinks to the floor.
-func fall(h func(float64) float64, x, s, floor float64) float64 {
-	far := scanStep
-	for h(x+s*far) > floor && far < 1e6 {
-		far *= 2
+// integral returns ln of the integral of exp(h).
+func (g region) integral(h func(float64) float64) float64 {
+	if math.IsInf(g.top, -1) {
+		return g.top
 	}
-	near := 0.0
-	for range 12 {
-		middle := (near + far) / 2
-		if h(x+s*middle) > floor {
-			near = middle
+	total := 0.0
+	for _, r := range g.parts {
+		step, sum := r.resolve(h, g.top)
+		total += step * sum
+	}
+	return g.top + math.Log(total)
+}
+
+// join returns the parts of g and f, those that overlap made one. Where a part
+// of g was cut off, decay tells how it goes on.
+func (g region) join(f region, decay float64) []reach {
+	var out []reach
+	a, b := g.parts, f.parts
+	for len(a) > 0 || len(b) > 0 {
+		var r reach
+		if len(b) == 0 || len(a) > 0 && a[0].lo < b[0].lo {
+			r, a = a[0], a[1:]
+			if r.open {
+				r.decay = decay
+			}
 		} else {
-			far = middle
+			r, b = b[0], b[1:]
 		}
+		if n := len(out); n > 0 && r.lo <= out[n-1].hi {
+			last := &out[n-1]
+			last.hi = math.Max(last.hi, r.hi)
+			last.step = math.Min(last.step, r.step)
+			last.decay = math.Max(last.decay, r.decay)
+			continue
+		}
+		out = append(out, r)
 	}
-	return far
+	return out
 }
 
-// width returns the distance in which h drops by about 1/2 from the maximum x:
-// one standard deviation of a normal peak; scanStep at most.
-func width(h func(float64) float64, x float64) float64 {
-	d, top := scanStep, h(x)
-	for top-math.Min(h(x-d), h(x+d)) > 0.7 && d > 1e-9 {
-		d *= 0.7
-	}
-	return d
-}
-
-// trapezoid returns ln of the integral of exp(h) over the reach. It halves the
-// step until the two halves of the nodes agree to 1e-8, which makes the whole
-// good to the square of that.
-func (r reach) trapezoid(h func(float64) float64) float64 {
-	if math.IsInf(r.height, -1) {
-		return r.height
-	}
-	step := r.step
-	even := r.sum(h, step, 0)
+// resolve returns the sum of exp(h - top) over equidistant points and their
+// step. It halves the step until the two halves of the points agree to 1e-8,
+// which makes the whole good to the square of that.
+func (r reach) resolve(h func(float64) float64, top float64) (step, sum float64) {
+	step = math.Max(r.step, (r.hi-r.lo)/maxNodes)
+	even := r.sum(h, top, step, 0)
 	for {
-		odd := r.sum(h, step, step/2)
-		if agree(even, odd) || (r.hi-r.lo)/step > maxNodes {
-			return r.height + math.Log((even+odd)*step/2)
-		}
+		odd := r.sum(h, top, step, step/2)
+		done := agree(even, odd) || (r.hi-r.lo)/step > maxNodes
 		even += odd
 		step /= 2
+		if done {
+			return step, even
+		}
 	}
 }
 
@@ -143,18 +115,28 @@ func (r reach) trapezoid(h func(float64) float64) float64 {
 // their mean to be exact.
 func agree(even, odd float64) bool { return math.Abs(odd-even) <= 1e-8*(odd+even) }
 
-// sum adds exp(h - height) over the points peak + shift + i step in reach.
-func (r reach) sum(h func(float64) float64, step, shift float64) float64 {
-	total := 0.0
-	first := math.Ceil((r.lo - r.peak - shift) / step)
-	for x := r.peak + shift + first*step; x <= r.hi; first, x = first+1, r.peak+shift+(first+1)*step {
-		total += math.Exp(h(x) - r.height)
+// points yields peak + shift + i step inside the reach.
+func (r reach) points(step, shift float64) iter.Seq[float64] {
+	return func(yield func(float64) bool) {
+		i := math.Ceil((r.lo - r.peak - shift) / step)
+		for x := r.peak + shift + i*step; x <= r.hi; i, x = i+1, r.peak+shift+(i+1)*step {
+			if !yield(x) {
+				return
+			}
+		}
 	}
-	return total
 }
 
-// join returns the reach of both, around the peak of r.
-func (r reach) join(s reach) reach {
-	r.lo, r.hi, r.step = math.Min(r.lo, s.lo), math.Max(r.hi, s.hi), math.Min(r.step, s.step)
-	return r
+// sum adds exp(h - top) over the points; what follows beyond hi is a geometric
+// series.
+func (r reach) sum(h func(float64) float64, top, step, shift float64) float64 {
+	total, last := 0.0, 0.0
+	for x := range r.points(step, shift) {
+		last = math.Exp(h(x) - top)
+		total += last
+	}
+	if r.decay > 0 {
+		total += last / math.Expm1(r.decay*step)
+	}
+	return total
 }

@@ -57,32 +57,52 @@ func (s *spread) quantiles(p [3]float64) (q [3]float64) {
 }
 
 // spreadQuantiles returns the quantiles of r for ascending probabilities. The
-// distribution function is summed over cells of one node's width by
+// distribution function is summed over cells of two nodes' width by
 // Gauss-Legendre, as the trapezoid rule fails at an end that doesn't vanish.
 func (m *mixture) spreadQuantiles(p [3]float64) (q [3]float64) {
-	x := m.nodes[0].x
-	width := 2 * (m.nodes[1].x - x)
+	cells := m.cells()
 	whole := 0.0
-	for a := x; a < m.reach.hi; a += width {
-		whole += m.cell(a, width)
+	for _, c := range cells {
+		whole += c.mass
 	}
-	run, next := 0.0, m.cell(x, width)
-	for i := range p {
-		for run+next < p[i]*whole && x < m.reach.hi {
-			run += next
-			x += width
-			next = m.cell(x, width)
+	run, i := 0.0, 0
+	for j, c := range cells {
+		for i < len(p) && (run+c.mass >= p[i]*whole || j == len(cells)-1) {
+			q[i] = m.r0 * math.Exp(m.within(c.x, c.width, p[i]*whole-run))
+			i++
 		}
-		q[i] = m.r0 * math.Exp(m.within(x, width, p[i]*whole-run))
+		run += c.mass
 	}
 	return q
+}
+
+// cell is an interval of x and its share of p.
+type cell struct{ x, width, mass float64 }
+
+// cells divides the region of p.
+func (m *mixture) cells() []cell {
+	out := make([]cell, 0, len(m.nodes)/2+len(m.region.parts))
+	i := 0
+	for _, r := range m.region.parts {
+		for i < len(m.nodes) && m.nodes[i].x < r.lo {
+			i++
+		}
+		width := (r.hi - r.lo) / 8
+		if i+1 < len(m.nodes) && m.nodes[i+1].x < r.hi {
+			width = 2 * (m.nodes[i+1].x - m.nodes[i].x)
+		}
+		for a := r.lo; a < r.hi; a += width {
+			out = append(out, cell{a, width, m.cell(a, width)})
+		}
+	}
+	return out
 }
 
 // cell integrates the density of x, in units of its height, over [a, a+width].
 func (m *mixture) cell(a, width float64) float64 {
 	sum := 0.0
 	for i, t := range legendreNodes {
-		sum += legendreWeights[i] * math.Exp(m.logWeight(a+width*t)-m.reach.height)
+		sum += legendreWeights[i] * math.Exp(m.logWeight(a+width*t))
 	}
 	return sum * width
 }
@@ -98,7 +118,7 @@ func (m *mixture) within(a, width, mass float64) float64 {
 		} else {
 			lo = t
 		}
-		next := t - excess/math.Exp(m.logWeight(a+t)-m.reach.height)
+		next := t - excess/math.Exp(m.logWeight(a+t))
 		if !(next > lo && next < hi) {
 			next = (lo + hi) / 2
 		}
