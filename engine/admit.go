@@ -110,7 +110,7 @@ func (k *Keeper) earlier(r *Reading, at resolved) *seenID {
 
 // exact returns the reading with r's ID and time that the window has lost.
 func (k *Keeper) exact(r *Reading, at resolved) *seenID {
-	if k.window.lost == 0 || !r.HasTime || r.Time > at.track.decidedTally.last {
+	if k.window.lost == 0 || !r.HasTime {
 		return nil
 	}
 	if k.window.lost > k.sweep.trimmed {

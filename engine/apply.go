@@ -98,7 +98,7 @@ func (t *Track) refold() {
 func (k *Keeper) trackOf(n QuantityNumber, id QuantityID) *Track {
 	if int(n) > len(k.byNumber) {
 		t := &Track{id: id, number: n}
-		t.latest.Store(math.MinInt64)
+		t.stored.Store(math.MinInt64)
 		k.byNumber = append(k.byNumber, t)
 		k.directory.Load().add(t)
 	}

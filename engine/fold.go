@@ -13,6 +13,12 @@ type entry struct {
 	ID ReadingID
 }
 
+// tiesNameless tells whether the order of e and f rests on an ID that isn't
+// filled in.
+func (e *entry) tiesNameless(f *entry) bool {
+	return e.Time == f.Time && (e.HasID && e.ID == "" || f.HasID && f.ID == "")
+}
+
 // compareEntries is the canonical order: time, then instrument (none so far),
 // then reading ID, then value. What is left equal folds the same either way;
 // the position makes the order total.

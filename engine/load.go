@@ -61,6 +61,9 @@ func (k *Keeper) restore(e CheckpointEntry) error {
 	}
 	t.marks[0], t.behind = t.fold, t.last
 	t.hollow = rebuild
+	if t.tally.count > 0 {
+		t.stored.Store(int64(t.tally.last))
+	}
 	k.arrived = append(k.arrived, t)
 	return nil
 }

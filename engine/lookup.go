@@ -5,8 +5,8 @@ import (
 	"slices"
 )
 
-// A reading that comes late, with an ID that the window has lost, may repeat
-// one that only the ledger knows. Looking there takes time that grows with the
+// A reading that is not later than what memory no longer holds, with an ID that
+// the window has lost, may repeat one that only the ledger knows. Looking there takes time that grows with the
 // quantity's life, so it is done in the caller's goroutine before the keeper
 // takes the command, one pass over the rows of each quantity for a whole
 // batch. The keeper relies on it for readings up to the position through which
@@ -43,10 +43,7 @@ func (k *Keeper) lookUp(c *command) (Position, error) {
 	byTrack := map[*Track][]late{}
 	for i := range c.batch.Readings {
 		r, t := &c.batch.Readings[i], c.found[i].track
-		if t == nil || r.ID == "" || !r.HasTime {
-			continue
-		}
-		if r.Time <= Instant(t.latest.Load()) {
+		if t != nil && t.mayHold(r) {
 			byTrack[t] = append(byTrack[t], late{i, r.Time})
 		}
 	}
@@ -100,9 +97,25 @@ func search(all []late, at Instant) (first int, hit bool) {
 	})
 }
 
-// mustLookUp tells whether the lookup of c doesn't cover what the window lacks.
+// mustLookUp tells whether the lookup of c doesn't cover what window and memory
+// lack. Going back for it costs c its place in the queue, so it is asked of each
+// reading.
 func (k *Keeper) mustLookUp(c *command) bool {
-	return c.next == 0 && len(c.found) > 0 && c.trimmed != k.sweep.trimmed && !k.window.complete(len(c.found))
+	if c.next > 0 || c.trimmed == k.sweep.trimmed || k.window.complete(len(c.found)) {
+		return false
+	}
+	for i := range c.found {
+		if r, t := &c.batch.Readings[i], c.found[i].track; t != nil && t.mayHold(r) {
+			return true
+		}
+	}
+	return false
+}
+
+// mayHold tells whether r may be the repeat of a reading that memory has
+// dropped.
+func (t *Track) mayHold(r *Reading) bool {
+	return r.ID != "" && r.HasTime && r.Time <= Instant(t.stored.Load())
 }
 
 // maxLookups is how often a command is looked up before its sender is asked to

@@ -40,7 +40,7 @@ func (j *job) run() {
 		j.sum(&t, all)
 		return
 	}
-	if j.err = j.order(all); j.err != nil {
+	if j.err = orderTies(j.ledger, all); j.err != nil {
 		return
 	}
 	for i := range all {
@@ -52,7 +52,10 @@ func (j *job) run() {
 // sum folds where the order doesn't matter: what is no longer in memory makes
 // the mark, and the recent rows stay.
 func (j *job) sum(t *Track, all []entry) {
-	recent := j.positions()
+	recent := make(map[Position]struct{}, len(j.recent))
+	for i := range j.recent {
+		recent[j.recent[i].Position] = struct{}{}
+	}
 	for i := range all {
 		t.fold.add(&t.law, &all[i].Row)
 		if _, in := recent[all[i].Position]; !in {
@@ -60,29 +63,6 @@ func (j *job) sum(t *Track, all []entry) {
 		}
 	}
 	j.fold, j.rows, j.marks = t.fold, slices.Clip(j.recent), t.marks
-}
-
-// positions returns those of the recent rows.
-func (j *job) positions() map[Position]struct{} {
-	all := make(map[Position]struct{}, len(j.recent))
-	for i := range j.recent {
-		all[j.recent[i].Position] = struct{}{}
-	}
-	return all
-}
-
-// order completes the canonical order and names the rows that may stay in
-// memory: from the first recent one on, and as many before as a mark spans.
-func (j *job) order(all []entry) error {
-	if err := orderTies(j.ledger, all); err != nil {
-		return err
-	}
-	recent := j.positions()
-	first := slices.IndexFunc(all, func(e entry) bool { _, in := recent[e.Position]; return in })
-	if first < 0 {
-		first = len(all)
-	}
-	return nameEntries(j.ledger, all[max(0, first-markSpacing-1):])
 }
 
 // loadEntries returns, by time, the readings of a quantity up to a ledger

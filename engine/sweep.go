@@ -91,6 +91,9 @@ func (k *Keeper) sweepPiece(g *Group, budget, due int) {
 			g.Checkpoint = append(g.Checkpoint, t.checkpoint())
 		}
 		s.rows, s.chunk = t.rowsBetween(s.from, s.through), 0
+		for i := range s.rows {
+			t.stored.Store(max(t.stored.Load(), int64(s.rows[i].Time)))
+		}
 	}
 }
 

@@ -10,8 +10,9 @@ import (
 )
 
 // markSpacing is the number of rows from one mark to the next: a late reading
-// refolds at most that many more than come after it.
-const markSpacing = 64
+// refolds at most that many more than come after it. As many rows at least stay
+// in memory, for readings that are only a little late.
+const markSpacing = 16
 
 // Track is one quantity's place in the keeper. All but its View belongs to the
 // keeper's goroutine.
@@ -33,7 +34,7 @@ type Track struct {
 	decided      *Quantity
 	rules        rules
 	decidedTally tally
-	latest       atomic.Int64 // time of the latest durable reading, for all to read
+	stored       atomic.Int64 // no reading that memory may have dropped is later; for all to read
 
 	// What is durable.
 	quantity *Quantity
@@ -114,9 +115,6 @@ func (t *Track) View() *View { return t.view.Load() }
 
 // publish makes the present state visible.
 func (t *Track) publish(change uint64) {
-	if t.tally.count > 0 {
-		t.latest.Store(int64(t.tally.last))
-	}
 	t.view.Store(&View{
 		Quantity: t.quantity, Position: t.position, Change: change,
 		ReadingCount: t.fold.count, HasLast: t.fold.count > 0, LastTime: t.fold.lastTime,
@@ -175,7 +173,7 @@ func (t *Track) settle(budget int) (steps int, ok bool) {
 
 // follows tells whether e comes after all readings of an ordered track.
 func (t *Track) follows(e *entry) bool {
-	return t.fold.count == 0 || compareEntries(&t.last, e) <= 0
+	return t.fold.count == 0 || !t.last.tiesNameless(e) && compareEntries(&t.last, e) <= 0
 }
 
 // add takes one durable reading: it folds it at once if that is right without
@@ -203,7 +201,7 @@ func (t *Track) extend(e *entry) {
 // insert merges rows of which the first is late. The slices that Views share
 // are left as they are.
 func (t *Track) insert(fresh []entry, budget int) (steps int, ok bool) {
-	if t.marks[0].count > 0 && compareEntries(&fresh[0], &t.behind) < 0 {
+	if t.behindMarks(&fresh[0]) || t.tiesNameless(fresh) {
 		t.rows = append(t.rows, fresh...)
 		return 0, false
 	}
@@ -226,6 +224,25 @@ func (t *Track) insert(fresh []entry, budget int) (steps int, ok bool) {
 		t.extend(&tail[i])
 	}
 	return steps, true
+}
+
+// behindMarks tells whether e comes before the oldest mark, as far as is known.
+func (t *Track) behindMarks(e *entry) bool {
+	return t.marks[0].count > 0 && (t.behind.tiesNameless(e) || compareEntries(e, &t.behind) < 0)
+}
+
+// tiesNameless tells whether a row's ID is needed and isn't at hand.
+func (t *Track) tiesNameless(fresh []entry) bool {
+	rows := t.rows[t.markFrom:]
+	for i := range fresh {
+		at := sort.Search(len(rows), func(n int) bool { return rows[n].Time >= fresh[i].Time })
+		for ; at < len(rows) && rows[at].Time == fresh[i].Time; at++ {
+			if rows[at].tiesNameless(&fresh[i]) {
+				return true
+			}
+		}
+	}
+	return false
 }
 
 // mergeEntries merges two canonical runs into a new one.
@@ -257,7 +274,10 @@ func (t *Track) trim(stored Position) {
 	if n < t.markFrom || n == 0 {
 		return
 	}
-	mark := min((n-t.markFrom)/markSpacing, len(t.marks)-1)
+	mark := min((n-t.markFrom)/markSpacing, len(t.marks)-1) - 1
+	if mark < 0 {
+		return
+	}
 	if mark > 0 {
 		t.behind = t.rows[t.markFrom+mark*markSpacing-1]
 	}
