@@ -60,7 +60,7 @@ func BenchmarkUpdate(b *testing.B) {
 
 func BenchmarkAnswer(b *testing.B) {
 	k := learnedAll([]float64{0.95, 1.00, 0.93})
-	guess, vague := posterior.LearnedNoise(0.02, 4), posterior.VaguePrior()
+	guess, vague := learnedNoise(0.02, 4), vaguePrior()
 	firm := posterior.Prior{Mean: 0.80, SD: 0.02}
 	normal := posterior.Normal(posterior.LevelOf(0.8), 0.02)
 	student, mixture := k.Posterior(vague, guess), k.Posterior(firm, guess)

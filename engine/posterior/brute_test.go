@@ -73,7 +73,7 @@ func TestMixturesAgainstBruteForce(t *testing.T) {
 		spread := math.Exp(2 * random.NormFloat64())
 		n := 1 + random.IntN(40)
 		prior := posterior.Prior{Mean: 5 * random.NormFloat64(), SD: math.Exp(2 * random.NormFloat64())}
-		noise := posterior.LearnedNoise(spread*math.Exp(random.NormFloat64()), math.Exp(1.5*random.NormFloat64()))
+		noise := learnedNoise(spread*math.Exp(random.NormFloat64()), math.Exp(1.5*random.NormFloat64()))
 		// readings at whole steps from their centre, so that S is exact below
 		step, centre := spread/8, math.Round(20*random.NormFloat64())
 		var k posterior.Constant

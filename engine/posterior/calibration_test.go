@@ -73,10 +73,10 @@ func TestCalibrationOverThePrior(t *testing.T) {
 		for range 1 + random.IntN(5) {
 			k.AddKnown(theta+r*random.NormFloat64(), r)
 		}
-		return k.Posterior(prior, posterior.KnownNoise(r)).LowerTail(theta)
+		return k.Posterior(prior, knownNoise(r)).LowerTail(theta)
 	})
 
-	guess := posterior.LearnedNoise(0.4, 4)
+	guess := learnedNoise(0.4, 4)
 	learn := func(random *rand.Rand, n int) (*posterior.Constant, float64, float64) {
 		theta, r := level(random), drawR(random, 0.4, 4)
 		var k posterior.Constant
@@ -114,7 +114,7 @@ func TestCalibrationOverThePrior(t *testing.T) {
 // The interval of r itself, truths from its prior.
 func TestCalibrationOfRepeatability(t *testing.T) {
 	random := source(t)
-	prior, guess := posterior.Prior{Mean: 4, SD: 0.5}, posterior.LearnedNoise(0.4, 4)
+	prior, guess := posterior.Prior{Mean: 4, SD: 0.5}, learnedNoise(0.4, 4)
 	n := rounds() / 2
 	below, inside := 0.0, 0.0
 	for range n {
@@ -139,7 +139,7 @@ func TestCalibrationOfRepeatability(t *testing.T) {
 func TestCoverageAtAFixedTruth(t *testing.T) {
 	random := source(t)
 	const theta, r = -30.0, 4.0
-	reference, vague := posterior.LearnedNoise(0, 0), posterior.VaguePrior()
+	reference, vague := learnedNoise(0, 0), vaguePrior()
 	for _, n := range []int{2, 3, 10} {
 		simulate(t, random, fmt.Sprint("level from ", n, " readings"), func(random *rand.Rand) float64 {
 			var k posterior.Constant
@@ -162,7 +162,7 @@ func TestCoverageAtAFixedTruth(t *testing.T) {
 			u := math.Exp(random.NormFloat64())
 			k.AddKnown(theta+u*random.NormFloat64(), u)
 		}
-		return k.Posterior(vague, posterior.AbsentNoise()).LowerTail(theta)
+		return k.Posterior(vague, absentNoise()).LowerTail(theta)
 	})
 	simulate(t, random, "walk from nothing", func(random *rand.Rand) float64 {
 		var w posterior.Walk
@@ -186,7 +186,7 @@ func TestCalibrationCheckCanFail(t *testing.T) {
 		theta := random.NormFloat64()
 		var k posterior.Constant
 		k.AddKnown(theta+random.NormFloat64(), 0.8)
-		if p := k.Posterior(prior, posterior.AbsentNoise()).LowerTail(theta); p > 0.025 && p < 0.975 {
+		if p := k.Posterior(prior, absentNoise()).LowerTail(theta); p > 0.025 && p < 0.975 {
 			inside++
 		}
 	}

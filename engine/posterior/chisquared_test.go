@@ -14,7 +14,7 @@ func TestRepeatabilityAgainstChiSquared(t *testing.T) {
 	for _, row := range table(t, "reference/chisquared.csv") {
 		dof, p, x := number(t, row[0]), number(t, row[1]), number(t, row[2])
 		var none posterior.Constant
-		r := none.Repeatability(posterior.VaguePrior(), posterior.LearnedNoise(1, dof), math.Abs(2*p-1))
+		r := none.Repeatability(vaguePrior(), learnedNoise(1, dof), math.Abs(2*p-1))
 		got := r.Lower // P(r < Lower) = P(chi^2 > dof / Lower^2)
 		switch {
 		case p == 0.5:

@@ -9,9 +9,9 @@ import (
 
 // What is published with how much knowledge.
 func TestForms(t *testing.T) {
-	vague, proper := posterior.VaguePrior(), posterior.Prior{Mean: 1, SD: 0.5}
-	known, absent := posterior.KnownNoise(0.1), posterior.AbsentNoise()
-	reference, guess := posterior.LearnedNoise(0, 0), posterior.LearnedNoise(0.1, 4)
+	vague, proper := vaguePrior(), posterior.Prior{Mean: 1, SD: 0.5}
+	known, absent := knownNoise(0.1), absentNoise()
+	reference, guess := learnedNoise(0, 0), learnedNoise(0.1, 4)
 	const none, normal, student, mixture = posterior.FormNone, posterior.FormNormal, posterior.FormStudent, posterior.FormMixture
 	one, same, two := []added{{1, 0}}, []added{{1, 0}, {1, 0}, {1, 0}}, []added{{1, 0}, {1.1, 0}}
 	own := []added{{1, 0.2}}
@@ -63,23 +63,23 @@ func TestMoments(t *testing.T) {
 	two, proper := learnedAll([]float64{1, 1.1}), posterior.Prior{Mean: 1, SD: 0.5}
 	three := learnedAll([]float64{1, 1.1, 1.3})
 	var nothing posterior.Constant
-	reference := posterior.LearnedNoise(0, 0)
+	reference := learnedNoise(0, 0)
 	for _, c := range []struct {
 		name     string
 		p        posterior.Posterior
 		mean, sd bool
 	}{
 		{"none", posterior.Posterior{}, false, false},
-		{"t_1", two.Posterior(posterior.VaguePrior(), reference), false, false},
-		{"t_2", three.Posterior(posterior.VaguePrior(), reference), true, false},
-		{"t_1.5", two.Posterior(posterior.VaguePrior(), posterior.LearnedNoise(1, 0.5)), true, false},
-		{"t_2.5", two.Posterior(posterior.VaguePrior(), posterior.LearnedNoise(1, 1.5)), true, true},
+		{"t_1", two.Posterior(vaguePrior(), reference), false, false},
+		{"t_2", three.Posterior(vaguePrior(), reference), true, false},
+		{"t_1.5", two.Posterior(vaguePrior(), learnedNoise(1, 0.5)), true, false},
+		{"t_2.5", two.Posterior(vaguePrior(), learnedNoise(1, 1.5)), true, true},
 		{"mixture", two.Posterior(proper, reference), true, true},
 		{"next of two", two.Predictive(proper, reference), true, false},
 		{"next of three", three.Predictive(proper, reference), true, true},
-		{"next of none, worth 1", nothing.Predictive(proper, posterior.LearnedNoise(1, 1)), false, false},
-		{"next of none, worth 2", nothing.Predictive(proper, posterior.LearnedNoise(1, 2)), true, false},
-		{"next of none, worth 3", nothing.Predictive(proper, posterior.LearnedNoise(1, 3)), true, true},
+		{"next of none, worth 1", nothing.Predictive(proper, learnedNoise(1, 1)), false, false},
+		{"next of none, worth 2", nothing.Predictive(proper, learnedNoise(1, 2)), true, false},
+		{"next of none, worth 3", nothing.Predictive(proper, learnedNoise(1, 3)), true, true},
 	} {
 		_, mean := c.p.Mean()
 		_, sd := c.p.StandardDeviation()
@@ -91,7 +91,7 @@ func TestMoments(t *testing.T) {
 		}
 	}
 	// Without readings the next one is N(mean, SD^2 + r^2), E r^2 = guess^2 worth / (worth - 2).
-	sd, _ := nothing.Predictive(proper, posterior.LearnedNoise(1, 6)).StandardDeviation()
+	sd, _ := nothing.Predictive(proper, learnedNoise(1, 6)).StandardDeviation()
 	near(t, "sd of the next of none", sd, math.Sqrt(0.25+6.0/4), 1e-12)
 }
 
@@ -99,13 +99,13 @@ func TestMoments(t *testing.T) {
 // one, and repeatability in each state.
 func TestRepeatabilityStates(t *testing.T) {
 	k := learnedAll([]float64{0.95, 1.00, 0.93})
-	if r := k.Repeatability(posterior.VaguePrior(), posterior.KnownNoise(0.3), 0.95); r != (posterior.Repeatability{Known: true, StandardDeviation: 0.3}) {
+	if r := k.Repeatability(vaguePrior(), knownNoise(0.3), 0.95); r != (posterior.Repeatability{Known: true, StandardDeviation: 0.3}) {
 		t.Errorf("known: %+v", r)
 	}
-	if r := k.Repeatability(posterior.VaguePrior(), posterior.AbsentNoise(), 0.95); r != (posterior.Repeatability{}) {
+	if r := k.Repeatability(vaguePrior(), absentNoise(), 0.95); r != (posterior.Repeatability{}) {
 		t.Errorf("absent: %+v", r)
 	}
-	r := k.Repeatability(posterior.VaguePrior(), posterior.LearnedNoise(0, 0), 0.95)
+	r := k.Repeatability(vaguePrior(), learnedNoise(0, 0), 0.95)
 	// s sqrt(2 / chi-squared_2 quantile), chi-squared with 2 degrees of freedom being exponential
 	s := math.Sqrt(0.0013) // of the three readings, by hand
 	near(t, "estimate", r.Estimate, s, 1e-12)
@@ -114,12 +114,12 @@ func TestRepeatabilityStates(t *testing.T) {
 	near(t, "upper", r.Upper, s*math.Sqrt(1/-math.Log(0.975)), 1e-12)
 
 	same := learnedAll([]float64{2, 2})
-	r = same.Repeatability(posterior.VaguePrior(), posterior.LearnedNoise(0, 0), 0.95)
+	r = same.Repeatability(vaguePrior(), learnedNoise(0, 0), 0.95)
 	if r.HasMedian || !r.HasEstimate || r.Estimate != 0 {
 		t.Errorf("equal readings: %+v", r)
 	}
 	var nothing posterior.Constant
-	r = nothing.Repeatability(posterior.VaguePrior(), posterior.LearnedNoise(3, 2), 0.9)
+	r = nothing.Repeatability(vaguePrior(), learnedNoise(3, 2), 0.9)
 	if r.HasEstimate || !r.HasMedian {
 		t.Errorf("no reading: %+v", r)
 	}
@@ -170,10 +170,10 @@ func TestLongSeries(t *testing.T) {
 		z := ((x - base) - mean) / sd
 		within(t, name, p.UpperTail(x), math.Erfc(z/math.Sqrt2)/2, tolerance)
 	}
-	at("known", known.Posterior(posterior.VaguePrior(), posterior.KnownNoise(0.1)), mean, 0.1/math.Sqrt(n), 1e-9)
-	at("learned", learned.Posterior(posterior.VaguePrior(), posterior.LearnedNoise(0, 0)), mean, spread/math.Sqrt(n-1), 1/n)
+	at("known", known.Posterior(vaguePrior(), knownNoise(0.1)), mean, 0.1/math.Sqrt(n), 1e-9)
+	at("learned", learned.Posterior(vaguePrior(), learnedNoise(0, 0)), mean, spread/math.Sqrt(n-1), 1/n)
 	at("walk", walk.Posterior(), mean/(1+0.01/n), 1/math.Sqrt(1+n/0.01), 1e-7)
-	r := learned.Repeatability(posterior.VaguePrior(), posterior.LearnedNoise(0, 0), 0.95)
+	r := learned.Repeatability(vaguePrior(), learnedNoise(0, 0), 0.95)
 	near(t, "estimate", r.Estimate, spread*math.Sqrt(n/(n-1)), 1e-14)
 }
 
@@ -190,8 +190,8 @@ func TestConstantAtTheEndsOfTheRange(t *testing.T) {
 				k.AddKnown(y1, u)
 				k.AddLearned(y2)
 				k.AddLearned(-y2)
-				for _, noise := range []posterior.Noise{posterior.LearnedNoise(0, 0), posterior.LearnedNoise(u, 1), posterior.LearnedNoise(u, 1e6)} {
-					for _, p := range []posterior.Posterior{k.Posterior(posterior.VaguePrior(), noise), k.Predictive(posterior.VaguePrior(), noise)} {
+				for _, noise := range []posterior.Noise{learnedNoise(0, 0), learnedNoise(u, 1), learnedNoise(u, 1e6)} {
+					for _, p := range []posterior.Posterior{k.Posterior(vaguePrior(), noise), k.Predictive(vaguePrior(), noise)} {
 						checkFinite(t, p, []float64{y1, y2, u}, noise)
 					}
 				}
@@ -218,7 +218,7 @@ func checkFinite(t *testing.T, p posterior.Posterior, what []float64, noise post
 func TestUpdatesAllocateNothing(t *testing.T) {
 	var k posterior.Constant
 	w := posterior.NewWalk(posterior.Prior{SD: 1})
-	vague, noise, known := posterior.VaguePrior(), posterior.LearnedNoise(0.1, 3), posterior.KnownNoise(0.1)
+	vague, noise, known := vaguePrior(), learnedNoise(0.1, 3), knownNoise(0.1)
 	var sum float64
 	allocations := testing.AllocsPerRun(100, func() {
 		k.AddKnown(1, 0.1)

@@ -147,7 +147,7 @@ func (m *mixture) terms(difference float64, other func(*component) float64) []te
 	case !m.hasSD:
 		component = m.level
 	case m.predictive:
-		decay -= 2
+		decay = m.nu - 1 // falls - 2, not rounded on the way
 	}
 	h := func(x float64) float64 {
 		c := component(x)

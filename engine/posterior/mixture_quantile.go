@@ -29,7 +29,7 @@ const mostSearched = 690
 // zero returns the zero of a falling function, searching outwards from a.
 func zero(a float64, f func(float64) float64) float64 {
 	fa := f(a)
-	if fa == 0 {
+	if math.Abs(fa) <= closeEnough {
 		return a
 	}
 	step := math.Copysign(math.Max(0.1, math.Abs(a)/8), fa)
@@ -44,12 +44,17 @@ func zero(a float64, f func(float64) float64) float64 {
 	return falsePosition(f, a, fa, b, fb)
 }
 
+// closeEnough is how near in logarithms a tail must be to its target: what
+// its own error leaves to find.
+const closeEnough = 1e-13
+
 // falsePosition returns the zero of f between a and b, where f has different
-// signs. Where three steps haven't halved the interval it is bisected.
+// signs. Where three steps haven't halved the interval it is bisected. A step
+// below 1e-9 is followed by a last one, which leaves about its square.
 func falsePosition(f func(float64) float64, a, fa, b, fb float64) float64 {
 	width := math.Abs(b - a)
 	for i := range 100 {
-		if fb == 0 || math.Abs(b-a) <= 1e-14*math.Max(math.Abs(a), math.Abs(b))+1e-16 {
+		if math.Abs(fb) <= closeEnough || math.Abs(b-a) <= 1e-14*math.Max(math.Abs(a), math.Abs(b))+1e-16 {
 			return b
 		}
 		x := b - fb*(b-a)/(fb-fa)
@@ -62,8 +67,8 @@ func falsePosition(f func(float64) float64, a, fa, b, fb float64) float64 {
 			x = a + (b-a)/2
 		}
 		fx := f(x)
-		if math.Abs(x-b) <= 1e-15*math.Abs(x) {
-			return x
+		if last := x - fx*(x-b)/(fx-fb); math.Abs(x-b) <= 1e-9*math.Abs(x) && math.Abs(last-x) <= math.Abs(x-b) {
+			return last
 		}
 		if (fx > 0) != (fb > 0) {
 			a, fa = b, fb

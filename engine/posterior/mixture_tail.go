@@ -47,7 +47,7 @@ func (m *mixture) logTail(p place, s side) float64 {
 		half[i&1] += k.weight * math.Erfc(float64(s)*m.standard(p, &k.component)*sqrtHalf.hi) / 2
 	}
 	if served(half) {
-		return math.Log(half[0] + half[1])
+		return math.Min(0, math.Log(half[0]+half[1]))
 	}
 	h := func(x float64) float64 {
 		c := m.component(x)
@@ -79,7 +79,11 @@ func (m *mixture) integral(h func(float64) float64, places ...place) float64 {
 	for _, p := range places {
 		s.add(m.marks(p)...)
 	}
-	return s.survey(h).integral(h)
+	g := s.survey(h)
+	if g.top-m.total < vanished {
+		return g.top
+	}
+	return g.integral(h)
 }
 
 // marks returns the x about which the probabilities at p change their course: r
@@ -106,6 +110,10 @@ func (m *mixture) marks(p place) []float64 {
 	return out
 }
 
+// vanished is a logarithm so far below that of the smallest double that no
+// width of an integrand makes up for it.
+const vanished = -800
+
 // farthest bounds the distances that the search for maxima follows.
 const farthest = 1e300
 
@@ -126,7 +134,7 @@ func (m *mixture) between(lo, hi float64) float64 {
 		half[i&1] += k.weight * normalBetween(pair{hi: za}, pair{hi: zb}, (hi-lo)/k.sd)
 	}
 	if served(half) {
-		return half[0] + half[1]
+		return math.Min(1, half[0]+half[1])
 	}
 	h := func(x float64) float64 {
 		c := m.component(x)

@@ -17,15 +17,5 @@ type Noise struct {
 	Worth  float64
 }
 
-// AbsentNoise is that of a quantity whose readings bring their own.
-func AbsentNoise() Noise { return Noise{Absent: true} }
-
-// KnownNoise is a known repeatability r > 0.
-func KnownNoise(r float64) Noise { return Noise{Known: true, SD: r} }
-
-// LearnedNoise is a repeatability to be learned from a guess worth so many
-// degrees of freedom; both 0 for the reference prior.
-func LearnedNoise(guess, worth float64) Noise { return Noise{Guess: guess, Worth: worth} }
-
 // learned tells whether readings can inform r.
 func (n Noise) learned() bool { return !n.Absent && !n.Known }

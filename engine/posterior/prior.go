@@ -10,9 +10,6 @@ type Prior struct {
 	SD    float64
 }
 
-// VaguePrior returns the flat prior.
-func VaguePrior() Prior { return Prior{Vague: true} }
-
 // IntervalPrior returns the normal prior whose central interval of the given
 // probability, in (0, 1), is [low, high], low < high:
 //

@@ -37,8 +37,8 @@ func draw(random *rand.Rand, n int, centre, spread float64) []added {
 
 func TestOrderAndRestartChangeNothing(t *testing.T) {
 	random := source(t)
-	priors := []posterior.Prior{posterior.VaguePrior(), {Mean: 7, SD: 2}}
-	noises := []posterior.Noise{posterior.KnownNoise(0.3), posterior.LearnedNoise(0, 0), posterior.LearnedNoise(0.5, 3)}
+	priors := []posterior.Prior{vaguePrior(), {Mean: 7, SD: 2}}
+	noises := []posterior.Noise{knownNoise(0.3), learnedNoise(0, 0), learnedNoise(0.5, 3)}
 	for round := range 60 {
 		spread := math.Exp(4 * random.NormFloat64())
 		readings := draw(random, 2+random.IntN(200), math.Exp(8*random.NormFloat64()), spread)
@@ -96,7 +96,7 @@ func TestReadingNeverWidensAConstantOfKnownRepeatability(t *testing.T) {
 	for range 200 {
 		var c posterior.Constant
 		prior := posterior.Prior{Mean: random.NormFloat64(), SD: math.Exp(3 * random.NormFloat64())}
-		noise := posterior.KnownNoise(math.Exp(3 * random.NormFloat64()))
+		noise := knownNoise(math.Exp(3 * random.NormFloat64()))
 		before := prior.SD * (1 + 1e-15)
 		for range 50 {
 			c.AddKnown(100*random.NormFloat64(), noise.SD)
@@ -194,10 +194,10 @@ func TestQuantilesInvertTails(t *testing.T) {
 // repeatability's normal as the guess of r hardens.
 func TestMixtureLimits(t *testing.T) {
 	k := learnedAll([]float64{4.1, 4.4, 3.9, 4.2})
-	faded := k.Posterior(posterior.Prior{Mean: 4, SD: 1e8}, posterior.LearnedNoise(0.2, 3))
-	flat := k.Posterior(posterior.VaguePrior(), posterior.LearnedNoise(0.2, 3))
-	hard := k.Posterior(posterior.Prior{Mean: 4, SD: 0.2}, posterior.LearnedNoise(0.2, 1e13))
-	known := k.Posterior(posterior.Prior{Mean: 4, SD: 0.2}, posterior.KnownNoise(0.2))
+	faded := k.Posterior(posterior.Prior{Mean: 4, SD: 1e8}, learnedNoise(0.2, 3))
+	flat := k.Posterior(vaguePrior(), learnedNoise(0.2, 3))
+	hard := k.Posterior(posterior.Prior{Mean: 4, SD: 0.2}, learnedNoise(0.2, 1e13))
+	known := k.Posterior(posterior.Prior{Mean: 4, SD: 0.2}, knownNoise(0.2))
 	for _, x := range []float64{3, 3.9, 4.2, 4.6, 6} {
 		near(t, "upper tail as the prior fades", faded.UpperTail(x), flat.UpperTail(x), 1e-9)
 		near(t, "lower tail as the prior fades", faded.LowerTail(x), flat.LowerTail(x), 1e-9)
@@ -209,7 +209,7 @@ func TestMixtureLimits(t *testing.T) {
 // a quantile exact; the search must notice.
 func TestQuantileWhereTheFirstGuessIsExact(t *testing.T) {
 	prior := posterior.Prior{Mean: 0, SD: 1e-60}
-	p := learnedAll([]float64{1, -1}).Posterior(prior, posterior.LearnedNoise(1, 1))
+	p := learnedAll([]float64{1, -1}).Posterior(prior, learnedNoise(1, 1))
 	for _, coverage := range []float64{0.5, 0.9, 0.95, 0.99} {
 		lo, hi := p.Interval(coverage)
 		_, z := posterior.Normal(posterior.Level{}, 1e-60).Interval(coverage)

@@ -46,8 +46,8 @@ func TestStRDMeanAndStandardDeviation(t *testing.T) {
 		{"NumAcc4", "numacc4", 10000000.2, 0.1, 14.5, 8.2},
 	} {
 		k := learnedAll(column(t, "published/strd_"+c.file+".csv", 0))
-		mean, _ := k.Posterior(posterior.VaguePrior(), posterior.LearnedNoise(0, 0)).Mean()
-		r := k.Repeatability(posterior.VaguePrior(), posterior.LearnedNoise(0, 0), 0.95)
+		mean, _ := k.Posterior(vaguePrior(), learnedNoise(0, 0)).Mean()
+		r := k.Repeatability(vaguePrior(), learnedNoise(0, 0), 0.95)
 		got := [2]float64{digits(mean, c.mean), digits(r.Estimate, c.sd)}
 		t.Logf("%-8s mean %.17g LRE %.1f, sd %.17g LRE %.1f", c.name, mean, got[0], r.Estimate, got[1])
 		if !(got[0] >= c.meanLRE) || !(got[1] >= c.sdLRE) {
@@ -86,7 +86,7 @@ func TestVagueConstantIsStudent(t *testing.T) {
 			u: 7.90105478190518 * math.Sqrt(99.0/97),
 		},
 	} {
-		p := learnedAll(c.ys).Posterior(posterior.VaguePrior(), posterior.LearnedNoise(0, 0))
+		p := learnedAll(c.ys).Posterior(vaguePrior(), learnedNoise(0, 0))
 		if p.Form() != posterior.FormStudent || p.DegreesOfFreedom() != c.dof {
 			t.Fatalf("%s: %v with %v degrees of freedom", c.name, p.Form(), p.DegreesOfFreedom())
 		}
@@ -121,7 +121,7 @@ func TestNormalConformance(t *testing.T) {
 	} {
 		var k posterior.Constant
 		k.AddKnown(c.y, c.u)
-		p := k.Posterior(posterior.VaguePrior(), posterior.AbsentNoise())
+		p := k.Posterior(vaguePrior(), absentNoise())
 		near(t, c.name+" below", p.LowerTail(c.lower), c.below, 1e-11)
 		near(t, c.name+" above", p.UpperTail(c.upper), c.above, 1e-11)
 		near(t, c.name+" conformance", p.Between(c.lower, c.upper), c.inside, 1e-11)
@@ -171,7 +171,7 @@ func TestPriorAndReadingJoin(t *testing.T) {
 			w.Predict(0)
 			w.Update(y, c.r)
 		}
-		known := posterior.KnownNoise(c.r)
+		known := knownNoise(c.r)
 		for name, p := range map[string]posterior.Posterior{
 			"each known": k.Posterior(c.prior, known), "known afterwards": l.Posterior(c.prior, known), "walk": w.Posterior(),
 		} {

@@ -3,6 +3,7 @@ package posterior_test
 import (
 	"fmt"
 	"math"
+	"strings"
 	"testing"
 
 	"leadline.example/engine/posterior"
@@ -69,11 +70,11 @@ func (c mixtureCase) build() (*posterior.Constant, posterior.Prior, posterior.No
 			k.AddLearned(r[0])
 		}
 	}
-	prior := posterior.VaguePrior()
+	prior := vaguePrior()
 	if len(c.Prior) == 2 {
 		prior = posterior.Prior{Mean: c.Prior[0], SD: c.Prior[1]}
 	}
-	return &k, prior, posterior.LearnedNoise(c.Guess, c.Worth)
+	return &k, prior, learnedNoise(c.Guess, c.Worth)
 }
 
 func mixtureCases(t testing.TB) []mixtureCase {
@@ -126,5 +127,30 @@ func TestRepeatabilityAgainstReference(t *testing.T) {
 			}
 			near(t, fmt.Sprintf("%s: quantile %v of r", c.Name, p), got, b.R, 1e-11)
 		}
+	}
+}
+
+// The standard deviation of the next indication where it barely exists: the
+// predictive has worth + n degrees of freedom or so, and none from 2 down.
+func TestSecondMomentsAgainstReference(t *testing.T) {
+	for _, row := range table(t, "reference/moments.csv") {
+		var k posterior.Constant
+		for _, y := range strings.Fields(row[4]) {
+			k.AddLearned(number(t, y))
+		}
+		prior := posterior.Prior{Mean: number(t, row[0]), SD: number(t, row[1])}
+		noise := learnedNoise(number(t, row[2]), number(t, row[3]))
+		level, levelOK := k.Posterior(prior, noise).StandardDeviation()
+		next, nextOK := k.Predictive(prior, noise).StandardDeviation()
+		if !levelOK || !nextOK {
+			t.Errorf("%v: standard deviations exist: level %v, next %v", row[:5], levelOK, nextOK)
+		}
+		near(t, fmt.Sprint("level, ", row[:5]), level, number(t, row[5]), 1e-11)
+		near(t, fmt.Sprint("next, ", row[:5]), next, number(t, row[6]), 1e-11)
+	}
+	// Worth 1 and one reading: two degrees of freedom, no second moment.
+	k := learnedAll([]float64{1})
+	if _, ok := k.Predictive(posterior.Prior{SD: 1}, learnedNoise(0.02, 1)).StandardDeviation(); ok {
+		t.Error("a second moment at two degrees of freedom")
 	}
 }

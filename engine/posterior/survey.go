@@ -155,12 +155,12 @@ func edge(h func(float64) float64, x, limit, step, floor float64) float64 {
 	return x + s*far
 }
 
-// width returns the distance in which h drops by about 1/2 from the maximum x:
-// one standard deviation of a normal peak; scanStep at most.
+// width returns the step to begin with at the maximum x: about one standard
+// deviation of a normal peak, at which the halves agree to 5e-9; 0.2 at most.
 func width(h func(float64) float64, x float64) float64 {
 	d, top := scanStep, h(x)
 	for top-math.Min(h(x-d), h(x+d)) > 0.7 && d > 1e-9 {
 		d *= 0.7
 	}
-	return d
+	return 0.8 * d
 }

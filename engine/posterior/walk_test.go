@@ -27,7 +27,7 @@ func TestNileFilter(t *testing.T) {
 		start      posterior.Prior
 	}{
 		{"from N(0, 1e7)", "published/nile_filter_a0_P1e7.csv", posterior.Prior{SD: math.Sqrt(1e7)}},
-		{"from nothing", "published/nile_filter_diffuse.csv", posterior.VaguePrior()},
+		{"from nothing", "published/nile_filter_diffuse.csv", vaguePrior()},
 	} {
 		w := posterior.NewWalk(c.start)
 		for i, row := range table(t, c.file) {
@@ -88,7 +88,7 @@ func TestWalkWithoutStepsIsConstant(t *testing.T) {
 		w.Update(y, u)
 		k.AddKnown(y, u)
 	}
-	p, q := w.Posterior(), k.Posterior(prior, posterior.AbsentNoise())
+	p, q := w.Posterior(), k.Posterior(prior, absentNoise())
 	wm, _ := p.Mean()
 	km, _ := q.Mean()
 	ws, _ := p.StandardDeviation()
