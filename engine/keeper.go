@@ -23,7 +23,7 @@ type Options struct {
 	// 0 means 100,000.
 	RefusedLog int
 	// CheckpointRecords is how many records are written between the beginnings
-	// of two checkpoints at least; 0 means 65,536, or eight for every quantity
+	// of two checkpoints at least; 0 means 65,536, or sixteen for every quantity
 	// if that is more. A start replays up to twice as many.
 	CheckpointRecords int
 	// OnFault is told of each fault of the storage; nil ignores them. It must
@@ -156,7 +156,7 @@ func (k *Keeper) Close() error {
 // run is the keeper's goroutine.
 func (k *Keeper) run() {
 	defer close(k.stopped)
-	next, flying := new(work), new(work)
+	next, flying, landed := new(work), new(work), new(work)
 	for {
 		if k.partial != nil && !next.full() {
 			k.decide(next, k.partial)
@@ -171,14 +171,22 @@ func (k *Keeper) run() {
 			k.begin(flying)
 			continue
 		}
-		switch {
-		case flying.started && (next.full() || k.partial != nil || k.resuming != nil):
-			k.await(flying, nil, nil)
-		case flying.started:
-			k.await(flying, next, k.commands)
-		case !k.idle(next):
-			k.finish()
-			return
+		if !flying.started {
+			if !k.idle(next) {
+				k.finish()
+				return
+			}
+			continue
+		}
+		if err, done := k.await(next); done {
+			// The next group sets out before this one is folded, so that the
+			// disk has something to do meanwhile.
+			landed, flying = flying, landed
+			if err == nil && k.failed == nil && len(next.Records) > 0 {
+				flying, next = next, flying
+				k.begin(flying)
+			}
+			k.land(landed, err)
 		}
 	}
 }
@@ -237,12 +245,16 @@ func (k *Keeper) idle(next *work) bool {
 	}
 }
 
-// await waits for the flying group, for a rebuild or, if commands isn't nil,
-// for more to do in next.
-func (k *Keeper) await(flying, next *work, commands <-chan *command) {
+// await waits until the group on its way is done, with an error or durable; or
+// for a rebuild, or for more to do in next unless that is full.
+func (k *Keeper) await(next *work) (err error, done bool) {
+	commands := k.commands
+	if next.full() || k.partial != nil || k.resuming != nil {
+		commands = nil
+	}
 	select {
 	case err := <-k.committed:
-		k.land(flying, err)
+		return err, true
 	case j := <-k.jobDone:
 		k.working = false
 		k.finishJob(j)
@@ -250,6 +262,7 @@ func (k *Keeper) await(flying, next *work, commands <-chan *command) {
 	case c := <-commands:
 		k.take(next, c)
 	}
+	return nil, false
 }
 
 // take decides on c and on whatever waits behind it until the group is full.

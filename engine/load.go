@@ -33,7 +33,8 @@ func (k *Keeper) loadFrom(l Ledger) error {
 	if err != nil {
 		return err
 	}
-	k.sweep = sweeper{last: sweep.Segment, stored: sweep.Through, trimmed: sweep.Through, trim: len(k.byNumber)}
+	done := swept{sweep.Segment, sweep.Through}
+	k.sweep = sweeper{written: done, durable: done, trimmed: sweep.Through, trim: len(k.byNumber)}
 	k.trimmed.Store(uint64(sweep.Through))
 	sum, err := k.restoreSummary(sweep.Summary)
 	if err != nil {

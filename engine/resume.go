@@ -79,7 +79,7 @@ func (k *Keeper) forget() error {
 		t.saved, t.savedQuantity = 0, nil // what the sweep under way wrote is void
 	}
 	s := &k.sweep
-	*s = sweeper{last: s.last, stored: s.stored, trimmed: s.trimmed, trim: s.trim}
+	*s = sweeper{written: s.durable, durable: s.durable, trimmed: s.trimmed, trim: s.trim}
 	clear(k.refusals.taken)
 	from := min(durable+1, max(1, k.window.oldest()))
 	k.window = newWindow(k.options.DuplicateWindow, k.options.minGeneration)

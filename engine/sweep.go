@@ -13,22 +13,29 @@ import (
 type sweeper struct {
 	active  bool
 	segment uint32   // being written, if active
-	last    uint32   // the last complete segment
 	from    Position // rows after this ...
 	through Position // ... and up to this belong to segment
 	next    int      // index of the next track
 	rows    []Row    // of the track before next, what is left of them
 	chunk   uint32
-	stored  Position // every applied reading up to this is in complete segments
+
+	written swept    // the last complete sweep
+	durable swept    // likewise, if its last group is
 	trimmed Position // rows up to this may have been dropped from memory
 	trim    int      // the next track to drop them from
 }
 
+// swept is what a complete sweep covers.
+type swept struct {
+	segment uint32   // and those before
+	through Position // every applied reading up to this is in a segment
+}
+
 const (
-	// A sweep begins after this many records, or after eight for every
+	// A sweep begins after this many records, or after sixteen for every
 	// quantity if that is more: states then cost little beside the rows.
 	sweepRecords     = 1 << 16
-	sweepPerQuantity = 8
+	sweepPerQuantity = 16
 	// minCheckpointBytes fill about a page.
 	minCheckpointBytes = 3_000
 	rowBytes           = 16
@@ -45,7 +52,7 @@ func (k *Keeper) addCheckpoint(w *work) {
 	if every == 0 {
 		every = max(sweepRecords, sweepPerQuantity*len(k.byNumber))
 	}
-	if !s.active && at-s.stored >= Position(every) {
+	if !s.active && at-s.written.through >= Position(every) {
 		s.begin(at)
 	}
 	if s.active {
@@ -54,10 +61,9 @@ func (k *Keeper) addCheckpoint(w *work) {
 }
 
 func (s *sweeper) begin(at Position) {
-	*s = sweeper{
-		active: true, segment: s.last + 1, last: s.last, from: s.stored, through: at,
-		stored: s.stored, trimmed: s.trimmed, trim: s.trim,
-	}
+	s.active, s.segment = true, s.written.segment+1
+	s.from, s.through = s.written.through, at
+	s.next, s.rows, s.chunk = 0, nil, 0
 }
 
 // due is how many tracks the sweep must be through at a position for it to end
@@ -78,7 +84,7 @@ func (k *Keeper) sweepPiece(g *Group, budget, due int) {
 		}
 		if s.next == len(k.byNumber) || k.byNumber[s.next].quantity == nil {
 			g.Sweep = &Sweep{Segment: s.segment, Through: s.through, Summary: k.summary()}
-			s.active = false
+			s.active, s.written = false, swept{s.segment, s.through}
 			return
 		}
 		t := k.byNumber[s.next]
@@ -146,13 +152,13 @@ func (t *Track) rowsBetween(from, through Position) []Row {
 func (k *Keeper) landCheckpoint(w *work) {
 	s := &k.sweep
 	if w.Sweep != nil {
-		s.stored, s.last = w.Sweep.Through, w.Sweep.Segment
+		s.durable = swept{w.Sweep.Segment, w.Sweep.Through}
 	}
 	if k.partial != nil {
 		return // which was looked up for what is trimmed now
 	}
-	if s.trimmed < s.stored {
-		s.trimmed, s.trim = s.stored, 0
+	if s.trimmed < s.durable.through {
+		s.trimmed, s.trim = s.durable.through, 0
 		k.trimmed.Store(uint64(s.trimmed))
 	}
 	for n := 0; n < trimsPerGroup && s.trim < len(k.byNumber); n++ {
@@ -168,7 +174,7 @@ func (k *Keeper) landCheckpoint(w *work) {
 func (k *Keeper) finalCheckpoint() error {
 	for range 2 {
 		if at := Position(k.position.Load()); !k.sweep.active {
-			if at == k.sweep.stored {
+			if at == k.sweep.written.through {
 				return nil
 			}
 			k.sweep.begin(at)
@@ -178,9 +184,6 @@ func (k *Keeper) finalCheckpoint() error {
 			k.sweepPiece(&g, maxGroupBytes, 0)
 			if err := k.ledger.Append(&g); err != nil {
 				return err
-			}
-			if g.Sweep != nil {
-				k.sweep.stored, k.sweep.last = g.Sweep.Through, g.Sweep.Segment
 			}
 		}
 	}

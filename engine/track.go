@@ -258,9 +258,12 @@ func mergeEntries(a, b []entry) []entry {
 	return append(append(out, a...), b...)
 }
 
+// minTrim is how many rows there must be for it to be worth dropping any.
+const minTrim = 3 * markSpacing
+
 // trim drops rows that complete segments hold, where nothing needs them.
 func (t *Track) trim(stored Position) {
-	if t.job != nil {
+	if t.job != nil || len(t.rows) < minTrim {
 		return
 	}
 	if !t.law.ordered {

@@ -50,7 +50,7 @@ func declareFlags(flags *flag.FlagSet, s *settings, env func(string) string) {
 	flags.IntVar(&s.refusedLog, "refused-log", 100_000,
 		"how many refused readings, the latest of any reason, can be listed and put through")
 	flags.IntVar(&s.checkpointEvery, "checkpoint-records", 0,
-		"how many records lie between checkpoints; 0 takes 65,536, or eight for every quantity if that is more")
+		"how many records lie between checkpoints; 0 takes 65,536, or sixteen for every quantity if that is more")
 	flags.IntVar(&s.maxQuantities, "max-quantities", 10_000,
 		"how many quantities /metrics publishes, the first by ID")
 	flags.StringVar(&s.logFormat, "log-format", "text", "text or json, on standard error")
