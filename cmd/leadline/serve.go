@@ -11,6 +11,7 @@ import (
 	"net"
 	"os"
 	"path/filepath"
+	"runtime/debug"
 	"sync"
 	"time"
 
@@ -35,6 +36,9 @@ func runServe(ctx context.Context, args []string, p process) error {
 	if err := s.validate(); err != nil {
 		return err
 	}
+	if p.env("GOGC") == "" {
+		debug.SetGCPercent(gcPercent)
+	}
 	svc, err := startService(&s, s.newLogger(p.stderr))
 	if err != nil {
 		return err
@@ -44,6 +48,11 @@ func runServe(ctx context.Context, args []string, p process) error {
 	}
 	return errors.Join(svc.serve(ctx), svc.close())
 }
+
+// gcPercent lets garbage grow to four times what lives before it is collected:
+// what lives is small beside what a stream of readings leaves behind. GOGC in
+// the environment overrides it, GOMEMLIMIT bounds it.
+const gcPercent = 400
 
 // service is everything that serves: sockets in front, ledger at the back.
 type service struct {
