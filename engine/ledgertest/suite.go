@@ -385,7 +385,7 @@ func testConcurrent(t *testing.T, open Store) {
 		at := engine.Position(20 + 20*i)
 		appendAll(t, l, &engine.Group{Records: Readings(1, Rows(at+1, 20)),
 			Checkpoint: append(Entries(1, at), rowsEntry(1, uint32(i+1), 0, Rows(at-19, 20))),
-			Sweep: &engine.Sweep{Segment: uint32(i + 1), Through: at}})
+			Sweep:      &engine.Sweep{Segment: uint32(i + 1), Through: at}})
 	}
 	close(stop)
 	readers.Wait()
