@@ -1,7 +1,6 @@
 package posterior
 
 import (
-	"iter"
 	"math"
 )
 
@@ -122,7 +121,7 @@ func (r reach) resolve(h func(float64) float64, top float64) (step, sum float64)
 func agree(even, odd float64) bool { return math.Abs(odd-even) <= 1e-8*(odd+even) }
 
 // points yields peak + shift + i step inside the reach.
-func (r reach) points(step, shift float64) iter.Seq[float64] {
+func (r reach) points(step, shift float64) func(yield func(float64) bool) {
 	return func(yield func(float64) bool) {
 		i := math.Ceil((r.lo - r.peak - shift) / step)
 		for x := r.peak + shift + i*step; x <= r.hi; i, x = i+1, r.peak+shift+(i+1)*step {
