@@ -45,7 +45,7 @@ func (k *Keeper) objection(t *Track, r *Reading, receive Instant) (Reason, strin
 	case t == nil:
 		return UnknownQuantity, fmt.Sprintf("quantity %q is not declared; declare it with PUT /v1/quantities/{id}, then put the reading through with :apply_refused or send it again", r.Quantity)
 	case t.rules.retired:
-		return QuantityRetired, fmt.Sprintf("quantity %q was retired at %v; declare it again to revive it", r.Quantity, t.decided.RetireTime)
+		return QuantityRetired, fmt.Sprintf("quantity %q was retired at %v; declare it again to revive it, then send the reading again", r.Quantity, t.decided.RetireTime)
 	case r.Instrument != "":
 		return UnknownInstrument, fmt.Sprintf("instrument %q is not known; leave instrument out", r.Instrument)
 	case r.Unit != "" && r.Unit != t.rules.unit:
@@ -67,7 +67,7 @@ func (a *rules) objectionToNumbers(r *Reading) (Reason, string) {
 			return RandomUncertaintyInvalid, fmt.Sprintf("random_standard_uncertainty is %v; give a number above 0, from 1e-100 to 1e100", u)
 		}
 	case a.needsOwnNoise:
-		return NoRepeatability, "random_standard_uncertainty is missing and the quantity declares no repeatability; give one of the two"
+		return NoRepeatability, "random_standard_uncertainty is missing and the quantity declares no repeatability; give one of the two and send the reading again"
 	}
 	if math.Abs(r.Value)/u > maxRatio {
 		return ValueOutOfRange, fmt.Sprintf("value %v is more than 1e150 times its random standard uncertainty %v; check both", r.Value, u)
@@ -85,7 +85,7 @@ func (k *Keeper) objectionToTime(a *rules, r *Reading, receive Instant) (Reason,
 	case r.Time.Sub(receive) > float64(k.options.MaxClockSkew):
 		return TimeInFuture, fmt.Sprintf("time %v is more than %v after the receipt at %v; check the clock of the sender", r.Time, k.options.MaxClockSkew, receive)
 	case r.Time < a.priorTime:
-		return BeforePrior, fmt.Sprintf("time %v is before the prior's time %v; send readings from then on, or declare an earlier prior.time", r.Time, a.priorTime)
+		return BeforePrior, fmt.Sprintf("time %v is before the prior's time %v; send readings from then on, or declare an earlier prior.time and send the reading again", r.Time, a.priorTime)
 	}
 	return "", ""
 }

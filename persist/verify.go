@@ -98,8 +98,13 @@ func (v *verifier) run(file *os.File, pageSize int) error {
 	if v.reported > maxReported {
 		fmt.Fprintf(v.w, "and %d more\n", v.reported-maxReported)
 	}
-	_, err = fmt.Fprintf(v.w, "records %d, groups %d, damaged groups %d, quantities %d, states %d, rows %d\nhash %x\n",
-		v.chain.next-1, v.chain.groups, v.damaged, v.quantities, v.states, v.rows, v.chain.hash)
+	fmt.Fprintf(v.w, "records %d, groups %d, damaged groups %d, quantities %d, states %d, rows %d\n",
+		v.chain.next-1, v.chain.groups, v.damaged, v.quantities, v.states, v.rows)
+	if v.reported > 0 { // the stored hash may well be that of the ledger before the damage
+		_, err = fmt.Fprintln(v.w, "no hash, as the file is damaged")
+		return err
+	}
+	_, err = fmt.Fprintf(v.w, "hash %x\n", v.chain.hash)
 	return err
 }
 

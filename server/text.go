@@ -74,6 +74,9 @@ func (p *sheet) belief(b *engine.Belief) {
 	if d.Description != "" {
 		p.line("what", "%s", d.Description)
 	}
+	if b.Quantity.Retired {
+		p.line("retired", "%s; it takes no readings and has left lists and metrics", b.Quantity.RetireTime)
+	}
 	p.level(b)
 	p.judgement(b)
 	p.prediction(b)

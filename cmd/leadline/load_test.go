@@ -61,6 +61,9 @@ func call(ctx context.Context, client *http.Client, method, url string, body, ou
 	if err != nil {
 		return err
 	}
+	if response.StatusCode == http.StatusServiceUnavailable && bytes.Contains(answer, []byte("the service is stopping")) {
+		return fmt.Errorf("%s %s: %s", method, url, answer) // a graceful stop, nothing was taken
+	}
 	if response.StatusCode != http.StatusOK {
 		return &wrongAnswer{fmt.Sprintf("%s %s answers %s: %s", method, url, response.Status, answer)}
 	}
