@@ -49,10 +49,10 @@ func runServe(ctx context.Context, args []string, p process) error {
 	return errors.Join(svc.serve(ctx), svc.close())
 }
 
-// gcPercent lets garbage grow to four times what lives before it is collected:
+// gcPercent lets garbage grow to twice what lives before it is collected, for
 // what lives is small beside what a stream of readings leaves behind. GOGC in
 // the environment overrides it, GOMEMLIMIT bounds it.
-const gcPercent = 400
+const gcPercent = 200
 
 // service is everything that serves: sockets in front, ledger at the back.
 type service struct {
