@@ -19,11 +19,11 @@ const markSpacing = 16
 //
 // The rows of an ordered track are, from markFrom on, a canonical run that ends
 // with the latest reading, and marks[i] is the fold of everything before
-// rows[markFrom + i*markSpacing]; so a reading that comes late, but not before marks[0], costs
-// one merge and a short refold. The obvious way, to fold on arrival, would make
-// the belief depend on the order of arrival; refolding everything would make a
-// late reading cost as much as the quantity's whole life. Where the order doesn't
-// matter, rows are in order of arrival and marks[0], the only one, is the fold of
+// rows[markFrom + i*markSpacing]; so a reading that comes late, but not before
+// marks[0], costs one merge and a short refold. The obvious way, to fold on
+// arrival, would make the belief depend on the order of arrival; refolding
+// everything would make a late reading cost as much as the quantity's whole
+// life. Where the order doesn't matter, rows are in order of arrival and marks[0], the only one, is the fold of
 // all that is not in rows[markFrom:].
 type Track struct {
 	id     QuantityID
@@ -50,9 +50,9 @@ type Track struct {
 	markFrom int
 	behind   entry // the latest reading in marks[0]
 
-	fresh         []entry   // of the group being folded
+	fresh         []entry   // late ones of the group being folded
 	touched       bool      // in the group being folded
-	job           *job      // the rebuild under way or waiting; rows[job.rows:] then stand in order of arrival
+	job           *job      // the rebuild under way or waiting; rows behind job.recent then stand in order of arrival
 	saved         Position  // the last record that its checkpoint includes
 	savedQuantity *Quantity // as in its checkpoint
 	hollow        bool      // restored without a fold

@@ -1,8 +1,6 @@
 package posterior
 
-import (
-	"math"
-)
+import "math"
 
 // The integrals over x = ln r (plus a constant) have smooth integrands exp(h(x))
 // that vanish at both ends at least exponentially. The trapezoid rule then
