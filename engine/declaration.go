@@ -110,20 +110,22 @@ func (d *Declaration) checkDynamics() *Error {
 	return nil
 }
 
-func (d *Declaration) checkTolerance() *Error {
-	t := &d.Tolerance
+func (d *Declaration) checkTolerance() *Error { return d.Tolerance.check("tolerance") }
+
+// check checks the limits of what field names.
+func (t Tolerance) check(field string) *Error {
 	if t.HasLower {
-		if err := checkNumber("tolerance.lower", t.Lower); err != nil {
+		if err := checkNumber(field+".lower", t.Lower); err != nil {
 			return err
 		}
 	}
 	if t.HasUpper {
-		if err := checkNumber("tolerance.upper", t.Upper); err != nil {
+		if err := checkNumber(field+".upper", t.Upper); err != nil {
 			return err
 		}
 	}
 	if t.HasLower && t.HasUpper && t.Lower >= t.Upper {
-		return refuse(InvalidField, "tolerance.upper", "tolerance.upper is %v, not above tolerance.lower %v; give lower < upper", t.Upper, t.Lower)
+		return refuse(InvalidField, field+".upper", "%[1]s.upper is %[2]v, not above %[1]s.lower %[3]v; give lower < upper", field, t.Upper, t.Lower)
 	}
 	return nil
 }

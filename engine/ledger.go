@@ -13,6 +13,8 @@ const (
 	KindRefusal                     // a refused reading
 	KindDeclaration                 // a quantity declared, redeclared or revived
 	KindRetirement                  // a quantity retired
+	KindInstrument                  // an instrument declared, redeclared, retired or revived
+	KindRenewal                     // the part that a quantity is measured on renewed, or that withdrawn
 )
 
 // Record is one entry of the ledger. Fields that a kind doesn't use are zero.
@@ -38,6 +40,9 @@ type Record struct {
 	// Of declarations.
 	Quantity    QuantityID
 	Declaration *Declaration // never changed once recorded
+
+	Instrument *Instrument // as it is from this record on; never changed once recorded
+	Renewal    *Renewal    // likewise
 }
 
 // Row is the index entry of an applied reading: what a fold needs of it.
@@ -46,6 +51,8 @@ type Row struct {
 	Value          float64
 	Uncertainty    float64
 	Position       Position
+	Occasion       uint64 // a hash of the reading's occasion; 0 without one
+	Instrument     InstrumentNumber
 	HasUncertainty bool
 	HasID          bool // the reading has an ID, found in the record
 }

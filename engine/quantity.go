@@ -81,14 +81,38 @@ func (r Repeatability) scale() float64 {
 type DynamicsForm uint8
 
 const (
-	DynamicsConstant   DynamicsForm = iota
-	DynamicsRandomWalk              // StandardDeviation, Per
+	DynamicsConstant      DynamicsForm = iota
+	DynamicsRandomWalk                 // StandardDeviation, Per
+	DynamicsLinearTrend                // Slope, Wander; StandardDeviation and Per may be 0
+	DynamicsMeanReverting              // Mean, StandardDeviation, HalfLife
 )
 
-// Dynamics says how the true value may move: Var[theta(t+h) - theta(t)] is
-// StandardDeviation^2 h / Per for a random walk.
+// Dynamics says how the true value may move. StandardDeviation^2 h / Per is the
+// variance that a random walk, also that of a linear trend's level, gains in a
+// time h. A mean-reverting level is an Ornstein-Uhlenbeck process with
+// that mean and StandardDeviation when undisturbed, half of a deviation being gone
+// after HalfLife.
 type Dynamics struct {
 	Form              DynamicsForm
+	StandardDeviation float64
+	Per               time.Duration
+	Slope             Slope
+	Wander            Wander
+	Mean              float64
+	HalfLife          time.Duration
+}
+
+// Slope is the normal prior of a linear trend's slope: what the level changes
+// by in a time Per.
+type Slope struct {
+	Mean              float64
+	StandardDeviation float64 // at least 0
+	Per               time.Duration
+}
+
+// Wander is the random walk of a slope: the standard deviation, in the slope's
+// unit, of its change within Per. The zero value is none.
+type Wander struct {
 	StandardDeviation float64
 	Per               time.Duration
 }
@@ -111,7 +135,8 @@ type Declaration struct {
 	Repeatability Repeatability
 	Dynamics      Dynamics
 	Tolerance     Tolerance
-	Rule          decide.Rule // the zero Rule means decide.DefaultRule
+	Rule          decide.Rule   // the zero Rule means decide.DefaultRule
+	BreachHorizon time.Duration // how far ahead a breach is looked for, for the metrics; 0: it isn't
 }
 
 // SameBelief tells whether d and e give every set of readings the same belief,
@@ -138,6 +163,7 @@ type Quantity struct {
 	UpdateTime  Instant
 	Retired     bool
 	RetireTime  Instant
+	Renewals    []Renewal // by time, withdrawn ones included; never changed in place
 }
 
 // ETag changes whenever anything of the quantity but its belief does.

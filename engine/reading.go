@@ -8,6 +8,7 @@ type Reading struct {
 	Time                      Instant // if not HasTime, the receipt instant of its request
 	SentTime                  string  // as it was sent, where Time can't hold it; not recorded but in the detail of the refusal
 	Instrument                InstrumentID
+	Occasion                  string // readings of one instrument and occasion share an error; empty: of none but this reading's
 	HasUncertainty            bool
 	RandomStandardUncertainty float64
 	Unit                      string    // empty: the quantity's

@@ -9,6 +9,8 @@ import (
 	"testing"
 	"time"
 
+	"github.com/google/go-cmp/cmp"
+
 	"leadline.example/engine"
 	"leadline.example/engine/ledgertest"
 )
@@ -75,7 +77,7 @@ func TestFullDiskForgetsOnlyWhatWasNotDurable(t *testing.T) {
 	q := r.declare("lost", gap())
 	r.post(start, reading("lost", start, 101, "x"))
 	r.restart(false)
-	if got, err := r.keeper.Quantity("lost"); err != nil || got != q {
+	if got, err := r.keeper.Quantity("lost"); err != nil || !cmp.Equal(got, q) {
 		t.Errorf("after a restart %+v (%v), want %+v", got, err, q)
 	}
 	if b := r.belief("gap", engine.BeliefQuery{Now: start}); b.Level != before.Level {
