@@ -4,6 +4,7 @@ import (
 	"math"
 	"strconv"
 
+	"google.golang.org/protobuf/types/known/durationpb"
 	"google.golang.org/protobuf/types/known/timestamppb"
 
 	leadlinev1 "leadline.example/proto/leadline/v1"
@@ -51,6 +52,19 @@ func (o *jsonObject) integer(name string, value uint32) {
 	o.b = strconv.AppendUint(o.b, uint64(value), 10)
 }
 
+func (o *jsonObject) boolean(name string, value bool) {
+	o.key(name)
+	o.b = strconv.AppendBool(o.b, value)
+}
+
+// duration writes a duration that may be absent; none of a belief is below 0.
+func (o *jsonObject) duration(name string, value *durationpb.Duration) {
+	if value != nil {
+		o.key(name)
+		o.b = append(appendDuration(append(o.b, '"'), value), `s"`...)
+	}
+}
+
 // time writes a time that may be absent.
 func (o *jsonObject) time(name string, value *timestamppb.Timestamp) {
 	if value != nil {
@@ -95,6 +109,7 @@ func appendBelief(b []byte, m *leadlinev1.Belief) []byte {
 	if x := m.GetRepeatability(); x != nil {
 		o.object("repeatability", func(o *jsonObject) { o.repeatability(x) })
 	}
+	o.instruments(m)
 	o.integer("reading_count", m.GetReadingCount())
 	o.time("last_reading_time", m.GetLastReadingTime())
 	if m.Verdict != nil {
@@ -102,10 +117,56 @@ func appendBelief(b []byte, m *leadlinev1.Belief) []byte {
 	}
 	o.integer("revision", m.GetRevision())
 	o.text("ledger_position", strconv.FormatUint(m.GetLedgerPosition(), 10))
-	o.key("rebuilding")
-	o.b = strconv.AppendBool(o.b, m.GetRebuilding())
+	o.boolean("rebuilding", m.GetRebuilding())
 	o.texts("undetermined", m.GetUndetermined())
 	return o.end()
+}
+
+// instruments writes what a belief says of the slope and of the instruments.
+func (o *jsonObject) instruments(m *leadlinev1.Belief) {
+	if x := m.GetSlope(); x != nil {
+		o.object("slope", func(o *jsonObject) {
+			o.optional("mean", x.Mean)
+			o.optional("standard_deviation", x.StandardDeviation)
+			o.duration("per", x.GetPer())
+		})
+	}
+	list(o, "biases", m.GetBiases(), func(o *jsonObject, x *leadlinev1.BiasBelief) {
+		o.text("instrument", x.GetInstrument())
+		o.time("valid_from", x.GetValidFrom())
+		o.number("mean", x.GetMean())
+		o.number("standard_deviation", x.GetStandardDeviation())
+		o.text("reference", x.GetReference())
+	})
+	list(o, "references", m.GetReferences(), func(o *jsonObject, x *leadlinev1.ReferenceBelief) {
+		o.text("reference", x.GetReference())
+		o.number("mean", x.GetMean())
+		o.number("standard_deviation", x.GetStandardDeviation())
+	})
+	o.boolean("linearised", m.GetLinearised())
+	o.boolean("resolution_as_variance", m.GetResolutionAsVariance())
+	if x := m.GetFlagged(); x != nil {
+		o.object("flagged", func(o *jsonObject) {
+			o.integer("overdue", x.GetOverdue())
+			o.integer("not_yet_valid", x.GetNotYetValid())
+			o.integer("uncalibrated", x.GetUncalibrated())
+		})
+	}
+}
+
+// list writes an array of objects, each by what fn writes into it.
+func list[M any](o *jsonObject, name string, values []M, fn func(*jsonObject, M)) {
+	o.key(name)
+	o.b = append(o.b, '[')
+	for i, value := range values {
+		if i > 0 {
+			o.b = append(o.b, ',')
+		}
+		inner := beginObject(o.b)
+		fn(&inner, value)
+		o.b = inner.end()
+	}
+	o.b = append(o.b, ']')
 }
 
 func (o *jsonObject) texts(name string, values []string) {

@@ -4,10 +4,12 @@ import (
 	"math"
 	"math/rand/v2"
 	"testing"
+	"time"
 
 	"github.com/google/go-cmp/cmp"
 	"google.golang.org/protobuf/proto"
 	"google.golang.org/protobuf/reflect/protoreflect"
+	"google.golang.org/protobuf/types/known/durationpb"
 
 	"leadline.example/engine"
 	leadlinev1 "leadline.example/proto/leadline/v1"
@@ -41,27 +43,46 @@ func fill(m protoreflect.Message, random *rand.Rand, chance float64) {
 		switch {
 		case random.Float64() >= chance:
 		case f.IsList():
-			for range random.IntN(3) {
-				m.Mutable(f).List().Append(scalar(f, random))
-			}
+			fillList(m.Mutable(f).List(), f, random, chance)
 		case f.Message() == nil:
 			m.Set(f, scalar(f, random))
 		case f.Message().FullName() == "google.protobuf.Timestamp":
 			m.Set(f, protoreflect.ValueOfMessage(randomTime(random).ProtoReflect()))
+		case f.Message().FullName() == durationName:
+			m.Set(f, protoreflect.ValueOfMessage(randomDuration(random).ProtoReflect()))
 		default:
 			fill(m.Mutable(f).Message(), random, chance)
 		}
 	}
 }
 
-func randomTime(random *rand.Rand) proto.Message {
-	at := random.Int64N(1e18)
-	for _, unit := range []int64{1e9, 1e6, 1e3} { // 0, 3, 6 or 9 decimals
-		if random.IntN(2) == 0 {
-			at -= at % unit
+func fillList(l protoreflect.List, f protoreflect.FieldDescriptor, random *rand.Rand, chance float64) {
+	for range random.IntN(3) {
+		if f.Message() == nil {
+			l.Append(scalar(f, random))
+		} else {
+			fill(l.AppendMutable().Message(), random, chance)
 		}
 	}
-	return timestamp(engine.Instant(at))
+}
+
+func randomTime(random *rand.Rand) proto.Message {
+	return timestamp(engine.Instant(randomNanos(random)))
+}
+
+func randomDuration(random *rand.Rand) proto.Message {
+	return durationpb.New(time.Duration(randomNanos(random)))
+}
+
+// randomNanos returns a number of nanoseconds with 0, 3, 6 or 9 decimals in seconds.
+func randomNanos(random *rand.Rand) int64 {
+	nanos := random.Int64N(1e18)
+	for _, unit := range []int64{1e9, 1e6, 1e3} {
+		if random.IntN(2) == 0 {
+			nanos -= nanos % unit
+		}
+	}
+	return nanos
 }
 
 func scalar(f protoreflect.FieldDescriptor, random *rand.Rand) protoreflect.Value {

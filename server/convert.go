@@ -31,8 +31,24 @@ func declarationOf(q *leadlinev1.Quantity) (engine.Declaration, error) {
 	if d.Tolerance, err = toleranceOf(q.GetTolerance()); err != nil {
 		return d, err
 	}
-	d.Rule, err = ruleOf(q.GetDecisionRule())
+	if d.Rule, err = ruleOf(q.GetDecisionRule()); err != nil {
+		return d, err
+	}
+	d.BreachHorizon, err = horizonOf("breach_horizon", q.GetBreachHorizon())
 	return d, err
+}
+
+// horizonOf reads how far to look ahead; 0, the engine's word for absent, can't
+// be given.
+func horizonOf(field string, d *durationpb.Duration) (time.Duration, error) {
+	if d == nil {
+		return 0, nil
+	}
+	horizon, err := durationOf(field, d)
+	if err == nil && horizon == 0 {
+		err = refuse(engine.InvalidField, field, field+" is 0s; give a duration above 0, such as \"86400s\", or leave it out")
+	}
+	return horizon, err
 }
 
 func priorOf(p *leadlinev1.Prior) (engine.Prior, error) {
@@ -105,22 +121,6 @@ func repeatabilityOf(r *leadlinev1.Repeatability) (engine.Repeatability, error) 
 	}
 	err := together("repeatability.learned", given{"guess", l.Guess}, given{"worth", l.Worth})
 	return engine.Repeatability{Form: engine.RepeatabilityLearned, Guess: l.GetGuess(), Worth: l.GetWorth()}, err
-}
-
-func dynamicsOf(d *leadlinev1.Dynamics) (engine.Dynamics, error) {
-	w := d.GetRandomWalk()
-	if w == nil {
-		return engine.Dynamics{}, nil
-	}
-	const message = "dynamics.random_walk"
-	if err := together(message, given{"standard_deviation", w.StandardDeviation}); err != nil {
-		return engine.Dynamics{}, err
-	}
-	if w.GetPer() == nil {
-		return engine.Dynamics{}, refuse(engine.MissingField, message+".per", message+".per is missing; give the time in which the movement has that standard deviation, such as \"86400s\"")
-	}
-	per, err := durationOf(message+".per", w.GetPer())
-	return engine.Dynamics{Form: engine.DynamicsRandomWalk, StandardDeviation: w.GetStandardDeviation(), Per: per}, err
 }
 
 func toleranceOf(t *leadlinev1.Tolerance) (engine.Tolerance, error) {
@@ -204,6 +204,9 @@ func quantityMessage(q *engine.Quantity) *leadlinev1.Quantity {
 		CreateTime:    timestamp(q.CreateTime),
 		UpdateTime:    timestamp(q.UpdateTime),
 	}
+	if d.BreachHorizon != 0 {
+		m.BreachHorizon = durationpb.New(d.BreachHorizon)
+	}
 	if q.Retired {
 		m.RetireTime = timestamp(q.RetireTime)
 	}
@@ -236,14 +239,6 @@ func repeatabilityMessage(r engine.Repeatability) *leadlinev1.Repeatability {
 		return &leadlinev1.Repeatability{Learned: &leadlinev1.Repeatability_Learned{}}
 	}
 	return nil
-}
-
-func dynamicsMessage(d engine.Dynamics) *leadlinev1.Dynamics {
-	if d.Form == engine.DynamicsRandomWalk {
-		walk := &leadlinev1.Dynamics_RandomWalk{StandardDeviation: &d.StandardDeviation, Per: durationpb.New(d.Per)}
-		return &leadlinev1.Dynamics{Model: &leadlinev1.Dynamics_RandomWalk_{RandomWalk: walk}}
-	}
-	return &leadlinev1.Dynamics{Model: &leadlinev1.Dynamics_Constant_{Constant: &leadlinev1.Dynamics_Constant{}}}
 }
 
 func toleranceMessage(t engine.Tolerance) *leadlinev1.Tolerance {

@@ -4,7 +4,9 @@ import (
 	"fmt"
 	"math"
 	"strconv"
+	"strings"
 	"time"
+	"unicode"
 
 	"leadline.example/engine"
 	leadlinev1 "leadline.example/proto/leadline/v1"
@@ -66,12 +68,16 @@ func readingOf(m *leadlinev1.Reading) (engine.Reading, *engine.Error) {
 		RandomStandardUncertainty: m.GetRandomStandardUncertainty(),
 		Unit:                      m.GetUnit(),
 		ID:                        engine.ReadingID(m.GetReadingId()),
+		Occasion:                  m.GetOccasion(),
 	}
 	if m == nil || m.Value == nil {
 		return r, refuse(engine.MissingField, "value", "value is missing; give the indication as a number")
 	}
 	if field, most := overLimit(&r); field != "" {
 		return r, refuse(engine.InvalidField, field, fmt.Sprintf("%s is longer than %d bytes; shorten it", field, most))
+	}
+	if !printable(r.Occasion) {
+		return r, refuse(engine.InvalidField, "occasion", "occasion has a character that isn't printable; leave such characters out")
 	}
 	if r.HasTime {
 		if !m.GetTime().IsValid() {
@@ -102,8 +108,24 @@ func overLimit(r *engine.Reading) (field string, most int) {
 		return "unit", engine.MaxUnitBytes
 	case len(r.ID) > engine.MaxReadingIDBytes:
 		return "reading_id", engine.MaxReadingIDBytes
+	case len(r.Occasion) > maxOccasionBytes:
+		return "occasion", maxOccasionBytes
 	}
 	return "", 0
+}
+
+const maxOccasionBytes = 128
+
+// printable tells whether a text, which is UTF-8, can be shown on a line.
+func printable(s string) bool {
+	return strings.IndexFunc(s, func(r rune) bool { return !unicode.IsPrint(r) }) < 0
+}
+
+// takenAsIs tells whether a reading that was scanned has nothing that readingOf
+// would refuse.
+func takenAsIs(r *engine.Reading) bool {
+	field, _ := overLimit(r)
+	return field == "" && printable(r.Occasion)
 }
 
 // inMessage puts the path of a message before a field and before the sentence,
@@ -171,6 +193,7 @@ func recordedMessage(r *engine.StoredReading) *leadlinev1.RecordedReading {
 		Status:         statusMessage(r.Status),
 		Reason:         string(r.Reason),
 		Detail:         detailOf(r),
+		Occasion:       r.Occasion,
 		ReceiveTime:    timestamp(r.ReceiveTime),
 		LedgerPosition: uint64(r.Position),
 	}

@@ -118,6 +118,8 @@ func TestReadingsOverALimitAreErrors(t *testing.T) {
 		{"quantity of 255", `{"quantity":"` + long(255) + `","value":1}`, "", ""},
 		{"quantity of 256", `{"quantity":"` + long(256) + `","value":1}`, "readings[0].quantity", engine.InvalidField},
 		{"instrument of 256", `{"quantity":"gap","value":1,"instrument":"` + long(256) + `"}`, "readings[0].instrument", engine.InvalidField},
+		{"occasion of 128", `{"quantity":"gap","value":1,"occasion":"` + long(128) + `"}`, "", ""},
+		{"occasion of 129", `{"quantity":"gap","value":1,"occasion":"` + long(129) + `"}`, "readings[0].occasion", engine.InvalidField},
 	} {
 		t.Run(test.name, func(t *testing.T) {
 			body := []byte(`{"readings":[` + test.body + `]}`)
@@ -208,7 +210,7 @@ func TestScannerTakesThePlainShape(t *testing.T) {
 	if readings, ok := scanReadings(body); !ok || len(readings) != 3 {
 		t.Errorf("scanner gave up on %s", body)
 	}
-	if _, ok := scanReading("gap", []byte(`{"value":0.83,"time":"2026-03-01T12:00:00Z","reading_id":"µ","unit":"mm"}`)); !ok {
+	if _, ok := scanReading("gap", []byte(`{"value":0.83,"time":"2026-03-01T12:00:00Z","reading_id":"µ","unit":"mm","instrument":"calliper-7","occasion":"round 3"}`)); !ok {
 		t.Error("scanner gave up on a single reading")
 	}
 }
@@ -269,6 +271,9 @@ func FuzzDeclareQuantity(f *testing.F) {
 		`{"dynamics":{"random_walk":{"standard_deviation":0.01,"per":"86400s"}},"decision_rule":{"conform_probability":0.9}}`,
 		`{"dynamics":{"random_walk":{"standard_deviation":0.01,"per":"9300000000s"}}}`,
 		`{"decision_rule":{"conform_probability":0,"breach_probability":0}}`,
+		`{"dynamics":{"linear_trend":{"standard_deviation":0.01,"per":"3600s","slope":{"mean":0.1,"standard_deviation":0.1,"per":"86400s"},"slope_wander":{"standard_deviation":0.01,"per":"86400s"}}}}`,
+		`{"dynamics":{"linear_trend":{"slope":{"mean":0,"standard_deviation":0.1,"per":"0.5s"}}},"tolerance":{"upper":1},"breach_horizon":"86400s"}`,
+		`{"dynamics":{"mean_reverting":{"mean":-25,"standard_deviation":1.5,"half_life":"3600s"}}}`,
 	} {
 		f.Add([]byte(body))
 	}

@@ -62,6 +62,7 @@ const (
 	sawUncertainty
 	sawUnit
 	sawID
+	sawOccasion
 )
 
 func (s *scanner) reading() (r engine.Reading, ok bool) {
@@ -85,8 +86,7 @@ func (s *scanner) reading() (r engine.Reading, ok bool) {
 		if !s.token('}') || seen&sawValue == 0 {
 			return r, false
 		}
-		field, _ := overLimit(&r)
-		return r, field == ""
+		return r, takenAsIs(&r)
 	}
 }
 
@@ -122,6 +122,9 @@ func (s *scanner) member(r *engine.Reading, name []byte) (bit int, ok bool) {
 	case "reading_id":
 		r.ID = engine.ReadingID(text)
 		return sawID, true
+	case "occasion":
+		r.Occasion = reuse(s.last.Occasion, text)
+		return sawOccasion, true
 	}
 	return 0, false
 }

@@ -7,6 +7,7 @@ import (
 	"strings"
 
 	"google.golang.org/protobuf/reflect/protoreflect"
+	"google.golang.org/protobuf/types/known/durationpb"
 	"google.golang.org/protobuf/types/known/timestamppb"
 
 	"leadline.example/engine"
@@ -51,29 +52,44 @@ func (r *route) checkParameter(name string, values []string) error {
 	if value == "" {
 		return nil
 	}
-	if field.Message() != nil {
-		if _, ok := parseTime([]byte(value)); !ok {
-			return refuse(engine.InvalidField, name, fmt.Sprintf("%s is %q; give an RFC 3339 time such as 2026-03-01T12:00:00Z, with + written as %%2B", name, shorten(value)))
-		}
-		return nil
-	}
-	if _, remedy := parseScalar(field, value); remedy != "" {
+	if remedy := parseParameter(field, value); remedy != "" {
 		return refuse(engine.InvalidField, name, fmt.Sprintf("%s is %q; %s", name, shorten(value), remedy))
 	}
 	return nil
 }
 
+// parseParameter returns what to do about a text that it can't read.
+func parseParameter(field protoreflect.FieldDescriptor, text string) (remedy string) {
+	if field.Message() == nil {
+		_, remedy = parseScalar(field, text)
+		return remedy
+	}
+	switch field.Message().FullName() {
+	case timeName:
+		if _, ok := parseTime([]byte(text)); !ok {
+			return "give an RFC 3339 time such as 2026-03-01T12:00:00Z, with + written as %2B"
+		}
+	case durationName:
+		if parseDuration(text, new(durationpb.Duration)) != nil {
+			return "give a duration in seconds such as 86400s"
+		}
+	}
+	return ""
+}
+
+// The messages that a query may hold.
+var (
+	timeName     = (*timestamppb.Timestamp)(nil).ProtoReflect().Descriptor().FullName()
+	durationName = (*durationpb.Duration)(nil).ProtoReflect().Descriptor().FullName()
+)
+
 func (r *route) parameter(name string) protoreflect.FieldDescriptor {
 	for _, field := range r.parameters() {
-		if string(field.Name()) == name && (field.Message() == nil || isTimestamp(field.Message())) {
+		if string(field.Name()) == name && (field.Message() == nil || field.Message().FullName() == timeName || field.Message().FullName() == durationName) {
 			return field
 		}
 	}
 	return nil
-}
-
-func isTimestamp(message protoreflect.MessageDescriptor) bool {
-	return message.FullName() == (*timestamppb.Timestamp)(nil).ProtoReflect().Descriptor().FullName()
 }
 
 func (r *route) unknownParameter(name string) error {

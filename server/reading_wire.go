@@ -76,6 +76,7 @@ const (
 	tagUncertainty = 5<<3 | byte(protowire.Fixed64Type)
 	tagUnit        = 6<<3 | byte(protowire.BytesType)
 	tagID          = 7<<3 | byte(protowire.BytesType)
+	tagOccasion    = 8<<3 | byte(protowire.BytesType)
 	tagSeconds     = 1<<3 | byte(protowire.VarintType)
 	tagNanoseconds = 2<<3 | byte(protowire.VarintType)
 )
@@ -171,6 +172,8 @@ func scanWireReading(b []byte, text string, r *engine.Reading) bool {
 			r.Unit = string(w.text())
 		case tagID:
 			r.ID = engine.ReadingID(w.text())
+		case tagOccasion:
+			r.Occasion = string(w.text())
 		default:
 			return false
 		}
@@ -178,8 +181,7 @@ func scanWireReading(b []byte, text string, r *engine.Reading) bool {
 			return false
 		}
 	}
-	field, _ := overLimit(r)
-	return field == "" && r.Quantity != "" && seen&(1<<(tagValue>>3)) != 0
+	return takenAsIs(r) && r.Quantity != "" && seen&(1<<(tagValue>>3)) != 0
 }
 
 // wireScanner reads an encoded message; bad says that it could not.

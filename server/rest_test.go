@@ -85,7 +85,7 @@ func TestRefusedRequestsSayWhy(t *testing.T) {
 		{"guess without worth", declare(`"repeatability":{"learned":{"guess":1}}`), 400, engine.MissingField, "repeatability.learned.worth"},
 		{"zero repeatability", declare(`"repeatability":{"standard_deviation":0}`), 400, engine.InvalidField, "repeatability.standard_deviation"},
 		{"two dynamics", declare(`"dynamics":{"constant":{},"random_walk":{}}`), 400, engine.InvalidField, "dynamics.random_walk"},
-		{"dynamics unknown here", declare(`"dynamics":{"linear_trend":{}}`), 400, engine.UnknownField, "dynamics.linear_trend"},
+		{"dynamics unknown here", declare(`"dynamics":{"seasonal":{}}`), 400, engine.UnknownField, "dynamics.seasonal"},
 		{"walk without a time", declare(`"dynamics":{"random_walk":{"standard_deviation":1}}`), 400, engine.MissingField, "dynamics.random_walk.per"},
 		{"walk with a bare number", declare(`"dynamics":{"random_walk":{"standard_deviation":1,"per":86400}}`), 400, engine.InvalidField, "dynamics.random_walk.per"},
 		{"walk of a day in words", declare(`"dynamics":{"random_walk":{"standard_deviation":1,"per":"1d"}}`), 400, engine.InvalidField, "dynamics.random_walk.per"},

@@ -31,6 +31,7 @@ func readRoutes() []route {
 	var routes []route
 	for _, file := range []protoreflect.FileDescriptor{
 		leadlinev1.File_leadline_v1_quantity_proto,
+		leadlinev1.File_leadline_v1_instrument_proto,
 		leadlinev1.File_leadline_v1_reading_proto,
 		leadlinev1.File_leadline_v1_belief_proto,
 	} {
@@ -74,30 +75,31 @@ func routeOf(rule *annotations.HttpRule, request protoreflect.MessageType) route
 	}
 	r.segments = strings.Split(r.template, "/")
 	for _, segment := range r.segments {
-		if name, ok := variableName(segment); ok {
+		if name, _, ok := variableOf(segment); ok {
 			r.variable = name
 		}
 	}
 	return r
 }
 
-func variableName(segment string) (string, bool) {
-	if strings.HasPrefix(segment, "{") && strings.HasSuffix(segment, "}") {
-		return segment[1 : len(segment)-1], true
-	}
-	return "", false
+// variableOf returns the name in a segment such as {id} or {id}:renew, and what
+// follows it.
+func variableOf(segment string) (name, verb string, ok bool) {
+	name, verb, ok = strings.Cut(strings.TrimPrefix(segment, "{"), "}")
+	return name, verb, ok && strings.HasPrefix(segment, "{")
 }
 
 // match compares the route with the segments of a path, each unescaped by
-// itself, and returns the value of its variable.
+// itself, and returns the value of its variable. A verb is the last of what an
+// ID with colons may end in: of x:renew:renew it is the second.
 func (r *route) match(path []string) (value string, ok bool) {
 	if len(path) != len(r.segments) {
 		return "", false
 	}
 	for i, segment := range r.segments {
-		if _, variable := variableName(segment); variable {
-			value = path[i]
-			if value == "" {
+		if _, verb, variable := variableOf(segment); variable {
+			value, ok = strings.CutSuffix(path[i], verb)
+			if !ok || value == "" {
 				return "", false
 			}
 		} else if segment != path[i] {
@@ -112,8 +114,8 @@ func (r *route) match(path []string) (value string, ok bool) {
 func (r *route) path(value string) (plain, escaped string) {
 	plainSegments, escapedSegments := slices.Clone(r.segments), slices.Clone(r.segments)
 	for i, segment := range r.segments {
-		if _, variable := variableName(segment); variable {
-			plainSegments[i], escapedSegments[i] = value, url.PathEscape(value)
+		if _, verb, variable := variableOf(segment); variable {
+			plainSegments[i], escapedSegments[i] = value+verb, url.PathEscape(value)+verb
 		}
 	}
 	return strings.Join(plainSegments, "/"), strings.Join(escapedSegments, "/")

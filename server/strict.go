@@ -13,6 +13,7 @@ import (
 	"google.golang.org/protobuf/reflect/protoreflect"
 
 	"leadline.example/engine"
+	leadlinev1 "leadline.example/proto/leadline/v1"
 )
 
 // The JSON dialect. protojson takes camelCase aliases, numbers as strings, NaN
@@ -106,7 +107,7 @@ func (d *strictDecoder) list(list protoreflect.List, field protoreflect.FieldDes
 	}
 	for d.tokens.PeekKind() != ']' {
 		if list.Len() == engine.MaxBatchReadings {
-			return refuse(engine.BatchTooLarge, d.field(), fmt.Sprintf("%s has more than %d elements; send them in several requests", d.field(), engine.MaxBatchReadings))
+			return d.tooMany(field)
 		}
 		d.path = append(d.path, "["+strconv.Itoa(list.Len())+"]")
 		if err := d.element(list, field); err != nil {
@@ -116,6 +117,14 @@ func (d *strictDecoder) list(list protoreflect.List, field protoreflect.FieldDes
 	}
 	_, err := d.read(']', "an array")
 	return err
+}
+
+// tooMany refuses a list that goes on. Only readings can be sent in several requests.
+func (d *strictDecoder) tooMany(field protoreflect.FieldDescriptor) error {
+	if field.Message() != (*leadlinev1.Reading)(nil).ProtoReflect().Descriptor() {
+		return d.invalid("has more than %d elements; give fewer", engine.MaxBatchReadings)
+	}
+	return refuse(engine.BatchTooLarge, d.field(), fmt.Sprintf("%s has more than %d elements; send them in several requests", d.field(), engine.MaxBatchReadings))
 }
 
 func (d *strictDecoder) element(list protoreflect.List, field protoreflect.FieldDescriptor) error {

@@ -42,11 +42,18 @@ func (d *strictDecoder) time(text string, into *timestamppb.Timestamp) error {
 }
 
 func (d *strictDecoder) duration(text string, into *durationpb.Duration) error {
-	plain := strings.Trim(text, "-.0123456789s") == ""
-	if !plain || protojson.Unmarshal([]byte(`"`+text+`"`), into) != nil {
+	if parseDuration(text, into) != nil {
 		return d.invalid("is %q; give a duration in seconds such as \"86400s\"", shorten(text))
 	}
 	return nil
+}
+
+// parseDuration reads a duration as protobuf's JSON has it.
+func parseDuration(text string, into *durationpb.Duration) error {
+	if strings.Trim(text, "-.0123456789s") != "" {
+		return strconv.ErrSyntax
+	}
+	return protojson.Unmarshal([]byte(`"`+text+`"`), into)
 }
 
 // scalar reads a value of a field that isn't a message.

@@ -2,7 +2,11 @@ package server
 
 import (
 	"bytes"
+	"strconv"
+	"strings"
 	"time"
+
+	"google.golang.org/protobuf/types/known/durationpb"
 )
 
 // parseTime reads an RFC 3339 time as protobuf's JSON has it: upper-case T and
@@ -54,4 +58,22 @@ func appendTime(b []byte, t time.Time) []byte {
 		layout = "2006-01-02T15:04:05.000000Z"
 	}
 	return t.AppendFormat(b, layout)
+}
+
+// appendDuration writes the seconds of d, at least 0, as protobuf's JSON does: with
+// 0, 3, 6 or 9 decimals.
+func appendDuration(b []byte, d *durationpb.Duration) []byte {
+	b = strconv.AppendInt(b, d.GetSeconds(), 10)
+	decimals := strconv.Itoa(1e9 + int(d.GetNanos()))[1:]
+	for range 3 {
+		shorter, ok := strings.CutSuffix(decimals, "000")
+		if !ok {
+			break
+		}
+		decimals = shorter
+	}
+	if decimals == "" {
+		return b
+	}
+	return append(append(b, '.'), decimals...)
 }

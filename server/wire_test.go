@@ -75,7 +75,7 @@ func randomBatch(random *rand.Rand) *leadlinev1.StreamReadingsRequest {
 			r.Time = &timestamppb.Timestamp{Seconds: random.Int64() >> random.IntN(64), Nanos: random.Int32() >> random.IntN(32)}
 		}
 		if some(2) {
-			r.Unit, r.Instrument, r.RandomStandardUncertainty = pick(), pick(), new(random.Float64())
+			r.Unit, r.Instrument, r.Occasion, r.RandomStandardUncertainty = pick(), pick(), pick(), new(random.Float64())
 		}
 		m.Readings = append(m.Readings, r)
 	}

@@ -10,6 +10,7 @@ import (
 	_ "google.golang.org/genproto/googleapis/api/annotations"
 	protoreflect "google.golang.org/protobuf/reflect/protoreflect"
 	protoimpl "google.golang.org/protobuf/runtime/protoimpl"
+	durationpb "google.golang.org/protobuf/types/known/durationpb"
 	timestamppb "google.golang.org/protobuf/types/known/timestamppb"
 	reflect "reflect"
 	sync "sync"
@@ -145,6 +146,95 @@ func (Distribution_Form) EnumDescriptor() ([]byte, []int) {
 	return file_leadline_v1_belief_proto_rawDescGZIP(), []int{3, 0}
 }
 
+// Source is a cause of uncertainty.
+type Budget_Source int32
+
+const (
+	// Never sent.
+	Budget_UNSPECIFIED Budget_Source = 0
+	// What was not known of the value before any reading.
+	Budget_PRIOR Budget_Source = 1
+	// What was not known of the slope before any reading.
+	Budget_SLOPE_PRIOR Budget_Source = 2
+	// The biases of an instrument, without what their references share.
+	Budget_BIAS Budget_Source = 3
+	// The error that calibrations against one reference share.
+	Budget_REFERENCE Budget_Source = 4
+	// An error in proportion to the value: relative_bias_standard_uncertainty.
+	Budget_GAIN Budget_Source = 5
+	// The white noise of the readings, with that of the display.
+	Budget_REPEATABILITY Budget_Source = 6
+	// The correlated noise of an instrument.
+	Budget_CORRELATED_NOISE Budget_Source = 7
+	// The errors that readings of one occasion share.
+	Budget_OCCASION Budget_Source = 8
+	// The random walk, or the wandering about the mean, of the value.
+	Budget_PROCESS Budget_Source = 9
+	// The changes of the slope.
+	Budget_SLOPE_WANDER Budget_Source = 10
+	// The drift of the biases since their calibrations.
+	Budget_DRIFT Budget_Source = 11
+)
+
+// Enum value maps for Budget_Source.
+var (
+	Budget_Source_name = map[int32]string{
+		0:  "UNSPECIFIED",
+		1:  "PRIOR",
+		2:  "SLOPE_PRIOR",
+		3:  "BIAS",
+		4:  "REFERENCE",
+		5:  "GAIN",
+		6:  "REPEATABILITY",
+		7:  "CORRELATED_NOISE",
+		8:  "OCCASION",
+		9:  "PROCESS",
+		10: "SLOPE_WANDER",
+		11: "DRIFT",
+	}
+	Budget_Source_value = map[string]int32{
+		"UNSPECIFIED":      0,
+		"PRIOR":            1,
+		"SLOPE_PRIOR":      2,
+		"BIAS":             3,
+		"REFERENCE":        4,
+		"GAIN":             5,
+		"REPEATABILITY":    6,
+		"CORRELATED_NOISE": 7,
+		"OCCASION":         8,
+		"PROCESS":          9,
+		"SLOPE_WANDER":     10,
+		"DRIFT":            11,
+	}
+)
+
+func (x Budget_Source) Enum() *Budget_Source {
+	p := new(Budget_Source)
+	*p = x
+	return p
+}
+
+func (x Budget_Source) String() string {
+	return protoimpl.X.EnumStringOf(x.Descriptor(), protoreflect.EnumNumber(x))
+}
+
+func (Budget_Source) Descriptor() protoreflect.EnumDescriptor {
+	return file_leadline_v1_belief_proto_enumTypes[2].Descriptor()
+}
+
+func (Budget_Source) Type() protoreflect.EnumType {
+	return &file_leadline_v1_belief_proto_enumTypes[2]
+}
+
+func (x Budget_Source) Number() protoreflect.EnumNumber {
+	return protoreflect.EnumNumber(x)
+}
+
+// Deprecated: Use Budget_Source.Descriptor instead.
+func (Budget_Source) EnumDescriptor() ([]byte, []int) {
+	return file_leadline_v1_belief_proto_rawDescGZIP(), []int{8, 0}
+}
+
 // Belief is the distribution of a quantity's true value at a time, given its
 // readings. What does not exist is absent and named in undetermined.
 type Belief struct {
@@ -173,6 +263,21 @@ type Belief struct {
 	Distribution *Distribution `protobuf:"bytes,11,opt,name=distribution,proto3" json:"distribution,omitempty"`
 	// What is known of the repeatability; absent where every reading brings its own.
 	Repeatability *RepeatabilityBelief `protobuf:"bytes,12,opt,name=repeatability,proto3" json:"repeatability,omitempty"`
+	// Slope as it is believed now, by the per that was declared; absent unless the
+	// dynamics are a linear_trend.
+	Slope *Slope `protobuf:"bytes,20,opt,name=slope,proto3" json:"slope,omitempty"`
+	// What is now believed of each instrument's bias, under the calibration that its last
+	// reading rests on.
+	Biases []*BiasBelief `protobuf:"bytes,21,rep,name=biases,proto3" json:"biases,omitempty"`
+	// What is now believed of the error of each reference that those calibrations share.
+	References []*ReferenceBelief `protobuf:"bytes,22,rep,name=references,proto3" json:"references,omitempty"`
+	// Some readings entered by a linearisation: an instrument with a relative part.
+	Linearised bool `protobuf:"varint,23,opt,name=linearised,proto3" json:"linearised,omitempty"`
+	// Some readings are by an instrument with a resolution, which entered as a variance
+	// of resolution^2/12, as if each reading were off by an error of its own.
+	ResolutionAsVariance bool `protobuf:"varint,24,opt,name=resolution_as_variance,json=resolutionAsVariance,proto3" json:"resolution_as_variance,omitempty"`
+	// How many of the readings are flagged; absent if none is.
+	Flagged *Belief_Flagged `protobuf:"bytes,25,opt,name=flagged,proto3" json:"flagged,omitempty"`
 	// How many applied readings the belief rests on.
 	ReadingCount uint32 `protobuf:"varint,13,opt,name=reading_count,json=readingCount,proto3" json:"reading_count,omitempty"`
 	// Time of the last of them; absent if there is none.
@@ -303,6 +408,48 @@ func (x *Belief) GetDistribution() *Distribution {
 func (x *Belief) GetRepeatability() *RepeatabilityBelief {
 	if x != nil {
 		return x.Repeatability
+	}
+	return nil
+}
+
+func (x *Belief) GetSlope() *Slope {
+	if x != nil {
+		return x.Slope
+	}
+	return nil
+}
+
+func (x *Belief) GetBiases() []*BiasBelief {
+	if x != nil {
+		return x.Biases
+	}
+	return nil
+}
+
+func (x *Belief) GetReferences() []*ReferenceBelief {
+	if x != nil {
+		return x.References
+	}
+	return nil
+}
+
+func (x *Belief) GetLinearised() bool {
+	if x != nil {
+		return x.Linearised
+	}
+	return false
+}
+
+func (x *Belief) GetResolutionAsVariance() bool {
+	if x != nil {
+		return x.ResolutionAsVariance
+	}
+	return false
+}
+
+func (x *Belief) GetFlagged() *Belief_Flagged {
+	if x != nil {
+		return x.Flagged
 	}
 	return nil
 }
@@ -649,6 +796,411 @@ func (x *RepeatabilityBelief) GetEstimate() float64 {
 	return 0
 }
 
+// BiasBelief is what the readings of one quantity, with the calibration, say of a bias.
+type BiasBelief struct {
+	state protoimpl.MessageState `protogen:"open.v1"`
+	// ID of the instrument.
+	Instrument string `protobuf:"bytes,1,opt,name=instrument,proto3" json:"instrument,omitempty"`
+	// From when the calibration is valid.
+	ValidFrom *timestamppb.Timestamp `protobuf:"bytes,2,opt,name=valid_from,json=validFrom,proto3" json:"valid_from,omitempty"`
+	// Mean of the bias: what was declared and what was learned, in the quantity's unit.
+	Mean float64 `protobuf:"fixed64,3,opt,name=mean,proto3" json:"mean,omitempty"`
+	// Standard deviation of the bias, in the quantity's unit.
+	StandardDeviation float64 `protobuf:"fixed64,4,opt,name=standard_deviation,json=standardDeviation,proto3" json:"standard_deviation,omitempty"`
+	// Reference that the calibration shares; empty, none.
+	Reference     string `protobuf:"bytes,5,opt,name=reference,proto3" json:"reference,omitempty"`
+	unknownFields protoimpl.UnknownFields
+	sizeCache     protoimpl.SizeCache
+}
+
+func (x *BiasBelief) Reset() {
+	*x = BiasBelief{}
+	mi := &file_leadline_v1_belief_proto_msgTypes[5]
+	ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
+	ms.StoreMessageInfo(mi)
+}
+
+func (x *BiasBelief) String() string {
+	return protoimpl.X.MessageStringOf(x)
+}
+
+func (*BiasBelief) ProtoMessage() {}
+
+func (x *BiasBelief) ProtoReflect() protoreflect.Message {
+	mi := &file_leadline_v1_belief_proto_msgTypes[5]
+	if x != nil {
+		ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
+		if ms.LoadMessageInfo() == nil {
+			ms.StoreMessageInfo(mi)
+		}
+		return ms
+	}
+	return mi.MessageOf(x)
+}
+
+// Deprecated: Use BiasBelief.ProtoReflect.Descriptor instead.
+func (*BiasBelief) Descriptor() ([]byte, []int) {
+	return file_leadline_v1_belief_proto_rawDescGZIP(), []int{5}
+}
+
+func (x *BiasBelief) GetInstrument() string {
+	if x != nil {
+		return x.Instrument
+	}
+	return ""
+}
+
+func (x *BiasBelief) GetValidFrom() *timestamppb.Timestamp {
+	if x != nil {
+		return x.ValidFrom
+	}
+	return nil
+}
+
+func (x *BiasBelief) GetMean() float64 {
+	if x != nil {
+		return x.Mean
+	}
+	return 0
+}
+
+func (x *BiasBelief) GetStandardDeviation() float64 {
+	if x != nil {
+		return x.StandardDeviation
+	}
+	return 0
+}
+
+func (x *BiasBelief) GetReference() string {
+	if x != nil {
+		return x.Reference
+	}
+	return ""
+}
+
+// ReferenceBelief is what the readings of one quantity say of the error that all
+// calibrations against a reference share, in units of the
+// common_standard_uncertainty that each of them declares: before any reading its
+// mean is 0 and its standard deviation 1.
+type ReferenceBelief struct {
+	state protoimpl.MessageState `protogen:"open.v1"`
+	// Name of the reference.
+	Reference string `protobuf:"bytes,1,opt,name=reference,proto3" json:"reference,omitempty"`
+	// Mean of the error.
+	Mean float64 `protobuf:"fixed64,2,opt,name=mean,proto3" json:"mean,omitempty"`
+	// Standard deviation of the error.
+	StandardDeviation float64 `protobuf:"fixed64,3,opt,name=standard_deviation,json=standardDeviation,proto3" json:"standard_deviation,omitempty"`
+	unknownFields     protoimpl.UnknownFields
+	sizeCache         protoimpl.SizeCache
+}
+
+func (x *ReferenceBelief) Reset() {
+	*x = ReferenceBelief{}
+	mi := &file_leadline_v1_belief_proto_msgTypes[6]
+	ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
+	ms.StoreMessageInfo(mi)
+}
+
+func (x *ReferenceBelief) String() string {
+	return protoimpl.X.MessageStringOf(x)
+}
+
+func (*ReferenceBelief) ProtoMessage() {}
+
+func (x *ReferenceBelief) ProtoReflect() protoreflect.Message {
+	mi := &file_leadline_v1_belief_proto_msgTypes[6]
+	if x != nil {
+		ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
+		if ms.LoadMessageInfo() == nil {
+			ms.StoreMessageInfo(mi)
+		}
+		return ms
+	}
+	return mi.MessageOf(x)
+}
+
+// Deprecated: Use ReferenceBelief.ProtoReflect.Descriptor instead.
+func (*ReferenceBelief) Descriptor() ([]byte, []int) {
+	return file_leadline_v1_belief_proto_rawDescGZIP(), []int{6}
+}
+
+func (x *ReferenceBelief) GetReference() string {
+	if x != nil {
+		return x.Reference
+	}
+	return ""
+}
+
+func (x *ReferenceBelief) GetMean() float64 {
+	if x != nil {
+		return x.Mean
+	}
+	return 0
+}
+
+func (x *ReferenceBelief) GetStandardDeviation() float64 {
+	if x != nil {
+		return x.StandardDeviation
+	}
+	return 0
+}
+
+// Forecast is what a belief says of the time to come, without further readings.
+type Forecast struct {
+	state protoimpl.MessageState `protogen:"open.v1"`
+	// ID of the quantity.
+	Quantity string `protobuf:"bytes,1,opt,name=quantity,proto3" json:"quantity,omitempty"`
+	// Unit of all values.
+	Unit string `protobuf:"bytes,2,opt,name=unit,proto3" json:"unit,omitempty"`
+	// Instant from which it looks ahead: now, or the time of the last reading if that
+	// is later.
+	Time *timestamppb.Timestamp `protobuf:"bytes,3,opt,name=time,proto3" json:"time,omitempty"`
+	// How far it looks ahead.
+	Horizon *durationpb.Duration `protobuf:"bytes,4,opt,name=horizon,proto3" json:"horizon,omitempty"`
+	// The belief at equal steps, the last at the horizon.
+	Steps []*Forecast_Step `protobuf:"bytes,5,rep,name=steps,proto3" json:"steps,omitempty"`
+	// When a limit is crossed; absent without a tolerance.
+	TimeToBreach *Forecast_TimeToBreach `protobuf:"bytes,6,opt,name=time_to_breach,json=timeToBreach,proto3" json:"time_to_breach,omitempty"`
+	// Revision of the declaration.
+	Revision uint32 `protobuf:"varint,7,opt,name=revision,proto3" json:"revision,omitempty"`
+	// Ledger position up to which everything of this quantity is included.
+	LedgerPosition uint64 `protobuf:"varint,8,opt,name=ledger_position,json=ledgerPosition,proto3" json:"ledger_position,omitempty"`
+	// A rebuild is under way and this rests on the belief before it.
+	Rebuilding bool `protobuf:"varint,9,opt,name=rebuilding,proto3" json:"rebuilding,omitempty"`
+	// Names of the fields that do not exist for this belief.
+	Undetermined  []string `protobuf:"bytes,10,rep,name=undetermined,proto3" json:"undetermined,omitempty"`
+	unknownFields protoimpl.UnknownFields
+	sizeCache     protoimpl.SizeCache
+}
+
+func (x *Forecast) Reset() {
+	*x = Forecast{}
+	mi := &file_leadline_v1_belief_proto_msgTypes[7]
+	ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
+	ms.StoreMessageInfo(mi)
+}
+
+func (x *Forecast) String() string {
+	return protoimpl.X.MessageStringOf(x)
+}
+
+func (*Forecast) ProtoMessage() {}
+
+func (x *Forecast) ProtoReflect() protoreflect.Message {
+	mi := &file_leadline_v1_belief_proto_msgTypes[7]
+	if x != nil {
+		ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
+		if ms.LoadMessageInfo() == nil {
+			ms.StoreMessageInfo(mi)
+		}
+		return ms
+	}
+	return mi.MessageOf(x)
+}
+
+// Deprecated: Use Forecast.ProtoReflect.Descriptor instead.
+func (*Forecast) Descriptor() ([]byte, []int) {
+	return file_leadline_v1_belief_proto_rawDescGZIP(), []int{7}
+}
+
+func (x *Forecast) GetQuantity() string {
+	if x != nil {
+		return x.Quantity
+	}
+	return ""
+}
+
+func (x *Forecast) GetUnit() string {
+	if x != nil {
+		return x.Unit
+	}
+	return ""
+}
+
+func (x *Forecast) GetTime() *timestamppb.Timestamp {
+	if x != nil {
+		return x.Time
+	}
+	return nil
+}
+
+func (x *Forecast) GetHorizon() *durationpb.Duration {
+	if x != nil {
+		return x.Horizon
+	}
+	return nil
+}
+
+func (x *Forecast) GetSteps() []*Forecast_Step {
+	if x != nil {
+		return x.Steps
+	}
+	return nil
+}
+
+func (x *Forecast) GetTimeToBreach() *Forecast_TimeToBreach {
+	if x != nil {
+		return x.TimeToBreach
+	}
+	return nil
+}
+
+func (x *Forecast) GetRevision() uint32 {
+	if x != nil {
+		return x.Revision
+	}
+	return 0
+}
+
+func (x *Forecast) GetLedgerPosition() uint64 {
+	if x != nil {
+		return x.LedgerPosition
+	}
+	return 0
+}
+
+func (x *Forecast) GetRebuilding() bool {
+	if x != nil {
+		return x.Rebuilding
+	}
+	return false
+}
+
+func (x *Forecast) GetUndetermined() []string {
+	if x != nil {
+		return x.Undetermined
+	}
+	return nil
+}
+
+// Budget is the variance of a belief, split over independent causes. The
+// variances of the parts sum to the whole.
+type Budget struct {
+	state protoimpl.MessageState `protogen:"open.v1"`
+	// ID of the quantity.
+	Quantity string `protobuf:"bytes,1,opt,name=quantity,proto3" json:"quantity,omitempty"`
+	// Unit of the standard deviations; variances are in its square.
+	Unit string `protobuf:"bytes,2,opt,name=unit,proto3" json:"unit,omitempty"`
+	// Instant for which it is stated.
+	Time *timestamppb.Timestamp `protobuf:"bytes,3,opt,name=time,proto3" json:"time,omitempty"`
+	// Variance of the true value.
+	Variance *float64 `protobuf:"fixed64,4,opt,name=variance,proto3,oneof" json:"variance,omitempty"`
+	// Its square root: the standard uncertainty.
+	StandardDeviation *float64 `protobuf:"fixed64,5,opt,name=standard_deviation,json=standardDeviation,proto3,oneof" json:"standard_deviation,omitempty"`
+	// The parts, by source, instrument and reference; those of no weight are left out.
+	Parts []*Budget_Part `protobuf:"bytes,6,rep,name=parts,proto3" json:"parts,omitempty"`
+	// Revision of the declaration.
+	Revision uint32 `protobuf:"varint,7,opt,name=revision,proto3" json:"revision,omitempty"`
+	// Ledger position up to which everything of this quantity is included.
+	LedgerPosition uint64 `protobuf:"varint,8,opt,name=ledger_position,json=ledgerPosition,proto3" json:"ledger_position,omitempty"`
+	// A rebuild is under way and this rests on the belief before it.
+	Rebuilding bool `protobuf:"varint,9,opt,name=rebuilding,proto3" json:"rebuilding,omitempty"`
+	// Names of the fields that do not exist for this belief.
+	Undetermined  []string `protobuf:"bytes,10,rep,name=undetermined,proto3" json:"undetermined,omitempty"`
+	unknownFields protoimpl.UnknownFields
+	sizeCache     protoimpl.SizeCache
+}
+
+func (x *Budget) Reset() {
+	*x = Budget{}
+	mi := &file_leadline_v1_belief_proto_msgTypes[8]
+	ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
+	ms.StoreMessageInfo(mi)
+}
+
+func (x *Budget) String() string {
+	return protoimpl.X.MessageStringOf(x)
+}
+
+func (*Budget) ProtoMessage() {}
+
+func (x *Budget) ProtoReflect() protoreflect.Message {
+	mi := &file_leadline_v1_belief_proto_msgTypes[8]
+	if x != nil {
+		ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
+		if ms.LoadMessageInfo() == nil {
+			ms.StoreMessageInfo(mi)
+		}
+		return ms
+	}
+	return mi.MessageOf(x)
+}
+
+// Deprecated: Use Budget.ProtoReflect.Descriptor instead.
+func (*Budget) Descriptor() ([]byte, []int) {
+	return file_leadline_v1_belief_proto_rawDescGZIP(), []int{8}
+}
+
+func (x *Budget) GetQuantity() string {
+	if x != nil {
+		return x.Quantity
+	}
+	return ""
+}
+
+func (x *Budget) GetUnit() string {
+	if x != nil {
+		return x.Unit
+	}
+	return ""
+}
+
+func (x *Budget) GetTime() *timestamppb.Timestamp {
+	if x != nil {
+		return x.Time
+	}
+	return nil
+}
+
+func (x *Budget) GetVariance() float64 {
+	if x != nil && x.Variance != nil {
+		return *x.Variance
+	}
+	return 0
+}
+
+func (x *Budget) GetStandardDeviation() float64 {
+	if x != nil && x.StandardDeviation != nil {
+		return *x.StandardDeviation
+	}
+	return 0
+}
+
+func (x *Budget) GetParts() []*Budget_Part {
+	if x != nil {
+		return x.Parts
+	}
+	return nil
+}
+
+func (x *Budget) GetRevision() uint32 {
+	if x != nil {
+		return x.Revision
+	}
+	return 0
+}
+
+func (x *Budget) GetLedgerPosition() uint64 {
+	if x != nil {
+		return x.LedgerPosition
+	}
+	return 0
+}
+
+func (x *Budget) GetRebuilding() bool {
+	if x != nil {
+		return x.Rebuilding
+	}
+	return false
+}
+
+func (x *Budget) GetUndetermined() []string {
+	if x != nil {
+		return x.Undetermined
+	}
+	return nil
+}
+
 // GetBeliefRequest asks for the belief of one quantity.
 type GetBeliefRequest struct {
 	state protoimpl.MessageState `protogen:"open.v1"`
@@ -671,7 +1223,7 @@ type GetBeliefRequest struct {
 
 func (x *GetBeliefRequest) Reset() {
 	*x = GetBeliefRequest{}
-	mi := &file_leadline_v1_belief_proto_msgTypes[5]
+	mi := &file_leadline_v1_belief_proto_msgTypes[9]
 	ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
 	ms.StoreMessageInfo(mi)
 }
@@ -683,7 +1235,7 @@ func (x *GetBeliefRequest) String() string {
 func (*GetBeliefRequest) ProtoMessage() {}
 
 func (x *GetBeliefRequest) ProtoReflect() protoreflect.Message {
-	mi := &file_leadline_v1_belief_proto_msgTypes[5]
+	mi := &file_leadline_v1_belief_proto_msgTypes[9]
 	if x != nil {
 		ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
 		if ms.LoadMessageInfo() == nil {
@@ -696,7 +1248,7 @@ func (x *GetBeliefRequest) ProtoReflect() protoreflect.Message {
 
 // Deprecated: Use GetBeliefRequest.ProtoReflect.Descriptor instead.
 func (*GetBeliefRequest) Descriptor() ([]byte, []int) {
-	return file_leadline_v1_belief_proto_rawDescGZIP(), []int{5}
+	return file_leadline_v1_belief_proto_rawDescGZIP(), []int{9}
 }
 
 func (x *GetBeliefRequest) GetQuantity() string {
@@ -734,6 +1286,135 @@ func (x *GetBeliefRequest) GetInstrument() string {
 	return ""
 }
 
+// ForecastBeliefRequest asks what is to come of one quantity.
+type ForecastBeliefRequest struct {
+	state protoimpl.MessageState `protogen:"open.v1"`
+	// ID of the quantity.
+	Quantity string `protobuf:"bytes,1,opt,name=quantity,proto3" json:"quantity,omitempty"`
+	// How far to look ahead, above 0, for example "86400s"; absent, the declared
+	// breach_horizon.
+	Horizon *durationpb.Duration `protobuf:"bytes,2,opt,name=horizon,proto3" json:"horizon,omitempty"`
+	// In how many equal steps to answer, 1 to 1000; absent, 10.
+	Steps *int32 `protobuf:"varint,3,opt,name=steps,proto3,oneof" json:"steps,omitempty"`
+	// Coverage probability of the intervals, between 0 and 1; absent, 0.95.
+	CoverageProbability *float64 `protobuf:"fixed64,4,opt,name=coverage_probability,json=coverageProbability,proto3,oneof" json:"coverage_probability,omitempty"`
+	unknownFields       protoimpl.UnknownFields
+	sizeCache           protoimpl.SizeCache
+}
+
+func (x *ForecastBeliefRequest) Reset() {
+	*x = ForecastBeliefRequest{}
+	mi := &file_leadline_v1_belief_proto_msgTypes[10]
+	ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
+	ms.StoreMessageInfo(mi)
+}
+
+func (x *ForecastBeliefRequest) String() string {
+	return protoimpl.X.MessageStringOf(x)
+}
+
+func (*ForecastBeliefRequest) ProtoMessage() {}
+
+func (x *ForecastBeliefRequest) ProtoReflect() protoreflect.Message {
+	mi := &file_leadline_v1_belief_proto_msgTypes[10]
+	if x != nil {
+		ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
+		if ms.LoadMessageInfo() == nil {
+			ms.StoreMessageInfo(mi)
+		}
+		return ms
+	}
+	return mi.MessageOf(x)
+}
+
+// Deprecated: Use ForecastBeliefRequest.ProtoReflect.Descriptor instead.
+func (*ForecastBeliefRequest) Descriptor() ([]byte, []int) {
+	return file_leadline_v1_belief_proto_rawDescGZIP(), []int{10}
+}
+
+func (x *ForecastBeliefRequest) GetQuantity() string {
+	if x != nil {
+		return x.Quantity
+	}
+	return ""
+}
+
+func (x *ForecastBeliefRequest) GetHorizon() *durationpb.Duration {
+	if x != nil {
+		return x.Horizon
+	}
+	return nil
+}
+
+func (x *ForecastBeliefRequest) GetSteps() int32 {
+	if x != nil && x.Steps != nil {
+		return *x.Steps
+	}
+	return 0
+}
+
+func (x *ForecastBeliefRequest) GetCoverageProbability() float64 {
+	if x != nil && x.CoverageProbability != nil {
+		return *x.CoverageProbability
+	}
+	return 0
+}
+
+// GetBudgetRequest asks where the uncertainty of one quantity comes from.
+type GetBudgetRequest struct {
+	state protoimpl.MessageState `protogen:"open.v1"`
+	// ID of the quantity.
+	Quantity string `protobuf:"bytes,1,opt,name=quantity,proto3" json:"quantity,omitempty"`
+	// Instant for which to state it, as for a belief.
+	Time          *timestamppb.Timestamp `protobuf:"bytes,2,opt,name=time,proto3" json:"time,omitempty"`
+	unknownFields protoimpl.UnknownFields
+	sizeCache     protoimpl.SizeCache
+}
+
+func (x *GetBudgetRequest) Reset() {
+	*x = GetBudgetRequest{}
+	mi := &file_leadline_v1_belief_proto_msgTypes[11]
+	ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
+	ms.StoreMessageInfo(mi)
+}
+
+func (x *GetBudgetRequest) String() string {
+	return protoimpl.X.MessageStringOf(x)
+}
+
+func (*GetBudgetRequest) ProtoMessage() {}
+
+func (x *GetBudgetRequest) ProtoReflect() protoreflect.Message {
+	mi := &file_leadline_v1_belief_proto_msgTypes[11]
+	if x != nil {
+		ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
+		if ms.LoadMessageInfo() == nil {
+			ms.StoreMessageInfo(mi)
+		}
+		return ms
+	}
+	return mi.MessageOf(x)
+}
+
+// Deprecated: Use GetBudgetRequest.ProtoReflect.Descriptor instead.
+func (*GetBudgetRequest) Descriptor() ([]byte, []int) {
+	return file_leadline_v1_belief_proto_rawDescGZIP(), []int{11}
+}
+
+func (x *GetBudgetRequest) GetQuantity() string {
+	if x != nil {
+		return x.Quantity
+	}
+	return ""
+}
+
+func (x *GetBudgetRequest) GetTime() *timestamppb.Timestamp {
+	if x != nil {
+		return x.Time
+	}
+	return nil
+}
+
 // ListBeliefsRequest asks for the beliefs of many quantities.
 type ListBeliefsRequest struct {
 	state protoimpl.MessageState `protogen:"open.v1"`
@@ -754,7 +1435,7 @@ type ListBeliefsRequest struct {
 
 func (x *ListBeliefsRequest) Reset() {
 	*x = ListBeliefsRequest{}
-	mi := &file_leadline_v1_belief_proto_msgTypes[6]
+	mi := &file_leadline_v1_belief_proto_msgTypes[12]
 	ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
 	ms.StoreMessageInfo(mi)
 }
@@ -766,7 +1447,7 @@ func (x *ListBeliefsRequest) String() string {
 func (*ListBeliefsRequest) ProtoMessage() {}
 
 func (x *ListBeliefsRequest) ProtoReflect() protoreflect.Message {
-	mi := &file_leadline_v1_belief_proto_msgTypes[6]
+	mi := &file_leadline_v1_belief_proto_msgTypes[12]
 	if x != nil {
 		ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
 		if ms.LoadMessageInfo() == nil {
@@ -779,7 +1460,7 @@ func (x *ListBeliefsRequest) ProtoReflect() protoreflect.Message {
 
 // Deprecated: Use ListBeliefsRequest.ProtoReflect.Descriptor instead.
 func (*ListBeliefsRequest) Descriptor() ([]byte, []int) {
-	return file_leadline_v1_belief_proto_rawDescGZIP(), []int{6}
+	return file_leadline_v1_belief_proto_rawDescGZIP(), []int{12}
 }
 
 func (x *ListBeliefsRequest) GetPrefix() string {
@@ -830,7 +1511,7 @@ type ListBeliefsResponse struct {
 
 func (x *ListBeliefsResponse) Reset() {
 	*x = ListBeliefsResponse{}
-	mi := &file_leadline_v1_belief_proto_msgTypes[7]
+	mi := &file_leadline_v1_belief_proto_msgTypes[13]
 	ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
 	ms.StoreMessageInfo(mi)
 }
@@ -842,7 +1523,7 @@ func (x *ListBeliefsResponse) String() string {
 func (*ListBeliefsResponse) ProtoMessage() {}
 
 func (x *ListBeliefsResponse) ProtoReflect() protoreflect.Message {
-	mi := &file_leadline_v1_belief_proto_msgTypes[7]
+	mi := &file_leadline_v1_belief_proto_msgTypes[13]
 	if x != nil {
 		ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
 		if ms.LoadMessageInfo() == nil {
@@ -855,7 +1536,7 @@ func (x *ListBeliefsResponse) ProtoReflect() protoreflect.Message {
 
 // Deprecated: Use ListBeliefsResponse.ProtoReflect.Descriptor instead.
 func (*ListBeliefsResponse) Descriptor() ([]byte, []int) {
-	return file_leadline_v1_belief_proto_rawDescGZIP(), []int{7}
+	return file_leadline_v1_belief_proto_rawDescGZIP(), []int{13}
 }
 
 func (x *ListBeliefsResponse) GetBeliefs() []*Belief {
@@ -883,7 +1564,7 @@ type WatchBeliefsRequest struct {
 
 func (x *WatchBeliefsRequest) Reset() {
 	*x = WatchBeliefsRequest{}
-	mi := &file_leadline_v1_belief_proto_msgTypes[8]
+	mi := &file_leadline_v1_belief_proto_msgTypes[14]
 	ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
 	ms.StoreMessageInfo(mi)
 }
@@ -895,7 +1576,7 @@ func (x *WatchBeliefsRequest) String() string {
 func (*WatchBeliefsRequest) ProtoMessage() {}
 
 func (x *WatchBeliefsRequest) ProtoReflect() protoreflect.Message {
-	mi := &file_leadline_v1_belief_proto_msgTypes[8]
+	mi := &file_leadline_v1_belief_proto_msgTypes[14]
 	if x != nil {
 		ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
 		if ms.LoadMessageInfo() == nil {
@@ -908,7 +1589,7 @@ func (x *WatchBeliefsRequest) ProtoReflect() protoreflect.Message {
 
 // Deprecated: Use WatchBeliefsRequest.ProtoReflect.Descriptor instead.
 func (*WatchBeliefsRequest) Descriptor() ([]byte, []int) {
-	return file_leadline_v1_belief_proto_rawDescGZIP(), []int{8}
+	return file_leadline_v1_belief_proto_rawDescGZIP(), []int{14}
 }
 
 func (x *WatchBeliefsRequest) GetPrefix() string {
@@ -934,7 +1615,7 @@ type WatchBeliefsResponse struct {
 
 func (x *WatchBeliefsResponse) Reset() {
 	*x = WatchBeliefsResponse{}
-	mi := &file_leadline_v1_belief_proto_msgTypes[9]
+	mi := &file_leadline_v1_belief_proto_msgTypes[15]
 	ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
 	ms.StoreMessageInfo(mi)
 }
@@ -946,7 +1627,7 @@ func (x *WatchBeliefsResponse) String() string {
 func (*WatchBeliefsResponse) ProtoMessage() {}
 
 func (x *WatchBeliefsResponse) ProtoReflect() protoreflect.Message {
-	mi := &file_leadline_v1_belief_proto_msgTypes[9]
+	mi := &file_leadline_v1_belief_proto_msgTypes[15]
 	if x != nil {
 		ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
 		if ms.LoadMessageInfo() == nil {
@@ -959,7 +1640,7 @@ func (x *WatchBeliefsResponse) ProtoReflect() protoreflect.Message {
 
 // Deprecated: Use WatchBeliefsResponse.ProtoReflect.Descriptor instead.
 func (*WatchBeliefsResponse) Descriptor() ([]byte, []int) {
-	return file_leadline_v1_belief_proto_rawDescGZIP(), []int{9}
+	return file_leadline_v1_belief_proto_rawDescGZIP(), []int{15}
 }
 
 func (x *WatchBeliefsResponse) GetEvent() isWatchBeliefsResponse_Event {
@@ -1005,6 +1686,70 @@ func (*WatchBeliefsResponse_Belief) isWatchBeliefsResponse_Event() {}
 
 func (*WatchBeliefsResponse_RetiredQuantity) isWatchBeliefsResponse_Event() {}
 
+// Flagged counts readings by how they stand to their instrument's calibration.
+type Belief_Flagged struct {
+	state protoimpl.MessageState `protogen:"open.v1"`
+	// Made after the calibration was due anew.
+	Overdue uint32 `protobuf:"varint,1,opt,name=overdue,proto3" json:"overdue,omitempty"`
+	// Made before the first calibration was valid.
+	NotYetValid uint32 `protobuf:"varint,2,opt,name=not_yet_valid,json=notYetValid,proto3" json:"not_yet_valid,omitempty"`
+	// Made by an instrument without calibration.
+	Uncalibrated  uint32 `protobuf:"varint,3,opt,name=uncalibrated,proto3" json:"uncalibrated,omitempty"`
+	unknownFields protoimpl.UnknownFields
+	sizeCache     protoimpl.SizeCache
+}
+
+func (x *Belief_Flagged) Reset() {
+	*x = Belief_Flagged{}
+	mi := &file_leadline_v1_belief_proto_msgTypes[16]
+	ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
+	ms.StoreMessageInfo(mi)
+}
+
+func (x *Belief_Flagged) String() string {
+	return protoimpl.X.MessageStringOf(x)
+}
+
+func (*Belief_Flagged) ProtoMessage() {}
+
+func (x *Belief_Flagged) ProtoReflect() protoreflect.Message {
+	mi := &file_leadline_v1_belief_proto_msgTypes[16]
+	if x != nil {
+		ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
+		if ms.LoadMessageInfo() == nil {
+			ms.StoreMessageInfo(mi)
+		}
+		return ms
+	}
+	return mi.MessageOf(x)
+}
+
+// Deprecated: Use Belief_Flagged.ProtoReflect.Descriptor instead.
+func (*Belief_Flagged) Descriptor() ([]byte, []int) {
+	return file_leadline_v1_belief_proto_rawDescGZIP(), []int{0, 0}
+}
+
+func (x *Belief_Flagged) GetOverdue() uint32 {
+	if x != nil {
+		return x.Overdue
+	}
+	return 0
+}
+
+func (x *Belief_Flagged) GetNotYetValid() uint32 {
+	if x != nil {
+		return x.NotYetValid
+	}
+	return 0
+}
+
+func (x *Belief_Flagged) GetUncalibrated() uint32 {
+	if x != nil {
+		return x.Uncalibrated
+	}
+	return 0
+}
+
 // Breach is nonconformity: the true value lies outside the tolerance.
 type Belief_Breach struct {
 	state protoimpl.MessageState `protogen:"open.v1"`
@@ -1020,7 +1765,7 @@ type Belief_Breach struct {
 
 func (x *Belief_Breach) Reset() {
 	*x = Belief_Breach{}
-	mi := &file_leadline_v1_belief_proto_msgTypes[10]
+	mi := &file_leadline_v1_belief_proto_msgTypes[17]
 	ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
 	ms.StoreMessageInfo(mi)
 }
@@ -1032,7 +1777,7 @@ func (x *Belief_Breach) String() string {
 func (*Belief_Breach) ProtoMessage() {}
 
 func (x *Belief_Breach) ProtoReflect() protoreflect.Message {
-	mi := &file_leadline_v1_belief_proto_msgTypes[10]
+	mi := &file_leadline_v1_belief_proto_msgTypes[17]
 	if x != nil {
 		ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
 		if ms.LoadMessageInfo() == nil {
@@ -1045,7 +1790,7 @@ func (x *Belief_Breach) ProtoReflect() protoreflect.Message {
 
 // Deprecated: Use Belief_Breach.ProtoReflect.Descriptor instead.
 func (*Belief_Breach) Descriptor() ([]byte, []int) {
-	return file_leadline_v1_belief_proto_rawDescGZIP(), []int{0, 0}
+	return file_leadline_v1_belief_proto_rawDescGZIP(), []int{0, 1}
 }
 
 func (x *Belief_Breach) GetBelow() float64 {
@@ -1082,7 +1827,7 @@ type Belief_Threshold struct {
 
 func (x *Belief_Threshold) Reset() {
 	*x = Belief_Threshold{}
-	mi := &file_leadline_v1_belief_proto_msgTypes[11]
+	mi := &file_leadline_v1_belief_proto_msgTypes[18]
 	ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
 	ms.StoreMessageInfo(mi)
 }
@@ -1094,7 +1839,7 @@ func (x *Belief_Threshold) String() string {
 func (*Belief_Threshold) ProtoMessage() {}
 
 func (x *Belief_Threshold) ProtoReflect() protoreflect.Message {
-	mi := &file_leadline_v1_belief_proto_msgTypes[11]
+	mi := &file_leadline_v1_belief_proto_msgTypes[18]
 	if x != nil {
 		ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
 		if ms.LoadMessageInfo() == nil {
@@ -1107,7 +1852,7 @@ func (x *Belief_Threshold) ProtoReflect() protoreflect.Message {
 
 // Deprecated: Use Belief_Threshold.ProtoReflect.Descriptor instead.
 func (*Belief_Threshold) Descriptor() ([]byte, []int) {
-	return file_leadline_v1_belief_proto_rawDescGZIP(), []int{0, 1}
+	return file_leadline_v1_belief_proto_rawDescGZIP(), []int{0, 2}
 }
 
 func (x *Belief_Threshold) GetValue() float64 {
@@ -1139,7 +1884,7 @@ type Predictive_Outside struct {
 
 func (x *Predictive_Outside) Reset() {
 	*x = Predictive_Outside{}
-	mi := &file_leadline_v1_belief_proto_msgTypes[12]
+	mi := &file_leadline_v1_belief_proto_msgTypes[19]
 	ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
 	ms.StoreMessageInfo(mi)
 }
@@ -1151,7 +1896,7 @@ func (x *Predictive_Outside) String() string {
 func (*Predictive_Outside) ProtoMessage() {}
 
 func (x *Predictive_Outside) ProtoReflect() protoreflect.Message {
-	mi := &file_leadline_v1_belief_proto_msgTypes[12]
+	mi := &file_leadline_v1_belief_proto_msgTypes[19]
 	if x != nil {
 		ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
 		if ms.LoadMessageInfo() == nil {
@@ -1188,11 +1933,335 @@ func (x *Predictive_Outside) GetEither() float64 {
 	return 0
 }
 
+// Step is the belief at one time to come.
+type Forecast_Step struct {
+	state protoimpl.MessageState `protogen:"open.v1"`
+	// The time.
+	Time *timestamppb.Timestamp `protobuf:"bytes,1,opt,name=time,proto3" json:"time,omitempty"`
+	// Mean of the true value then.
+	Mean *float64 `protobuf:"fixed64,2,opt,name=mean,proto3,oneof" json:"mean,omitempty"`
+	// Standard deviation of the true value then.
+	StandardDeviation *float64 `protobuf:"fixed64,3,opt,name=standard_deviation,json=standardDeviation,proto3,oneof" json:"standard_deviation,omitempty"`
+	// Coverage interval of the true value then.
+	Interval *Interval `protobuf:"bytes,4,opt,name=interval,proto3" json:"interval,omitempty"`
+	// Probabilities that the true value lies outside the tolerance then; absent
+	// without one.
+	Breach *Belief_Breach `protobuf:"bytes,5,opt,name=breach,proto3" json:"breach,omitempty"`
+	// Probabilities that a limit has been crossed by then; absent without one.
+	Crossed       *Forecast_Crossed `protobuf:"bytes,6,opt,name=crossed,proto3" json:"crossed,omitempty"`
+	unknownFields protoimpl.UnknownFields
+	sizeCache     protoimpl.SizeCache
+}
+
+func (x *Forecast_Step) Reset() {
+	*x = Forecast_Step{}
+	mi := &file_leadline_v1_belief_proto_msgTypes[20]
+	ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
+	ms.StoreMessageInfo(mi)
+}
+
+func (x *Forecast_Step) String() string {
+	return protoimpl.X.MessageStringOf(x)
+}
+
+func (*Forecast_Step) ProtoMessage() {}
+
+func (x *Forecast_Step) ProtoReflect() protoreflect.Message {
+	mi := &file_leadline_v1_belief_proto_msgTypes[20]
+	if x != nil {
+		ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
+		if ms.LoadMessageInfo() == nil {
+			ms.StoreMessageInfo(mi)
+		}
+		return ms
+	}
+	return mi.MessageOf(x)
+}
+
+// Deprecated: Use Forecast_Step.ProtoReflect.Descriptor instead.
+func (*Forecast_Step) Descriptor() ([]byte, []int) {
+	return file_leadline_v1_belief_proto_rawDescGZIP(), []int{7, 0}
+}
+
+func (x *Forecast_Step) GetTime() *timestamppb.Timestamp {
+	if x != nil {
+		return x.Time
+	}
+	return nil
+}
+
+func (x *Forecast_Step) GetMean() float64 {
+	if x != nil && x.Mean != nil {
+		return *x.Mean
+	}
+	return 0
+}
+
+func (x *Forecast_Step) GetStandardDeviation() float64 {
+	if x != nil && x.StandardDeviation != nil {
+		return *x.StandardDeviation
+	}
+	return 0
+}
+
+func (x *Forecast_Step) GetInterval() *Interval {
+	if x != nil {
+		return x.Interval
+	}
+	return nil
+}
+
+func (x *Forecast_Step) GetBreach() *Belief_Breach {
+	if x != nil {
+		return x.Breach
+	}
+	return nil
+}
+
+func (x *Forecast_Step) GetCrossed() *Forecast_Crossed {
+	if x != nil {
+		return x.Crossed
+	}
+	return nil
+}
+
+// Crossed says that the true value has been outside the tolerance at some time up
+// to the step's, be it back inside by then. What is outside already counts as
+// crossed from the start.
+type Forecast_Crossed struct {
+	state protoimpl.MessageState `protogen:"open.v1"`
+	// Probability that it has, by the lower limit first.
+	Below float64 `protobuf:"fixed64,1,opt,name=below,proto3" json:"below,omitempty"`
+	// Probability that it has, by the upper limit first.
+	Above float64 `protobuf:"fixed64,2,opt,name=above,proto3" json:"above,omitempty"`
+	// Probability of either.
+	Either        float64 `protobuf:"fixed64,3,opt,name=either,proto3" json:"either,omitempty"`
+	unknownFields protoimpl.UnknownFields
+	sizeCache     protoimpl.SizeCache
+}
+
+func (x *Forecast_Crossed) Reset() {
+	*x = Forecast_Crossed{}
+	mi := &file_leadline_v1_belief_proto_msgTypes[21]
+	ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
+	ms.StoreMessageInfo(mi)
+}
+
+func (x *Forecast_Crossed) String() string {
+	return protoimpl.X.MessageStringOf(x)
+}
+
+func (*Forecast_Crossed) ProtoMessage() {}
+
+func (x *Forecast_Crossed) ProtoReflect() protoreflect.Message {
+	mi := &file_leadline_v1_belief_proto_msgTypes[21]
+	if x != nil {
+		ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
+		if ms.LoadMessageInfo() == nil {
+			ms.StoreMessageInfo(mi)
+		}
+		return ms
+	}
+	return mi.MessageOf(x)
+}
+
+// Deprecated: Use Forecast_Crossed.ProtoReflect.Descriptor instead.
+func (*Forecast_Crossed) Descriptor() ([]byte, []int) {
+	return file_leadline_v1_belief_proto_rawDescGZIP(), []int{7, 1}
+}
+
+func (x *Forecast_Crossed) GetBelow() float64 {
+	if x != nil {
+		return x.Below
+	}
+	return 0
+}
+
+func (x *Forecast_Crossed) GetAbove() float64 {
+	if x != nil {
+		return x.Above
+	}
+	return 0
+}
+
+func (x *Forecast_Crossed) GetEither() float64 {
+	if x != nil {
+		return x.Either
+	}
+	return 0
+}
+
+// TimeToBreach is the distribution of the time until a limit is first crossed,
+// counted from the forecast's time. Its quantiles are absent where they are not
+// reached within the horizon.
+type Forecast_TimeToBreach struct {
+	state protoimpl.MessageState `protogen:"open.v1"`
+	// Probability that a limit is crossed within the horizon.
+	Probability float64 `protobuf:"fixed64,1,opt,name=probability,proto3" json:"probability,omitempty"`
+	// Time by which it is crossed with probability 0.1.
+	LowerDecile *durationpb.Duration `protobuf:"bytes,2,opt,name=lower_decile,json=lowerDecile,proto3" json:"lower_decile,omitempty"`
+	// Time by which it is crossed with probability 0.5.
+	Median *durationpb.Duration `protobuf:"bytes,3,opt,name=median,proto3" json:"median,omitempty"`
+	// Time by which it is crossed with probability 0.9.
+	UpperDecile   *durationpb.Duration `protobuf:"bytes,4,opt,name=upper_decile,json=upperDecile,proto3" json:"upper_decile,omitempty"`
+	unknownFields protoimpl.UnknownFields
+	sizeCache     protoimpl.SizeCache
+}
+
+func (x *Forecast_TimeToBreach) Reset() {
+	*x = Forecast_TimeToBreach{}
+	mi := &file_leadline_v1_belief_proto_msgTypes[22]
+	ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
+	ms.StoreMessageInfo(mi)
+}
+
+func (x *Forecast_TimeToBreach) String() string {
+	return protoimpl.X.MessageStringOf(x)
+}
+
+func (*Forecast_TimeToBreach) ProtoMessage() {}
+
+func (x *Forecast_TimeToBreach) ProtoReflect() protoreflect.Message {
+	mi := &file_leadline_v1_belief_proto_msgTypes[22]
+	if x != nil {
+		ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
+		if ms.LoadMessageInfo() == nil {
+			ms.StoreMessageInfo(mi)
+		}
+		return ms
+	}
+	return mi.MessageOf(x)
+}
+
+// Deprecated: Use Forecast_TimeToBreach.ProtoReflect.Descriptor instead.
+func (*Forecast_TimeToBreach) Descriptor() ([]byte, []int) {
+	return file_leadline_v1_belief_proto_rawDescGZIP(), []int{7, 2}
+}
+
+func (x *Forecast_TimeToBreach) GetProbability() float64 {
+	if x != nil {
+		return x.Probability
+	}
+	return 0
+}
+
+func (x *Forecast_TimeToBreach) GetLowerDecile() *durationpb.Duration {
+	if x != nil {
+		return x.LowerDecile
+	}
+	return nil
+}
+
+func (x *Forecast_TimeToBreach) GetMedian() *durationpb.Duration {
+	if x != nil {
+		return x.Median
+	}
+	return nil
+}
+
+func (x *Forecast_TimeToBreach) GetUpperDecile() *durationpb.Duration {
+	if x != nil {
+		return x.UpperDecile
+	}
+	return nil
+}
+
+// Part is what one cause contributes.
+type Budget_Part struct {
+	state protoimpl.MessageState `protogen:"open.v1"`
+	// The cause.
+	Source Budget_Source `protobuf:"varint,1,opt,name=source,proto3,enum=leadline.v1.Budget_Source" json:"source,omitempty"`
+	// ID of the instrument it belongs to; empty, none.
+	Instrument string `protobuf:"bytes,2,opt,name=instrument,proto3" json:"instrument,omitempty"`
+	// Name of the reference, of REFERENCE; else empty.
+	Reference string `protobuf:"bytes,3,opt,name=reference,proto3" json:"reference,omitempty"`
+	// Contribution to the variance.
+	Variance float64 `protobuf:"fixed64,4,opt,name=variance,proto3" json:"variance,omitempty"`
+	// Its square root.
+	StandardDeviation float64 `protobuf:"fixed64,5,opt,name=standard_deviation,json=standardDeviation,proto3" json:"standard_deviation,omitempty"`
+	// Its share of the variance, from 0 to 1.
+	Share         float64 `protobuf:"fixed64,6,opt,name=share,proto3" json:"share,omitempty"`
+	unknownFields protoimpl.UnknownFields
+	sizeCache     protoimpl.SizeCache
+}
+
+func (x *Budget_Part) Reset() {
+	*x = Budget_Part{}
+	mi := &file_leadline_v1_belief_proto_msgTypes[23]
+	ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
+	ms.StoreMessageInfo(mi)
+}
+
+func (x *Budget_Part) String() string {
+	return protoimpl.X.MessageStringOf(x)
+}
+
+func (*Budget_Part) ProtoMessage() {}
+
+func (x *Budget_Part) ProtoReflect() protoreflect.Message {
+	mi := &file_leadline_v1_belief_proto_msgTypes[23]
+	if x != nil {
+		ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
+		if ms.LoadMessageInfo() == nil {
+			ms.StoreMessageInfo(mi)
+		}
+		return ms
+	}
+	return mi.MessageOf(x)
+}
+
+// Deprecated: Use Budget_Part.ProtoReflect.Descriptor instead.
+func (*Budget_Part) Descriptor() ([]byte, []int) {
+	return file_leadline_v1_belief_proto_rawDescGZIP(), []int{8, 0}
+}
+
+func (x *Budget_Part) GetSource() Budget_Source {
+	if x != nil {
+		return x.Source
+	}
+	return Budget_UNSPECIFIED
+}
+
+func (x *Budget_Part) GetInstrument() string {
+	if x != nil {
+		return x.Instrument
+	}
+	return ""
+}
+
+func (x *Budget_Part) GetReference() string {
+	if x != nil {
+		return x.Reference
+	}
+	return ""
+}
+
+func (x *Budget_Part) GetVariance() float64 {
+	if x != nil {
+		return x.Variance
+	}
+	return 0
+}
+
+func (x *Budget_Part) GetStandardDeviation() float64 {
+	if x != nil {
+		return x.StandardDeviation
+	}
+	return 0
+}
+
+func (x *Budget_Part) GetShare() float64 {
+	if x != nil {
+		return x.Share
+	}
+	return 0
+}
+
 var File_leadline_v1_belief_proto protoreflect.FileDescriptor
 
 const file_leadline_v1_belief_proto_rawDesc = "" +
 	"\n" +
-	"\x18leadline/v1/belief.proto\x12\vleadline.v1\x1a\x1cgoogle/api/annotations.proto\x1a\x1fgoogle/api/field_behavior.proto\x1a\x1fgoogle/protobuf/timestamp.proto\"\xb9\t\n" +
+	"\x18leadline/v1/belief.proto\x12\vleadline.v1\x1a\x1cgoogle/api/annotations.proto\x1a\x1fgoogle/api/field_behavior.proto\x1a\x1egoogle/protobuf/duration.proto\x1a\x1fgoogle/protobuf/timestamp.proto\x1a\x1aleadline/v1/quantity.proto\"\xcc\f\n" +
 	"\x06Belief\x12\x1a\n" +
 	"\bquantity\x18\x01 \x01(\tR\bquantity\x12\x12\n" +
 	"\x04unit\x18\x02 \x01(\tR\x04unit\x12.\n" +
@@ -1208,7 +2277,17 @@ const file_leadline_v1_belief_proto_rawDesc = "" +
 	" \x01(\v2\x17.leadline.v1.PredictiveR\n" +
 	"predictive\x12=\n" +
 	"\fdistribution\x18\v \x01(\v2\x19.leadline.v1.DistributionR\fdistribution\x12F\n" +
-	"\rrepeatability\x18\f \x01(\v2 .leadline.v1.RepeatabilityBeliefR\rrepeatability\x12#\n" +
+	"\rrepeatability\x18\f \x01(\v2 .leadline.v1.RepeatabilityBeliefR\rrepeatability\x12(\n" +
+	"\x05slope\x18\x14 \x01(\v2\x12.leadline.v1.SlopeR\x05slope\x12/\n" +
+	"\x06biases\x18\x15 \x03(\v2\x17.leadline.v1.BiasBeliefR\x06biases\x12<\n" +
+	"\n" +
+	"references\x18\x16 \x03(\v2\x1c.leadline.v1.ReferenceBeliefR\n" +
+	"references\x12\x1e\n" +
+	"\n" +
+	"linearised\x18\x17 \x01(\bR\n" +
+	"linearised\x124\n" +
+	"\x16resolution_as_variance\x18\x18 \x01(\bR\x14resolutionAsVariance\x125\n" +
+	"\aflagged\x18\x19 \x01(\v2\x1b.leadline.v1.Belief.FlaggedR\aflagged\x12#\n" +
 	"\rreading_count\x18\r \x01(\rR\freadingCount\x12F\n" +
 	"\x11last_reading_time\x18\x0e \x01(\v2\x1a.google.protobuf.TimestampR\x0flastReadingTime\x12:\n" +
 	"\averdict\x18\x0f \x01(\x0e2\x1b.leadline.v1.Belief.VerdictH\x03R\averdict\x88\x01\x01\x12\x1a\n" +
@@ -1217,7 +2296,11 @@ const file_leadline_v1_belief_proto_rawDesc = "" +
 	"\n" +
 	"rebuilding\x18\x12 \x01(\bR\n" +
 	"rebuilding\x12\"\n" +
-	"\fundetermined\x18\x13 \x03(\tR\fundetermined\x1aL\n" +
+	"\fundetermined\x18\x13 \x03(\tR\fundetermined\x1ak\n" +
+	"\aFlagged\x12\x18\n" +
+	"\aoverdue\x18\x01 \x01(\rR\aoverdue\x12\"\n" +
+	"\rnot_yet_valid\x18\x02 \x01(\rR\vnotYetValid\x12\"\n" +
+	"\funcalibrated\x18\x03 \x01(\rR\funcalibrated\x1aL\n" +
 	"\x06Breach\x12\x14\n" +
 	"\x05below\x18\x01 \x01(\x01R\x05below\x12\x14\n" +
 	"\x05above\x18\x02 \x01(\x01R\x05above\x12\x16\n" +
@@ -1277,7 +2360,92 @@ const file_leadline_v1_belief_proto_rawDesc = "" +
 	"\bestimate\x18\x04 \x01(\x01H\x02R\bestimate\x88\x01\x01B\x15\n" +
 	"\x13_standard_deviationB\t\n" +
 	"\a_medianB\v\n" +
-	"\t_estimate\"\x85\x02\n" +
+	"\t_estimate\"\xc8\x01\n" +
+	"\n" +
+	"BiasBelief\x12\x1e\n" +
+	"\n" +
+	"instrument\x18\x01 \x01(\tR\n" +
+	"instrument\x129\n" +
+	"\n" +
+	"valid_from\x18\x02 \x01(\v2\x1a.google.protobuf.TimestampR\tvalidFrom\x12\x12\n" +
+	"\x04mean\x18\x03 \x01(\x01R\x04mean\x12-\n" +
+	"\x12standard_deviation\x18\x04 \x01(\x01R\x11standardDeviation\x12\x1c\n" +
+	"\treference\x18\x05 \x01(\tR\treference\"r\n" +
+	"\x0fReferenceBelief\x12\x1c\n" +
+	"\treference\x18\x01 \x01(\tR\treference\x12\x12\n" +
+	"\x04mean\x18\x02 \x01(\x01R\x04mean\x12-\n" +
+	"\x12standard_deviation\x18\x03 \x01(\x01R\x11standardDeviation\"\x9b\b\n" +
+	"\bForecast\x12\x1a\n" +
+	"\bquantity\x18\x01 \x01(\tR\bquantity\x12\x12\n" +
+	"\x04unit\x18\x02 \x01(\tR\x04unit\x12.\n" +
+	"\x04time\x18\x03 \x01(\v2\x1a.google.protobuf.TimestampR\x04time\x123\n" +
+	"\ahorizon\x18\x04 \x01(\v2\x19.google.protobuf.DurationR\ahorizon\x120\n" +
+	"\x05steps\x18\x05 \x03(\v2\x1a.leadline.v1.Forecast.StepR\x05steps\x12H\n" +
+	"\x0etime_to_breach\x18\x06 \x01(\v2\".leadline.v1.Forecast.TimeToBreachR\ftimeToBreach\x12\x1a\n" +
+	"\brevision\x18\a \x01(\rR\brevision\x12'\n" +
+	"\x0fledger_position\x18\b \x01(\x04R\x0eledgerPosition\x12\x1e\n" +
+	"\n" +
+	"rebuilding\x18\t \x01(\bR\n" +
+	"rebuilding\x12\"\n" +
+	"\fundetermined\x18\n" +
+	" \x03(\tR\fundetermined\x1a\xc3\x02\n" +
+	"\x04Step\x12.\n" +
+	"\x04time\x18\x01 \x01(\v2\x1a.google.protobuf.TimestampR\x04time\x12\x17\n" +
+	"\x04mean\x18\x02 \x01(\x01H\x00R\x04mean\x88\x01\x01\x122\n" +
+	"\x12standard_deviation\x18\x03 \x01(\x01H\x01R\x11standardDeviation\x88\x01\x01\x121\n" +
+	"\binterval\x18\x04 \x01(\v2\x15.leadline.v1.IntervalR\binterval\x122\n" +
+	"\x06breach\x18\x05 \x01(\v2\x1a.leadline.v1.Belief.BreachR\x06breach\x127\n" +
+	"\acrossed\x18\x06 \x01(\v2\x1d.leadline.v1.Forecast.CrossedR\acrossedB\a\n" +
+	"\x05_meanB\x15\n" +
+	"\x13_standard_deviation\x1aM\n" +
+	"\aCrossed\x12\x14\n" +
+	"\x05below\x18\x01 \x01(\x01R\x05below\x12\x14\n" +
+	"\x05above\x18\x02 \x01(\x01R\x05above\x12\x16\n" +
+	"\x06either\x18\x03 \x01(\x01R\x06either\x1a\xdf\x01\n" +
+	"\fTimeToBreach\x12 \n" +
+	"\vprobability\x18\x01 \x01(\x01R\vprobability\x12<\n" +
+	"\flower_decile\x18\x02 \x01(\v2\x19.google.protobuf.DurationR\vlowerDecile\x121\n" +
+	"\x06median\x18\x03 \x01(\v2\x19.google.protobuf.DurationR\x06median\x12<\n" +
+	"\fupper_decile\x18\x04 \x01(\v2\x19.google.protobuf.DurationR\vupperDecile\"\xb2\x06\n" +
+	"\x06Budget\x12\x1a\n" +
+	"\bquantity\x18\x01 \x01(\tR\bquantity\x12\x12\n" +
+	"\x04unit\x18\x02 \x01(\tR\x04unit\x12.\n" +
+	"\x04time\x18\x03 \x01(\v2\x1a.google.protobuf.TimestampR\x04time\x12\x1f\n" +
+	"\bvariance\x18\x04 \x01(\x01H\x00R\bvariance\x88\x01\x01\x122\n" +
+	"\x12standard_deviation\x18\x05 \x01(\x01H\x01R\x11standardDeviation\x88\x01\x01\x12.\n" +
+	"\x05parts\x18\x06 \x03(\v2\x18.leadline.v1.Budget.PartR\x05parts\x12\x1a\n" +
+	"\brevision\x18\a \x01(\rR\brevision\x12'\n" +
+	"\x0fledger_position\x18\b \x01(\x04R\x0eledgerPosition\x12\x1e\n" +
+	"\n" +
+	"rebuilding\x18\t \x01(\bR\n" +
+	"rebuilding\x12\"\n" +
+	"\fundetermined\x18\n" +
+	" \x03(\tR\fundetermined\x1a\xd9\x01\n" +
+	"\x04Part\x122\n" +
+	"\x06source\x18\x01 \x01(\x0e2\x1a.leadline.v1.Budget.SourceR\x06source\x12\x1e\n" +
+	"\n" +
+	"instrument\x18\x02 \x01(\tR\n" +
+	"instrument\x12\x1c\n" +
+	"\treference\x18\x03 \x01(\tR\treference\x12\x1a\n" +
+	"\bvariance\x18\x04 \x01(\x01R\bvariance\x12-\n" +
+	"\x12standard_deviation\x18\x05 \x01(\x01R\x11standardDeviation\x12\x14\n" +
+	"\x05share\x18\x06 \x01(\x01R\x05share\"\xb9\x01\n" +
+	"\x06Source\x12\x0f\n" +
+	"\vUNSPECIFIED\x10\x00\x12\t\n" +
+	"\x05PRIOR\x10\x01\x12\x0f\n" +
+	"\vSLOPE_PRIOR\x10\x02\x12\b\n" +
+	"\x04BIAS\x10\x03\x12\r\n" +
+	"\tREFERENCE\x10\x04\x12\b\n" +
+	"\x04GAIN\x10\x05\x12\x11\n" +
+	"\rREPEATABILITY\x10\x06\x12\x14\n" +
+	"\x10CORRELATED_NOISE\x10\a\x12\f\n" +
+	"\bOCCASION\x10\b\x12\v\n" +
+	"\aPROCESS\x10\t\x12\x10\n" +
+	"\fSLOPE_WANDER\x10\n" +
+	"\x12\t\n" +
+	"\x05DRIFT\x10\vB\v\n" +
+	"\t_varianceB\x15\n" +
+	"\x13_standard_deviation\"\x85\x02\n" +
 	"\x10GetBeliefRequest\x12\x1f\n" +
 	"\bquantity\x18\x01 \x01(\tB\x03\xe0A\x02R\bquantity\x126\n" +
 	"\x14coverage_probability\x18\x02 \x01(\x01H\x00R\x13coverageProbability\x88\x01\x01\x12!\n" +
@@ -1288,7 +2456,17 @@ const file_leadline_v1_belief_proto_rawDesc = "" +
 	"instrumentB\x17\n" +
 	"\x15_coverage_probabilityB\f\n" +
 	"\n" +
-	"_threshold\"\xe9\x01\n" +
+	"_threshold\"\xe3\x01\n" +
+	"\x15ForecastBeliefRequest\x12\x1f\n" +
+	"\bquantity\x18\x01 \x01(\tB\x03\xe0A\x02R\bquantity\x123\n" +
+	"\ahorizon\x18\x02 \x01(\v2\x19.google.protobuf.DurationR\ahorizon\x12\x19\n" +
+	"\x05steps\x18\x03 \x01(\x05H\x00R\x05steps\x88\x01\x01\x126\n" +
+	"\x14coverage_probability\x18\x04 \x01(\x01H\x01R\x13coverageProbability\x88\x01\x01B\b\n" +
+	"\x06_stepsB\x17\n" +
+	"\x15_coverage_probability\"c\n" +
+	"\x10GetBudgetRequest\x12\x1f\n" +
+	"\bquantity\x18\x01 \x01(\tB\x03\xe0A\x02R\bquantity\x12.\n" +
+	"\x04time\x18\x02 \x01(\v2\x1a.google.protobuf.TimestampR\x04time\"\xe9\x01\n" +
 	"\x12ListBeliefsRequest\x12\x16\n" +
 	"\x06prefix\x18\x01 \x01(\tR\x06prefix\x126\n" +
 	"\x14coverage_probability\x18\x02 \x01(\x01H\x00R\x13coverageProbability\x88\x01\x01\x12.\n" +
@@ -1305,11 +2483,13 @@ const file_leadline_v1_belief_proto_rawDesc = "" +
 	"\x14WatchBeliefsResponse\x12-\n" +
 	"\x06belief\x18\x01 \x01(\v2\x13.leadline.v1.BeliefH\x00R\x06belief\x12+\n" +
 	"\x10retired_quantity\x18\x02 \x01(\tH\x00R\x0fretiredQuantityB\a\n" +
-	"\x05event2\xd3\x02\n" +
+	"\x05event2\xbe\x04\n" +
 	"\rBeliefService\x12i\n" +
 	"\tGetBelief\x12\x1d.leadline.v1.GetBeliefRequest\x1a\x13.leadline.v1.Belief\"(\x82\xd3\xe4\x93\x02\"\x12 /v1/quantities/{quantity}/belief\x12e\n" +
 	"\vListBeliefs\x12\x1f.leadline.v1.ListBeliefsRequest\x1a .leadline.v1.ListBeliefsResponse\"\x13\x82\xd3\xe4\x93\x02\r\x12\v/v1/beliefs\x12p\n" +
-	"\fWatchBeliefs\x12 .leadline.v1.WatchBeliefsRequest\x1a!.leadline.v1.WatchBeliefsResponse\"\x19\x82\xd3\xe4\x93\x02\x13\x12\x11/v1/beliefs:watch0\x01B/Z-leadline.example/proto/leadline/v1;leadlinev1b\x06proto3"
+	"\fWatchBeliefs\x12 .leadline.v1.WatchBeliefsRequest\x1a!.leadline.v1.WatchBeliefsResponse\"\x19\x82\xd3\xe4\x93\x02\x13\x12\x11/v1/beliefs:watch0\x01\x12w\n" +
+	"\x0eForecastBelief\x12\".leadline.v1.ForecastBeliefRequest\x1a\x15.leadline.v1.Forecast\"*\x82\xd3\xe4\x93\x02$\x12\"/v1/quantities/{quantity}/forecast\x12p\n" +
+	"\tGetBudget\x12\x1d.leadline.v1.GetBudgetRequest\x1a\x13.leadline.v1.Budget\"/\x82\xd3\xe4\x93\x02)\x12'/v1/quantities/{quantity}/belief:budgetB/Z-leadline.example/proto/leadline/v1;leadlinev1b\x06proto3"
 
 var (
 	file_leadline_v1_belief_proto_rawDescOnce sync.Once
@@ -1323,55 +2503,94 @@ func file_leadline_v1_belief_proto_rawDescGZIP() []byte {
 	return file_leadline_v1_belief_proto_rawDescData
 }
 
-var file_leadline_v1_belief_proto_enumTypes = make([]protoimpl.EnumInfo, 2)
-var file_leadline_v1_belief_proto_msgTypes = make([]protoimpl.MessageInfo, 13)
+var file_leadline_v1_belief_proto_enumTypes = make([]protoimpl.EnumInfo, 3)
+var file_leadline_v1_belief_proto_msgTypes = make([]protoimpl.MessageInfo, 24)
 var file_leadline_v1_belief_proto_goTypes = []any{
 	(Belief_Verdict)(0),           // 0: leadline.v1.Belief.Verdict
 	(Distribution_Form)(0),        // 1: leadline.v1.Distribution.Form
-	(*Belief)(nil),                // 2: leadline.v1.Belief
-	(*Interval)(nil),              // 3: leadline.v1.Interval
-	(*Predictive)(nil),            // 4: leadline.v1.Predictive
-	(*Distribution)(nil),          // 5: leadline.v1.Distribution
-	(*RepeatabilityBelief)(nil),   // 6: leadline.v1.RepeatabilityBelief
-	(*GetBeliefRequest)(nil),      // 7: leadline.v1.GetBeliefRequest
-	(*ListBeliefsRequest)(nil),    // 8: leadline.v1.ListBeliefsRequest
-	(*ListBeliefsResponse)(nil),   // 9: leadline.v1.ListBeliefsResponse
-	(*WatchBeliefsRequest)(nil),   // 10: leadline.v1.WatchBeliefsRequest
-	(*WatchBeliefsResponse)(nil),  // 11: leadline.v1.WatchBeliefsResponse
-	(*Belief_Breach)(nil),         // 12: leadline.v1.Belief.Breach
-	(*Belief_Threshold)(nil),      // 13: leadline.v1.Belief.Threshold
-	(*Predictive_Outside)(nil),    // 14: leadline.v1.Predictive.Outside
-	(*timestamppb.Timestamp)(nil), // 15: google.protobuf.Timestamp
+	(Budget_Source)(0),            // 2: leadline.v1.Budget.Source
+	(*Belief)(nil),                // 3: leadline.v1.Belief
+	(*Interval)(nil),              // 4: leadline.v1.Interval
+	(*Predictive)(nil),            // 5: leadline.v1.Predictive
+	(*Distribution)(nil),          // 6: leadline.v1.Distribution
+	(*RepeatabilityBelief)(nil),   // 7: leadline.v1.RepeatabilityBelief
+	(*BiasBelief)(nil),            // 8: leadline.v1.BiasBelief
+	(*ReferenceBelief)(nil),       // 9: leadline.v1.ReferenceBelief
+	(*Forecast)(nil),              // 10: leadline.v1.Forecast
+	(*Budget)(nil),                // 11: leadline.v1.Budget
+	(*GetBeliefRequest)(nil),      // 12: leadline.v1.GetBeliefRequest
+	(*ForecastBeliefRequest)(nil), // 13: leadline.v1.ForecastBeliefRequest
+	(*GetBudgetRequest)(nil),      // 14: leadline.v1.GetBudgetRequest
+	(*ListBeliefsRequest)(nil),    // 15: leadline.v1.ListBeliefsRequest
+	(*ListBeliefsResponse)(nil),   // 16: leadline.v1.ListBeliefsResponse
+	(*WatchBeliefsRequest)(nil),   // 17: leadline.v1.WatchBeliefsRequest
+	(*WatchBeliefsResponse)(nil),  // 18: leadline.v1.WatchBeliefsResponse
+	(*Belief_Flagged)(nil),        // 19: leadline.v1.Belief.Flagged
+	(*Belief_Breach)(nil),         // 20: leadline.v1.Belief.Breach
+	(*Belief_Threshold)(nil),      // 21: leadline.v1.Belief.Threshold
+	(*Predictive_Outside)(nil),    // 22: leadline.v1.Predictive.Outside
+	(*Forecast_Step)(nil),         // 23: leadline.v1.Forecast.Step
+	(*Forecast_Crossed)(nil),      // 24: leadline.v1.Forecast.Crossed
+	(*Forecast_TimeToBreach)(nil), // 25: leadline.v1.Forecast.TimeToBreach
+	(*Budget_Part)(nil),           // 26: leadline.v1.Budget.Part
+	(*timestamppb.Timestamp)(nil), // 27: google.protobuf.Timestamp
+	(*Slope)(nil),                 // 28: leadline.v1.Slope
+	(*durationpb.Duration)(nil),   // 29: google.protobuf.Duration
 }
 var file_leadline_v1_belief_proto_depIdxs = []int32{
-	15, // 0: leadline.v1.Belief.time:type_name -> google.protobuf.Timestamp
-	3,  // 1: leadline.v1.Belief.interval:type_name -> leadline.v1.Interval
-	12, // 2: leadline.v1.Belief.breach:type_name -> leadline.v1.Belief.Breach
-	13, // 3: leadline.v1.Belief.threshold:type_name -> leadline.v1.Belief.Threshold
-	4,  // 4: leadline.v1.Belief.predictive:type_name -> leadline.v1.Predictive
-	5,  // 5: leadline.v1.Belief.distribution:type_name -> leadline.v1.Distribution
-	6,  // 6: leadline.v1.Belief.repeatability:type_name -> leadline.v1.RepeatabilityBelief
-	15, // 7: leadline.v1.Belief.last_reading_time:type_name -> google.protobuf.Timestamp
-	0,  // 8: leadline.v1.Belief.verdict:type_name -> leadline.v1.Belief.Verdict
-	3,  // 9: leadline.v1.Predictive.interval:type_name -> leadline.v1.Interval
-	14, // 10: leadline.v1.Predictive.outside:type_name -> leadline.v1.Predictive.Outside
-	1,  // 11: leadline.v1.Distribution.form:type_name -> leadline.v1.Distribution.Form
-	3,  // 12: leadline.v1.RepeatabilityBelief.interval:type_name -> leadline.v1.Interval
-	15, // 13: leadline.v1.GetBeliefRequest.time:type_name -> google.protobuf.Timestamp
-	15, // 14: leadline.v1.ListBeliefsRequest.time:type_name -> google.protobuf.Timestamp
-	2,  // 15: leadline.v1.ListBeliefsResponse.beliefs:type_name -> leadline.v1.Belief
-	2,  // 16: leadline.v1.WatchBeliefsResponse.belief:type_name -> leadline.v1.Belief
-	7,  // 17: leadline.v1.BeliefService.GetBelief:input_type -> leadline.v1.GetBeliefRequest
-	8,  // 18: leadline.v1.BeliefService.ListBeliefs:input_type -> leadline.v1.ListBeliefsRequest
-	10, // 19: leadline.v1.BeliefService.WatchBeliefs:input_type -> leadline.v1.WatchBeliefsRequest
-	2,  // 20: leadline.v1.BeliefService.GetBelief:output_type -> leadline.v1.Belief
-	9,  // 21: leadline.v1.BeliefService.ListBeliefs:output_type -> leadline.v1.ListBeliefsResponse
-	11, // 22: leadline.v1.BeliefService.WatchBeliefs:output_type -> leadline.v1.WatchBeliefsResponse
-	20, // [20:23] is the sub-list for method output_type
-	17, // [17:20] is the sub-list for method input_type
-	17, // [17:17] is the sub-list for extension type_name
-	17, // [17:17] is the sub-list for extension extendee
-	0,  // [0:17] is the sub-list for field type_name
+	27, // 0: leadline.v1.Belief.time:type_name -> google.protobuf.Timestamp
+	4,  // 1: leadline.v1.Belief.interval:type_name -> leadline.v1.Interval
+	20, // 2: leadline.v1.Belief.breach:type_name -> leadline.v1.Belief.Breach
+	21, // 3: leadline.v1.Belief.threshold:type_name -> leadline.v1.Belief.Threshold
+	5,  // 4: leadline.v1.Belief.predictive:type_name -> leadline.v1.Predictive
+	6,  // 5: leadline.v1.Belief.distribution:type_name -> leadline.v1.Distribution
+	7,  // 6: leadline.v1.Belief.repeatability:type_name -> leadline.v1.RepeatabilityBelief
+	28, // 7: leadline.v1.Belief.slope:type_name -> leadline.v1.Slope
+	8,  // 8: leadline.v1.Belief.biases:type_name -> leadline.v1.BiasBelief
+	9,  // 9: leadline.v1.Belief.references:type_name -> leadline.v1.ReferenceBelief
+	19, // 10: leadline.v1.Belief.flagged:type_name -> leadline.v1.Belief.Flagged
+	27, // 11: leadline.v1.Belief.last_reading_time:type_name -> google.protobuf.Timestamp
+	0,  // 12: leadline.v1.Belief.verdict:type_name -> leadline.v1.Belief.Verdict
+	4,  // 13: leadline.v1.Predictive.interval:type_name -> leadline.v1.Interval
+	22, // 14: leadline.v1.Predictive.outside:type_name -> leadline.v1.Predictive.Outside
+	1,  // 15: leadline.v1.Distribution.form:type_name -> leadline.v1.Distribution.Form
+	4,  // 16: leadline.v1.RepeatabilityBelief.interval:type_name -> leadline.v1.Interval
+	27, // 17: leadline.v1.BiasBelief.valid_from:type_name -> google.protobuf.Timestamp
+	27, // 18: leadline.v1.Forecast.time:type_name -> google.protobuf.Timestamp
+	29, // 19: leadline.v1.Forecast.horizon:type_name -> google.protobuf.Duration
+	23, // 20: leadline.v1.Forecast.steps:type_name -> leadline.v1.Forecast.Step
+	25, // 21: leadline.v1.Forecast.time_to_breach:type_name -> leadline.v1.Forecast.TimeToBreach
+	27, // 22: leadline.v1.Budget.time:type_name -> google.protobuf.Timestamp
+	26, // 23: leadline.v1.Budget.parts:type_name -> leadline.v1.Budget.Part
+	27, // 24: leadline.v1.GetBeliefRequest.time:type_name -> google.protobuf.Timestamp
+	29, // 25: leadline.v1.ForecastBeliefRequest.horizon:type_name -> google.protobuf.Duration
+	27, // 26: leadline.v1.GetBudgetRequest.time:type_name -> google.protobuf.Timestamp
+	27, // 27: leadline.v1.ListBeliefsRequest.time:type_name -> google.protobuf.Timestamp
+	3,  // 28: leadline.v1.ListBeliefsResponse.beliefs:type_name -> leadline.v1.Belief
+	3,  // 29: leadline.v1.WatchBeliefsResponse.belief:type_name -> leadline.v1.Belief
+	27, // 30: leadline.v1.Forecast.Step.time:type_name -> google.protobuf.Timestamp
+	4,  // 31: leadline.v1.Forecast.Step.interval:type_name -> leadline.v1.Interval
+	20, // 32: leadline.v1.Forecast.Step.breach:type_name -> leadline.v1.Belief.Breach
+	24, // 33: leadline.v1.Forecast.Step.crossed:type_name -> leadline.v1.Forecast.Crossed
+	29, // 34: leadline.v1.Forecast.TimeToBreach.lower_decile:type_name -> google.protobuf.Duration
+	29, // 35: leadline.v1.Forecast.TimeToBreach.median:type_name -> google.protobuf.Duration
+	29, // 36: leadline.v1.Forecast.TimeToBreach.upper_decile:type_name -> google.protobuf.Duration
+	2,  // 37: leadline.v1.Budget.Part.source:type_name -> leadline.v1.Budget.Source
+	12, // 38: leadline.v1.BeliefService.GetBelief:input_type -> leadline.v1.GetBeliefRequest
+	15, // 39: leadline.v1.BeliefService.ListBeliefs:input_type -> leadline.v1.ListBeliefsRequest
+	17, // 40: leadline.v1.BeliefService.WatchBeliefs:input_type -> leadline.v1.WatchBeliefsRequest
+	13, // 41: leadline.v1.BeliefService.ForecastBelief:input_type -> leadline.v1.ForecastBeliefRequest
+	14, // 42: leadline.v1.BeliefService.GetBudget:input_type -> leadline.v1.GetBudgetRequest
+	3,  // 43: leadline.v1.BeliefService.GetBelief:output_type -> leadline.v1.Belief
+	16, // 44: leadline.v1.BeliefService.ListBeliefs:output_type -> leadline.v1.ListBeliefsResponse
+	18, // 45: leadline.v1.BeliefService.WatchBeliefs:output_type -> leadline.v1.WatchBeliefsResponse
+	10, // 46: leadline.v1.BeliefService.ForecastBelief:output_type -> leadline.v1.Forecast
+	11, // 47: leadline.v1.BeliefService.GetBudget:output_type -> leadline.v1.Budget
+	43, // [43:48] is the sub-list for method output_type
+	38, // [38:43] is the sub-list for method input_type
+	38, // [38:38] is the sub-list for extension type_name
+	38, // [38:38] is the sub-list for extension extendee
+	0,  // [0:38] is the sub-list for field type_name
 }
 
 func init() { file_leadline_v1_belief_proto_init() }
@@ -1379,23 +2598,27 @@ func file_leadline_v1_belief_proto_init() {
 	if File_leadline_v1_belief_proto != nil {
 		return
 	}
+	file_leadline_v1_quantity_proto_init()
 	file_leadline_v1_belief_proto_msgTypes[0].OneofWrappers = []any{}
 	file_leadline_v1_belief_proto_msgTypes[2].OneofWrappers = []any{}
 	file_leadline_v1_belief_proto_msgTypes[3].OneofWrappers = []any{}
 	file_leadline_v1_belief_proto_msgTypes[4].OneofWrappers = []any{}
-	file_leadline_v1_belief_proto_msgTypes[5].OneofWrappers = []any{}
-	file_leadline_v1_belief_proto_msgTypes[6].OneofWrappers = []any{}
-	file_leadline_v1_belief_proto_msgTypes[9].OneofWrappers = []any{
+	file_leadline_v1_belief_proto_msgTypes[8].OneofWrappers = []any{}
+	file_leadline_v1_belief_proto_msgTypes[9].OneofWrappers = []any{}
+	file_leadline_v1_belief_proto_msgTypes[10].OneofWrappers = []any{}
+	file_leadline_v1_belief_proto_msgTypes[12].OneofWrappers = []any{}
+	file_leadline_v1_belief_proto_msgTypes[15].OneofWrappers = []any{
 		(*WatchBeliefsResponse_Belief)(nil),
 		(*WatchBeliefsResponse_RetiredQuantity)(nil),
 	}
+	file_leadline_v1_belief_proto_msgTypes[20].OneofWrappers = []any{}
 	type x struct{}
 	out := protoimpl.TypeBuilder{
 		File: protoimpl.DescBuilder{
 			GoPackagePath: reflect.TypeOf(x{}).PkgPath(),
 			RawDescriptor: unsafe.Slice(unsafe.StringData(file_leadline_v1_belief_proto_rawDesc), len(file_leadline_v1_belief_proto_rawDesc)),
-			NumEnums:      2,
-			NumMessages:   13,
+			NumEnums:      3,
+			NumMessages:   24,
 			NumExtensions: 0,
 			NumServices:   1,
 		},

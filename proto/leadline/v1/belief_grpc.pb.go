@@ -19,9 +19,11 @@ import (
 const _ = grpc.SupportPackageIsVersion9
 
 const (
-	BeliefService_GetBelief_FullMethodName    = "/leadline.v1.BeliefService/GetBelief"
-	BeliefService_ListBeliefs_FullMethodName  = "/leadline.v1.BeliefService/ListBeliefs"
-	BeliefService_WatchBeliefs_FullMethodName = "/leadline.v1.BeliefService/WatchBeliefs"
+	BeliefService_GetBelief_FullMethodName      = "/leadline.v1.BeliefService/GetBelief"
+	BeliefService_ListBeliefs_FullMethodName    = "/leadline.v1.BeliefService/ListBeliefs"
+	BeliefService_WatchBeliefs_FullMethodName   = "/leadline.v1.BeliefService/WatchBeliefs"
+	BeliefService_ForecastBelief_FullMethodName = "/leadline.v1.BeliefService/ForecastBelief"
+	BeliefService_GetBudget_FullMethodName      = "/leadline.v1.BeliefService/GetBudget"
 )
 
 // BeliefServiceClient is the client API for BeliefService service.
@@ -29,7 +31,8 @@ const (
 // For semantics around ctx use and closing/ending streaming RPCs, please refer to https://pkg.go.dev/google.golang.org/grpc/?tab=doc#ClientConn.NewStream.
 //
 // BeliefService answers what the readings say: the value, how sure, how
-// probable a breach, what the next reading would be, and the verdict.
+// probable a breach, what the next reading would be, and the verdict; also when a
+// limit will be crossed, and where the uncertainty comes from.
 type BeliefServiceClient interface {
 	// GetBelief answers with the belief of one quantity, now or at a stated time.
 	GetBelief(ctx context.Context, in *GetBeliefRequest, opts ...grpc.CallOption) (*Belief, error)
@@ -43,6 +46,15 @@ type BeliefServiceClient interface {
 	// 30 seconds is cut. Over HTTP these are server-sent events, each with one
 	// message as its data.
 	WatchBeliefs(ctx context.Context, in *WatchBeliefsRequest, opts ...grpc.CallOption) (grpc.ServerStreamingClient[WatchBeliefsResponse], error)
+	// ForecastBelief moves the belief on by the dynamics, without further readings:
+	// what the value will be, how probable a breach then, and when a limit will have
+	// been crossed.
+	ForecastBelief(ctx context.Context, in *ForecastBeliefRequest, opts ...grpc.CallOption) (*Forecast, error)
+	// GetBudget splits the variance of the belief over its independent causes: the
+	// prior, each bias, the noise of the instruments, the movement of the value.
+	// text/plain gives it as a table. A quantity whose repeatability is learned has
+	// none.
+	GetBudget(ctx context.Context, in *GetBudgetRequest, opts ...grpc.CallOption) (*Budget, error)
 }
 
 type beliefServiceClient struct {
@@ -92,12 +104,33 @@ func (c *beliefServiceClient) WatchBeliefs(ctx context.Context, in *WatchBeliefs
 // This type alias is provided for backwards compatibility with existing code that references the prior non-generic stream type by name.
 type BeliefService_WatchBeliefsClient = grpc.ServerStreamingClient[WatchBeliefsResponse]
 
+func (c *beliefServiceClient) ForecastBelief(ctx context.Context, in *ForecastBeliefRequest, opts ...grpc.CallOption) (*Forecast, error) {
+	cOpts := append([]grpc.CallOption{grpc.StaticMethod()}, opts...)
+	out := new(Forecast)
+	err := c.cc.Invoke(ctx, BeliefService_ForecastBelief_FullMethodName, in, out, cOpts...)
+	if err != nil {
+		return nil, err
+	}
+	return out, nil
+}
+
+func (c *beliefServiceClient) GetBudget(ctx context.Context, in *GetBudgetRequest, opts ...grpc.CallOption) (*Budget, error) {
+	cOpts := append([]grpc.CallOption{grpc.StaticMethod()}, opts...)
+	out := new(Budget)
+	err := c.cc.Invoke(ctx, BeliefService_GetBudget_FullMethodName, in, out, cOpts...)
+	if err != nil {
+		return nil, err
+	}
+	return out, nil
+}
+
 // BeliefServiceServer is the server API for BeliefService service.
 // All implementations must embed UnimplementedBeliefServiceServer
 // for forward compatibility.
 //
 // BeliefService answers what the readings say: the value, how sure, how
-// probable a breach, what the next reading would be, and the verdict.
+// probable a breach, what the next reading would be, and the verdict; also when a
+// limit will be crossed, and where the uncertainty comes from.
 type BeliefServiceServer interface {
 	// GetBelief answers with the belief of one quantity, now or at a stated time.
 	GetBelief(context.Context, *GetBeliefRequest) (*Belief, error)
@@ -111,6 +144,15 @@ type BeliefServiceServer interface {
 	// 30 seconds is cut. Over HTTP these are server-sent events, each with one
 	// message as its data.
 	WatchBeliefs(*WatchBeliefsRequest, grpc.ServerStreamingServer[WatchBeliefsResponse]) error
+	// ForecastBelief moves the belief on by the dynamics, without further readings:
+	// what the value will be, how probable a breach then, and when a limit will have
+	// been crossed.
+	ForecastBelief(context.Context, *ForecastBeliefRequest) (*Forecast, error)
+	// GetBudget splits the variance of the belief over its independent causes: the
+	// prior, each bias, the noise of the instruments, the movement of the value.
+	// text/plain gives it as a table. A quantity whose repeatability is learned has
+	// none.
+	GetBudget(context.Context, *GetBudgetRequest) (*Budget, error)
 	mustEmbedUnimplementedBeliefServiceServer()
 }
 
@@ -129,6 +171,12 @@ func (UnimplementedBeliefServiceServer) ListBeliefs(context.Context, *ListBelief
 }
 func (UnimplementedBeliefServiceServer) WatchBeliefs(*WatchBeliefsRequest, grpc.ServerStreamingServer[WatchBeliefsResponse]) error {
 	return status.Error(codes.Unimplemented, "method WatchBeliefs not implemented")
+}
+func (UnimplementedBeliefServiceServer) ForecastBelief(context.Context, *ForecastBeliefRequest) (*Forecast, error) {
+	return nil, status.Error(codes.Unimplemented, "method ForecastBelief not implemented")
+}
+func (UnimplementedBeliefServiceServer) GetBudget(context.Context, *GetBudgetRequest) (*Budget, error) {
+	return nil, status.Error(codes.Unimplemented, "method GetBudget not implemented")
 }
 func (UnimplementedBeliefServiceServer) mustEmbedUnimplementedBeliefServiceServer() {}
 func (UnimplementedBeliefServiceServer) testEmbeddedByValue()                       {}
@@ -198,6 +246,42 @@ func _BeliefService_WatchBeliefs_Handler(srv interface{}, stream grpc.ServerStre
 // This type alias is provided for backwards compatibility with existing code that references the prior non-generic stream type by name.
 type BeliefService_WatchBeliefsServer = grpc.ServerStreamingServer[WatchBeliefsResponse]
 
+func _BeliefService_ForecastBelief_Handler(srv interface{}, ctx context.Context, dec func(interface{}) error, interceptor grpc.UnaryServerInterceptor) (interface{}, error) {
+	in := new(ForecastBeliefRequest)
+	if err := dec(in); err != nil {
+		return nil, err
+	}
+	if interceptor == nil {
+		return srv.(BeliefServiceServer).ForecastBelief(ctx, in)
+	}
+	info := &grpc.UnaryServerInfo{
+		Server:     srv,
+		FullMethod: BeliefService_ForecastBelief_FullMethodName,
+	}
+	handler := func(ctx context.Context, req interface{}) (interface{}, error) {
+		return srv.(BeliefServiceServer).ForecastBelief(ctx, req.(*ForecastBeliefRequest))
+	}
+	return interceptor(ctx, in, info, handler)
+}
+
+func _BeliefService_GetBudget_Handler(srv interface{}, ctx context.Context, dec func(interface{}) error, interceptor grpc.UnaryServerInterceptor) (interface{}, error) {
+	in := new(GetBudgetRequest)
+	if err := dec(in); err != nil {
+		return nil, err
+	}
+	if interceptor == nil {
+		return srv.(BeliefServiceServer).GetBudget(ctx, in)
+	}
+	info := &grpc.UnaryServerInfo{
+		Server:     srv,
+		FullMethod: BeliefService_GetBudget_FullMethodName,
+	}
+	handler := func(ctx context.Context, req interface{}) (interface{}, error) {
+		return srv.(BeliefServiceServer).GetBudget(ctx, req.(*GetBudgetRequest))
+	}
+	return interceptor(ctx, in, info, handler)
+}
+
 // BeliefService_ServiceDesc is the grpc.ServiceDesc for BeliefService service.
 // It's only intended for direct use with grpc.RegisterService,
 // and not to be introspected or modified (even as a copy)
@@ -212,6 +296,14 @@ var BeliefService_ServiceDesc = grpc.ServiceDesc{
 		{
 			MethodName: "ListBeliefs",
 			Handler:    _BeliefService_ListBeliefs_Handler,
+		},
+		{
+			MethodName: "ForecastBelief",
+			Handler:    _BeliefService_ForecastBelief_Handler,
+		},
+		{
+			MethodName: "GetBudget",
+			Handler:    _BeliefService_GetBudget_Handler,
 		},
 	},
 	Streams: []grpc.StreamDesc{

@@ -46,6 +46,10 @@ type Quantity struct {
 	Tolerance *Tolerance `protobuf:"bytes,7,opt,name=tolerance,proto3" json:"tolerance,omitempty"`
 	// Decision rule of the verdict. Absent, 0.95 either way.
 	DecisionRule *DecisionRule `protobuf:"bytes,8,opt,name=decision_rule,json=decisionRule,proto3" json:"decision_rule,omitempty"`
+	// Breach horizon: how far ahead the forecast looks unless it is asked for another
+	// horizon, and for which the metrics give the probability and the median time of a
+	// breach, above 0, for example "2592000s". It needs a tolerance.
+	BreachHorizon *durationpb.Duration `protobuf:"bytes,14,opt,name=breach_horizon,json=breachHorizon,proto3" json:"breach_horizon,omitempty"`
 	// Revision of the declaration, from 1; one more at each change.
 	Revision uint32 `protobuf:"varint,9,opt,name=revision,proto3" json:"revision,omitempty"`
 	// ETag: changes with the declaration and at retirement. In a declaration it
@@ -147,6 +151,13 @@ func (x *Quantity) GetDecisionRule() *DecisionRule {
 	return nil
 }
 
+func (x *Quantity) GetBreachHorizon() *durationpb.Duration {
+	if x != nil {
+		return x.BreachHorizon
+	}
+	return nil
+}
+
 func (x *Quantity) GetRevision() uint32 {
 	if x != nil {
 		return x.Revision
@@ -183,7 +194,8 @@ func (x *Quantity) GetRetireTime() *timestamppb.Timestamp {
 }
 
 // Prior is the belief before any reading. Give exactly one of: mean and
-// standard_deviation; low, high and probability; vague.
+// standard_deviation; low, high and probability; vague. Under mean_reverting
+// dynamics a vague prior means the law that they settle to.
 type Prior struct {
 	state protoimpl.MessageState `protogen:"open.v1"`
 	// Mean of a normal prior, in the quantity's unit.
@@ -352,6 +364,8 @@ type Dynamics struct {
 	//
 	//	*Dynamics_Constant_
 	//	*Dynamics_RandomWalk_
+	//	*Dynamics_LinearTrend_
+	//	*Dynamics_MeanReverting_
 	Model         isDynamics_Model `protobuf_oneof:"model"`
 	unknownFields protoimpl.UnknownFields
 	sizeCache     protoimpl.SizeCache
@@ -412,6 +426,24 @@ func (x *Dynamics) GetRandomWalk() *Dynamics_RandomWalk {
 	return nil
 }
 
+func (x *Dynamics) GetLinearTrend() *Dynamics_LinearTrend {
+	if x != nil {
+		if x, ok := x.Model.(*Dynamics_LinearTrend_); ok {
+			return x.LinearTrend
+		}
+	}
+	return nil
+}
+
+func (x *Dynamics) GetMeanReverting() *Dynamics_MeanReverting {
+	if x != nil {
+		if x, ok := x.Model.(*Dynamics_MeanReverting_); ok {
+			return x.MeanReverting
+		}
+	}
+	return nil
+}
+
 type isDynamics_Model interface {
 	isDynamics_Model()
 }
@@ -427,9 +459,88 @@ type Dynamics_RandomWalk_ struct {
 	RandomWalk *Dynamics_RandomWalk `protobuf:"bytes,2,opt,name=random_walk,json=randomWalk,proto3,oneof"`
 }
 
+type Dynamics_LinearTrend_ struct {
+	// Linear trend: the true value moves on with a slope that is learned.
+	LinearTrend *Dynamics_LinearTrend `protobuf:"bytes,3,opt,name=linear_trend,json=linearTrend,proto3,oneof"`
+}
+
+type Dynamics_MeanReverting_ struct {
+	// Mean-reverting: the true value wanders about a known mean.
+	MeanReverting *Dynamics_MeanReverting `protobuf:"bytes,4,opt,name=mean_reverting,json=meanReverting,proto3,oneof"`
+}
+
 func (*Dynamics_Constant_) isDynamics_Model() {}
 
 func (*Dynamics_RandomWalk_) isDynamics_Model() {}
+
+func (*Dynamics_LinearTrend_) isDynamics_Model() {}
+
+func (*Dynamics_MeanReverting_) isDynamics_Model() {}
+
+// Slope is a normal distribution of what the true value changes by in a time.
+type Slope struct {
+	state protoimpl.MessageState `protogen:"open.v1"`
+	// Mean of the change within per, in the quantity's unit.
+	Mean *float64 `protobuf:"fixed64,1,opt,name=mean,proto3,oneof" json:"mean,omitempty"`
+	// Standard deviation of the change within per, in the quantity's unit; above 0
+	// where it is declared.
+	StandardDeviation *float64 `protobuf:"fixed64,2,opt,name=standard_deviation,json=standardDeviation,proto3,oneof" json:"standard_deviation,omitempty"`
+	// Time in which the true value changes by that, above 0, for example "86400s".
+	Per           *durationpb.Duration `protobuf:"bytes,3,opt,name=per,proto3" json:"per,omitempty"`
+	unknownFields protoimpl.UnknownFields
+	sizeCache     protoimpl.SizeCache
+}
+
+func (x *Slope) Reset() {
+	*x = Slope{}
+	mi := &file_leadline_v1_quantity_proto_msgTypes[4]
+	ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
+	ms.StoreMessageInfo(mi)
+}
+
+func (x *Slope) String() string {
+	return protoimpl.X.MessageStringOf(x)
+}
+
+func (*Slope) ProtoMessage() {}
+
+func (x *Slope) ProtoReflect() protoreflect.Message {
+	mi := &file_leadline_v1_quantity_proto_msgTypes[4]
+	if x != nil {
+		ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
+		if ms.LoadMessageInfo() == nil {
+			ms.StoreMessageInfo(mi)
+		}
+		return ms
+	}
+	return mi.MessageOf(x)
+}
+
+// Deprecated: Use Slope.ProtoReflect.Descriptor instead.
+func (*Slope) Descriptor() ([]byte, []int) {
+	return file_leadline_v1_quantity_proto_rawDescGZIP(), []int{4}
+}
+
+func (x *Slope) GetMean() float64 {
+	if x != nil && x.Mean != nil {
+		return *x.Mean
+	}
+	return 0
+}
+
+func (x *Slope) GetStandardDeviation() float64 {
+	if x != nil && x.StandardDeviation != nil {
+		return *x.StandardDeviation
+	}
+	return 0
+}
+
+func (x *Slope) GetPer() *durationpb.Duration {
+	if x != nil {
+		return x.Per
+	}
+	return nil
+}
 
 // Tolerance is the range of permissible true values; the limits themselves conform.
 type Tolerance struct {
@@ -444,7 +555,7 @@ type Tolerance struct {
 
 func (x *Tolerance) Reset() {
 	*x = Tolerance{}
-	mi := &file_leadline_v1_quantity_proto_msgTypes[4]
+	mi := &file_leadline_v1_quantity_proto_msgTypes[5]
 	ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
 	ms.StoreMessageInfo(mi)
 }
@@ -456,7 +567,7 @@ func (x *Tolerance) String() string {
 func (*Tolerance) ProtoMessage() {}
 
 func (x *Tolerance) ProtoReflect() protoreflect.Message {
-	mi := &file_leadline_v1_quantity_proto_msgTypes[4]
+	mi := &file_leadline_v1_quantity_proto_msgTypes[5]
 	if x != nil {
 		ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
 		if ms.LoadMessageInfo() == nil {
@@ -469,7 +580,7 @@ func (x *Tolerance) ProtoReflect() protoreflect.Message {
 
 // Deprecated: Use Tolerance.ProtoReflect.Descriptor instead.
 func (*Tolerance) Descriptor() ([]byte, []int) {
-	return file_leadline_v1_quantity_proto_rawDescGZIP(), []int{4}
+	return file_leadline_v1_quantity_proto_rawDescGZIP(), []int{5}
 }
 
 func (x *Tolerance) GetLower() float64 {
@@ -500,7 +611,7 @@ type DecisionRule struct {
 
 func (x *DecisionRule) Reset() {
 	*x = DecisionRule{}
-	mi := &file_leadline_v1_quantity_proto_msgTypes[5]
+	mi := &file_leadline_v1_quantity_proto_msgTypes[6]
 	ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
 	ms.StoreMessageInfo(mi)
 }
@@ -512,7 +623,7 @@ func (x *DecisionRule) String() string {
 func (*DecisionRule) ProtoMessage() {}
 
 func (x *DecisionRule) ProtoReflect() protoreflect.Message {
-	mi := &file_leadline_v1_quantity_proto_msgTypes[5]
+	mi := &file_leadline_v1_quantity_proto_msgTypes[6]
 	if x != nil {
 		ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
 		if ms.LoadMessageInfo() == nil {
@@ -525,7 +636,7 @@ func (x *DecisionRule) ProtoReflect() protoreflect.Message {
 
 // Deprecated: Use DecisionRule.ProtoReflect.Descriptor instead.
 func (*DecisionRule) Descriptor() ([]byte, []int) {
-	return file_leadline_v1_quantity_proto_rawDescGZIP(), []int{5}
+	return file_leadline_v1_quantity_proto_rawDescGZIP(), []int{6}
 }
 
 func (x *DecisionRule) GetConformProbability() float64 {
@@ -555,7 +666,7 @@ type DeclareQuantityRequest struct {
 
 func (x *DeclareQuantityRequest) Reset() {
 	*x = DeclareQuantityRequest{}
-	mi := &file_leadline_v1_quantity_proto_msgTypes[6]
+	mi := &file_leadline_v1_quantity_proto_msgTypes[7]
 	ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
 	ms.StoreMessageInfo(mi)
 }
@@ -567,7 +678,7 @@ func (x *DeclareQuantityRequest) String() string {
 func (*DeclareQuantityRequest) ProtoMessage() {}
 
 func (x *DeclareQuantityRequest) ProtoReflect() protoreflect.Message {
-	mi := &file_leadline_v1_quantity_proto_msgTypes[6]
+	mi := &file_leadline_v1_quantity_proto_msgTypes[7]
 	if x != nil {
 		ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
 		if ms.LoadMessageInfo() == nil {
@@ -580,7 +691,7 @@ func (x *DeclareQuantityRequest) ProtoReflect() protoreflect.Message {
 
 // Deprecated: Use DeclareQuantityRequest.ProtoReflect.Descriptor instead.
 func (*DeclareQuantityRequest) Descriptor() ([]byte, []int) {
-	return file_leadline_v1_quantity_proto_rawDescGZIP(), []int{6}
+	return file_leadline_v1_quantity_proto_rawDescGZIP(), []int{7}
 }
 
 func (x *DeclareQuantityRequest) GetId() string {
@@ -608,7 +719,7 @@ type GetQuantityRequest struct {
 
 func (x *GetQuantityRequest) Reset() {
 	*x = GetQuantityRequest{}
-	mi := &file_leadline_v1_quantity_proto_msgTypes[7]
+	mi := &file_leadline_v1_quantity_proto_msgTypes[8]
 	ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
 	ms.StoreMessageInfo(mi)
 }
@@ -620,7 +731,7 @@ func (x *GetQuantityRequest) String() string {
 func (*GetQuantityRequest) ProtoMessage() {}
 
 func (x *GetQuantityRequest) ProtoReflect() protoreflect.Message {
-	mi := &file_leadline_v1_quantity_proto_msgTypes[7]
+	mi := &file_leadline_v1_quantity_proto_msgTypes[8]
 	if x != nil {
 		ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
 		if ms.LoadMessageInfo() == nil {
@@ -633,7 +744,7 @@ func (x *GetQuantityRequest) ProtoReflect() protoreflect.Message {
 
 // Deprecated: Use GetQuantityRequest.ProtoReflect.Descriptor instead.
 func (*GetQuantityRequest) Descriptor() ([]byte, []int) {
-	return file_leadline_v1_quantity_proto_rawDescGZIP(), []int{7}
+	return file_leadline_v1_quantity_proto_rawDescGZIP(), []int{8}
 }
 
 func (x *GetQuantityRequest) GetId() string {
@@ -661,7 +772,7 @@ type ListQuantitiesRequest struct {
 
 func (x *ListQuantitiesRequest) Reset() {
 	*x = ListQuantitiesRequest{}
-	mi := &file_leadline_v1_quantity_proto_msgTypes[8]
+	mi := &file_leadline_v1_quantity_proto_msgTypes[9]
 	ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
 	ms.StoreMessageInfo(mi)
 }
@@ -673,7 +784,7 @@ func (x *ListQuantitiesRequest) String() string {
 func (*ListQuantitiesRequest) ProtoMessage() {}
 
 func (x *ListQuantitiesRequest) ProtoReflect() protoreflect.Message {
-	mi := &file_leadline_v1_quantity_proto_msgTypes[8]
+	mi := &file_leadline_v1_quantity_proto_msgTypes[9]
 	if x != nil {
 		ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
 		if ms.LoadMessageInfo() == nil {
@@ -686,7 +797,7 @@ func (x *ListQuantitiesRequest) ProtoReflect() protoreflect.Message {
 
 // Deprecated: Use ListQuantitiesRequest.ProtoReflect.Descriptor instead.
 func (*ListQuantitiesRequest) Descriptor() ([]byte, []int) {
-	return file_leadline_v1_quantity_proto_rawDescGZIP(), []int{8}
+	return file_leadline_v1_quantity_proto_rawDescGZIP(), []int{9}
 }
 
 func (x *ListQuantitiesRequest) GetPrefix() string {
@@ -730,7 +841,7 @@ type ListQuantitiesResponse struct {
 
 func (x *ListQuantitiesResponse) Reset() {
 	*x = ListQuantitiesResponse{}
-	mi := &file_leadline_v1_quantity_proto_msgTypes[9]
+	mi := &file_leadline_v1_quantity_proto_msgTypes[10]
 	ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
 	ms.StoreMessageInfo(mi)
 }
@@ -742,7 +853,7 @@ func (x *ListQuantitiesResponse) String() string {
 func (*ListQuantitiesResponse) ProtoMessage() {}
 
 func (x *ListQuantitiesResponse) ProtoReflect() protoreflect.Message {
-	mi := &file_leadline_v1_quantity_proto_msgTypes[9]
+	mi := &file_leadline_v1_quantity_proto_msgTypes[10]
 	if x != nil {
 		ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
 		if ms.LoadMessageInfo() == nil {
@@ -755,7 +866,7 @@ func (x *ListQuantitiesResponse) ProtoReflect() protoreflect.Message {
 
 // Deprecated: Use ListQuantitiesResponse.ProtoReflect.Descriptor instead.
 func (*ListQuantitiesResponse) Descriptor() ([]byte, []int) {
-	return file_leadline_v1_quantity_proto_rawDescGZIP(), []int{9}
+	return file_leadline_v1_quantity_proto_rawDescGZIP(), []int{10}
 }
 
 func (x *ListQuantitiesResponse) GetQuantities() []*Quantity {
@@ -786,7 +897,7 @@ type RetireQuantityRequest struct {
 
 func (x *RetireQuantityRequest) Reset() {
 	*x = RetireQuantityRequest{}
-	mi := &file_leadline_v1_quantity_proto_msgTypes[10]
+	mi := &file_leadline_v1_quantity_proto_msgTypes[11]
 	ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
 	ms.StoreMessageInfo(mi)
 }
@@ -798,7 +909,7 @@ func (x *RetireQuantityRequest) String() string {
 func (*RetireQuantityRequest) ProtoMessage() {}
 
 func (x *RetireQuantityRequest) ProtoReflect() protoreflect.Message {
-	mi := &file_leadline_v1_quantity_proto_msgTypes[10]
+	mi := &file_leadline_v1_quantity_proto_msgTypes[11]
 	if x != nil {
 		ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
 		if ms.LoadMessageInfo() == nil {
@@ -811,7 +922,7 @@ func (x *RetireQuantityRequest) ProtoReflect() protoreflect.Message {
 
 // Deprecated: Use RetireQuantityRequest.ProtoReflect.Descriptor instead.
 func (*RetireQuantityRequest) Descriptor() ([]byte, []int) {
-	return file_leadline_v1_quantity_proto_rawDescGZIP(), []int{10}
+	return file_leadline_v1_quantity_proto_rawDescGZIP(), []int{11}
 }
 
 func (x *RetireQuantityRequest) GetId() string {
@@ -828,6 +939,355 @@ func (x *RetireQuantityRequest) GetEtag() string {
 	return ""
 }
 
+// RenewQuantityRequest says that a part was replaced.
+type RenewQuantityRequest struct {
+	state protoimpl.MessageState `protogen:"open.v1"`
+	// ID of the quantity.
+	Id string `protobuf:"bytes,1,opt,name=id,proto3" json:"id,omitempty"`
+	// When it was replaced; absent, when the request was received.
+	Time *timestamppb.Timestamp `protobuf:"bytes,2,opt,name=time,proto3" json:"time,omitempty"`
+	// Reason, for people, up to 512 bytes.
+	Reason string `protobuf:"bytes,3,opt,name=reason,proto3" json:"reason,omitempty"`
+	// Prior of the new part; it holds at the renewal's time, so its own time is to
+	// be left out.
+	Prior *Prior `protobuf:"bytes,4,opt,name=prior,proto3" json:"prior,omitempty"`
+	// Slope of the new part, under linear_trend; absent, the declared one.
+	Slope *Slope `protobuf:"bytes,5,opt,name=slope,proto3" json:"slope,omitempty"`
+	// Request ID by which the renewal is known, up to 128 bytes; absent, it is given
+	// one. The same again is answered with what was done the first time.
+	RequestId     string `protobuf:"bytes,6,opt,name=request_id,json=requestId,proto3" json:"request_id,omitempty"`
+	unknownFields protoimpl.UnknownFields
+	sizeCache     protoimpl.SizeCache
+}
+
+func (x *RenewQuantityRequest) Reset() {
+	*x = RenewQuantityRequest{}
+	mi := &file_leadline_v1_quantity_proto_msgTypes[12]
+	ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
+	ms.StoreMessageInfo(mi)
+}
+
+func (x *RenewQuantityRequest) String() string {
+	return protoimpl.X.MessageStringOf(x)
+}
+
+func (*RenewQuantityRequest) ProtoMessage() {}
+
+func (x *RenewQuantityRequest) ProtoReflect() protoreflect.Message {
+	mi := &file_leadline_v1_quantity_proto_msgTypes[12]
+	if x != nil {
+		ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
+		if ms.LoadMessageInfo() == nil {
+			ms.StoreMessageInfo(mi)
+		}
+		return ms
+	}
+	return mi.MessageOf(x)
+}
+
+// Deprecated: Use RenewQuantityRequest.ProtoReflect.Descriptor instead.
+func (*RenewQuantityRequest) Descriptor() ([]byte, []int) {
+	return file_leadline_v1_quantity_proto_rawDescGZIP(), []int{12}
+}
+
+func (x *RenewQuantityRequest) GetId() string {
+	if x != nil {
+		return x.Id
+	}
+	return ""
+}
+
+func (x *RenewQuantityRequest) GetTime() *timestamppb.Timestamp {
+	if x != nil {
+		return x.Time
+	}
+	return nil
+}
+
+func (x *RenewQuantityRequest) GetReason() string {
+	if x != nil {
+		return x.Reason
+	}
+	return ""
+}
+
+func (x *RenewQuantityRequest) GetPrior() *Prior {
+	if x != nil {
+		return x.Prior
+	}
+	return nil
+}
+
+func (x *RenewQuantityRequest) GetSlope() *Slope {
+	if x != nil {
+		return x.Slope
+	}
+	return nil
+}
+
+func (x *RenewQuantityRequest) GetRequestId() string {
+	if x != nil {
+		return x.RequestId
+	}
+	return ""
+}
+
+// Renewal is a replacement as the ledger holds it.
+type Renewal struct {
+	state protoimpl.MessageState `protogen:"open.v1"`
+	// Request ID, by which it can be withdrawn.
+	RequestId string `protobuf:"bytes,1,opt,name=request_id,json=requestId,proto3" json:"request_id,omitempty"`
+	// When the part was replaced.
+	Time *timestamppb.Timestamp `protobuf:"bytes,2,opt,name=time,proto3" json:"time,omitempty"`
+	// Reason, for people.
+	Reason string `protobuf:"bytes,3,opt,name=reason,proto3" json:"reason,omitempty"`
+	// Prior of the new part.
+	Prior *Prior `protobuf:"bytes,4,opt,name=prior,proto3" json:"prior,omitempty"`
+	// Slope of the new part; absent, the declared one.
+	Slope *Slope `protobuf:"bytes,5,opt,name=slope,proto3" json:"slope,omitempty"`
+	// Position of its record in the ledger.
+	LedgerPosition uint64 `protobuf:"varint,6,opt,name=ledger_position,json=ledgerPosition,proto3" json:"ledger_position,omitempty"`
+	// When it was recorded.
+	CreateTime *timestamppb.Timestamp `protobuf:"bytes,7,opt,name=create_time,json=createTime,proto3" json:"create_time,omitempty"`
+	// When it was withdrawn; absent while it counts.
+	WithdrawTime  *timestamppb.Timestamp `protobuf:"bytes,8,opt,name=withdraw_time,json=withdrawTime,proto3" json:"withdraw_time,omitempty"`
+	unknownFields protoimpl.UnknownFields
+	sizeCache     protoimpl.SizeCache
+}
+
+func (x *Renewal) Reset() {
+	*x = Renewal{}
+	mi := &file_leadline_v1_quantity_proto_msgTypes[13]
+	ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
+	ms.StoreMessageInfo(mi)
+}
+
+func (x *Renewal) String() string {
+	return protoimpl.X.MessageStringOf(x)
+}
+
+func (*Renewal) ProtoMessage() {}
+
+func (x *Renewal) ProtoReflect() protoreflect.Message {
+	mi := &file_leadline_v1_quantity_proto_msgTypes[13]
+	if x != nil {
+		ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
+		if ms.LoadMessageInfo() == nil {
+			ms.StoreMessageInfo(mi)
+		}
+		return ms
+	}
+	return mi.MessageOf(x)
+}
+
+// Deprecated: Use Renewal.ProtoReflect.Descriptor instead.
+func (*Renewal) Descriptor() ([]byte, []int) {
+	return file_leadline_v1_quantity_proto_rawDescGZIP(), []int{13}
+}
+
+func (x *Renewal) GetRequestId() string {
+	if x != nil {
+		return x.RequestId
+	}
+	return ""
+}
+
+func (x *Renewal) GetTime() *timestamppb.Timestamp {
+	if x != nil {
+		return x.Time
+	}
+	return nil
+}
+
+func (x *Renewal) GetReason() string {
+	if x != nil {
+		return x.Reason
+	}
+	return ""
+}
+
+func (x *Renewal) GetPrior() *Prior {
+	if x != nil {
+		return x.Prior
+	}
+	return nil
+}
+
+func (x *Renewal) GetSlope() *Slope {
+	if x != nil {
+		return x.Slope
+	}
+	return nil
+}
+
+func (x *Renewal) GetLedgerPosition() uint64 {
+	if x != nil {
+		return x.LedgerPosition
+	}
+	return 0
+}
+
+func (x *Renewal) GetCreateTime() *timestamppb.Timestamp {
+	if x != nil {
+		return x.CreateTime
+	}
+	return nil
+}
+
+func (x *Renewal) GetWithdrawTime() *timestamppb.Timestamp {
+	if x != nil {
+		return x.WithdrawTime
+	}
+	return nil
+}
+
+// WithdrawRenewalRequest names a renewal.
+type WithdrawRenewalRequest struct {
+	state protoimpl.MessageState `protogen:"open.v1"`
+	// ID of the quantity.
+	Id string `protobuf:"bytes,1,opt,name=id,proto3" json:"id,omitempty"`
+	// Request ID of the renewal.
+	RequestId     string `protobuf:"bytes,2,opt,name=request_id,json=requestId,proto3" json:"request_id,omitempty"`
+	unknownFields protoimpl.UnknownFields
+	sizeCache     protoimpl.SizeCache
+}
+
+func (x *WithdrawRenewalRequest) Reset() {
+	*x = WithdrawRenewalRequest{}
+	mi := &file_leadline_v1_quantity_proto_msgTypes[14]
+	ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
+	ms.StoreMessageInfo(mi)
+}
+
+func (x *WithdrawRenewalRequest) String() string {
+	return protoimpl.X.MessageStringOf(x)
+}
+
+func (*WithdrawRenewalRequest) ProtoMessage() {}
+
+func (x *WithdrawRenewalRequest) ProtoReflect() protoreflect.Message {
+	mi := &file_leadline_v1_quantity_proto_msgTypes[14]
+	if x != nil {
+		ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
+		if ms.LoadMessageInfo() == nil {
+			ms.StoreMessageInfo(mi)
+		}
+		return ms
+	}
+	return mi.MessageOf(x)
+}
+
+// Deprecated: Use WithdrawRenewalRequest.ProtoReflect.Descriptor instead.
+func (*WithdrawRenewalRequest) Descriptor() ([]byte, []int) {
+	return file_leadline_v1_quantity_proto_rawDescGZIP(), []int{14}
+}
+
+func (x *WithdrawRenewalRequest) GetId() string {
+	if x != nil {
+		return x.Id
+	}
+	return ""
+}
+
+func (x *WithdrawRenewalRequest) GetRequestId() string {
+	if x != nil {
+		return x.RequestId
+	}
+	return ""
+}
+
+// ListRenewalsRequest names a quantity.
+type ListRenewalsRequest struct {
+	state protoimpl.MessageState `protogen:"open.v1"`
+	// ID of the quantity.
+	Id            string `protobuf:"bytes,1,opt,name=id,proto3" json:"id,omitempty"`
+	unknownFields protoimpl.UnknownFields
+	sizeCache     protoimpl.SizeCache
+}
+
+func (x *ListRenewalsRequest) Reset() {
+	*x = ListRenewalsRequest{}
+	mi := &file_leadline_v1_quantity_proto_msgTypes[15]
+	ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
+	ms.StoreMessageInfo(mi)
+}
+
+func (x *ListRenewalsRequest) String() string {
+	return protoimpl.X.MessageStringOf(x)
+}
+
+func (*ListRenewalsRequest) ProtoMessage() {}
+
+func (x *ListRenewalsRequest) ProtoReflect() protoreflect.Message {
+	mi := &file_leadline_v1_quantity_proto_msgTypes[15]
+	if x != nil {
+		ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
+		if ms.LoadMessageInfo() == nil {
+			ms.StoreMessageInfo(mi)
+		}
+		return ms
+	}
+	return mi.MessageOf(x)
+}
+
+// Deprecated: Use ListRenewalsRequest.ProtoReflect.Descriptor instead.
+func (*ListRenewalsRequest) Descriptor() ([]byte, []int) {
+	return file_leadline_v1_quantity_proto_rawDescGZIP(), []int{15}
+}
+
+func (x *ListRenewalsRequest) GetId() string {
+	if x != nil {
+		return x.Id
+	}
+	return ""
+}
+
+// ListRenewalsResponse is all renewals of a quantity.
+type ListRenewalsResponse struct {
+	state protoimpl.MessageState `protogen:"open.v1"`
+	// Renewals by time, withdrawn ones too.
+	Renewals      []*Renewal `protobuf:"bytes,1,rep,name=renewals,proto3" json:"renewals,omitempty"`
+	unknownFields protoimpl.UnknownFields
+	sizeCache     protoimpl.SizeCache
+}
+
+func (x *ListRenewalsResponse) Reset() {
+	*x = ListRenewalsResponse{}
+	mi := &file_leadline_v1_quantity_proto_msgTypes[16]
+	ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
+	ms.StoreMessageInfo(mi)
+}
+
+func (x *ListRenewalsResponse) String() string {
+	return protoimpl.X.MessageStringOf(x)
+}
+
+func (*ListRenewalsResponse) ProtoMessage() {}
+
+func (x *ListRenewalsResponse) ProtoReflect() protoreflect.Message {
+	mi := &file_leadline_v1_quantity_proto_msgTypes[16]
+	if x != nil {
+		ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
+		if ms.LoadMessageInfo() == nil {
+			ms.StoreMessageInfo(mi)
+		}
+		return ms
+	}
+	return mi.MessageOf(x)
+}
+
+// Deprecated: Use ListRenewalsResponse.ProtoReflect.Descriptor instead.
+func (*ListRenewalsResponse) Descriptor() ([]byte, []int) {
+	return file_leadline_v1_quantity_proto_rawDescGZIP(), []int{16}
+}
+
+func (x *ListRenewalsResponse) GetRenewals() []*Renewal {
+	if x != nil {
+		return x.Renewals
+	}
+	return nil
+}
+
 // Vague is the flat prior; it has nothing to set.
 type Prior_Vague struct {
 	state         protoimpl.MessageState `protogen:"open.v1"`
@@ -837,7 +1297,7 @@ type Prior_Vague struct {
 
 func (x *Prior_Vague) Reset() {
 	*x = Prior_Vague{}
-	mi := &file_leadline_v1_quantity_proto_msgTypes[11]
+	mi := &file_leadline_v1_quantity_proto_msgTypes[17]
 	ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
 	ms.StoreMessageInfo(mi)
 }
@@ -849,7 +1309,7 @@ func (x *Prior_Vague) String() string {
 func (*Prior_Vague) ProtoMessage() {}
 
 func (x *Prior_Vague) ProtoReflect() protoreflect.Message {
-	mi := &file_leadline_v1_quantity_proto_msgTypes[11]
+	mi := &file_leadline_v1_quantity_proto_msgTypes[17]
 	if x != nil {
 		ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
 		if ms.LoadMessageInfo() == nil {
@@ -881,7 +1341,7 @@ type Repeatability_Learned struct {
 
 func (x *Repeatability_Learned) Reset() {
 	*x = Repeatability_Learned{}
-	mi := &file_leadline_v1_quantity_proto_msgTypes[12]
+	mi := &file_leadline_v1_quantity_proto_msgTypes[18]
 	ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
 	ms.StoreMessageInfo(mi)
 }
@@ -893,7 +1353,7 @@ func (x *Repeatability_Learned) String() string {
 func (*Repeatability_Learned) ProtoMessage() {}
 
 func (x *Repeatability_Learned) ProtoReflect() protoreflect.Message {
-	mi := &file_leadline_v1_quantity_proto_msgTypes[12]
+	mi := &file_leadline_v1_quantity_proto_msgTypes[18]
 	if x != nil {
 		ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
 		if ms.LoadMessageInfo() == nil {
@@ -932,7 +1392,7 @@ type Dynamics_Constant struct {
 
 func (x *Dynamics_Constant) Reset() {
 	*x = Dynamics_Constant{}
-	mi := &file_leadline_v1_quantity_proto_msgTypes[13]
+	mi := &file_leadline_v1_quantity_proto_msgTypes[19]
 	ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
 	ms.StoreMessageInfo(mi)
 }
@@ -944,7 +1404,7 @@ func (x *Dynamics_Constant) String() string {
 func (*Dynamics_Constant) ProtoMessage() {}
 
 func (x *Dynamics_Constant) ProtoReflect() protoreflect.Message {
-	mi := &file_leadline_v1_quantity_proto_msgTypes[13]
+	mi := &file_leadline_v1_quantity_proto_msgTypes[19]
 	if x != nil {
 		ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
 		if ms.LoadMessageInfo() == nil {
@@ -974,7 +1434,7 @@ type Dynamics_RandomWalk struct {
 
 func (x *Dynamics_RandomWalk) Reset() {
 	*x = Dynamics_RandomWalk{}
-	mi := &file_leadline_v1_quantity_proto_msgTypes[14]
+	mi := &file_leadline_v1_quantity_proto_msgTypes[20]
 	ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
 	ms.StoreMessageInfo(mi)
 }
@@ -986,7 +1446,7 @@ func (x *Dynamics_RandomWalk) String() string {
 func (*Dynamics_RandomWalk) ProtoMessage() {}
 
 func (x *Dynamics_RandomWalk) ProtoReflect() protoreflect.Message {
-	mi := &file_leadline_v1_quantity_proto_msgTypes[14]
+	mi := &file_leadline_v1_quantity_proto_msgTypes[20]
 	if x != nil {
 		ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
 		if ms.LoadMessageInfo() == nil {
@@ -1016,11 +1476,206 @@ func (x *Dynamics_RandomWalk) GetPer() *durationpb.Duration {
 	return nil
 }
 
+// LinearTrend is a slope and, beside it, a random walk of the level.
+type Dynamics_LinearTrend struct {
+	state protoimpl.MessageState `protogen:"open.v1"`
+	// Standard deviation of the level's own random walk within per, above 0, in the
+	// quantity's unit. Absent with per, the level moves by the slope alone.
+	StandardDeviation *float64 `protobuf:"fixed64,1,opt,name=standard_deviation,json=standardDeviation,proto3,oneof" json:"standard_deviation,omitempty"`
+	// Time in which that walk has that standard deviation, above 0.
+	Per *durationpb.Duration `protobuf:"bytes,2,opt,name=per,proto3" json:"per,omitempty"`
+	// Slope as it was known before any reading, at the time of the prior.
+	Slope *Slope `protobuf:"bytes,3,opt,name=slope,proto3" json:"slope,omitempty"`
+	// How the slope itself may change; absent, it is constant.
+	SlopeWander   *Dynamics_SlopeWander `protobuf:"bytes,4,opt,name=slope_wander,json=slopeWander,proto3" json:"slope_wander,omitempty"`
+	unknownFields protoimpl.UnknownFields
+	sizeCache     protoimpl.SizeCache
+}
+
+func (x *Dynamics_LinearTrend) Reset() {
+	*x = Dynamics_LinearTrend{}
+	mi := &file_leadline_v1_quantity_proto_msgTypes[21]
+	ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
+	ms.StoreMessageInfo(mi)
+}
+
+func (x *Dynamics_LinearTrend) String() string {
+	return protoimpl.X.MessageStringOf(x)
+}
+
+func (*Dynamics_LinearTrend) ProtoMessage() {}
+
+func (x *Dynamics_LinearTrend) ProtoReflect() protoreflect.Message {
+	mi := &file_leadline_v1_quantity_proto_msgTypes[21]
+	if x != nil {
+		ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
+		if ms.LoadMessageInfo() == nil {
+			ms.StoreMessageInfo(mi)
+		}
+		return ms
+	}
+	return mi.MessageOf(x)
+}
+
+// Deprecated: Use Dynamics_LinearTrend.ProtoReflect.Descriptor instead.
+func (*Dynamics_LinearTrend) Descriptor() ([]byte, []int) {
+	return file_leadline_v1_quantity_proto_rawDescGZIP(), []int{3, 2}
+}
+
+func (x *Dynamics_LinearTrend) GetStandardDeviation() float64 {
+	if x != nil && x.StandardDeviation != nil {
+		return *x.StandardDeviation
+	}
+	return 0
+}
+
+func (x *Dynamics_LinearTrend) GetPer() *durationpb.Duration {
+	if x != nil {
+		return x.Per
+	}
+	return nil
+}
+
+func (x *Dynamics_LinearTrend) GetSlope() *Slope {
+	if x != nil {
+		return x.Slope
+	}
+	return nil
+}
+
+func (x *Dynamics_LinearTrend) GetSlopeWander() *Dynamics_SlopeWander {
+	if x != nil {
+		return x.SlopeWander
+	}
+	return nil
+}
+
+// SlopeWander is a random walk of the slope.
+type Dynamics_SlopeWander struct {
+	state protoimpl.MessageState `protogen:"open.v1"`
+	// Standard deviation of the slope's change within per, above 0, in the
+	// quantity's unit by the slope's per.
+	StandardDeviation *float64 `protobuf:"fixed64,1,opt,name=standard_deviation,json=standardDeviation,proto3,oneof" json:"standard_deviation,omitempty"`
+	// Time in which the slope changes so far, above 0.
+	Per           *durationpb.Duration `protobuf:"bytes,2,opt,name=per,proto3" json:"per,omitempty"`
+	unknownFields protoimpl.UnknownFields
+	sizeCache     protoimpl.SizeCache
+}
+
+func (x *Dynamics_SlopeWander) Reset() {
+	*x = Dynamics_SlopeWander{}
+	mi := &file_leadline_v1_quantity_proto_msgTypes[22]
+	ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
+	ms.StoreMessageInfo(mi)
+}
+
+func (x *Dynamics_SlopeWander) String() string {
+	return protoimpl.X.MessageStringOf(x)
+}
+
+func (*Dynamics_SlopeWander) ProtoMessage() {}
+
+func (x *Dynamics_SlopeWander) ProtoReflect() protoreflect.Message {
+	mi := &file_leadline_v1_quantity_proto_msgTypes[22]
+	if x != nil {
+		ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
+		if ms.LoadMessageInfo() == nil {
+			ms.StoreMessageInfo(mi)
+		}
+		return ms
+	}
+	return mi.MessageOf(x)
+}
+
+// Deprecated: Use Dynamics_SlopeWander.ProtoReflect.Descriptor instead.
+func (*Dynamics_SlopeWander) Descriptor() ([]byte, []int) {
+	return file_leadline_v1_quantity_proto_rawDescGZIP(), []int{3, 3}
+}
+
+func (x *Dynamics_SlopeWander) GetStandardDeviation() float64 {
+	if x != nil && x.StandardDeviation != nil {
+		return *x.StandardDeviation
+	}
+	return 0
+}
+
+func (x *Dynamics_SlopeWander) GetPer() *durationpb.Duration {
+	if x != nil {
+		return x.Per
+	}
+	return nil
+}
+
+// MeanReverting is an Ornstein-Uhlenbeck process.
+type Dynamics_MeanReverting struct {
+	state protoimpl.MessageState `protogen:"open.v1"`
+	// Mean about which the true value wanders, in the quantity's unit.
+	Mean *float64 `protobuf:"fixed64,1,opt,name=mean,proto3,oneof" json:"mean,omitempty"`
+	// Standard deviation about the mean in the long run, above 0, in the
+	// quantity's unit.
+	StandardDeviation *float64 `protobuf:"fixed64,2,opt,name=standard_deviation,json=standardDeviation,proto3,oneof" json:"standard_deviation,omitempty"`
+	// Time after which half of a deviation is gone, above 0, for example "3600s".
+	HalfLife      *durationpb.Duration `protobuf:"bytes,3,opt,name=half_life,json=halfLife,proto3" json:"half_life,omitempty"`
+	unknownFields protoimpl.UnknownFields
+	sizeCache     protoimpl.SizeCache
+}
+
+func (x *Dynamics_MeanReverting) Reset() {
+	*x = Dynamics_MeanReverting{}
+	mi := &file_leadline_v1_quantity_proto_msgTypes[23]
+	ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
+	ms.StoreMessageInfo(mi)
+}
+
+func (x *Dynamics_MeanReverting) String() string {
+	return protoimpl.X.MessageStringOf(x)
+}
+
+func (*Dynamics_MeanReverting) ProtoMessage() {}
+
+func (x *Dynamics_MeanReverting) ProtoReflect() protoreflect.Message {
+	mi := &file_leadline_v1_quantity_proto_msgTypes[23]
+	if x != nil {
+		ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
+		if ms.LoadMessageInfo() == nil {
+			ms.StoreMessageInfo(mi)
+		}
+		return ms
+	}
+	return mi.MessageOf(x)
+}
+
+// Deprecated: Use Dynamics_MeanReverting.ProtoReflect.Descriptor instead.
+func (*Dynamics_MeanReverting) Descriptor() ([]byte, []int) {
+	return file_leadline_v1_quantity_proto_rawDescGZIP(), []int{3, 4}
+}
+
+func (x *Dynamics_MeanReverting) GetMean() float64 {
+	if x != nil && x.Mean != nil {
+		return *x.Mean
+	}
+	return 0
+}
+
+func (x *Dynamics_MeanReverting) GetStandardDeviation() float64 {
+	if x != nil && x.StandardDeviation != nil {
+		return *x.StandardDeviation
+	}
+	return 0
+}
+
+func (x *Dynamics_MeanReverting) GetHalfLife() *durationpb.Duration {
+	if x != nil {
+		return x.HalfLife
+	}
+	return nil
+}
+
 var File_leadline_v1_quantity_proto protoreflect.FileDescriptor
 
 const file_leadline_v1_quantity_proto_rawDesc = "" +
 	"\n" +
-	"\x1aleadline/v1/quantity.proto\x12\vleadline.v1\x1a\x1cgoogle/api/annotations.proto\x1a\x1fgoogle/api/field_behavior.proto\x1a\x1egoogle/protobuf/duration.proto\x1a\x1fgoogle/protobuf/timestamp.proto\"\xe5\x04\n" +
+	"\x1aleadline/v1/quantity.proto\x12\vleadline.v1\x1a\x1cgoogle/api/annotations.proto\x1a\x1fgoogle/api/field_behavior.proto\x1a\x1egoogle/protobuf/duration.proto\x1a\x1fgoogle/protobuf/timestamp.proto\"\xa7\x05\n" +
 	"\bQuantity\x12\x13\n" +
 	"\x02id\x18\x01 \x01(\tB\x03\xe0A\x03R\x02id\x12\x12\n" +
 	"\x04unit\x18\x02 \x01(\tR\x04unit\x12 \n" +
@@ -1029,7 +1684,8 @@ const file_leadline_v1_quantity_proto_rawDesc = "" +
 	"\rrepeatability\x18\x05 \x01(\v2\x1a.leadline.v1.RepeatabilityR\rrepeatability\x121\n" +
 	"\bdynamics\x18\x06 \x01(\v2\x15.leadline.v1.DynamicsR\bdynamics\x124\n" +
 	"\ttolerance\x18\a \x01(\v2\x16.leadline.v1.ToleranceR\ttolerance\x12>\n" +
-	"\rdecision_rule\x18\b \x01(\v2\x19.leadline.v1.DecisionRuleR\fdecisionRule\x12\x1f\n" +
+	"\rdecision_rule\x18\b \x01(\v2\x19.leadline.v1.DecisionRuleR\fdecisionRule\x12@\n" +
+	"\x0ebreach_horizon\x18\x0e \x01(\v2\x19.google.protobuf.DurationR\rbreachHorizon\x12\x1f\n" +
 	"\brevision\x18\t \x01(\rB\x03\xe0A\x03R\brevision\x12\x12\n" +
 	"\x04etag\x18\n" +
 	" \x01(\tR\x04etag\x12@\n" +
@@ -1061,19 +1717,43 @@ const file_leadline_v1_quantity_proto_rawDesc = "" +
 	"\x05worth\x18\x02 \x01(\x01H\x01R\x05worth\x88\x01\x01B\b\n" +
 	"\x06_guessB\b\n" +
 	"\x06_worthB\x15\n" +
-	"\x13_standard_deviation\"\xa9\x02\n" +
+	"\x13_standard_deviation\"\xfb\a\n" +
 	"\bDynamics\x12<\n" +
 	"\bconstant\x18\x01 \x01(\v2\x1e.leadline.v1.Dynamics.ConstantH\x00R\bconstant\x12C\n" +
 	"\vrandom_walk\x18\x02 \x01(\v2 .leadline.v1.Dynamics.RandomWalkH\x00R\n" +
-	"randomWalk\x1a\n" +
+	"randomWalk\x12F\n" +
+	"\flinear_trend\x18\x03 \x01(\v2!.leadline.v1.Dynamics.LinearTrendH\x00R\vlinearTrend\x12L\n" +
+	"\x0emean_reverting\x18\x04 \x01(\v2#.leadline.v1.Dynamics.MeanRevertingH\x00R\rmeanReverting\x1a\n" +
 	"\n" +
 	"\bConstant\x1a\x84\x01\n" +
 	"\n" +
 	"RandomWalk\x122\n" +
 	"\x12standard_deviation\x18\x01 \x01(\x01H\x00R\x11standardDeviation\x88\x01\x01\x12+\n" +
 	"\x03per\x18\x02 \x01(\v2\x19.google.protobuf.DurationR\x03perB\x15\n" +
+	"\x13_standard_deviation\x1a\xfa\x01\n" +
+	"\vLinearTrend\x122\n" +
+	"\x12standard_deviation\x18\x01 \x01(\x01H\x00R\x11standardDeviation\x88\x01\x01\x12+\n" +
+	"\x03per\x18\x02 \x01(\v2\x19.google.protobuf.DurationR\x03per\x12-\n" +
+	"\x05slope\x18\x03 \x01(\v2\x12.leadline.v1.SlopeB\x03\xe0A\x02R\x05slope\x12D\n" +
+	"\fslope_wander\x18\x04 \x01(\v2!.leadline.v1.Dynamics.SlopeWanderR\vslopeWanderB\x15\n" +
+	"\x13_standard_deviation\x1a\x85\x01\n" +
+	"\vSlopeWander\x122\n" +
+	"\x12standard_deviation\x18\x01 \x01(\x01H\x00R\x11standardDeviation\x88\x01\x01\x12+\n" +
+	"\x03per\x18\x02 \x01(\v2\x19.google.protobuf.DurationR\x03perB\x15\n" +
+	"\x13_standard_deviation\x1a\xb4\x01\n" +
+	"\rMeanReverting\x12\x17\n" +
+	"\x04mean\x18\x01 \x01(\x01H\x00R\x04mean\x88\x01\x01\x122\n" +
+	"\x12standard_deviation\x18\x02 \x01(\x01H\x01R\x11standardDeviation\x88\x01\x01\x126\n" +
+	"\thalf_life\x18\x03 \x01(\v2\x19.google.protobuf.DurationR\bhalfLifeB\a\n" +
+	"\x05_meanB\x15\n" +
 	"\x13_standard_deviationB\a\n" +
-	"\x05model\"U\n" +
+	"\x05model\"\xa1\x01\n" +
+	"\x05Slope\x12\x17\n" +
+	"\x04mean\x18\x01 \x01(\x01H\x00R\x04mean\x88\x01\x01\x122\n" +
+	"\x12standard_deviation\x18\x02 \x01(\x01H\x01R\x11standardDeviation\x88\x01\x01\x12+\n" +
+	"\x03per\x18\x03 \x01(\v2\x19.google.protobuf.DurationR\x03perB\a\n" +
+	"\x05_meanB\x15\n" +
+	"\x13_standard_deviation\"U\n" +
 	"\tTolerance\x12\x19\n" +
 	"\x05lower\x18\x01 \x01(\x01H\x00R\x05lower\x88\x01\x01\x12\x19\n" +
 	"\x05upper\x18\x02 \x01(\x01H\x01R\x05upper\x88\x01\x01B\b\n" +
@@ -1102,12 +1782,42 @@ const file_leadline_v1_quantity_proto_rawDesc = "" +
 	"\x0fnext_page_token\x18\x02 \x01(\tR\rnextPageToken\"@\n" +
 	"\x15RetireQuantityRequest\x12\x13\n" +
 	"\x02id\x18\x01 \x01(\tB\x03\xe0A\x02R\x02id\x12\x12\n" +
-	"\x04etag\x18\x02 \x01(\tR\x04etag2\xc8\x03\n" +
+	"\x04etag\x18\x02 \x01(\tR\x04etag\"\xeb\x01\n" +
+	"\x14RenewQuantityRequest\x12\x13\n" +
+	"\x02id\x18\x01 \x01(\tB\x03\xe0A\x02R\x02id\x12.\n" +
+	"\x04time\x18\x02 \x01(\v2\x1a.google.protobuf.TimestampR\x04time\x12\x16\n" +
+	"\x06reason\x18\x03 \x01(\tR\x06reason\x12-\n" +
+	"\x05prior\x18\x04 \x01(\v2\x12.leadline.v1.PriorB\x03\xe0A\x02R\x05prior\x12(\n" +
+	"\x05slope\x18\x05 \x01(\v2\x12.leadline.v1.SlopeR\x05slope\x12\x1d\n" +
+	"\n" +
+	"request_id\x18\x06 \x01(\tR\trequestId\"\xeb\x02\n" +
+	"\aRenewal\x12\x1d\n" +
+	"\n" +
+	"request_id\x18\x01 \x01(\tR\trequestId\x12.\n" +
+	"\x04time\x18\x02 \x01(\v2\x1a.google.protobuf.TimestampR\x04time\x12\x16\n" +
+	"\x06reason\x18\x03 \x01(\tR\x06reason\x12(\n" +
+	"\x05prior\x18\x04 \x01(\v2\x12.leadline.v1.PriorR\x05prior\x12(\n" +
+	"\x05slope\x18\x05 \x01(\v2\x12.leadline.v1.SlopeR\x05slope\x12'\n" +
+	"\x0fledger_position\x18\x06 \x01(\x04R\x0eledgerPosition\x12;\n" +
+	"\vcreate_time\x18\a \x01(\v2\x1a.google.protobuf.TimestampR\n" +
+	"createTime\x12?\n" +
+	"\rwithdraw_time\x18\b \x01(\v2\x1a.google.protobuf.TimestampR\fwithdrawTime\"Q\n" +
+	"\x16WithdrawRenewalRequest\x12\x13\n" +
+	"\x02id\x18\x01 \x01(\tB\x03\xe0A\x02R\x02id\x12\"\n" +
+	"\n" +
+	"request_id\x18\x02 \x01(\tB\x03\xe0A\x02R\trequestId\"*\n" +
+	"\x13ListRenewalsRequest\x12\x13\n" +
+	"\x02id\x18\x01 \x01(\tB\x03\xe0A\x02R\x02id\"H\n" +
+	"\x14ListRenewalsResponse\x120\n" +
+	"\brenewals\x18\x01 \x03(\v2\x14.leadline.v1.RenewalR\brenewals2\xb2\x06\n" +
 	"\x0fQuantityService\x12t\n" +
 	"\x0fDeclareQuantity\x12#.leadline.v1.DeclareQuantityRequest\x1a\x15.leadline.v1.Quantity\"%\x82\xd3\xe4\x93\x02\x1f:\bquantity\x1a\x13/v1/quantities/{id}\x12b\n" +
 	"\vGetQuantity\x12\x1f.leadline.v1.GetQuantityRequest\x1a\x15.leadline.v1.Quantity\"\x1b\x82\xd3\xe4\x93\x02\x15\x12\x13/v1/quantities/{id}\x12q\n" +
 	"\x0eListQuantities\x12\".leadline.v1.ListQuantitiesRequest\x1a#.leadline.v1.ListQuantitiesResponse\"\x16\x82\xd3\xe4\x93\x02\x10\x12\x0e/v1/quantities\x12h\n" +
-	"\x0eRetireQuantity\x12\".leadline.v1.RetireQuantityRequest\x1a\x15.leadline.v1.Quantity\"\x1b\x82\xd3\xe4\x93\x02\x15*\x13/v1/quantities/{id}B/Z-leadline.example/proto/leadline/v1;leadlinev1b\x06proto3"
+	"\x0eRetireQuantity\x12\".leadline.v1.RetireQuantityRequest\x1a\x15.leadline.v1.Quantity\"\x1b\x82\xd3\xe4\x93\x02\x15*\x13/v1/quantities/{id}\x12n\n" +
+	"\rRenewQuantity\x12!.leadline.v1.RenewQuantityRequest\x1a\x14.leadline.v1.Renewal\"$\x82\xd3\xe4\x93\x02\x1e:\x01*\"\x19/v1/quantities/{id}:renew\x12}\n" +
+	"\x0fWithdrawRenewal\x12#.leadline.v1.WithdrawRenewalRequest\x1a\x14.leadline.v1.Renewal\"/\x82\xd3\xe4\x93\x02):\x01*\"$/v1/quantities/{id}:withdraw_renewal\x12y\n" +
+	"\fListRenewals\x12 .leadline.v1.ListRenewalsRequest\x1a!.leadline.v1.ListRenewalsResponse\"$\x82\xd3\xe4\x93\x02\x1e\x12\x1c/v1/quantities/{id}/renewalsB/Z-leadline.example/proto/leadline/v1;leadlinev1b\x06proto3"
 
 var (
 	file_leadline_v1_quantity_proto_rawDescOnce sync.Once
@@ -1121,56 +1831,89 @@ func file_leadline_v1_quantity_proto_rawDescGZIP() []byte {
 	return file_leadline_v1_quantity_proto_rawDescData
 }
 
-var file_leadline_v1_quantity_proto_msgTypes = make([]protoimpl.MessageInfo, 15)
+var file_leadline_v1_quantity_proto_msgTypes = make([]protoimpl.MessageInfo, 24)
 var file_leadline_v1_quantity_proto_goTypes = []any{
 	(*Quantity)(nil),               // 0: leadline.v1.Quantity
 	(*Prior)(nil),                  // 1: leadline.v1.Prior
 	(*Repeatability)(nil),          // 2: leadline.v1.Repeatability
 	(*Dynamics)(nil),               // 3: leadline.v1.Dynamics
-	(*Tolerance)(nil),              // 4: leadline.v1.Tolerance
-	(*DecisionRule)(nil),           // 5: leadline.v1.DecisionRule
-	(*DeclareQuantityRequest)(nil), // 6: leadline.v1.DeclareQuantityRequest
-	(*GetQuantityRequest)(nil),     // 7: leadline.v1.GetQuantityRequest
-	(*ListQuantitiesRequest)(nil),  // 8: leadline.v1.ListQuantitiesRequest
-	(*ListQuantitiesResponse)(nil), // 9: leadline.v1.ListQuantitiesResponse
-	(*RetireQuantityRequest)(nil),  // 10: leadline.v1.RetireQuantityRequest
-	(*Prior_Vague)(nil),            // 11: leadline.v1.Prior.Vague
-	(*Repeatability_Learned)(nil),  // 12: leadline.v1.Repeatability.Learned
-	(*Dynamics_Constant)(nil),      // 13: leadline.v1.Dynamics.Constant
-	(*Dynamics_RandomWalk)(nil),    // 14: leadline.v1.Dynamics.RandomWalk
-	(*timestamppb.Timestamp)(nil),  // 15: google.protobuf.Timestamp
-	(*durationpb.Duration)(nil),    // 16: google.protobuf.Duration
+	(*Slope)(nil),                  // 4: leadline.v1.Slope
+	(*Tolerance)(nil),              // 5: leadline.v1.Tolerance
+	(*DecisionRule)(nil),           // 6: leadline.v1.DecisionRule
+	(*DeclareQuantityRequest)(nil), // 7: leadline.v1.DeclareQuantityRequest
+	(*GetQuantityRequest)(nil),     // 8: leadline.v1.GetQuantityRequest
+	(*ListQuantitiesRequest)(nil),  // 9: leadline.v1.ListQuantitiesRequest
+	(*ListQuantitiesResponse)(nil), // 10: leadline.v1.ListQuantitiesResponse
+	(*RetireQuantityRequest)(nil),  // 11: leadline.v1.RetireQuantityRequest
+	(*RenewQuantityRequest)(nil),   // 12: leadline.v1.RenewQuantityRequest
+	(*Renewal)(nil),                // 13: leadline.v1.Renewal
+	(*WithdrawRenewalRequest)(nil), // 14: leadline.v1.WithdrawRenewalRequest
+	(*ListRenewalsRequest)(nil),    // 15: leadline.v1.ListRenewalsRequest
+	(*ListRenewalsResponse)(nil),   // 16: leadline.v1.ListRenewalsResponse
+	(*Prior_Vague)(nil),            // 17: leadline.v1.Prior.Vague
+	(*Repeatability_Learned)(nil),  // 18: leadline.v1.Repeatability.Learned
+	(*Dynamics_Constant)(nil),      // 19: leadline.v1.Dynamics.Constant
+	(*Dynamics_RandomWalk)(nil),    // 20: leadline.v1.Dynamics.RandomWalk
+	(*Dynamics_LinearTrend)(nil),   // 21: leadline.v1.Dynamics.LinearTrend
+	(*Dynamics_SlopeWander)(nil),   // 22: leadline.v1.Dynamics.SlopeWander
+	(*Dynamics_MeanReverting)(nil), // 23: leadline.v1.Dynamics.MeanReverting
+	(*durationpb.Duration)(nil),    // 24: google.protobuf.Duration
+	(*timestamppb.Timestamp)(nil),  // 25: google.protobuf.Timestamp
 }
 var file_leadline_v1_quantity_proto_depIdxs = []int32{
 	1,  // 0: leadline.v1.Quantity.prior:type_name -> leadline.v1.Prior
 	2,  // 1: leadline.v1.Quantity.repeatability:type_name -> leadline.v1.Repeatability
 	3,  // 2: leadline.v1.Quantity.dynamics:type_name -> leadline.v1.Dynamics
-	4,  // 3: leadline.v1.Quantity.tolerance:type_name -> leadline.v1.Tolerance
-	5,  // 4: leadline.v1.Quantity.decision_rule:type_name -> leadline.v1.DecisionRule
-	15, // 5: leadline.v1.Quantity.create_time:type_name -> google.protobuf.Timestamp
-	15, // 6: leadline.v1.Quantity.update_time:type_name -> google.protobuf.Timestamp
-	15, // 7: leadline.v1.Quantity.retire_time:type_name -> google.protobuf.Timestamp
-	11, // 8: leadline.v1.Prior.vague:type_name -> leadline.v1.Prior.Vague
-	15, // 9: leadline.v1.Prior.time:type_name -> google.protobuf.Timestamp
-	12, // 10: leadline.v1.Repeatability.learned:type_name -> leadline.v1.Repeatability.Learned
-	13, // 11: leadline.v1.Dynamics.constant:type_name -> leadline.v1.Dynamics.Constant
-	14, // 12: leadline.v1.Dynamics.random_walk:type_name -> leadline.v1.Dynamics.RandomWalk
-	0,  // 13: leadline.v1.DeclareQuantityRequest.quantity:type_name -> leadline.v1.Quantity
-	0,  // 14: leadline.v1.ListQuantitiesResponse.quantities:type_name -> leadline.v1.Quantity
-	16, // 15: leadline.v1.Dynamics.RandomWalk.per:type_name -> google.protobuf.Duration
-	6,  // 16: leadline.v1.QuantityService.DeclareQuantity:input_type -> leadline.v1.DeclareQuantityRequest
-	7,  // 17: leadline.v1.QuantityService.GetQuantity:input_type -> leadline.v1.GetQuantityRequest
-	8,  // 18: leadline.v1.QuantityService.ListQuantities:input_type -> leadline.v1.ListQuantitiesRequest
-	10, // 19: leadline.v1.QuantityService.RetireQuantity:input_type -> leadline.v1.RetireQuantityRequest
-	0,  // 20: leadline.v1.QuantityService.DeclareQuantity:output_type -> leadline.v1.Quantity
-	0,  // 21: leadline.v1.QuantityService.GetQuantity:output_type -> leadline.v1.Quantity
-	9,  // 22: leadline.v1.QuantityService.ListQuantities:output_type -> leadline.v1.ListQuantitiesResponse
-	0,  // 23: leadline.v1.QuantityService.RetireQuantity:output_type -> leadline.v1.Quantity
-	20, // [20:24] is the sub-list for method output_type
-	16, // [16:20] is the sub-list for method input_type
-	16, // [16:16] is the sub-list for extension type_name
-	16, // [16:16] is the sub-list for extension extendee
-	0,  // [0:16] is the sub-list for field type_name
+	5,  // 3: leadline.v1.Quantity.tolerance:type_name -> leadline.v1.Tolerance
+	6,  // 4: leadline.v1.Quantity.decision_rule:type_name -> leadline.v1.DecisionRule
+	24, // 5: leadline.v1.Quantity.breach_horizon:type_name -> google.protobuf.Duration
+	25, // 6: leadline.v1.Quantity.create_time:type_name -> google.protobuf.Timestamp
+	25, // 7: leadline.v1.Quantity.update_time:type_name -> google.protobuf.Timestamp
+	25, // 8: leadline.v1.Quantity.retire_time:type_name -> google.protobuf.Timestamp
+	17, // 9: leadline.v1.Prior.vague:type_name -> leadline.v1.Prior.Vague
+	25, // 10: leadline.v1.Prior.time:type_name -> google.protobuf.Timestamp
+	18, // 11: leadline.v1.Repeatability.learned:type_name -> leadline.v1.Repeatability.Learned
+	19, // 12: leadline.v1.Dynamics.constant:type_name -> leadline.v1.Dynamics.Constant
+	20, // 13: leadline.v1.Dynamics.random_walk:type_name -> leadline.v1.Dynamics.RandomWalk
+	21, // 14: leadline.v1.Dynamics.linear_trend:type_name -> leadline.v1.Dynamics.LinearTrend
+	23, // 15: leadline.v1.Dynamics.mean_reverting:type_name -> leadline.v1.Dynamics.MeanReverting
+	24, // 16: leadline.v1.Slope.per:type_name -> google.protobuf.Duration
+	0,  // 17: leadline.v1.DeclareQuantityRequest.quantity:type_name -> leadline.v1.Quantity
+	0,  // 18: leadline.v1.ListQuantitiesResponse.quantities:type_name -> leadline.v1.Quantity
+	25, // 19: leadline.v1.RenewQuantityRequest.time:type_name -> google.protobuf.Timestamp
+	1,  // 20: leadline.v1.RenewQuantityRequest.prior:type_name -> leadline.v1.Prior
+	4,  // 21: leadline.v1.RenewQuantityRequest.slope:type_name -> leadline.v1.Slope
+	25, // 22: leadline.v1.Renewal.time:type_name -> google.protobuf.Timestamp
+	1,  // 23: leadline.v1.Renewal.prior:type_name -> leadline.v1.Prior
+	4,  // 24: leadline.v1.Renewal.slope:type_name -> leadline.v1.Slope
+	25, // 25: leadline.v1.Renewal.create_time:type_name -> google.protobuf.Timestamp
+	25, // 26: leadline.v1.Renewal.withdraw_time:type_name -> google.protobuf.Timestamp
+	13, // 27: leadline.v1.ListRenewalsResponse.renewals:type_name -> leadline.v1.Renewal
+	24, // 28: leadline.v1.Dynamics.RandomWalk.per:type_name -> google.protobuf.Duration
+	24, // 29: leadline.v1.Dynamics.LinearTrend.per:type_name -> google.protobuf.Duration
+	4,  // 30: leadline.v1.Dynamics.LinearTrend.slope:type_name -> leadline.v1.Slope
+	22, // 31: leadline.v1.Dynamics.LinearTrend.slope_wander:type_name -> leadline.v1.Dynamics.SlopeWander
+	24, // 32: leadline.v1.Dynamics.SlopeWander.per:type_name -> google.protobuf.Duration
+	24, // 33: leadline.v1.Dynamics.MeanReverting.half_life:type_name -> google.protobuf.Duration
+	7,  // 34: leadline.v1.QuantityService.DeclareQuantity:input_type -> leadline.v1.DeclareQuantityRequest
+	8,  // 35: leadline.v1.QuantityService.GetQuantity:input_type -> leadline.v1.GetQuantityRequest
+	9,  // 36: leadline.v1.QuantityService.ListQuantities:input_type -> leadline.v1.ListQuantitiesRequest
+	11, // 37: leadline.v1.QuantityService.RetireQuantity:input_type -> leadline.v1.RetireQuantityRequest
+	12, // 38: leadline.v1.QuantityService.RenewQuantity:input_type -> leadline.v1.RenewQuantityRequest
+	14, // 39: leadline.v1.QuantityService.WithdrawRenewal:input_type -> leadline.v1.WithdrawRenewalRequest
+	15, // 40: leadline.v1.QuantityService.ListRenewals:input_type -> leadline.v1.ListRenewalsRequest
+	0,  // 41: leadline.v1.QuantityService.DeclareQuantity:output_type -> leadline.v1.Quantity
+	0,  // 42: leadline.v1.QuantityService.GetQuantity:output_type -> leadline.v1.Quantity
+	10, // 43: leadline.v1.QuantityService.ListQuantities:output_type -> leadline.v1.ListQuantitiesResponse
+	0,  // 44: leadline.v1.QuantityService.RetireQuantity:output_type -> leadline.v1.Quantity
+	13, // 45: leadline.v1.QuantityService.RenewQuantity:output_type -> leadline.v1.Renewal
+	13, // 46: leadline.v1.QuantityService.WithdrawRenewal:output_type -> leadline.v1.Renewal
+	16, // 47: leadline.v1.QuantityService.ListRenewals:output_type -> leadline.v1.ListRenewalsResponse
+	41, // [41:48] is the sub-list for method output_type
+	34, // [34:41] is the sub-list for method input_type
+	34, // [34:34] is the sub-list for extension type_name
+	34, // [34:34] is the sub-list for extension extendee
+	0,  // [0:34] is the sub-list for field type_name
 }
 
 func init() { file_leadline_v1_quantity_proto_init() }
@@ -1183,18 +1926,24 @@ func file_leadline_v1_quantity_proto_init() {
 	file_leadline_v1_quantity_proto_msgTypes[3].OneofWrappers = []any{
 		(*Dynamics_Constant_)(nil),
 		(*Dynamics_RandomWalk_)(nil),
+		(*Dynamics_LinearTrend_)(nil),
+		(*Dynamics_MeanReverting_)(nil),
 	}
 	file_leadline_v1_quantity_proto_msgTypes[4].OneofWrappers = []any{}
 	file_leadline_v1_quantity_proto_msgTypes[5].OneofWrappers = []any{}
-	file_leadline_v1_quantity_proto_msgTypes[12].OneofWrappers = []any{}
-	file_leadline_v1_quantity_proto_msgTypes[14].OneofWrappers = []any{}
+	file_leadline_v1_quantity_proto_msgTypes[6].OneofWrappers = []any{}
+	file_leadline_v1_quantity_proto_msgTypes[18].OneofWrappers = []any{}
+	file_leadline_v1_quantity_proto_msgTypes[20].OneofWrappers = []any{}
+	file_leadline_v1_quantity_proto_msgTypes[21].OneofWrappers = []any{}
+	file_leadline_v1_quantity_proto_msgTypes[22].OneofWrappers = []any{}
+	file_leadline_v1_quantity_proto_msgTypes[23].OneofWrappers = []any{}
 	type x struct{}
 	out := protoimpl.TypeBuilder{
 		File: protoimpl.DescBuilder{
 			GoPackagePath: reflect.TypeOf(x{}).PkgPath(),
 			RawDescriptor: unsafe.Slice(unsafe.StringData(file_leadline_v1_quantity_proto_rawDesc), len(file_leadline_v1_quantity_proto_rawDesc)),
 			NumEnums:      0,
-			NumMessages:   15,
+			NumMessages:   24,
 			NumExtensions: 0,
 			NumServices:   1,
 		},

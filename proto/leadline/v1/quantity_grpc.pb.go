@@ -23,6 +23,9 @@ const (
 	QuantityService_GetQuantity_FullMethodName     = "/leadline.v1.QuantityService/GetQuantity"
 	QuantityService_ListQuantities_FullMethodName  = "/leadline.v1.QuantityService/ListQuantities"
 	QuantityService_RetireQuantity_FullMethodName  = "/leadline.v1.QuantityService/RetireQuantity"
+	QuantityService_RenewQuantity_FullMethodName   = "/leadline.v1.QuantityService/RenewQuantity"
+	QuantityService_WithdrawRenewal_FullMethodName = "/leadline.v1.QuantityService/WithdrawRenewal"
+	QuantityService_ListRenewals_FullMethodName    = "/leadline.v1.QuantityService/ListRenewals"
 )
 
 // QuantityServiceClient is the client API for QuantityService service.
@@ -54,6 +57,19 @@ type QuantityServiceClient interface {
 	// but leaves the lists and the metrics, and its readings are refused with
 	// QUANTITY_RETIRED. Retiring it again changes nothing.
 	RetireQuantity(ctx context.Context, in *RetireQuantityRequest, opts ...grpc.CallOption) (*Quantity, error)
+	// RenewQuantity records that the part a quantity is measured on was replaced. At
+	// its time level and slope start anew from what is given here, independent of
+	// the past; what was learned of the instruments stays. Readings at its time or
+	// later are of the new part. Sent again with the same request_id it answers with
+	// what it did. Over HTTP the verb follows the ID: an ID "x" is renewed at
+	// /v1/quantities/x:renew.
+	RenewQuantity(ctx context.Context, in *RenewQuantityRequest, opts ...grpc.CallOption) (*Renewal, error)
+	// WithdrawRenewal takes back a renewal that was a mistake: the belief becomes
+	// what it would be without. The ledger keeps both. Withdrawing it again changes
+	// nothing.
+	WithdrawRenewal(ctx context.Context, in *WithdrawRenewalRequest, opts ...grpc.CallOption) (*Renewal, error)
+	// ListRenewals lists the renewals of a quantity by time, withdrawn ones too.
+	ListRenewals(ctx context.Context, in *ListRenewalsRequest, opts ...grpc.CallOption) (*ListRenewalsResponse, error)
 }
 
 type quantityServiceClient struct {
@@ -104,6 +120,36 @@ func (c *quantityServiceClient) RetireQuantity(ctx context.Context, in *RetireQu
 	return out, nil
 }
 
+func (c *quantityServiceClient) RenewQuantity(ctx context.Context, in *RenewQuantityRequest, opts ...grpc.CallOption) (*Renewal, error) {
+	cOpts := append([]grpc.CallOption{grpc.StaticMethod()}, opts...)
+	out := new(Renewal)
+	err := c.cc.Invoke(ctx, QuantityService_RenewQuantity_FullMethodName, in, out, cOpts...)
+	if err != nil {
+		return nil, err
+	}
+	return out, nil
+}
+
+func (c *quantityServiceClient) WithdrawRenewal(ctx context.Context, in *WithdrawRenewalRequest, opts ...grpc.CallOption) (*Renewal, error) {
+	cOpts := append([]grpc.CallOption{grpc.StaticMethod()}, opts...)
+	out := new(Renewal)
+	err := c.cc.Invoke(ctx, QuantityService_WithdrawRenewal_FullMethodName, in, out, cOpts...)
+	if err != nil {
+		return nil, err
+	}
+	return out, nil
+}
+
+func (c *quantityServiceClient) ListRenewals(ctx context.Context, in *ListRenewalsRequest, opts ...grpc.CallOption) (*ListRenewalsResponse, error) {
+	cOpts := append([]grpc.CallOption{grpc.StaticMethod()}, opts...)
+	out := new(ListRenewalsResponse)
+	err := c.cc.Invoke(ctx, QuantityService_ListRenewals_FullMethodName, in, out, cOpts...)
+	if err != nil {
+		return nil, err
+	}
+	return out, nil
+}
+
 // QuantityServiceServer is the server API for QuantityService service.
 // All implementations must embed UnimplementedQuantityServiceServer
 // for forward compatibility.
@@ -133,6 +179,19 @@ type QuantityServiceServer interface {
 	// but leaves the lists and the metrics, and its readings are refused with
 	// QUANTITY_RETIRED. Retiring it again changes nothing.
 	RetireQuantity(context.Context, *RetireQuantityRequest) (*Quantity, error)
+	// RenewQuantity records that the part a quantity is measured on was replaced. At
+	// its time level and slope start anew from what is given here, independent of
+	// the past; what was learned of the instruments stays. Readings at its time or
+	// later are of the new part. Sent again with the same request_id it answers with
+	// what it did. Over HTTP the verb follows the ID: an ID "x" is renewed at
+	// /v1/quantities/x:renew.
+	RenewQuantity(context.Context, *RenewQuantityRequest) (*Renewal, error)
+	// WithdrawRenewal takes back a renewal that was a mistake: the belief becomes
+	// what it would be without. The ledger keeps both. Withdrawing it again changes
+	// nothing.
+	WithdrawRenewal(context.Context, *WithdrawRenewalRequest) (*Renewal, error)
+	// ListRenewals lists the renewals of a quantity by time, withdrawn ones too.
+	ListRenewals(context.Context, *ListRenewalsRequest) (*ListRenewalsResponse, error)
 	mustEmbedUnimplementedQuantityServiceServer()
 }
 
@@ -154,6 +213,15 @@ func (UnimplementedQuantityServiceServer) ListQuantities(context.Context, *ListQ
 }
 func (UnimplementedQuantityServiceServer) RetireQuantity(context.Context, *RetireQuantityRequest) (*Quantity, error) {
 	return nil, status.Error(codes.Unimplemented, "method RetireQuantity not implemented")
+}
+func (UnimplementedQuantityServiceServer) RenewQuantity(context.Context, *RenewQuantityRequest) (*Renewal, error) {
+	return nil, status.Error(codes.Unimplemented, "method RenewQuantity not implemented")
+}
+func (UnimplementedQuantityServiceServer) WithdrawRenewal(context.Context, *WithdrawRenewalRequest) (*Renewal, error) {
+	return nil, status.Error(codes.Unimplemented, "method WithdrawRenewal not implemented")
+}
+func (UnimplementedQuantityServiceServer) ListRenewals(context.Context, *ListRenewalsRequest) (*ListRenewalsResponse, error) {
+	return nil, status.Error(codes.Unimplemented, "method ListRenewals not implemented")
 }
 func (UnimplementedQuantityServiceServer) mustEmbedUnimplementedQuantityServiceServer() {}
 func (UnimplementedQuantityServiceServer) testEmbeddedByValue()                         {}
@@ -248,6 +316,60 @@ func _QuantityService_RetireQuantity_Handler(srv interface{}, ctx context.Contex
 	return interceptor(ctx, in, info, handler)
 }
 
+func _QuantityService_RenewQuantity_Handler(srv interface{}, ctx context.Context, dec func(interface{}) error, interceptor grpc.UnaryServerInterceptor) (interface{}, error) {
+	in := new(RenewQuantityRequest)
+	if err := dec(in); err != nil {
+		return nil, err
+	}
+	if interceptor == nil {
+		return srv.(QuantityServiceServer).RenewQuantity(ctx, in)
+	}
+	info := &grpc.UnaryServerInfo{
+		Server:     srv,
+		FullMethod: QuantityService_RenewQuantity_FullMethodName,
+	}
+	handler := func(ctx context.Context, req interface{}) (interface{}, error) {
+		return srv.(QuantityServiceServer).RenewQuantity(ctx, req.(*RenewQuantityRequest))
+	}
+	return interceptor(ctx, in, info, handler)
+}
+
+func _QuantityService_WithdrawRenewal_Handler(srv interface{}, ctx context.Context, dec func(interface{}) error, interceptor grpc.UnaryServerInterceptor) (interface{}, error) {
+	in := new(WithdrawRenewalRequest)
+	if err := dec(in); err != nil {
+		return nil, err
+	}
+	if interceptor == nil {
+		return srv.(QuantityServiceServer).WithdrawRenewal(ctx, in)
+	}
+	info := &grpc.UnaryServerInfo{
+		Server:     srv,
+		FullMethod: QuantityService_WithdrawRenewal_FullMethodName,
+	}
+	handler := func(ctx context.Context, req interface{}) (interface{}, error) {
+		return srv.(QuantityServiceServer).WithdrawRenewal(ctx, req.(*WithdrawRenewalRequest))
+	}
+	return interceptor(ctx, in, info, handler)
+}
+
+func _QuantityService_ListRenewals_Handler(srv interface{}, ctx context.Context, dec func(interface{}) error, interceptor grpc.UnaryServerInterceptor) (interface{}, error) {
+	in := new(ListRenewalsRequest)
+	if err := dec(in); err != nil {
+		return nil, err
+	}
+	if interceptor == nil {
+		return srv.(QuantityServiceServer).ListRenewals(ctx, in)
+	}
+	info := &grpc.UnaryServerInfo{
+		Server:     srv,
+		FullMethod: QuantityService_ListRenewals_FullMethodName,
+	}
+	handler := func(ctx context.Context, req interface{}) (interface{}, error) {
+		return srv.(QuantityServiceServer).ListRenewals(ctx, req.(*ListRenewalsRequest))
+	}
+	return interceptor(ctx, in, info, handler)
+}
+
 // QuantityService_ServiceDesc is the grpc.ServiceDesc for QuantityService service.
 // It's only intended for direct use with grpc.RegisterService,
 // and not to be introspected or modified (even as a copy)
@@ -270,6 +392,18 @@ var QuantityService_ServiceDesc = grpc.ServiceDesc{
 		{
 			MethodName: "RetireQuantity",
 			Handler:    _QuantityService_RetireQuantity_Handler,
+		},
+		{
+			MethodName: "RenewQuantity",
+			Handler:    _QuantityService_RenewQuantity_Handler,
+		},
+		{
+			MethodName: "WithdrawRenewal",
+			Handler:    _QuantityService_WithdrawRenewal_Handler,
+		},
+		{
+			MethodName: "ListRenewals",
+			Handler:    _QuantityService_ListRenewals_Handler,
 		},
 	},
 	Streams:  []grpc.StreamDesc{},

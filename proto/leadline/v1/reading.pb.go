@@ -80,6 +80,68 @@ func (Reading_Status) EnumDescriptor() ([]byte, []int) {
 	return file_leadline_v1_reading_proto_rawDescGZIP(), []int{0, 0}
 }
 
+// CalibrationState is how a reading stands to the calibration it rests on. All
+// but those IN_FORCE are applied too, but flagged.
+type RecordedReading_CalibrationState int32
+
+const (
+	// Never sent.
+	RecordedReading_UNSPECIFIED RecordedReading_CalibrationState = 0
+	// The calibration was valid and not overdue at the reading's time.
+	RecordedReading_IN_FORCE RecordedReading_CalibrationState = 1
+	// The reading was made after the calibration's due.
+	RecordedReading_OVERDUE RecordedReading_CalibrationState = 2
+	// The reading was made before the first calibration's valid_from.
+	RecordedReading_NOT_YET_VALID RecordedReading_CalibrationState = 3
+	// The instrument has no calibration; its bias is taken to be 0.
+	RecordedReading_UNCALIBRATED RecordedReading_CalibrationState = 4
+)
+
+// Enum value maps for RecordedReading_CalibrationState.
+var (
+	RecordedReading_CalibrationState_name = map[int32]string{
+		0: "UNSPECIFIED",
+		1: "IN_FORCE",
+		2: "OVERDUE",
+		3: "NOT_YET_VALID",
+		4: "UNCALIBRATED",
+	}
+	RecordedReading_CalibrationState_value = map[string]int32{
+		"UNSPECIFIED":   0,
+		"IN_FORCE":      1,
+		"OVERDUE":       2,
+		"NOT_YET_VALID": 3,
+		"UNCALIBRATED":  4,
+	}
+)
+
+func (x RecordedReading_CalibrationState) Enum() *RecordedReading_CalibrationState {
+	p := new(RecordedReading_CalibrationState)
+	*p = x
+	return p
+}
+
+func (x RecordedReading_CalibrationState) String() string {
+	return protoimpl.X.EnumStringOf(x.Descriptor(), protoreflect.EnumNumber(x))
+}
+
+func (RecordedReading_CalibrationState) Descriptor() protoreflect.EnumDescriptor {
+	return file_leadline_v1_reading_proto_enumTypes[1].Descriptor()
+}
+
+func (RecordedReading_CalibrationState) Type() protoreflect.EnumType {
+	return &file_leadline_v1_reading_proto_enumTypes[1]
+}
+
+func (x RecordedReading_CalibrationState) Number() protoreflect.EnumNumber {
+	return protoreflect.EnumNumber(x)
+}
+
+// Deprecated: Use RecordedReading_CalibrationState.Descriptor instead.
+func (RecordedReading_CalibrationState) EnumDescriptor() ([]byte, []int) {
+	return file_leadline_v1_reading_proto_rawDescGZIP(), []int{2, 0}
+}
+
 // Reading is one indication of an instrument.
 type Reading struct {
 	state protoimpl.MessageState `protogen:"open.v1"`
@@ -91,7 +153,8 @@ type Reading struct {
 	// When the reading was taken. Absent, the instant at which the request was
 	// received, the same for all its readings. A retry sends the time of the answer.
 	Time *timestamppb.Timestamp `protobuf:"bytes,3,opt,name=time,proto3" json:"time,omitempty"`
-	// ID of the instrument, if it is known to the service.
+	// ID of the instrument that it was read from, which has to be declared and in the
+	// quantity's unit; empty, none: zero bias and the quantity's repeatability.
 	Instrument string `protobuf:"bytes,4,opt,name=instrument,proto3" json:"instrument,omitempty"`
 	// Random part of this reading's standard uncertainty, above 0, in the
 	// quantity's unit; it replaces the declared repeatability for this reading.
@@ -100,7 +163,11 @@ type Reading struct {
 	Unit string `protobuf:"bytes,6,opt,name=unit,proto3" json:"unit,omitempty"`
 	// ID of the reading, 1 to 128 bytes: the same quantity, ID and time again is
 	// a DUPLICATE. A reading without ID is never a duplicate.
-	ReadingId     string `protobuf:"bytes,7,opt,name=reading_id,json=readingId,proto3" json:"reading_id,omitempty"`
+	ReadingId string `protobuf:"bytes,7,opt,name=reading_id,json=readingId,proto3" json:"reading_id,omitempty"`
+	// Occasion, up to 128 printable bytes: readings of one instrument that follow
+	// each other under the same occasion share its between_occasions error. Empty, the
+	// reading is an occasion of its own.
+	Occasion      string `protobuf:"bytes,8,opt,name=occasion,proto3" json:"occasion,omitempty"`
 	unknownFields protoimpl.UnknownFields
 	sizeCache     protoimpl.SizeCache
 }
@@ -184,6 +251,13 @@ func (x *Reading) GetReadingId() string {
 	return ""
 }
 
+func (x *Reading) GetOccasion() string {
+	if x != nil {
+		return x.Occasion
+	}
+	return ""
+}
+
 // ReadingResult is what became of one reading of a request.
 type ReadingResult struct {
 	state protoimpl.MessageState `protogen:"open.v1"`
@@ -199,7 +273,7 @@ type ReadingResult struct {
 	// Why it was refused: UNKNOWN_QUANTITY, QUANTITY_RETIRED, UNKNOWN_INSTRUMENT,
 	// UNIT_MISMATCH, VALUE_OUT_OF_RANGE, TIME_OUT_OF_RANGE, TIME_IN_FUTURE,
 	// BEFORE_PRIOR, NO_REPEATABILITY, RANDOM_UNCERTAINTY_INVALID,
-	// READING_ID_CONFLICT or NOT_SUPPORTED; else empty.
+	// READING_ID_CONFLICT, NOT_SUPPORTED or INSTRUMENT_RETIRED; else empty.
 	Reason string `protobuf:"bytes,5,opt,name=reason,proto3" json:"reason,omitempty"`
 	// One sentence that says what to do about a refusal; else empty.
 	Detail        string `protobuf:"bytes,6,opt,name=detail,proto3" json:"detail,omitempty"`
@@ -309,8 +383,13 @@ type RecordedReading struct {
 	ReceiveTime *timestamppb.Timestamp `protobuf:"bytes,11,opt,name=receive_time,json=receiveTime,proto3" json:"receive_time,omitempty"`
 	// Position of its record in the ledger.
 	LedgerPosition uint64 `protobuf:"varint,12,opt,name=ledger_position,json=ledgerPosition,proto3" json:"ledger_position,omitempty"`
-	unknownFields  protoimpl.UnknownFields
-	sizeCache      protoimpl.SizeCache
+	// Occasion, if one was sent.
+	Occasion string `protobuf:"bytes,13,opt,name=occasion,proto3" json:"occasion,omitempty"`
+	// How it stands to the calibration it rests on, as its instrument is declared now;
+	// absent without an instrument and for a refused one.
+	Calibration   *RecordedReading_CalibrationState `protobuf:"varint,14,opt,name=calibration,proto3,enum=leadline.v1.RecordedReading_CalibrationState,oneof" json:"calibration,omitempty"`
+	unknownFields protoimpl.UnknownFields
+	sizeCache     protoimpl.SizeCache
 }
 
 func (x *RecordedReading) Reset() {
@@ -425,6 +504,20 @@ func (x *RecordedReading) GetLedgerPosition() uint64 {
 		return x.LedgerPosition
 	}
 	return 0
+}
+
+func (x *RecordedReading) GetOccasion() string {
+	if x != nil {
+		return x.Occasion
+	}
+	return ""
+}
+
+func (x *RecordedReading) GetCalibration() RecordedReading_CalibrationState {
+	if x != nil && x.Calibration != nil {
+		return *x.Calibration
+	}
+	return RecordedReading_UNSPECIFIED
 }
 
 // PostReadingRequest is one reading of a named quantity.
@@ -1055,7 +1148,7 @@ var File_leadline_v1_reading_proto protoreflect.FileDescriptor
 
 const file_leadline_v1_reading_proto_rawDesc = "" +
 	"\n" +
-	"\x19leadline/v1/reading.proto\x12\vleadline.v1\x1a\x1cgoogle/api/annotations.proto\x1a\x1fgoogle/api/field_behavior.proto\x1a\x1fgoogle/protobuf/timestamp.proto\x1a\x18leadline/v1/belief.proto\"\xfb\x02\n" +
+	"\x19leadline/v1/reading.proto\x12\vleadline.v1\x1a\x1cgoogle/api/annotations.proto\x1a\x1fgoogle/api/field_behavior.proto\x1a\x1fgoogle/protobuf/timestamp.proto\x1a\x18leadline/v1/belief.proto\"\x97\x03\n" +
 	"\aReading\x12\x1a\n" +
 	"\bquantity\x18\x01 \x01(\tR\bquantity\x12\x1e\n" +
 	"\x05value\x18\x02 \x01(\x01B\x03\xe0A\x02H\x00R\x05value\x88\x01\x01\x12.\n" +
@@ -1066,7 +1159,8 @@ const file_leadline_v1_reading_proto_rawDesc = "" +
 	"\x1brandom_standard_uncertainty\x18\x05 \x01(\x01H\x01R\x19randomStandardUncertainty\x88\x01\x01\x12\x12\n" +
 	"\x04unit\x18\x06 \x01(\tR\x04unit\x12\x1d\n" +
 	"\n" +
-	"reading_id\x18\a \x01(\tR\treadingId\"B\n" +
+	"reading_id\x18\a \x01(\tR\treadingId\x12\x1a\n" +
+	"\boccasion\x18\b \x01(\tR\boccasion\"B\n" +
 	"\x06Status\x12\x0f\n" +
 	"\vUNSPECIFIED\x10\x00\x12\v\n" +
 	"\aAPPLIED\x10\x01\x12\r\n" +
@@ -1081,7 +1175,7 @@ const file_leadline_v1_reading_proto_rawDesc = "" +
 	"\x04time\x18\x03 \x01(\v2\x1a.google.protobuf.TimestampR\x04time\x123\n" +
 	"\x06status\x18\x04 \x01(\x0e2\x1b.leadline.v1.Reading.StatusR\x06status\x12\x16\n" +
 	"\x06reason\x18\x05 \x01(\tR\x06reason\x12\x16\n" +
-	"\x06detail\x18\x06 \x01(\tR\x06detail\"\x87\x04\n" +
+	"\x06detail\x18\x06 \x01(\tR\x06detail\"\xee\x05\n" +
 	"\x0fRecordedReading\x12\x1a\n" +
 	"\bquantity\x18\x01 \x01(\tR\bquantity\x12\x19\n" +
 	"\x05value\x18\x02 \x01(\x01H\x00R\x05value\x88\x01\x01\x12.\n" +
@@ -1098,9 +1192,18 @@ const file_leadline_v1_reading_proto_rawDesc = "" +
 	"\x06detail\x18\n" +
 	" \x01(\tR\x06detail\x12=\n" +
 	"\freceive_time\x18\v \x01(\v2\x1a.google.protobuf.TimestampR\vreceiveTime\x12'\n" +
-	"\x0fledger_position\x18\f \x01(\x04R\x0eledgerPositionB\b\n" +
+	"\x0fledger_position\x18\f \x01(\x04R\x0eledgerPosition\x12\x1a\n" +
+	"\boccasion\x18\r \x01(\tR\boccasion\x12T\n" +
+	"\vcalibration\x18\x0e \x01(\x0e2-.leadline.v1.RecordedReading.CalibrationStateH\x02R\vcalibration\x88\x01\x01\"c\n" +
+	"\x10CalibrationState\x12\x0f\n" +
+	"\vUNSPECIFIED\x10\x00\x12\f\n" +
+	"\bIN_FORCE\x10\x01\x12\v\n" +
+	"\aOVERDUE\x10\x02\x12\x11\n" +
+	"\rNOT_YET_VALID\x10\x03\x12\x10\n" +
+	"\fUNCALIBRATED\x10\x04B\b\n" +
 	"\x06_valueB\x1e\n" +
-	"\x1c_random_standard_uncertainty\"j\n" +
+	"\x1c_random_standard_uncertaintyB\x0e\n" +
+	"\f_calibration\"j\n" +
 	"\x12PostReadingRequest\x12\x1f\n" +
 	"\bquantity\x18\x01 \x01(\tB\x03\xe0A\x02R\bquantity\x123\n" +
 	"\areading\x18\x02 \x01(\v2\x14.leadline.v1.ReadingB\x03\xe0A\x02R\areading\"v\n" +
@@ -1160,59 +1263,61 @@ func file_leadline_v1_reading_proto_rawDescGZIP() []byte {
 	return file_leadline_v1_reading_proto_rawDescData
 }
 
-var file_leadline_v1_reading_proto_enumTypes = make([]protoimpl.EnumInfo, 1)
+var file_leadline_v1_reading_proto_enumTypes = make([]protoimpl.EnumInfo, 2)
 var file_leadline_v1_reading_proto_msgTypes = make([]protoimpl.MessageInfo, 13)
 var file_leadline_v1_reading_proto_goTypes = []any{
-	(Reading_Status)(0),            // 0: leadline.v1.Reading.Status
-	(*Reading)(nil),                // 1: leadline.v1.Reading
-	(*ReadingResult)(nil),          // 2: leadline.v1.ReadingResult
-	(*RecordedReading)(nil),        // 3: leadline.v1.RecordedReading
-	(*PostReadingRequest)(nil),     // 4: leadline.v1.PostReadingRequest
-	(*PostReadingResponse)(nil),    // 5: leadline.v1.PostReadingResponse
-	(*PostReadingsRequest)(nil),    // 6: leadline.v1.PostReadingsRequest
-	(*PostReadingsResponse)(nil),   // 7: leadline.v1.PostReadingsResponse
-	(*StreamReadingsRequest)(nil),  // 8: leadline.v1.StreamReadingsRequest
-	(*StreamReadingsResponse)(nil), // 9: leadline.v1.StreamReadingsResponse
-	(*ListReadingsRequest)(nil),    // 10: leadline.v1.ListReadingsRequest
-	(*ListReadingsResponse)(nil),   // 11: leadline.v1.ListReadingsResponse
-	(*ApplyRefusedRequest)(nil),    // 12: leadline.v1.ApplyRefusedRequest
-	(*ApplyRefusedResponse)(nil),   // 13: leadline.v1.ApplyRefusedResponse
-	(*timestamppb.Timestamp)(nil),  // 14: google.protobuf.Timestamp
-	(*Belief)(nil),                 // 15: leadline.v1.Belief
+	(Reading_Status)(0),                   // 0: leadline.v1.Reading.Status
+	(RecordedReading_CalibrationState)(0), // 1: leadline.v1.RecordedReading.CalibrationState
+	(*Reading)(nil),                       // 2: leadline.v1.Reading
+	(*ReadingResult)(nil),                 // 3: leadline.v1.ReadingResult
+	(*RecordedReading)(nil),               // 4: leadline.v1.RecordedReading
+	(*PostReadingRequest)(nil),            // 5: leadline.v1.PostReadingRequest
+	(*PostReadingResponse)(nil),           // 6: leadline.v1.PostReadingResponse
+	(*PostReadingsRequest)(nil),           // 7: leadline.v1.PostReadingsRequest
+	(*PostReadingsResponse)(nil),          // 8: leadline.v1.PostReadingsResponse
+	(*StreamReadingsRequest)(nil),         // 9: leadline.v1.StreamReadingsRequest
+	(*StreamReadingsResponse)(nil),        // 10: leadline.v1.StreamReadingsResponse
+	(*ListReadingsRequest)(nil),           // 11: leadline.v1.ListReadingsRequest
+	(*ListReadingsResponse)(nil),          // 12: leadline.v1.ListReadingsResponse
+	(*ApplyRefusedRequest)(nil),           // 13: leadline.v1.ApplyRefusedRequest
+	(*ApplyRefusedResponse)(nil),          // 14: leadline.v1.ApplyRefusedResponse
+	(*timestamppb.Timestamp)(nil),         // 15: google.protobuf.Timestamp
+	(*Belief)(nil),                        // 16: leadline.v1.Belief
 }
 var file_leadline_v1_reading_proto_depIdxs = []int32{
-	14, // 0: leadline.v1.Reading.time:type_name -> google.protobuf.Timestamp
-	14, // 1: leadline.v1.ReadingResult.time:type_name -> google.protobuf.Timestamp
+	15, // 0: leadline.v1.Reading.time:type_name -> google.protobuf.Timestamp
+	15, // 1: leadline.v1.ReadingResult.time:type_name -> google.protobuf.Timestamp
 	0,  // 2: leadline.v1.ReadingResult.status:type_name -> leadline.v1.Reading.Status
-	14, // 3: leadline.v1.RecordedReading.time:type_name -> google.protobuf.Timestamp
+	15, // 3: leadline.v1.RecordedReading.time:type_name -> google.protobuf.Timestamp
 	0,  // 4: leadline.v1.RecordedReading.status:type_name -> leadline.v1.Reading.Status
-	14, // 5: leadline.v1.RecordedReading.receive_time:type_name -> google.protobuf.Timestamp
-	1,  // 6: leadline.v1.PostReadingRequest.reading:type_name -> leadline.v1.Reading
-	2,  // 7: leadline.v1.PostReadingResponse.result:type_name -> leadline.v1.ReadingResult
-	15, // 8: leadline.v1.PostReadingResponse.belief:type_name -> leadline.v1.Belief
-	1,  // 9: leadline.v1.PostReadingsRequest.readings:type_name -> leadline.v1.Reading
-	2,  // 10: leadline.v1.PostReadingsResponse.results:type_name -> leadline.v1.ReadingResult
-	1,  // 11: leadline.v1.StreamReadingsRequest.readings:type_name -> leadline.v1.Reading
-	2,  // 12: leadline.v1.StreamReadingsResponse.results:type_name -> leadline.v1.ReadingResult
-	14, // 13: leadline.v1.ListReadingsRequest.start:type_name -> google.protobuf.Timestamp
-	14, // 14: leadline.v1.ListReadingsRequest.end:type_name -> google.protobuf.Timestamp
-	0,  // 15: leadline.v1.ListReadingsRequest.status:type_name -> leadline.v1.Reading.Status
-	3,  // 16: leadline.v1.ListReadingsResponse.readings:type_name -> leadline.v1.RecordedReading
-	4,  // 17: leadline.v1.ReadingService.PostReading:input_type -> leadline.v1.PostReadingRequest
-	6,  // 18: leadline.v1.ReadingService.PostReadings:input_type -> leadline.v1.PostReadingsRequest
-	8,  // 19: leadline.v1.ReadingService.StreamReadings:input_type -> leadline.v1.StreamReadingsRequest
-	10, // 20: leadline.v1.ReadingService.ListReadings:input_type -> leadline.v1.ListReadingsRequest
-	12, // 21: leadline.v1.ReadingService.ApplyRefused:input_type -> leadline.v1.ApplyRefusedRequest
-	5,  // 22: leadline.v1.ReadingService.PostReading:output_type -> leadline.v1.PostReadingResponse
-	7,  // 23: leadline.v1.ReadingService.PostReadings:output_type -> leadline.v1.PostReadingsResponse
-	9,  // 24: leadline.v1.ReadingService.StreamReadings:output_type -> leadline.v1.StreamReadingsResponse
-	11, // 25: leadline.v1.ReadingService.ListReadings:output_type -> leadline.v1.ListReadingsResponse
-	13, // 26: leadline.v1.ReadingService.ApplyRefused:output_type -> leadline.v1.ApplyRefusedResponse
-	22, // [22:27] is the sub-list for method output_type
-	17, // [17:22] is the sub-list for method input_type
-	17, // [17:17] is the sub-list for extension type_name
-	17, // [17:17] is the sub-list for extension extendee
-	0,  // [0:17] is the sub-list for field type_name
+	15, // 5: leadline.v1.RecordedReading.receive_time:type_name -> google.protobuf.Timestamp
+	1,  // 6: leadline.v1.RecordedReading.calibration:type_name -> leadline.v1.RecordedReading.CalibrationState
+	2,  // 7: leadline.v1.PostReadingRequest.reading:type_name -> leadline.v1.Reading
+	3,  // 8: leadline.v1.PostReadingResponse.result:type_name -> leadline.v1.ReadingResult
+	16, // 9: leadline.v1.PostReadingResponse.belief:type_name -> leadline.v1.Belief
+	2,  // 10: leadline.v1.PostReadingsRequest.readings:type_name -> leadline.v1.Reading
+	3,  // 11: leadline.v1.PostReadingsResponse.results:type_name -> leadline.v1.ReadingResult
+	2,  // 12: leadline.v1.StreamReadingsRequest.readings:type_name -> leadline.v1.Reading
+	3,  // 13: leadline.v1.StreamReadingsResponse.results:type_name -> leadline.v1.ReadingResult
+	15, // 14: leadline.v1.ListReadingsRequest.start:type_name -> google.protobuf.Timestamp
+	15, // 15: leadline.v1.ListReadingsRequest.end:type_name -> google.protobuf.Timestamp
+	0,  // 16: leadline.v1.ListReadingsRequest.status:type_name -> leadline.v1.Reading.Status
+	4,  // 17: leadline.v1.ListReadingsResponse.readings:type_name -> leadline.v1.RecordedReading
+	5,  // 18: leadline.v1.ReadingService.PostReading:input_type -> leadline.v1.PostReadingRequest
+	7,  // 19: leadline.v1.ReadingService.PostReadings:input_type -> leadline.v1.PostReadingsRequest
+	9,  // 20: leadline.v1.ReadingService.StreamReadings:input_type -> leadline.v1.StreamReadingsRequest
+	11, // 21: leadline.v1.ReadingService.ListReadings:input_type -> leadline.v1.ListReadingsRequest
+	13, // 22: leadline.v1.ReadingService.ApplyRefused:input_type -> leadline.v1.ApplyRefusedRequest
+	6,  // 23: leadline.v1.ReadingService.PostReading:output_type -> leadline.v1.PostReadingResponse
+	8,  // 24: leadline.v1.ReadingService.PostReadings:output_type -> leadline.v1.PostReadingsResponse
+	10, // 25: leadline.v1.ReadingService.StreamReadings:output_type -> leadline.v1.StreamReadingsResponse
+	12, // 26: leadline.v1.ReadingService.ListReadings:output_type -> leadline.v1.ListReadingsResponse
+	14, // 27: leadline.v1.ReadingService.ApplyRefused:output_type -> leadline.v1.ApplyRefusedResponse
+	23, // [23:28] is the sub-list for method output_type
+	18, // [18:23] is the sub-list for method input_type
+	18, // [18:18] is the sub-list for extension type_name
+	18, // [18:18] is the sub-list for extension extendee
+	0,  // [0:18] is the sub-list for field type_name
 }
 
 func init() { file_leadline_v1_reading_proto_init() }
@@ -1229,7 +1334,7 @@ func file_leadline_v1_reading_proto_init() {
 		File: protoimpl.DescBuilder{
 			GoPackagePath: reflect.TypeOf(x{}).PkgPath(),
 			RawDescriptor: unsafe.Slice(unsafe.StringData(file_leadline_v1_reading_proto_rawDesc), len(file_leadline_v1_reading_proto_rawDesc)),
-			NumEnums:      1,
+			NumEnums:      2,
 			NumMessages:   13,
 			NumExtensions: 0,
 			NumServices:   1,
