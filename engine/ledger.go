@@ -112,6 +112,8 @@ type Ledger interface {
 	// Checkpoint returns the last complete sweep (zero if none) after calling
 	// fn for every quantity stored, by number.
 	Checkpoint(fn func(CheckpointEntry) error) (Sweep, error)
+	// Instruments calls fn with the latest record of each instrument, by number.
+	Instruments(fn func(*Record) error) error
 	// Close releases the file.
 	Close() error
 }

@@ -57,16 +57,41 @@ func (l *Ledger) stamp(g *engine.Group) (*head, error) {
 	}
 	for i := range g.Records {
 		r := &g.Records[i]
-		if r.Kind < engine.KindReading || r.Kind > engine.KindRetirement {
-			return nil, fmt.Errorf("a record is of kind %d, which this version can't write", r.Kind)
+		if err := writable(r); err != nil {
+			return nil, err
 		}
 		h.position++
 		r.Position, r.CommitTime = h.position, h.commit
+		h.format = max(h.format, needs(r))
 	}
 	if s := g.Sweep; s != nil {
 		h.swept, h.segment, h.through = true, s.Segment, s.Through
 	}
 	return &h, nil
+}
+
+// writable tells whether a record is of a kind that this version writes, and has
+// what that kind needs.
+func writable(r *engine.Record) error {
+	switch {
+	case r.Kind < engine.KindReading || r.Kind > engine.KindRenewal:
+		return fmt.Errorf("a record is of kind %d, which this version can't write", r.Kind)
+	case r.Kind == engine.KindInstrument && (r.Instrument == nil || r.Instrument.Number == 0):
+		return errors.New("a record of an instrument has none, or one without a number")
+	case r.Kind == engine.KindRenewal && r.Renewal == nil:
+		return errors.New("a record of a renewal has none")
+	}
+	return nil
+}
+
+// needs returns the version of the format that a record needs: a program of
+// version 1 would refuse a record of a newer kind as damage, and believe that
+// readings of one occasion were independent.
+func needs(r *engine.Record) uint32 {
+	if r.Kind >= engine.KindInstrument || r.Reading.Occasion != "" {
+		return formatInstruments
+	}
+	return formatFirst
 }
 
 // commit writes the group, encoded before, in one transaction. A panic of
@@ -137,6 +162,14 @@ func (l *Ledger) put(tx *bolt.Tx, g *engine.Group, h *head) (ledgerBytes, checkp
 		if ledgerBytes, err = l.encoder.put(tx); err != nil {
 			return 0, 0, err
 		}
+	}
+	if h.format > l.acknowledged.Load().format {
+		if err := putFormat(tx, h.format); err != nil {
+			return 0, 0, err
+		}
+	}
+	if err := putInstruments(tx, latestOf(g.Records)); err != nil {
+		return 0, 0, err
 	}
 	if err := tx.Bucket(headBucket).Put(headKey, h.append(nil)); err != nil {
 		return 0, 0, err

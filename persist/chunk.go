@@ -12,7 +12,7 @@ import (
 )
 
 const (
-	formatVersion = 1 // of the whole file: chunks, checkpoint values, keys
+	formatVersion = 1 // of chunks and of checkpoint values; that of the file is in file.go
 
 	chunkFirst   = 1 // the chunk begins a group
 	chunkFurther = 2 // the chunk goes on with the group of the chunk before

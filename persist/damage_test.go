@@ -282,7 +282,7 @@ func TestOpenRefuses(t *testing.T) {
 	restore(t, newer, image)
 	change(t, newer, "meta", func(b *bolt.Bucket) error {
 		v := bytes.Clone(b.Get([]byte("format")))
-		v[len(v)-1]++
+		v[len(v)-1] = 200
 		return b.Put([]byte("format"), v)
 	})
 	later, err := os.ReadFile(newer)

@@ -23,12 +23,15 @@ var (
 	quantitiesBucket = []byte("quantities")
 	statesBucket     = []byte("states")
 	segmentsBucket   = []byte("segments")
+	// instrumentsBucket is made together with the first record of an instrument.
+	instrumentsBucket = []byte("instruments")
 
 	formatKey = []byte("format")
 	sweepKey  = []byte("sweep")
 	headKey   = []byte("head")
 )
 
+// buckets lists those that every file has.
 func buckets() [][]byte {
 	return [][]byte{metaBucket, headBucket, ledgerBucket, quantitiesBucket, statesBucket, segmentsBucket}
 }
@@ -93,10 +96,24 @@ func format(path string) error {
 				return err
 			}
 		}
-		return tx.Bucket(metaBucket).Put(formatKey, binary.BigEndian.AppendUint32([]byte(magic), formatVersion))
+		return putFormat(tx, formatFirst)
 	})
 	return errors.Join(err, db.Close())
 }
+
+// Versions of the whole file. A file has the lowest that what it holds needs,
+// so that an older program goes on reading one that has nothing new.
+const (
+	formatFirst       = 1
+	formatInstruments = 2 // has instruments, renewals or occasions
+)
+
+func putFormat(tx *bolt.Tx, version uint32) error {
+	return tx.Bucket(metaBucket).Put(formatKey, binary.BigEndian.AppendUint32([]byte(magic), version))
+}
+
+// formatOf returns the version in a value that checkFormatValue accepts.
+func formatOf(v []byte) uint32 { return binary.BigEndian.Uint32(v[len(magic):]) }
 
 // openFile opens the bbolt file, which must exist. bbolt can panic on a damaged
 // one. NoFreelistSync is set for as long as the file may be a foreign one: else
@@ -160,8 +177,8 @@ func checkFormatValue(v []byte) error {
 	if len(v) != len(magic)+4 || string(v[:len(magic)]) != magic {
 		return ErrForeign
 	}
-	if version := binary.BigEndian.Uint32(v[len(magic):]); version > formatVersion {
-		return fmt.Errorf("%w: its format is %d, this program's %d", ErrNewer, version, formatVersion)
+	if version := formatOf(v); version > formatInstruments {
+		return fmt.Errorf("%w: its format is %d, this program's %d", ErrNewer, version, formatInstruments)
 	}
 	return nil
 }

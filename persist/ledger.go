@@ -115,6 +115,7 @@ type head struct {
 	swept    bool
 	segment  uint32          // of the last complete sweep
 	through  engine.Position // likewise
+	format   uint32          // of the file; it stands under formatKey, not in the head
 }
 
 // complete tells whether the sweep of a segment is durable.
@@ -172,6 +173,7 @@ func (l *Ledger) recover() error {
 		if err != nil {
 			return err
 		}
+		h.format = formatOf(tx.Bucket(metaBucket).Get(formatKey))
 		l.acknowledged.Store(h)
 		l.stale = hasStale(tx, h)
 		return nil

@@ -22,6 +22,7 @@ const (
 	quantityUpdateTime  protowire.Number = 6
 	quantityRetired     protowire.Number = 7
 	quantityRetireTime  protowire.Number = 8
+	quantityRenewal     protowire.Number = 9 // repeated
 
 	declarationUnit          protowire.Number = 1
 	declarationDescription   protowire.Number = 2
@@ -30,6 +31,7 @@ const (
 	declarationDynamics      protowire.Number = 5
 	declarationTolerance     protowire.Number = 6
 	declarationRule          protowire.Number = 7
+	declarationHorizon       protowire.Number = 8
 
 	priorForm        protowire.Number = 1
 	priorMean        protowire.Number = 2
@@ -44,10 +46,6 @@ const (
 	repeatabilitySD    protowire.Number = 2
 	repeatabilityGuess protowire.Number = 3
 	repeatabilityWorth protowire.Number = 4
-
-	dynamicsForm protowire.Number = 1
-	dynamicsSD   protowire.Number = 2
-	dynamicsPer  protowire.Number = 3
 
 	toleranceHasLower protowire.Number = 1
 	toleranceHasUpper protowire.Number = 2
@@ -68,7 +66,12 @@ func appendQuantity(b []byte, q *engine.Quantity) []byte {
 	b = appendFixed(b, quantityCreateTime, uint64(q.CreateTime))
 	b = appendFixed(b, quantityUpdateTime, uint64(q.UpdateTime))
 	b = appendFlag(b, quantityRetired, q.Retired)
-	return appendFixed(b, quantityRetireTime, uint64(q.RetireTime))
+	b = appendFixed(b, quantityRetireTime, uint64(q.RetireTime))
+	for i := range q.Renewals {
+		b = appendTag(b, quantityRenewal, protowire.BytesType)
+		b = protowire.AppendBytes(b, appendRenewal(nil, &q.Renewals[i]))
+	}
+	return b
 }
 
 func decodeQuantity(body []byte, q *engine.Quantity) error {
@@ -94,6 +97,10 @@ func decodeQuantity(body []byte, q *engine.Quantity) error {
 			q.Retired = m.number != 0
 		case fixed(quantityRetireTime):
 			q.RetireTime = engine.Instant(m.number)
+		case text(quantityRenewal):
+			var r engine.Renewal
+			m.bad = !decodeRenewal(m.bytes, &r) || m.bad
+			q.Renewals = append(q.Renewals, r)
 		}
 	}
 	if m.bad {
@@ -112,21 +119,18 @@ func appendDeclaration(b []byte, d *engine.Declaration) []byte {
 		b = appendDouble(b, repeatabilityGuess, d.Repeatability.Guess)
 		return appendDouble(b, repeatabilityWorth, d.Repeatability.Worth)
 	})
-	b = appendMessage(b, declarationDynamics, func(b []byte) []byte {
-		b = appendUint(b, dynamicsForm, uint64(d.Dynamics.Form))
-		b = appendDouble(b, dynamicsSD, d.Dynamics.StandardDeviation)
-		return appendFixed(b, dynamicsPer, uint64(d.Dynamics.Per))
-	})
+	b = appendMessage(b, declarationDynamics, func(b []byte) []byte { return appendDynamics(b, &d.Dynamics) })
 	b = appendMessage(b, declarationTolerance, func(b []byte) []byte {
 		b = appendFlag(b, toleranceHasLower, d.Tolerance.HasLower)
 		b = appendFlag(b, toleranceHasUpper, d.Tolerance.HasUpper)
 		b = appendDouble(b, toleranceLower, d.Tolerance.Lower)
 		return appendDouble(b, toleranceUpper, d.Tolerance.Upper)
 	})
-	return appendMessage(b, declarationRule, func(b []byte) []byte {
+	b = appendMessage(b, declarationRule, func(b []byte) []byte {
 		b = appendDouble(b, ruleConform, d.Rule.ConformProbability)
 		return appendDouble(b, ruleBreach, d.Rule.BreachProbability)
 	})
+	return appendFixed(b, declarationHorizon, uint64(d.BreachHorizon))
 }
 
 func appendPrior(b []byte, p *engine.Prior) []byte {
@@ -160,6 +164,8 @@ func decodeDeclaration(body []byte, d *engine.Declaration) error {
 			sound = decodeTolerance(m.bytes, &d.Tolerance) && sound
 		case text(declarationRule):
 			sound = decodeRule(m.bytes, &d.Rule) && sound
+		case fixed(declarationHorizon):
+			d.BreachHorizon = time.Duration(m.number)
 		}
 	}
 	if m.bad || !sound {
@@ -210,22 +216,6 @@ func decodeRepeatability(body []byte, r *engine.Repeatability) bool {
 			r.Guess = v
 		case fixed(repeatabilityWorth):
 			r.Worth = v
-		}
-	}
-	return !m.bad
-}
-
-func decodeDynamics(body []byte, d *engine.Dynamics) bool {
-	m := message{rest: body}
-	for m.next() {
-		switch m.tag {
-		case varint(dynamicsForm):
-			d.Form = engine.DynamicsForm(m.number)
-			m.bad = m.bad || m.number > uint64(engine.DynamicsRandomWalk)
-		case fixed(dynamicsSD):
-			d.StandardDeviation = math.Float64frombits(m.number)
-		case fixed(dynamicsPer):
-			d.Per = time.Duration(m.number)
 		}
 	}
 	return !m.bad

@@ -35,6 +35,9 @@ const (
 	fieldReasonWord   protowire.Number = 18
 	fieldQuantity     protowire.Number = 19
 	fieldDeclaration  protowire.Number = 20
+	fieldOccasion     protowire.Number = 21
+	fieldDevice       protowire.Number = 22
+	fieldRenewal      protowire.Number = 23
 )
 
 var castagnoli = crc32.MakeTable(crc32.Castagnoli)
@@ -51,6 +54,7 @@ type before struct {
 	requestID     string
 	instrument    engine.InstrumentID
 	unit          string
+	occasion      string
 }
 
 // start returns what stands before the first record of a chunk.
@@ -101,6 +105,12 @@ func (c *before) appendBody(b []byte, r *engine.Record) []byte {
 		}
 		b = appendTag(b, fieldDeclaration, protowire.BytesType)
 		return protowire.AppendBytes(b, appendDeclaration(nil, r.Declaration))
+	case engine.KindInstrument:
+		b = appendTag(b, fieldDevice, protowire.BytesType)
+		return protowire.AppendBytes(b, appendInstrument(nil, r.Instrument))
+	case engine.KindRenewal:
+		b = appendTag(b, fieldRenewal, protowire.BytesType)
+		return protowire.AppendBytes(b, appendRenewal(nil, r.Renewal))
 	}
 	return appendText(b, fieldQuantity, string(r.Quantity))
 }
@@ -120,6 +130,7 @@ func (c *before) appendReading(b []byte, r *engine.Record) []byte {
 	}
 	b = appendChange(b, fieldInstrument, y.Instrument, &c.instrument)
 	b = appendChange(b, fieldUnit, y.Unit, &c.unit)
+	b = appendChange(b, fieldOccasion, y.Occasion, &c.occasion)
 	b = appendReason(b, r.Reason)
 	b = appendText(b, fieldDetail, r.Detail)
 	b = appendUint(b, fieldPutThrough, uint64(r.PutThrough))
@@ -163,28 +174,44 @@ func (c *before) decodeBody(body []byte, r *engine.Record) error {
 	if m.bad || !known {
 		return errRecord
 	}
-	r.Number, r.Revision = c.number, c.revision
-	r.ReceiveTime, r.Principal, r.RequestID = c.receive, c.principal, c.requestID
 	return c.finish(r)
 }
 
 // finish takes what the record leaves out from the one before, and drops what
 // its kind doesn't use.
 func (c *before) finish(r *engine.Record) error {
+	all := *r
+	*r = engine.Record{
+		Kind: all.Kind, Number: c.number, Revision: c.revision,
+		ReceiveTime: c.receive, Principal: c.principal, RequestID: c.requestID,
+	}
 	switch r.Kind {
 	case engine.KindReading, engine.KindRefusal:
-		r.Reading.Time, r.Reading.Instrument, r.Reading.Unit = c.time, c.instrument, c.unit
+		r.Reading, r.PutThrough, r.Reason, r.Detail = all.Reading, all.PutThrough, all.Reason, all.Detail
+		r.Reading.Time, r.Reading.Instrument, r.Reading.Unit, r.Reading.Occasion = c.time, c.instrument, c.unit, c.occasion
 		r.Reading.HasTime = !r.Reading.HasTime // held time_assigned so far
-		r.Quantity, r.Declaration = "", nil
-		return nil
-	case engine.KindRetirement:
-		r.Declaration = nil
-		fallthrough
 	case engine.KindDeclaration:
-		r.Reading, r.PutThrough, r.Reason, r.Detail = engine.Reading{}, 0, "", ""
-		return nil
+		r.Quantity, r.Declaration = all.Quantity, all.Declaration
+	case engine.KindRetirement:
+		r.Quantity = all.Quantity
+	case engine.KindInstrument:
+		r.Instrument = all.Instrument
+		return whole(r.Instrument != nil && r.Instrument.Number != 0)
+	case engine.KindRenewal:
+		r.Renewal = all.Renewal
+		return whole(r.Renewal != nil)
+	default:
+		return fmt.Errorf("%w: its kind %d is unknown to this version", errRecord, r.Kind)
 	}
-	return fmt.Errorf("%w: its kind %d is unknown to this version", errRecord, r.Kind)
+	return nil
+}
+
+// whole returns an error of a record without the message that its kind is about.
+func whole(has bool) error {
+	if !has {
+		return fmt.Errorf("%w: it lacks what its kind is about", errRecord)
+	}
+	return nil
 }
 
 // decodeField returns false if the field has a value this version can't hold.
@@ -212,6 +239,12 @@ func (c *before) decodeField(m *message, r *engine.Record) bool {
 	case text(fieldDeclaration):
 		r.Declaration = new(engine.Declaration)
 		return decodeDeclaration(m.bytes, r.Declaration) == nil
+	case text(fieldDevice):
+		r.Instrument = new(engine.Instrument)
+		return decodeInstrument(m.bytes, r.Instrument)
+	case text(fieldRenewal):
+		r.Renewal = new(engine.Renewal)
+		return decodeRenewal(m.bytes, r.Renewal)
 	default:
 		return c.decodeReadingField(m, r)
 	}
@@ -235,6 +268,8 @@ func (c *before) decodeReadingField(m *message, r *engine.Record) bool {
 		c.instrument = engine.InstrumentID(m.bytes)
 	case text(fieldUnit):
 		c.unit = string(m.bytes)
+	case text(fieldOccasion):
+		c.occasion = string(m.bytes)
 	case varint(fieldReason):
 		if m.number == 0 || m.number > uint64(len(engine.ReadingReasons)) {
 			return false

@@ -18,6 +18,7 @@ const (
 	rowHasID          = 1 << 0
 	rowHasUncertainty = 1 << 1
 	squeezeReversed   = 1 << 2 // bytes are written last first
+	rowHasOrigin      = 1 << 3 // instrument or occasion aren't those of the row before
 	squeezeWidth      = 4      // shift of the number of bytes
 )
 
@@ -75,15 +76,31 @@ func appendRow(b []byte, r, before engine.Row, unit int64) []byte {
 	if r.HasUncertainty {
 		control |= rowHasUncertainty
 	}
+	if r.Instrument != before.Instrument || r.Occasion != before.Occasion {
+		control |= rowHasOrigin
+	}
 	b = append(b, control)
 	b = protowire.AppendVarint(b, protowire.EncodeZigZag(int64(r.Time-before.Time)/unit))
 	b = protowire.AppendVarint(b, protowire.EncodeZigZag(int64(r.Position-before.Position)))
+	if control&rowHasOrigin != 0 {
+		b = appendOrigin(b, r, before)
+	}
 	b = appendLow(b, change, control)
 	if r.HasUncertainty {
 		change, control := squeeze(r.Uncertainty, before.Uncertainty)
 		b = appendLow(append(b, control), change, control)
 	}
 	return b
+}
+
+// appendOrigin appends which instrument and occasion a row is of. A hash has no
+// bytes to save, so an occasion that changes is written whole.
+func appendOrigin(b []byte, r, before engine.Row) []byte {
+	if r.Occasion == before.Occasion {
+		return protowire.AppendVarint(b, uint64(r.Instrument)<<1)
+	}
+	b = protowire.AppendVarint(b, uint64(r.Instrument)<<1|1)
+	return binary.LittleEndian.AppendUint64(b, r.Occasion)
 }
 
 // squeeze returns the bits in which v differs from before, with their number
@@ -172,6 +189,13 @@ func takeRow(b []byte, before engine.Row, unit int64) (r engine.Row, n int) {
 	r.Position = before.Position + engine.Position(protowire.DecodeZigZag(position))
 	r.HasID = control&rowHasID != 0
 	r.HasUncertainty = control&rowHasUncertainty != 0
+	r.Instrument, r.Occasion = before.Instrument, before.Occasion
+	if control&rowHasOrigin != 0 {
+		if used = takeOrigin(b[n:], &r); used < 0 {
+			return r, -1
+		}
+		n += used
+	}
 	if r.Value, used = takeLow(b[n:], control, before.Value); used < 0 {
 		return r, -1
 	}
@@ -188,6 +212,23 @@ func takeRow(b []byte, before engine.Row, unit int64) (r engine.Row, n int) {
 		return r, -1
 	}
 	return r, n + used
+}
+
+// takeOrigin reads what appendOrigin wrote and returns its length, or -1.
+func takeOrigin(b []byte, r *engine.Row) int {
+	v, n := protowire.ConsumeVarint(b)
+	if n < 0 || v>>1 > math.MaxUint32 {
+		return -1
+	}
+	r.Instrument = engine.InstrumentNumber(v >> 1)
+	if v&1 == 0 {
+		return n
+	}
+	if len(b) < n+8 {
+		return -1
+	}
+	r.Occasion = binary.LittleEndian.Uint64(b[n:])
+	return n + 8
 }
 
 func takeLow(b []byte, control byte, before float64) (v float64, n int) {

@@ -78,10 +78,13 @@ func (l *Ledger) copyTo(name string) error {
 	return errors.Join(err, to.Close())
 }
 
-// copyLedger copies every group up to the acknowledged end, and verifies it.
+// copyLedger copies every group up to the acknowledged end, and verifies it. It
+// makes the bucket of instruments anew from the records.
 func (l *Ledger) copyLedger(to *bolt.DB) error {
 	end := l.acknowledged.Load()
 	c := newChain()
+	instruments := map[engine.InstrumentNumber]engine.Position{}
+	c.each = func(r *engine.Record) { noteLatest(instruments, r) }
 	var s slab
 	for c.next <= end.position {
 		if err := l.view(func(tx *bolt.Tx) error { return s.fill(tx, c.next, end.position) }); err != nil {
@@ -108,7 +111,10 @@ func (l *Ledger) copyLedger(to *bolt.DB) error {
 		return err
 	}
 	unswept := head{position: end.position, commit: end.commit, hash: end.hash}
-	return to.Update(func(tx *bolt.Tx) error { return tx.Bucket(headBucket).Put(headKey, unswept.append(nil)) })
+	return to.Update(func(tx *bolt.Tx) error {
+		return errors.Join(putFormat(tx, end.format), putInstruments(tx, instruments),
+			tx.Bucket(headBucket).Put(headKey, unswept.append(nil)))
+	})
 }
 
 // copyCheckpoint copies everything else.

@@ -26,7 +26,10 @@ func Verify(path string, w io.Writer) error {
 		return fmt.Errorf("verify %s: %w", path, err)
 	}
 	defer db.Close()
-	v := verifier{w: w, buckets: map[string]bool{}, chain: newChain(), head: &head{}, inventory: inventory{}}
+	v := verifier{
+		w: w, buckets: map[string]bool{}, chain: newChain(), head: &head{}, inventory: inventory{},
+		instruments: map[engine.InstrumentNumber]engine.Position{}, listed: map[engine.InstrumentNumber]engine.Position{},
+	}
 	v.chain.each = v.record
 	if err := v.run(file, db.Info().PageSize); err != nil {
 		v.report(err)
@@ -43,8 +46,9 @@ type verifier struct {
 	reported int
 
 	buckets map[string]bool
-	format  bool // its key was there
-	swept   bool // likewise
+	format  uint32 // of the file; 0: its key is missing
+	needed  uint32 // format that the records need
+	swept   bool   // likewise
 	head    *head
 	chain   *chain
 	lost    bool // until the next group begins
@@ -52,8 +56,10 @@ type verifier struct {
 
 	quantities, states, rows int
 
-	inventory inventory
-	scratch   []engine.Row
+	inventory   inventory
+	instruments map[engine.InstrumentNumber]engine.Position // by the ledger
+	listed      map[engine.InstrumentNumber]engine.Position // by their bucket
+	scratch     []engine.Row
 }
 
 // report writes a damage and keeps the first.
@@ -78,7 +84,7 @@ func (v *verifier) run(file *os.File, pageSize int) error {
 		return err
 	}
 	checkPages(file, m, v.report, v.element)
-	if !v.format {
+	if v.format == 0 {
 		return ErrForeign
 	}
 	for _, name := range buckets() {
@@ -93,7 +99,11 @@ func (v *verifier) run(file *os.File, pageSize int) error {
 		v.report(fmt.Errorf("%w: the sweep is missing", ErrDamaged))
 	}
 	if v.first == nil { // else it is known why something is missing
+		if v.needed > v.format {
+			v.report(fmt.Errorf("%w: its format is %d, but its records need %d", ErrDamaged, v.format, v.needed))
+		}
 		v.inventory.check(v.report)
+		checkInstruments(v.instruments, v.listed, v.report)
 	}
 	if v.reported > maxReported {
 		fmt.Fprintf(v.w, "and %d more\n", v.reported-maxReported)
@@ -129,6 +139,10 @@ func (v *verifier) value(bucket string, key, value []byte) (err error) {
 			return errKey
 		}
 		v.head, err = parseHead(value)
+	case string(instrumentsBucket):
+		n, at, err := parseInstrumentKey(key, value)
+		v.listed[n] = at
+		return err
 	case string(ledgerBucket):
 		v.ledger(key, value)
 	case string(metaBucket):
@@ -182,8 +196,12 @@ func positionOf(key []byte) engine.Position {
 
 func (v *verifier) metaKey(key, value []byte) error {
 	if string(key) == string(formatKey) {
-		v.format = true
-		return checkFormatValue(value)
+		v.format = formatFirst // at least
+		err := checkFormatValue(value)
+		if err == nil {
+			v.format = formatOf(value)
+		}
+		return err
 	}
 	if _, err := unseal(key, value); err != nil || string(key) != string(sweepKey) {
 		return err
@@ -248,7 +266,9 @@ func (v *verifier) segment(key, value []byte) error {
 
 // record notes what the checkpoint is to hold of a record.
 func (v *verifier) record(r *engine.Record) {
-	if !v.head.swept || r.Position > v.head.through || r.Kind == engine.KindRefusal {
+	noteLatest(v.instruments, r)
+	v.needed = max(v.needed, needs(r))
+	if !v.head.swept || r.Position > v.head.through || r.Kind == engine.KindRefusal || r.Kind == engine.KindInstrument {
 		return
 	}
 	s := v.inventory.of(r.Number)

@@ -47,7 +47,10 @@ var _ engine.Ledger = (*Memory)(nil)
 // NewMemory returns an empty ledger. Without a clock, the first group commits
 // at 2026-01-01T00:00:01Z and each further one a second later.
 func NewMemory(now func() time.Time) *Memory {
-	s := &store{now: now, states: map[engine.QuantityNumber]engine.CheckpointEntry{}}
+	s := &store{
+		now: now, states: map[engine.QuantityNumber]engine.CheckpointEntry{},
+		instruments: map[engine.InstrumentNumber]engine.Position{},
+	}
 	if now == nil {
 		start := time.Date(2026, 1, 1, 0, 0, 0, 0, time.UTC)
 		s.now = func() time.Time { return start.Add(time.Duration(s.appends) * time.Second) }
@@ -145,6 +148,11 @@ func (m *Memory) Checkpoint(fn func(engine.CheckpointEntry) error) (engine.Sweep
 	return sweep, nil
 }
 
+// Instruments implements engine.Ledger.
+func (m *Memory) Instruments(fn func(*engine.Record) error) error {
+	return m.Records(m.store.latest(), fn)
+}
+
 // Close implements engine.Ledger; what is appended stays for Reopen.
 func (m *Memory) Close() error {
 	m.mu.Lock()
@@ -181,6 +189,8 @@ type store struct {
 	states  map[engine.QuantityNumber]engine.CheckpointEntry
 	chunks  []chunk // in the order of their keys
 	sweep   *engine.Sweep
+	// instruments has the position of the latest record of each.
+	instruments map[engine.InstrumentNumber]engine.Position
 }
 
 func (s *store) append(g *engine.Group) error {
@@ -218,7 +228,21 @@ func (s *store) stamp(records []engine.Record) {
 	for i := range records {
 		records[i].Position = engine.Position(len(s.records) + i + 1)
 		records[i].CommitTime = at
+		if r := &records[i]; r.Kind == engine.KindInstrument {
+			s.instruments[r.Instrument.Number] = r.Position
+		}
 	}
+}
+
+// latest returns the position of the latest record of each instrument, by number.
+func (s *store) latest() []engine.Position {
+	s.mu.RLock()
+	defer s.mu.RUnlock()
+	at := make([]engine.Position, 0, len(s.instruments))
+	for _, n := range slices.Sorted(maps.Keys(s.instruments)) {
+		at = append(at, s.instruments[n])
+	}
+	return at
 }
 
 func (s *store) keep(e engine.CheckpointEntry) {
