@@ -55,6 +55,7 @@ func (l *Ledger) stamp(g *engine.Group) (*head, error) {
 			h.commit = max(h.commit, before.commit)
 		}
 	}
+	clear(l.instruments)
 	for i := range g.Records {
 		r := &g.Records[i]
 		if err := writable(r); err != nil {
@@ -63,6 +64,10 @@ func (l *Ledger) stamp(g *engine.Group) (*head, error) {
 		h.position++
 		r.Position, r.CommitTime = h.position, h.commit
 		h.format = max(h.format, needs(r))
+		noteLatest(l.instruments, r)
+	}
+	for i := range g.Checkpoint {
+		h.format = max(h.format, entryNeeds(&g.Checkpoint[i]))
 	}
 	if s := g.Sweep; s != nil {
 		h.swept, h.segment, h.through = true, s.Segment, s.Through
@@ -82,16 +87,6 @@ func writable(r *engine.Record) error {
 		return errors.New("a record of a renewal has none")
 	}
 	return nil
-}
-
-// needs returns the version of the format that a record needs: a program of
-// version 1 would refuse a record of a newer kind as damage, and believe that
-// readings of one occasion were independent.
-func needs(r *engine.Record) uint32 {
-	if r.Kind >= engine.KindInstrument || r.Reading.Occasion != "" {
-		return formatInstruments
-	}
-	return formatFirst
 }
 
 // commit writes the group, encoded before, in one transaction. A panic of
@@ -135,7 +130,7 @@ func (l *Ledger) guard(tx *bolt.Tx, g *engine.Group) *bolt.Tx {
 	if g.Sweep != nil {
 		summary = len(g.Sweep.Summary)
 	}
-	bound := tx.Size() + atLeast + int64(4*len(l.encoder.buf)+summary) + perEntry*int64(len(g.Checkpoint))
+	bound := tx.Size() + atLeast + int64(4*len(l.encoder.buf)+summary) + perEntry*int64(len(g.Checkpoint)+len(l.instruments))
 	if l.stale || bound > l.mapped {
 		return nil
 	}
@@ -168,7 +163,7 @@ func (l *Ledger) put(tx *bolt.Tx, g *engine.Group, h *head) (ledgerBytes, checkp
 			return 0, 0, err
 		}
 	}
-	if err := putInstruments(tx, latestOf(g.Records)); err != nil {
+	if err := putInstruments(tx, l.instruments); err != nil {
 		return 0, 0, err
 	}
 	if err := tx.Bucket(headBucket).Put(headKey, h.append(nil)); err != nil {

@@ -38,7 +38,7 @@ func written(t *testing.T) (image []byte, records []engine.Record) {
 		ledgertest.Readings(1, rows[:1]),
 		append(ledgertest.Readings(1, rows[1:]), ledgertest.Records(100, 21)...),
 		ledgertest.Records(200, 1),
-		ledgertest.Records(300, 30),
+		append(ledgertest.Records(300, 30), ledgertest.FurtherRecords(0, 24)...),
 	} {
 		g := &engine.Group{Records: group}
 		if i == 2 {
@@ -60,18 +60,21 @@ func written(t *testing.T) (image []byte, records []engine.Record) {
 	return image, records
 }
 
-// read opens a ledger and reads all of it.
-func read(path string) (records []engine.Record, rows []engine.Row, err error) {
+// read opens a ledger and reads all of it; the instruments come last.
+func read(path string) (records []engine.Record, rows []engine.Row, instruments []engine.Record, err error) {
 	l, err := persist.Open(persist.Options{Path: path})
 	if err != nil {
-		return nil, nil, err
+		return nil, nil, nil, err
 	}
 	defer l.Close()
 	err = l.Replay(1, func(r *engine.Record) error { records = append(records, *r); return nil })
 	if err == nil {
 		err = l.Rows(1, engine.MinInstant, func(c []engine.Row) error { rows = append(rows, c...); return nil })
 	}
-	return records, rows, err
+	if err == nil {
+		err = l.Instruments(func(r *engine.Record) error { instruments = append(instruments, *r); return nil })
+	}
+	return records, rows, instruments, err
 }
 
 // live tells which pages of the image the last transaction refers to.
@@ -124,7 +127,7 @@ func TestFlippedByteIsFound(t *testing.T) {
 			}
 			write(t, path, at, image[at]^1<<random.IntN(8))
 			verdict := persist.Verify(path, io.Discard)
-			gotRecords, gotRows, err := read(path)
+			gotRecords, gotRows, gotInstruments, err := read(path)
 			if verdict != nil && !errors.Is(verdict, persist.ErrDamaged) && !errors.Is(verdict, persist.ErrForeign) && !errors.Is(verdict, persist.ErrNewer) {
 				t.Errorf("byte %d: %v", at, verdict)
 			}
@@ -139,6 +142,9 @@ func TestFlippedByteIsFound(t *testing.T) {
 			}
 			if d := cmp.Diff(rows[:min(len(rows), len(gotRows))], gotRows, cmpopts.EquateEmpty()); d != "" {
 				t.Errorf("byte %d: wrong rows (-want +got):\n%s", at, d)
+			}
+			if d := cmp.Diff(ledgertest.LatestOf(records), gotInstruments); d != "" && err == nil {
+				t.Errorf("byte %d: wrong instruments (-want +got):\n%s", at, d)
 			}
 			write(t, path, at, image[at])
 			if verdict != nil {
@@ -307,7 +313,7 @@ func TestOpenRefuses(t *testing.T) {
 		t.Run(c.name, func(t *testing.T) {
 			path := filepath.Join(t.TempDir(), persist.FileName)
 			restore(t, path, c.image)
-			if _, _, err := read(path); !errors.Is(err, c.want) {
+			if _, _, _, err := read(path); !errors.Is(err, c.want) {
 				t.Errorf("Open: %v; want %v", err, c.want)
 			}
 			if err := persist.Verify(path, io.Discard); err == nil {

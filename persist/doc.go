@@ -23,7 +23,9 @@
 // is refused as damaged, though the older meta page leads to a sound state: the
 // torn one can't be told from one that was acknowledged and has rotted since.
 //
-// # Format, version 1
+// # Format, versions 1 and 2
+//
+// Version 2 is version 1 with what is marked (2).
 //
 // Numbers in keys are big-endian, so that they sort; all others little-endian.
 // "varint" and messages are those of protobuf. crc is CRC-32C (Castagnoli).
@@ -33,6 +35,7 @@
 //	meta        "sweep"                      sealed: segment 4, through 8, summary
 //	head        "head"                       sealed: position 8, commit time 8, hash 32, swept 1, segment 4, through 8
 //	ledger      position 8                   chunk, see below
+//	instruments number 4                     sealed: position 8 of its latest record (2)
 //	quantities  number 4                     sealed: message Quantity, see quantity.go
 //	states      number 4                     sealed: through 8, state
 //	segments    segment 4, number 4, chunk 4 sealed: rows, see below
@@ -43,6 +46,9 @@
 // shorter ledger. Its bucket lies within the root page, which every commit
 // writes anyway. Rows of segments after that of the sweep belong to a sweep
 // that was interrupted; they are deleted by the next commit of a new handle.
+//
+// The bucket of instruments is made with the first record of one, and a position
+// is written in the transaction of the record that it leads to.
 //
 // A group of records is one or more chunks, each under the position of its
 // first record, at most 996 bytes unless it has only one record:
@@ -73,7 +79,8 @@
 // number 0, revision 1, the commit time for both times, and empty texts. All
 // others are left out where they are zero or empty.
 //
-//	 1  varint  kind: 0 reading, 1 refusal, 2 declaration, 3 retirement
+//	 1  varint  kind: 0 reading, 1 refusal, 2 declaration, 3 retirement,
+//	            4 instrument (2), 5 renewal (2)
 //	 2* varint  number of the quantity
 //	 7* sint64  receive time, as a difference
 //	 8* string  principal
@@ -92,19 +99,31 @@
 //	16  varint  position of the refusal put through
 //	17  string  quantity ID, if it has no number
 //	18  string  reason, if it isn't in that list
+//	21* string  occasion (2)
 //	            of declarations and retirements:
 //	19  string  quantity ID
-//	20  message Declaration, see quantity.go
+//	20  message Declaration, see quantity.go and dynamics.go; its fields of
+//	            slope, wander, mean, half-life and horizon are (2)
+//	            of instruments:
+//	22  message Instrument, whole, see instrument.go (2)
+//	            of renewals, and of what withdraws one:
+//	23  message Renewal, whole, see renewal.go (2)
 //
 // The rows of a chunk, in canonical order:
 //
 //	rows 1 | scale 1 | earliest time 8 | latest time 8, then of each row
-//	control 1: bit 0 has an ID, bit 1 has an uncertainty, bit 2 reversed, bits 4 to 7 n
+//	control 1: bit 0 has an ID, bit 1 has an uncertainty, bit 2 reversed,
+//	           bit 3 has an origin (2), bits 4 to 7 n
 //	sint64 varint: time less that of the row before (of the first: earliest), in units
 //	               of 1 s, 1 ms, 1 us or 1 ns by scale 0 to 3
 //	sint64 varint: position less that of the row before
+//	with an origin (2): varint: twice the number of the instrument, and 1 if the
+//	               occasion changes; then the hash of the occasion 8
 //	n bytes: the value's bits xor those of the row before; reversed: byte by byte
 //	with an uncertainty: control 1 (bits 2 and 4 to 7) | n bytes, likewise
+//
+// A row without an origin has that of the row before; before the first stands
+// instrument 0, occasion 0. So rows that name none are those of version 1.
 //
 // # Upgrades
 //
@@ -115,7 +134,14 @@
 // value if the rest can be read without it, of the file if not. A program
 // reads all versions up to its own and refuses newer ones with ErrNewer,
 // without touching the file. testdata/format1.golden holds the bytes of
-// version 1.
+// version 1, format2.golden those that version 2 adds.
+//
+// A file begins as version 1 and becomes version 2 with the first record that
+// needs it: of an instrument or a renewal, of a reading with an occasion, of a
+// declaration with a linear trend, mean reversion or a horizon. It stays that. So a
+// program that writes version 2 goes on with a file of version 1 as it is, a
+// program that knows only version 1 may take it back until then, and from then on
+// refuses it with ErrNewer, as it would believe something else.
 //
 // # Damage
 //
@@ -131,7 +157,9 @@
 // declaration, number by number, so Checkpoint finds the lack of either, and of
 // a number within. That of the last number, and of rows, only Verify finds: it
 // compares the rows of complete segments with the readings that the sweep
-// includes.
+// includes, but for instrument and occasion: how those are numbered and hashed is
+// the engine's. Instruments finds a number that lacks, but not the last, or a position
+// of another record; Verify compares the bucket with the ledger.
 //
 // # Choices
 //

@@ -169,6 +169,9 @@ func testFailedCommit(t *testing.T, mapping int) {
 		if i == 0 {
 			g.Records = ledgertest.Readings(1, ledgertest.Rows(1, 1000))
 		}
+		if i == 2 {
+			g.Records = append(g.Records, ledgertest.FurtherRecords(0, 40)...)
+		}
 		if i == 3 {
 			g.Checkpoint = append(ledgertest.Entries(1, 3000), engine.CheckpointEntry{Number: 1, Segment: 1, Rows: ledgertest.Rows(1, 100)})
 			g.Sweep = &engine.Sweep{Segment: 1, Through: 100}
@@ -182,8 +185,9 @@ func testFailedCommit(t *testing.T, mapping int) {
 		t.Fatal(err)
 	}
 	before := l.Stats()
+	sameInstruments(t, written, l)
 	for range 2 {
-		err := l.Append(&engine.Group{Records: ledgertest.Records(5000, 1)})
+		err := l.Append(&engine.Group{Records: ledgertest.FurtherRecords(0, 1)})
 		if !errors.Is(err, engine.ErrStorageFailed) || errors.Is(err, engine.ErrDiskFull) {
 			t.Fatalf("append: %v; want ErrStorageFailed", err)
 		}
@@ -198,6 +202,7 @@ func testFailedCommit(t *testing.T, mapping int) {
 	sameRecords(t, written, l)
 	fresh := openAt(t, path)
 	sameRecords(t, written, fresh)
+	sameInstruments(t, written, fresh)
 	if s := fresh.Stats(); s.Hash != before.Hash || s.Through != 100 {
 		t.Errorf("the salvaged ledger has hash %x and sweep %d, want %x and 100", s.Hash, s.Through, before.Hash)
 	}

@@ -1,7 +1,6 @@
 package persist
 
 import (
-	"encoding/binary"
 	"errors"
 	"fmt"
 	"io/fs"
@@ -101,20 +100,6 @@ func format(path string) error {
 	return errors.Join(err, db.Close())
 }
 
-// Versions of the whole file. A file has the lowest that what it holds needs,
-// so that an older program goes on reading one that has nothing new.
-const (
-	formatFirst       = 1
-	formatInstruments = 2 // has instruments, renewals or occasions
-)
-
-func putFormat(tx *bolt.Tx, version uint32) error {
-	return tx.Bucket(metaBucket).Put(formatKey, binary.BigEndian.AppendUint32([]byte(magic), version))
-}
-
-// formatOf returns the version in a value that checkFormatValue accepts.
-func formatOf(v []byte) uint32 { return binary.BigEndian.Uint32(v[len(magic):]) }
-
 // openFile opens the bbolt file, which must exist. bbolt can panic on a damaged
 // one. NoFreelistSync is set for as long as the file may be a foreign one: else
 // bbolt would write a freelist into it.
@@ -177,8 +162,8 @@ func checkFormatValue(v []byte) error {
 	if len(v) != len(magic)+4 || string(v[:len(magic)]) != magic {
 		return ErrForeign
 	}
-	if version := formatOf(v); version > formatInstruments {
-		return fmt.Errorf("%w: its format is %d, this program's %d", ErrNewer, version, formatInstruments)
+	if version := formatOf(v); version > formatSecond {
+		return fmt.Errorf("%w: its format is %d, this program's %d", ErrNewer, version, formatSecond)
 	}
 	return nil
 }

@@ -16,22 +16,6 @@ import (
 // The bucket of instruments leads to the latest record of each, so that a start
 // that replays only the end of the ledger knows those declared before.
 
-// latestOf returns the position of the latest record of each instrument among
-// records that are stamped; nil, as nearly always, if there is none.
-func latestOf(records []engine.Record) map[engine.InstrumentNumber]engine.Position {
-	var latest map[engine.InstrumentNumber]engine.Position
-	for i := range records {
-		if records[i].Kind != engine.KindInstrument {
-			continue
-		}
-		if latest == nil {
-			latest = map[engine.InstrumentNumber]engine.Position{}
-		}
-		noteLatest(latest, &records[i])
-	}
-	return latest
-}
-
 // noteLatest takes note of a record, if it is of an instrument, as the latest.
 func noteLatest(latest map[engine.InstrumentNumber]engine.Position, r *engine.Record) {
 	if r.Kind == engine.KindInstrument {

@@ -89,10 +89,12 @@ type Ledger struct {
 	mu      sync.Mutex // guards all below; held for a whole Append
 	encoder *encoder
 	values  []byte // encoded checkpoint of the group being appended
-	failure error  // of an earlier Append
-	closed  bool
-	stuck   bool // a panic left db's locks held
-	stale   bool // rows of an incomplete sweep are still to be deleted
+	// instruments has the latest record of each in the group being appended.
+	instruments map[engine.InstrumentNumber]engine.Position
+	failure     error // of an earlier Append
+	closed      bool
+	stuck       bool // a panic left db's locks held
+	stale       bool // rows of an incomplete sweep are still to be deleted
 
 	frozenMu sync.Mutex // guards frozen; taken after mu if both
 	frozen   *bolt.Tx   // the state before a failed commit
@@ -131,7 +133,7 @@ func Open(o Options) (*Ledger, error) {
 	if err := ensure(o.Path); err != nil {
 		return nil, fmt.Errorf("open %s: %w", o.Path, err)
 	}
-	l := &Ledger{options: o, encoder: newEncoder()}
+	l := &Ledger{options: o, encoder: newEncoder(), instruments: map[engine.InstrumentNumber]engine.Position{}}
 	if err := l.open(); err != nil {
 		l.release()
 		return nil, fmt.Errorf("open %s: %w", o.Path, err)

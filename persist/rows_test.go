@@ -22,6 +22,10 @@ func drawRow(t *rapid.T) engine.Row {
 	if rapid.Bool().Draw(t, "uncertainty") {
 		r.HasUncertainty, r.Uncertainty = true, drawFloat(t)
 	}
+	if rapid.Bool().Draw(t, "origin") {
+		r.Instrument = engine.InstrumentNumber(rapid.OneOf(rapid.Uint32(), rapid.Uint32Range(0, 2)).Draw(t, "instrument"))
+		r.Occasion = rapid.OneOf(rapid.Uint64(), rapid.Uint64Range(0, 2)).Draw(t, "occasion")
+	}
 	return r
 }
 
@@ -53,6 +57,7 @@ func TestRowsRoundTrip(t *testing.T) {
 func FuzzDecodeRows(f *testing.F) {
 	f.Add(appendRows(nil, ledgertest.Rows(1, 5)))
 	f.Add(appendRows(nil, ledgertest.Rows(1<<40, 128)))
+	f.Add(appendRows(nil, ledgertest.OriginRows(1, 128)))
 	f.Add(appendRows(nil, []engine.Row{{Time: math.MinInt64, Value: math.Inf(1)}, {Time: math.MaxInt64, Position: 1}}))
 	f.Fuzz(func(t *testing.T, body []byte) {
 		c, err := parseRowsBody(body)

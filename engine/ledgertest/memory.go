@@ -204,6 +204,9 @@ func (s *store) append(g *engine.Group) error {
 	s.mu.Lock()
 	defer s.mu.Unlock()
 	s.appends = n
+	for i := range g.Records {
+		err = errors.Join(err, fit(&g.Records[i]))
+	}
 	if err != nil {
 		return fmt.Errorf("append group %d: %w", n, err)
 	}
@@ -216,6 +219,16 @@ func (s *store) append(g *engine.Group) error {
 		w := *g.Sweep
 		w.Summary = slices.Clone(w.Summary)
 		s.sweep = &w
+	}
+	return nil
+}
+
+// fit tells whether a record is of a known kind and has what that is about.
+func fit(r *engine.Record) error {
+	known := engine.KindReading <= r.Kind && r.Kind <= engine.KindRenewal
+	instrument := r.Kind != engine.KindInstrument || r.Instrument != nil && r.Instrument.Number != 0
+	if !known || !instrument || r.Kind == engine.KindRenewal && r.Renewal == nil {
+		return fmt.Errorf("a record of kind %d is of no use", r.Kind)
 	}
 	return nil
 }

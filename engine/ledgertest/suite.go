@@ -28,6 +28,8 @@ func Run(t *testing.T, create func(t *testing.T) Store) {
 		{"append stamps positions and times", testStamps},
 		{"replay gives back every record from any position", testReplay},
 		{"records are found by position", testRecords},
+		{"instruments are the latest of each number", testInstruments},
+		{"a record without what it is about is refused", testUnfit},
 		{"the checkpoint is the last of each quantity", testCheckpoint},
 		{"rows show complete segments only", testRows},
 		{"rows of an interrupted sweep are written anew", testInterrupted},
@@ -148,6 +150,7 @@ func testEmpty(t *testing.T, open Store) {
 		l := open(t)
 		want(t, "records", nil, Replayed(t, l, 1))
 		want(t, "checkpoint", Snapshot{}, Checkpointed(t, l))
+		want(t, "instruments", nil, Instruments(t, l))
 		want(t, "rows", nil, AllRows(t, l, 1, engine.MinInstant))
 		if err := l.Records([]engine.Position{1}, func(*engine.Record) error { return nil }); err == nil {
 			t.Fatal("position 1 of an empty ledger was found")
@@ -189,7 +192,7 @@ func testReplay(t *testing.T, open Store) {
 		l.Close()
 		l = open(t)
 	}
-	written = append(written, appendAll(t, l, &engine.Group{Records: Records(703, 5)})...)
+	written = append(written, appendAll(t, l, &engine.Group{Records: Records(703, 5)}, &engine.Group{Records: FurtherRecords(0, 300)})...)
 	want(t, "records", written, Replayed(t, l, 1))
 }
 
@@ -240,13 +243,20 @@ func quantity(n engine.QuantityNumber) *engine.Quantity {
 	}
 }
 
+// renewed returns a quantity with a renewal, and with one that was withdrawn.
+func renewed(n engine.QuantityNumber) *engine.Quantity {
+	q := quantity(n)
+	q.Declaration, q.Renewals = *moving(2), []engine.Renewal{*renewal(1), *renewal(7)}
+	return q
+}
+
 func testCheckpoint(t *testing.T, open Store) {
 	l := open(t)
 	rows := Rows(1, 19)
 	appendAll(t, l,
 		&engine.Group{Records: Readings(1, rows[:9]), Checkpoint: []engine.CheckpointEntry{
 			{Number: 2, Quantity: quantity(2), State: []byte("old"), Through: 3},
-			{Number: 1, Quantity: quantity(1)},
+			{Number: 1, Quantity: renewed(1)},
 		}},
 		&engine.Group{Records: Readings(1, rows[9:18]), Checkpoint: []engine.CheckpointEntry{
 			{Number: 2, State: []byte("new"), Through: 9},
@@ -258,7 +268,7 @@ func testCheckpoint(t *testing.T, open Store) {
 		}})
 	wanted := Snapshot{
 		Entries: []engine.CheckpointEntry{
-			{Number: 1, Quantity: quantity(1), State: []byte("one"), Through: 18},
+			{Number: 1, Quantity: renewed(1), State: []byte("one"), Through: 18},
 			{Number: 2, Quantity: quantity(2), State: []byte("new"), Through: 9},
 			{Number: 3, Quantity: quantity(3), State: []byte{}, Through: 8},
 		},
@@ -289,7 +299,7 @@ func rowsEntry(n engine.QuantityNumber, segment, chunk uint32, rows []engine.Row
 
 func testRows(t *testing.T, open Store) {
 	l := open(t)
-	rows := Rows(1, 500)
+	rows := OriginRows(1, 500)
 	appendAll(t, l,
 		&engine.Group{Records: Readings(1, rows[:200])},
 		&engine.Group{Records: Readings(3, rows[200:201])},
@@ -345,7 +355,7 @@ func testInterrupted(t *testing.T, open Store) {
 
 func testReaderError(t *testing.T, open Store) {
 	l := open(t)
-	appendAll(t, l, &engine.Group{Records: Readings(1, Rows(1, 8)), Checkpoint: append(Entries(2, 8),
+	appendAll(t, l, &engine.Group{Records: append(Readings(1, Rows(1, 8)), FurtherRecords(0, 7)...), Checkpoint: append(Entries(2, 8),
 		rowsEntry(1, 1, 0, Rows(1, 4)), rowsEntry(1, 1, 1, Rows(5, 4)),
 	), Sweep: &engine.Sweep{Segment: 1, Through: 8}})
 	stop := errors.New("enough")
@@ -360,6 +370,7 @@ func testReaderError(t *testing.T, open Store) {
 		{"Rows", func(fn func() error) error {
 			return l.Rows(1, engine.MinInstant, func([]engine.Row) error { return fn() })
 		}},
+		{"Instruments", func(fn func() error) error { return l.Instruments(func(*engine.Record) error { return fn() }) }},
 		{"Checkpoint", func(fn func() error) error {
 			_, err := l.Checkpoint(func(engine.CheckpointEntry) error { return fn() })
 			return err
@@ -415,7 +426,7 @@ func readUntil(t *testing.T, l engine.Ledger, stop chan struct{}) {
 			}
 			from += engine.Position(len(rows))
 			return nil
-		}), l.Records([]engine.Position{next - 1, 1}, func(*engine.Record) error { return nil }))
+		}), l.Instruments(func(*engine.Record) error { return nil }), l.Records([]engine.Position{next - 1, 1}, func(*engine.Record) error { return nil }))
 		if err != nil {
 			t.Error(err)
 			return
@@ -436,6 +447,9 @@ func testClosed(t *testing.T, open Store) {
 	}
 	if err := l.Replay(1, func(*engine.Record) error { return nil }); err == nil {
 		t.Error("a closed ledger replayed")
+	}
+	if err := l.Instruments(func(*engine.Record) error { return nil }); err == nil {
+		t.Error("a closed ledger gave its instruments")
 	}
 	if l = open(t); len(Replayed(t, l, 1)) != 3 {
 		t.Error("the refused record is in the ledger")
