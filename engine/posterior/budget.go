@@ -28,27 +28,28 @@ type Part struct {
 // f has seen no reading yet. It costs the square of the number of states for
 // each source and step.
 func (f *Filter) Account() {
-	f.account = &account{n: f.n}
-	f.account.renew(f.d[0], f.motion.Form == MotionTrend, 0)
-	for k := 1; k < f.n; k++ {
-		if f.motion.Form == MotionTrend && k == 1 {
-			f.account.noise(SourceSlopePrior, 1, 0, 1, f.d[1])
-		} else {
-			f.account.noise(SourceEntry, k, 0, k, f.d[k])
-		}
+	a := &account{trend: f.motion.Form == MotionTrend}
+	a.resize(f.n)
+	f.account = a
+	a.noise(SourcePrior, 0, 0, 0, f.d[0])
+	if a.trend {
+		a.noise(SourceSlopePrior, 1, 0, 1, f.d[1])
+	}
+	for k := f.first(); k < f.n; k++ {
+		a.noise(SourceEntry, k, 0, k, f.d[k])
 	}
 }
 
 // Parts returns what each source contributes to the level's variance: they sum to
-// it. Without an account there is none.
+// it. Without an account, and while the level is vague, there is none.
 func (f *Filter) Parts() []Part {
-	if f.account == nil {
+	if f.account == nil || f.vague {
 		return nil
 	}
 	var all []Part
 	for i := range f.account.shares {
 		s := &f.account.shares[i]
-		if v := s.at(0, 0); v != 0 {
+		if v := s.matrix[0]; v != 0 {
 			all = append(all, Part{Source: s.source, State: s.state, Label: s.label, Variance: v})
 		}
 	}
@@ -61,8 +62,11 @@ func (f *Filter) Parts() []Part {
 // form of Joseph (Bucy & Joseph 1968, Filtering for Stochastic Processes, from
 // memory), which holds for any gain.
 type account struct {
+	trend  bool // state 1 is the slope
 	n      int
 	shares []share
+	vector []float64 // n, for the caller of a method
+	space  []float64 // n, for use within one
 }
 
 // share is one source's covariance matrix.
@@ -70,18 +74,36 @@ type share struct {
 	source SourceKind
 	state  int
 	label  int
-	n      int
-	matrix []float64 // n by n
+	matrix []float64 // n by n, by rows
 }
 
-func (s *share) at(i, j int) float64 { return s.matrix[i*s.n+j] }
-
 func (a *account) clone() *account {
-	c := &account{n: a.n, shares: slices.Clone(a.shares)}
+	c := &account{trend: a.trend, shares: slices.Clone(a.shares)}
 	for i := range c.shares {
 		c.shares[i].matrix = slices.Clone(c.shares[i].matrix)
 	}
+	c.n, c.vector, c.space = a.n, make([]float64, a.n), make([]float64, a.n)
 	return c
+}
+
+// resize makes room for n states.
+func (a *account) resize(n int) {
+	for i := range a.shares {
+		s := &a.shares[i]
+		wider := make([]float64, n*n)
+		for row := range a.n {
+			copy(wider[row*n:], s.matrix[row*a.n:(row+1)*a.n])
+		}
+		s.matrix = wider
+	}
+	a.n, a.vector, a.space = n, make([]float64, n), make([]float64, n)
+}
+
+// noise adds variance from a source to the state at.
+func (a *account) noise(source SourceKind, state, label, at int, variance float64) {
+	if variance != 0 {
+		a.of(source, state, label).matrix[at*a.n+at] += variance
+	}
 }
 
 // of returns the share of a source, which is added if there is none.
@@ -91,102 +113,93 @@ func (a *account) of(source SourceKind, state, label int) *share {
 			return s
 		}
 	}
-	a.shares = append(a.shares, share{source: source, state: state, label: label, n: a.n, matrix: make([]float64, a.n*a.n)})
+	a.shares = append(a.shares, share{source, state, label, make([]float64, a.n*a.n)})
 	return &a.shares[len(a.shares)-1]
-}
-
-// noise adds variance from a source to the state at.
-func (a *account) noise(source SourceKind, state, label, at int, variance float64) {
-	if variance == 0 {
-		return
-	}
-	s := a.of(source, state, label)
-	s.matrix[at*s.n+at] += variance
 }
 
 // add takes in a further state.
 func (a *account) add(n, state int, variance float64) {
-	for i := range a.shares {
-		s := &a.shares[i]
-		wider := make([]float64, n*n)
-		for row := range s.n {
-			copy(wider[row*n:], s.matrix[row*s.n:(row+1)*s.n])
-		}
-		s.n, s.matrix = n, wider
-	}
-	a.n = n
+	a.resize(n)
 	a.noise(SourceEntry, state, 0, state, variance)
 }
 
-// transform replaces each share S by T S T', where T differs from the identity in row
-// k only.
-func (a *account) transform(k int, row func(s *share, column int) float64) {
+// zeros returns a.vector, cleared.
+func (a *account) zeros() []float64 {
+	clear(a.vector)
+	return a.vector
+}
+
+// transform replaces each share S by T S T', where T is the identity but for row
+// k, which is t.
+func (a *account) transform(k int, t []float64) {
 	for i := range a.shares {
-		s := &a.shares[i]
-		changed := make([]float64, s.n)
-		for j := range s.n {
-			changed[j] = row(s, j)
-		}
-		for j := range s.n {
-			s.matrix[k*s.n+j] = changed[j]
-		}
-		for j := range s.n {
-			changed[j] = row(&share{n: s.n, matrix: transposed(s)}, j)
-		}
-		for j := range s.n {
-			s.matrix[j*s.n+k] = changed[j]
+		m := a.shares[i].matrix
+		a.before(m, t)
+		copy(m[k*a.n:], a.space)
+		for j := 0; j < len(m); j += a.n {
+			m[j+k] = inner(m[j:j+a.n], t)
 		}
 	}
 }
 
-func transposed(s *share) []float64 {
-	t := make([]float64, len(s.matrix))
-	for i := range s.n {
-		for j := range s.n {
-			t[j*s.n+i] = s.matrix[i*s.n+j]
+// before puts v' M into a.space.
+func (a *account) before(m, v []float64) {
+	clear(a.space)
+	for i, x := range v {
+		if x == 0 {
+			continue
+		}
+		for j, y := range m[i*a.n : (i+1)*a.n] {
+			a.space[j] += x * y
 		}
 	}
-	return t
+}
+
+// inner returns a' b.
+func inner(a, b []float64) float64 {
+	sum := 0.0
+	for i, x := range a {
+		sum += x * b[i]
+	}
+	return sum
 }
 
 // glide adds h times the slope's error to the level's.
 func (a *account) glide(h float64) {
-	a.transform(0, func(s *share, j int) float64 { return s.at(0, j) + h*s.at(1, j) })
+	t := a.zeros()
+	t[0], t[1] = 1, h
+	a.transform(0, t)
 }
 
 // evolve multiplies the error of a state by left and adds noise of its process.
 func (a *account) evolve(k int, left, q float64) {
 	if left != 1 {
-		a.transform(k, func(s *share, j int) float64 { return left * s.at(k, j) })
+		t := a.zeros()
+		t[k] = left
+		a.transform(k, t)
 	}
 	source := SourceProcess
 	switch {
 	case k == 0:
 		source = SourceWalk
-	case k == 1 && a.slope():
+	case k == 1 && a.trend:
 		source = SourceWander
 	}
 	a.noise(source, k, 0, k, q)
 }
 
-// slope tells whether state 1 is a slope.
-func (a *account) slope() bool {
-	return slices.ContainsFunc(a.shares, func(s share) bool { return s.source == SourceSlopePrior })
-}
-
 // redraw draws a state anew.
 func (a *account) redraw(state int, variance float64) {
-	a.transform(state, func(*share, int) float64 { return 0 })
+	a.transform(state, a.zeros())
 	a.noise(SourceEntry, state, 0, state, variance)
 }
 
 // renew draws level and slope anew.
-func (a *account) renew(level float64, trend bool, slope float64) {
-	a.transform(0, func(*share, int) float64 { return 0 })
+func (a *account) renew(level, slope float64) {
+	a.transform(0, a.zeros())
 	a.noise(SourcePrior, 0, 0, 0, level)
-	if trend {
-		a.transform(1, func(*share, int) float64 { return 0 })
-		a.of(SourceSlopePrior, 1, 0)
+	if a.trend {
+		a.transform(1, a.zeros())
 		a.noise(SourceSlopePrior, 1, 0, 1, slope)
 	}
 }
@@ -195,42 +208,42 @@ func (a *account) renew(level float64, trend bool, slope float64) {
 // a label.
 func (a *account) update(label int, h, gain []float64, total, variance float64) {
 	white := a.of(SourceWhite, 0, label)
-	for i := range a.shares {
-		a.shares[i].press(h, gain, total)
+	k := a.vector
+	for i, g := range gain {
+		k[i] = g / total
 	}
-	for i := range white.n {
-		for j := range white.n {
-			white.matrix[i*white.n+j] += gain[i] / total * (gain[j] / total) * variance
+	for i := range a.shares {
+		a.press(a.shares[i].matrix, h, k)
+	}
+	for i, x := range k {
+		for j, y := range k {
+			white.matrix[i*a.n+j] += x * y * variance
 		}
 	}
 }
 
 // press replaces S by A S A' with A = I - K h'.
-func (s *share) press(h, gain []float64, total float64) {
-	for range 2 { // A S, and with the transpose A (A S)'
-		for j := range s.n {
-			sum := 0.0
-			for i := range s.n {
-				sum += h[i] * s.at(i, j)
-			}
-			for i := range s.n {
-				s.matrix[i*s.n+j] -= gain[i] / total * sum
-			}
+func (a *account) press(m, h, k []float64) {
+	a.before(m, h)
+	for i, x := range k {
+		row := m[i*a.n : (i+1)*a.n]
+		for j, y := range a.space {
+			row[j] -= x * y
 		}
-		s.matrix = transposed(s)
+		s := inner(row, h)
+		for j, y := range k {
+			row[j] -= s * y
+		}
 	}
 }
 
 // settle follows the first reading of a level of which nothing was known: its
 // error becomes -(sum of h_i e_i + noise) / h_0.
 func (a *account) settle(label int, h []float64, variance float64) {
-	a.of(SourceWhite, 0, label)
-	a.transform(0, func(s *share, j int) float64 {
-		sum := 0.0
-		for i := 1; i < s.n; i++ {
-			sum -= h[i] / h[0] * s.at(i, j)
-		}
-		return sum
-	})
+	t := a.zeros()
+	for i := 1; i < a.n; i++ {
+		t[i] = -h[i] / h[0]
+	}
+	a.transform(0, t)
 	a.noise(SourceWhite, 0, label, 0, variance/(h[0]*h[0]))
 }

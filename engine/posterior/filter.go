@@ -293,7 +293,7 @@ func (f *Filter) Renew(level Prior, slope SlopePrior) {
 		f.d[0], f.mean[0] = 0, Level{}
 	}
 	if f.account != nil {
-		f.account.renew(f.d[0], f.motion.Form == MotionTrend, slope.SD*slope.SD)
+		f.account.renew(f.d[0], slope.SD*slope.SD)
 	}
 }
 
