@@ -38,6 +38,10 @@ type Term struct {
 // Sources: Bierman (1977), Factorization Methods for Discrete Sequential
 // Estimation, chapter V (measurement update) and VII (rank-one update, after Agee &
 // Turner 1972), from memory; Durbin & Koopman (2012), 5.2, for the flat start.
+//
+// A Filter of n states takes some 192 + 72 n + 4 n (n - 1) bytes: 0.4 kB for a level
+// with two biases, 0.6 kB for a trend with two biases and correlated noise.
+// It isn't copied by assignment, see Clone.
 type Filter struct {
 	motion Motion
 	vague  bool // nothing is known of the level yet: its variance is infinite
@@ -55,27 +59,26 @@ type Filter struct {
 // The slope counts under a trend only.
 func NewFilter(m Motion, level Prior, slope SlopePrior) Filter {
 	f := Filter{motion: m}
-	f.push()
-	if m.Form == MotionTrend {
-		f.push()
-	}
+	f.resize(f.first())
 	f.Renew(level, slope)
 	return f
 }
 
-// push adds a state that is known to be 0.
-func (f *Filter) push() int {
-	f.u = append(f.u, make([]float64, f.n)...)
-	f.n++
-	f.mean, f.d, f.moves = append(f.mean, Level{}), append(f.d, 0), append(f.moves, Process{})
-	f.space = make([]float64, 3*f.n)
-	return f.n - 1
+// resize makes room for n states, no less than there are; new ones are known to be 0.
+func (f *Filter) resize(n int) {
+	f.n = n
+	f.mean = append(make([]Level, 0, n), f.mean...)[:n]
+	f.d = append(make([]float64, 0, n), f.d...)[:n]
+	f.u = append(make([]float64, 0, n*(n-1)/2), f.u...)[:n*(n-1)/2]
+	f.moves = append(make([]Process, 0, n), f.moves...)[:n]
+	f.space = make([]float64, 3*n)
 }
 
 // Add appends an independent state and returns its number. There are at most
-// MaxStates.
+// MaxStates. Of what moves a filter on, this alone allocates.
 func (f *Filter) Add(p Process) int {
-	k := f.push()
+	k := f.n
+	f.resize(k + 1)
 	f.d[k], f.moves[k] = p.Variance, p
 	if f.account != nil {
 		f.account.add(f.n, k, p.Variance)
@@ -252,7 +255,7 @@ func (f *Filter) spread(a []float64, w float64) {
 		per := 1 / after
 		beta := w * s * per
 		f.d[j] = after
-		w *= before * per
+		w = shrunk(w, before, per)
 		at := j * (j - 1) / 2
 		c, head := f.u[at:at+j], a[:j]
 		for i, u := range c {
@@ -260,6 +263,15 @@ func (f *Filter) spread(a []float64, w float64) {
 			c[i] = u + beta*head[i]
 		}
 	}
+}
+
+// shrunk returns x before / after for 0 <= before <= after, with per = 1 / after:
+// where the quotient underflows x / after doesn't overflow.
+func shrunk(x, before, per float64) float64 {
+	if q := before * per; q > 1e-150 {
+		return x * q
+	}
+	return x * per * before
 }
 
 // Redraw forgets a state and draws it anew from a process, independent of all
@@ -325,7 +337,7 @@ func (f *Filter) Combination(terms []Term) (mean, variance float64) {
 		for _, t := range terms {
 			s += t.Coefficient * f.entry(t.State, k)
 		}
-		variance += s * s * f.d[k]
+		variance += s * f.d[k] * s
 	}
 	return sum.value(), variance
 }
