@@ -11,7 +11,7 @@ import (
 // to be written. r.Time is set.
 func (k *Keeper) admit(r *Reading, at resolved, receive Instant) (res Result, write bool) {
 	res = Result{ReadingID: r.ID, Time: r.Time}
-	if reason, detail := k.objection(at.track, r, receive); reason != "" {
+	if reason, detail := k.objection(at.track, at.instrument, r, receive); reason != "" {
 		res.Status, res.Reason, res.Detail = Refused, reason, detail
 		return res, true
 	}
@@ -38,7 +38,7 @@ func (k *Keeper) admit(r *Reading, at resolved, receive Instant) (res Result, wr
 }
 
 // objection returns why a reading can't be applied, or "".
-func (k *Keeper) objection(t *Track, r *Reading, receive Instant) (Reason, string) {
+func (k *Keeper) objection(t *Track, i *instrumentTrack, r *Reading, receive Instant) (Reason, string) {
 	switch {
 	case t == nil && !wellFormedID(string(r.Quantity)):
 		return UnknownQuantity, fmt.Sprintf("quantity %.80q is not an ID; give that of a declared quantity", r.Quantity)
@@ -46,19 +46,24 @@ func (k *Keeper) objection(t *Track, r *Reading, receive Instant) (Reason, strin
 		return UnknownQuantity, fmt.Sprintf("quantity %q is not declared; declare it with PUT /v1/quantities/{id}, then put the reading through with :apply_refused or send it again", r.Quantity)
 	case t.rules.retired:
 		return QuantityRetired, fmt.Sprintf("quantity %q was retired at %v; declare it again to revive it, then send the reading again", r.Quantity, t.decided.RetireTime)
-	case r.Instrument != "":
-		return UnknownInstrument, fmt.Sprintf("instrument %q is not known; leave instrument out", r.Instrument)
 	case r.Unit != "" && r.Unit != t.rules.unit:
 		return UnitMismatch, fmt.Sprintf("unit is %q but the quantity is in %q; convert the value, or leave unit out", r.Unit, t.rules.unit)
 	}
-	if reason, detail := t.rules.objectionToNumbers(r); reason != "" {
+	if r.Instrument != "" {
+		if reason, detail := t.objectionToInstrument(r, i); reason != "" {
+			return reason, detail
+		}
+	} else if r.Occasion != "" {
+		return NotSupported, "occasion is given without the instrument whose readings it ties together; name the instrument, or leave occasion out"
+	}
+	if reason, detail := t.rules.objectionToNumbers(r, i); reason != "" {
 		return reason, detail
 	}
 	return k.objectionToTime(&t.rules, r, receive)
 }
 
-func (a *rules) objectionToNumbers(r *Reading) (Reason, string) {
-	u := a.scale
+func (a *rules) objectionToNumbers(r *Reading, i *instrumentTrack) (Reason, string) {
+	u := a.noiseOf(i)
 	switch {
 	case !inRange(r.Value):
 		return ValueOutOfRange, fmt.Sprintf("value is %v; give 0 or a number of magnitude 1e-100 to 1e100", r.Value)
@@ -66,8 +71,8 @@ func (a *rules) objectionToNumbers(r *Reading) (Reason, string) {
 		if u = r.RandomStandardUncertainty; !(u >= MinMagnitude && u <= MaxMagnitude) {
 			return RandomUncertaintyInvalid, fmt.Sprintf("random_standard_uncertainty is %v; give a number above 0, from 1e-100 to 1e100", u)
 		}
-	case a.needsOwnNoise:
-		return NoRepeatability, "random_standard_uncertainty is missing and the quantity declares no repeatability; give one of the two and send the reading again"
+	case math.IsNaN(u):
+		return NoRepeatability, "random_standard_uncertainty is missing and neither quantity nor instrument declares a repeatability; give one of them and send the reading again"
 	}
 	if math.Abs(r.Value)/u > maxRatio {
 		return ValueOutOfRange, fmt.Sprintf("value %v is more than 1e150 times its random standard uncertainty %v; check both", r.Value, u)

@@ -12,7 +12,11 @@ import (
 // while serving and while replaying alike.
 func (k *Keeper) apply(r *Record) {
 	k.count(r)
-	if r.Kind != KindRefusal {
+	switch r.Kind {
+	case KindRefusal:
+	case KindInstrument:
+		k.applyInstrument(r)
+	default:
 		k.applyToTrack(r)
 	}
 }
@@ -32,8 +36,15 @@ func (k *Keeper) count(r *Record) {
 // applyToTrack changes the quantity that a record is about.
 func (k *Keeper) applyToTrack(r *Record) {
 	t := k.trackOf(r.Number, r.Quantity)
-	t.position = r.Position
 	k.touch(t)
+	var e entry
+	if r.Kind == KindReading {
+		e = entry{Row: k.rowOf(r), ID: r.Reading.ID}
+		if e.Instrument != 0 {
+			k.useInstrument(t, &e.Row) // may begin a rebuild, which is of the readings before this one
+		}
+	}
+	t.position = r.Position
 	switch r.Kind {
 	case KindDeclaration:
 		k.applyDeclaration(t, r)
@@ -42,8 +53,12 @@ func (k *Keeper) applyToTrack(r *Record) {
 		q.Retired, q.RetireTime, q.UpdateTime = true, r.ReceiveTime, r.ReceiveTime
 		t.quantity = &q
 		k.rebase(t)
+	case KindRenewal:
+		q := *t.quantity
+		q.Renewals = t.quantity.withRenewal(*r.Renewal)
+		t.quantity = &q
+		k.rebase(t)
 	case KindReading:
-		e := entry{Row: rowOf(r), ID: r.Reading.ID}
 		t.tally.add(&e.Row)
 		t.add(&e)
 	}
@@ -58,40 +73,54 @@ func (k *Keeper) applyDeclaration(t *Track, r *Record) {
 		t.reset()
 		k.arrived = append(k.arrived, t)
 	} else {
-		q.CreateTime = t.quantity.CreateTime
+		q.CreateTime, q.Renewals = t.quantity.CreateTime, t.quantity.Renewals
 	}
 	t.quantity = &q
 	k.rebase(t)
 }
 
-// rebase lets the belief rest on the declaration now in force.
+// rebase lets the belief rest on the declarations now in force, of the quantity
+// and of the instruments that have read it.
 func (k *Keeper) rebase(t *Track) {
-	switch {
+	switch m := k.modelOf(t); {
 	case t.basis == nil:
-		t.rest(t.quantity)
-	case t.basis.Declaration.SameBelief(t.quantity.Declaration):
-		t.rest(t.quantity)
-		if t.job != nil && !t.job.quantity.Declaration.SameBelief(t.quantity.Declaration) {
-			k.startJob(t)
-		}
+		t.rest(m)
+	case t.job == nil && t.basis.extends(m):
+		t.rest(m)
+	case t.job != nil && t.basis.same(m) && t.job.model.same(m):
+		t.rest(m)
 	default:
 		k.settle(t)
-		if n := len(t.rows); t.job == nil && n == t.tally.count && n <= refoldBudget {
-			t.refold()
+		n := len(t.rows)
+		if t.job == nil && n == t.tally.count && n <= k.budget && t.refold(m) {
+			k.budget -= n
 		} else {
-			k.startJob(t)
+			k.startJob(t, m)
 		}
 	}
 }
 
-// refold folds the rows, which are all there are, under t.quantity.
-func (t *Track) refold() {
+// rowOf returns the index entry of an applied reading, whose instrument, if any,
+// is known.
+func (k *Keeper) rowOf(r *Record) Row {
+	return rowOf(r, k.directory.Load().numberOf(r.Reading.Instrument))
+}
+
+// refold folds the rows, which are all there are, under m; false if their order
+// rests on IDs that aren't at hand.
+func (t *Track) refold(m *model) bool {
 	rows := slices.Clone(t.rows)
 	slices.SortFunc(rows, entry.compare)
-	t.rest(t.quantity)
+	for i := 1; i < len(rows); i++ {
+		if rows[i].tiesNameless(&rows[i-1]) {
+			return false
+		}
+	}
+	t.rest(m)
 	t.reset()
 	t.fresh = rows
 	t.settle(len(rows))
+	return true
 }
 
 // trackOf returns the track with that number, making it if it is new.
@@ -114,7 +143,6 @@ func (k *Keeper) touch(t *Track) {
 
 // settleTouched folds what the group brought.
 func (k *Keeper) settleTouched() {
-	k.budget = refoldBudget
 	for _, t := range k.touched {
 		k.settle(t)
 	}
@@ -126,7 +154,7 @@ func (k *Keeper) settle(t *Track) {
 	k.budget = max(0, k.budget-steps)
 	switch {
 	case !ok:
-		k.startJob(t)
+		k.startJob(t, t.basis)
 	case t.job == nil:
 		t.foldedTo = t.position
 	}
@@ -168,8 +196,11 @@ func (k *Keeper) index(arrived []*Track) {
 }
 
 // startJob has the belief of t folded anew by the rebuilder.
-func (k *Keeper) startJob(t *Track) {
-	j := &job{track: t, quantity: t.quantity, number: t.number, recent: t.rows, count: t.tally.count, position: t.position, ledger: k.ledger}
+func (k *Keeper) startJob(t *Track, m *model) {
+	j := &job{
+		track: t, model: m, number: t.number, recent: t.rows, count: t.tally.count, position: t.position,
+		ledger: k.ledger, directory: k.directory.Load(),
+	}
 	t.job = j
 	k.jobs = append(k.jobs, j)
 	k.dispatch()
@@ -203,7 +234,7 @@ func (k *Keeper) finishJob(j *job) {
 		return // superseded by a later declaration
 	}
 	if j.err != nil && j.ledger != k.ledger {
-		k.startJob(t) // it read a ledger that has been closed since
+		k.startJob(t, j.model) // it read a ledger that has been closed since
 		return
 	}
 	if j.fault != nil {
@@ -215,7 +246,7 @@ func (k *Keeper) finishJob(j *job) {
 	}
 	since := slices.Clone(t.rows[len(j.recent):])
 	t.job = nil
-	t.rest(t.quantity)
+	t.rest(j.model)
 	t.fold, t.foldedTo = j.fold, j.position
 	t.rows, t.marks, t.markFrom = j.rows, j.marks, 0
 	t.last, t.behind, t.saved = j.last, entry{}, 0 // and the checkpoint, if any, has no fold

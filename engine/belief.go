@@ -2,9 +2,11 @@ package engine
 
 import (
 	"context"
+	"math"
 	"slices"
 	"sort"
 	"strings"
+	"time"
 
 	"leadline.example/engine/decide"
 	"leadline.example/engine/posterior"
@@ -30,8 +32,6 @@ func (q *BeliefQuery) Check() error {
 		return refuse(InvalidField, "threshold", "threshold is %v; give 0 or a number of magnitude 1e-100 to 1e100", q.Threshold)
 	case q.HasTime && !q.Time.Valid():
 		return refuse(InvalidField, "time", "time lies outside 1678 to 2262; give a time within")
-	case q.Instrument != "":
-		return refuse(NotFound, "instrument", "instrument %q is not known; leave instrument out", q.Instrument)
 	}
 	return nil
 }
@@ -54,10 +54,20 @@ type Belief struct {
 	ProbabilityBelow float64
 
 	Predictive                                posterior.Posterior // FormNone where there is none
+	PredictiveInstrument                      InstrumentID        // empty: none, zero bias
 	PredictiveLower, PredictiveUpper          float64
 	OutsideBelow, OutsideAbove, OutsideEither float64 // under a tolerance
 
 	Repeatability posterior.Repeatability
+
+	HasSlope                          bool    // of a linear trend
+	SlopeMean, SlopeStandardDeviation float64 // by SlopePer
+	SlopePer                          time.Duration
+	Biases                            []BiasBelief                // of the calibrations in force, by instrument
+	References                        []ReferenceBelief           // by name
+	Flagged                           [len(CalibrationStates)]int // readings by instruments, by how they stand to their calibration
+	Linearised                        bool                        // some readings are by an instrument with relative parts
+	ResolutionAsVariance              bool                        // some are by one with a resolution, which adds resolution^2/12 to the variance
 
 	ReadingCount int
 	HasLast      bool
@@ -77,6 +87,22 @@ func (k *Keeper) Belief(_ context.Context, id QuantityID, q BeliefQuery) (Belief
 		return Belief{}, notDeclared("quantity", id)
 	}
 	return k.belief(t.View(), &q)
+}
+
+// BiasBelief is what is believed of an instrument's bias under one calibration:
+// what was declared, and what the quantity's readings have taught.
+type BiasBelief struct {
+	Instrument              InstrumentID
+	ValidFrom               Instant
+	Reference               string
+	Mean, StandardDeviation float64
+}
+
+// ReferenceBelief is what is believed of the error that all calibrations against a
+// reference share, in units of their common standard uncertainty.
+type ReferenceBelief struct {
+	Reference               string
+	Mean, StandardDeviation float64
 }
 
 // Beliefs answers a query about the quantities in force whose IDs begin with
@@ -132,13 +158,63 @@ func (k *Keeper) belief(v *View, q *BeliefQuery) (Belief, error) {
 		b.Coverage = DefaultCoverage
 	}
 	d := &b.Quantity.Declaration
-	b.evaluateLevel(m.level(d, at), d, q)
-	b.evaluatePredictive(m.predictive(d, at), d)
-	b.Repeatability = m.repeatability(d, b.Coverage)
+	by, err := k.predictiveInstrument(v.basis, m, q)
+	if err != nil {
+		return Belief{}, err
+	}
+	if by != nil {
+		b.PredictiveInstrument = by.ID
+	}
+	b.evaluateLevel(m.level(v.basis, at), d, q)
+	b.evaluatePredictive(m.predictive(v.basis, at, by), d)
+	b.Repeatability = m.repeatability(v.basis, b.Coverage)
+	if j := m.jointAt(v.basis, at); v.basis.form == jointForm && j != nil {
+		b.evaluateJoint(v.basis, j)
+	}
 	if r := b.Repeatability; d.Repeatability.Learned() && !r.HasMedian {
 		b.lacks("repeatability")
 	}
 	return b, nil
+}
+
+// predictiveInstrument returns the instrument by which the next indication is
+// foretold: the one asked for, else the last one used, else nil.
+func (k *Keeper) predictiveInstrument(m *model, f *fold, q *BeliefQuery) (*Instrument, error) {
+	if q.Instrument == "" {
+		if f.joint == nil {
+			return nil, nil
+		}
+		return m.instrument(f.joint.last), nil
+	}
+	t := k.directory.Load().instrument(q.Instrument)
+	if t == nil || t.shown.Load() == nil {
+		return nil, instrumentNotDeclared("instrument", q.Instrument)
+	}
+	i := t.shown.Load().instrument
+	if d := m.declaration(); i.Declaration.Unit != d.Unit {
+		return nil, refuse(InvalidField, "instrument", "instrument %q is in %q but the quantity is in %q; ask for an instrument in the quantity's unit", i.ID, i.Declaration.Unit, d.Unit)
+	} else if d.Repeatability.Learned() {
+		return nil, refuse(NotSupported, "instrument", "instrument is not supported together with repeatability.learned; leave instrument out")
+	}
+	if basis := m.instrument(i.Number); basis != nil {
+		return basis, nil
+	}
+	return i, nil
+}
+
+// evaluateJoint gives what only a joint belief has.
+func (b *Belief) evaluateJoint(m *model, j *joint) {
+	b.Flagged, b.Linearised = j.flagged, j.linearised
+	for _, i := range m.instruments {
+		b.ResolutionAsVariance = b.ResolutionAsVariance || i.Declaration.Resolution > 0
+	}
+	b.Biases, b.References = j.biases(m), j.commons()
+	if d := m.declaration(); d.Dynamics.Form == DynamicsLinearTrend {
+		per := d.Dynamics.Slope.Per
+		b.HasSlope, b.SlopePer = true, per
+		b.SlopeMean = j.filter.Mean(1) * per.Seconds()
+		b.SlopeStandardDeviation = math.Sqrt(j.filter.Variance(1)) * per.Seconds()
+	}
 }
 
 func (b *Belief) lacks(fields ...string) { b.Undetermined = append(b.Undetermined, fields...) }
@@ -265,6 +341,9 @@ type Stats struct {
 	Position       Position // of the last record
 	QueuedReadings int
 	Counts         map[Outcome]uint64 // duplicates since the start of the process, the rest for ever
+	// Calibration counts the readings applied since the start of the process by
+	// how they stood to their instrument's calibration then.
+	Calibration [len(CalibrationStates)]uint64
 }
 
 // Stats returns the present numbers.
@@ -276,6 +355,9 @@ func (k *Keeper) Stats() Stats {
 			{Status: Applied}:   k.applied.Load(),
 			{Status: Duplicate}: k.duplicates.Load(),
 		},
+	}
+	for i := range s.Calibration {
+		s.Calibration[i] = k.calibrated[i].Load()
 	}
 	for i, reason := range ReadingReasons {
 		s.Counts[Outcome{Refused, reason}] = k.refused[i].Load()

@@ -2,6 +2,7 @@ package engine
 
 import (
 	"context"
+	"hash/fnv"
 )
 
 // command is one request on its way through the keeper: a batch of readings,
@@ -155,12 +156,15 @@ func (k *Keeper) decideBatch(w *work, c *command) {
 			at.place = now.place(r.Quantity) // declared since, or the ledger was opened anew
 			at.hashID(r, &k.seeds)
 		}
+		if r.Instrument != "" && (at.instrument == nil || c.within != k.directory.Load()) {
+			at.instrument = k.directory.Load().instrument(r.Instrument)
+		}
 		res, write := k.admit(r, at, b.Receive)
 		if !write {
 			k.refusals.release(origin.Position)
 		}
 		if write {
-			res.Position = k.record(w, at.track, r, &res, b, &origin)
+			res.Position = k.record(w, at, r, &res, b, &origin)
 		} else {
 			k.duplicates.Add(1)
 		}
@@ -170,7 +174,8 @@ func (k *Keeper) decideBatch(w *work, c *command) {
 }
 
 // record adds the record of a reading that was decided on.
-func (k *Keeper) record(w *work, t *Track, r *Reading, res *Result, b *Batch, origin *Record) Position {
+func (k *Keeper) record(w *work, at resolved, r *Reading, res *Result, b *Batch, origin *Record) Position {
+	t := at.track
 	k.decidedTo++
 	rec := w.next(len(r.ID) + len(r.Quantity) + len(res.Detail))
 	*rec = Record{
@@ -186,17 +191,38 @@ func (k *Keeper) record(w *work, t *Track, r *Reading, res *Result, b *Batch, or
 	if res.Status == Refused {
 		rec.Kind = KindRefusal
 	} else {
-		row := rowOf(rec)
+		var number InstrumentNumber
+		if at.instrument != nil {
+			number = at.instrument.number
+		}
+		row := rowOf(rec, number)
 		t.decidedTally.add(&row)
+		if i := at.instrument; i != nil {
+			i.decidedSpan.add(r.Time)
+			t.decidedUsed, _ = addUse(t.decidedUsed, &row)
+			k.calibrated[i.decided.Declaration.State(r.Time)].Add(1)
+		}
 	}
 	return k.decidedTo
 }
 
 // rowOf returns the index entry of an applied reading.
-func rowOf(r *Record) Row {
-	return Row{
-		Time: r.Reading.Time, Value: r.Reading.Value,
+func rowOf(r *Record, instrument InstrumentNumber) Row {
+	row := Row{
+		Time: r.Reading.Time, Value: r.Reading.Value, Instrument: instrument,
 		HasUncertainty: r.Reading.HasUncertainty, Uncertainty: r.Reading.RandomStandardUncertainty,
 		HasID: r.Reading.ID != "", Position: r.Position,
 	}
+	if r.Reading.Occasion != "" {
+		row.Occasion = hashOccasion(r.Reading.Occasion)
+	}
+	return row
+}
+
+// hashOccasion returns what stands for an occasion in a Row; never 0. It is
+// only compared with that of the instrument's reading before.
+func hashOccasion(occasion string) uint64 {
+	h := fnv.New64a()
+	h.Write([]byte(occasion))
+	return max(1, h.Sum64())
 }

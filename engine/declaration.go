@@ -2,6 +2,7 @@ package engine
 
 import (
 	"math"
+	"time"
 
 	"leadline.example/engine/decide"
 	"leadline.example/engine/posterior"
@@ -21,7 +22,7 @@ const (
 // Check returns an *Error for the first thing wrong with d, else nil.
 func (d *Declaration) Check() error {
 	checks := []func() *Error{
-		d.checkText, d.checkPrior, d.checkRepeatability, d.checkDynamics, d.checkTolerance, d.checkRule,
+		d.checkText, d.checkPrior, d.checkRepeatability, d.checkDynamics, d.checkTolerance, d.checkRule, d.checkHorizon,
 	}
 	for _, check := range checks {
 		if err := check(); err != nil {
@@ -95,19 +96,78 @@ func (d *Declaration) checkRepeatability() *Error {
 }
 
 func (d *Declaration) checkDynamics() *Error {
-	if d.Dynamics.Form != DynamicsRandomWalk {
-		return nil
+	y := &d.Dynamics
+	field := map[DynamicsForm]string{
+		DynamicsRandomWalk: "dynamics.random_walk", DynamicsLinearTrend: "dynamics.linear_trend", DynamicsMeanReverting: "dynamics.mean_reverting",
+	}[y.Form]
+	if y.Form != DynamicsConstant && d.Repeatability.Learned() {
+		return refuse(NotSupported, "repeatability.learned", "repeatability.learned is not supported together with %s; give repeatability.standard_deviation, or dynamics.constant", field)
 	}
-	if d.Repeatability.Learned() {
-		return refuse(NotSupported, "repeatability.learned", "repeatability.learned is not supported together with dynamics.random_walk; give repeatability.standard_deviation, or dynamics.constant")
-	}
-	if err := checkDeviation("dynamics.random_walk.standard_deviation", d.Dynamics.StandardDeviation); err != nil {
-		return err
-	}
-	if d.Dynamics.Per <= 0 {
-		return refuse(InvalidField, "dynamics.random_walk.per", "dynamics.random_walk.per is %v; give a duration above 0, such as \"86400s\"", d.Dynamics.Per)
+	switch y.Form {
+	case DynamicsRandomWalk:
+		return y.checkWalk(field)
+	case DynamicsLinearTrend:
+		return y.checkTrend(field)
+	case DynamicsMeanReverting:
+		return y.checkReverting(field)
 	}
 	return nil
+}
+
+func (y *Dynamics) checkWalk(field string) *Error {
+	if err := checkDeviation(field+".standard_deviation", y.StandardDeviation); err != nil {
+		return err
+	}
+	return checkDuration(field+".per", y.Per)
+}
+
+func (y *Dynamics) checkTrend(field string) *Error {
+	if y.StandardDeviation != 0 || y.Per != 0 {
+		if err := y.checkWalk(field); err != nil {
+			return err
+		}
+	}
+	if err := y.Slope.check(field + ".slope"); err != nil {
+		return err
+	}
+	if y.Wander == (Wander{}) {
+		return nil
+	}
+	if err := checkDeviation(field+".slope_wander.standard_deviation", y.Wander.StandardDeviation); err != nil {
+		return err
+	}
+	return checkDuration(field+".slope_wander.per", y.Wander.Per)
+}
+
+func (s *Slope) check(field string) *Error {
+	if err := checkNumber(field+".mean", s.Mean); err != nil {
+		return err
+	}
+	if err := checkDeviation(field+".standard_deviation", s.StandardDeviation); err != nil {
+		return err
+	}
+	return checkDuration(field+".per", s.Per)
+}
+
+func (y *Dynamics) checkReverting(field string) *Error {
+	if err := checkNumber(field+".mean", y.Mean); err != nil {
+		return err
+	}
+	if err := checkDeviation(field+".standard_deviation", y.StandardDeviation); err != nil {
+		return err
+	}
+	return checkDuration(field+".half_life", y.HalfLife)
+}
+
+// checkHorizon checks how far ahead a breach is looked for.
+func (d *Declaration) checkHorizon() *Error {
+	switch {
+	case d.BreachHorizon == 0:
+		return nil
+	case !d.Tolerance.Declared():
+		return refuse(MissingField, "tolerance", "breach_horizon is given without a tolerance, so there is nothing to breach; declare a limit, or leave it out")
+	}
+	return checkDuration("breach_horizon", d.BreachHorizon)
 }
 
 func (d *Declaration) checkTolerance() *Error { return d.Tolerance.check("tolerance") }
@@ -158,14 +218,25 @@ func checkDeviation(field string, s float64) *Error {
 	return nil
 }
 
+func checkDuration(field string, t time.Duration) *Error {
+	if t <= 0 {
+		return refuse(InvalidField, field, "%s is %v; give a duration above 0, such as \"86400s\"", field, t)
+	}
+	return nil
+}
+
 // inRange tells whether x is 0 or of an admissible magnitude; NaN is not.
 func inRange(x float64) bool {
 	a := math.Abs(x)
 	return x == 0 || a >= MinMagnitude && a <= MaxMagnitude
 }
 
-// levelPrior returns the prior of the level as moments.
+// levelPrior returns the prior of the level as moments. A mean-reverting level of
+// which nothing is stated follows its stationary law.
 func (d *Declaration) levelPrior() posterior.Prior {
+	if y := &d.Dynamics; d.Prior.Form == PriorVague && y.Form == DynamicsMeanReverting {
+		return posterior.Prior{Mean: y.Mean, SD: y.StandardDeviation}
+	}
 	switch p := d.Prior; p.Form {
 	case PriorNormal:
 		return posterior.Prior{Mean: p.Mean, SD: p.StandardDeviation}

@@ -12,17 +12,24 @@ type Condition struct {
 }
 
 func (c Condition) check(t *Track) error {
-	if c.IfNoneMatch && t != nil {
-		return refuse(AlreadyExists, "", "quantity %q exists; leave If-None-Match out to replace its declaration", t.id)
-	}
-	if c.IfMatch == "" {
-		return nil
-	}
 	if t == nil {
-		return refuse(ETagMismatch, "etag", "etag is %q but the quantity doesn't exist; leave etag and If-Match out to declare it", c.IfMatch)
+		return c.checkTag("quantity", "", "")
 	}
-	if tag := t.decided.ETag(); c.IfMatch != "*" && c.IfMatch != tag {
-		return refuse(ETagMismatch, "etag", "etag is %q but the quantity has %q; read it again and repeat the change on what is there", c.IfMatch, tag)
+	return c.checkTag("quantity", string(t.id), t.decided.ETag())
+}
+
+// checkTag compares the condition with the tag of what noun and id name; an
+// empty tag says that it doesn't exist.
+func (c Condition) checkTag(noun, id, tag string) error {
+	switch {
+	case c.IfNoneMatch && tag != "":
+		return refuse(AlreadyExists, "", "%s %q exists; leave If-None-Match out to replace its declaration", noun, id)
+	case c.IfMatch == "" || c.IfMatch == "*" && tag != "":
+		return nil
+	case tag == "":
+		return refuse(ETagMismatch, "etag", "etag is %q but the %s doesn't exist; leave etag and If-Match out to declare it", c.IfMatch, noun)
+	case c.IfMatch != tag:
+		return refuse(ETagMismatch, "etag", "etag is %q but the %s has %q; read it again and repeat the change on what is there", c.IfMatch, noun, tag)
 	}
 	return nil
 }
@@ -47,7 +54,7 @@ func (k *Keeper) Declare(ctx context.Context, id QuantityID, d Declaration, c Co
 			q = *t.decided
 			return nil
 		}
-		if err := t.checkRedeclaration(&d); err != nil {
+		if err := k.checkRedeclaration(t, &d); err != nil {
 			return err
 		}
 		q, created = k.declare(w, t, id, d, receive), t == nil
@@ -65,7 +72,7 @@ func (k *Keeper) declare(w *work, t *Track, id QuantityID, d Declaration, receiv
 	if t == nil {
 		t = k.trackOf(QuantityNumber(len(k.byNumber)+1), id)
 	} else {
-		q.Revision, q.CreateTime = t.decided.Revision+1, t.decided.CreateTime
+		q.Revision, q.CreateTime, q.Renewals = t.decided.Revision+1, t.decided.CreateTime, t.decided.Renewals
 	}
 	q.Number = t.number
 	t.decide(q)
@@ -79,9 +86,12 @@ func (k *Keeper) declare(w *work, t *Track, id QuantityID, d Declaration, receiv
 
 // checkRedeclaration refuses what the readings applied so far don't allow. t
 // may be nil.
-func (t *Track) checkRedeclaration(d *Declaration) error {
-	if t == nil || t.decidedTally.count == 0 {
+func (k *Keeper) checkRedeclaration(t *Track, d *Declaration) error {
+	if t == nil {
 		return nil
+	}
+	if err := d.checkRenewals(t.decided.InForce()); err != nil || t.decidedTally.count == 0 {
+		return err
 	}
 	if was := t.decided.Declaration.Unit; d.Unit != was {
 		return refuse(UnitFixed, "unit", "unit is %q but %d readings in %q have been applied; keep the unit, or declare another quantity", d.Unit, t.decidedTally.count, was)
@@ -89,8 +99,11 @@ func (t *Track) checkRedeclaration(d *Declaration) error {
 	if first := t.decidedTally.first; d.Prior.HasTime && d.Prior.Time > first {
 		return refuse(InvalidField, "prior.time", "prior.time %v is after the reading of %v, which has been applied; give that time or an earlier one", d.Prior.Time, first)
 	}
-	if bare := t.decidedTally.bare; d.Repeatability.Form == RepeatabilityAbsent && bare > 0 {
-		return refuse(InvalidField, "repeatability", "repeatability is missing but %d readings without a random_standard_uncertainty have been applied; declare one", bare)
+	if bare := t.decidedBare(k); d.Repeatability.Form == RepeatabilityAbsent && bare > 0 {
+		return refuse(InvalidField, "repeatability", "repeatability is missing but %d readings without a random_standard_uncertainty or an instrument's repeatability have been applied; declare one", bare)
+	}
+	if n := len(t.decidedUsed); n > 0 && d.Repeatability.Learned() {
+		return refuse(NotSupported, "repeatability.learned", "repeatability.learned is not supported together with instruments, of which %d have read the quantity; give repeatability.standard_deviation", n)
 	}
 	if largest := t.decidedTally.largest; largest/d.Repeatability.scale() > maxRatio {
 		return refuse(InvalidField, "repeatability", "repeatability is less than 1e-150 times the reading %v, which has been applied; give a larger one", largest)
@@ -100,6 +113,17 @@ func (t *Track) checkRedeclaration(d *Declaration) error {
 		return refuse(InvalidField, "prior", "the prior's standard deviation %v is less than 1e-150 times the reading %v, which has been applied; give a wider prior", p.SD, largest)
 	}
 	return nil
+}
+
+// decidedBare is how many applied readings rest on the quantity's repeatability.
+func (t *Track) decidedBare(k *Keeper) int {
+	bare := t.decidedTally.bare
+	for _, u := range t.decidedUsed {
+		if k.instruments[u.number-1].decided.Declaration.Repeatability.StandardDeviation == 0 {
+			bare += u.bare
+		}
+	}
+	return bare
 }
 
 // Retire takes a quantity out of lists and metrics and refuses further

@@ -1,13 +1,23 @@
 package engine
 
-import "sync"
+import (
+	"slices"
+	"sort"
+	"sync"
+)
 
 // directory finds a track by its quantity's ID, also that of a declaration
 // which isn't durable yet. The keeper's goroutine waits for readers only to
 // add a quantity that is new.
 type directory struct {
-	mu   sync.RWMutex // guards byID
-	byID map[QuantityID]place
+	mu           sync.RWMutex // guards all below
+	byID         map[QuantityID]place
+	byInstrument map[InstrumentID]*instrumentTrack
+	instruments  []*instrumentTrack // by ID; replaced, never changed
+}
+
+func newDirectory() *directory {
+	return &directory{byID: map[QuantityID]place{}, byInstrument: map[InstrumentID]*instrumentTrack{}}
 }
 
 // place is a track with its number, which is at hand before the track is.
@@ -36,11 +46,51 @@ func (d *directory) remove(id QuantityID) {
 	delete(d.byID, id)
 }
 
+func (d *directory) instrument(id InstrumentID) *instrumentTrack {
+	d.mu.RLock()
+	defer d.mu.RUnlock()
+	return d.byInstrument[id]
+}
+
+// numberOf returns the number of an instrument, 0 for none.
+func (d *directory) numberOf(id InstrumentID) InstrumentNumber {
+	if id == "" {
+		return 0
+	}
+	if t := d.instrument(id); t != nil {
+		return t.number
+	}
+	return 0
+}
+
+// allInstruments returns every instrument, by the bytes of its ID.
+func (d *directory) allInstruments() []*instrumentTrack {
+	d.mu.RLock()
+	defer d.mu.RUnlock()
+	return d.instruments
+}
+
+func (d *directory) addInstrument(t *instrumentTrack) {
+	d.mu.Lock()
+	defer d.mu.Unlock()
+	d.byInstrument[t.id] = t
+	n := sort.Search(len(d.instruments), func(i int) bool { return d.instruments[i].id > t.id })
+	d.instruments = slices.Insert(slices.Clone(d.instruments), n, t)
+}
+
+func (d *directory) removeInstrument(t *instrumentTrack) {
+	d.mu.Lock()
+	defer d.mu.Unlock()
+	delete(d.byInstrument, t.id)
+	d.instruments = slices.DeleteFunc(slices.Clone(d.instruments), func(u *instrumentTrack) bool { return u == t })
+}
+
 // resolved is what a caller's goroutine finds out of a reading before the
 // keeper decides on it: most of the time that takes is spent waiting for memory.
 type resolved struct {
-	place        // no track: not known then
-	hash  idHash // of the ID, if there is a track and an ID
+	place                       // no track: not known then
+	instrument *instrumentTrack // nil without one, or if it is not known then
+	hash       idHash           // of the ID, if there is a track and an ID
 	// stored is the reading in the ledger with the same quantity, ID and time,
 	// if it was looked for and found.
 	stored *seenID
@@ -52,6 +102,9 @@ func (d *directory) resolve(readings []Reading, seeds *idSeeds) []resolved {
 	d.mu.RLock()
 	for i := range readings {
 		all[i].place = d.byID[readings[i].Quantity]
+		if readings[i].Instrument != "" {
+			all[i].instrument = d.byInstrument[readings[i].Instrument]
+		}
 	}
 	d.mu.RUnlock()
 	for i := range readings {

@@ -29,8 +29,27 @@ type window struct {
 // their arrival. A slot is 0 or holds 32 bits of the hash and an index + 1.
 type generation struct {
 	slots   []uint64
-	entries []seenID
+	entries entries
 	first   uint64 // IDs that came before the first entry
+}
+
+// entries is a list in chunks, so that no growth copies what is there.
+type entries struct {
+	chunks [][]seenID // each of chunkEntries
+	count  int
+}
+
+const chunkEntries = 1 << 12
+
+func (l *entries) at(i int) *seenID { return &l.chunks[i/chunkEntries][i%chunkEntries] }
+
+// add appends e; the chunks of a list that was emptied are used again.
+func (l *entries) add(e seenID) {
+	if l.count == len(l.chunks)*chunkEntries {
+		l.chunks = append(l.chunks, make([]seenID, chunkEntries))
+	}
+	l.count++
+	*l.at(l.count - 1) = e
 }
 
 type idHash [2]uint64
@@ -88,15 +107,15 @@ func (w *window) find(h idHash) (e *seenID, recent bool) {
 	if i < 0 {
 		return nil, false
 	}
-	e = &g.entries[i]
+	e = g.entries.at(i)
 	age := w.added - g.first - uint64(i)
 	return e, age <= uint64(w.capacity) && w.newest.Sub(e.receive) <= windowAge
 }
 
 // complete tells whether the window holds every ID and still will after n more.
 func (w *window) complete(n int) bool {
-	room := w.size - len(w.current.entries)
-	if len(w.previous.entries) == 0 {
+	room := w.size - w.current.entries.count
+	if w.previous.entries.count == 0 {
 		room += w.size
 	}
 	return w.lost == 0 && n <= room
@@ -105,25 +124,25 @@ func (w *window) complete(n int) bool {
 // oldest returns the position of the first of the last capacity IDs; 0 if there
 // is none.
 func (w *window) oldest() Position {
-	skip := max(0, len(w.previous.entries)+len(w.current.entries)-w.capacity)
+	skip := max(0, w.previous.entries.count+w.current.entries.count-w.capacity)
 	for _, g := range []*generation{&w.previous, &w.current} {
-		if skip < len(g.entries) {
-			return g.entries[skip].position
+		if skip < g.entries.count {
+			return g.entries.at(skip).position
 		}
-		skip -= len(g.entries)
+		skip -= g.entries.count
 	}
 	return 0
 }
 
 // add remembers an ID, also one that stood for another reading before.
 func (w *window) add(e seenID) {
-	if len(w.current.entries) == w.size {
-		if n := len(w.previous.entries); n > 0 {
-			w.lost = w.previous.entries[n-1].position
+	if w.current.entries.count == w.size {
+		if n := w.previous.entries.count; n > 0 {
+			w.lost = w.previous.entries.at(n - 1).position
 		}
 		w.current, w.previous = w.previous, w.current
 		clear(w.current.slots)
-		w.current.entries = w.current.entries[:0]
+		w.current.entries.count = 0
 		w.current.first = w.added
 	}
 	w.added++
@@ -137,7 +156,7 @@ func (g *generation) find(h idHash) int {
 	mask := uint64(len(g.slots) - 1)
 	for i := h[0] & mask; g.slots[i] != 0; i = (i + 1) & mask {
 		if slot := g.slots[i]; slot>>32 == h[1]>>32 {
-			if n := int(uint32(slot)) - 1; g.entries[n].hash == h {
+			if n := int(uint32(slot)) - 1; g.entries.at(n).hash == h {
 				return n
 			}
 		}
@@ -146,11 +165,11 @@ func (g *generation) find(h idHash) int {
 }
 
 func (g *generation) add(e seenID) {
-	g.entries = append(g.entries, e)
-	g.place(len(g.entries))
-	if 2*len(g.entries) > len(g.slots) {
+	g.entries.add(e)
+	g.place(g.entries.count)
+	if 2*g.entries.count > len(g.slots) {
 		g.slots = make([]uint64, 2*len(g.slots))
-		for i := range g.entries {
+		for i := range g.entries.count {
 			g.place(i + 1)
 		}
 	}
@@ -159,12 +178,12 @@ func (g *generation) add(e seenID) {
 // place puts the entry before index n into the table; the later reading takes
 // the place of an earlier one with its ID.
 func (g *generation) place(n int) {
-	h := g.entries[n-1].hash
+	h := g.entries.at(n - 1).hash
 	slot := h[1]&^0xffffffff | uint64(n)
 	mask := uint64(len(g.slots) - 1)
 	i := h[0] & mask
 	for ; g.slots[i] != 0; i = (i + 1) & mask {
-		if old := g.slots[i]; old>>32 == slot>>32 && g.entries[uint32(old)-1].hash == h {
+		if old := g.slots[i]; old>>32 == slot>>32 && g.entries.at(int(uint32(old))-1).hash == h {
 			break
 		}
 	}

@@ -20,6 +20,10 @@ type Figures struct {
 	HasBreach                     bool
 	Breach                        Breach
 	Verdict                       decide.Verdict // 0 without a tolerance
+	HasHorizon                    bool           // a breach horizon is declared, and something is known
+	HorizonProbability            float64        // that a limit is crossed within it
+	HasMedian                     bool           // the time to breach has its median within it
+	MedianSeconds                 float64
 }
 
 // Figures evaluates a view at an instant, from the readings up to then. It
@@ -33,9 +37,14 @@ func (k *Keeper) Figures(v *View, at Instant) (Figures, error) {
 	if err != nil {
 		return Figures{}, err
 	}
-	f := figuresOf(m.level(&v.basis.Declaration, at), &v.Declared().Declaration)
+	f := figuresOf(m.level(v.basis, at), &v.Declared().Declaration)
 	f.ReadingCount, f.HasLast, f.LastTime = m.count, m.count > 0, m.lastTime
-	if !v.basis.Declaration.ordered() && m.count == v.ReadingCount {
+	if m.count == v.fold.count {
+		if err := v.lookAhead(&f, at); err != nil {
+			return Figures{}, err
+		}
+	}
+	if v.basis.still() && m.count == v.ReadingCount {
 		still := f
 		v.still.Store(&still)
 	}
@@ -68,11 +77,11 @@ func (k *Keeper) moment(v *View, at Instant) (*fold, error) {
 	if !v.HasLast || at >= v.LastTime {
 		return &v.fold, nil
 	}
-	l := lawOf(&v.basis.Declaration)
+	l := lawOf(v.basis)
 	if base := &v.marks[0]; !v.Rebuilding && (base.count == 0 || base.lastTime <= at) {
 		return v.recentMoment(&l, at), nil
 	}
-	all, err := v.entries(k.Ledger(), &l)
+	all, err := v.entries(k.Ledger(), l.ordered)
 	if err != nil {
 		return nil, err
 	}
@@ -92,7 +101,7 @@ func (v *View) recentMoment(l *law, at Instant) *fold {
 	for l.ordered && mark+1 < len(v.marks) && v.marks[mark+1].lastTime <= at {
 		mark++
 	}
-	f := v.marks[mark]
+	f := v.marks[mark].copied()
 	for i := v.markFrom + mark*markSpacing; i < len(v.rows); i++ {
 		if e := &v.rows[i]; e.Time <= at {
 			f.add(l, &e.Row)
@@ -105,14 +114,14 @@ func (v *View) recentMoment(l *law, at Instant) *fold {
 
 // entries returns all readings in the belief: while it is rebuilt, those of the
 // position that it shows.
-func (v *View) entries(from Ledger, l *law) ([]entry, error) {
-	through, count, recent := v.Position, v.tally.count, v.rows
+func (v *View) entries(from Ledger, ordered bool) ([]entry, error) {
+	through, count, recent := v.Position, v.applied, v.rows
 	if v.Rebuilding {
 		through, count = v.foldedTo, v.fold.count
 		recent = slices.DeleteFunc(slices.Clone(recent), func(e entry) bool { return e.Position > through })
 	}
 	all, err := loadEntries(from, v.Quantity.Number, through, count, recent)
-	if err != nil || !l.ordered {
+	if err != nil || !ordered {
 		return all, err
 	}
 	return all, orderTies(from, all)

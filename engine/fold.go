@@ -19,46 +19,52 @@ func (e *entry) tiesNameless(f *entry) bool {
 	return e.Time == f.Time && (e.HasID && e.ID == "" || f.HasID && f.ID == "")
 }
 
-// compareEntries is the canonical order: time, then instrument (none so far),
-// then reading ID, then value. What is left equal folds the same either way;
-// the position makes the order total.
+// compareEntries is the canonical order: time, then instrument (in the order of
+// first declaration), then reading ID, then value. What is left equal folds the
+// same either way; the position makes the order total.
 func compareEntries(a, b *entry) int {
 	if c := cmp.Compare(a.Time, b.Time); c != 0 {
 		return c
 	}
-	return cmp.Or(cmp.Compare(a.ID, b.ID), cmp.Compare(a.Value, b.Value), cmp.Compare(a.Position, b.Position))
+	return cmp.Or(cmp.Compare(a.Instrument, b.Instrument), cmp.Compare(a.ID, b.ID), cmp.Compare(a.Value, b.Value), cmp.Compare(a.Position, b.Position))
 }
 
 func (e entry) compare(f entry) int { return compareEntries(&e, &f) }
 
 // fold is the belief after a set of readings, as the numbers from which the
-// posterior follows. The zero value is the belief before any reading. It is
-// a plain value: copies share nothing.
+// posterior follows. The zero value is the belief before any reading. Copies are
+// made by copied, so that they share nothing that changes.
 type fold struct {
 	count    int
 	lastTime Instant // of the latest reading in count
 	constant posterior.Constant
 	walk     posterior.Walk // at lastTime
+	joint    *joint         // at lastTime or a renewal after it; nil before any reading
 }
 
-// ordered tells whether a fold under d depends on the order of its readings;
-// where it doesn't, readings are added as they arrive.
-func (d *Declaration) ordered() bool { return d.Dynamics.Form == DynamicsRandomWalk }
+func (f *fold) copied() fold {
+	c := *f
+	if f.joint != nil {
+		c.joint = f.joint.clone()
+	}
+	return c
+}
 
-// law is what folding a reading needs of a declaration, in one place beside the
-// fold.
+// law is what folding a reading needs of a model, in one place beside the fold.
 type law struct {
-	declaration *Declaration
-	ordered     bool
-	known       bool    // r is
-	r           float64 // where it is known
-	step        float64 // standard deviation that a walk gains in per
-	per         float64 // nanoseconds
+	model   *model
+	form    form
+	ordered bool
+	known   bool    // r is
+	r       float64 // where it is known
+	step    float64 // standard deviation that a walk gains in per
+	per     float64 // nanoseconds
 }
 
-func lawOf(d *Declaration) law {
+func lawOf(m *model) law {
+	d := m.declaration()
 	return law{
-		declaration: d, ordered: d.ordered(),
+		model: m, form: m.form, ordered: m.ordered(),
 		known: d.Repeatability.Form == RepeatabilityKnown, r: d.Repeatability.StandardDeviation,
 		step: d.Dynamics.StandardDeviation, per: float64(d.Dynamics.Per),
 	}
@@ -71,13 +77,16 @@ func (l *law) variance(nanoseconds float64) float64 {
 	return l.step * l.step * (nanoseconds / l.per)
 }
 
-// add folds one reading in; under ordered dynamics e must not precede any
+// add folds one reading in; where order matters e must not precede any
 // reading already in f in canonical order.
 func (f *fold) add(l *law, e *Row) {
-	if l.ordered {
-		f.addWalk(l, e)
-	} else {
+	switch l.form {
+	case sumForm:
 		f.addConstant(l, e)
+	case walkForm:
+		f.addWalk(l, e)
+	default:
+		f.addJoint(l, e)
 	}
 	if f.count == 0 || e.Time > f.lastTime {
 		f.lastTime = e.Time
@@ -99,9 +108,9 @@ func (f *fold) addConstant(l *law, e *Row) {
 func (f *fold) addWalk(l *law, e *Row) {
 	from := f.lastTime
 	if f.count == 0 {
-		f.walk = posterior.NewWalk(l.declaration.levelPrior())
-		if from = e.Time; l.declaration.Prior.HasTime {
-			from = l.declaration.Prior.Time
+		f.walk = posterior.NewWalk(l.model.prior)
+		if from = e.Time; l.model.declaration().Prior.HasTime {
+			from = l.model.declaration().Prior.Time
 		}
 	}
 	f.walk.Predict(l.variance(e.Time.Sub(from)))
@@ -112,48 +121,68 @@ func (f *fold) addWalk(l *law, e *Row) {
 	f.walk.Update(e.Value, u)
 }
 
-// level returns the distribution of the level at an instant that is not
-// before the last reading in f.
-func (f *fold) level(d *Declaration, at Instant) posterior.Posterior {
-	if !d.ordered() {
-		return f.constant.Posterior(d.levelPrior(), d.noise())
+func (f *fold) addJoint(l *law, e *Row) {
+	if f.joint == nil {
+		f.joint = startJoint(l.model, e.Time)
 	}
-	w, ok := f.walkAt(d, at)
-	if !ok {
-		return posterior.Posterior{}
-	}
-	return w.Posterior()
+	f.joint.add(l.model, e)
 }
 
-// predictive returns the distribution of an indication at that instant.
-func (f *fold) predictive(d *Declaration, at Instant) posterior.Posterior {
-	if !d.ordered() {
-		return f.constant.Predictive(d.levelPrior(), d.noise())
+// level returns the distribution of the level at an instant that is not
+// before the last reading in f.
+func (f *fold) level(m *model, at Instant) posterior.Posterior {
+	switch m.form {
+	case sumForm:
+		return f.constant.Posterior(m.prior, m.declaration().noise())
+	case walkForm:
+		if w, ok := f.walkAt(m, at); ok {
+			return w.Posterior()
+		}
+	default:
+		if j := f.jointAt(m, at); j != nil {
+			return j.level()
+		}
 	}
-	w, ok := f.walkAt(d, at)
-	if !ok || d.Repeatability.Form != RepeatabilityKnown {
+	return posterior.Posterior{}
+}
+
+// predictive returns the distribution of an indication at that instant, by an
+// instrument or, if that is nil, by none.
+func (f *fold) predictive(m *model, at Instant, by *Instrument) posterior.Posterior {
+	d := m.declaration()
+	switch {
+	case m.form == sumForm && by == nil:
+		return f.constant.Predictive(m.prior, d.noise())
+	case m.form == walkForm && by == nil:
+		if w, ok := f.walkAt(m, at); ok && d.Repeatability.Form == RepeatabilityKnown {
+			return w.Predictive(d.Repeatability.StandardDeviation)
+		}
 		return posterior.Posterior{}
 	}
-	return w.Predictive(d.Repeatability.StandardDeviation)
+	if j := f.jointAt(m, at); j != nil {
+		return j.predictive(m, by)
+	}
+	return posterior.Posterior{}
 }
 
 // repeatability returns what is known of r.
-func (f *fold) repeatability(d *Declaration, coverage float64) posterior.Repeatability {
-	switch d.Repeatability.Form {
+func (f *fold) repeatability(m *model, coverage float64) posterior.Repeatability {
+	switch d := m.declaration(); d.Repeatability.Form {
 	case RepeatabilityAbsent:
 		return posterior.Repeatability{}
 	case RepeatabilityKnown:
 		return posterior.Repeatability{Known: true, StandardDeviation: d.Repeatability.StandardDeviation}
+	default:
+		return f.constant.Repeatability(m.prior, d.noise(), coverage)
 	}
-	return f.constant.Repeatability(d.levelPrior(), d.noise(), coverage)
 }
 
 // walkAt moves the walk on to an instant. Before a stated prior time nothing
 // is known: not ok.
-func (f *fold) walkAt(d *Declaration, at Instant) (posterior.Walk, bool) {
+func (f *fold) walkAt(m *model, at Instant) (posterior.Walk, bool) {
 	w, from := f.walk, f.lastTime
-	if f.count == 0 {
-		w = posterior.NewWalk(d.levelPrior())
+	if d := m.declaration(); f.count == 0 {
+		w = posterior.NewWalk(m.prior)
 		if !d.Prior.HasTime {
 			return w, true // the prior's time is that of a reading yet to come
 		}
@@ -162,7 +191,36 @@ func (f *fold) walkAt(d *Declaration, at Instant) (posterior.Walk, bool) {
 	if at < from {
 		return w, false
 	}
-	l := lawOf(d)
+	l := lawOf(m)
 	w.Predict(l.variance(at.Sub(from)))
 	return w, true
+}
+
+// jointAt returns the joint moved on to an instant, to keep; nil before a
+// stated prior time, when nothing is known, and of a belief that isn't normal.
+func (f *fold) jointAt(m *model, at Instant) *joint {
+	var j *joint
+	switch {
+	case f.joint != nil:
+		j = f.joint.clone()
+	case f.count == 0:
+		if j = startJoint(m, at); at < j.at {
+			return nil
+		}
+	default:
+		return f.jointOfLevel(m, at)
+	}
+	j.move(m, at)
+	return j
+}
+
+// jointOfLevel makes a joint of a belief that is held otherwise.
+func (f *fold) jointOfLevel(m *model, at Instant) *joint {
+	p := f.level(m, at)
+	if p.Form() != posterior.FormNormal {
+		return nil
+	}
+	here := *m
+	here.prior = posterior.Prior{Mean: p.Location(), SD: p.Scale()}
+	return newJoint(&here, at)
 }

@@ -147,14 +147,6 @@ func (d *InstrumentDeclaration) State(i Instant) CalibrationState {
 	return CalibrationInForce
 }
 
-// variance returns the variance of the white part of one reading at a level,
-// where s is the standard deviation that applies without the instrument's
-// relative part and display. A display of resolution d adds d^2/12 (GUM F.2.2.1).
-func (d *InstrumentDeclaration) variance(s, level float64) float64 {
-	relative := d.Repeatability.Relative * level
-	return s*s + relative*relative + d.Resolution*d.Resolution/12
-}
-
 // linearised tells whether a reading at an instant enters by a linearisation.
 func (d *InstrumentDeclaration) linearised(i Instant) bool {
 	n := d.at(i)

@@ -82,22 +82,23 @@ type Keeper struct {
 	closeErr error
 
 	// Of the keeper's goroutine.
-	ledger    Ledger
-	byNumber  []*Track // index number-1
-	window    *window
-	decidedTo Position // last position given to a record
-	change    uint64   // of the group being folded
-	budget    int      // steps left for its late readings
-	touched   []*Track // by the group being folded
-	fresh     uint64   // readings applied by it
-	arrived   []*Track // declared for the first time by it
-	partial   *command // a batch that goes on in the next group
-	resuming  *command // waits for the group on its way
-	jobs      []*job   // waiting for the rebuilder
-	working   bool     // the rebuilder has a job
-	sweep     sweeper
-	failed    error
-	warmed    uint64 // no number of interest, see warm
+	ledger      Ledger
+	byNumber    []*Track           // index number-1
+	instruments []*instrumentTrack // likewise
+	window      *window
+	decidedTo   Position // last position given to a record
+	change      uint64   // of the group being folded
+	budget      int      // steps left for its late readings and new models
+	touched     []*Track // by the group being folded
+	fresh       uint64   // readings applied by it
+	arrived     []*Track // declared for the first time by it
+	partial     *command // a batch that goes on in the next group
+	resuming    *command // waits for the group on its way
+	jobs        []*job   // waiting for the rebuilder
+	working     bool     // the rebuilder has a job
+	sweep       sweeper
+	failed      error
+	warmed      uint64 // no number of interest, see warm
 
 	// Written by the keeper's goroutine, read by all.
 	directory  atomic.Pointer[directory]
@@ -325,6 +326,7 @@ func (k *Keeper) foldGroup(records []Record) {
 		return
 	}
 	k.change++
+	k.budget = refoldBudget
 	k.warmed += k.warm(records)
 	for i := range records {
 		k.apply(&records[i])

@@ -21,7 +21,7 @@ func (k *Keeper) load() error {
 func (k *Keeper) loadFrom(l Ledger) error {
 	k.ledger = l
 	k.current.Store(&l)
-	k.directory.Store(&directory{byID: map[QuantityID]place{}})
+	k.directory.Store(newDirectory())
 	k.byNumber = nil
 	k.window = newWindow(k.options.DuplicateWindow, k.options.minGeneration)
 	k.refusals.init(k.options.RefusedLog)
@@ -29,11 +29,15 @@ func (k *Keeper) loadFrom(l Ledger) error {
 	k.change++
 	k.working = true // no job is dispatched while loading
 
+	if err := k.loadInstruments(l); err != nil {
+		return err
+	}
 	sweep, err := l.Checkpoint(k.restore)
 	if err != nil {
 		return err
 	}
 	done := swept{sweep.Segment, sweep.Through}
+	k.budget = refoldBudget
 	k.sweep = sweeper{written: done, durable: done, trimmed: sweep.Through, trim: len(k.byNumber)}
 	k.trimmed.Store(uint64(sweep.Through))
 	sum, err := k.restoreSummary(sweep.Summary)
@@ -53,15 +57,20 @@ func (k *Keeper) restore(e CheckpointEntry) error {
 	}
 	t := k.trackOf(e.Number, e.Quantity.ID)
 	t.quantity, t.savedQuantity = e.Quantity, e.Quantity
-	t.rest(e.Quantity)
 	t.position, t.saved, t.foldedTo = e.Through, e.Through, e.Through
 	t.reset()
-	rebuild, err := t.decodeState(e.State)
+	rebuild, err := t.decodeState(e.State, k.instruments)
 	if err != nil {
 		return err
 	}
-	t.marks[0], t.behind = t.fold, t.last
+	t.rest(k.modelOf(t))
+	t.marks[0], t.behind = t.fold.copied(), t.last
 	t.hollow = rebuild
+	for _, u := range t.used {
+		i := k.instruments[u.number-1]
+		i.users = append(i.users, t)
+		i.publish()
+	}
 	if t.tally.count > 0 {
 		t.stored.Store(int64(t.tally.last))
 	}
@@ -142,8 +151,13 @@ func (k *Keeper) replayFrom(through Position, sum summaryPositions) error {
 func (k *Keeper) checkReplayed(r *Record) error {
 	known := int(r.Number) <= len(k.byNumber)
 	switch {
+	case r.Kind == KindInstrument:
+		if i := r.Instrument; i != nil && i.Number > 0 && int(i.Number) <= len(k.instruments) {
+			return nil
+		}
+		return fmt.Errorf("record %d is of an instrument that the ledger doesn't list", r.Position)
 	case r.Kind == KindDeclaration && r.Declaration != nil && r.Number != 0 && int(r.Number) <= len(k.byNumber)+1,
-		(r.Kind == KindRetirement || r.Kind == KindReading) && r.Number != 0 && known,
+		(r.Kind == KindRetirement || r.Kind == KindReading || r.Kind == KindRenewal && r.Renewal != nil) && r.Number != 0 && known,
 		r.Kind == KindRefusal && known:
 		return nil
 	}
@@ -165,13 +179,16 @@ func (k *Keeper) replay(r *Record, countedTo Position) {
 	if r.Position > countedTo {
 		k.count(r)
 	}
+	if r.Kind == KindInstrument {
+		k.applyInstrument(r)
+	}
 	if r.Number == 0 || r.Kind == KindRefusal {
 		return
 	}
 	if int(r.Number) <= len(k.byNumber) {
 		if t := k.byNumber[r.Number-1]; r.Position <= t.saved {
 			if r.Kind == KindReading {
-				t.rows = append(t.rows, entry{Row: rowOf(r), ID: r.Reading.ID})
+				t.rows = append(t.rows, entry{Row: k.rowOf(r), ID: r.Reading.ID})
 				t.markFrom = len(t.rows)
 			}
 			return
@@ -182,6 +199,7 @@ func (k *Keeper) replay(r *Record, countedTo Position) {
 
 func (k *Keeper) settleReplayed() {
 	k.settleTouched()
+	k.budget = refoldBudget
 	for _, t := range k.touched {
 		t.touched = false
 	}
@@ -192,7 +210,7 @@ func (k *Keeper) settleReplayed() {
 func (k *Keeper) present() error {
 	for _, t := range k.byNumber {
 		if t.hollow && t.job == nil {
-			k.startJob(t)
+			k.startJob(t, t.basis)
 		}
 		t.hollow = false
 	}
@@ -213,6 +231,7 @@ func (k *Keeper) present() error {
 		t.decidedTally = t.tally
 		k.touch(t)
 	}
+	k.presentInstruments()
 	k.decidedTo = Position(k.position.Load())
 	k.tracks.Store(nil)
 	k.publish(k.decidedTo)

@@ -44,6 +44,9 @@ type StoredReading struct {
 	Detail      string
 	ReceiveTime Instant
 	Position    Position
+
+	HasCalibration bool // an applied reading by an instrument
+	Calibration    CalibrationState
 }
 
 // Readings lists readings by time and ledger position; more tells whether
@@ -147,6 +150,9 @@ func (k *Keeper) storedReadings(found []listed) ([]StoredReading, error) {
 	err := k.Ledger().Records(at, func(r *Record) error {
 		s := StoredReading{Reading: r.Reading, Status: Applied, ReceiveTime: r.ReceiveTime, Position: r.Position}
 		s.Quantity = found[len(page)].quantity
+		if i := k.directory.Load().instrument(r.Reading.Instrument); i != nil && r.Kind == KindReading {
+			s.HasCalibration, s.Calibration = true, i.shown.Load().instrument.Declaration.State(r.Reading.Time)
+		}
 		if r.Kind == KindRefusal {
 			s.Status, s.Reason, s.Detail = Refused, r.Reason, r.Detail
 		}

@@ -20,6 +20,7 @@ const (
 	RandomUncertaintyInvalid Reason = "RANDOM_UNCERTAINTY_INVALID"
 	ReadingIDConflict        Reason = "READING_ID_CONFLICT"
 	NotSupported             Reason = "NOT_SUPPORTED" // also of requests
+	InstrumentRetired        Reason = "INSTRUMENT_RETIRED"
 )
 
 // Reasons of refused requests.
@@ -46,7 +47,7 @@ var (
 	ReadingReasons = [...]Reason{
 		UnknownQuantity, QuantityRetired, UnknownInstrument, UnitMismatch, ValueOutOfRange,
 		TimeOutOfRange, TimeInFuture, BeforePrior, NoRepeatability, RandomUncertaintyInvalid,
-		ReadingIDConflict, NotSupported,
+		ReadingIDConflict, NotSupported, InstrumentRetired,
 	}
 	RequestReasons = [...]Reason{
 		MalformedBody, UnknownField, UnknownParameter, MissingField, InvalidField, InvalidID,

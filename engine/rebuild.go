@@ -8,13 +8,14 @@ import (
 // job is a rebuild: the belief of one quantity, folded anew from all its
 // readings. It works on copies and reads of the ledger, so ingest goes on.
 type job struct {
-	track    *Track
-	quantity *Quantity // the declaration to fold under
-	number   QuantityNumber
-	recent   []entry // the track's rows when the job began
-	count    int     // readings applied by then
-	position Position
-	ledger   Ledger
+	track     *Track
+	model     *model // to fold under
+	number    QuantityNumber
+	recent    []entry // the track's rows when the job began
+	count     int     // readings applied by then
+	position  Position
+	ledger    Ledger
+	directory *directory
 
 	fold  fold
 	last  entry
@@ -29,12 +30,12 @@ func (j *job) run() {
 	all, err := loadEntries(j.ledger, j.number, j.position, j.count, j.recent)
 	if err != nil {
 		j.fault = err
-		if all, j.err = replayEntries(j.ledger, j.number, j.position); j.err != nil {
+		if all, j.err = replayEntries(j.ledger, j.directory, j.number, j.position); j.err != nil {
 			return
 		}
 	}
 	var t Track
-	t.rest(j.quantity)
+	t.rest(j.model)
 	t.reset()
 	if !t.law.ordered {
 		j.sum(&t, all)
@@ -95,11 +96,11 @@ func loadEntries(l Ledger, number QuantityNumber, through Position, count int, r
 
 // replayEntries is loadEntries from the records themselves, for when the index
 // can't be relied on: it reads the whole ledger.
-func replayEntries(l Ledger, number QuantityNumber, through Position) ([]entry, error) {
+func replayEntries(l Ledger, known *directory, number QuantityNumber, through Position) ([]entry, error) {
 	var all []entry
 	err := l.Replay(1, func(r *Record) error {
 		if r.Kind == KindReading && r.Number == number && r.Position <= through {
-			all = append(all, entry{Row: rowOf(r), ID: r.Reading.ID})
+			all = append(all, entry{Row: rowOf(r, known.numberOf(r.Reading.Instrument)), ID: r.Reading.ID})
 		}
 		return nil
 	})

@@ -92,12 +92,13 @@ func (k *Keeper) refusalOf(r *Record) refusal {
 }
 
 // counts are the numbers of readings by what became of them: since the ledger
-// began, but for duplicates, which are not recorded and count since the start
-// of the process.
+// began, but for duplicates, which are not recorded, and those by calibration,
+// which count since the start of the process.
 type counts struct {
 	applied    atomic.Uint64
 	duplicates atomic.Uint64
 	refused    [len(ReadingReasons)]atomic.Uint64
+	calibrated [len(CalibrationStates)]atomic.Uint64
 }
 
 func (c *counts) countRefused(reason Reason) {

@@ -78,6 +78,7 @@ func (k *Keeper) forget() error {
 		t.decidedTally = t.tally
 		t.saved, t.savedQuantity = 0, nil // what the sweep under way wrote is void
 	}
+	k.presentInstruments()
 	s := &k.sweep
 	*s = sweeper{written: s.durable, durable: s.durable, trimmed: s.trimmed, trim: s.trim}
 	clear(k.refusals.taken)

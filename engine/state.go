@@ -10,18 +10,22 @@ import (
 )
 
 // appendState encodes what a checkpoint keeps of a track. A track that is
-// being rebuilt is kept without a fold.
+// being rebuilt is kept without a fold. Version 2 has what instruments and a joint
+// belief add; a track without either is written as version 1.
 func (t *Track) appendState(b []byte) []byte {
-	rebuild := byte(0)
-	if t.job != nil {
-		rebuild = 1
+	version := byte(1)
+	if len(t.used) > 0 || t.fold.joint != nil {
+		version = stateVersion
 	}
-	b = append(b, stateVersion, rebuild)
+	b = append(b, version, flag(t.job != nil))
 	b = binary.AppendUvarint(b, uint64(t.tally.count))
 	b = binary.AppendUvarint(b, uint64(t.tally.bare))
 	b = binary.BigEndian.AppendUint64(b, math.Float64bits(t.tally.largest))
 	b = binary.AppendVarint(b, int64(t.tally.first))
 	b = binary.AppendVarint(b, int64(t.tally.last))
+	if version > 1 {
+		b = t.appendUses(b)
+	}
 	if t.job != nil {
 		return b
 	}
@@ -30,7 +34,11 @@ func (t *Track) appendState(b []byte) []byte {
 	b = binary.AppendVarint(b, int64(f.lastTime))
 	b = appendEntry(b, &t.last)
 	b = appendBlock(b, f.constant.AppendBinary(nil))
-	return appendBlock(b, f.walk.AppendBinary(nil))
+	b = appendBlock(b, f.walk.AppendBinary(nil))
+	if version > 1 {
+		b = f.joint.append(b)
+	}
+	return b
 }
 
 func appendEntry(b []byte, e *entry) []byte {
@@ -44,8 +52,15 @@ func appendEntry(b []byte, e *entry) []byte {
 	if e.HasID {
 		flags |= 2
 	}
+	if e.Instrument != 0 {
+		flags |= 4
+	}
 	b = append(b, flags)
 	b = binary.AppendUvarint(b, uint64(e.Position))
+	if e.Instrument != 0 {
+		b = binary.AppendUvarint(b, uint64(e.Instrument))
+		b = binary.BigEndian.AppendUint64(b, e.Occasion)
+	}
 	return appendBlock(b, []byte(e.ID))
 }
 
@@ -54,24 +69,31 @@ func appendBlock(b, block []byte) []byte {
 }
 
 // decodeState fills t with an encoded state. rebuild tells that there is no
-// fold in it.
-func (t *Track) decodeState(b []byte) (rebuild bool, err error) {
+// fold in it, or that it rests on instruments as they are no longer declared.
+func (t *Track) decodeState(b []byte, known []*instrumentTrack) (rebuild bool, err error) {
 	r := stateReader{rest: b}
-	if version := r.byte(); version != stateVersion {
-		return true, fmt.Errorf("state of quantity %q has version %d, not %d", t.id, version, stateVersion)
+	version := r.byte()
+	if version == 0 || version > stateVersion {
+		return true, fmt.Errorf("state of quantity %q has version %d, not up to %d", t.id, version, stateVersion)
 	}
-	rebuild = r.byte() == 1
+	hollow, stale := r.byte() == 1, false
 	t.tally = tally{
 		count: int(r.uvarint()), bare: int(r.uvarint()), largest: r.float(),
 		first: Instant(r.varint()), last: Instant(r.varint()),
 	}
-	if !rebuild {
+	if version > 1 {
+		t.used, stale = r.uses(known)
+	}
+	if !hollow {
 		f := &t.fold
 		f.count = int(r.uvarint())
 		f.lastTime = Instant(r.varint())
 		t.last = r.entry()
 		f.constant = decodeBlock(&r, posterior.DecodeConstant)
 		f.walk = decodeBlock(&r, posterior.DecodeWalk)
+		if version > 1 {
+			f.joint = r.joint()
+		}
 	}
 	if r.err == nil && len(r.rest) > 0 {
 		r.err = errors.New("trailing bytes")
@@ -79,7 +101,10 @@ func (t *Track) decodeState(b []byte) (rebuild bool, err error) {
 	if r.err != nil {
 		return true, fmt.Errorf("state of quantity %q: %w", t.id, r.err)
 	}
-	return rebuild, nil
+	if stale {
+		t.reset()
+	}
+	return hollow || stale, nil
 }
 
 // stateReader decodes until the first error, which it keeps.
@@ -137,6 +162,10 @@ func (r *stateReader) entry() entry {
 	flags := r.byte()
 	e.HasUncertainty, e.HasID = flags&1 != 0, flags&2 != 0
 	e.Position = Position(r.uvarint())
+	if flags&4 != 0 {
+		e.Instrument = InstrumentNumber(r.uvarint())
+		e.Occasion = binary.BigEndian.Uint64(r.take(8))
+	}
 	e.ID = ReadingID(r.block())
 	return e
 }

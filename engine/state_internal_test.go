@@ -8,35 +8,56 @@ import (
 // Any text is an error or a state that encodes to the same text again, and
 // what a track encodes is decoded to the same bits.
 func FuzzDecodeState(f *testing.F) {
+	gauge := &Instrument{Number: 1, Revision: 3, Declaration: InstrumentDeclaration{
+		Repeatability: InstrumentRepeatability{StandardDeviation: 0.1, BetweenOccasions: 0.2, Correlated: Correlated{0.1, 1}},
+		Calibrations:  []Calibration{{Bias: 1, BiasStandardUncertainty: 0.5, Reference: "block", CommonStandardUncertainty: 0.1}},
+	}}
+	known := []*instrumentTrack{{number: 1, current: gauge}}
 	var t Track
 	t.quantity = &Quantity{}
-	t.rest(t.quantity)
+	t.rest(newModel(t.quantity, nil))
 	t.reset()
 	f.Add(t.appendState(nil))
 	t.fresh = []entry{{Row: Row{Time: 5, Value: 1.5, HasUncertainty: true, Uncertainty: 0.1, HasID: true, Position: 9}, ID: "r"}}
 	t.settle(0)
 	f.Add(t.appendState(nil))
-	t.rest(&Quantity{Declaration: Declaration{
+	moving := &Quantity{Declaration: Declaration{
 		Dynamics:      Dynamics{Form: DynamicsRandomWalk, StandardDeviation: 1, Per: 1},
 		Repeatability: Repeatability{Form: RepeatabilityKnown, StandardDeviation: 1},
-	}})
-	t.reset()
-	t.fresh = []entry{{Row: Row{Time: 5, Value: 1.5}}}
-	t.settle(0)
-	f.Add(t.appendState(nil))
+	}}
+	for _, instruments := range [][]*Instrument{nil, {gauge}} {
+		t.rest(newModel(moving, instruments))
+		t.reset()
+		r := Row{Time: 5, Value: 1.5, Instrument: InstrumentNumber(len(instruments)), Occasion: 7}
+		if t.used = nil; r.Instrument > 0 {
+			t.used, _ = addUse(nil, &r)
+		}
+		t.fresh = []entry{{Row: r}}
+		t.settle(0)
+		f.Add(t.appendState(nil))
+	}
 	f.Add([]byte{stateVersion, 1})
 	f.Add([]byte{0})
 
 	f.Fuzz(func(test *testing.T, b []byte) {
 		var first, second Track
-		rebuild, err := first.decodeState(b)
+		rebuild, err := first.decodeState(b, known)
 		if err != nil || rebuild {
 			return
 		}
+		rest := func(t *Track) {
+			var named []*Instrument
+			if len(t.used) > 0 {
+				named = append(named, gauge)
+			}
+			t.rest(newModel(moving, named))
+		}
+		rest(&first)
 		again := first.appendState(nil)
-		if _, err := second.decodeState(again); err != nil {
+		if _, err := second.decodeState(again, known); err != nil {
 			test.Fatalf("%x decodes, but %x does not: %v", b, again, err)
 		}
+		rest(&second)
 		if third := second.appendState(nil); !bytes.Equal(again, third) {
 			test.Errorf("%x becomes %x", again, third)
 		}

@@ -193,7 +193,7 @@ func (k *Keeper) finalCheckpoint() error {
 // Versions of the texts that are opaque to the ledger. One that changes keeps
 // the decoder of the versions before it.
 const (
-	stateVersion   = 1
+	stateVersion   = 2
 	summaryVersion = 1
 )
 

@@ -34,14 +34,16 @@ type Track struct {
 	decided      *Quantity
 	rules        rules
 	decidedTally tally
+	decidedUsed  []use
 	stored       atomic.Int64 // no reading that memory may have dropped is later; for all to read
 
 	// What is durable.
 	quantity *Quantity
-	basis    *Quantity
+	basis    *model
 	tally    tally
 	position Position
-	law      law // of basis
+	law      law   // of basis
+	used     []use // of instruments, by number
 	fold     fold
 	foldedTo Position
 	last     entry // the latest of an ordered track, in canonical order
@@ -67,6 +69,7 @@ type rules struct {
 	prior         posterior.Prior
 	retired       bool
 	needsOwnNoise bool // no repeatability is declared
+	learned       bool // it is learned
 	revision      uint32
 }
 
@@ -77,7 +80,7 @@ func (t *Track) decide(q *Quantity) {
 	t.rules = rules{
 		unit: d.Unit, scale: d.Repeatability.scale(), priorTime: MinInstant, retired: q.Retired,
 		needsOwnNoise: d.Repeatability.Form == RepeatabilityAbsent, revision: q.Revision,
-		prior: d.levelPrior(),
+		prior: d.levelPrior(), learned: d.Repeatability.Learned(),
 	}
 	if d.Prior.HasTime {
 		t.rules.priorTime = d.Prior.Time
@@ -88,7 +91,7 @@ func (t *Track) decide(q *Quantity) {
 // readings applied before.
 type tally struct {
 	count       int
-	bare        int     // without an uncertainty of their own
+	bare        int     // without an uncertainty of their own or an instrument's
 	largest     float64 // magnitude
 	first, last Instant
 }
@@ -101,7 +104,7 @@ func (a *tally) add(r *Row) {
 		a.last = r.Time
 	}
 	a.count++
-	if !r.HasUncertainty {
+	if !r.HasUncertainty && r.Instrument == 0 {
 		a.bare++
 	}
 	a.largest = max(a.largest, math.Abs(r.Value))
@@ -119,15 +122,15 @@ func (t *Track) publish(change uint64) {
 		Quantity: t.quantity, Position: t.position, Change: change,
 		ReadingCount: t.fold.count, HasLast: t.fold.count > 0, LastTime: t.fold.lastTime,
 		Rebuilding: t.job != nil,
-		tally:      t.tally,
-		basis:      t.basis, fold: t.fold, foldedTo: t.foldedTo,
+		applied:    t.tally.count,
+		basis:      t.basis, fold: t.fold.copied(), foldedTo: t.foldedTo,
 		rows: t.rows, marks: t.marks, markFrom: t.markFrom,
 	})
 }
 
-// rest makes q the quantity whose declaration the belief rests on.
-func (t *Track) rest(q *Quantity) {
-	t.basis, t.law = q, lawOf(&q.Declaration)
+// rest makes m the model that the belief rests on.
+func (t *Track) rest(m *model) {
+	t.basis, t.law = m, lawOf(m)
 }
 
 // reset makes t the track of a quantity without readings.
@@ -190,7 +193,7 @@ func (t *Track) add(e *entry) {
 func (t *Track) extend(e *entry) {
 	if t.law.ordered {
 		if len(t.rows)-t.markFrom == len(t.marks)*markSpacing {
-			t.marks = append(t.marks, t.fold)
+			t.marks = append(t.marks, t.fold.copied())
 		}
 		t.last = *e
 	}
@@ -218,7 +221,7 @@ func (t *Track) insert(fresh []entry, budget int) (steps int, ok bool) {
 	}
 	tail := mergeEntries(t.rows[from:], fresh)
 	t.rows = append(make([]entry, 0, from+len(tail)), t.rows[:from]...)
-	t.fold = t.marks[mark]
+	t.fold = t.marks[mark].copied()
 	t.marks = slices.Clone(t.marks[:mark+1])
 	for i := range tail {
 		t.extend(&tail[i])
@@ -284,7 +287,8 @@ func (t *Track) trim(stored Position) {
 	if mark > 0 {
 		t.behind = t.rows[t.markFrom+mark*markSpacing-1]
 	}
-	t.rows = slices.Clone(t.rows[t.markFrom+mark*markSpacing:])
+	kept := t.rows[t.markFrom+mark*markSpacing:]
+	t.rows = append(make([]entry, 0, len(kept)+markSpacing), kept...)
 	t.marks = slices.Clone(t.marks[mark:])
 	t.markFrom = 0
 }
@@ -295,7 +299,7 @@ func (t *Track) trimSum(stored Position) {
 	if !slices.ContainsFunc(t.rows, func(e entry) bool { return e.Position <= stored }) {
 		return
 	}
-	base, rows, from := t.marks[0], []entry(nil), t.markFrom
+	base, rows, from := t.marks[0].copied(), []entry(nil), t.markFrom
 	for i := range t.rows {
 		switch e := &t.rows[i]; {
 		case e.Position > stored:

@@ -17,21 +17,22 @@ type View struct {
 	Rebuilding   bool    // the belief is that of an earlier position, until a rebuild is done
 	Change       uint64  // grows with each View of any quantity
 
-	tally    tally     // of all applied readings, also those not in the belief yet
-	basis    *Quantity // declaration on which fold rests
+	basis    *model // on which fold rests
 	fold     fold
+	applied  int // readings, also those not in the belief yet
 	foldedTo Position
 	rows     []entry // the applied readings that need not be in storage yet
 	marks    []fold  // as in Track
 	markFrom int
-	still    atomic.Pointer[Figures] // of a belief that time doesn't move, once asked for
+	still    atomic.Pointer[Figures]        // of a belief that time doesn't move, once asked for
+	ahead    atomic.Pointer[horizonFigures] // likewise of the declared horizon
 }
 
 // Declared returns the quantity with the declaration that the belief rests on:
 // while it is rebuilt, the one before.
 func (v *View) Declared() *Quantity {
 	if v.Rebuilding {
-		return v.basis
+		return v.basis.quantity
 	}
 	return v.Quantity
 }

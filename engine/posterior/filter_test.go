@@ -46,7 +46,8 @@ func randomFilter(random *rand.Rand, keep bool) posterior.Filter {
 					terms = append(terms, posterior.Term{State: s, Coefficient: 1 + random.Float64()})
 				}
 			}
-			f.UpdateFrom(random.IntN(2), 5+random.NormFloat64(), 0.1, 1+0.01*random.Float64(), terms, 0.1+random.Float64())
+			label := random.IntN(2)
+			f.UpdateFrom(5+random.NormFloat64(), 0.1, 1+0.01*random.Float64(), terms, posterior.White{Variance: 0.1 + random.Float64(), Label: label})
 		}
 	}
 	return f
@@ -84,7 +85,7 @@ func TestPartsOfAMean(t *testing.T) {
 	f.Account()
 	bias := f.Add(posterior.Process{Variance: 0.09})
 	for i := range 20 {
-		f.UpdateFrom(7, float64(i), 0, 1, []posterior.Term{{State: bias, Coefficient: 1}}, 4)
+		f.UpdateFrom(float64(i), 0, 1, []posterior.Term{{State: bias, Coefficient: 1}}, posterior.White{Variance: 4, Label: 7})
 	}
 	want := map[posterior.SourceKind]float64{posterior.SourceWhite: 0.2, posterior.SourceEntry: 0.09}
 	for _, p := range f.Parts() {

@@ -19,7 +19,8 @@ import (
 //     the Z that haven't crossed by t are an interval, which shrinks with t.
 //     Where e would be negative at the start, D is the final level less its
 //     regression on the first.
-//   - Every path has its mirror image about the mean.
+//   - Every path has its mirror image about the mean; where they start, and how
+//     steeply, is spread evenly over the belief.
 //   - The same path with a steady slope, whose law is known in closed form, is
 //     subtracted as far as it correlates (a control variate, Glasserman 4.1).
 //
@@ -75,8 +76,8 @@ func (p *Passage) wander() *passageTable {
 	var sums [2]control
 	random := rand.New(rand.NewPCG(20, 26))
 	var noise pathNoise
-	for range wanderPairs {
-		noise.draw(random)
+	for i := range wanderPairs {
+		noise.draw(random, i)
 		var a, b [2]track
 		for k, sign := range [...]float64{1, -1} {
 			a[k] = g.follow(&loose, &noise, sign, math.Sqrt(m.Wander))
@@ -134,8 +135,14 @@ type pathNoise struct {
 	upper, lower [wanderSteps]float64
 }
 
-func (n *pathNoise) draw(random *rand.Rand) {
-	n.level, n.slope = random.NormFloat64(), random.NormFloat64()
+// draw takes the path with number i. Level and slope now come from the additive
+// recurrence with the powers of the plastic number, which fills the square evenly
+// (Roberts 2018, "The unreasonable effectiveness of quasirandom sequences", from
+// memory); the level from its upper half, the mirror image being the lower.
+func (n *pathNoise) draw(random *rand.Rand, i int) {
+	_, u := math.Modf(0.5 + 0.75487766624669276*float64(i))
+	_, v := math.Modf(0.5 + 0.56984029099805327*float64(i))
+	n.level, n.slope = -normalQuantile(math.Max(u, 1e-9)/2), normalQuantile(math.Max(v, 1e-9))
 	for i := range wanderSteps {
 		n.walk[i], n.wander[i], n.lag[i] = random.NormFloat64(), random.NormFloat64(), random.NormFloat64()
 		n.upper[i], n.lower[i] = random.ExpFloat64(), random.ExpFloat64()

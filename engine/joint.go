@@ -1,0 +1,383 @@
+package engine
+
+import (
+	"cmp"
+	"math"
+	"slices"
+
+	"leadline.example/engine/posterior"
+)
+
+// A joint is the belief about a quantity together with what its readings share:
+// the errors of calibrations, references and instruments. Each of those is a
+// state of the filter, added when a reading first meets it, in canonical order.
+//
+// Once readings have moved on to an instrument's next calibration, or to its
+// next occasion, no later reading in canonical order can meet the one before:
+// its state is given to the new one, so the states stay few however long a
+// quantity lives, and nothing is lost by it.
+//
+// A joint belongs to the fold it is in. Routes may be shared by copies: they are
+// replaced, never changed.
+type joint struct {
+	filter     posterior.Filter
+	at         Instant  // where the filter stands
+	renewed    int      // of the model's renewals, those taken in
+	routes     []route  // one for each instrument met
+	states     []source // what each state is, by its index in the filter
+	last       InstrumentNumber
+	flagged    [len(CalibrationStates)]int
+	linearised bool
+	terms      []posterior.Term // of the reading at hand; its space is used again
+}
+
+// route is how an instrument's errors enter its readings. An index of 0, which is
+// the level's, stands for none.
+type route struct {
+	instrument  InstrumentNumber
+	calibration int // index; -1 for none
+	until       Instant
+	own         int
+	reference   int
+	gain        int
+	scale       float64 // of the gain: the level it is relative to; 0 before it is met
+	correlated  int
+	shared      int    // the occasion's error
+	occasion    uint64 // whose it is
+}
+
+// source says what a state of the filter is.
+type source struct {
+	kind       BudgetSource
+	instrument InstrumentNumber
+	reference  string
+}
+
+const (
+	// MaxQuantityInstruments bounds the instruments of one quantity, so that each
+	// finds room for its states.
+	MaxQuantityInstruments = 12
+	maxReferences          = posterior.MaxStates - 2 - 4*MaxQuantityInstruments
+)
+
+// newJoint starts from the model's prior at an instant.
+func newJoint(m *model, at Instant) *joint {
+	j := &joint{filter: posterior.NewFilter(m.motion, m.prior, m.slope), at: at}
+	j.states = make([]source, j.filter.States())
+	return j
+}
+
+// startJoint starts where the prior holds: at its own time, else at the first
+// reading's, or at a renewal before that.
+func startJoint(m *model, first Instant) *joint {
+	switch d := m.declaration(); {
+	case d.Prior.HasTime:
+		first = d.Prior.Time
+	case len(m.renewals) > 0:
+		first = min(first, m.renewals[0].Time)
+	}
+	return newJoint(m, first)
+}
+
+func (j *joint) clone() *joint {
+	c := *j
+	c.filter = j.filter.Clone()
+	c.routes, c.states = slices.Clone(j.routes), slices.Clip(j.states)
+	c.terms = nil
+	return &c
+}
+
+// move goes on to an instant, through the renewals up to then. What lies before
+// is reached already.
+func (j *joint) move(m *model, to Instant) {
+	for j.renewed < len(m.renewals) && m.renewals[j.renewed].Time <= to {
+		r := &m.renewals[j.renewed]
+		j.advance(r.Time)
+		j.filter.Renew(m.renewalPrior(r))
+		j.renewed++
+	}
+	j.advance(to)
+}
+
+func (j *joint) advance(to Instant) {
+	if to > j.at {
+		j.filter.Advance(lasting(j.at, to))
+		j.at = to
+	}
+}
+
+// add takes in a reading that is not before any other.
+func (j *joint) add(m *model, e *Row) {
+	j.move(m, e.Time)
+	j.last = e.Instrument
+	if e.Instrument == 0 {
+		s := m.declaration().Repeatability.StandardDeviation
+		if e.HasUncertainty {
+			s = e.Uncertainty
+		}
+		j.filter.Update(e.Value, 0, 1, nil, s*s)
+		return
+	}
+	d := &m.instrument(e.Instrument).Declaration
+	j.flagged[d.State(e.Time)]++
+	j.linearised = j.linearised || d.linearised(e.Time)
+	y := indication{d: d, terms: j.terms[:0]}
+	y.white(m, e)
+	r := j.route(d, e)
+	offset := y.shared(r)
+	j.terms = y.terms
+	level, variance := e.Value-offset, 0.0
+	if !j.filter.Vague() {
+		level, variance = j.filter.Mean(0), j.filter.Variance(0)
+	}
+	y.noise.Label = int(e.Instrument)
+	first := r.gain > 0 && r.scale == 0
+	y.about(m, r, level, variance)
+	if first && !j.filter.Vague() {
+		j.refine(e, r, &y, offset)
+	}
+	j.filter.UpdateFrom(e.Value, offset, 1, y.terms, y.noise)
+}
+
+// refine lets a gain that is met for the first time be relative to the level as its
+// first reading leaves it, weighed as it deserves: what was known before may be far off.
+// Two rounds settle it.
+func (j *joint) refine(e *Row, r *route, y *indication, offset float64) {
+	for range 2 {
+		trial := j.filter.Clone()
+		trial.UpdateFrom(e.Value, offset, 1, y.terms, y.noise)
+		r.relate(trial.Mean(0), trial.Variance(0))
+		y.terms[len(y.terms)-1].Coefficient = r.scale
+	}
+}
+
+// relate lets the gain be relative to the root mean square of a level.
+func (r *route) relate(level, variance float64) {
+	r.scale = math.Copysign(math.Sqrt(level*level+variance), level)
+}
+
+// indication is how a reading of an instrument rests on the states.
+type indication struct {
+	d        *InstrumentDeclaration
+	s        float64 // of the white part, but for what is relative or displayed
+	relative bool    // whether the instrument's relative part counts
+	terms    []posterior.Term
+	noise    posterior.White
+}
+
+// white finds the repeatability that applies: the reading's own, else the
+// instrument's, else the quantity's.
+func (y *indication) white(m *model, e *Row) {
+	switch r := &y.d.Repeatability; {
+	case e.HasUncertainty:
+		y.s = e.Uncertainty
+	case r.StandardDeviation > 0:
+		y.s, y.relative = r.StandardDeviation, true
+	default:
+		y.s = m.declaration().Repeatability.StandardDeviation
+	}
+}
+
+// shared adds the states that r's instrument shares between readings, the gain last,
+// and returns the declared bias.
+func (y *indication) shared(r *route) (offset float64) {
+	for _, state := range [...]int{r.own, r.correlated, r.shared} {
+		if state > 0 {
+			y.terms = append(y.terms, posterior.Term{State: state, Coefficient: 1})
+		}
+	}
+	if r.calibration < 0 {
+		return 0
+	}
+	c := &y.d.Calibrations[r.calibration]
+	if r.reference > 0 {
+		y.terms = append(y.terms, posterior.Term{State: r.reference, Coefficient: c.CommonStandardUncertainty})
+	}
+	if r.gain > 0 {
+		y.terms = append(y.terms, posterior.Term{State: r.gain})
+	}
+	return c.Bias
+}
+
+// about linearises what is relative to the level about its prediction: never
+// about the reading, whose own error would then weigh it.
+//
+// A level times a gain's error g counts as an error of its own, g times the root mean
+// square of the level as predicted: for a level that stays, as it was when the gain
+// was first met. The obvious way, the extended Kalman filter, linearises the product anew
+// at each reading, and takes the differences between its points of
+// linearisation for knowledge of g. The white noise has the mean of its variance
+// over the level.
+func (y *indication) about(m *model, r *route, level, variance float64) {
+	y.noise.Variance = y.s*y.s + y.d.Resolution*y.d.Resolution/12
+	if u := y.d.Repeatability.Relative; y.relative && u > 0 {
+		y.noise.Variance += u * u * (level*level + variance)
+		y.noise.Relative = u
+	}
+	if r.gain == 0 {
+		return
+	}
+	if r.scale == 0 || m.motion.Form != posterior.MotionConstant {
+		r.relate(level, variance)
+	}
+	y.terms[len(y.terms)-1].Coefficient = r.scale
+}
+
+// route returns how the errors of a reading's instrument enter it, after adding
+// the states that it is the first to meet.
+func (j *joint) route(d *InstrumentDeclaration, e *Row) *route {
+	n := slices.IndexFunc(j.routes, func(r route) bool { return r.instrument == e.Instrument })
+	if n < 0 {
+		n = len(j.routes)
+		r := route{instrument: e.Instrument, calibration: -1, until: math.MinInt64}
+		if c := d.Repeatability.Correlated; c.StandardDeviation > 0 {
+			r.correlated = j.enter(source{kind: CorrelatedNoise, instrument: e.Instrument}, posterior.Process{
+				Variance: c.StandardDeviation * c.StandardDeviation, Rate: 1 / c.Time.Seconds(),
+			})
+		}
+		j.routes = append(j.routes, r)
+	}
+	r := &j.routes[n]
+	if e.Time >= r.until {
+		j.calibrate(r, d, e.Time)
+	}
+	if s := d.Repeatability.BetweenOccasions; s > 0 && (r.shared == 0 || e.Occasion == 0 || e.Occasion != r.occasion) {
+		r.occasion = e.Occasion
+		j.renew(&r.shared, source{kind: Occasion, instrument: e.Instrument}, posterior.Process{Variance: s * s})
+	}
+	return r
+}
+
+// calibrate goes on to the calibration that a reading at an instant rests on.
+func (j *joint) calibrate(r *route, d *InstrumentDeclaration, at Instant) {
+	n := d.at(at)
+	r.until = math.MaxInt64
+	if n+1 < len(d.Calibrations) {
+		r.until = d.Calibrations[n+1].ValidFrom
+	}
+	if n < 0 {
+		return
+	}
+	r.calibration = n
+	c := &d.Calibrations[n]
+	own := c.ownVariance()
+	r.reference = 0
+	if c.Reference != "" {
+		if r.reference = j.reference(c.Reference); r.reference == 0 {
+			own += c.CommonStandardUncertainty * c.CommonStandardUncertainty
+		}
+	}
+	own += c.drift() * lasting(c.ValidFrom, at)
+	if own > 0 || c.drift() > 0 || r.own > 0 {
+		j.renew(&r.own, source{kind: Bias, instrument: r.instrument}, posterior.Process{Variance: own, Diffusion: c.drift()})
+	}
+	if u := c.RelativeBiasStandardUncertainty; u > 0 || r.gain > 0 {
+		r.scale = 0
+		j.renew(&r.gain, source{kind: Gain, instrument: r.instrument}, posterior.Process{Variance: u * u})
+	}
+}
+
+// renew gives a state to what is met from now on, adding it if there is none.
+func (j *joint) renew(state *int, s source, p posterior.Process) {
+	if *state == 0 {
+		*state = j.enter(s, p)
+		return
+	}
+	j.filter.Redraw(*state, p)
+}
+
+// enter adds a state.
+func (j *joint) enter(s source, p posterior.Process) int {
+	j.states = append(j.states, s)
+	return j.filter.Add(p)
+}
+
+// reference returns the state of the part that all calibrations against a
+// reference share, in units of its standard deviation; 0 if there is no room for
+// one more: it then counts as the calibration's own.
+func (j *joint) reference(name string) int {
+	met := 0
+	for i := range j.states {
+		if j.states[i].kind == CommonReference {
+			if met++; j.states[i].reference == name {
+				return i
+			}
+		}
+	}
+	if met == maxReferences {
+		return 0
+	}
+	return j.enter(source{kind: CommonReference, reference: name}, posterior.Process{Variance: 1})
+}
+
+// level returns the distribution of the level where the joint stands.
+func (j *joint) level() posterior.Posterior { return j.filter.Posterior() }
+
+// predictive returns the distribution of an indication of an instrument, nil for
+// none, where the joint stands, on an occasion of its own. It changes j.
+func (j *joint) predictive(m *model, i *Instrument) posterior.Posterior {
+	e := Row{Time: j.at}
+	r := m.declaration().Repeatability
+	if j.filter.Vague() {
+		return posterior.Posterior{}
+	}
+	if i == nil {
+		if r.Form != RepeatabilityKnown {
+			return posterior.Posterior{}
+		}
+		return j.filter.Predictive(0, 1, nil, r.StandardDeviation*r.StandardDeviation)
+	}
+	d := &i.Declaration
+	if d.Repeatability.StandardDeviation == 0 && r.Form != RepeatabilityKnown {
+		return posterior.Posterior{}
+	}
+	e.Instrument = i.Number
+	y := indication{d: d}
+	y.white(m, &e)
+	route := j.route(d, &e)
+	offset := y.shared(route)
+	y.about(m, route, j.filter.Mean(0), j.filter.Variance(0))
+	return j.filter.Predictive(offset, 1, y.terms, y.noise.Variance)
+}
+
+// bias returns what is believed of the bias of a route's calibration, declared and learned.
+func (j *joint) bias(m *model, r *route) BiasBelief {
+	d := &m.instrument(r.instrument).Declaration
+	c := &d.Calibrations[r.calibration]
+	var terms []posterior.Term
+	if r.own > 0 {
+		terms = append(terms, posterior.Term{State: r.own, Coefficient: 1})
+	}
+	if r.reference > 0 {
+		terms = append(terms, posterior.Term{State: r.reference, Coefficient: c.CommonStandardUncertainty})
+	}
+	mean, variance := j.filter.Combination(terms)
+	return BiasBelief{
+		Instrument: m.instrument(r.instrument).ID, ValidFrom: c.ValidFrom, Reference: c.Reference,
+		Mean: c.Bias + mean, StandardDeviation: math.Sqrt(variance),
+	}
+}
+
+// biases returns what is believed of the calibrations in force, by instrument.
+func (j *joint) biases(m *model) []BiasBelief {
+	var all []BiasBelief
+	for i := range j.routes {
+		if j.routes[i].calibration >= 0 {
+			all = append(all, j.bias(m, &j.routes[i]))
+		}
+	}
+	slices.SortFunc(all, func(a, b BiasBelief) int { return cmp.Compare(a.Instrument, b.Instrument) })
+	return all
+}
+
+// commons returns what is believed of the references met, by name.
+func (j *joint) commons() []ReferenceBelief {
+	var all []ReferenceBelief
+	for i, s := range j.states {
+		if s.kind == CommonReference {
+			all = append(all, ReferenceBelief{s.reference, j.filter.Mean(i), math.Sqrt(j.filter.Variance(i))})
+		}
+	}
+	slices.SortFunc(all, func(a, b ReferenceBelief) int { return cmp.Compare(a.Reference, b.Reference) })
+	return all
+}
