@@ -91,6 +91,12 @@ A coupling gap that drifts out of its tolerance within two minutes; watch its ve
   curl -sN '%[2]s/v1/beliefs:watch?prefix=%[5]s'
 An instrument that dies after half a minute; the belief widens until nobody can say:
   curl -s -H 'Accept: text/plain' %[4]s/belief
+A bearing that wears; when will its play reach the limit?
+  curl -s -H 'Accept: text/plain' '%[6]s/forecast?horizon=1800s&steps=6'
+Two probes that disagree: what is believed of their biases, and what makes up the uncertainty:
+  curl -s %[2]s/v1/quantities/store-4.temperature/belief
+  curl -s -H 'Accept: text/plain' %[2]s/v1/quantities/store-4.temperature/belief:budget
+  curl -s %[2]s/v1/instruments
 How probable is it that the gap is below 0.85 mm?
   curl -s '%[3]s/belief?threshold=0.85'
 Post a reading of your own:
@@ -100,5 +106,5 @@ What Prometheus scrapes:
 
 Leadline informs; it is not a safety system. Keep the interlocks, relief valves and gas
 detectors that act by themselves. Ctrl-C stops the demo and removes its data.
-`, len(plant()), base, gap, dead, string(driftingID))
+`, len(plant()), base, gap, dead, string(driftingID), base+"/v1/quantities/"+string(bearingID))
 }

@@ -5,6 +5,7 @@ import (
 	"fmt"
 	"math"
 	"math/rand/v2"
+	"slices"
 	"time"
 
 	"leadline.example/engine"
@@ -19,6 +20,7 @@ const (
 
 // declarer and poster are what the feed needs of the keeper.
 type declarer interface {
+	DeclareInstrument(ctx context.Context, id engine.InstrumentID, d engine.InstrumentDeclaration, c engine.Condition, receive engine.Instant) (engine.InstrumentView, bool, error)
 	Declare(ctx context.Context, id engine.QuantityID, d engine.Declaration, c engine.Condition, receive engine.Instant) (engine.Quantity, bool, error)
 }
 
@@ -34,14 +36,23 @@ type feed struct {
 	start  time.Time
 	count  int // of readings made up, for their IDs
 	second int // of live ticks
+
+	instruments []plantInstrument
+	turns       map[engine.QuantityID]int
 }
 
 func newFeed(items []plantItem, seed uint64, start time.Time) *feed {
-	return &feed{items: items, random: rand.New(rand.NewPCG(seed, 0)), start: start}
+	return &feed{items: items, random: rand.New(rand.NewPCG(seed, 0)), start: start, instruments: plantInstruments(start), turns: map[engine.QuantityID]int{}}
 }
 
-// declare declares every quantity of the plant.
+// declare declares every instrument and quantity of the plant.
 func (f *feed) declare(ctx context.Context, k declarer) error {
+	for _, i := range f.instruments {
+		_, _, err := k.DeclareInstrument(ctx, i.id, i.declaration, engine.Condition{}, engine.InstantOf(f.start))
+		if err != nil {
+			return fmt.Errorf("declare %s: %w", i.id, err)
+		}
+	}
 	for _, item := range f.items {
 		_, _, err := k.Declare(ctx, item.id, item.declaration, engine.Condition{}, engine.InstantOf(f.start))
 		if err != nil {
@@ -103,14 +114,35 @@ func (f *feed) post(ctx context.Context, k poster, readings []engine.Reading, no
 func (f *feed) reading(item plantItem, at time.Time) engine.Reading {
 	f.count++
 	value := item.truth(at.Sub(f.start).Seconds()) + item.noise*f.random.NormFloat64()
+	by := f.instrumentOf(item)
+	if by != nil {
+		value += by.bias
+		if by.swing != nil {
+			value += by.swing.next(f.random, at)
+		}
+	}
 	if item.display > 0 {
 		value = math.Round(value/item.display) * item.display
 	}
-	return engine.Reading{
+	r := engine.Reading{
 		Quantity: item.id,
 		Value:    value,
 		HasTime:  true,
 		Time:     engine.InstantOf(at),
 		ID:       engine.ReadingID(fmt.Sprintf("demo-%06d", f.count)),
 	}
+	if by != nil {
+		r.Instrument = by.id
+	}
+	return r
+}
+
+// instrumentOf returns the instrument whose turn it is; nil if the item has none.
+func (f *feed) instrumentOf(item plantItem) *plantInstrument {
+	if len(item.instruments) == 0 {
+		return nil
+	}
+	id := item.instruments[f.turns[item.id]%len(item.instruments)]
+	f.turns[item.id]++
+	return &f.instruments[slices.IndexFunc(f.instruments, func(i plantInstrument) bool { return i.id == id })]
 }

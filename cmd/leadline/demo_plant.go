@@ -7,10 +7,11 @@ import (
 	"leadline.example/engine"
 )
 
-// The two quantities that the tour points at.
+// The quantities that the tour points at.
 const (
 	driftingID engine.QuantityID = "brine-pump-3.coupling-gap"
 	silentID   engine.QuantityID = "store-2.temperature"
+	bearingID  engine.QuantityID = "slipway-winch.bearing-play"
 )
 
 // plantItem is one quantity of the plant: how it is declared, and how its
@@ -23,6 +24,7 @@ type plantItem struct {
 	display     float64                      // step of the display; 0: none to speak of
 	every       int                          // seconds between readings
 	silentAfter int                          // the second of the last reading; 0: reports for good
+	instruments []engine.InstrumentID        // that take turns in reading it; none: nobody says which
 }
 
 // pastEvery is how many steps of the past lie between two readings: rare
@@ -35,6 +37,7 @@ func plant() []plantItem {
 	items := refrigeration()
 	items = append(items, brineCircuit()...)
 	items = append(items, stores()...)
+	items = append(items, measured()...)
 	return append(items, workshop()...)
 }
 

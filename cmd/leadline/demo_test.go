@@ -2,6 +2,7 @@ package main
 
 import (
 	"context"
+	"errors"
 	"testing"
 	"time"
 
@@ -70,6 +71,56 @@ func TestDemoTellsItsStory(t *testing.T) {
 	}
 	if unsettled > 0 {
 		t.Errorf("healthy quantities are not CONFORMS %d times; noise and coarse displays must not cry wolf", unsettled)
+	}
+}
+
+// TestDemoInstrumentsTellTheirStory holds the demo's instruments to what the tour and
+// their descriptions say.
+func TestDemoInstrumentsTellTheirStory(t *testing.T) {
+	memory := ledgertest.NewMemory(func() time.Time { return demoStart })
+	keeper, err := engine.New(engine.Options{Open: func() (engine.Ledger, error) { return memory, nil }})
+	if err != nil {
+		t.Fatal(err)
+	}
+	defer keeper.Close()
+	f := newFeed(plant(), 1, demoStart)
+	if err := errors.Join(f.declare(t.Context(), keeper), f.postPast(t.Context(), keeper)); err != nil {
+		t.Fatal(err)
+	}
+	now := demoStart
+	for range 180 {
+		now = now.Add(time.Second)
+		if err := f.postNow(t.Context(), keeper, now); err != nil {
+			t.Fatal(err)
+		}
+	}
+	belief := func(id engine.QuantityID) engine.Belief {
+		b, err := keeper.Belief(t.Context(), id, engine.BeliefQuery{Now: engine.InstantOf(now)})
+		if err != nil {
+			t.Fatal(err)
+		}
+		return b
+	}
+	if b := belief("ice-crusher.blade-gap"); b.Flagged[engine.CalibrationOverdue] == 0 || b.Flagged[engine.CalibrationOverdue] != b.ReadingCount {
+		t.Errorf("%d of %d readings of the blade gap are overdue, want all", b.Flagged[engine.CalibrationOverdue], b.ReadingCount)
+	}
+	b := belief("store-4.temperature")
+	if len(b.Biases) != 2 {
+		t.Fatalf("biases %+v, want two", b.Biases)
+	}
+	// returnProbe comes before wallProbe; they really differ by 0.65.
+	if apart := b.Biases[1].Mean - b.Biases[0].Mean; apart < 0.6 || apart > 0.7 {
+		t.Errorf("the probes are believed to differ by %v, want about 0.65", apart)
+	}
+	if b.Biases[0].StandardDeviation > 0.2 || b.Level.Scale() < 0.1 {
+		t.Errorf("bias known to %v, level to %v: want less than the certificates' 0.25 each, and no better than their common part 0.1", b.Biases[0].StandardDeviation, b.Level.Scale())
+	}
+	if b := belief("brine-pump-1.delivery-pressure"); b.Level.Scale() < 0.01 {
+		t.Errorf("the pressure is known to %v, better than its transmitter's bias", b.Level.Scale())
+	}
+	ahead, err := keeper.Forecast(t.Context(), bearingID, engine.ForecastQuery{Now: engine.InstantOf(now)})
+	if err != nil || ahead.Median < 5*time.Minute || ahead.Median > 15*time.Minute {
+		t.Errorf("the bearing reaches its limit after %v (%v), want some 9 minutes", ahead.Median, err)
 	}
 }
 
