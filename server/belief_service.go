@@ -26,6 +26,7 @@ type beliefKeeper interface {
 type beliefService struct {
 	leadlinev1.UnimplementedBeliefServiceServer
 	keeper   beliefKeeper
+	outlook  outlookKeeper
 	now      func() time.Time
 	stopping <-chan struct{} // closed when streams have to end
 	logger   *slog.Logger

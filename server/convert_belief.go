@@ -23,6 +23,13 @@ func beliefMessage(b *engine.Belief) *leadlinev1.Belief {
 		Rebuilding:     b.Rebuilding,
 		Undetermined:   b.Undetermined,
 		Predictive:     predictiveMessage(b),
+		Slope:          slopeBeliefMessage(b),
+		Biases:         biasMessages(b.Biases),
+		References:     referenceMessages(b.References),
+		Linearised:     b.Linearised,
+
+		ResolutionAsVariance: b.ResolutionAsVariance,
+		Flagged:              flaggedMessage(b),
 	}
 	m.Mean, m.StandardDeviation, m.Interval = summary(b.Level, b.Coverage, b.Lower, b.Upper)
 	if b.HasBreach {
@@ -76,7 +83,7 @@ func predictiveMessage(b *engine.Belief) *leadlinev1.Predictive {
 	if b.Predictive.Form() == posterior.FormNone {
 		return nil
 	}
-	m := &leadlinev1.Predictive{}
+	m := &leadlinev1.Predictive{Instrument: string(b.PredictiveInstrument)}
 	m.Mean, m.StandardDeviation, m.Interval = summary(b.Predictive, b.Coverage, b.PredictiveLower, b.PredictiveUpper)
 	if b.Quantity.Declaration.Tolerance.Declared() {
 		m.Outside = &leadlinev1.Predictive_Outside{Below: b.OutsideBelow, Above: b.OutsideAbove, Either: b.OutsideEither}
@@ -113,4 +120,43 @@ func verdictMessage(v decide.Verdict) leadlinev1.Belief_Verdict {
 		return leadlinev1.Belief_INCONCLUSIVE
 	}
 	return leadlinev1.Belief_UNSPECIFIED
+}
+
+func slopeBeliefMessage(b *engine.Belief) *leadlinev1.Slope {
+	if !b.HasSlope {
+		return nil
+	}
+	return slopeMessage(&engine.Slope{Mean: b.SlopeMean, StandardDeviation: b.SlopeStandardDeviation, Per: b.SlopePer})
+}
+
+func biasMessages(biases []engine.BiasBelief) []*leadlinev1.BiasBelief {
+	var all []*leadlinev1.BiasBelief
+	for _, b := range biases {
+		all = append(all, &leadlinev1.BiasBelief{
+			Instrument: string(b.Instrument), ValidFrom: timestamp(b.ValidFrom),
+			Mean: b.Mean, StandardDeviation: b.StandardDeviation, Reference: b.Reference,
+		})
+	}
+	return all
+}
+
+func referenceMessages(references []engine.ReferenceBelief) []*leadlinev1.ReferenceBelief {
+	var all []*leadlinev1.ReferenceBelief
+	for _, r := range references {
+		all = append(all, &leadlinev1.ReferenceBelief{Reference: r.Reference, Mean: r.Mean, StandardDeviation: r.StandardDeviation})
+	}
+	return all
+}
+
+// flaggedMessage is nil if no reading is flagged.
+func flaggedMessage(b *engine.Belief) *leadlinev1.Belief_Flagged {
+	m := &leadlinev1.Belief_Flagged{
+		Overdue:      uint32(b.Flagged[engine.CalibrationOverdue]),
+		NotYetValid:  uint32(b.Flagged[engine.CalibrationNotYet]),
+		Uncalibrated: uint32(b.Flagged[engine.CalibrationNone]),
+	}
+	if m.GetOverdue() == 0 && m.GetNotYetValid() == 0 && m.GetUncalibrated() == 0 {
+		return nil
+	}
+	return m
 }

@@ -200,10 +200,27 @@ func recordedMessage(r *engine.StoredReading) *leadlinev1.RecordedReading {
 	if finite(r.Value) {
 		m.Value = &r.Value
 	}
+	if r.HasCalibration {
+		m.Calibration = calibrationStateMessage(r.Calibration).Enum()
+	}
 	if r.HasUncertainty && finite(r.RandomStandardUncertainty) {
 		m.RandomStandardUncertainty = &r.RandomStandardUncertainty
 	}
 	return m
+}
+
+func calibrationStateMessage(s engine.CalibrationState) leadlinev1.RecordedReading_CalibrationState {
+	switch s {
+	case engine.CalibrationInForce:
+		return leadlinev1.RecordedReading_IN_FORCE
+	case engine.CalibrationOverdue:
+		return leadlinev1.RecordedReading_OVERDUE
+	case engine.CalibrationNotYet:
+		return leadlinev1.RecordedReading_NOT_YET_VALID
+	case engine.CalibrationNone:
+		return leadlinev1.RecordedReading_UNCALIBRATED
+	}
+	return leadlinev1.RecordedReading_UNSPECIFIED
 }
 
 // detailOf returns why a stored reading was refused. What JSON has no number

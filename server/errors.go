@@ -55,6 +55,7 @@ var outcomes = [...]outcome{
 	{reason: engine.NoRepeatability, code: codes.FailedPrecondition},
 	{reason: engine.RandomUncertaintyInvalid, code: codes.InvalidArgument},
 	{reason: engine.ReadingIDConflict, code: codes.AlreadyExists},
+	{reason: engine.InstrumentRetired, code: codes.FailedPrecondition},
 }
 
 func outcomeOf(reason engine.Reason) (outcome, bool) {

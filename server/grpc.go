@@ -54,6 +54,7 @@ func (s *Server) newGRPC(implementations *services) *grpc.Server {
 		grpc.KeepaliveEnforcementPolicy(keepalive.EnforcementPolicy{MinTime: shortestPingPause, PermitWithoutStream: true}),
 	)
 	leadlinev1.RegisterQuantityServiceServer(g, implementations.quantities)
+	leadlinev1.RegisterInstrumentServiceServer(g, implementations.instruments)
 	leadlinev1.RegisterReadingServiceServer(g, implementations.readings)
 	leadlinev1.RegisterBeliefServiceServer(g, implementations.beliefs)
 	healthgrpc.RegisterHealthServer(g, s.health)

@@ -90,6 +90,7 @@ func (s *Server) publishHealth() {
 	for _, name := range []string{
 		"",
 		leadlinev1.QuantityService_ServiceDesc.ServiceName,
+		leadlinev1.InstrumentService_ServiceDesc.ServiceName,
 		leadlinev1.ReadingService_ServiceDesc.ServiceName,
 		leadlinev1.BeliefService_ServiceDesc.ServiceName,
 	} {

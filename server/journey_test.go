@@ -105,7 +105,7 @@ func TestEveryIDReachesEveryPath(t *testing.T) {
 		for _, escaped := range []string{plain, strings.ReplaceAll(plain, ":", "%3A"), strings.ReplaceAll(plain, ":", "%3a")} {
 			path := "/v1/quantities/" + escaped
 			r.call("PUT", path, gapDeclaration).want(200)
-			for _, get := range []string{path, path + "/belief", path + "/readings"} {
+			for _, get := range []string{path, path + "/belief", path + "/readings", path + "/renewals", path + "/belief:budget", path + "/forecast?horizon=60s"} {
 				r.call("GET", get, "").want(200)
 			}
 			if got := r.call("GET", path, "").json("id"); got != id {

@@ -17,6 +17,8 @@ const (
 	belowNumber
 	eitherNumber
 	aboveNumber
+	horizonNumber
+	medianNumber
 	numberCount
 )
 
@@ -38,6 +40,7 @@ func (n *numberTexts) update(f *engine.Figures) {
 	values := [numberCount]float64{
 		meanNumber: f.Mean, deviationNumber: f.StandardDeviation, lowerNumber: f.Lower, upperNumber: f.Upper,
 		belowNumber: f.Breach.Below, eitherNumber: f.Breach.Either, aboveNumber: f.Breach.Above,
+		horizonNumber: f.HorizonProbability, medianNumber: f.MedianSeconds,
 	}
 	for i, v := range values {
 		if i > 0 && v == values[i-1] {

@@ -24,6 +24,8 @@ const (
 	verdictMetric
 	readingsMetric
 	lastMetric
+	horizonMetric
+	medianMetric
 	metricCount
 )
 
@@ -31,7 +33,7 @@ const (
 type header struct{ name, kind, help string }
 
 // quantityMetrics heads the metrics of a quantity. With every one present a
-// quantity has 15 series.
+// quantity has 15 series, and 17 if it declares a breach horizon.
 func quantityMetrics() [metricCount]header {
 	const gauge, counter = "gauge", "counter"
 	return [metricCount]header{
@@ -45,6 +47,8 @@ func quantityMetrics() [metricCount]header {
 		verdictMetric:   {"leadline_verdict", gauge, "1 for the verdict in force under the quantity's decision rule, 0 for the others."},
 		readingsMetric:  {"leadline_quantity_readings_total", counter, "Readings applied to the quantity."},
 		lastMetric:      {"leadline_last_reading_timestamp_seconds", gauge, "Time of the newest reading applied to the quantity, in seconds since 1970."},
+		horizonMetric:   {"leadline_breach_within_horizon_probability", gauge, "Probability that a limit of the tolerance is crossed within the declared breach horizon."},
+		medianMetric:    {"leadline_median_time_to_breach_seconds", gauge, "Time by which a limit is crossed with probability one half; absent where that is beyond the breach horizon."},
 	}
 }
 
@@ -187,6 +191,12 @@ func (p *part) quantity(l *quantityLabels, n *numberTexts) {
 	if f.HasLast {
 		p.text(lastMetric, l.quantity, endLabels)
 		p.lines[lastMetric] = append(appendSeconds(p.lines[lastMetric], f.LastTime), '\n')
+	}
+	if f.HasHorizon {
+		p.number(horizonMetric, l.quantity, endLabels, n.text(horizonNumber))
+	}
+	if f.HasHorizon && f.HasMedian {
+		p.number(medianMetric, l.quantity, endLabels, n.text(medianNumber))
 	}
 }
 

@@ -129,7 +129,23 @@ func TestPageCarriesWhatABeliefSays(t *testing.T) {
 		t.Errorf("%d series are published, want %d: %v", len(got), len(want), got)
 	}
 	if len(got) > 16 {
-		t.Errorf("a quantity has %d series, the interface promises at most 16", len(got))
+		t.Errorf("a quantity without a horizon has %d series, the interface promises at most 16", len(got))
+	}
+}
+
+// The median is there where it is reached within the declared horizon.
+func TestPageLooksAheadWhereDeclared(t *testing.T) {
+	q := quantityWith("winch.lining", "mm", "")
+	without := len(seriesOf(t, renderQuantities(t, []published{q})))
+	q.HasHorizon, q.HorizonProbability = true, 0.25
+	got := seriesOf(t, renderQuantities(t, []published{q}))
+	if p, ok := got["leadline_breach_within_horizon_probability{quantity=winch.lining}"]; !ok || p != 0.25 || len(got) != without+1 {
+		t.Errorf("%d series with a horizon, %d without: %v", len(got), without, got)
+	}
+	q.HorizonProbability, q.HasMedian, q.MedianSeconds = 0.75, true, 86400.5
+	got = seriesOf(t, renderQuantities(t, []published{q}))
+	if s, ok := got["leadline_median_time_to_breach_seconds{quantity=winch.lining}"]; !ok || s != 86400.5 || len(got) != without+2 {
+		t.Errorf("%d series with a median, %d without: %v", len(got), without, got)
 	}
 }
 
@@ -181,12 +197,13 @@ func TestNumbersFollowTheBelief(t *testing.T) {
 	first := quantityWith("q", "mm", "").Figures
 	greatest, least, above := first, first, first
 	greatest.Mean, greatest.StandardDeviation, greatest.Lower, greatest.Upper = -math.MaxFloat64, math.MaxFloat64, -1.2345678901234567e-300, math.SmallestNonzeroFloat64
+	greatest.HorizonProbability, greatest.MedianSeconds = -math.MaxFloat64, -1.2345678901234567e-300
 	least.Breach = engine.Breach{Below: 0.25, Either: 0.25, Above: 0}
 	above.Breach = engine.Breach{Below: 0, Either: 0.25, Above: 0.25}
 	var n numberTexts
 	for i, f := range []engine.Figures{first, first, greatest, least, above, first} {
 		n.update(&f)
-		for number, want := range [numberCount]float64{f.Mean, f.StandardDeviation, f.Lower, f.Upper, f.Breach.Below, f.Breach.Either, f.Breach.Above} {
+		for number, want := range [numberCount]float64{f.Mean, f.StandardDeviation, f.Lower, f.Upper, f.Breach.Below, f.Breach.Either, f.Breach.Above, f.HorizonProbability, f.MedianSeconds} {
 			if got, err := strconv.ParseFloat(string(n.text(number)), 64); err != nil || got != want {
 				t.Errorf("belief %d: number %d is written %q, want %v", i, number, n.text(number), want)
 			}

@@ -108,7 +108,7 @@ type keeperCollector struct {
 	keeper keeperState
 	ready  func() error
 
-	readings, queued, position, writable, isReady *prometheus.Desc
+	readings, calibration, queued, position, writable, isReady *prometheus.Desc
 }
 
 func newKeeperCollector(k keeperState, ready func() error) *keeperCollector {
@@ -118,6 +118,8 @@ func newKeeperCollector(k keeperState, ready func() error) *keeperCollector {
 	return &keeperCollector{
 		keeper: k, ready: ready,
 		readings: desc("leadline_readings_total", "Readings received, by what became of them.", "status", "reason"),
+		calibration: desc("leadline_readings_by_calibration_total",
+			"Readings applied by an instrument whose calibration was not in force at their time, since the start of the process.", "state"),
 		queued:   desc("leadline_queued_readings", "Readings waiting to become durable."),
 		position: desc("leadline_ledger_position", "Position of the ledger's last record."),
 		writable: desc("leadline_storage_writable", "1 while readings can be stored, else 0."),
@@ -127,7 +129,7 @@ func newKeeperCollector(k keeperState, ready func() error) *keeperCollector {
 
 // Describe implements prometheus.Collector.
 func (c *keeperCollector) Describe(out chan<- *prometheus.Desc) {
-	for _, d := range [...]*prometheus.Desc{c.readings, c.queued, c.position, c.writable, c.isReady} {
+	for _, d := range [...]*prometheus.Desc{c.readings, c.calibration, c.queued, c.position, c.writable, c.isReady} {
 		out <- d
 	}
 }
@@ -144,6 +146,11 @@ func (c *keeperCollector) Collect(out chan<- prometheus.Metric) {
 	gauge(c.isReady, oneIf(c.ready() == nil))
 	for _, k := range everyOutcome() {
 		out <- prometheus.MustNewConstMetric(c.readings, prometheus.CounterValue, float64(s.Counts[k]), k.Status.String(), string(k.Reason))
+	}
+	for _, state := range engine.CalibrationStates {
+		if state != engine.CalibrationInForce {
+			out <- prometheus.MustNewConstMetric(c.calibration, prometheus.CounterValue, float64(s.Calibration[state]), state.String())
+		}
 	}
 }
 

@@ -59,6 +59,41 @@ func TestEveryReasonHasASeriesFromTheStart(t *testing.T) {
 	}
 }
 
+func TestReadingsOutOfCalibrationAreCounted(t *testing.T) {
+	f := newPageFixture(t, nil)
+	f.declare(t, "gap", engine.Declaration{Unit: "mm", Repeatability: engine.Repeatability{Form: engine.RepeatabilityKnown, StandardDeviation: 0.1}})
+	at := engine.InstantOf(scrapeTime)
+	for id, calibrations := range map[engine.InstrumentID][]engine.Calibration{
+		"calliper-7": {{ValidFrom: at - 2000, BiasStandardUncertainty: 0.1, HasDue: true, Due: at - 1000}},
+		"feeler":     nil,
+	} {
+		d := engine.InstrumentDeclaration{Unit: "mm", Calibrations: calibrations}
+		if _, _, err := f.keeper.DeclareInstrument(t.Context(), id, d, engine.Condition{}, at); err != nil {
+			t.Fatal(err)
+		}
+	}
+	var readings []engine.Reading
+	for _, r := range []struct {
+		instrument engine.InstrumentID
+		before     engine.Instant
+	}{{"calliper-7", 3000}, {"calliper-7", 1500}, {"calliper-7", 500}, {"calliper-7", 400}, {"feeler", 1}, {"", 0}} {
+		readings = append(readings, engine.Reading{Quantity: "gap", Value: 1, HasTime: true, Time: at - r.before, Instrument: r.instrument})
+	}
+	if _, err := f.keeper.Post(t.Context(), engine.Batch{Receive: at, Readings: readings}); err != nil {
+		t.Fatal(err)
+	}
+	got := seriesOf(t, f.scrape(t))
+	for state, want := range map[string]float64{"OVERDUE": 2, "NOT_YET_VALID": 1, "UNCALIBRATED": 1} {
+		key := "leadline_readings_by_calibration_total{state=" + state + "}"
+		if v, ok := got[key]; !ok || v != want {
+			t.Errorf("%s is %v (published: %t), want %v", key, v, ok, want)
+		}
+	}
+	if _, ok := got["leadline_readings_by_calibration_total{state=IN_FORCE}"]; ok {
+		t.Error("readings in order are counted too")
+	}
+}
+
 func TestCommitsAndFaultsAreObserved(t *testing.T) {
 	o := NewObservations()
 	f := newPageFixture(t, func(m *MetricsOptions) { m.Observations = o })

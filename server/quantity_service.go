@@ -2,11 +2,8 @@ package server
 
 import (
 	"context"
-	"fmt"
 	"strconv"
 	"time"
-
-	"google.golang.org/protobuf/types/known/timestamppb"
 
 	"leadline.example/engine"
 	leadlinev1 "leadline.example/proto/leadline/v1"
@@ -24,8 +21,9 @@ type quantityKeeper interface {
 // into answers at the edge.
 type quantityService struct {
 	leadlinev1.UnimplementedQuantityServiceServer
-	keeper quantityKeeper
-	now    func() time.Time
+	keeper   quantityKeeper
+	renewals renewalKeeper
+	now      func() time.Time
 }
 
 // DeclareQuantity declares a quantity or replaces its declaration.
@@ -45,7 +43,7 @@ func (s *quantityService) DeclareQuantity(ctx context.Context, r *leadlinev1.Dec
 		return nil, err
 	}
 	id := engine.QuantityID(r.GetId())
-	if err := s.checkOutputOnly(id, r.GetQuantity(), &condition); err != nil {
+	if err := checkOutputOnly(r.GetId(), r.GetQuantity(), func() declared { return s.present(id) }, &condition); err != nil {
 		return nil, err
 	}
 	q, _, err := s.keeper.Declare(ctx, id, declaration, condition, engine.InstantOf(s.now()))
@@ -56,48 +54,13 @@ func (s *quantityService) DeclareQuantity(ctx context.Context, r *leadlinev1.Dec
 	return quantityMessage(&q), nil
 }
 
-// checkOutputOnly lets a declaration carry what the service itself answers
-// with, if it is still so: what was read can be changed and sent back. The
-// condition is tightened to what was compared with.
-func (s *quantityService) checkOutputOnly(id engine.QuantityID, q *leadlinev1.Quantity, c *engine.Condition) error {
-	if q.GetId() != "" && q.GetId() != string(id) {
-		return refuse(engine.InvalidField, "id", fmt.Sprintf("id is %q, not the %q of the request; leave it out", shorten(q.GetId()), id))
-	}
-	if q.GetRevision() == 0 && q.GetCreateTime() == nil && q.GetUpdateTime() == nil && q.GetRetireTime() == nil {
-		return nil
-	}
-	present, err := s.keeper.Quantity(id)
+// present reads what is there; an empty message for nothing.
+func (s *quantityService) present(id engine.QuantityID) *leadlinev1.Quantity {
+	q, err := s.keeper.Quantity(id)
 	if err != nil {
-		present = engine.Quantity{}
+		return &leadlinev1.Quantity{}
 	}
-	// An ETag that is no longer true says it best.
-	if c.IfMatch != "" && c.IfMatch != "*" && c.IfMatch != present.ETag() {
-		return nil
-	}
-	was := quantityMessage(&present)
-	switch {
-	case q.GetRevision() != 0 && q.GetRevision() != was.GetRevision():
-		return notSettable("revision", strconv.FormatUint(uint64(was.GetRevision()), 10))
-	case differs(q.GetCreateTime(), was.GetCreateTime()):
-		return notSettable("create_time", present.CreateTime.String())
-	case differs(q.GetUpdateTime(), was.GetUpdateTime()):
-		return notSettable("update_time", present.UpdateTime.String())
-	case differs(q.GetRetireTime(), was.GetRetireTime()):
-		return notSettable("retire_time", present.RetireTime.String())
-	}
-	if c.IfMatch == "" && present.Revision != 0 {
-		c.IfMatch = present.ETag()
-	}
-	return nil
-}
-
-// differs tells whether a given time is another than the present one.
-func differs(given, present *timestamppb.Timestamp) bool {
-	return given != nil && (present == nil || !given.AsTime().Equal(present.AsTime()))
-}
-
-func notSettable(field, present string) error {
-	return refuse(engine.InvalidField, field, fmt.Sprintf("%s is set by the service, and is %s at present; leave it out", field, present))
+	return quantityMessage(&q)
 }
 
 // GetQuantity reads one quantity.

@@ -70,8 +70,12 @@ func parseParameter(field protoreflect.FieldDescriptor, text string) (remedy str
 			return "give an RFC 3339 time such as 2026-03-01T12:00:00Z, with + written as %2B"
 		}
 	case durationName:
-		if parseDuration(text, new(durationpb.Duration)) != nil {
+		d := new(durationpb.Duration)
+		if parseDuration(text, d) != nil {
 			return "give a duration in seconds such as 86400s"
+		}
+		if _, err := durationOf("", d); err != nil { // which the gateway can't read either
+			return "give a duration of at most 292 years, in seconds such as 86400s"
 		}
 	}
 	return ""

@@ -62,6 +62,7 @@ func newREST(ctx context.Context, s *services, o *origins, logger *slog.Logger) 
 	)
 	return h, errors.Join(
 		leadlinev1.RegisterQuantityServiceHandlerServer(ctx, h.gateway, s.quantities),
+		leadlinev1.RegisterInstrumentServiceHandlerServer(ctx, h.gateway, s.instruments),
 		leadlinev1.RegisterReadingServiceHandlerServer(ctx, h.gateway, s.readings),
 		leadlinev1.RegisterBeliefServiceHandlerServer(ctx, h.gateway, s.beliefs),
 	)

@@ -9,16 +9,16 @@ import (
 	"google.golang.org/protobuf/proto"
 
 	"leadline.example/engine"
-	leadlinev1 "leadline.example/proto/leadline/v1"
 )
 
 // httpStatus is the usual HTTP status of a gRPC code.
 func httpStatus(code codes.Code) int { return runtime.HTTPStatusFromCode(code) }
 
-// writeETag is the gateway's hook that puts a quantity's ETag into the header.
+// writeETag is the gateway's hook that puts the ETag of a quantity or an
+// instrument into the header.
 func writeETag(_ context.Context, w http.ResponseWriter, message proto.Message) error {
-	if q, ok := message.(*leadlinev1.Quantity); ok {
-		w.Header().Set("ETag", quotedETag(q.GetEtag()))
+	if d, ok := message.(declared); ok {
+		w.Header().Set("ETag", quotedETag(d.GetEtag()))
 	}
 	return nil
 }

@@ -92,6 +92,21 @@ func TestRefusedRequestsSayWhy(t *testing.T) {
 		{"walk in no time", declare(`"dynamics":{"random_walk":{"standard_deviation":1,"per":"0s"}}`), 400, engine.InvalidField, "dynamics.random_walk.per"},
 		{"walk over 300 years", declare(`"dynamics":{"random_walk":{"standard_deviation":1,"per":"9467280000s"}}`), 400, engine.InvalidField, "dynamics.random_walk.per"},
 		{"walk with learned repeatability", declare(`"dynamics":{"random_walk":{"standard_deviation":1,"per":"1s"}},"repeatability":{"learned":{}}`), 501, engine.NotSupported, "repeatability.learned"},
+		{"trend without a slope", declare(`"dynamics":{"linear_trend":{}}`), 400, engine.MissingField, "dynamics.linear_trend.slope"},
+		{"slope without a mean", declare(`"dynamics":{"linear_trend":{"slope":{"standard_deviation":1,"per":"1s"}}}`), 400, engine.MissingField, "dynamics.linear_trend.slope.mean"},
+		{"slope without doubt", declare(`"dynamics":{"linear_trend":{"slope":{"mean":1,"per":"1s"}}}`), 400, engine.MissingField, "dynamics.linear_trend.slope.standard_deviation"},
+		{"slope in no time", declare(`"dynamics":{"linear_trend":{"slope":{"mean":1,"standard_deviation":1,"per":"0s"}}}`), 400, engine.InvalidField, "dynamics.linear_trend.slope.per"},
+		{"trend with half a walk", declare(`"dynamics":{"linear_trend":{"standard_deviation":1,"slope":{"mean":1,"standard_deviation":1,"per":"1s"}}}`), 400, engine.MissingField, "dynamics.linear_trend.per"},
+		{"trend with a walk of zero", declare(`"dynamics":{"linear_trend":{"standard_deviation":0,"per":"1s","slope":{"mean":1,"standard_deviation":1,"per":"1s"}}}`), 400, engine.InvalidField, "dynamics.linear_trend.standard_deviation"},
+		{"slope that wanders in no time", declare(`"dynamics":{"linear_trend":{"slope":{"mean":1,"standard_deviation":1,"per":"1s"},"slope_wander":{"standard_deviation":1}}}`), 400, engine.MissingField, "dynamics.linear_trend.slope_wander.per"},
+		{"slope that wanders by zero", declare(`"dynamics":{"linear_trend":{"slope":{"mean":1,"standard_deviation":1,"per":"1s"},"slope_wander":{"standard_deviation":0,"per":"1s"}}}`), 400, engine.InvalidField, "dynamics.linear_trend.slope_wander.standard_deviation"},
+		{"reverting to what", declare(`"dynamics":{"mean_reverting":{"standard_deviation":1,"half_life":"1s"}}`), 400, engine.MissingField, "dynamics.mean_reverting.mean"},
+		{"reverting in what time", declare(`"dynamics":{"mean_reverting":{"mean":0,"standard_deviation":1}}`), 400, engine.MissingField, "dynamics.mean_reverting.half_life"},
+		{"reverting at once", declare(`"dynamics":{"mean_reverting":{"mean":0,"standard_deviation":1,"half_life":"0s"}}`), 400, engine.InvalidField, "dynamics.mean_reverting.half_life"},
+		{"reverting with learned repeatability", declare(`"dynamics":{"mean_reverting":{"mean":0,"standard_deviation":1,"half_life":"1s"}},"repeatability":{"learned":{}}`), 501, engine.NotSupported, "repeatability.learned"},
+		{"looking nowhere", declare(`"tolerance":{"upper":1},"breach_horizon":"0s"`), 400, engine.InvalidField, "breach_horizon"},
+		{"looking back", declare(`"tolerance":{"upper":1},"breach_horizon":"-1s"`), 400, engine.InvalidField, "breach_horizon"},
+		{"looking for no limit", declare(`"breach_horizon":"60s"`), 400, engine.MissingField, "tolerance"},
 		{"empty tolerance", declare(`"tolerance":{}`), 400, engine.MissingField, "tolerance"},
 		{"crossed tolerance", declare(`"tolerance":{"lower":1,"upper":0}`), 400, engine.InvalidField, "tolerance.upper"},
 		{"rule of zeros", declare(`"decision_rule":{"conform_probability":0,"breach_probability":0}`), 400, engine.InvalidField, "decision_rule.conform_probability"},
@@ -153,6 +168,12 @@ func TestWrongMethodNamesTheRightOnes(t *testing.T) {
 		{"/v1/quantities/gap/readings:apply_refused", "GET", "POST"},
 		{"/v1/readings", "OPTIONS", "GET, HEAD, POST"},
 		{"/v1/beliefs:watch", "POST", "GET, HEAD"},
+		{"/v1/instruments/calliper-7", "POST", "DELETE, GET, HEAD, PUT"},
+		{"/v1/instruments", "POST", "GET, HEAD"},
+		{"/v1/quantities/gap:renew", "PATCH", "DELETE, GET, HEAD, POST, PUT"},
+		{"/v1/quantities/gap/renewals", "POST", "GET, HEAD"},
+		{"/v1/quantities/gap/forecast", "POST", "GET, HEAD"},
+		{"/v1/quantities/gap/belief:budget", "POST", "GET, HEAD"},
 		{"/openapi.json", "PUT", "GET, HEAD"},
 	} {
 		a := r.call(test.method, test.path, "").want(405)
@@ -199,6 +220,7 @@ func TestHeadIsGetWithoutABody(t *testing.T) {
 
 func TestAcceptIsNegotiated(t *testing.T) {
 	r := startServer(t)
+	r.call("PUT", "/v1/instruments/calliper-7", calliperDeclaration).want(200)
 	r.call("PUT", "/v1/quantities/gap", gapDeclaration).want(200)
 	const json, text = "application/json", "text/plain; charset=utf-8"
 	for _, test := range []struct {
@@ -221,7 +243,8 @@ func TestAcceptIsNegotiated(t *testing.T) {
 		{"application/json;q=0, text/plain;q=0", 406, json},
 		{"application/json;q=x", 406, json},
 	} {
-		for _, path := range []string{"/v1/quantities/gap", "/v1/quantities/gap/belief", "/v1/beliefs", "/v1/quantities", "/v1/quantities/gap/readings"} {
+		for _, path := range []string{"/v1/quantities/gap", "/v1/quantities/gap/belief", "/v1/beliefs", "/v1/quantities", "/v1/quantities/gap/readings",
+			"/v1/quantities/gap/renewals", "/v1/quantities/gap/forecast?horizon=60s", "/v1/quantities/gap/belief:budget", "/v1/instruments", "/v1/instruments/calliper-7"} {
 			a := r.call("GET", path, "", "Accept", test.accept).want(test.code)
 			if got := a.header.Get("Content-Type"); got != test.media {
 				t.Errorf("%s, Accept %q: %s, want %s", path, test.accept, got, test.media)
@@ -275,6 +298,9 @@ func TestWhatWasReadCanBeSentBack(t *testing.T) {
 	for id, declaration := range map[string]string{
 		"gap":   gapDeclaration,
 		"plain": "{}",
+		"worn": `{"unit":"mm","dynamics":{"linear_trend":{"standard_deviation":0.1,"per":"60s","slope":{"mean":0,"standard_deviation":1,"per":"86400s"},
+			"slope_wander":{"standard_deviation":0.1,"per":"0.001s"}}},"tolerance":{"upper":3},"breach_horizon":"2592000s"}`,
+		"room": `{"unit":"Cel","dynamics":{"mean_reverting":{"mean":0,"standard_deviation":1.5,"half_life":"3600s"}}}`,
 		"full": `{"unit":"K","prior":{"low":1,"high":2,"probability":0.5,"time":"2026-01-01T00:00:00.5Z"},
 			"repeatability":{"learned":{"guess":1,"worth":3.5}},"tolerance":{"lower":0},"decision_rule":{"conform_probability":0.99}}`,
 	} {
@@ -364,7 +390,9 @@ func TestOpenAPIDescribesTheDialect(t *testing.T) {
 	r := startServer(t)
 	a := r.call("GET", "/openapi.json", "").want(200)
 	for _, path := range []string{"/v1/quantities", "/v1/quantities/{id}", "/v1/readings", "/v1/beliefs", "/v1/beliefs:watch",
-		"/v1/quantities/{quantity}/belief", "/v1/quantities/{quantity}/readings", "/v1/quantities/{quantity}/readings:apply_refused"} {
+		"/v1/quantities/{quantity}/belief", "/v1/quantities/{quantity}/readings", "/v1/quantities/{quantity}/readings:apply_refused",
+		"/v1/instruments", "/v1/instruments/{id}", "/v1/quantities/{id}:renew", "/v1/quantities/{id}:withdraw_renewal", "/v1/quantities/{id}/renewals",
+		"/v1/quantities/{quantity}/forecast", "/v1/quantities/{quantity}/belief:budget"} {
 		if a.json("paths", path) == nil {
 			t.Errorf("%s is not described", path)
 		}

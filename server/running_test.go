@@ -42,17 +42,18 @@ func (c *clock) Advance(d time.Duration) { c.nanos.Add(int64(d)) }
 // running is a service on a ledger file, reached over the network as by any
 // client.
 type running struct {
-	t          testing.TB
-	clock      *clock
-	file       string
-	keeper     *engine.Keeper
-	url        string
-	log        *lockedBuffer
-	quantities leadlinev1.QuantityServiceClient
-	readings   leadlinev1.ReadingServiceClient
-	beliefs    leadlinev1.BeliefServiceClient
-	conn       *grpc.ClientConn
-	stop       func()
+	t           testing.TB
+	clock       *clock
+	file        string
+	keeper      *engine.Keeper
+	url         string
+	log         *lockedBuffer
+	quantities  leadlinev1.QuantityServiceClient
+	instruments leadlinev1.InstrumentServiceClient
+	readings    leadlinev1.ReadingServiceClient
+	beliefs     leadlinev1.BeliefServiceClient
+	conn        *grpc.ClientConn
+	stop        func()
 }
 
 func startServer(t testing.TB) *running {
@@ -87,6 +88,7 @@ func startServerOn(t testing.TB, file string, c *clock, change ...func(*server.O
 		t.Fatal(err)
 	}
 	r.quantities = leadlinev1.NewQuantityServiceClient(r.conn)
+	r.instruments = leadlinev1.NewInstrumentServiceClient(r.conn)
 	r.readings = leadlinev1.NewReadingServiceClient(r.conn)
 	r.beliefs = leadlinev1.NewBeliefServiceClient(r.conn)
 

@@ -97,9 +97,10 @@ type Server struct {
 
 // services are the implementations behind both protocols.
 type services struct {
-	quantities *quantityService
-	readings   *readingService
-	beliefs    *beliefService
+	quantities  *quantityService
+	instruments *instrumentService
+	readings    *readingService
+	beliefs     *beliefService
 }
 
 // New returns a server that listens nowhere yet.
@@ -109,9 +110,10 @@ func New(o Options) (*Server, error) {
 	}
 	s := &Server{options: o, stopping: make(chan struct{}), health: health.NewServer(), arrivals: newArrivals()}
 	implementations := &services{
-		quantities: &quantityService{keeper: o.Keeper, now: o.Now},
-		readings:   &readingService{keeper: o.Readings, now: o.Now, stopping: s.stopping},
-		beliefs:    &beliefService{keeper: o.Keeper, now: o.Now, stopping: s.stopping, logger: o.Logger},
+		quantities:  &quantityService{keeper: o.Keeper, renewals: o.Keeper, now: o.Now},
+		instruments: &instrumentService{keeper: o.Keeper, now: o.Now},
+		readings:    &readingService{keeper: o.Readings, now: o.Now, stopping: s.stopping},
+		beliefs:     &beliefService{keeper: o.Keeper, outlook: o.Keeper, now: o.Now, stopping: s.stopping, logger: o.Logger},
 	}
 	h, err := newREST(context.Background(), implementations, newOrigins(o.AnyHost), o.Logger)
 	if err != nil {

@@ -221,7 +221,7 @@ func TestGRPCRefusesWithDetails(t *testing.T) {
 func TestHealthAndReflection(t *testing.T) {
 	r := startServer(t)
 	health := healthgrpc.NewHealthClient(r.conn)
-	names := []string{"", "leadline.v1.QuantityService", "leadline.v1.ReadingService", "leadline.v1.BeliefService"}
+	names := []string{"", "leadline.v1.QuantityService", "leadline.v1.InstrumentService", "leadline.v1.ReadingService", "leadline.v1.BeliefService"}
 	for _, name := range names {
 		a, err := health.Check(t.Context(), &healthgrpc.HealthCheckRequest{Service: name})
 		if err != nil || a.GetStatus() != healthgrpc.HealthCheckResponse_SERVING {

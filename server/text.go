@@ -81,15 +81,13 @@ func (p *sheet) belief(b *engine.Belief) {
 	p.judgement(b)
 	p.prediction(b)
 	p.repeatability(b)
+	p.instruments(b)
 	if b.HasLast {
 		p.line("readings", "%d, the last %s before (%s)", b.ReadingCount, elapsed(b.Time.Sub(b.LastTime)), b.LastTime)
 	} else {
 		p.line("readings", "none yet")
 	}
-	p.line("basis", "revision %d, ledger position %d", b.Quantity.Revision, b.Position)
-	if b.Rebuilding {
-		p.line("note", "the belief is being rebuilt; this is the one before")
-	}
+	p.basis(b.Quantity.Revision, b.Position, b.Rebuilding)
 }
 
 // level writes the result with its standard uncertainty, the interval and
@@ -107,6 +105,9 @@ func (p *sheet) level(b *engine.Belief) {
 		lower, upper = roundTo(b.Lower, last), roundTo(b.Upper, last)
 	}
 	p.line("interval", "%s to %s (coverage probability %s)", lower, within(upper, unit), shortest(b.Coverage))
+	if b.HasSlope {
+		p.line("slope", "%s in %s", estimateText(b.SlopeMean, b.SlopeStandardDeviation, unit), elapsedOrShort(b.SlopePer))
+	}
 	if b.HasThreshold {
 		p.line("threshold", "below %s with probability %s", within(shortest(b.Threshold), unit), probabilityText(b.ProbabilityBelow))
 	}
@@ -197,7 +198,11 @@ func (p *sheet) prediction(b *engine.Belief) {
 		return
 	}
 	unit := b.Quantity.Declaration.Unit
-	p.line("next reading", "%s", resultText(b.Predictive, b.PredictiveLower, b.PredictiveUpper, unit))
+	by := ""
+	if b.PredictiveInstrument != "" {
+		by = " (" + string(b.PredictiveInstrument) + ")"
+	}
+	p.line("next reading", "%s%s", resultText(b.Predictive, b.PredictiveLower, b.PredictiveUpper, unit), by)
 }
 
 func (p *sheet) repeatability(b *engine.Belief) {

@@ -25,6 +25,9 @@ func quantityText(q *engine.Quantity) string {
 		p.line("decision rule", "conforms from probability %s, breaches from %s",
 			shortest(r.ConformProbability), shortest(r.BreachProbability))
 	}
+	if d.BreachHorizon != 0 {
+		p.line("looks ahead", "%s", elapsedOrShort(d.BreachHorizon))
+	}
 	p.line("created", "%s", q.CreateTime)
 	p.line("updated", "%s", q.UpdateTime)
 	if q.Retired {
@@ -63,9 +66,30 @@ func repeatabilityText(r engine.Repeatability, unit string) string {
 func dynamicsText(d engine.Dynamics, unit string) string {
 	switch d.Form {
 	case engine.DynamicsRandomWalk:
-		return fmt.Sprintf("random walk, %s in %s", within(shortest(d.StandardDeviation), unit), elapsedOrShort(d.Per))
+		return "random walk, " + movementText(d.StandardDeviation, d.Per, unit)
+	case engine.DynamicsLinearTrend:
+		text := "linear trend, slope " + slopeText(&d.Slope, unit)
+		if d.Wander.Per != 0 {
+			text += ", which changes by " + movementText(d.Wander.StandardDeviation, d.Wander.Per, unit)
+		}
+		if d.Per != 0 {
+			text += "; random walk, " + movementText(d.StandardDeviation, d.Per, unit)
+		}
+		return text
+	case engine.DynamicsMeanReverting:
+		return fmt.Sprintf("reverting to %s, with standard deviation %s and half-life %s",
+			within(shortest(d.Mean), unit), within(shortest(d.StandardDeviation), unit), elapsedOrShort(d.HalfLife))
 	}
 	return "constant"
+}
+
+func movementText(sd float64, per time.Duration, unit string) string {
+	return within(shortest(sd), unit) + " in " + elapsedOrShort(per)
+}
+
+// slopeText writes a slope as it was declared.
+func slopeText(s *engine.Slope, unit string) string {
+	return fmt.Sprintf("%s (u = %s) in %s", within(shortest(s.Mean), unit), within(shortest(s.StandardDeviation), unit), elapsedOrShort(s.Per))
 }
 
 // elapsedOrShort writes a declared duration exactly.
@@ -114,14 +138,18 @@ func readingsText(readings []engine.StoredReading, nextPage string) string {
 		p.WriteString("No readings.\n")
 		return p.String()
 	}
-	w := p.table("TIME", "QUANTITY", "VALUE", "READING ID", "STATUS", "DETAIL")
+	w := p.table("TIME", "QUANTITY", "VALUE", "INSTRUMENT", "READING ID", "STATUS", "DETAIL")
 	for i := range readings {
 		r := &readings[i]
 		value := within(shortest(r.Value), r.Unit)
 		if r.HasUncertainty {
 			value += ", u = " + shortest(r.RandomStandardUncertainty)
 		}
-		w.row(timeText(r.Time), string(r.Quantity), value, string(r.ID), outcomeText(r.Status, r.Reason), r.Detail)
+		outcome := outcomeText(r.Status, r.Reason)
+		if r.HasCalibration && r.Calibration != engine.CalibrationInForce {
+			outcome += " " + r.Calibration.String()
+		}
+		w.row(timeText(r.Time), string(r.Quantity), value, string(r.Instrument), string(r.ID), outcome, r.Detail)
 	}
 	_ = w.Flush() // into memory
 	p.more(nextPage)

@@ -103,6 +103,16 @@ func TestBeliefReadsAtAGlance(t *testing.T) {
 			b.Predictive = posterior.Posterior{}
 			b.Quantity.Declaration.Tolerance.HasUpper = false
 		}},
+		{"belief-with-instruments", func(b *engine.Belief) {
+			b.HasSlope, b.SlopeMean, b.SlopeStandardDeviation, b.SlopePer = true, -0.0213, 0.0034, 24*time.Hour
+			b.Biases = []engine.BiasBelief{
+				{Instrument: "calliper-7", ValidFrom: instant(t, "2026-01-10T00:00:00Z"), Reference: "gauge blocks 4", Mean: 0.01234, StandardDeviation: 0.0043},
+				{Instrument: "feeler", ValidFrom: instant(t, "2025-07-01T00:00:00Z"), Mean: -0.0021, StandardDeviation: 0.0007},
+			}
+			b.References = []engine.ReferenceBelief{{Reference: "gauge blocks 4", Mean: 0.312, StandardDeviation: 0.9012}}
+			b.Flagged = [4]int{engine.CalibrationInForce: 4, engine.CalibrationOverdue: 3, engine.CalibrationNotYet: 2, engine.CalibrationNone: 1}
+			b.Linearised, b.ResolutionAsVariance, b.PredictiveInstrument = true, true, "feeler"
+		}},
 		{"belief-without-tolerance", func(b *engine.Belief) {
 			b.Quantity.Declaration.Tolerance = engine.Tolerance{}
 			b.HasBreach, b.Verdict = false, 0
@@ -145,10 +155,27 @@ func TestQuantityReadsAsDeclared(t *testing.T) {
 	checkGolden(t, "quantities", quantitiesText([]engine.Quantity{known, own}, "bmV4dA"))
 }
 
+func TestMovingQuantitiesReadAsDeclared(t *testing.T) {
+	worn, room := gapQuantity(t), gapQuantity(t)
+	worn.ID, worn.Declaration.BreachHorizon = "slipway-winch.lining", 30*24*time.Hour
+	worn.Declaration.Dynamics = engine.Dynamics{
+		Form: engine.DynamicsLinearTrend, StandardDeviation: 0.01, Per: time.Hour,
+		Slope: engine.Slope{Mean: -0.02, StandardDeviation: 0.01, Per: 24 * time.Hour}, Wander: engine.Wander{StandardDeviation: 0.001, Per: 7 * 24 * time.Hour},
+	}
+	room.ID = "room-2.temperature"
+	room.Declaration.Dynamics = engine.Dynamics{Form: engine.DynamicsMeanReverting, Mean: -22, StandardDeviation: 1.5, HalfLife: 90 * time.Minute}
+	checkGolden(t, "quantity-trend", quantityText(&worn))
+	checkGolden(t, "quantity-reverting", quantityText(&room))
+}
+
 func TestReadingsLineUp(t *testing.T) {
 	checkGolden(t, "readings", readingsText([]engine.StoredReading{
 		{Reading: engine.Reading{Quantity: "brine-pump-3.coupling-gap", Value: 0.81, Time: instant(t, "2026-03-01T11:56:30.5Z"), Unit: "mm",
 			ID: "gauge-7/1041", HasUncertainty: true, RandomStandardUncertainty: 0.005}, Status: engine.Applied},
+		{Reading: engine.Reading{Quantity: "brine-pump-3.coupling-gap", Value: 0.81, Time: instant(t, "2026-03-01T11:57:00Z"),
+			Instrument: "calliper-7"}, Status: engine.Applied, HasCalibration: true, Calibration: engine.CalibrationOverdue},
+		{Reading: engine.Reading{Quantity: "brine-pump-3.coupling-gap", Value: 0.81, Time: instant(t, "2026-03-01T11:57:10Z"),
+			Instrument: "gauge-7"}, Status: engine.Applied, HasCalibration: true, Calibration: engine.CalibrationInForce},
 		{Reading: engine.Reading{Quantity: "brine-pump-3.gap", Value: 0.82, Time: instant(t, "2026-03-01T11:57:30Z")},
 			Status: engine.Refused, Reason: engine.UnknownQuantity, Detail: "quantity brine-pump-3.gap is not declared; declare it and put the reading through"},
 	}, ""))
