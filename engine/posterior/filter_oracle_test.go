@@ -13,6 +13,7 @@ import (
 type life struct {
 	random *rand.Rand
 	scale  float64
+	spread float64 // of the logarithms of the standard deviations
 	now    *big.Float
 	filter posterior.Filter
 	told   history
@@ -20,8 +21,9 @@ type life struct {
 	states []int
 }
 
-// width draws a standard deviation; they differ by some orders of magnitude.
-func (l *life) width() float64 { return l.scale * math.Exp(2*l.random.NormFloat64()) }
+// width draws a standard deviation; they differ by a few orders of magnitude, in
+// every fourth case by up to ten.
+func (l *life) width() float64 { return l.scale * math.Exp(l.spread*l.random.NormFloat64()) }
 
 func (l *life) prior() posterior.Prior {
 	if l.random.IntN(3) == 0 {
@@ -49,7 +51,7 @@ func (l *life) process() posterior.Process {
 }
 
 func newLife(form posterior.MotionForm, random *rand.Rand) *life {
-	l := &life{random: random, scale: math.Exp(5 * random.NormFloat64()), now: none(), met: map[int]int{}}
+	l := &life{random: random, spread: []float64{2, 2, 2, 4}[random.IntN(4)], scale: math.Exp(5 * random.NormFloat64()), now: none(), met: map[int]int{}}
 	m := posterior.Motion{Form: form}
 	walk, wander, width := l.width(), l.width(), l.width()
 	switch form {
@@ -162,6 +164,27 @@ func TestFilterAgainstConditioningOfTheWholeHistory(t *testing.T) {
 		t.Logf("%s: %d compared; mean off by %.1e sd at most, sd by %.1e", name, compared, worstMean, worstSD)
 		if compared < 150 {
 			t.Errorf("%s: only %d compared", name, compared)
+		}
+	}
+}
+
+// A belief far off and wide, then readings that tell 1e10 times more: the
+// rounding of a gain near 1 is 3e-7 standard deviations here, and mustn't stay in
+// the mean.
+func TestSharpReadingOfAWideBelief(t *testing.T) {
+	const far, narrow, bias = 1e10, 1.0, 0.5
+	told := history{levels: []levelLife{{none(), posterior.Prior{Mean: -far, SD: far}, posterior.SlopePrior{}}}}
+	told.states = []stateLife{{none(), posterior.Process{Variance: bias * bias}}}
+	f := posterior.NewFilter(posterior.Motion{}, told.levels[0].prior, posterior.SlopePrior{})
+	state := f.Add(told.states[0].process)
+	for _, y := range []float64{0.1, -0.7, 0.3} {
+		f.Update(y, 0, 1, []posterior.Term{{State: state, Coefficient: 1}}, narrow*narrow)
+		told.seen = append(told.seen, sight{at: none(), level: 1, states: map[int]float64{0: 1}, variance: narrow * narrow, y: y})
+		asked := sight{at: none(), level: 1}
+		mean, variance := told.ask(&asked)
+		sd, _ := none().Sqrt(variance).Float64()
+		if d := off(f.Mean(0), mean, sd); !(d <= 1e-12) {
+			t.Errorf("after %v: mean %v off by %v sd", y, f.Mean(0), d)
 		}
 	}
 }

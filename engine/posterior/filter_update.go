@@ -47,6 +47,9 @@ func (f *Filter) UpdateFrom(y, offset, levelCoefficient float64, terms []Term, w
 	for i := range gain {
 		f.mean[i] = f.mean[i].Plus(gain[i] * step)
 	}
+	if total > sharp*variance {
+		f.sharpen(twoDiff(y, offset), innovation.value(), gain, total, variance)
+	}
 	if white.Relative != 0 {
 		f.lean(&before, white)
 	}
@@ -137,7 +140,7 @@ func (f *Filter) weigh(h []float64, variance float64) (gain []float64, total flo
 		total += p * v
 		lambda := -p * per
 		per = 1 / total
-		f.d[j] *= before * per
+		f.d[j] = shrunk(f.d[j], before, per)
 		gain[j] = v
 		at := j * (j - 1) / 2
 		c, head := f.u[at:at+j], gain[:j]

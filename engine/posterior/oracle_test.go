@@ -10,7 +10,7 @@ import (
 // The oracle of joint beliefs. It keeps no state: it writes down how every two
 // readings of a history covary by what they have in common (the same life of the
 // level, the same life of a further state), and conditions what is asked on all
-// of them at once, in 57-digit arithmetic:
+// of them at once, in 96-digit arithmetic:
 //
 //	mean = m0 + k'K^-1 (y - m) + (x0 - X'K^-1 k)' b,  b = (X'K^-1 X)^-1 X'K^-1 (y - m)
 //	variance = k00 - k'K^-1 k + (x0 - X'K^-1 k)' (X'K^-1 X)^-1 (x0 - X'K^-1 k)
@@ -19,7 +19,7 @@ import (
 // exact limit of an ever wider prior (universal kriging: Cressie 1993, Statistics
 // for Spatial Data, 3.4.1, from memory).
 
-const oracleBits = 192
+const oracleBits = 320
 
 func num(x float64) *big.Float       { return new(big.Float).SetPrec(oracleBits).SetFloat64(x) }
 func none() *big.Float               { return num(0) }
@@ -55,7 +55,7 @@ func decay(x *big.Float) *big.Float {
 	halvings := max(0, x.MantExp(nil)+16)
 	small := none().SetMantExp(x, -halvings)
 	sum, term := num(1), num(1)
-	for n := 1; n < 16; n++ {
+	for n := 1; n < 22; n++ {
 		term = div(mul(term, small), num(-float64(n)))
 		sum = add(sum, term)
 	}

@@ -41,6 +41,7 @@ func TestSmootherAgainstConditioning(t *testing.T) {
 	for form, name := range []string{"constant", "walk", "trend", "reverting"} {
 		for n := range 15 {
 			l := newLife(posterior.MotionForm(form), random)
+			l.spread = 2
 			series := make([]posterior.SeriesReading, 3+random.IntN(12))
 			times := make([]sight, len(series))
 			for i := range series {
