@@ -98,6 +98,15 @@ func TestBeliefKnowsWhatItsInstrumentMayBeOffBy(t *testing.T) {
 	if got := b.json("belief", "predictive", "instrument"); got != "calliper-7" {
 		t.Errorf("predictive of instrument %v", got)
 	}
+	// By another instrument, without bias, the next indication has the level's
+	// variance and that of its own noise.
+	r.call("PUT", "/v1/instruments/feeler", `{"unit":"mm","repeatability":{"standard_deviation":0.05}}`).want(200)
+	other := r.call("GET", "/v1/quantities/gap/belief?instrument=feeler", "").want(200)
+	wantNumber(t, other.json("predictive", "mean"), 0.82)
+	wantNumber(t, other.json("predictive", "standard_deviation"), math.Sqrt(0.0013+0.05*0.05))
+	if got := other.json("predictive", "instrument"); got != "feeler" {
+		t.Errorf("predictive of instrument %v", got)
+	}
 }
 
 func TestReadingsAreListedWithTheirCalibration(t *testing.T) {
