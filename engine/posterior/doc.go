@@ -16,6 +16,10 @@
 //     mixture of normals over r. It isn't normal-inverse-gamma, whose prior
 //     would grow and shrink with r.
 //   - Walk: the level makes independent normal steps of given variance.
+//   - Filter: the level stays, walks, has a slope, or reverts to a mean; readings may
+//     share further errors, such as biases, that stay, wander or decay. All of
+//     it is jointly normal. What isn't linear is for the caller to linearise, but for
+//     a noise that grows with the level (White). Smooth is its fixed-interval smoother.
 //
 // # Laws
 //
@@ -53,6 +57,13 @@
 //
 //     Where worth is beyond 1e8 and readings conflict with the prior by hundreds
 //     of orders of magnitude, a mixture keeps some 8 digits only.
+//
+//     For a Filter: coefficients about 1, or as large as a value where the state is a
+//     relative error; times up to 1e10 seconds. Its standard deviations keep a relative
+//     1e-11, its means 1e-9 standard deviations as long as no state becomes known more
+//     than 1e7 times better than it was; a level read directly also beyond.
+//
+// A Filter's parts (Account) are independent and sum to the level's variance.
 //
 // Posteriors are immutable values that may be shared; normal and Student ones
 // allocate nothing. A mixture costs some tens of microseconds to make and

@@ -245,6 +245,8 @@ func (f *Filter) split(k int, share, rest float64) {
 }
 
 // spread adds w a a', w at least 0, to the covariance of the first len(a) states.
+// The new U is a mean of the old and a/s, weighted by their variances, not the old with a
+// correction, which would leave nothing of a where it differs by many digits.
 func (f *Filter) spread(a []float64, w float64) {
 	for j := len(a) - 1; j >= 0 && w > 0; j-- {
 		s, before := a[j], f.d[j]
@@ -253,14 +255,14 @@ func (f *Filter) spread(a []float64, w float64) {
 			continue
 		}
 		per := 1 / after
-		beta := w * s * per
+		kept, beta := before*per, w*s*per
 		f.d[j] = after
 		w = shrunk(w, before, per)
 		at := j * (j - 1) / 2
 		c, head := f.u[at:at+j], a[:j]
 		for i, u := range c {
+			c[i] = u*kept + beta*head[i]
 			head[i] -= s * u
-			c[i] = u + beta*head[i]
 		}
 	}
 }
