@@ -20,7 +20,7 @@ type Figures struct {
 	HasBreach                     bool
 	Breach                        Breach
 	Verdict                       decide.Verdict // 0 without a tolerance
-	HasHorizon                    bool           // a breach horizon is declared, and something is known
+	HasHorizon                    bool           // a breach horizon is declared, and the forecaster has looked
 	HorizonProbability            float64        // that a limit is crossed within it
 	HasMedian                     bool           // the time to breach has its median within it
 	MedianSeconds                 float64
@@ -30,6 +30,15 @@ type Figures struct {
 // gives the same numbers as Belief. It reads the ledger, and can fail, only
 // where the view has readings later than the instant.
 func (k *Keeper) Figures(v *View, at Instant) (Figures, error) {
+	f, err := k.figures(v, at)
+	if err == nil && f.ReadingCount == v.ReadingCount {
+		k.lookAhead(v, &f, at)
+	}
+	return f, err
+}
+
+// figures is Figures without what lies ahead.
+func (k *Keeper) figures(v *View, at Instant) (Figures, error) {
 	if v.still.Load() != nil && at >= v.LastTime {
 		return *v.still.Load(), nil
 	}
@@ -39,11 +48,6 @@ func (k *Keeper) Figures(v *View, at Instant) (Figures, error) {
 	}
 	f := figuresOf(m.level(v.basis, at), &v.Declared().Declaration)
 	f.ReadingCount, f.HasLast, f.LastTime = m.count, m.count > 0, m.lastTime
-	if m.count == v.fold.count {
-		if err := v.lookAhead(&f, at); err != nil {
-			return Figures{}, err
-		}
-	}
 	if v.basis.still() && m.count == v.ReadingCount {
 		still := f
 		v.still.Store(&still)

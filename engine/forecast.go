@@ -188,35 +188,3 @@ func (c *crossing) quantile(p float64) time.Duration {
 	}
 	return time.Duration(seconds * float64(time.Second))
 }
-
-// horizonFigures is what a scrape publishes of the time to come.
-type horizonFigures struct {
-	at          Instant
-	probability float64
-	hasMedian   bool
-	median      float64 // seconds
-}
-
-// lookAhead adds to f what the declared horizon holds. As that takes far longer than
-// the rest, what was found for the same view up to a minute, or a hundredth of the
-// horizon, ago is used again.
-func (v *View) lookAhead(f *Figures, at Instant) error {
-	horizon := v.Declared().Declaration.BreachHorizon
-	if horizon == 0 || !f.HasBreach {
-		return nil
-	}
-	h := v.ahead.Load()
-	if h == nil || at < h.at || at.Sub(h.at) > min(float64(time.Minute), float64(horizon)/100) {
-		c, err := v.crossing(at, horizon)
-		if err != nil {
-			return err
-		}
-		h = &horizonFigures{at: at, probability: c.by(horizon).Either}
-		if median := c.quantile(0.5); median >= 0 {
-			h.hasMedian, h.median = true, median.Seconds()
-		}
-		v.ahead.Store(h)
-	}
-	f.HasHorizon, f.HorizonProbability, f.HasMedian, f.MedianSeconds = true, h.probability, h.hasMedian, h.median
-	return nil
-}

@@ -112,11 +112,12 @@ type Keeper struct {
 	current    atomic.Pointer[Ledger]
 	counts
 
-	// Between the keeper's goroutine, the committer and the rebuilder.
+	// Between the keeper's goroutine, the committer, the rebuilder and the forecaster.
 	commits   chan *Group
 	committed chan error
 	jobQueue  chan *job
 	jobDone   chan *job
+	aheads    chan aheadRequest // to the forecaster
 	workers   sync.WaitGroup
 }
 
@@ -136,12 +137,14 @@ func New(o Options) (*Keeper, error) {
 		committed: make(chan error),
 		jobQueue:  make(chan *job),
 		jobDone:   make(chan *job, 1),
+		aheads:    make(chan aheadRequest, maxAheads),
 	}
 	if err := k.load(); err != nil {
 		return nil, err
 	}
 	k.workers.Go(k.commitLoop)
 	k.workers.Go(k.rebuildLoop)
+	k.workers.Go(k.foreseeLoop)
 	go k.run()
 	return k, nil
 }

@@ -29,6 +29,8 @@ type Track struct {
 	id     QuantityID
 	number QuantityNumber
 	view   atomic.Pointer[View]
+	ahead  atomic.Pointer[ahead] // nil until a scrape asks for it
+	asked  atomic.Bool           // the forecaster has been asked for it
 
 	// What has been decided, including records that aren't durable yet.
 	decided      *Quantity
@@ -122,8 +124,8 @@ func (t *Track) publish(change uint64) {
 		Quantity: t.quantity, Position: t.position, Change: change,
 		ReadingCount: t.fold.count, HasLast: t.fold.count > 0, LastTime: t.fold.lastTime,
 		Rebuilding: t.job != nil,
-		applied:    t.tally.count,
-		basis:      t.basis, fold: t.fold.copied(), foldedTo: t.foldedTo,
+		track:      t, applied: t.tally.count,
+		basis: t.basis, fold: t.fold.copied(), foldedTo: t.foldedTo,
 		rows: t.rows, marks: t.marks, markFrom: t.markFrom,
 	})
 }

@@ -17,6 +17,7 @@ type View struct {
 	Rebuilding   bool    // the belief is that of an earlier position, until a rebuild is done
 	Change       uint64  // grows with each View of any quantity
 
+	track    *Track
 	basis    *model // on which fold rests
 	fold     fold
 	applied  int // readings, also those not in the belief yet
@@ -24,8 +25,7 @@ type View struct {
 	rows     []entry // the applied readings that need not be in storage yet
 	marks    []fold  // as in Track
 	markFrom int
-	still    atomic.Pointer[Figures]        // of a belief that time doesn't move, once asked for
-	ahead    atomic.Pointer[horizonFigures] // likewise of the declared horizon
+	still    atomic.Pointer[Figures] // of a belief that time doesn't move, once asked for
 }
 
 // Declared returns the quantity with the declaration that the belief rests on:
