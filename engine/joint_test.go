@@ -203,7 +203,11 @@ func TestKeeperEqualsJointNormal(t *testing.T) {
 	}
 	for name, form := range forms {
 		t.Run(name, func(t *testing.T) {
-			for _, s := range seeds(200) {
+			cases := uint64(200)
+			if testing.Short() {
+				cases = 20
+			}
+			for _, s := range seeds(cases) {
 				rng := rand.New(rand.NewPCG(s, uint64(form)))
 				c := randomCase(rng, form)
 				r := newRig(t, engine.Options{CheckpointRecords: 1 + rng.IntN(20)})
