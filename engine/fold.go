@@ -139,6 +139,9 @@ func (f *fold) level(m *model, at Instant) posterior.Posterior {
 			return w.Posterior()
 		}
 	default:
+		if j := f.joint; j != nil && !j.renewsBy(m, at) {
+			return j.filter.PosteriorAfter(lasting(j.at, at))
+		}
 		if j := f.jointAt(m, at); j != nil {
 			return j.level()
 		}

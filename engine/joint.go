@@ -90,13 +90,18 @@ func (j *joint) clone() *joint {
 // move goes on to an instant, through the renewals up to then. What lies before
 // is reached already.
 func (j *joint) move(m *model, to Instant) {
-	for j.renewed < len(m.renewals) && m.renewals[j.renewed].Time <= to {
+	for j.renewsBy(m, to) {
 		r := &m.renewals[j.renewed]
 		j.advance(r.Time)
 		j.filter.Renew(m.renewalPrior(r))
 		j.renewed++
 	}
 	j.advance(to)
+}
+
+// renewsBy tells whether there is a renewal to go through up to an instant.
+func (j *joint) renewsBy(m *model, to Instant) bool {
+	return j.renewed < len(m.renewals) && m.renewals[j.renewed].Time <= to
 }
 
 func (j *joint) advance(to Instant) {

@@ -352,6 +352,33 @@ func (f *Filter) Posterior() Posterior {
 	return Posterior{form: FormNormal, location: f.mean[0], scale: math.Sqrt(f.Variance(0))}
 }
 
+// PosteriorAfter returns the distribution of the level after a time of at least 0
+// seconds: what Posterior gives after Advance, but for rounding, without moving f on
+// and without allocation.
+func (f *Filter) PosteriorAfter(seconds float64) Posterior {
+	if f.vague || seconds <= 0 || f.motion.Form == MotionConstant {
+		return f.Posterior()
+	}
+	m, mean, h := &f.motion, f.mean[0], seconds
+	variance := 0.0
+	switch m.Form {
+	case MotionWalk:
+		variance = f.Variance(0) + m.Walk*h
+	case MotionTrend:
+		mean = levelOf(mean.pair().plus(f.mean[1].pair().times(h)))
+		for k := range f.n {
+			s := f.entry(0, k) + h*f.entry(1, k)
+			variance += s * f.d[k] * s
+		}
+		variance += m.Walk*h + m.Wander*h*h*h/3
+	case MotionReverting:
+		left := math.Exp(-m.Rate * h)
+		variance = left*left*f.Variance(0) + m.Variance*gained(m.Rate, h)
+		mean = LevelOf(m.Mean).Plus(mean.Minus(LevelOf(m.Mean)) * left)
+	}
+	return Posterior{form: FormNormal, location: mean, scale: math.Sqrt(variance)}
+}
+
 // Predictive returns the distribution of a reading made now: as in Update.
 func (f *Filter) Predictive(offset, levelCoefficient float64, terms []Term, variance float64) Posterior {
 	if f.vague {

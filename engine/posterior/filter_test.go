@@ -268,3 +268,22 @@ func BenchmarkFilter(b *testing.B) {
 		report(b)
 	})
 }
+
+// What the level will be is what it is once moved there.
+func TestPosteriorAfterIsPosteriorOfAdvance(t *testing.T) {
+	for n := range uint64(200) {
+		f := randomFilter(rand.New(rand.NewPCG(*seed, 1000+n)), false)
+		for _, h := range []float64{0, 1e-3, 1, 1e3} {
+			moved := f.Clone()
+			moved.Advance(h)
+			got, want := f.PosteriorAfter(h), moved.Posterior()
+			if got.Form() != want.Form() || math.Abs(got.Location()-want.Location()) > 1e-12*want.Scale()+1e-15*math.Abs(want.Location()) || math.Abs(got.Scale()-want.Scale()) > 1e-12*want.Scale() {
+				t.Errorf("-seed %d, case %d: after %v s %v, %v; moved there %v, %v", *seed, n, h, got.Location(), got.Scale(), want.Location(), want.Scale())
+			}
+		}
+	}
+	f, _ := trendWithNoise()
+	if n := testing.AllocsPerRun(100, func() { f.PosteriorAfter(5) }); n != 0 {
+		t.Errorf("%v allocations", n)
+	}
+}
