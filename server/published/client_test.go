@@ -131,10 +131,12 @@ type posted struct {
 	Time        string   `json:"time,omitempty"`
 	Uncertainty *float64 `json:"random_standard_uncertainty,omitempty"`
 	ID          string   `json:"reading_id,omitempty"`
+	Instrument  string   `json:"instrument,omitempty"`
+	Occasion    string   `json:"occasion,omitempty"`
 }
 
 func (p posted) message() *leadlinev1.Reading {
-	m := &leadlinev1.Reading{Quantity: p.Quantity, Value: &p.Value, ReadingId: p.ID, RandomStandardUncertainty: p.Uncertainty}
+	m := &leadlinev1.Reading{Quantity: p.Quantity, Value: &p.Value, ReadingId: p.ID, RandomStandardUncertainty: p.Uncertainty, Instrument: p.Instrument, Occasion: p.Occasion}
 	if p.Time != "" {
 		t, err := time.Parse(time.RFC3339Nano, p.Time)
 		if err != nil {
