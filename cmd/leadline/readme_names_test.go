@@ -116,7 +116,8 @@ func callNames(t *testing.T) []string {
 func methodNames() []string {
 	var names []string
 	for _, service := range []grpc.ServiceDesc{
-		leadlinev1.QuantityService_ServiceDesc, leadlinev1.ReadingService_ServiceDesc, leadlinev1.BeliefService_ServiceDesc,
+		leadlinev1.QuantityService_ServiceDesc, leadlinev1.InstrumentService_ServiceDesc,
+		leadlinev1.ReadingService_ServiceDesc, leadlinev1.BeliefService_ServiceDesc,
 	} {
 		for _, m := range service.Methods {
 			names = append(names, "`"+m.MethodName+"`")
