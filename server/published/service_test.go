@@ -56,16 +56,17 @@ func (c *clock) Advance(d time.Duration) { c.nanos.Add(int64(d)) }
 
 // service is the whole service on a ledger file, and its clients.
 type service struct {
-	t          testing.TB
-	clock      *clock
-	file       string
-	address    string // of HTTP
-	transport  *http.Transport
-	conn       *grpc.ClientConn
-	quantities leadlinev1.QuantityServiceClient
-	readings   leadlinev1.ReadingServiceClient
-	beliefs    leadlinev1.BeliefServiceClient
-	stop       func() // ends it as a signal would, once, and verifies its ledger
+	t           testing.TB
+	clock       *clock
+	file        string
+	address     string // of HTTP
+	transport   *http.Transport
+	conn        *grpc.ClientConn
+	quantities  leadlinev1.QuantityServiceClient
+	instruments leadlinev1.InstrumentServiceClient
+	readings    leadlinev1.ReadingServiceClient
+	beliefs     leadlinev1.BeliefServiceClient
+	stop        func() // ends it as a signal would, once, and verifies its ledger
 }
 
 func start(t testing.TB) *service {
@@ -114,6 +115,7 @@ func (s *service) serve(srv *server.Server, keeper *engine.Keeper) {
 		s.t.Fatal(err)
 	}
 	s.quantities = leadlinev1.NewQuantityServiceClient(s.conn)
+	s.instruments = leadlinev1.NewInstrumentServiceClient(s.conn)
 	s.readings = leadlinev1.NewReadingServiceClient(s.conn)
 	s.beliefs = leadlinev1.NewBeliefServiceClient(s.conn)
 
