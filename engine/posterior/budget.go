@@ -26,7 +26,8 @@ type Part struct {
 
 // Account has f keep account of where its uncertainty comes from, from now on;
 // f has seen no reading yet. It costs the square of the number of states for
-// each source and step.
+// each source and step. Where standard deviations differ by more than some 70
+// powers of ten, contributions can leave the range of a double.
 func (f *Filter) Account() {
 	a := &account{trend: f.motion.Form == MotionTrend}
 	a.resize(f.n)

@@ -13,16 +13,21 @@ func magnitude(random *rand.Rand, lo, hi float64) float64 {
 	return math.Pow(10, lo+(hi-lo)*random.Float64())
 }
 
-// admissible draws a filter with biases from the limits in doc.go, and its account.
+// admissible draws a filter with biases from the limits in doc.go, or from those of
+// Account, which it then keeps.
 func admissible(random *rand.Rand) (posterior.Filter, []posterior.Term) {
-	sd := func() float64 { return magnitude(random, -100, 100) }
+	account, reach := random.IntN(2) == 0, 100.0
+	if account {
+		reach = 35
+	}
+	sd := func() float64 { return magnitude(random, -reach, reach) }
 	square := func() float64 { return math.Pow(sd(), 2) }
 	m := posterior.Motion{
-		Form: posterior.MotionForm(random.IntN(4)), Walk: square(), Wander: magnitude(random, -200, 150),
+		Form: posterior.MotionForm(random.IntN(4)), Walk: square(), Wander: magnitude(random, -2*reach, 1.5*reach),
 		Mean: sd(), Variance: square(), Rate: magnitude(random, -12, 3),
 	}
-	f := posterior.NewFilter(m, posterior.Prior{Mean: sd(), SD: sd(), Vague: random.IntN(4) == 0}, posterior.SlopePrior{SD: magnitude(random, -100, 90)})
-	if random.IntN(2) == 0 {
+	f := posterior.NewFilter(m, posterior.Prior{Mean: sd(), SD: sd(), Vague: random.IntN(4) == 0}, posterior.SlopePrior{SD: magnitude(random, -reach, 0.9*reach)})
+	if account {
 		f.Account()
 	}
 	var terms []posterior.Term
