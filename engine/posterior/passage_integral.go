@@ -12,40 +12,48 @@ type overlay struct {
 	smear  float64 // the width of the step where the drift just reaches a limit
 }
 
+// kernel is a probability of crossing, given the distance from the limit and the
+// mean drift in the time; and the size of the terms that it is the sum of, in
+// whose last digits it is uncertain.
+type kernel func(distance, drift float64) (p, size float64)
+
 // most is how many standard deviations of the level are looked at: beyond is
 // 2e-33.
 const most = 12
 
 // over integrates the probabilities of crossing below and above over the level's
-// belief inside the limits, and adds the mass outside. They are functions of the
-// distance from their limit and the mean drift in the time, both given the level.
-func (p *Passage) over(o overlay, below, above func(distance, drift float64) float64) Crossing {
+// belief inside the limits, and adds the mass outside.
+func (p *Passage) over(o overlay, below, above kernel) Crossing {
 	now := p.now()
 	b, a := now.Below, now.Above
 	if p.limits.HasLower {
-		b += p.integral(o, 1, p.course.Mean-p.limits.Lower, below)
+		b += p.integral(o, 1, p.course.Mean-p.limits.Lower, b, below)
 	}
 	if p.limits.HasUpper {
-		a += p.integral(o, -1, p.limits.Upper-p.course.Mean, above)
+		a += p.integral(o, -1, p.limits.Upper-p.course.Mean, a, above)
 	}
 	return crossing(b, a)
 }
 
 // integral is that of one limit, whose distance from a level of mean + sd z is
-// gap + sign sd z.
-func (p *Passage) integral(o overlay, sign, gap float64, f func(distance, drift float64) float64) float64 {
+// gap + sign sd z. It is good to some 1e-11 of itself and of the mass outside: a
+// layer too thin for the digits of z adds nothing to that mass.
+func (p *Passage) integral(o overlay, sign, gap, outside float64, f kernel) float64 {
 	c := p.course
 	lo, hi := p.inside(most)
 	if !(lo < hi) {
 		return 0
 	}
 	if c.SD == 0 {
-		return f(gap, c.Slope*o.time)
+		p, _ := f(gap, c.Slope*o.time)
+		return p
 	}
 	tilt := c.Correlation * c.SlopeSD * o.time
-	g := func(z float64) float64 {
+	g := func(z float64) (v, size float64) {
 		distance := math.Max(0, gap+sign*c.SD*z)
-		return math.Exp(logNormalDensity(z)) * f(distance, c.Slope*o.time+tilt*z)
+		v, size = f(distance, c.Slope*o.time+tilt*z)
+		density := math.Exp(logNormalDensity(z))
+		return density * v, density * size
 	}
 	cuts := []float64{lo, hi}
 	for _, z := range [...]float64{-8, -5, -2.5, 0, 2.5, 5, 8} {
@@ -62,7 +70,8 @@ func (p *Passage) integral(o overlay, sign, gap float64, f func(distance, drift 
 			cuts = append(cuts, kink-width, kink, kink+width)
 		}
 	}
-	return integrate(g, cuts, lo, hi) / math.Sqrt(2*math.Pi)
+	root := math.Sqrt(2 * math.Pi)
+	return integrate(g, cuts, lo, hi, outside*root) / root
 }
 
 // Nodes and weights of the 15-point Kronrod rule on [-1, 1] that extends the
@@ -87,15 +96,20 @@ var (
 	}
 )
 
-// panel is an interval with the integral over it and how far that may be off.
-type panel struct{ lo, hi, sum, off float64 }
+// panel is an interval with the integral over it, how far that may be off, and the
+// integral of the terms' size.
+type panel struct{ lo, hi, sum, off, size float64 }
+
+// mostPanels bounds the work where rounding keeps an integrand from looking
+// smooth.
+const mostPanels = 600
 
 // integrate returns the integral of a function >= 0 over [lo, hi], to some 1e-11
-// of it. It starts from the cuts inside and halves what isn't exact yet.
-func integrate(f func(float64) float64, cuts []float64, lo, hi float64) float64 {
+// of it and what it is added to. It starts from the cuts inside and halves what isn't exact yet.
+func integrate(f func(float64) (v, size float64), cuts []float64, lo, hi, besides float64) float64 {
 	slices.Sort(cuts)
 	var panels []panel
-	total, from := 0.0, lo
+	total, size, from := 0.0, 0.0, lo
 	for _, c := range cuts {
 		if !(c > from) || c > hi {
 			continue
@@ -103,41 +117,47 @@ func integrate(f func(float64) float64, cuts []float64, lo, hi float64) float64 
 		q := newPanel(f, from, c)
 		panels = append(panels, q)
 		total += q.sum
+		size += q.size
 		from = c
 	}
 	sum := 0.0
+	left := mostPanels
 	for _, q := range panels {
-		sum += q.refine(f, 1e-12*total, 40)
+		sum += q.refine(f, 1e-12*(total+besides)+1e-16*size, &left)
 	}
 	return sum
 }
 
-func (q panel) refine(f func(float64) float64, tolerance float64, depth int) float64 {
-	if q.off <= tolerance || depth == 0 {
+func (q panel) refine(f func(float64) (v, size float64), tolerance float64, left *int) float64 {
+	middle := q.lo/2 + q.hi/2
+	if !(q.off > tolerance) || *left <= 0 || middle <= q.lo || middle >= q.hi {
 		return q.sum
 	}
-	middle := q.lo/2 + q.hi/2
-	return newPanel(f, q.lo, middle).refine(f, tolerance, depth-1) +
-		newPanel(f, middle, q.hi).refine(f, tolerance, depth-1)
+	*left -= 2
+	return newPanel(f, q.lo, middle).refine(f, tolerance, left) +
+		newPanel(f, middle, q.hi).refine(f, tolerance, left)
 }
 
 // newPanel estimates its error as QUADPACK does: the Kronrod rule is much better
 // than its difference from the Gauss rule.
-func newPanel(f func(float64) float64, lo, hi float64) panel {
+func newPanel(f func(float64) (v, size float64), lo, hi float64) panel {
 	middle, half := lo/2+hi/2, hi/2-lo/2
-	at := f(middle)
+	at, size := f(middle)
 	fine, coarse := kronrodWeights[7]*at, gaussWeights[3]*at
+	size *= kronrodWeights[7]
 	for i := range 7 {
 		d := half * kronrodNodes[i]
-		both := f(middle-d) + f(middle+d)
-		fine += kronrodWeights[i] * both
+		left, leftSize := f(middle - d)
+		right, rightSize := f(middle + d)
+		fine += kronrodWeights[i] * (left + right)
+		size += kronrodWeights[i] * (leftSize + rightSize)
 		if i%2 == 1 {
-			coarse += gaussWeights[i/2] * both
+			coarse += gaussWeights[i/2] * (left + right)
 		}
 	}
 	off := math.Abs(fine - coarse)
 	if fine > 0 {
 		off *= math.Min(1, 100*math.Sqrt(off/fine))
 	}
-	return panel{lo: lo, hi: hi, sum: half * fine, off: half * off}
+	return panel{lo: lo, hi: hi, sum: half * fine, off: half * off, size: half * size}
 }

@@ -45,16 +45,17 @@ type drifting struct {
 }
 
 // below returns the probability that the lower limit is crossed first, from x
-// above it with mean drift nu, both over w.
-func (d drifting) below(x, nu float64) float64 {
-	sum := d.image(x, x, nu)
+// above it with mean drift nu, both over w; and the size of its largest term.
+func (d drifting) below(x, nu float64) (p, size float64) {
+	size = d.image(x, x, nu)
+	sum := size
 	if math.IsInf(d.width, 1) {
-		return sum
+		return sum, size
 	}
 	for n := 1.0; ; n++ {
 		near := 2*n*d.width - x
-		if (near-x)*(near+x)/2 > outermost {
-			return sum
+		if !((near-x)*(near+x)/2 <= outermost) {
+			return math.Max(0, sum), size
 		}
 		sum += d.image(x, x+2*n*d.width, nu) - d.image(x, near, nu)
 	}
@@ -107,12 +108,12 @@ func (p *Passage) closed(seconds float64) Crossing {
 	case m.Walk == 0:
 		return p.now()
 	}
-	t := seconds
-	if width := p.width(); !math.IsInf(width, 1) {
-		t = math.Min(t, longest*longest*width*width/m.Walk)
+	t, w := seconds, math.Sqrt(m.Walk)*math.Sqrt(seconds)
+	if widest := longest * p.width(); w > widest {
+		// In two steps, as the square might be no double.
+		t, w = widest/math.Sqrt(m.Walk)*(widest/math.Sqrt(m.Walk)), widest
 	}
 	tau := c.SlopeSD * math.Sqrt(math.Max(0, (1-c.Correlation)*(1+c.Correlation)))
-	w := math.Sqrt(m.Walk * t)
 	d := drifting{w: w, kappa: tau * t / w, width: p.width() / w}
 	if w == 0 {
 		return p.now()
@@ -120,8 +121,8 @@ func (p *Passage) closed(seconds float64) Crossing {
 	spread := math.Hypot(1, d.kappa)
 	o := overlay{time: t, finest: w * spread / (1 + 2*d.kappa*d.kappa), smear: w * spread}
 	return p.over(o,
-		func(x, drift float64) float64 { return d.below(x/w, drift/w) },
-		func(x, drift float64) float64 { return d.below(x/w, -drift/w) })
+		func(x, drift float64) (p, size float64) { return d.below(x/w, drift/w) },
+		func(x, drift float64) (p, size float64) { return d.below(x/w, -drift/w) })
 }
 
 // width is the distance between the limits.
@@ -139,12 +140,15 @@ func (p *Passage) ballistic(seconds float64) Crossing {
 	tau := c.SlopeSD * math.Sqrt(math.Max(0, (1-c.Correlation)*(1+c.Correlation)))
 	if s := tau * seconds; s > 0 {
 		return p.over(overlay{time: seconds, finest: s, smear: s},
-			func(x, drift float64) float64 { return normalTail(pair{hi: (x + drift) / s}) },
-			func(x, drift float64) float64 { return normalTail(pair{hi: (x - drift) / s}) })
+			func(x, drift float64) (p, size float64) { return certain(normalTail(pair{hi: (x + drift) / s})) },
+			func(x, drift float64) (p, size float64) { return certain(normalTail(pair{hi: (x - drift) / s})) })
 	}
 	// The slope is a linear function of the level, so what crosses is a stretch.
 	return p.straight(c.Mean+c.Slope*seconds, c.SD+c.Correlation*c.SlopeSD*seconds)
 }
+
+// certain is a kernel of one term.
+func certain(p float64) (float64, float64) { return p, p }
 
 // straight is the law where a level mean + sd Z goes without turning to
 // at + rise Z.
