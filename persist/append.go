@@ -64,7 +64,9 @@ func (l *Ledger) stamp(g *engine.Group) (*head, error) {
 		h.position++
 		r.Position, r.CommitTime = h.position, h.commit
 		h.format = max(h.format, needs(r))
-		noteLatest(l.instruments, r)
+		if noteLatest(l.instruments, r); r.Kind == engine.KindInstrument {
+			h.instruments = max(h.instruments, r.Instrument.Number)
+		}
 	}
 	for i := range g.Checkpoint {
 		h.format = max(h.format, entryNeeds(&g.Checkpoint[i]))

@@ -233,6 +233,9 @@ func (h *head) append(b []byte) []byte {
 	}
 	b = binary.LittleEndian.AppendUint32(append(b, swept), h.segment)
 	b = binary.LittleEndian.AppendUint64(b, uint64(h.through))
+	if h.instruments > 0 { // so that a head without is that of format version 1
+		b = binary.LittleEndian.AppendUint32(b, uint32(h.instruments))
+	}
 	return seal(b, headKey, 0)
 }
 
@@ -260,14 +263,18 @@ func parseHead(value []byte) (*head, error) {
 	if err != nil {
 		return &head{}, err
 	}
-	return &head{
+	h := &head{
 		position: engine.Position(binary.LittleEndian.Uint64(body)),
 		commit:   engine.Instant(binary.LittleEndian.Uint64(body[8:])),
 		hash:     [sha256.Size]byte(body[hash:sweep]),
 		swept:    body[sweep] != 0,
 		segment:  binary.LittleEndian.Uint32(body[sweep+1:]),
 		through:  engine.Position(binary.LittleEndian.Uint64(body[sweep+5:])),
-	}, nil
+	}
+	if rest := body[sweep+1+4+8:]; len(rest) >= 4 {
+		h.instruments = engine.InstrumentNumber(binary.LittleEndian.Uint32(rest))
+	}
+	return h, nil
 }
 
 // agrees checks that the sweep stored is the one that the head names.

@@ -33,7 +33,8 @@
 //	bucket      key                          value
 //	meta        "format"                     "leadline ledger\0", version as 4 bytes big-endian
 //	meta        "sweep"                      sealed: segment 4, through 8, summary
-//	head        "head"                       sealed: position 8, commit time 8, hash 32, swept 1, segment 4, through 8
+//	head        "head"                       sealed: position 8, commit time 8, hash 32, swept 1, segment 4, through 8,
+//	                                         and, if there are any, the number of instruments 4 (2)
 //	ledger      position 8                   chunk, see below
 //	instruments number 4                     sealed: position 8 of its latest record (2)
 //	quantities  number 4                     sealed: message Quantity, see quantity.go
@@ -158,8 +159,8 @@
 // a number within. That of the last number, and of rows, only Verify finds: it
 // compares the rows of complete segments with the readings that the sweep
 // includes, but for instrument and occasion: how those are numbered and hashed is
-// the engine's. Instruments finds a number that lacks, but not the last, or a position
-// of another record; Verify compares the bucket with the ledger.
+// the engine's. Instruments finds a number that lacks, or a position
+// of another instrument's record; Verify compares the bucket with the ledger.
 //
 // # Choices
 //

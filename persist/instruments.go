@@ -74,17 +74,17 @@ func (l *Ledger) Instruments(fn func(*engine.Record) error) error {
 	})
 }
 
-// latestInstruments reads the bucket. Numbers are given without gaps, so one
-// that lacks shows, unless it is the last.
+// latestInstruments reads the bucket. Numbers are given without gaps, and the head
+// says how many there are, so one that lacks shows.
 func (l *Ledger) latestInstruments() (numbers []engine.InstrumentNumber, at []engine.Position, err error) {
 	l.mu.Lock()
 	defer l.mu.Unlock()
 	err = l.view(func(tx *bolt.Tx) error {
-		b := tx.Bucket(instrumentsBucket)
-		if b == nil {
-			return nil
+		h, err := readHead(tx)
+		if err != nil {
+			return err
 		}
-		return b.ForEach(func(key, value []byte) error {
+		if err := eachInstrument(tx, func(key, value []byte) error {
 			n, position, err := parseInstrumentKey(bytes.Clone(key), value)
 			if err == nil && int(n) != len(numbers)+1 {
 				err = fmt.Errorf("instrument %d is missing", len(numbers)+1)
@@ -94,9 +94,23 @@ func (l *Ledger) latestInstruments() (numbers []engine.InstrumentNumber, at []en
 			}
 			numbers, at = append(numbers, n), append(at, position)
 			return nil
-		})
+		}); err != nil {
+			return err
+		}
+		if len(numbers) != int(h.instruments) {
+			return fmt.Errorf("%w: %d instruments are listed, not %d", ErrDamaged, len(numbers), h.instruments)
+		}
+		return nil
 	})
 	return numbers, at, err
+}
+
+// eachInstrument calls fn with each entry of the bucket, which may not be there yet.
+func eachInstrument(tx *bolt.Tx, fn func(key, value []byte) error) error {
+	if b := tx.Bucket(instrumentsBucket); b != nil {
+		return b.ForEach(fn)
+	}
+	return nil
 }
 
 // checkInstruments reports where the bucket doesn't say what the ledger does.

@@ -111,13 +111,14 @@ var _ engine.Ledger = (*Ledger)(nil)
 
 // head is the durable end of the ledger; immutable.
 type head struct {
-	position engine.Position
-	commit   engine.Instant
-	hash     [sha256.Size]byte
-	swept    bool
-	segment  uint32          // of the last complete sweep
-	through  engine.Position // likewise
-	format   uint32          // of the file; it stands under formatKey, not in the head
+	position    engine.Position
+	commit      engine.Instant
+	hash        [sha256.Size]byte
+	swept       bool
+	segment     uint32                  // of the last complete sweep
+	through     engine.Position         // likewise
+	instruments engine.InstrumentNumber // the last one recorded
+	format      uint32                  // of the file; it stands under formatKey, not in the head
 }
 
 // complete tells whether the sweep of a segment is durable.

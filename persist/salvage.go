@@ -110,7 +110,7 @@ func (l *Ledger) copyLedger(to *bolt.DB) error {
 	if err := c.endAt(end); err != nil {
 		return err
 	}
-	unswept := head{position: end.position, commit: end.commit, hash: end.hash}
+	unswept := head{position: end.position, commit: end.commit, hash: end.hash, instruments: end.instruments}
 	return to.Update(func(tx *bolt.Tx) error {
 		return errors.Join(putFormat(tx, end.format), putInstruments(tx, instruments),
 			tx.Bucket(headBucket).Put(headKey, unswept.append(nil)))

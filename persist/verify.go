@@ -104,6 +104,9 @@ func (v *verifier) run(file *os.File, pageSize int) error {
 		}
 		v.inventory.check(v.report)
 		checkInstruments(v.instruments, v.listed, v.report)
+		if int(v.head.instruments) != len(v.instruments) {
+			v.report(fmt.Errorf("%w: the head names %d instruments, but %d have records", ErrDamaged, v.head.instruments, len(v.instruments)))
+		}
 	}
 	if v.reported > maxReported {
 		fmt.Fprintf(v.w, "and %d more\n", v.reported-maxReported)
