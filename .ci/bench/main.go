@@ -93,6 +93,7 @@ type section struct {
 func sections() []section {
 	return []section{
 		{"update", (*bench).update},
+		{"joint", (*bench).joint},
 		{"stream", (*bench).stream},
 		{"batch", (*bench).batch},
 		{"single", (*bench).single},
