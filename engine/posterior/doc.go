@@ -1,7 +1,7 @@
 // Package posterior holds the statistics of one quantity: how a belief about its
 // true value follows from a prior and readings, and what can be read off it.
-// Everything is a pure function of numbers: no clock, no randomness, no state
-// beyond the values it is given.
+// Everything is a pure function of numbers: no clock, no randomness but of a fixed
+// sequence (for wandering slopes in Passage), no state beyond the values it is given.
 //
 // # Model
 //
@@ -20,6 +20,8 @@
 //     share further errors, such as biases, that stay, wander or decay. All of
 //     it is jointly normal. What isn't linear is for the caller to linearise, but for
 //     a noise that grows with the level (White). Smooth is its fixed-interval smoother.
+//   - Passage: when a level that goes on from a belief will first leave its limits.
+//     Walks and trends are exact to 1e-9, other movements to 1e-3.
 //
 // # Laws
 //
