@@ -16,12 +16,14 @@ type entry struct {
 	id       engine.ReadingID
 	time     engine.Instant
 	value    float64
+	by       engine.InstrumentID // empty: none
+	occasion string
 	answered bool // with APPLIED or DUPLICATE
 }
 
 // reading is the entry as the engine takes it.
 func (e entry) reading() engine.Reading {
-	return engine.Reading{Quantity: e.quantity, ID: e.id, HasTime: true, Time: e.time, Value: e.value}
+	return engine.Reading{Quantity: e.quantity, ID: e.id, HasTime: true, Time: e.time, Value: e.value, Instrument: e.by, Occasion: e.occasion}
 }
 
 // journal is one client's memory of what it sent, in the order of sending. Its
@@ -44,12 +46,17 @@ func (j *journal) next(n int) []entry {
 		if j.random.IntN(50) == 0 {
 			at -= engine.Instant(j.random.Int64N(int64(time.Minute)))
 		}
-		j.entries = append(j.entries, entry{
+		e := entry{
 			quantity: item.id,
 			id:       engine.ReadingID(fmt.Sprintf("%s-%d", j.name, len(j.entries))),
 			time:     at,
 			value:    item.level + item.noise*j.random.NormFloat64(),
-		})
+			by:       item.by,
+		}
+		if e.by != "" {
+			e.occasion = fmt.Sprintf("round %d", at/engine.Instant(time.Second))
+		}
+		j.entries = append(j.entries, e)
 	}
 	return slices.Clone(j.entries[from:])
 }
@@ -74,35 +81,4 @@ func (j *journal) unanswered() []entry {
 		}
 	}
 	return open
-}
-
-// crashItem is a quantity of the crash tests, with the law of its readings.
-type crashItem struct {
-	id          engine.QuantityID
-	declaration engine.Declaration
-	level       float64
-	noise       float64
-}
-
-// crashPlan has each kind of belief: constant and walking, known and learned
-// repeatability, vague and proper prior.
-var crashPlan = []crashItem{
-	{"brine-pump-1.coupling-gap", engine.Declaration{
-		Unit: "mm", Prior: normal(0.8, 0.05), Repeatability: known(0.02), Tolerance: between(0.7, 0.9),
-	}, 0.81, 0.02},
-	{"brine-pump-2.coupling-gap", engine.Declaration{
-		Unit: "mm", Repeatability: known(0.02), Tolerance: between(0.7, 0.9),
-	}, 0.84, 0.02},
-	{"store-1.temperature", engine.Declaration{
-		Unit: "Cel", Prior: normal(-20, 2), Repeatability: known(0.1), Dynamics: walk(0.5, time.Hour), Tolerance: below(-18),
-	}, -20, 0.1},
-	{"store-2.temperature", engine.Declaration{
-		Unit: "Cel", Repeatability: known(0.1), Dynamics: walk(0.2, time.Minute), Tolerance: below(-18),
-	}, -19, 0.1},
-	{"winch.rope-diameter", engine.Declaration{
-		Unit: "mm", Repeatability: learned(0, 0),
-	}, 15.7, 0.03},
-	{"winch.brake-lining", engine.Declaration{
-		Unit: "mm", Prior: normal(5, 1), Repeatability: learned(0.05, 4), Tolerance: above(4),
-	}, 4.4, 0.05},
 }

@@ -25,6 +25,8 @@ type wireReading struct {
 	Value     float64 `json:"value"`
 	Time      string  `json:"time"`
 	ReadingID string  `json:"reading_id"`
+	By        string  `json:"instrument,omitempty"`
+	Occasion  string  `json:"occasion,omitempty"`
 }
 
 type wireResult struct {
@@ -35,7 +37,7 @@ type wireResult struct {
 }
 
 func (e entry) wire() wireReading {
-	return wireReading{string(e.quantity), e.value, e.time.Time().Format(time.RFC3339Nano), string(e.id)}
+	return wireReading{string(e.quantity), e.value, e.time.Time().Format(time.RFC3339Nano), string(e.id), string(e.by), e.occasion}
 }
 
 // call sends a request with a JSON body (nil: none) and decodes the answer,
@@ -159,6 +161,7 @@ func (j *journal) postStream(ctx context.Context, address string) error {
 			message.Readings = append(message.Readings, &leadlinev1.Reading{
 				Quantity: string(e.quantity), Value: &e.value,
 				Time: timestamppb.New(e.time.Time()), ReadingId: string(e.id),
+				Instrument: string(e.by), Occasion: e.occasion,
 			})
 		}
 		if err := stream.Send(message); err != nil && !errors.Is(err, io.EOF) {

@@ -29,6 +29,8 @@ type stored struct {
 	Time      time.Time
 	ReadingID string `json:"reading_id"`
 	Status    string
+	By        string `json:"instrument"`
+	Occasion  string
 }
 
 // listApplied lists the applied readings of a quantity in [start, end).
@@ -88,9 +90,9 @@ func compareStored(sent map[identity]entry, listed []stored) error {
 		if !ok {
 			return fmt.Errorf("reading %s of %s is listed, but was listed before or never sent", r.ReadingID, r.Quantity)
 		}
-		if engine.InstantOf(r.Time) != e.time || r.Value != e.value {
-			return fmt.Errorf("reading %s of %s is listed as %v at %v, sent was %v at %v",
-				r.ReadingID, r.Quantity, r.Value, r.Time, e.value, e.time)
+		if engine.InstantOf(r.Time) != e.time || r.Value != e.value || r.By != string(e.by) || r.Occasion != e.occasion {
+			return fmt.Errorf("reading %s of %s is listed as %v at %v by %q on %q, sent was %v at %v by %q on %q",
+				r.ReadingID, r.Quantity, r.Value, r.Time, r.By, r.Occasion, e.value, e.time, e.by, e.occasion)
 		}
 		delete(sent, key)
 	}
@@ -165,6 +167,11 @@ func freshKeeper(ctx context.Context, journals []*journal, at engine.Instant, ra
 	if err != nil {
 		return nil, err
 	}
+	for _, i := range crashInstruments {
+		if _, _, err := keeper.DeclareInstrument(ctx, i.id, i.declaration, engine.Condition{}, at); err != nil {
+			return nil, err
+		}
+	}
 	for _, item := range crashPlan {
 		if _, _, err := keeper.Declare(ctx, item.id, item.declaration, engine.Condition{}, at); err != nil {
 			return nil, err
@@ -218,7 +225,7 @@ func believedOf(b engine.Belief) believed {
 }
 
 // checkPlain compares with the textbook filter for a level that walks, started
-// from the prior. Source: West and Harrison 1997, Bayesian Forecasting and
+// from the prior, and with the closed form of a bias, see checkBiased. Source: West and Harrison 1997, Bayesian Forecasting and
 // Dynamic Models, 2.2 (from memory); with no walk it is the precision-weighted
 // mean (Gelman et al. 2013, Bayesian Data Analysis, 2.5; from memory).
 func checkPlain(item crashItem, got believed, journals []*journal, at engine.Instant) error {
@@ -227,6 +234,9 @@ func checkPlain(item crashItem, got believed, journals []*journal, at engine.Ins
 		return nil
 	}
 	readings := canonical(item.id, journals)
+	if item.by != "" {
+		return checkBiased(item, got, readings)
+	}
 	mean, precision := d.Prior.Mean, 0.0
 	if d.Prior.Form == engine.PriorNormal {
 		precision = 1 / (d.Prior.StandardDeviation * d.Prior.StandardDeviation)
@@ -259,6 +269,31 @@ func checkPlain(item crashItem, got believed, journals []*journal, at engine.Ins
 	return nil
 }
 
+// checkBiased compares with what n readings by one instrument say of a level that
+// stays: their mean has variance r^2/n + u^2, of noise and bias, and then precisions
+// add (JCGM 100:2008, 5.1.2, and Gelman et al. 2013, 2.5; from memory). A trend is
+// compared with a fresh keeper alone: the engine's tests have its oracle.
+func checkBiased(item crashItem, got believed, readings []entry) error {
+	d := item.declaration
+	if d.Dynamics.Form != engine.DynamicsConstant || len(readings) == 0 {
+		return nil
+	}
+	i := slices.IndexFunc(crashInstruments, func(i crashInstrument) bool { return i.id == item.by })
+	calibration := crashInstruments[i].declaration.Calibrations[0]
+	n, mean := float64(len(readings)), -calibration.Bias
+	for _, e := range readings {
+		mean += e.value / n
+	}
+	r, u, s := d.Repeatability.StandardDeviation, calibration.BiasStandardUncertainty, d.Prior.StandardDeviation
+	weight := 1 / (r*r/n + u*u)
+	sd := 1 / math.Sqrt(1/(s*s)+weight)
+	mean = sd * sd * (d.Prior.Mean/(s*s) + weight*mean)
+	if math.Abs(got.Mean-mean) > 1e-9*sd || math.Abs(got.StandardDeviation-sd) > 1e-9*sd {
+		return fmt.Errorf("%s: belief N(%v, %v), by the closed form N(%v, %v)", item.id, got.Mean, got.StandardDeviation, mean, sd)
+	}
+	return nil
+}
+
 // canonical returns a quantity's readings in canonical order.
 func canonical(id engine.QuantityID, journals []*journal) []entry {
 	var readings []entry
@@ -270,7 +305,7 @@ func canonical(id engine.QuantityID, journals []*journal) []entry {
 		}
 	}
 	slices.SortFunc(readings, func(a, b entry) int {
-		return cmp.Or(cmp.Compare(a.time, b.time), cmp.Compare(a.id, b.id))
+		return cmp.Or(cmp.Compare(a.time, b.time), cmp.Compare(a.by, b.by), cmp.Compare(a.id, b.id))
 	})
 	return readings
 }
@@ -280,10 +315,11 @@ func TestOracleNoticesLossAndDoubling(t *testing.T) {
 	at := engine.Instant(1e18)
 	one := entry{quantity: "q", id: "c-0", time: at, value: 0.8, answered: true}
 	listed := stored{Quantity: "q", ReadingID: "c-0", Time: at.Time(), Value: 0.8}
-	moved, changed, foreign := listed, listed, listed
+	moved, changed, foreign, byAnother := listed, listed, listed, listed
 	moved.Time = moved.Time.Add(1)
 	changed.Value = math.Nextafter(0.8, 1)
 	foreign.ReadingID = "c-1"
+	byAnother.By = "photometer"
 	for _, tt := range []struct {
 		name   string
 		listed []stored
@@ -295,6 +331,7 @@ func TestOracleNoticesLossAndDoubling(t *testing.T) {
 		{"doubled", []stored{listed, listed}, false, "a reading counts once"},
 		{"moved", []stored{moved}, false, "one nanosecond later is another time"},
 		{"changed", []stored{changed}, false, "the next float is another value"},
+		{"by another", []stored{byAnother}, false, "an instrument brings its own errors"},
 		{"foreign", []stored{listed, foreign}, false, "nobody sent the second one"},
 	} {
 		t.Run(tt.name, func(t *testing.T) {

@@ -177,12 +177,14 @@ func readImage(path string) (map[identity]entry, error) {
 		switch rec.Kind {
 		case engine.KindDeclaration:
 			names[rec.Number] = rec.Quantity
+		case engine.KindInstrument: // those of the plan, which name no reading
 		case engine.KindReading:
 			key := identity{names[rec.Number], rec.Reading.ID}
 			if _, ok := found[key]; ok {
 				return fmt.Errorf("reading %s is there twice", key.id)
 			}
-			found[key] = entry{quantity: key.quantity, id: key.id, time: rec.Reading.Time, value: rec.Reading.Value}
+			found[key] = entry{quantity: key.quantity, id: key.id, time: rec.Reading.Time, value: rec.Reading.Value,
+				by: rec.Reading.Instrument, occasion: rec.Reading.Occasion}
 		default:
 			return fmt.Errorf("the image holds a record of kind %d, which nobody asked for", rec.Kind)
 		}
