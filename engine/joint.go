@@ -68,10 +68,10 @@ func newJoint(m *model, at Instant) *joint {
 }
 
 // startJoint starts where the prior holds: at its own time, else at the first
-// reading's, or at a renewal before that.
+// reading's, or at a renewal before that. Of a level that stays it holds at any time.
 func startJoint(m *model, first Instant) *joint {
 	switch d := m.declaration(); {
-	case d.Prior.HasTime:
+	case d.Prior.HasTime && !m.still():
 		first = d.Prior.Time
 	case len(m.renewals) > 0:
 		first = min(first, m.renewals[0].Time)
