@@ -114,9 +114,12 @@ func (f *Forecast) look(v *View, d *Declaration, steps int) error {
 		}
 		f.Steps = append(f.Steps, step)
 	}
+	if v.fold.level(v.basis, f.Time).Form() == posterior.FormNone {
+		f.Undetermined = append(f.Undetermined, "steps")
+	}
 	if f.HasCrossing = crossing != nil; !f.HasCrossing {
 		if d.Tolerance.Declared() {
-			f.Undetermined = []string{"time_to_breach"}
+			f.Undetermined = append(f.Undetermined, "time_to_breach")
 		}
 		return nil
 	}

@@ -112,7 +112,7 @@ func TestForecastOfWhatDoesNotMove(t *testing.T) {
 		t.Errorf("%v", f.json("time_to_breach"))
 	}
 	text := string(r.call("GET", "/v1/quantities/gap/forecast?horizon=60s&steps=1", "", "Accept", "text/plain").want(200).body)
-	if !strings.Contains(text, "probability   0.1 at once, 0.5 not within the horizon, 0.9 not within the horizon") {
+	if !strings.Contains(text, "crossed       with probability 0.1 at once, 0.5 not within the horizon, 0.9 not within the horizon") {
 		t.Errorf("the page reads\n%s", text)
 	}
 }
@@ -121,7 +121,7 @@ func TestForecastNamesWhatItLacks(t *testing.T) {
 	r := startServer(t)
 	r.call("PUT", "/v1/quantities/vague", `{"unit":"mm","tolerance":{"upper":1},"breach_horizon":"3600s"}`).want(200)
 	f := r.call("GET", "/v1/quantities/vague/forecast?steps=1", "").want(200)
-	if diff := cmp.Diff([]any{"time_to_breach"}, f.json("undetermined")); diff != "" || f.json("time_to_breach") != nil {
+	if diff := cmp.Diff([]any{"steps", "time_to_breach"}, f.json("undetermined")); diff != "" || f.json("time_to_breach") != nil {
 		t.Errorf("%s", f.body)
 	}
 	step := f.json("steps").([]any)[0].(map[string]any)

@@ -20,7 +20,7 @@ func forecastText(f *engine.Forecast) string {
 	if d.Description != "" {
 		p.line("what", "%s", d.Description)
 	}
-	p.line("dynamics", "%s", dynamicsText(d.Dynamics, d.Unit))
+	p.line("dynamics", "%s (declared)", dynamicsText(d.Dynamics, d.Unit))
 	p.line("tolerance", "%s", toleranceText(d.Tolerance, d.Unit))
 	p.line("horizon", "%s", elapsedOrShort(f.Horizon))
 	p.timeToBreach(f)
@@ -38,7 +38,7 @@ func (p *sheet) timeToBreach(f *engine.Forecast) {
 	switch {
 	case f.HasCrossing:
 		p.line("a limit", "is crossed within the horizon with probability %s", probabilityText(f.Probability))
-		p.line("probability", "0.1 %s, 0.5 %s, 0.9 %s",
+		p.line("crossed", "with probability 0.1 %s, 0.5 %s, 0.9 %s",
 			quantileText(f.LowerDecile), quantileText(f.Median), quantileText(f.UpperDecile))
 	case f.Quantity.Declaration.Tolerance.Declared():
 		p.line("a limit", "may be crossed at any time: too little is known")
@@ -91,6 +91,7 @@ func budgetText(b *engine.Budget) string {
 	if len(b.Undetermined) > 0 {
 		p.line("budget", "none: nothing is known yet")
 		p.basis(b.Quantity.Revision, b.Position, b.Rebuilding)
+		p.WriteString(caution)
 		return p.String()
 	}
 	p.basis(b.Quantity.Revision, b.Position, b.Rebuilding)
@@ -102,6 +103,7 @@ func budgetText(b *engine.Budget) string {
 	}
 	w.row("ALL", "-", "-", uncertaintyText(b.Variance, unit), percent(1), significant(b.Variance))
 	_ = w.Flush() // into memory
+	p.WriteString(caution)
 	return p.String()
 }
 

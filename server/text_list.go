@@ -60,7 +60,7 @@ func repeatabilityText(r engine.Repeatability, unit string) string {
 	case engine.RepeatabilityLearnedReference:
 		return "learned from the readings alone"
 	}
-	return "comes with each reading"
+	return "comes with each reading or its instrument"
 }
 
 func dynamicsText(d engine.Dynamics, unit string) string {

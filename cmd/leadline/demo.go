@@ -94,9 +94,14 @@ An instrument that dies after half a minute; the belief widens until nobody can 
 A bearing that wears; when will its play reach the limit?
   curl -s -H 'Accept: text/plain' '%[6]s/forecast?horizon=1800s&steps=6'
 Two probes that disagree: what is believed of their biases, and what makes up the uncertainty:
-  curl -s %[2]s/v1/quantities/store-4.temperature/belief
+  curl -s -H 'Accept: text/plain' %[2]s/v1/quantities/store-4.temperature/belief
   curl -s -H 'Accept: text/plain' %[2]s/v1/quantities/store-4.temperature/belief:budget
-  curl -s %[2]s/v1/instruments
+A gauge past its due date, and a transmitter that is read faster than it settles:
+  curl -s -H 'Accept: text/plain' %[2]s/v1/quantities/ice-crusher.blade-gap/belief
+  curl -s -H 'Accept: text/plain' %[2]s/v1/quantities/brine-pump-1.delivery-pressure/belief:budget
+  curl -s -H 'Accept: text/plain' %[2]s/v1/instruments
+The bearing is replaced; its play starts anew, as its gauge's bias does not:
+  curl -s -d '{"reason":"new bearing","prior":{"mean":0.15,"standard_deviation":0.03}}' %[6]s:renew
 How probable is it that the gap is below 0.85 mm?
   curl -s '%[3]s/belief?threshold=0.85'
 Post a reading of your own:

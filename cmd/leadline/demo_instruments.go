@@ -52,9 +52,9 @@ const (
 // plantInstruments are the plant's instruments, calibrated before its start.
 func plantInstruments(start time.Time) []plantInstrument {
 	ago := func(d time.Duration) engine.Instant { return engine.InstantOf(start.Add(-d)) }
-	probe := func(bias float64) engine.InstrumentDeclaration {
+	probe := func(where string, bias float64) engine.InstrumentDeclaration {
 		return engine.InstrumentDeclaration{
-			Unit: "Cel", Repeatability: engine.InstrumentRepeatability{StandardDeviation: 0.1}, Resolution: 0.1,
+			Unit: "Cel", Description: "thermometer of store room 4, " + where, Repeatability: engine.InstrumentRepeatability{StandardDeviation: 0.1}, Resolution: 0.1,
 			Calibrations: []engine.Calibration{{
 				ValidFrom: ago(90 * day), Bias: bias, ExpandedUncertainty: 0.5, CoverageFactor: 2,
 				Reference: referenceProbe, CommonStandardUncertainty: 0.1,
@@ -74,8 +74,8 @@ func plantInstruments(start time.Time) []plantInstrument {
 				}},
 			},
 		},
-		{id: wallProbe, bias: 0.35, declaration: probe(0.1)},
-		{id: returnProbe, bias: -0.3, declaration: probe(0)},
+		{id: wallProbe, bias: 0.35, declaration: probe("on the wall", 0.1)},
+		{id: returnProbe, bias: -0.3, declaration: probe("in the return air", 0)},
 		{
 			id: fastSender, bias: 0.005, swing: &swing{sd: 0.03, seconds: 15},
 			declaration: engine.InstrumentDeclaration{
