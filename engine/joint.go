@@ -140,6 +140,7 @@ func (j *joint) add(m *model, e *Row) {
 	y.about(m, r, level, variance)
 	if first && !j.filter.Vague() {
 		j.refine(e, r, &y, offset)
+		y.noise.Gain, y.noise.Scale = d.Calibrations[r.calibration].RelativeBiasStandardUncertainty, r.scale
 	}
 	j.filter.UpdateFrom(e.Value, offset, 1, y.terms, y.noise)
 }

@@ -238,6 +238,16 @@ func (a *account) press(m, h, k []float64) {
 	}
 }
 
+// spread adds variance to the level from a label, with what the other states share in it.
+func (a *account) spread(label int, share []float64, variance float64) {
+	white := a.of(SourceWhite, 0, label)
+	for i, x := range share {
+		for j, y := range share {
+			white.matrix[i*a.n+j] += x * y * variance
+		}
+	}
+}
+
 // settle follows the first reading of a level of which nothing was known: its
 // error becomes -(sum of h_i e_i + noise) / h_0.
 func (a *account) settle(label int, h []float64, variance float64) {

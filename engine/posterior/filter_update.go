@@ -1,7 +1,5 @@
 package posterior
 
-import "math"
-
 // Update takes in a reading
 //
 //	y = offset + levelCoefficient level + sum of coefficient state + e,  e ~ N(0, variance)
@@ -13,12 +11,15 @@ func (f *Filter) Update(y, offset, levelCoefficient float64, terms []Term, varia
 }
 
 // White is the noise of one reading: its variance at the level as predicted, the
-// part of it that is relative to the level, and the label under which it counts
-// where an account is kept.
+// parts that grow with the level, and the label under which it counts where an
+// account is kept.
 type White struct {
 	Variance float64
 	Relative float64 // Variance contains Relative^2 times the mean square of the level
-	Label    int
+	// Gain and Scale say that the terms contain an error of variance (Gain Scale)^2
+	// that is met for the first time, and is (Gain level)^2 in truth.
+	Gain, Scale float64
+	Label       int
 }
 
 // UpdateFrom is Update with a noise that may depend on the level. Then the reading
@@ -39,7 +40,7 @@ func (f *Filter) UpdateFrom(y, offset, levelCoefficient float64, terms []Term, w
 	}
 	innovation = innovation.minus(f.mean[0].pair().times(levelCoefficient))
 	var before regression
-	if white.Relative != 0 {
+	if white.grows() {
 		before = f.regress(innovation.value(), h)
 	}
 	gain, total := f.weigh(h, variance)
@@ -50,74 +51,11 @@ func (f *Filter) UpdateFrom(y, offset, levelCoefficient float64, terms []Term, w
 	if total > sharp*variance {
 		f.sharpen(twoDiff(y, offset), innovation.value(), gain, total, variance)
 	}
-	if white.Relative != 0 {
-		f.lean(&before, white)
-	}
 	if f.account != nil {
 		f.account.update(white.Label, f.space[:f.n], gain, total, variance)
 	}
-}
-
-// regression is a reading, but for its white noise, given the level: normal with a
-// mean that is linear in the level.
-type regression struct {
-	level      float64 // as predicted
-	square     float64 // mean square of the level as predicted
-	innovation float64
-	slope      float64 // of the reading's mean by the level
-	variance   float64 // that the other states leave
-}
-
-// regress returns the regression of a reading with coefficients h.
-func (f *Filter) regress(innovation float64, h []float64) regression {
-	var both, all, level float64
-	for k := range f.n {
-		s := 0.0
-		for i := range k + 1 {
-			s += h[i] * f.entry(i, k)
-		}
-		u := f.entry(0, k)
-		both, all, level = both+s*f.d[k]*u, all+s*s*f.d[k], level+u*u*f.d[k]
-	}
-	m := f.mean[0].Value()
-	r := regression{level: m, square: m*m + level, innovation: innovation, slope: h[0], variance: all}
-	if level > 0 {
-		r.slope = both / level
-		r.variance = max(0, all-both*both/level)
-	}
-	return r
-}
-
-// Nodes and weights of the Gauss-Hermite rule of five points for a standard normal
-// (Abramowitz & Stegun 1964, table 25.10, scaled by the square root of 2 and of pi, from memory;
-// a test integrates polynomials with them).
-var hermite = [...]struct{ node, weight float64 }{
-	{-2.856970013872806, 0.011257411327720689}, {-1.355626179974266, 0.2220759220056126},
-	{0, 0.5333333333333333}, {1.355626179974266, 0.2220759220056126}, {2.856970013872806, 0.011257411327720689},
-}
-
-// lean moves the means by what the reading says through its noise: to the mean of the
-// level under the noise that depends on it, by a quadrature about the posterior
-// with the noise as predicted (assumed-density filtering: Maybeck 1982, Stochastic
-// Models, Estimation and Control vol. 2, 12.7, from memory).
-func (f *Filter) lean(r *regression, white White) {
-	at := f.mean[0].Value() - r.level
-	spread := f.Covariance(0, 0)
-	sd := math.Sqrt(spread)
-	fixed := r.variance + white.Variance
-	base := fixed - white.Relative*white.Relative*r.square
-	var sum, moment float64
-	for _, g := range hermite {
-		x := at + sd*g.node
-		level := r.level + x
-		v := base + white.Relative*white.Relative*level*level
-		off := r.innovation - r.slope*x
-		w := g.weight * math.Sqrt(fixed/v) * math.Exp(-off*off/2*(1/v-1/fixed))
-		sum, moment = sum+w, moment+w*sd*g.node
-	}
-	shift := moment / sum / spread
-	for i := range f.mean {
-		f.mean[i] = f.mean[i].Plus(f.Covariance(i, 0) * shift)
+	if white.grows() {
+		f.lean(&before, white)
 	}
 }
 
