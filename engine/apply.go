@@ -199,7 +199,7 @@ func (k *Keeper) index(arrived []*Track) {
 func (k *Keeper) startJob(t *Track, m *model) {
 	j := &job{
 		track: t, model: m, number: t.number, recent: t.rows, count: t.tally.count, position: t.position,
-		ledger: k.ledger, directory: k.directory.Load(),
+		trimmed: k.sweep.trimmed, ledger: k.ledger, directory: k.directory.Load(),
 	}
 	t.job = j
 	k.jobs = append(k.jobs, j)
@@ -246,10 +246,10 @@ func (k *Keeper) finishJob(j *job) {
 	}
 	since := slices.Clone(t.rows[len(j.recent):])
 	t.job = nil
-	t.rest(j.model)
+	t.rest(k.modelOf(t)) // which gives the same belief, but may have another tolerance or text
 	t.fold, t.foldedTo = j.fold, j.position
 	t.rows, t.marks, t.markFrom = j.rows, j.marks, 0
-	t.last, t.behind, t.saved = j.last, entry{}, 0 // and the checkpoint, if any, has no fold
+	t.last, t.behind, t.saved = j.last, j.behind, 0 // and the checkpoint, if any, has no fold
 	t.trim(k.sweep.trimmed)
 	t.fresh = since
 	k.change++

@@ -93,6 +93,12 @@ func (k *Keeper) Budget(ctx context.Context, id QuantityID, q BudgetQuery) (Budg
 	if v.Rebuilding {
 		b.Position = v.foldedTo
 	}
+	select { // a long history takes a core for seconds: one at a time
+	case k.budgeting <- struct{}{}:
+		defer func() { <-k.budgeting }()
+	case <-ctx.Done():
+		return Budget{}, ctx.Err()
+	}
 	j, err := k.accounted(ctx, v, m, at)
 	if err != nil {
 		return Budget{}, err
@@ -126,7 +132,7 @@ func (k *Keeper) accounted(ctx context.Context, v *View, m *model, at Instant) (
 		if all[i].Time > at {
 			break
 		}
-		if i%1_000 == 0 && ctx.Err() != nil {
+		if i%64 == 0 && ctx.Err() != nil {
 			return nil, ctx.Err()
 		}
 		j.add(m, &all[i].Row)

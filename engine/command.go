@@ -156,7 +156,7 @@ func (k *Keeper) decideBatch(w *work, c *command) {
 			at.place = now.place(r.Quantity) // declared since, or the ledger was opened anew
 			at.hashID(r, &k.seeds)
 		}
-		if r.Instrument != "" && (at.instrument == nil || c.within != k.directory.Load()) {
+		if r.Instrument != "" { // which may be new, or have been forgotten with a full disk
 			at.instrument = k.directory.Load().instrument(r.Instrument)
 		}
 		res, write := k.admit(r, at, b.Receive)

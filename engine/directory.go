@@ -1,8 +1,8 @@
 package engine
 
 import (
+	"cmp"
 	"slices"
-	"sort"
 	"sync"
 )
 
@@ -13,7 +13,8 @@ type directory struct {
 	mu           sync.RWMutex // guards all below
 	byID         map[QuantityID]place
 	byInstrument map[InstrumentID]*instrumentTrack
-	instruments  []*instrumentTrack // by ID; replaced, never changed
+	instruments  []*instrumentTrack // by ID if sorted; changed by appending only
+	sorted       bool
 }
 
 func newDirectory() *directory {
@@ -65,17 +66,20 @@ func (d *directory) numberOf(id InstrumentID) InstrumentNumber {
 
 // allInstruments returns every instrument, by the bytes of its ID.
 func (d *directory) allInstruments() []*instrumentTrack {
-	d.mu.RLock()
-	defer d.mu.RUnlock()
-	return d.instruments
+	d.mu.Lock()
+	defer d.mu.Unlock()
+	if !d.sorted {
+		d.instruments = slices.SortedFunc(slices.Values(d.instruments), func(a, b *instrumentTrack) int { return cmp.Compare(a.id, b.id) })
+		d.sorted = true
+	}
+	return slices.Clip(d.instruments)
 }
 
 func (d *directory) addInstrument(t *instrumentTrack) {
 	d.mu.Lock()
 	defer d.mu.Unlock()
 	d.byInstrument[t.id] = t
-	n := sort.Search(len(d.instruments), func(i int) bool { return d.instruments[i].id > t.id })
-	d.instruments = slices.Insert(slices.Clone(d.instruments), n, t)
+	d.instruments, d.sorted = append(d.instruments, t), false
 }
 
 func (d *directory) removeInstrument(t *instrumentTrack) {
@@ -89,7 +93,7 @@ func (d *directory) removeInstrument(t *instrumentTrack) {
 // keeper decides on it: most of the time that takes is spent waiting for memory.
 type resolved struct {
 	place                       // no track: not known then
-	instrument *instrumentTrack // nil without one, or if it is not known then
+	instrument *instrumentTrack // filled in by the keeper; nil without one, or if it is not known
 	hash       idHash           // of the ID, if there is a track and an ID
 	// stored is the reading in the ledger with the same quantity, ID and time,
 	// if it was looked for and found.
@@ -102,9 +106,6 @@ func (d *directory) resolve(readings []Reading, seeds *idSeeds) []resolved {
 	d.mu.RLock()
 	for i := range readings {
 		all[i].place = d.byID[readings[i].Quantity]
-		if readings[i].Instrument != "" {
-			all[i].instrument = d.byInstrument[readings[i].Instrument]
-		}
 	}
 	d.mu.RUnlock()
 	for i := range readings {

@@ -31,7 +31,7 @@ type Figures struct {
 // where the view has readings later than the instant.
 func (k *Keeper) Figures(v *View, at Instant) (Figures, error) {
 	f, err := k.figures(v, at)
-	if err == nil && f.ReadingCount == v.ReadingCount {
+	if err == nil {
 		k.lookAhead(v, &f, at)
 	}
 	return f, err

@@ -20,13 +20,15 @@ func (e *entry) tiesNameless(f *entry) bool {
 }
 
 // compareEntries is the canonical order: time, then instrument (in the order of
-// first declaration), then reading ID, then value. What is left equal folds the
-// same either way; the position makes the order total.
+// first declaration), then reading ID, then value, then all else that a fold sees
+// of a reading. What is left equal folds the same either way; the position makes
+// the order total.
 func compareEntries(a, b *entry) int {
 	if c := cmp.Compare(a.Time, b.Time); c != 0 {
 		return c
 	}
-	return cmp.Or(cmp.Compare(a.Instrument, b.Instrument), cmp.Compare(a.ID, b.ID), cmp.Compare(a.Value, b.Value), cmp.Compare(a.Position, b.Position))
+	return cmp.Or(cmp.Compare(a.Instrument, b.Instrument), cmp.Compare(a.ID, b.ID), cmp.Compare(a.Value, b.Value),
+		cmp.Compare(a.Occasion, b.Occasion), cmp.Compare(a.Uncertainty, b.Uncertainty), cmp.Compare(a.Position, b.Position))
 }
 
 func (e entry) compare(f entry) int { return compareEntries(&e, &f) }
@@ -39,7 +41,7 @@ type fold struct {
 	lastTime Instant // of the latest reading in count
 	constant posterior.Constant
 	walk     posterior.Walk // at lastTime
-	joint    *joint         // at lastTime or a renewal after it; nil before any reading
+	joint    *joint         // at lastTime; nil before any reading, and in other forms
 }
 
 func (f *fold) copied() fold {

@@ -42,6 +42,7 @@ type ForecastStep struct {
 	Lower, Upper float64             // the coverage interval, unless Level is FormNone
 	HasBreach    bool
 	Breach       Breach             // at that time
+	HasCrossed   bool               // something is known from the beginning
 	Crossed      posterior.Crossing // by that time, mass already outside included
 }
 
@@ -75,9 +76,7 @@ func (k *Keeper) Forecast(_ context.Context, id QuantityID, q ForecastQuery) (Fo
 		return Forecast{}, err
 	}
 	f := Forecast{Quantity: *v.Declared(), Time: q.Now, Horizon: q.Horizon, Coverage: q.Coverage, Position: v.Position, Rebuilding: v.Rebuilding}
-	if v.HasLast {
-		f.Time = max(f.Time, v.LastTime)
-	}
+	f.Time = v.latest(f.Time)
 	if v.Rebuilding {
 		f.Position = v.foldedTo
 	}
@@ -96,6 +95,18 @@ func (k *Keeper) Forecast(_ context.Context, id QuantityID, q ForecastQuery) (Fo
 	return f, f.look(v, d, q.Steps)
 }
 
+// latest returns the instant from which v looks ahead: the one given, or the last
+// reading or renewal if that is later, as of a clock that is ahead.
+func (v *View) latest(at Instant) Instant {
+	if v.HasLast {
+		at = max(at, v.LastTime)
+	}
+	if n := len(v.basis.renewals); n > 0 {
+		at = max(at, v.basis.renewals[n-1].Time)
+	}
+	return at
+}
+
 // look fills in the steps and the crossing.
 func (f *Forecast) look(v *View, d *Declaration, steps int) error {
 	crossing, err := v.crossing(f.Time, f.Horizon)
@@ -109,7 +120,8 @@ func (f *Forecast) look(v *View, d *Declaration, steps int) error {
 		if step.Level.Form() != posterior.FormNone {
 			step.Lower, step.Upper = step.Level.Interval(f.Coverage)
 			if step.HasBreach = d.Tolerance.Declared(); step.HasBreach {
-				step.Breach, step.Crossed = breachOf(step.Level, d.Tolerance), crossing.by(after)
+				step.Breach = breachOf(step.Level, d.Tolerance)
+				step.Crossed, step.HasCrossed = crossing.by(after), crossing != nil
 			}
 		}
 		f.Steps = append(f.Steps, step)
@@ -169,7 +181,11 @@ func (v *View) course(level posterior.Posterior, at Instant) posterior.Course {
 	return c
 }
 
+// by returns what has been crossed after a time; nothing is known of a nil crossing.
 func (c *crossing) by(after time.Duration) posterior.Crossing {
+	if c == nil {
+		return posterior.Crossing{}
+	}
 	if c.passage == nil {
 		return c.now
 	}

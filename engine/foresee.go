@@ -1,6 +1,7 @@
 package engine
 
 import (
+	"sync"
 	"time"
 
 	"leadline.example/engine/posterior"
@@ -15,9 +16,6 @@ type ahead struct {
 	hasMedian   bool
 	median      float64 // seconds
 }
-
-// maxAheads is how many quantities can wait for the forecaster.
-const maxAheads = 1_024
 
 // lookAhead adds to f what the declared horizon holds, and asks the forecaster to
 // look anew if that was found out more than a minute, or a hundredth of the horizon,
@@ -47,16 +45,40 @@ type aheadRequest struct {
 	at    Instant
 }
 
-// ask puts a quantity into the forecaster's queue, unless it waits there already
-// or the queue is full: then the next scrape asks again.
-func (k *Keeper) ask(t *Track, at Instant) {
-	if !t.asked.CompareAndSwap(false, true) {
-		return
-	}
+// aheadQueue is what waits for the forecaster, first come first served, each
+// quantity once.
+type aheadQueue struct {
+	mu      sync.Mutex // guards waiting
+	waiting []aheadRequest
+	wake    chan struct{} // has room for one
+}
+
+func newAheadQueue() *aheadQueue { return &aheadQueue{wake: make(chan struct{}, 1)} }
+
+func (q *aheadQueue) add(r aheadRequest) {
+	q.mu.Lock()
+	q.waiting = append(q.waiting, r)
+	q.mu.Unlock()
 	select {
-	case k.aheads <- aheadRequest{t, at}:
+	case q.wake <- struct{}{}:
 	default:
-		t.asked.Store(false)
+	}
+}
+
+// take returns the next request, if there is one.
+func (q *aheadQueue) take() (r aheadRequest, ok bool) {
+	q.mu.Lock()
+	defer q.mu.Unlock()
+	if ok = len(q.waiting) > 0; ok {
+		r, q.waiting = q.waiting[0], q.waiting[1:]
+	}
+	return r, ok
+}
+
+// ask puts a quantity into the forecaster's queue, unless it waits there already.
+func (k *Keeper) ask(t *Track, at Instant) {
+	if t.asked.CompareAndSwap(false, true) {
+		k.aheads.add(aheadRequest{t, at})
 	}
 }
 
@@ -64,13 +86,20 @@ func (k *Keeper) ask(t *Track, at Instant) {
 func (k *Keeper) foreseeLoop() {
 	for {
 		select {
-		case r := <-k.aheads:
+		case <-k.aheads.wake:
+		case <-k.stopping:
+			return
+		}
+		for r, ok := k.aheads.take(); ok; r, ok = k.aheads.take() {
+			select {
+			case <-k.stopping:
+				return
+			default:
+			}
 			r.track.asked.Store(false)
 			if err := r.track.foresee(r.at); err != nil {
 				k.options.OnFault(err)
 			}
-		case <-k.stopping:
-			return
 		}
 	}
 }
@@ -78,9 +107,7 @@ func (k *Keeper) foreseeLoop() {
 // foresee finds out what the horizon holds.
 func (t *Track) foresee(at Instant) error {
 	v := t.View()
-	if v.HasLast {
-		at = max(at, v.LastTime)
-	}
+	at = v.latest(at)
 	horizon := v.Declared().Declaration.BreachHorizon
 	c, err := v.crossing(at, horizon)
 	if c == nil || horizon == 0 || err != nil {

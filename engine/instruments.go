@@ -189,7 +189,8 @@ func (k *Keeper) changeInstrument(ctx context.Context, id InstrumentID, decide f
 		next.Number = t.number
 		t.decided = next
 		k.decidedTo++
-		*w.next(declarationBytes) = Record{
+		const calibrationBytes = 100
+		*w.next(declarationBytes + calibrationBytes*len(next.Declaration.Calibrations)) = Record{
 			Kind: KindInstrument, ReceiveTime: next.UpdateTime, Revision: next.Revision, Instrument: next,
 		}
 		return nil
@@ -247,9 +248,10 @@ func (t *instrumentTrack) checkRemoved(d *InstrumentDeclaration) error {
 		if i+1 < len(was) {
 			until = was[i+1].ValidFrom
 		}
-		kept := slices.ContainsFunc(d.Calibrations, func(c Calibration) bool { return c.ValidFrom == was[i].ValidFrom })
+		kept := len(d.Calibrations) >= len(was) || // moved, as where its time was mistyped
+			slices.ContainsFunc(d.Calibrations, func(c Calibration) bool { return c.ValidFrom == was[i].ValidFrom })
 		if !kept && from <= t.decidedSpan.last && t.decidedSpan.first < until {
-			return refuse(InvalidField, "calibrations", "calibrations no longer has the one with valid_from %v, on which readings from %v to %v rest; keep it, and correct its values if they are wrong", was[i].ValidFrom, max(from, t.decidedSpan.first), min(until, t.decidedSpan.last))
+			return refuse(InvalidField, "calibrations", "calibrations no longer has the one with valid_from %v, on which readings from %v to %v may rest; keep it, and correct what is wrong in it, also its time", was[i].ValidFrom, max(from, t.decidedSpan.first), min(until, t.decidedSpan.last))
 		}
 	}
 	return nil

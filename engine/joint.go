@@ -17,8 +17,7 @@ import (
 // its state is given to the new one, so the states stay few however long a
 // quantity lives, and nothing is lost by it.
 //
-// A joint belongs to the fold it is in. Routes may be shared by copies: they are
-// replaced, never changed.
+// A joint belongs to the fold it is in; others take a clone.
 type joint struct {
 	filter     posterior.Filter
 	at         Instant  // where the filter stands
@@ -41,6 +40,8 @@ type route struct {
 	reference   int
 	gain        int
 	scale       float64 // of the gain: the level it is relative to; 0 before it is met
+	drift       float64 // variance that the bias is to gain in a second ...
+	drifts      Instant // ... from then on; 0 once it does
 	correlated  int
 	shared      int    // the occasion's error
 	occasion    uint64 // whose it is
@@ -95,6 +96,9 @@ func (j *joint) move(m *model, to Instant) {
 		j.advance(r.Time)
 		j.filter.Renew(m.renewalPrior(r))
 		j.renewed++
+		for i := range j.routes {
+			j.routes[i].scale = 0 // the level that a gain is relative to is another
+		}
 	}
 	j.advance(to)
 }
@@ -104,7 +108,19 @@ func (j *joint) renewsBy(m *model, to Instant) bool {
 	return j.renewed < len(m.renewals) && m.renewals[j.renewed].Time <= to
 }
 
+// advance goes on to an instant, through the beginnings of drifts up to then.
 func (j *joint) advance(to Instant) {
+	for i := range j.routes {
+		if r := &j.routes[i]; r.drift > 0 && r.drifts <= to {
+			j.step(r.drifts)
+			j.filter.Diffuse(r.own, r.drift)
+			r.drift = 0
+		}
+	}
+	j.step(to)
+}
+
+func (j *joint) step(to Instant) {
 	if to > j.at {
 		j.filter.Advance(lasting(j.at, to))
 		j.at = to
@@ -136,18 +152,27 @@ func (j *joint) add(m *model, e *Row) {
 		level, variance = j.filter.Mean(0), j.filter.Variance(0)
 	}
 	y.noise.Label = int(e.Instrument)
-	first := r.gain > 0 && r.scale == 0
+	loose := r.gain > 0 && j.loose(m, r, variance)
 	y.about(m, r, level, variance)
-	if first && !j.filter.Vague() {
+	if loose && !j.filter.Vague() {
 		j.refine(e, r, &y, offset)
 		y.noise.Gain, y.noise.Scale = d.Calibrations[r.calibration].RelativeBiasStandardUncertainty, r.scale
 	}
 	j.filter.UpdateFrom(e.Value, offset, 1, y.terms, y.noise)
 }
 
-// refine lets a gain that is met for the first time be relative to the level as its
-// first reading leaves it, weighed as it deserves: what was known before may be far off.
-// Two rounds settle it.
+// loose tells whether the level that a gain is relative to may still be changed: until
+// the level is known to one percent, or readings have tied the two together.
+func (j *joint) loose(m *model, r *route, variance float64) bool {
+	if r.scale == 0 || m.motion.Form != posterior.MotionConstant {
+		return r.scale == 0
+	}
+	both := j.filter.Covariance(0, r.gain)
+	return variance > 1e-4*r.scale*r.scale && both*both < 1e-2*variance*j.filter.Variance(r.gain)
+}
+
+// refine lets a gain be relative to the level as the reading at hand leaves it, weighed
+// as it deserves: what was known before may be far off. Two rounds settle it.
 func (j *joint) refine(e *Row, r *route, y *indication, offset float64) {
 	for range 2 {
 		trial := j.filter.Clone()
@@ -210,7 +235,7 @@ func (y *indication) shared(r *route) (offset float64) {
 //
 // A level times a gain's error g counts as an error of its own, g times the root mean
 // square of the level as predicted: for a level that stays, as it was when the gain
-// was first met. The obvious way, the extended Kalman filter, linearises the product anew
+// was first met, see loose. The obvious way, the extended Kalman filter, linearises the product anew
 // at each reading, and takes the differences between its points of
 // linearisation for knowledge of g. The white noise has the mean of its variance
 // over the level.
@@ -275,7 +300,11 @@ func (j *joint) calibrate(r *route, d *InstrumentDeclaration, at Instant) {
 	}
 	own += c.drift() * lasting(c.ValidFrom, at)
 	if own > 0 || c.drift() > 0 || r.own > 0 {
-		j.renew(&r.own, source{kind: Bias, instrument: r.instrument}, posterior.Process{Variance: own, Diffusion: c.drift()})
+		p := posterior.Process{Variance: own, Diffusion: c.drift()}
+		if r.drift, r.drifts = 0, c.ValidFrom; at < c.ValidFrom { // it drifts from then on
+			r.drift, p.Diffusion = c.drift(), 0
+		}
+		j.renew(&r.own, source{kind: Bias, instrument: r.instrument}, p)
 	}
 	if u := c.RelativeBiasStandardUncertainty; u > 0 || r.gain > 0 {
 		r.scale = 0
@@ -364,10 +393,14 @@ func (j *joint) bias(m *model, r *route) BiasBelief {
 	}
 }
 
-// biases returns what is believed of the calibrations in force, by instrument.
+// biases returns what is believed of the calibrations in force where the joint stands,
+// by instrument. It changes j.
 func (j *joint) biases(m *model) []BiasBelief {
 	var all []BiasBelief
 	for i := range j.routes {
+		if r := &j.routes[i]; j.at >= r.until {
+			j.calibrate(r, &m.instrument(r.instrument).Declaration, j.at)
+		}
 		if j.routes[i].calibration >= 0 {
 			all = append(all, j.bias(m, &j.routes[i]))
 		}

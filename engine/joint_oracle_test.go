@@ -176,17 +176,6 @@ func calibration(d engine.InstrumentDeclaration, at engine.Instant) int {
 	return n
 }
 
-// firstUnder returns the time of the first reading under a calibration: where that
-// is before the calibration, the bias drifts from then.
-func (o *oracle) firstUnder(id engine.InstrumentID, n int) engine.Instant {
-	for i := range o.readings {
-		if r := &o.readings[i]; r.Instrument == id && calibration(o.instruments[id], r.Time) == n {
-			return r.Time
-		}
-	}
-	return engine.MaxInstant
-}
-
 // occasions numbers the occasions of an instrument in canonical order.
 func (o *oracle) occasions() []int {
 	numbers := make([]int, len(o.readings))
@@ -246,8 +235,7 @@ func (o *oracle) errorCovariance(i, j int, occasions []int) *big.Float {
 		if a.Instrument == b.Instrument && m == n {
 			u := c.BiasStandardUncertainty
 			own := minus(times(num(u), num(u)), times(num(c.CommonStandardUncertainty), num(c.CommonStandardUncertainty)))
-			from := earlier(c.ValidFrom, o.firstUnder(a.Instrument, m))
-			age := between(from, earlier(a.Time, b.Time))
+			age := between(c.ValidFrom, max(c.ValidFrom, earlier(a.Time, b.Time)))
 			sum = plus(sum, own, times(o.perSecond(c.DriftStandardDeviation, c.DriftPer), age))
 		}
 	}

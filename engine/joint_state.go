@@ -86,7 +86,10 @@ func (r *route) append(b []byte) []byte {
 	for _, state := range r.indexes() {
 		b = binary.AppendUvarint(b, uint64(*state))
 	}
-	b = binary.BigEndian.AppendUint64(b, math.Float64bits(r.scale))
+	for _, x := range [...]float64{r.scale, r.drift} {
+		b = binary.BigEndian.AppendUint64(b, math.Float64bits(x))
+	}
+	b = binary.AppendVarint(b, int64(r.drifts))
 	return binary.BigEndian.AppendUint64(b, r.occasion)
 }
 
@@ -141,7 +144,8 @@ func (r *stateReader) route() route {
 	for _, state := range e.indexes() {
 		*state = int(r.uvarint())
 	}
-	e.scale = r.float()
+	e.scale, e.drift = r.float(), r.float()
+	e.drifts = Instant(r.varint())
 	e.occasion = binary.BigEndian.Uint64(r.take(8))
 	return e
 }

@@ -117,7 +117,8 @@ type Keeper struct {
 	committed chan error
 	jobQueue  chan *job
 	jobDone   chan *job
-	aheads    chan aheadRequest // to the forecaster
+	aheads    *aheadQueue   // to the forecaster
+	budgeting chan struct{} // holds the one budget under way
 	workers   sync.WaitGroup
 }
 
@@ -137,7 +138,8 @@ func New(o Options) (*Keeper, error) {
 		committed: make(chan error),
 		jobQueue:  make(chan *job),
 		jobDone:   make(chan *job, 1),
-		aheads:    make(chan aheadRequest, maxAheads),
+		aheads:    newAheadQueue(),
+		budgeting: make(chan struct{}, 1),
 	}
 	if err := k.load(); err != nil {
 		return nil, err

@@ -14,15 +14,17 @@ type job struct {
 	recent    []entry // the track's rows when the job began
 	count     int     // readings applied by then
 	position  Position
+	trimmed   Position // rows up to this need not stay in memory
 	ledger    Ledger
 	directory *directory
 
-	fold  fold
-	last  entry
-	rows  []entry // canonical if ordered, else the recent ones
-	marks []fold
-	fault error // of the index, which the ledger made good
-	err   error
+	fold   fold
+	last   entry
+	behind entry   // the latest reading in marks[0]
+	rows   []entry // canonical if ordered, else the recent ones
+	marks  []fold
+	fault  error // of the index, which the ledger made good
+	err    error
 }
 
 // run does the work.
@@ -46,9 +48,16 @@ func (j *job) run() {
 	}
 	for i := range all {
 		t.extend(&all[i])
+		if i%trimEvery == 0 {
+			t.trim(j.trimmed) // or the marks of a long life would all be in memory
+		}
 	}
-	j.fold, j.last, j.rows, j.marks = t.fold, t.last, t.rows, t.marks
+	j.fold, j.last, j.behind, j.rows, j.marks = t.fold, t.last, t.behind, t.rows, t.marks
 }
+
+// trimEvery is how many rows a rebuild folds before it lets go of those that are
+// stored.
+const trimEvery = 4_096
 
 // sum folds where the order doesn't matter: what is no longer in memory makes
 // the mark, and the recent rows stay.

@@ -56,10 +56,19 @@ func (k *Keeper) Renew(ctx context.Context, id QuantityID, r Renewal, receive In
 		}
 		r.Position, r.CreateTime = k.decidedTo+1, receive
 		if r.RequestID == "" {
-			r.RequestID = fmt.Sprintf("renewal-%d", r.Position)
+			r.RequestID = q.unusedRequestID(r.Position)
 		}
 		return &r, nil
 	}, &r)
+}
+
+// unusedRequestID names a renewal that was asked for without a request ID.
+func (q *Quantity) unusedRequestID(at Position) string {
+	id := fmt.Sprintf("renewal-%d", at)
+	for q.renewal(id) != nil {
+		id += "-"
+	}
+	return id
 }
 
 // WithdrawRenewal undoes a renewal: the belief is as if it had not been. Doing it

@@ -75,6 +75,8 @@ func stepMessage(s *engine.ForecastStep, coverage float64) *leadlinev1.Forecast_
 	m.Mean, m.StandardDeviation, m.Interval = summary(s.Level, coverage, s.Lower, s.Upper)
 	if s.HasBreach && s.Level.Form() != posterior.FormNone {
 		m.Breach = &leadlinev1.Belief_Breach{Below: s.Breach.Below, Above: s.Breach.Above, Either: s.Breach.Either}
+	}
+	if s.HasCrossed {
 		m.Crossed = &leadlinev1.Forecast_Crossed{Below: s.Crossed.Below, Above: s.Crossed.Above, Either: s.Crossed.Either}
 	}
 	return m

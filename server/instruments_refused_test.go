@@ -89,7 +89,7 @@ func TestChangesThatReadingsForbid(t *testing.T) {
 	r.call("PUT", "/v1/quantities/gap", `{"unit":"mm"}`).want(200)
 	r.call("POST", "/v1/quantities/gap/readings", `{"value":0.83,"instrument":"calliper-7"}`).want(200)
 	r.call("PUT", path, strings.Replace(calliperDeclaration, `"mm"`, `"cm"`, 1)).wantProblem(400, engine.UnitFixed, "unit")
-	r.call("PUT", path, strings.Replace(calliperDeclaration, `2026-01-10`, `2026-01-11`, 1)).wantProblem(400, engine.InvalidField, "calibrations")
+	r.call("PUT", path, `{"unit":"mm","repeatability":{"standard_deviation":0.02}}`).wantProblem(400, engine.InvalidField, "calibrations")
 	r.call("PUT", path, strings.Replace(calliperDeclaration, `"repeatability":{"standard_deviation":0.02},`, ``, 1)).
 		wantProblem(400, engine.InvalidField, "repeatability.standard_deviation")
 	r.call("PUT", "/v1/quantities/gap", `{"unit":"mm","repeatability":{"learned":{}}}`).wantProblem(501, engine.NotSupported, "repeatability.learned")

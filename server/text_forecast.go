@@ -75,7 +75,10 @@ func stepCells(s *engine.ForecastStep, unit string) []string {
 	}
 	breach, crossed := "-", "-"
 	if s.HasBreach {
-		breach, crossed = probabilityText(s.Breach.Either), probabilityText(s.Crossed.Either)
+		breach = probabilityText(s.Breach.Either)
+	}
+	if s.HasCrossed {
+		crossed = probabilityText(s.Crossed.Either)
 	}
 	return []string{s.Time.String(), resultText(s.Level, s.Lower, s.Upper, unit), lower + " to " + within(upper, unit), breach, crossed}
 }

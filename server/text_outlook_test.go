@@ -58,7 +58,7 @@ func TestForecastReadsAtAGlance(t *testing.T) {
 		f.Steps = append(f.Steps, engine.ForecastStep{
 			Time:  f.Time + engine.Instant((n+1)*24*int(time.Hour)),
 			Level: posterior.Normal(posterior.LevelOf(0.81234), 0.05+0.01*float64(n)), Lower: 0.7, Upper: 0.93,
-			HasBreach: true, Breach: engine.Breach{Below: 0.01, Above: 0.03, Either: 0.04}, Crossed: posterior.Crossing{Below: 0.1, Above: 0.2, Either: 0.3},
+			HasBreach: true, Breach: engine.Breach{Below: 0.01, Above: 0.03, Either: 0.04}, HasCrossed: true, Crossed: posterior.Crossing{Below: 0.1, Above: 0.2, Either: 0.3},
 		})
 	}
 	checkGolden(t, "forecast", forecastText(&f))

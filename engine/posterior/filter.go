@@ -6,7 +6,7 @@ import (
 )
 
 // MaxStates is the number of states that a Filter can have.
-const MaxStates = 64
+const MaxStates = 128
 
 // Process is how a further state of a Filter starts and moves: from N(0, Variance),
 // then as a random walk that gains Diffusion, a variance, in a second; or, with
@@ -147,7 +147,7 @@ func (f *Filter) first() int {
 // process gains in a time: 1 - exp(-2 rate h).
 func gained(rate, seconds float64) float64 { return -math.Expm1(-2 * rate * seconds) }
 
-// advanceLevel moves level and slope on. A wandering slope s” gives them the
+// advanceLevel moves level and slope on. A wandering slope s gives them the
 // covariance w [h^3/3 h^2/2; h^2/2 h] (Durbin & Koopman 2012, 3.8), which is half
 // the step, w h to the slope, the other half, and w h^3/12 to the level. What is
 // unknown stays unknown.
@@ -285,6 +285,9 @@ func (f *Filter) Redraw(state int, p Process) {
 	f.forget(state)
 	f.d[state], f.moves[state], f.mean[state] = p.Variance, p, Level{}
 }
+
+// Diffuse has a state after level and slope gain a variance in a second from now on.
+func (f *Filter) Diffuse(state int, variance float64) { f.moves[state].Diffusion = variance }
 
 // forget leaves a state out of the covariance.
 func (f *Filter) forget(k int) {
