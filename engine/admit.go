@@ -47,7 +47,7 @@ func (k *Keeper) objection(t *Track, i *instrumentTrack, r *Reading, receive Ins
 	case t.rules.retired:
 		return QuantityRetired, fmt.Sprintf("quantity %q was retired at %v; declare it again to revive it, then send the reading again", r.Quantity, t.decided.RetireTime)
 	case r.Unit != "" && r.Unit != t.rules.unit:
-		return UnitMismatch, fmt.Sprintf("unit is %q but the quantity is in %q; convert the value, or leave unit out", r.Unit, t.rules.unit)
+		return UnitMismatch, fmt.Sprintf("unit is %q but the quantity is in %q; convert the value and send it in that unit", r.Unit, t.rules.unit)
 	}
 	if r.Instrument != "" {
 		if reason, detail := t.objectionToInstrument(r, i); reason != "" {
@@ -88,7 +88,7 @@ func (k *Keeper) objectionToTime(a *rules, r *Reading, receive Instant) (Reason,
 	case !r.Time.Valid():
 		return TimeOutOfRange, fmt.Sprintf("time %v lies outside 1678 to 2262; check the clock of the sender", cmp.Or(r.SentTime, r.Time.String()))
 	case r.Time.Sub(receive) > float64(k.options.MaxClockSkew):
-		return TimeInFuture, fmt.Sprintf("time %v is more than %v after the receipt at %v; check the clock of the sender", r.Time, k.options.MaxClockSkew, receive)
+		return TimeInFuture, fmt.Sprintf("time %v is more than %v after the receipt at %v; check the clock and the time zone of the sender", r.Time, k.options.MaxClockSkew, receive)
 	case r.Time < a.priorTime:
 		return BeforePrior, fmt.Sprintf("time %v is before the prior's time %v; send readings from then on, or declare an earlier prior.time and send the reading again", r.Time, a.priorTime)
 	}

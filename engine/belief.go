@@ -2,7 +2,6 @@ package engine
 
 import (
 	"context"
-	"math"
 	"slices"
 	"sort"
 	"strings"
@@ -60,6 +59,8 @@ type Belief struct {
 
 	Repeatability posterior.Repeatability
 
+	HasRenewal                        bool // the part has been renewed since the prior
+	RenewalTime                       Instant
 	HasSlope                          bool    // of a linear trend
 	SlopeMean, SlopeStandardDeviation float64 // by SlopePer
 	SlopePer                          time.Duration
@@ -205,16 +206,14 @@ func (k *Keeper) predictiveInstrument(m *model, f *fold, q *BeliefQuery) (*Instr
 // evaluateJoint gives what only a joint belief has.
 func (b *Belief) evaluateJoint(m *model, j *joint) {
 	b.Flagged, b.Linearised = j.flagged, j.linearised
+	if b.HasRenewal = j.renewed > 0; b.HasRenewal {
+		b.RenewalTime = m.renewals[j.renewed-1].Time
+	}
 	for _, i := range m.instruments {
 		b.ResolutionAsVariance = b.ResolutionAsVariance || i.Declaration.Resolution > 0
 	}
 	b.Biases, b.References = j.biases(m), j.commons()
-	if d := m.declaration(); d.Dynamics.Form == DynamicsLinearTrend {
-		per := d.Dynamics.Slope.Per
-		b.HasSlope, b.SlopePer = true, per
-		b.SlopeMean = j.filter.Mean(1) * per.Seconds()
-		b.SlopeStandardDeviation = math.Sqrt(j.filter.Variance(1)) * per.Seconds()
-	}
+	b.HasSlope, b.SlopeMean, b.SlopeStandardDeviation, b.SlopePer = j.slope(m)
 }
 
 func (b *Belief) lacks(fields ...string) { b.Undetermined = append(b.Undetermined, fields...) }

@@ -54,6 +54,10 @@ type Forecast struct {
 	Coverage float64
 	Steps    []ForecastStep
 
+	HasSlope                          bool // of a linear trend, as believed at Time, by SlopePer
+	SlopeMean, SlopeStandardDeviation float64
+	SlopePer                          time.Duration
+
 	HasCrossing                      bool          // there is a tolerance, and something is known
 	Probability                      float64       // that a limit is crossed within the horizon
 	LowerDecile, Median, UpperDecile time.Duration // of the time to breach; -1 where not reached within the horizon
@@ -128,6 +132,9 @@ func (f *Forecast) look(v *View, d *Declaration, steps int) error {
 	}
 	if v.fold.level(v.basis, f.Time).Form() == posterior.FormNone {
 		f.Undetermined = append(f.Undetermined, "steps")
+	}
+	if j := v.fold.jointAt(v.basis, f.Time); j != nil {
+		f.HasSlope, f.SlopeMean, f.SlopeStandardDeviation, f.SlopePer = j.slope(v.basis)
 	}
 	if f.HasCrossing = crossing != nil; !f.HasCrossing {
 		if d.Tolerance.Declared() {

@@ -278,8 +278,13 @@ func (c *Calibration) checkUncertainty(at string) *Error {
 	if c.ExpandedUncertainty > 0 && c.BiasStandardUncertainty > 0 {
 		return refuse(InvalidField, at+"expanded_uncertainty", "%sexpanded_uncertainty and bias_standard_uncertainty are both given; give one of them", at)
 	}
-	if (c.ExpandedUncertainty > 0) != (c.CoverageFactor > 0) {
-		return refuse(MissingField, at+"coverage_factor", "%sexpanded_uncertainty and coverage_factor need each other; give both, or bias_standard_uncertainty", at)
+	switch {
+	case c.ExpandedUncertainty > 0 && c.CoverageFactor == 0:
+		return refuse(MissingField, at+"coverage_factor", "%[1]scoverage_factor is missing beside %[1]sexpanded_uncertainty; give the k of the certificate, or bias_standard_uncertainty in place of both", at)
+	case c.CoverageFactor > 0 && c.ExpandedUncertainty == 0:
+		return refuse(MissingField, at+"expanded_uncertainty", "%[1]sexpanded_uncertainty is missing beside %[1]scoverage_factor; give the U of the certificate, or bias_standard_uncertainty in place of both", at)
+	case c.CoverageFactor > 0 && c.CoverageFactor < 1:
+		return refuse(InvalidField, at+"coverage_factor", "%scoverage_factor is %v; give the k of the certificate, at least 1 and mostly 2", at, c.CoverageFactor)
 	}
 	if c.ExpandedUncertainty == 0 && c.BiasStandardUncertainty == 0 {
 		return refuse(MissingField, at+"bias_standard_uncertainty", "%sbias_standard_uncertainty is missing or 0; give the standard uncertainty of the bias, or expanded_uncertainty with its coverage_factor", at)
@@ -295,10 +300,10 @@ func (c *Calibration) checkCommon(at string) *Error {
 		return err
 	}
 	if c.Reference != "" && c.CommonStandardUncertainty == 0 {
-		return refuse(MissingField, at+"common_standard_uncertainty", "%sreference is given without common_standard_uncertainty; give the part of the bias's uncertainty that all who rest on %q share", at, c.Reference)
+		return refuse(MissingField, at+"common_standard_uncertainty", "%[1]sreference is given without %[1]scommon_standard_uncertainty; give the part of the bias's uncertainty that all who rest on %[2]q share", at, c.Reference)
 	}
 	if c.Reference == "" && c.CommonStandardUncertainty > 0 {
-		return refuse(MissingField, at+"reference", "%scommon_standard_uncertainty is given without reference; name the standard that it comes from", at)
+		return refuse(MissingField, at+"reference", "%[1]scommon_standard_uncertainty is given without %[1]sreference; name the standard that it comes from", at)
 	}
 	if u := c.StandardUncertainty(); c.CommonStandardUncertainty > u*(1+1e-12) {
 		return refuse(InvalidField, at+"common_standard_uncertainty", "%scommon_standard_uncertainty is %v, more than the %v of the whole bias; it is a part of that", at, c.CommonStandardUncertainty, u)
@@ -310,8 +315,13 @@ func (c *Calibration) checkDrift(at string) *Error {
 	if err := checkOptional(at+"drift_standard_deviation", c.DriftStandardDeviation); err != nil {
 		return err
 	}
-	if c.DriftPer < 0 || (c.DriftStandardDeviation > 0) != (c.DriftPer > 0) {
-		return refuse(InvalidField, at+"drift_per", "%sdrift_per is %v beside drift_standard_deviation %v; give both, the time being that in which the bias moves so far", at, c.DriftPer, c.DriftStandardDeviation)
+	switch {
+	case c.DriftPer < 0:
+		return checkDuration(at+"drift_per", c.DriftPer)
+	case c.DriftStandardDeviation > 0 && c.DriftPer == 0:
+		return refuse(MissingField, at+"drift_per", "%[1]sdrift_per is missing beside %[1]sdrift_standard_deviation; give the time in which the bias moves so far, such as \"31536000s\"", at)
+	case c.DriftStandardDeviation == 0 && c.DriftPer > 0:
+		return refuse(MissingField, at+"drift_standard_deviation", "%[1]sdrift_standard_deviation is missing beside %[1]sdrift_per; give how far the bias typically moves in that time", at)
 	}
 	return nil
 }

@@ -63,12 +63,16 @@ func TestInstrumentDeclarationIsChecked(t *testing.T) {
 		{"calibrations[0].bias_standard_uncertainty", "above 0", first(func(c *engine.Calibration) { c.BiasStandardUncertainty = -0.1 })},
 		{"calibrations[0].bias_standard_uncertainty", "missing", first(func(c *engine.Calibration) { c.BiasStandardUncertainty = 0 })},
 		{"calibrations[0].expanded_uncertainty", "one of them", first(func(c *engine.Calibration) { c.ExpandedUncertainty, c.CoverageFactor = 1, 2 })},
-		{"calibrations[0].coverage_factor", "give both", first(func(c *engine.Calibration) { c.CoverageFactor = 2 })},
+		{"calibrations[0].expanded_uncertainty", "give the U", first(func(c *engine.Calibration) { c.CoverageFactor = 2 })},
 		{"calibrations[0].relative_bias_standard_uncertainty", "0.01", first(func(c *engine.Calibration) { c.RelativeBiasStandardUncertainty = -1 })},
 		{"calibrations[0].common_standard_uncertainty", "all who rest on", first(func(c *engine.Calibration) { c.Reference = "block 7" })},
 		{"calibrations[0].reference", "name the standard", first(func(c *engine.Calibration) { c.CommonStandardUncertainty = 0.1 })},
 		{"calibrations[0].common_standard_uncertainty", "a part", first(func(c *engine.Calibration) { c.Reference, c.CommonStandardUncertainty = "block 7", 0.31 })},
-		{"calibrations[0].drift_per", "give both", first(func(c *engine.Calibration) { c.DriftStandardDeviation = 0.1 })},
+		{"calibrations[0].drift_per", "such as", first(func(c *engine.Calibration) { c.DriftStandardDeviation = 0.1 })},
+		{"calibrations[0].drift_standard_deviation", "how far", first(func(c *engine.Calibration) { c.DriftPer = time.Hour })},
+		{"calibrations[0].coverage_factor", "at least 1", first(func(c *engine.Calibration) {
+			c.BiasStandardUncertainty, c.ExpandedUncertainty, c.CoverageFactor = 0, 1, 0.5
+		})},
 		{"calibrations[0].certificate", "printable", first(func(c *engine.Calibration) { c.Certificate = "\x00" })},
 	} {
 		d := with(gauge(), test.change)

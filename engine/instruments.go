@@ -288,6 +288,7 @@ func (k *Keeper) applyInstrument(r *Record) {
 	t.publish()
 	for _, user := range t.users {
 		k.touch(user)
+		user.position = r.Position
 		k.rebase(user)
 	}
 }
@@ -334,7 +335,11 @@ func (k *Keeper) presentInstruments() {
 	for _, t := range k.byNumber {
 		t.decidedUsed = slices.Clone(t.used)
 		for _, u := range t.used {
-			k.instruments[u.number-1].decidedSpan.join(u.span)
+			i := k.instruments[u.number-1]
+			i.decidedSpan.join(u.span)
+			if t.position < i.position { // the belief is that under the latest declaration
+				t.position, t.foldedTo = i.position, i.position
+			}
 		}
 	}
 }
@@ -347,9 +352,9 @@ func (t *Track) objectionToInstrument(r *Reading, i *instrumentTrack) (Reason, s
 	case i.decided.Retired:
 		return InstrumentRetired, fmt.Sprintf("instrument %q was retired at %v; declare it again to revive it, then send the reading again", i.id, i.decided.RetireTime)
 	case i.decided.Declaration.Unit != t.rules.unit:
-		return UnitMismatch, fmt.Sprintf("instrument %q is in %q but the quantity is in %q; declare the instrument in the quantity's unit, or convert the value and leave instrument out", i.id, i.decided.Declaration.Unit, t.rules.unit)
+		return UnitMismatch, fmt.Sprintf("instrument %q is in %q but the quantity is in %q; declare an instrument in the quantity's unit and convert the value", i.id, i.decided.Declaration.Unit, t.rules.unit)
 	case t.rules.learned:
-		return NotSupported, "instrument is given but the quantity's repeatability is learned, which is not supported together; declare repeatability.standard_deviation, or leave instrument out"
+		return NotSupported, "instrument is given but the quantity's repeatability is learned, which is not supported together; declare the quantity's repeatability.standard_deviation (without instrument its bias would count as 0)"
 	case len(t.decidedUsed) >= MaxQuantityInstruments && !slices.ContainsFunc(t.decidedUsed, func(u use) bool { return u.number == i.number }):
 		return NotSupported, fmt.Sprintf("instrument %q would be one more than the %d by which a quantity can be read; use one of those", i.id, MaxQuantityInstruments)
 	}

@@ -4,6 +4,7 @@ import (
 	"cmp"
 	"math"
 	"slices"
+	"time"
 
 	"leadline.example/engine/posterior"
 )
@@ -298,13 +299,13 @@ func (j *joint) calibrate(r *route, d *InstrumentDeclaration, at Instant) {
 			own += c.CommonStandardUncertainty * c.CommonStandardUncertainty
 		}
 	}
-	own += c.drift() * lasting(c.ValidFrom, at)
 	if own > 0 || c.drift() > 0 || r.own > 0 {
 		p := posterior.Process{Variance: own, Diffusion: c.drift()}
 		if r.drift, r.drifts = 0, c.ValidFrom; at < c.ValidFrom { // it drifts from then on
 			r.drift, p.Diffusion = c.drift(), 0
 		}
 		j.renew(&r.own, source{kind: Bias, instrument: r.instrument}, p)
+		j.filter.Widen(r.own, c.drift()*lasting(c.ValidFrom, at))
 	}
 	if u := c.RelativeBiasStandardUncertainty; u > 0 || r.gain > 0 {
 		r.scale = 0
@@ -391,6 +392,16 @@ func (j *joint) bias(m *model, r *route) BiasBelief {
 		Instrument: m.instrument(r.instrument).ID, ValidFrom: c.ValidFrom, Reference: c.Reference,
 		Mean: c.Bias + mean, StandardDeviation: math.Sqrt(variance),
 	}
+}
+
+// slope returns what is believed of a trend's slope, by the time that was declared.
+func (j *joint) slope(m *model) (ok bool, mean, sd float64, per time.Duration) {
+	y := &m.declaration().Dynamics
+	if y.Form != DynamicsLinearTrend {
+		return false, 0, 0, 0
+	}
+	per = y.Slope.Per
+	return true, j.filter.Mean(1) * per.Seconds(), math.Sqrt(j.filter.Variance(1)) * per.Seconds(), per
 }
 
 // biases returns what is believed of the calibrations in force where the joint stands,

@@ -20,7 +20,7 @@ func (r *Renewal) check(receive Instant, skew float64) error {
 	case !r.Time.Valid():
 		return refuse(InvalidField, "time", "time lies outside 1678 to 2262; give a time within")
 	case r.Time.Sub(receive) > skew:
-		return refuse(InvalidField, "time", "time %v is after the receipt at %v; a renewal is recorded when it has been made", r.Time, receive)
+		return refuse(InvalidField, "time", "time %v is after the receipt at %v; a renewal is recorded when it has been made, leave time out for one made now", r.Time, receive)
 	case r.Prior.HasTime:
 		return refuse(InvalidField, "prior.time", "prior.time is given, but the prior of a renewal holds at its time; leave it out")
 	}

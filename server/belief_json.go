@@ -110,6 +110,7 @@ func appendBelief(b []byte, m *leadlinev1.Belief) []byte {
 		o.object("repeatability", func(o *jsonObject) { o.repeatability(x) })
 	}
 	o.instruments(m)
+	o.time("renewal_time", m.GetRenewalTime())
 	o.integer("reading_count", m.GetReadingCount())
 	o.time("last_reading_time", m.GetLastReadingTime())
 	if m.Verdict != nil {

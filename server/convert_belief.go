@@ -45,6 +45,9 @@ func beliefMessage(b *engine.Belief) *leadlinev1.Belief {
 	if b.HasLast {
 		m.LastReadingTime = timestamp(b.LastTime)
 	}
+	if b.HasRenewal {
+		m.RenewalTime = timestamp(b.RenewalTime)
+	}
 	return m
 }
 

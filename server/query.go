@@ -67,7 +67,7 @@ func parseParameter(field protoreflect.FieldDescriptor, text string) (remedy str
 	switch field.Message().FullName() {
 	case timeName:
 		if _, ok := parseTime([]byte(text)); !ok {
-			return "give an RFC 3339 time such as 2026-03-01T12:00:00Z, with + written as %2B"
+			return "give an RFC 3339 time with its zone, such as 2026-03-01T12:00:00Z, + written as %2B"
 		}
 	case durationName:
 		d := new(durationpb.Duration)

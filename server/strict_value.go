@@ -35,7 +35,7 @@ func (d *strictDecoder) messageValue(m protoreflect.Message) error {
 func (d *strictDecoder) time(text string, into *timestamppb.Timestamp) error {
 	t, ok := parseTime([]byte(text))
 	if !ok {
-		return d.invalid("is %q; give an RFC 3339 time such as \"2026-03-01T12:00:00Z\"", shorten(text))
+		return d.invalid("is %q; give an RFC 3339 time with its zone, such as \"2026-03-01T12:00:00Z\" or \"2026-03-01T13:00:00+01:00\"", shorten(text))
 	}
 	into.Seconds, into.Nanos = t.Unix(), int32(t.Nanosecond())
 	return nil

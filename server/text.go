@@ -82,6 +82,9 @@ func (p *sheet) belief(b *engine.Belief) {
 	p.prediction(b)
 	p.repeatability(b)
 	p.instruments(b)
+	if b.HasRenewal {
+		p.line("renewed", "%s; what was read before tells of instruments only", b.RenewalTime)
+	}
 	if b.HasLast {
 		p.line("readings", "%d, the last %s before (%s)", b.ReadingCount, elapsed(b.Time.Sub(b.LastTime)), b.LastTime)
 	} else {

@@ -21,6 +21,9 @@ func forecastText(f *engine.Forecast) string {
 		p.line("what", "%s", d.Description)
 	}
 	p.line("dynamics", "%s (declared)", dynamicsText(d.Dynamics, d.Unit))
+	if f.HasSlope {
+		p.line("slope", "%s in %s", estimateText(f.SlopeMean, f.SlopeStandardDeviation, d.Unit), elapsedOrShort(f.SlopePer))
+	}
 	p.line("tolerance", "%s", toleranceText(d.Tolerance, d.Unit))
 	p.line("horizon", "%s", elapsedOrShort(f.Horizon))
 	p.timeToBreach(f)

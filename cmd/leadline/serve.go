@@ -171,10 +171,10 @@ func fileSize(path string) int64 {
 func (svc *service) listen(s *settings) error {
 	var err error
 	if svc.http, err = net.Listen("tcp", s.http); err != nil {
-		return fmt.Errorf("listen on --http %s: %w", s.http, err)
+		return fmt.Errorf("listen on --http %s: %w; give another address if this one is in use", s.http, err)
 	}
 	if svc.grpc, err = net.Listen("tcp", s.grpc); err != nil {
-		return fmt.Errorf("listen on --grpc %s: %w", s.grpc, err)
+		return fmt.Errorf("listen on --grpc %s: %w; give another address if this one is in use", s.grpc, err)
 	}
 	return nil
 }

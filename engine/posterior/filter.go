@@ -289,6 +289,9 @@ func (f *Filter) Redraw(state int, p Process) {
 // Diffuse has a state after level and slope gain a variance in a second from now on.
 func (f *Filter) Diffuse(state int, variance float64) { f.moves[state].Diffusion = variance }
 
+// Widen has a state after level and slope gain a variance at once, by its movement.
+func (f *Filter) Widen(state int, variance float64) { f.evolve(state, 1, variance) }
+
 // forget leaves a state out of the covariance.
 func (f *Filter) forget(k int) {
 	f.split(k, 0, f.d[k])

@@ -266,8 +266,8 @@ type Belief struct {
 	// Slope as it is believed now, by the per that was declared; absent unless the
 	// dynamics are a linear_trend.
 	Slope *Slope `protobuf:"bytes,20,opt,name=slope,proto3" json:"slope,omitempty"`
-	// What is now believed of each instrument's bias, under the calibration that its last
-	// reading rests on.
+	// What is now believed of the bias of each instrument that has read the quantity, under
+	// the calibration in force at time.
 	Biases []*BiasBelief `protobuf:"bytes,21,rep,name=biases,proto3" json:"biases,omitempty"`
 	// What is now believed of the error of each reference that those calibrations share.
 	References []*ReferenceBelief `protobuf:"bytes,22,rep,name=references,proto3" json:"references,omitempty"`
@@ -278,6 +278,9 @@ type Belief struct {
 	ResolutionAsVariance bool `protobuf:"varint,24,opt,name=resolution_as_variance,json=resolutionAsVariance,proto3" json:"resolution_as_variance,omitempty"`
 	// How many of the readings are flagged; absent if none is.
 	Flagged *Belief_Flagged `protobuf:"bytes,25,opt,name=flagged,proto3" json:"flagged,omitempty"`
+	// Time of the latest renewal of the part that the belief takes in; absent if there is
+	// none. Level and slope owe nothing to readings before it.
+	RenewalTime *timestamppb.Timestamp `protobuf:"bytes,26,opt,name=renewal_time,json=renewalTime,proto3" json:"renewal_time,omitempty"`
 	// How many applied readings the belief rests on.
 	ReadingCount uint32 `protobuf:"varint,13,opt,name=reading_count,json=readingCount,proto3" json:"reading_count,omitempty"`
 	// Time of the last of them; absent if there is none.
@@ -450,6 +453,13 @@ func (x *Belief) GetResolutionAsVariance() bool {
 func (x *Belief) GetFlagged() *Belief_Flagged {
 	if x != nil {
 		return x.Flagged
+	}
+	return nil
+}
+
+func (x *Belief) GetRenewalTime() *timestamppb.Timestamp {
+	if x != nil {
+		return x.RenewalTime
 	}
 	return nil
 }
@@ -2261,7 +2271,7 @@ var File_leadline_v1_belief_proto protoreflect.FileDescriptor
 
 const file_leadline_v1_belief_proto_rawDesc = "" +
 	"\n" +
-	"\x18leadline/v1/belief.proto\x12\vleadline.v1\x1a\x1cgoogle/api/annotations.proto\x1a\x1fgoogle/api/field_behavior.proto\x1a\x1egoogle/protobuf/duration.proto\x1a\x1fgoogle/protobuf/timestamp.proto\x1a\x1aleadline/v1/quantity.proto\"\xcc\f\n" +
+	"\x18leadline/v1/belief.proto\x12\vleadline.v1\x1a\x1cgoogle/api/annotations.proto\x1a\x1fgoogle/api/field_behavior.proto\x1a\x1egoogle/protobuf/duration.proto\x1a\x1fgoogle/protobuf/timestamp.proto\x1a\x1aleadline/v1/quantity.proto\"\x8b\r\n" +
 	"\x06Belief\x12\x1a\n" +
 	"\bquantity\x18\x01 \x01(\tR\bquantity\x12\x12\n" +
 	"\x04unit\x18\x02 \x01(\tR\x04unit\x12.\n" +
@@ -2287,7 +2297,8 @@ const file_leadline_v1_belief_proto_rawDesc = "" +
 	"linearised\x18\x17 \x01(\bR\n" +
 	"linearised\x124\n" +
 	"\x16resolution_as_variance\x18\x18 \x01(\bR\x14resolutionAsVariance\x125\n" +
-	"\aflagged\x18\x19 \x01(\v2\x1b.leadline.v1.Belief.FlaggedR\aflagged\x12#\n" +
+	"\aflagged\x18\x19 \x01(\v2\x1b.leadline.v1.Belief.FlaggedR\aflagged\x12=\n" +
+	"\frenewal_time\x18\x1a \x01(\v2\x1a.google.protobuf.TimestampR\vrenewalTime\x12#\n" +
 	"\rreading_count\x18\r \x01(\rR\freadingCount\x12F\n" +
 	"\x11last_reading_time\x18\x0e \x01(\v2\x1a.google.protobuf.TimestampR\x0flastReadingTime\x12:\n" +
 	"\averdict\x18\x0f \x01(\x0e2\x1b.leadline.v1.Belief.VerdictH\x03R\averdict\x88\x01\x01\x12\x1a\n" +
@@ -2549,48 +2560,49 @@ var file_leadline_v1_belief_proto_depIdxs = []int32{
 	8,  // 8: leadline.v1.Belief.biases:type_name -> leadline.v1.BiasBelief
 	9,  // 9: leadline.v1.Belief.references:type_name -> leadline.v1.ReferenceBelief
 	19, // 10: leadline.v1.Belief.flagged:type_name -> leadline.v1.Belief.Flagged
-	27, // 11: leadline.v1.Belief.last_reading_time:type_name -> google.protobuf.Timestamp
-	0,  // 12: leadline.v1.Belief.verdict:type_name -> leadline.v1.Belief.Verdict
-	4,  // 13: leadline.v1.Predictive.interval:type_name -> leadline.v1.Interval
-	22, // 14: leadline.v1.Predictive.outside:type_name -> leadline.v1.Predictive.Outside
-	1,  // 15: leadline.v1.Distribution.form:type_name -> leadline.v1.Distribution.Form
-	4,  // 16: leadline.v1.RepeatabilityBelief.interval:type_name -> leadline.v1.Interval
-	27, // 17: leadline.v1.BiasBelief.valid_from:type_name -> google.protobuf.Timestamp
-	27, // 18: leadline.v1.Forecast.time:type_name -> google.protobuf.Timestamp
-	29, // 19: leadline.v1.Forecast.horizon:type_name -> google.protobuf.Duration
-	23, // 20: leadline.v1.Forecast.steps:type_name -> leadline.v1.Forecast.Step
-	25, // 21: leadline.v1.Forecast.time_to_breach:type_name -> leadline.v1.Forecast.TimeToBreach
-	27, // 22: leadline.v1.Budget.time:type_name -> google.protobuf.Timestamp
-	26, // 23: leadline.v1.Budget.parts:type_name -> leadline.v1.Budget.Part
-	27, // 24: leadline.v1.GetBeliefRequest.time:type_name -> google.protobuf.Timestamp
-	29, // 25: leadline.v1.ForecastBeliefRequest.horizon:type_name -> google.protobuf.Duration
-	27, // 26: leadline.v1.GetBudgetRequest.time:type_name -> google.protobuf.Timestamp
-	27, // 27: leadline.v1.ListBeliefsRequest.time:type_name -> google.protobuf.Timestamp
-	3,  // 28: leadline.v1.ListBeliefsResponse.beliefs:type_name -> leadline.v1.Belief
-	3,  // 29: leadline.v1.WatchBeliefsResponse.belief:type_name -> leadline.v1.Belief
-	27, // 30: leadline.v1.Forecast.Step.time:type_name -> google.protobuf.Timestamp
-	4,  // 31: leadline.v1.Forecast.Step.interval:type_name -> leadline.v1.Interval
-	20, // 32: leadline.v1.Forecast.Step.breach:type_name -> leadline.v1.Belief.Breach
-	24, // 33: leadline.v1.Forecast.Step.crossed:type_name -> leadline.v1.Forecast.Crossed
-	29, // 34: leadline.v1.Forecast.TimeToBreach.lower_decile:type_name -> google.protobuf.Duration
-	29, // 35: leadline.v1.Forecast.TimeToBreach.median:type_name -> google.protobuf.Duration
-	29, // 36: leadline.v1.Forecast.TimeToBreach.upper_decile:type_name -> google.protobuf.Duration
-	2,  // 37: leadline.v1.Budget.Part.source:type_name -> leadline.v1.Budget.Source
-	12, // 38: leadline.v1.BeliefService.GetBelief:input_type -> leadline.v1.GetBeliefRequest
-	15, // 39: leadline.v1.BeliefService.ListBeliefs:input_type -> leadline.v1.ListBeliefsRequest
-	17, // 40: leadline.v1.BeliefService.WatchBeliefs:input_type -> leadline.v1.WatchBeliefsRequest
-	13, // 41: leadline.v1.BeliefService.ForecastBelief:input_type -> leadline.v1.ForecastBeliefRequest
-	14, // 42: leadline.v1.BeliefService.GetBudget:input_type -> leadline.v1.GetBudgetRequest
-	3,  // 43: leadline.v1.BeliefService.GetBelief:output_type -> leadline.v1.Belief
-	16, // 44: leadline.v1.BeliefService.ListBeliefs:output_type -> leadline.v1.ListBeliefsResponse
-	18, // 45: leadline.v1.BeliefService.WatchBeliefs:output_type -> leadline.v1.WatchBeliefsResponse
-	10, // 46: leadline.v1.BeliefService.ForecastBelief:output_type -> leadline.v1.Forecast
-	11, // 47: leadline.v1.BeliefService.GetBudget:output_type -> leadline.v1.Budget
-	43, // [43:48] is the sub-list for method output_type
-	38, // [38:43] is the sub-list for method input_type
-	38, // [38:38] is the sub-list for extension type_name
-	38, // [38:38] is the sub-list for extension extendee
-	0,  // [0:38] is the sub-list for field type_name
+	27, // 11: leadline.v1.Belief.renewal_time:type_name -> google.protobuf.Timestamp
+	27, // 12: leadline.v1.Belief.last_reading_time:type_name -> google.protobuf.Timestamp
+	0,  // 13: leadline.v1.Belief.verdict:type_name -> leadline.v1.Belief.Verdict
+	4,  // 14: leadline.v1.Predictive.interval:type_name -> leadline.v1.Interval
+	22, // 15: leadline.v1.Predictive.outside:type_name -> leadline.v1.Predictive.Outside
+	1,  // 16: leadline.v1.Distribution.form:type_name -> leadline.v1.Distribution.Form
+	4,  // 17: leadline.v1.RepeatabilityBelief.interval:type_name -> leadline.v1.Interval
+	27, // 18: leadline.v1.BiasBelief.valid_from:type_name -> google.protobuf.Timestamp
+	27, // 19: leadline.v1.Forecast.time:type_name -> google.protobuf.Timestamp
+	29, // 20: leadline.v1.Forecast.horizon:type_name -> google.protobuf.Duration
+	23, // 21: leadline.v1.Forecast.steps:type_name -> leadline.v1.Forecast.Step
+	25, // 22: leadline.v1.Forecast.time_to_breach:type_name -> leadline.v1.Forecast.TimeToBreach
+	27, // 23: leadline.v1.Budget.time:type_name -> google.protobuf.Timestamp
+	26, // 24: leadline.v1.Budget.parts:type_name -> leadline.v1.Budget.Part
+	27, // 25: leadline.v1.GetBeliefRequest.time:type_name -> google.protobuf.Timestamp
+	29, // 26: leadline.v1.ForecastBeliefRequest.horizon:type_name -> google.protobuf.Duration
+	27, // 27: leadline.v1.GetBudgetRequest.time:type_name -> google.protobuf.Timestamp
+	27, // 28: leadline.v1.ListBeliefsRequest.time:type_name -> google.protobuf.Timestamp
+	3,  // 29: leadline.v1.ListBeliefsResponse.beliefs:type_name -> leadline.v1.Belief
+	3,  // 30: leadline.v1.WatchBeliefsResponse.belief:type_name -> leadline.v1.Belief
+	27, // 31: leadline.v1.Forecast.Step.time:type_name -> google.protobuf.Timestamp
+	4,  // 32: leadline.v1.Forecast.Step.interval:type_name -> leadline.v1.Interval
+	20, // 33: leadline.v1.Forecast.Step.breach:type_name -> leadline.v1.Belief.Breach
+	24, // 34: leadline.v1.Forecast.Step.crossed:type_name -> leadline.v1.Forecast.Crossed
+	29, // 35: leadline.v1.Forecast.TimeToBreach.lower_decile:type_name -> google.protobuf.Duration
+	29, // 36: leadline.v1.Forecast.TimeToBreach.median:type_name -> google.protobuf.Duration
+	29, // 37: leadline.v1.Forecast.TimeToBreach.upper_decile:type_name -> google.protobuf.Duration
+	2,  // 38: leadline.v1.Budget.Part.source:type_name -> leadline.v1.Budget.Source
+	12, // 39: leadline.v1.BeliefService.GetBelief:input_type -> leadline.v1.GetBeliefRequest
+	15, // 40: leadline.v1.BeliefService.ListBeliefs:input_type -> leadline.v1.ListBeliefsRequest
+	17, // 41: leadline.v1.BeliefService.WatchBeliefs:input_type -> leadline.v1.WatchBeliefsRequest
+	13, // 42: leadline.v1.BeliefService.ForecastBelief:input_type -> leadline.v1.ForecastBeliefRequest
+	14, // 43: leadline.v1.BeliefService.GetBudget:input_type -> leadline.v1.GetBudgetRequest
+	3,  // 44: leadline.v1.BeliefService.GetBelief:output_type -> leadline.v1.Belief
+	16, // 45: leadline.v1.BeliefService.ListBeliefs:output_type -> leadline.v1.ListBeliefsResponse
+	18, // 46: leadline.v1.BeliefService.WatchBeliefs:output_type -> leadline.v1.WatchBeliefsResponse
+	10, // 47: leadline.v1.BeliefService.ForecastBelief:output_type -> leadline.v1.Forecast
+	11, // 48: leadline.v1.BeliefService.GetBudget:output_type -> leadline.v1.Budget
+	44, // [44:49] is the sub-list for method output_type
+	39, // [39:44] is the sub-list for method input_type
+	39, // [39:39] is the sub-list for extension type_name
+	39, // [39:39] is the sub-list for extension extendee
+	0,  // [0:39] is the sub-list for field type_name
 }
 
 func init() { file_leadline_v1_belief_proto_init() }
