@@ -164,10 +164,13 @@ func TestInstrumentInUseChangesWithinBounds(t *testing.T) {
 	if was, is := before.Level.Location(), after.Level.Location(); was-is < 0.3 {
 		t.Errorf("with a bias of 2 in place of 1 the level went from %v to %v", was, is)
 	}
+	if last := engine.Position(r.keeper.Stats().Position); after.Position != last {
+		t.Errorf("the belief is of ledger position %d, want that of the instrument's record, %d", after.Position, last)
+	}
 	for _, clean := range []bool{true, false} {
 		r.restart(clean)
-		if again := r.settled(gapID, engine.BeliefQuery{Now: start}); again.Level != after.Level {
-			t.Errorf("after a restart the level is %+v, want %+v", again.Level, after.Level)
+		if again := r.settled(gapID, engine.BeliefQuery{Now: start}); again.Level != after.Level || again.Position != after.Position {
+			t.Errorf("after a restart the level is %+v at %d, want %+v at %d", again.Level, again.Position, after.Level, after.Position)
 		}
 	}
 	if v, err := r.keeper.Instrument("gauge"); err != nil || v.Quantities != 2 || v.Instrument.Revision != 3 {
