@@ -87,8 +87,10 @@ func (k *Keeper) rebase(t *Track) {
 		t.rest(m)
 	case t.job == nil && t.basis.extends(m):
 		t.rest(m)
-	case t.job != nil && t.basis.same(m) && t.job.model.same(m):
-		t.rest(m)
+	case t.job != nil && t.job.model.same(m): // which goes on; finishJob takes the newest text and tolerance
+		if t.basis.same(m) {
+			t.rest(m)
+		}
 	default:
 		k.settle(t)
 		n := len(t.rows)

@@ -66,6 +66,9 @@ type Budget struct {
 	Undetermined []string // variance and parts, where nothing is known yet
 }
 
+// smallHistory is how many readings a budget may fold without waiting for others.
+const smallHistory = 2_000
+
 // Budget splits the variance of the level. It folds the quantity's readings
 // anew, in the caller's goroutine. A quantity with a learned repeatability has
 // none.
@@ -93,11 +96,13 @@ func (k *Keeper) Budget(ctx context.Context, id QuantityID, q BudgetQuery) (Budg
 	if v.Rebuilding {
 		b.Position = v.foldedTo
 	}
-	select { // a long history takes a core for seconds: one at a time
-	case k.budgeting <- struct{}{}:
-		defer func() { <-k.budgeting }()
-	case <-ctx.Done():
-		return Budget{}, ctx.Err()
+	if v.applied > smallHistory { // it takes a core for seconds: one at a time
+		select {
+		case k.budgeting <- struct{}{}:
+			defer func() { <-k.budgeting }()
+		case <-ctx.Done():
+			return Budget{}, ctx.Err()
+		}
 	}
 	j, err := k.accounted(ctx, v, m, at)
 	if err != nil {

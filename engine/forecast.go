@@ -69,7 +69,7 @@ type Forecast struct {
 
 // Forecast moves a belief on through the steps of a horizon and says when a
 // limit of the tolerance is crossed.
-func (k *Keeper) Forecast(_ context.Context, id QuantityID, q ForecastQuery) (Forecast, error) {
+func (k *Keeper) Forecast(ctx context.Context, id QuantityID, q ForecastQuery) (Forecast, error) {
 	t, ok := k.find(id)
 	if !ok {
 		return Forecast{}, notDeclared("quantity", id)
@@ -96,6 +96,14 @@ func (k *Keeper) Forecast(_ context.Context, id QuantityID, q ForecastQuery) (Fo
 	if f.Time.Sub(MaxInstant) > -float64(f.Horizon) {
 		return Forecast{}, refuse(InvalidField, "horizon", "horizon %v ends after 2262; give a shorter one", f.Horizon)
 	}
+	if v.basis.motion.Form == posterior.MotionReverting || v.basis.motion.Wander > 0 { // which take a core for long: one at a time
+		select {
+		case k.foretelling <- struct{}{}:
+			defer func() { <-k.foretelling }()
+		case <-ctx.Done():
+			return Forecast{}, ctx.Err()
+		}
+	}
 	return f, f.look(v, d, q.Steps)
 }
 
@@ -117,10 +125,11 @@ func (f *Forecast) look(v *View, d *Declaration, steps int) error {
 	if err != nil {
 		return err
 	}
+	basis := v.basis.from(f.Time, v.HasLast)
 	for i := 1; i <= steps; i++ {
 		after := time.Duration(float64(f.Horizon) * float64(i) / float64(steps))
 		step := ForecastStep{Time: f.Time + Instant(after)}
-		step.Level = v.fold.level(v.basis, step.Time)
+		step.Level = v.fold.level(basis, step.Time)
 		if step.Level.Form() != posterior.FormNone {
 			step.Lower, step.Upper = step.Level.Interval(f.Coverage)
 			if step.HasBreach = d.Tolerance.Declared(); step.HasBreach {

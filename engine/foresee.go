@@ -96,10 +96,10 @@ func (k *Keeper) foreseeLoop() {
 				return
 			default:
 			}
-			r.track.asked.Store(false)
 			if err := r.track.foresee(r.at); err != nil {
 				k.options.OnFault(err)
 			}
+			r.track.asked.Store(false)
 		}
 	}
 }

@@ -86,7 +86,7 @@ func (t *instrumentTrack) view() InstrumentView {
 	s := t.shown.Load()
 	v := InstrumentView{Instrument: *s.instrument, Quantities: len(s.users)}
 	for _, user := range s.users {
-		if user.View().Rebuilding {
+		if u := user.View(); u != nil && u.Rebuilding { // nil: declared in the group under way
 			v.Rebuilding++
 		}
 	}
@@ -248,8 +248,8 @@ func (t *instrumentTrack) checkRemoved(d *InstrumentDeclaration) error {
 		if i+1 < len(was) {
 			until = was[i+1].ValidFrom
 		}
-		kept := len(d.Calibrations) >= len(was) || // moved, as where its time was mistyped
-			slices.ContainsFunc(d.Calibrations, func(c Calibration) bool { return c.ValidFrom == was[i].ValidFrom })
+		kept := validFrom(d.Calibrations, was[i].ValidFrom) || // or moved, as where its time was mistyped
+			len(d.Calibrations) >= len(was) && !validFrom(was, d.Calibrations[i].ValidFrom)
 		if !kept && from <= t.decidedSpan.last && t.decidedSpan.first < until {
 			return refuse(InvalidField, "calibrations", "calibrations no longer has the one with valid_from %v, on which readings from %v to %v may rest; keep it, and correct what is wrong in it, also its time", was[i].ValidFrom, max(from, t.decidedSpan.first), min(until, t.decidedSpan.last))
 		}
@@ -371,4 +371,9 @@ func (a *rules) noiseOf(i *instrumentTrack) float64 {
 		return math.NaN()
 	}
 	return a.scale
+}
+
+// validFrom tells whether one of the calibrations begins at an instant.
+func validFrom(all []Calibration, at Instant) bool {
+	return slices.ContainsFunc(all, func(c Calibration) bool { return c.ValidFrom == at })
 }

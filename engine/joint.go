@@ -41,6 +41,7 @@ type route struct {
 	reference   int
 	gain        int
 	scale       float64 // of the gain: the level it is relative to; 0 before it is met
+	restated    float64 // the level for which what was known of the gain's error was stated
 	drift       float64 // variance that the bias is to gain in a second ...
 	drifts      Instant // ... from then on; 0 once it does
 	correlated  int
@@ -98,7 +99,7 @@ func (j *joint) move(m *model, to Instant) {
 		j.filter.Renew(m.renewalPrior(r))
 		j.renewed++
 		for i := range j.routes {
-			j.routes[i].scale = 0 // the level that a gain is relative to is another
+			j.routes[i].scale, j.routes[i].restated = 0, 0 // the level that a gain is relative to is another
 		}
 	}
 	j.advance(to)
@@ -111,14 +112,22 @@ func (j *joint) renewsBy(m *model, to Instant) bool {
 
 // advance goes on to an instant, through the beginnings of drifts up to then.
 func (j *joint) advance(to Instant) {
-	for i := range j.routes {
-		if r := &j.routes[i]; r.drift > 0 && r.drifts <= to {
-			j.step(r.drifts)
-			j.filter.Diffuse(r.own, r.drift)
-			r.drift = 0
-		}
+	for r := j.nextDrift(to); r != nil; r = j.nextDrift(to) {
+		j.step(r.drifts)
+		j.filter.Diffuse(r.own, r.drift)
+		r.drift = 0
 	}
 	j.step(to)
+}
+
+// nextDrift returns the route whose drift begins first, up to an instant; nil for none.
+func (j *joint) nextDrift(to Instant) (next *route) {
+	for i := range j.routes {
+		if r := &j.routes[i]; r.drift > 0 && r.drifts <= to && (next == nil || r.drifts < next.drifts) {
+			next = r
+		}
+	}
+	return next
 }
 
 func (j *joint) step(to Instant) {
@@ -153,106 +162,20 @@ func (j *joint) add(m *model, e *Row) {
 		level, variance = j.filter.Mean(0), j.filter.Variance(0)
 	}
 	y.noise.Label = int(e.Instrument)
-	loose := r.gain > 0 && j.loose(m, r, variance)
+	first := r.gain > 0 && r.scale == 0
+	if !first && r.gain > 0 && m.motion.Form == posterior.MotionConstant {
+		j.restate(d, r, math.Sqrt(level*level+variance))
+		level, variance = j.filter.Mean(0), j.filter.Variance(0)
+	}
 	y.about(m, r, level, variance)
-	if loose && !j.filter.Vague() {
+	if first && !j.filter.Vague() {
 		j.refine(e, r, &y, offset)
-		y.noise.Gain, y.noise.Scale = d.Calibrations[r.calibration].RelativeBiasStandardUncertainty, r.scale
+		y.noise.Gain, y.noise.Scale = math.Sqrt(j.filter.Variance(r.gain)), r.scale
+	}
+	if first {
+		r.restated = math.Abs(r.scale)
 	}
 	j.filter.UpdateFrom(e.Value, offset, 1, y.terms, y.noise)
-}
-
-// loose tells whether the level that a gain is relative to may still be changed: until
-// the level is known to one percent, or readings have tied the two together.
-func (j *joint) loose(m *model, r *route, variance float64) bool {
-	if r.scale == 0 || m.motion.Form != posterior.MotionConstant {
-		return r.scale == 0
-	}
-	both := j.filter.Covariance(0, r.gain)
-	return variance > 1e-4*r.scale*r.scale && both*both < 1e-2*variance*j.filter.Variance(r.gain)
-}
-
-// refine lets a gain be relative to the level as the reading at hand leaves it, weighed
-// as it deserves: what was known before may be far off. Two rounds settle it.
-func (j *joint) refine(e *Row, r *route, y *indication, offset float64) {
-	for range 2 {
-		trial := j.filter.Clone()
-		trial.UpdateFrom(e.Value, offset, 1, y.terms, y.noise)
-		r.relate(trial.Mean(0), trial.Variance(0))
-		y.terms[len(y.terms)-1].Coefficient = r.scale
-	}
-}
-
-// relate lets the gain be relative to the root mean square of a level.
-func (r *route) relate(level, variance float64) {
-	r.scale = math.Copysign(math.Sqrt(level*level+variance), level)
-}
-
-// indication is how a reading of an instrument rests on the states.
-type indication struct {
-	d        *InstrumentDeclaration
-	s        float64 // of the white part, but for what is relative or displayed
-	relative bool    // whether the instrument's relative part counts
-	terms    []posterior.Term
-	noise    posterior.White
-}
-
-// white finds the repeatability that applies: the reading's own, else the
-// instrument's, else the quantity's.
-func (y *indication) white(m *model, e *Row) {
-	switch r := &y.d.Repeatability; {
-	case e.HasUncertainty:
-		y.s = e.Uncertainty
-	case r.StandardDeviation > 0:
-		y.s, y.relative = r.StandardDeviation, true
-	default:
-		y.s = m.declaration().Repeatability.StandardDeviation
-	}
-}
-
-// shared adds the states that r's instrument shares between readings, the gain last,
-// and returns the declared bias.
-func (y *indication) shared(r *route) (offset float64) {
-	for _, state := range [...]int{r.own, r.correlated, r.shared} {
-		if state > 0 {
-			y.terms = append(y.terms, posterior.Term{State: state, Coefficient: 1})
-		}
-	}
-	if r.calibration < 0 {
-		return 0
-	}
-	c := &y.d.Calibrations[r.calibration]
-	if r.reference > 0 {
-		y.terms = append(y.terms, posterior.Term{State: r.reference, Coefficient: c.CommonStandardUncertainty})
-	}
-	if r.gain > 0 {
-		y.terms = append(y.terms, posterior.Term{State: r.gain})
-	}
-	return c.Bias
-}
-
-// about linearises what is relative to the level about its prediction: never
-// about the reading, whose own error would then weigh it.
-//
-// A level times a gain's error g counts as an error of its own, g times the root mean
-// square of the level as predicted: for a level that stays, as it was when the gain
-// was first met, see loose. The obvious way, the extended Kalman filter, linearises the product anew
-// at each reading, and takes the differences between its points of
-// linearisation for knowledge of g. The white noise has the mean of its variance
-// over the level.
-func (y *indication) about(m *model, r *route, level, variance float64) {
-	y.noise.Variance = y.s*y.s + y.d.Resolution*y.d.Resolution/12
-	if u := y.d.Repeatability.Relative; y.relative && u > 0 {
-		y.noise.Variance += u * u * (level*level + variance)
-		y.noise.Relative = u
-	}
-	if r.gain == 0 {
-		return
-	}
-	if r.scale == 0 || m.motion.Form != posterior.MotionConstant {
-		r.relate(level, variance)
-	}
-	y.terms[len(y.terms)-1].Coefficient = r.scale
 }
 
 // route returns how the errors of a reading's instrument enter it, after adding

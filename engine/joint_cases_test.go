@@ -4,6 +4,7 @@ import (
 	"context"
 	"fmt"
 	"math"
+	"sync"
 	"testing"
 	"time"
 
@@ -31,28 +32,44 @@ func (r *rig) sd(at engine.Instant) float64 {
 	return r.settled(gapID, engine.BeliefQuery{Now: at}).Level.Scale()
 }
 
-// A gain of 1 % leaves 1 % of the level, of whatever was believed before it was well
+// A gain leaves its part of the level, of whatever was believed before it was well
 // known, and of the next part.
 func TestGainIsRelativeToTheLevelAsItIs(t *testing.T) {
-	gain := sharpGauge(func(d *engine.InstrumentDeclaration) { d.Calibrations[0].RelativeBiasStandardUncertainty = 0.01 })
+	gain := func(u float64) engine.InstrumentDeclaration {
+		return sharpGauge(func(d *engine.InstrumentDeclaration) { d.Calibrations[0].RelativeBiasStandardUncertainty = u })
+	}
 	wide := with(gap(), func(d *engine.Declaration) { d.Prior.StandardDeviation = 50 })
 	for name, d := range map[string]engine.Declaration{"vague": vagueGap(), "wide prior": wide} {
-		r := newRig(t, engine.Options{})
-		r.declare(gapID, d)
-		r.declareInstrument("gauge", gain)
-		poor := byGauge(start, 150)
-		poor.HasUncertainty, poor.RandomStandardUncertainty = true, 50
-		r.post(start, poor)
-		for i := range 100 {
-			r.post(seconds(200), byGauge(seconds(float64(i+1)), 100))
-		}
-		if sd := r.sd(seconds(200)); math.Abs(sd-1) > 0.03 {
-			t.Errorf("%s: after a poor reading of 150 and a hundred of 100 the sd is %v, want 1", name, sd)
+		for _, u := range []float64{0.01, 0.03, 0.1} {
+			r := newRig(t, engine.Options{})
+			r.declare(gapID, d)
+			r.declareInstrument("gauge", gain(u))
+			poor := byGauge(start, 150)
+			poor.HasUncertainty, poor.RandomStandardUncertainty = true, 50
+			r.post(start, poor)
+			for i := range 100 {
+				r.post(seconds(200), byGauge(seconds(float64(i+1)), 100))
+			}
+			sd := r.sd(seconds(200))
+			if math.Abs(sd-100*u) > 3*u {
+				t.Errorf("%s: after a poor reading of 150 and a hundred of 100 the sd is %v, want %v", name, sd, 100*u)
+			}
+			budget, err := r.keeper.Budget(context.Background(), gapID, engine.BudgetQuery{Now: seconds(200)})
+			if err != nil {
+				t.Fatal(err)
+			}
+			sum := 0.0
+			for _, p := range budget.Parts {
+				sum += p.Variance
+			}
+			if math.Abs(sum-sd*sd) > 1e-8*sd*sd {
+				t.Errorf("%s: the budget's parts sum to %v, want %v", name, sum, sd*sd)
+			}
 		}
 	}
 	r := newRig(t, engine.Options{})
 	r.declare(gapID, wide)
-	r.declareInstrument("gauge", gain)
+	r.declareInstrument("gauge", gain(0.01))
 	r.post(seconds(100), byGauge(seconds(1), 100))
 	next := with(renewal(), func(r *engine.Renewal) { r.Time, r.Prior.Mean, r.Prior.StandardDeviation = seconds(50), 1000, 500 })
 	if _, err := r.keeper.Renew(context.Background(), gapID, next, seconds(60)); err != nil {
@@ -215,4 +232,108 @@ func TestRenewalIDIsUnused(t *testing.T) {
 	if all, err := r.keeper.Renewals(gapID); err != nil || len(all) != 2 {
 		t.Errorf("got %+v (%v), want two", all, err)
 	}
+}
+
+// A gain that readings have taught is still known after a renewal.
+func TestLearnedGainOutlivesARenewal(t *testing.T) {
+	r := newRig(t, engine.Options{})
+	r.declare(gapID, with(gap(), func(d *engine.Declaration) { d.Prior.StandardDeviation = 0.001 }))
+	r.declareInstrument("gauge", sharpGauge(func(d *engine.InstrumentDeclaration) { d.Calibrations[0].RelativeBiasStandardUncertainty = 0.1 }))
+	for i := range 100 {
+		r.post(seconds(200), byGauge(seconds(float64(i+1)), 105))
+	}
+	next := with(renewal(), func(r *engine.Renewal) { r.Time, r.Prior.Mean, r.Prior.StandardDeviation = seconds(150), 200, 50 })
+	if _, err := r.keeper.Renew(context.Background(), gapID, next, seconds(200)); err != nil {
+		t.Fatal(err)
+	}
+	r.post(seconds(200), byGauge(seconds(160), 210))
+	b := r.settled(gapID, engine.BeliefQuery{Now: seconds(200)})
+	if mean, sd := b.Level.Location(), b.Level.Scale(); math.Abs(mean-200) > 0.1 || math.Abs(sd-0.1) > 0.01 {
+		t.Errorf("after a reading of 210 with 5 %% too much the next part is %v, u %v; want 200, 0.1", mean, sd)
+	}
+}
+
+// Drifts begin each at its own time, whichever instrument was met first.
+func TestDriftsBeginInAnyOrder(t *testing.T) {
+	var sds []float64
+	for _, first := range []engine.InstrumentID{"gauge", "other"} {
+		r := newRig(t, engine.Options{})
+		r.declare(gapID, with(vagueGap(), func(d *engine.Declaration) {
+			d.Dynamics = engine.Dynamics{Form: engine.DynamicsRandomWalk, StandardDeviation: 1000, Per: time.Second}
+		}))
+		for id, from := range map[engine.InstrumentID]float64{"gauge": 2000, "other": 1000} {
+			r.declareInstrument(id, sharpGauge(func(d *engine.InstrumentDeclaration) {
+				d.Calibrations[0] = engine.Calibration{ValidFrom: seconds(from), BiasStandardUncertainty: 0.1, DriftStandardDeviation: 1, DriftPer: 100 * time.Second}
+			}))
+		}
+		for i, id := range []engine.InstrumentID{first, "gauge", "other"} {
+			early := byGauge(seconds(float64(i)), 100)
+			early.Instrument = id
+			r.post(seconds(4000), early)
+		}
+		b := r.belief(gapID, engine.BeliefQuery{HasTime: true, Time: seconds(3000)})
+		sds = append(sds, b.Biases[1].StandardDeviation)
+	}
+	if want := math.Sqrt(0.01 + 20); math.Abs(sds[0]-want) > 1e-3 || math.Abs(sds[1]-want) > 1e-3 {
+		t.Errorf("2000 s after its calibration the bias is known to %v, want %v", sds, want)
+	}
+}
+
+// Before any reading a forecast moves the prior on from now: a walk has crossed
+// a limit with twice the probability of being beyond it (reflection).
+func TestForecastBeforeAnyReading(t *testing.T) {
+	r := newRig(t, engine.Options{})
+	r.declare(gapID, engine.Declaration{
+		Unit: "mm", Prior: engine.Prior{Form: engine.PriorNormal, Mean: 100, StandardDeviation: 1e-6},
+		Dynamics:  engine.Dynamics{Form: engine.DynamicsRandomWalk, StandardDeviation: 10, Per: time.Minute},
+		Tolerance: engine.Tolerance{HasUpper: true, Upper: 120},
+	})
+	f := r.forecast(gapID, engine.ForecastQuery{Now: start, Horizon: 4 * time.Minute, Steps: 4})
+	for i, s := range f.Steps {
+		if sd := 10 * math.Sqrt(float64(i+1)); math.Abs(s.Level.Scale()-sd) > 1e-6 || math.Abs(s.Crossed.Either-2*s.Breach.Either) > 1e-6 {
+			t.Errorf("after %d min: sd %v, breach %v, crossed %v", i+1, s.Level.Scale(), s.Breach.Either, s.Crossed.Either)
+		}
+	}
+}
+
+// A new calibration in the list doesn't hide that an old one is gone.
+func TestCalibrationIsNotReplacedByAnother(t *testing.T) {
+	r := newRig(t, engine.Options{})
+	r.declare(gapID, gap())
+	r.declareInstrument("gauge", gauge())
+	r.post(seconds(100), byGauge(seconds(1), 101))
+	d := gauge()
+	d.Calibrations = append(d.Calibrations[1:], engine.Calibration{ValidFrom: seconds(5000), BiasStandardUncertainty: 1})
+	if _, _, err := r.keeper.DeclareInstrument(context.Background(), "gauge", d, engine.Condition{}, start); err == nil {
+		t.Error("the calibration that a reading rests on could be taken away")
+	}
+}
+
+// An instrument can be asked for while a quantity that it is the first to read is new.
+func TestInstrumentOfANewQuantity(t *testing.T) {
+	r := newRig(t, engine.Options{})
+	r.declareInstrument("gauge", gauge())
+	var asking sync.WaitGroup
+	done := make(chan struct{})
+	asking.Go(func() {
+		for {
+			select {
+			case <-done:
+				return
+			default:
+				r.keeper.Instrument("gauge")
+			}
+		}
+	})
+	for i := range 300 {
+		id := engine.QuantityID(fmt.Sprint("q", i))
+		var both sync.WaitGroup
+		both.Go(func() { r.declare(id, gap()) })
+		reading := byGauge(start, 100)
+		reading.Quantity = id
+		r.post(start, reading, reading)
+		both.Wait()
+	}
+	close(done)
+	asking.Wait()
 }

@@ -86,7 +86,7 @@ func (r *route) append(b []byte) []byte {
 	for _, state := range r.indexes() {
 		b = binary.AppendUvarint(b, uint64(*state))
 	}
-	for _, x := range [...]float64{r.scale, r.drift} {
+	for _, x := range [...]float64{r.scale, r.restated, r.drift} {
 		b = binary.BigEndian.AppendUint64(b, math.Float64bits(x))
 	}
 	b = binary.AppendVarint(b, int64(r.drifts))
@@ -144,7 +144,7 @@ func (r *stateReader) route() route {
 	for _, state := range e.indexes() {
 		*state = int(r.uvarint())
 	}
-	e.scale, e.drift = r.float(), r.float()
+	e.scale, e.restated, e.drift = r.float(), r.float(), r.float()
 	e.drifts = Instant(r.varint())
 	e.occasion = binary.BigEndian.Uint64(r.take(8))
 	return e

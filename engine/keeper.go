@@ -113,13 +113,14 @@ type Keeper struct {
 	counts
 
 	// Between the keeper's goroutine, the committer, the rebuilder and the forecaster.
-	commits   chan *Group
-	committed chan error
-	jobQueue  chan *job
-	jobDone   chan *job
-	aheads    *aheadQueue   // to the forecaster
-	budgeting chan struct{} // holds the one budget under way
-	workers   sync.WaitGroup
+	commits     chan *Group
+	committed   chan error
+	jobQueue    chan *job
+	jobDone     chan *job
+	aheads      *aheadQueue   // to the forecaster
+	budgeting   chan struct{} // holds the one long budget under way
+	foretelling chan struct{} // likewise of forecasts
+	workers     sync.WaitGroup
 }
 
 // New opens the ledger, brings every belief up to its end and starts the
@@ -129,17 +130,18 @@ func New(o Options) (*Keeper, error) {
 		return nil, err
 	}
 	k := &Keeper{
-		options:   o,
-		seeds:     newIDSeeds(),
-		commands:  make(chan *command, maxQueuedCommands),
-		stopping:  make(chan struct{}),
-		stopped:   make(chan struct{}),
-		commits:   make(chan *Group),
-		committed: make(chan error),
-		jobQueue:  make(chan *job),
-		jobDone:   make(chan *job, 1),
-		aheads:    newAheadQueue(),
-		budgeting: make(chan struct{}, 1),
+		options:     o,
+		seeds:       newIDSeeds(),
+		commands:    make(chan *command, maxQueuedCommands),
+		stopping:    make(chan struct{}),
+		stopped:     make(chan struct{}),
+		commits:     make(chan *Group),
+		committed:   make(chan error),
+		jobQueue:    make(chan *job),
+		jobDone:     make(chan *job, 1),
+		aheads:      newAheadQueue(),
+		budgeting:   make(chan struct{}, 1),
+		foretelling: make(chan struct{}, 1),
 	}
 	if err := k.load(); err != nil {
 		return nil, err

@@ -58,6 +58,18 @@ func (m *model) joint() *model {
 	return &j
 }
 
+// from returns m for a look ahead from an instant: a prior that waits for the first
+// reading holds then.
+func (m *model) from(at Instant, read bool) *model {
+	if read || m.declaration().Prior.HasTime || len(m.renewals) > 0 {
+		return m
+	}
+	n, q := *m, *m.quantity
+	q.Declaration.Prior.HasTime, q.Declaration.Prior.Time = true, at
+	n.quantity = &q
+	return &n
+}
+
 // declaration returns what is declared of the quantity.
 func (m *model) declaration() *Declaration { return &m.quantity.Declaration }
 

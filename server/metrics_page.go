@@ -47,7 +47,7 @@ func quantityMetrics() [metricCount]header {
 		verdictMetric:   {"leadline_verdict", gauge, "1 for the verdict in force under the quantity's decision rule, 0 for the others."},
 		readingsMetric:  {"leadline_quantity_readings_total", counter, "Readings applied to the quantity."},
 		lastMetric:      {"leadline_last_reading_timestamp_seconds", gauge, "Time of the newest reading applied to the quantity, in seconds since 1970."},
-		horizonMetric:   {"leadline_breach_within_horizon_probability", gauge, "Probability that a limit of the tolerance is crossed within the declared breach horizon, as found out up to a minute ago."},
+		horizonMetric:   {"leadline_breach_within_horizon_probability", gauge, "Probability that a limit of the tolerance is crossed within the declared breach horizon, as last found out, up to a minute ago or longer where many are to be."},
 		medianMetric:    {"leadline_median_time_to_breach_seconds", gauge, "Time by which a limit is crossed with probability one half; absent where that is beyond the breach horizon. Found out together with leadline_breach_within_horizon_probability."},
 	}
 }

@@ -205,10 +205,12 @@ func (a *account) renew(level, slope float64) {
 	}
 }
 
-// update follows a reading with coefficients h, gain times total, and the noise of
-// a label.
-func (a *account) update(label int, h, gain []float64, total, variance float64) {
-	white := a.of(SourceWhite, 0, label)
+// white returns the share of the readings' own noise under a label.
+func (a *account) white(label int) *share { return a.of(SourceWhite, 0, label) }
+
+// update follows a reading with coefficients h, gain times total, and noise that
+// belongs to a share.
+func (a *account) update(noise *share, h, gain []float64, total, variance float64) {
 	k := a.vector
 	for i, g := range gain {
 		k[i] = g / total
@@ -218,7 +220,7 @@ func (a *account) update(label int, h, gain []float64, total, variance float64) 
 	}
 	for i, x := range k {
 		for j, y := range k {
-			white.matrix[i*a.n+j] += x * y * variance
+			noise.matrix[i*a.n+j] += x * y * variance
 		}
 	}
 }
@@ -240,7 +242,7 @@ func (a *account) press(m, h, k []float64) {
 
 // spread adds variance to the level from a label, with what the other states share in it.
 func (a *account) spread(label int, share []float64, variance float64) {
-	white := a.of(SourceWhite, 0, label)
+	white := a.white(label)
 	for i, x := range share {
 		for j, y := range share {
 			white.matrix[i*a.n+j] += x * y * variance

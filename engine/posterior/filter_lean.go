@@ -67,7 +67,7 @@ func (f *Filter) lean(r *regression, white White) {
 		noise := variance / (1 - variance/spread)
 		gain, total := f.weigh(h, noise)
 		if f.account != nil {
-			f.account.update(white.Label, h, gain, total, noise)
+			f.account.update(f.account.white(white.Label), h, gain, total, noise)
 		}
 	}
 }

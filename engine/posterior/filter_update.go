@@ -52,7 +52,7 @@ func (f *Filter) UpdateFrom(y, offset, levelCoefficient float64, terms []Term, w
 		f.sharpen(twoDiff(y, offset), innovation.value(), gain, total, variance)
 	}
 	if f.account != nil {
-		f.account.update(white.Label, f.space[:f.n], gain, total, variance)
+		f.account.update(f.account.white(white.Label), f.space[:f.n], gain, total, variance)
 	}
 	if white.grows() {
 		f.lean(&before, white)

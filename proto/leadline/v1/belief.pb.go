@@ -962,7 +962,7 @@ type Forecast struct {
 	Quantity string `protobuf:"bytes,1,opt,name=quantity,proto3" json:"quantity,omitempty"`
 	// Unit of all values.
 	Unit string `protobuf:"bytes,2,opt,name=unit,proto3" json:"unit,omitempty"`
-	// Instant from which it looks ahead: now, or the time of the last reading if that
+	// Instant from which it looks ahead: now, or the time of the last reading or renewal if that
 	// is later.
 	Time *timestamppb.Timestamp `protobuf:"bytes,3,opt,name=time,proto3" json:"time,omitempty"`
 	// How far it looks ahead.
@@ -1957,7 +1957,8 @@ type Forecast_Step struct {
 	// Probabilities that the true value lies outside the tolerance then; absent
 	// without one.
 	Breach *Belief_Breach `protobuf:"bytes,5,opt,name=breach,proto3" json:"breach,omitempty"`
-	// Probabilities that a limit has been crossed by then; absent without one.
+	// Probabilities that a limit has been crossed by then; absent without one, and
+	// where nothing is known at the beginning.
 	Crossed       *Forecast_Crossed `protobuf:"bytes,6,opt,name=crossed,proto3" json:"crossed,omitempty"`
 	unknownFields protoimpl.UnknownFields
 	sizeCache     protoimpl.SizeCache

@@ -38,9 +38,9 @@ type InstrumentServiceClient interface {
 	// declaration is replaced. An equal declaration writes nothing and answers with
 	// the instrument as it is. Changing the repeatability, the resolution or the
 	// calibrations rebuilds every belief that rests on the instrument; that goes on
-	// in the background, and rebuilding_count tells how many are left. The unit, and
-	// the valid_from of a calibration that readings rest on, cannot change; the
-	// values of such a calibration can be corrected. Declaring a retired instrument
+	// in the background, and rebuilding_count tells how many are left. The unit of
+	// an instrument that has read anything cannot change; a calibration that readings may
+	// rest on can be corrected, its valid_from too, but not taken away. Declaring a retired instrument
 	// revives it.
 	//
 	// The answer carries an ETag. Send it back as If-Match (or in the etag
@@ -120,9 +120,9 @@ type InstrumentServiceServer interface {
 	// declaration is replaced. An equal declaration writes nothing and answers with
 	// the instrument as it is. Changing the repeatability, the resolution or the
 	// calibrations rebuilds every belief that rests on the instrument; that goes on
-	// in the background, and rebuilding_count tells how many are left. The unit, and
-	// the valid_from of a calibration that readings rest on, cannot change; the
-	// values of such a calibration can be corrected. Declaring a retired instrument
+	// in the background, and rebuilding_count tells how many are left. The unit of
+	// an instrument that has read anything cannot change; a calibration that readings may
+	// rest on can be corrected, its valid_from too, but not taken away. Declaring a retired instrument
 	// revives it.
 	//
 	// The answer carries an ETag. Send it back as If-Match (or in the etag
