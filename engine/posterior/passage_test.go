@@ -59,9 +59,9 @@ func TestPassagesAgainstReference(t *testing.T) {
 	}
 }
 
-// Source: the issue that asked for this; units of time as seconds. It gives 0.7091;
+// Source: the requirement from which this was built; units of time as seconds. It gives 0.7091;
 // the first row of the table says 0.70915047, so that was cut off, not rounded.
-func TestPassageOfTheIssuesCheck(t *testing.T) {
+func TestPassageOfATrendWithUncertainGapAndSlope(t *testing.T) {
 	c := posterior.Course{SD: 0.5, Slope: 0.1, SlopeSD: 0.1, Correlation: 0.5, Motion: trend(0.04, 0)}
 	within(t, "crossed", passage(t, c, upTo(1), 20).By(20).Above, 0.70915, 5e-6)
 	// Mirrored: gap 1 to a lower limit.

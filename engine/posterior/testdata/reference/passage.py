@@ -134,7 +134,7 @@ def ballistic(m, s, mu, tau, rho, lower, upper, T, below, above):
 
 def cases():
     r = random.Random(3)
-    yield "trend", 0.0, 0.5, 0.1, 0.1, 0.5, 0.04, None, 1.0, 20.0  # the check
+    yield "trend", 0.0, 0.5, 0.1, 0.1, 0.5, 0.04, None, 1.0, 20.0  # the case with a figure in the requirement
     for i in range(48):
         form = ("walk", "trend", "ballistic")[i % 3]
         two = i // 3 % 2 == 1
