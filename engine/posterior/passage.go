@@ -29,6 +29,10 @@ type Crossing struct{ Below, Above, Either float64 }
 // Passage is the law of the time at which a level first leaves its limits. It is
 // immutable and may be shared.
 //
+// Where scales differ by tens of powers of ten (a slope that is a function of the level,
+// and a walk or a distance from a limit as nothing beside it) a share of one side
+// can be lost.
+//
 // Where the level's path is known in closed form given where it starts (every
 // motion but a reverting one and a wandering slope), each By integrates it over
 // the belief. The rest is computed once, into a table of times.

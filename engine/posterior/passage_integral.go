@@ -63,15 +63,38 @@ func (p *Passage) integral(o overlay, sign, gap, outside float64, f kernel) floa
 	for d := 2 * o.finest / c.SD; d < 4 && d > 0; d *= 8 {
 		cuts = append(cuts, limit+sign*d)
 	}
-	// Where the drift alone just reaches the limit.
-	if rise := c.SD + tilt; rise != 0 {
-		kink, width := -(sign*gap+c.Slope*o.time)/rise, 3*o.smear/math.Abs(rise)
-		if width < 1 {
-			cuts = append(cuts, kink-width, kink, kink+width)
+	// Where the drift alone just reaches a limit, and where it turns.
+	for _, kink := range p.kinks(o, tilt) {
+		for d := 3 * kink.width; d < 4 && d > 0; d *= 8 {
+			cuts = append(cuts, kink.z-d, kink.z+d)
 		}
+		cuts = append(cuts, kink.z)
 	}
 	root := math.Sqrt(2 * math.Pi)
 	return integrate(g, cuts, lo, hi, outside*root) / root
+}
+
+// kink is where, in standard deviations of the level, what happens turns, and how
+// narrowly.
+type kink struct{ z, width float64 }
+
+// kinks returns those of a level whose mean drift changes by tilt with z.
+func (p *Passage) kinks(o overlay, tilt float64) []kink {
+	c := p.course
+	var all []kink
+	add := func(distance, rise float64) {
+		if rise != 0 && !math.IsInf(distance, 0) {
+			all = append(all, kink{distance / rise, o.smear / math.Abs(rise)})
+		}
+	}
+	if p.limits.HasLower {
+		add(p.limits.Lower-c.Mean-c.Slope*o.time, c.SD+tilt)
+	}
+	if p.limits.HasUpper {
+		add(p.limits.Upper-c.Mean-c.Slope*o.time, c.SD+tilt)
+	}
+	add(-c.Slope*o.time, tilt)
+	return all
 }
 
 // Nodes and weights of the 15-point Kronrod rule on [-1, 1] that extends the
