@@ -109,8 +109,11 @@ func (t *Track) foresee(at Instant) error {
 	v := t.View()
 	at = v.latest(at)
 	horizon := v.Declared().Declaration.BreachHorizon
+	if horizon == 0 {
+		return nil // it has been dropped since the scrape
+	}
 	c, err := v.crossing(at, horizon)
-	if c == nil || horizon == 0 || err != nil {
+	if c == nil || err != nil {
 		return err
 	}
 	a := &ahead{quantity: v.Quantity, basis: v.basis, at: at, probability: c.by(horizon).Either}

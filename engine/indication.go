@@ -54,8 +54,8 @@ func (y *indication) shared(r *route) (offset float64) {
 //
 // A level times a gain's error g counts as an error of its own, g times the root mean
 // square of the level as predicted: for a level that stays, as it was when the gain
-// was first met, see restate. The obvious way, the extended Kalman filter, linearises the product anew
-// at each reading, and takes the differences between its points of
+// was first met, see restate. The obvious way, the extended Kalman filter, linearises
+// the product anew at each reading, and takes the differences between its points of
 // linearisation for knowledge of g. The white noise has the mean of its variance
 // over the level.
 func (y *indication) about(m *model, r *route, level, variance float64) {
