@@ -78,12 +78,19 @@ func prepared(before normal, s spread, predictive bool) *mixture {
 
 // build computes the rest.
 func (m *mixture) build() Posterior {
+	mean, sd := m.built().meanAndSD()
+	return Posterior{form: FormMixture, location: mean, scale: sd, shape: m}
+}
+
+// built computes what all answers need.
+func (m *mixture) built() *mixture {
 	m.exist()
 	m.locate()
 	m.fill()
-	mean, sd := m.moments()
-	return Posterior{form: FormMixture, location: mean, scale: sd, mixture: m}
+	return m
 }
+
+func (m *mixture) moments() (hasMean, hasSD bool) { return m.hasMean, m.hasSD }
 
 // component returns the normal at x.
 func (m *mixture) component(x float64) component {

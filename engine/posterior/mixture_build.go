@@ -77,7 +77,7 @@ func (m *mixture) fill() {
 	}
 }
 
-// moments returns the mean and, if it exists, the standard deviation. The
+// meanAndSD returns the mean and, if it exists, the standard deviation. The
 // variance is that within the normals, E sd^2, and that between their means.
 // Given r they lie at the anchor nearer in weight, plus difference times the
 // weight of the other one, a(x):
@@ -91,7 +91,7 @@ func (m *mixture) fill() {
 // From the span's horizon on, where all else has died away to exp(-60), the sum
 // over equidistant points is a geometric series and is closed as such. Derived
 // for this package; the trapezoid rule on the line as in quadrature.go.
-func (m *mixture) moments() (Level, float64) {
+func (m *mixture) meanAndSD() (Level, float64) {
 	if m.n == 0 {
 		return m.before.mean, m.withoutReadings()
 	}

@@ -10,6 +10,7 @@ const (
 	FormNormal              // normal
 	FormStudent             // Student t, shifted and scaled
 	FormMixture             // normals mixed over r
+	FormGrid                // a density held at points
 )
 
 // String returns the word of the interface.
@@ -21,6 +22,8 @@ func (f Form) String() string {
 		return "STUDENT"
 	case FormMixture:
 		return "MIXTURE"
+	case FormGrid:
+		return "GRID"
 	}
 	return "NONE"
 }
@@ -33,7 +36,15 @@ type Posterior struct {
 	location Level
 	scale    float64
 	dof      float64
-	mixture  *mixture
+	shape    shape // of forms without a formula of their own
+}
+
+// shape is a distribution that is neither normal nor Student.
+type shape interface {
+	moments() (hasMean, hasSD bool) // Posterior's location and scale are the mean and standard deviation
+	tail(x float64, s side) float64
+	between(lo, hi float64) float64
+	quantile(tail float64, s side) float64
 }
 
 // Normal returns the normal distribution with the given mean and standard
@@ -61,8 +72,9 @@ func (p Posterior) Mean() (float64, bool) {
 		return p.location.Value(), true
 	case FormStudent:
 		return p.location.Value(), p.dof > 1
-	case FormMixture:
-		return p.location.Value(), p.mixture.hasMean
+	case FormMixture, FormGrid:
+		has, _ := p.shape.moments()
+		return p.location.Value(), has
 	}
 	return math.NaN(), false
 }
@@ -76,14 +88,15 @@ func (p Posterior) StandardDeviation() (float64, bool) {
 		return p.scale, true
 	case p.form == FormStudent && p.dof > 2:
 		return p.scale * math.Sqrt(p.dof/(p.dof-2)), true
-	case p.form == FormMixture:
-		return p.scale, p.mixture.hasSD
+	case p.shape != nil:
+		_, has := p.shape.moments()
+		return p.scale, has
 	}
 	return math.NaN(), false
 }
 
 // Location returns the centre of a normal or Student distribution, the mean of
-// a mixture.
+// others.
 func (p Posterior) Location() float64 {
 	if p.form == FormNone {
 		return math.NaN()
@@ -115,8 +128,8 @@ func (p Posterior) LowerTail(x float64) float64 {
 		return normalTail(p.standard(x).negative())
 	case FormStudent:
 		return studentTail(-p.standard(x).value(), p.dof)
-	case FormMixture:
-		return p.mixture.tail(x, lower)
+	case FormMixture, FormGrid:
+		return p.shape.tail(x, lower)
 	}
 	return math.NaN()
 }
@@ -128,8 +141,8 @@ func (p Posterior) UpperTail(x float64) float64 {
 		return normalTail(p.standard(x))
 	case FormStudent:
 		return studentTail(p.standard(x).value(), p.dof)
-	case FormMixture:
-		return p.mixture.tail(x, upper)
+	case FormMixture, FormGrid:
+		return p.shape.tail(x, upper)
 	}
 	return math.NaN()
 }
@@ -147,7 +160,7 @@ func (p Posterior) Between(lo, hi float64) float64 {
 	case p.form == FormStudent:
 		return studentBetween(p.standard(lo).value(), p.standard(hi).value(), (hi-lo)/p.scale, p.dof)
 	}
-	return p.mixture.between(lo, hi)
+	return p.shape.between(lo, hi)
 }
 
 // Quantile returns the x with P(X < x) = q, 0 < q < 1; -Inf at 0, +Inf at 1,
@@ -200,7 +213,7 @@ func (p Posterior) quantile(tail float64, s side) float64 {
 	case FormStudent:
 		return p.at(float64(s) * studentQuantile(tail, p.dof))
 	}
-	return p.mixture.quantile(tail, s)
+	return p.shape.quantile(tail, s)
 }
 
 // around returns the two points z scales away from the location.

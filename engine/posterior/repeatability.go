@@ -39,7 +39,7 @@ func (c *Constant) Repeatability(p Prior, n Noise, coverage float64) Repeatabili
 	if level := c.informed(p, n); level.flat {
 		q = s.quantiles(at)
 	} else {
-		q = newMixture(level, s, false).mixture.spreadQuantiles(at)
+		q = prepared(level, s, false).built().spreadQuantiles(at)
 	}
 	out.HasMedian = true
 	out.Lower, out.Median, out.Upper = q[0], q[1], q[2]
