@@ -209,7 +209,8 @@ func (k *Keeper) record(w *work, at resolved, r *Reading, res *Result, b *Batch,
 // rowOf returns the index entry of an applied reading.
 func rowOf(r *Record, instrument InstrumentNumber) Row {
 	row := Row{
-		Time: r.Reading.Time, Value: r.Reading.Value, Instrument: instrument,
+		Time: r.Reading.Time, Value: r.Reading.Value, Upper: r.Reading.Upper, Extent: r.Reading.Extent,
+		Samples: r.Reading.Samples, Instrument: instrument,
 		HasUncertainty: r.Reading.HasUncertainty, Uncertainty: r.Reading.RandomStandardUncertainty,
 		HasID: r.Reading.ID != "", Position: r.Position,
 	}

@@ -28,6 +28,7 @@ func compareEntries(a, b *entry) int {
 		return c
 	}
 	return cmp.Or(cmp.Compare(a.Instrument, b.Instrument), cmp.Compare(a.ID, b.ID), cmp.Compare(a.Value, b.Value),
+		cmp.Compare(a.Extent, b.Extent), cmp.Compare(a.Upper, b.Upper), cmp.Compare(a.Samples, b.Samples),
 		cmp.Compare(a.Occasion, b.Occasion), cmp.Compare(a.Uncertainty, b.Uncertainty), cmp.Compare(a.Position, b.Position))
 }
 

@@ -28,6 +28,9 @@ type InstrumentRepeatability struct {
 	Relative          float64 // white, relative to the level as predicted
 	Correlated        Correlated
 	BetweenOccasions  float64 // standard deviation, shared by the readings of one occasion (ISO 5725-3)
+	// Learned says what is known of the white part where it is learned, for each quantity by
+	// itself, in place of StandardDeviation and Relative; its Form is RepeatabilityAbsent where it isn't.
+	Learned Repeatability
 }
 
 // MeasuringInterval is the range of values that an instrument can indicate (VIM 4.7).

@@ -49,10 +49,13 @@ type Record struct {
 type Row struct {
 	Time           Instant
 	Value          float64
+	Upper          float64 // of ExtentBetween; else 0
 	Uncertainty    float64
 	Position       Position
 	Occasion       uint64 // a hash of the reading's occasion; 0 without one
 	Instrument     InstrumentNumber
+	Samples        uint32 // 0 counts as 1
+	Extent         Extent
 	HasUncertainty bool
 	HasID          bool // the reading has an ID, found in the record
 }

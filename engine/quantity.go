@@ -58,6 +58,7 @@ type Repeatability struct {
 	StandardDeviation float64 // r, above 0
 	Guess             float64 // r^2 ~ scaled inverse chi-squared(Worth, Guess^2)
 	Worth             float64 // degrees of freedom, at least 1
+	Floor             float64 // a learned r is at least that; 0: no floor
 }
 
 // Learned tells whether r is learned from the readings.
@@ -117,6 +118,38 @@ type Wander struct {
 	Per               time.Duration
 }
 
+// Outliers says that each reading is, with Probability, one whose random standard
+// deviation is Inflation times what it otherwise would be. The zero value: none are.
+type Outliers struct {
+	Probability float64 // above 0, at most 0.5
+	Inflation   float64 // above 1
+}
+
+// Scale is the scale on which the level and its errors are normal.
+type Scale uint8
+
+const (
+	ScaleLinear Scale = iota
+	// ScaleLog: the natural logarithm of the level, which is positive by nature.
+	// Standard deviations of readings and dynamics are then of the logarithm; values,
+	// limits and the prior are in the quantity's unit.
+	ScaleLog
+)
+
+// ModelCheck says how the model is held against its readings. Fields that are 0
+// have the defaults of package modelcheck.
+type ModelCheck struct {
+	Window            int     // scored readings from one look to the next
+	ObjectionsPerYear float64 // that a correct model may raise
+}
+
+// StepDetection says when a shift of the readings against their predictions counts as a
+// step, and what follows.
+type StepDetection struct {
+	FalseAlarmInterval float64 // mean number of readings between false detections; 0: the default
+	Widen              float64 // standard deviation added to the level at a step; 0: none
+}
+
 // Tolerance is the range of permissible true values; the limits conform.
 type Tolerance struct {
 	HasLower, HasUpper bool
@@ -134,15 +167,21 @@ type Declaration struct {
 	Prior         Prior
 	Repeatability Repeatability
 	Dynamics      Dynamics
+	Outliers      Outliers
+	Scale         Scale
+	ModelCheck    ModelCheck
+	StepDetection StepDetection
 	Tolerance     Tolerance
 	Rule          decide.Rule   // the zero Rule means decide.DefaultRule
 	BreachHorizon time.Duration // how far ahead a breach is looked for, for the metrics; 0: it isn't
 }
 
-// SameBelief tells whether d and e give every set of readings the same belief,
-// so that going from one to the other needs no refolding.
+// SameBelief tells whether d and e give every set of readings the same belief
+// and every check of the model the same result, so that going from one to the other
+// needs no refolding.
 func (d Declaration) SameBelief(e Declaration) bool {
-	return d.Prior == e.Prior && d.Repeatability == e.Repeatability && d.Dynamics == e.Dynamics
+	return d.Prior == e.Prior && d.Repeatability == e.Repeatability && d.Dynamics == e.Dynamics &&
+		d.Outliers == e.Outliers && d.Scale == e.Scale && d.ModelCheck == e.ModelCheck && d.StepDetection == e.StepDetection
 }
 
 // DecisionRule returns the rule in force: the declared one or the default.

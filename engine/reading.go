@@ -1,9 +1,22 @@
 package engine
 
+// Extent tells what a reading says of the indication.
+type Extent uint8
+
+const (
+	ExtentValue   Extent = iota // it was Value, as far as the display shows
+	ExtentAbove                 // it was above Value
+	ExtentBelow                 // it was below Value
+	ExtentBetween               // it was between Value and Upper
+)
+
 // Reading is one indication as it was sent.
 type Reading struct {
 	Quantity                  QuantityID
 	Value                     float64 // in the quantity's unit
+	Upper                     float64 // of ExtentBetween, above Value; else 0
+	Extent                    Extent
+	Samples                   uint32 // the reading is a mean of so many, which divides the white part of its variance; 0 counts as 1
 	HasTime                   bool
 	Time                      Instant // if not HasTime, the receipt instant of its request
 	SentTime                  string  // as it was sent, where Time can't hold it; not recorded but in the detail of the refusal
