@@ -42,11 +42,6 @@ const (
 	priorHasTime     protowire.Number = 7
 	priorTime        protowire.Number = 8
 
-	repeatabilityForm  protowire.Number = 1
-	repeatabilitySD    protowire.Number = 2
-	repeatabilityGuess protowire.Number = 3
-	repeatabilityWorth protowire.Number = 4
-
 	toleranceHasLower protowire.Number = 1
 	toleranceHasUpper protowire.Number = 2
 	toleranceLower    protowire.Number = 3
@@ -113,12 +108,7 @@ func appendDeclaration(b []byte, d *engine.Declaration) []byte {
 	b = appendText(b, declarationUnit, d.Unit)
 	b = appendText(b, declarationDescription, d.Description)
 	b = appendMessage(b, declarationPrior, func(b []byte) []byte { return appendPrior(b, &d.Prior) })
-	b = appendMessage(b, declarationRepeatability, func(b []byte) []byte {
-		b = appendUint(b, repeatabilityForm, uint64(d.Repeatability.Form))
-		b = appendDouble(b, repeatabilitySD, d.Repeatability.StandardDeviation)
-		b = appendDouble(b, repeatabilityGuess, d.Repeatability.Guess)
-		return appendDouble(b, repeatabilityWorth, d.Repeatability.Worth)
-	})
+	b = appendMessage(b, declarationRepeatability, func(b []byte) []byte { return appendRepeatability(b, &d.Repeatability) })
 	b = appendMessage(b, declarationDynamics, func(b []byte) []byte { return appendDynamics(b, &d.Dynamics) })
 	b = appendMessage(b, declarationTolerance, func(b []byte) []byte {
 		b = appendFlag(b, toleranceHasLower, d.Tolerance.HasLower)
@@ -198,24 +188,6 @@ func decodePrior(body []byte, p *engine.Prior) bool {
 			p.HasTime = m.number != 0
 		case fixed(priorTime):
 			p.Time = engine.Instant(m.number)
-		}
-	}
-	return !m.bad
-}
-
-func decodeRepeatability(body []byte, r *engine.Repeatability) bool {
-	m := message{rest: body}
-	for m.next() {
-		switch v := math.Float64frombits(m.number); m.tag {
-		case varint(repeatabilityForm):
-			r.Form = engine.RepeatabilityForm(m.number)
-			m.bad = m.bad || m.number > uint64(engine.RepeatabilityLearnedReference)
-		case fixed(repeatabilitySD):
-			r.StandardDeviation = v
-		case fixed(repeatabilityGuess):
-			r.Guess = v
-		case fixed(repeatabilityWorth):
-			r.Worth = v
 		}
 	}
 	return !m.bad
