@@ -23,6 +23,7 @@ const (
 func (d *Declaration) Check() error {
 	checks := []func() *Error{
 		d.checkText, d.checkPrior, d.checkRepeatability, d.checkDynamics, d.checkTolerance, d.checkRule, d.checkHorizon,
+		d.checkOutliers, d.checkModelCheck, d.checkStepDetection, d.checkScale, d.checkSupport,
 	}
 	for _, check := range checks {
 		if err := check(); err != nil {
@@ -80,19 +81,23 @@ func (p *Prior) checkInterval() *Error {
 }
 
 func (d *Declaration) checkRepeatability() *Error {
-	r := &d.Repeatability
-	switch r.Form {
-	case RepeatabilityKnown:
+	if r := &d.Repeatability; r.Form == RepeatabilityKnown {
 		return checkDeviation("repeatability.standard_deviation", r.StandardDeviation)
-	case RepeatabilityLearned:
-		if err := checkDeviation("repeatability.learned.guess", r.Guess); err != nil {
+	}
+	return d.Repeatability.checkLearned("repeatability.learned")
+}
+
+// checkLearned checks what is stated of a repeatability that is learned.
+func (r *Repeatability) checkLearned(field string) *Error {
+	if r.Form == RepeatabilityLearned {
+		if err := checkDeviation(field+".guess", r.Guess); err != nil {
 			return err
 		}
 		if !(r.Worth >= 1 && r.Worth <= maxWorth) {
-			return refuse(InvalidField, "repeatability.learned.worth", "repeatability.learned.worth is %v; give the number of degrees of freedom that the guess is worth, from 1 to 1e9", r.Worth)
+			return refuse(InvalidField, field+".worth", "%s.worth is %v; give the number of degrees of freedom that the guess is worth, from 1 to 1e9", field, r.Worth)
 		}
 	}
-	return nil
+	return checkOptional(field+".floor", r.Floor)
 }
 
 func (d *Declaration) checkDynamics() *Error {
@@ -100,9 +105,6 @@ func (d *Declaration) checkDynamics() *Error {
 	field := map[DynamicsForm]string{
 		DynamicsRandomWalk: "dynamics.random_walk", DynamicsLinearTrend: "dynamics.linear_trend", DynamicsMeanReverting: "dynamics.mean_reverting",
 	}[y.Form]
-	if y.Form != DynamicsConstant && d.Repeatability.Learned() {
-		return refuse(NotSupported, "repeatability.learned", "repeatability.learned is not supported together with %s; give repeatability.standard_deviation, or dynamics.constant", field)
-	}
 	switch y.Form {
 	case DynamicsRandomWalk:
 		return y.checkWalk(field)
@@ -190,6 +192,70 @@ func (t Tolerance) check(field string) *Error {
 	return nil
 }
 
+func (d *Declaration) checkOutliers() *Error {
+	o := &d.Outliers
+	switch {
+	case *o == (Outliers{}):
+		return nil
+	case !(o.Probability > 0 && o.Probability <= 0.5):
+		return refuse(InvalidField, "outliers.probability", "outliers.probability is %v; give a number above 0 and at most 0.5", o.Probability)
+	case !(o.Inflation > 1 && o.Inflation <= maxInflation):
+		return refuse(InvalidField, "outliers.inflation", "outliers.inflation is %v; give a number above 1 and at most 1e6, by which an outlier's standard deviation is larger", o.Inflation)
+	}
+	return nil
+}
+
+func (d *Declaration) checkModelCheck() *Error {
+	c := &d.ModelCheck
+	switch {
+	case c.Window != 0 && !(c.Window >= minWindow && c.Window <= maxWindow):
+		return refuse(InvalidField, "model_check.window", "model_check.window is %d; give a number of readings from %d to %d", c.Window, minWindow, maxWindow)
+	case c.ObjectionsPerYear != 0 && !(c.ObjectionsPerYear >= 1e-9 && c.ObjectionsPerYear <= maxObjections):
+		return refuse(InvalidField, "model_check.objections_per_year", "model_check.objections_per_year is %v; give the rate of false objections from 1e-9 to 1e6", c.ObjectionsPerYear)
+	}
+	return nil
+}
+
+func (d *Declaration) checkStepDetection() *Error {
+	s := &d.StepDetection
+	if n := s.FalseAlarmInterval; n != 0 && !(n >= minFalseAlarmInterval && n <= maxFalseAlarmInterval) {
+		return refuse(InvalidField, "step_detection.false_alarm_interval", "step_detection.false_alarm_interval is %v; give a mean number of readings from %v to %v", n, minFalseAlarmInterval, maxFalseAlarmInterval)
+	}
+	return checkOptional("step_detection.on_step.widen", s.Widen)
+}
+
+// Bounds of what checks of the model can be asked for.
+const (
+	minWindow, maxWindow                         = 16, 10_000
+	maxObjections                                = 1e6
+	minFalseAlarmInterval, maxFalseAlarmInterval = 100, 1e12
+	maxInflation                                 = 1e6
+)
+
+// checkScale refuses what has no logarithm.
+func (d *Declaration) checkScale() *Error {
+	if d.Scale == ScaleLinear {
+		return nil
+	}
+	positive := []struct {
+		field string
+		given bool
+		value float64
+	}{
+		{"prior.mean", d.Prior.Form == PriorNormal, d.Prior.Mean},
+		{"prior.low", d.Prior.Form == PriorInterval, d.Prior.Low},
+		{"dynamics.mean_reverting.mean", d.Dynamics.Form == DynamicsMeanReverting, d.Dynamics.Mean},
+		{"tolerance.lower", d.Tolerance.HasLower, d.Tolerance.Lower},
+		{"tolerance.upper", d.Tolerance.HasUpper, d.Tolerance.Upper},
+	}
+	for _, p := range positive {
+		if p.given && !(p.value > 0) {
+			return refuse(InvalidField, p.field, "%s is %v but scale is LOG, on which every value is positive; give a number above 0", p.field, p.value)
+		}
+	}
+	return nil
+}
+
 func (d *Declaration) checkRule() *Error {
 	if d.Rule == (decide.Rule{}) {
 		return nil
@@ -231,19 +297,42 @@ func inRange(x float64) bool {
 	return x == 0 || a >= MinMagnitude && a <= MaxMagnitude
 }
 
-// levelPrior returns the prior of the level as moments. A mean-reverting level of
-// which nothing is stated follows its stationary law.
+// levelPrior returns the prior of the level, of its logarithm under ScaleLog, as
+// moments. A mean-reverting level of which nothing is stated follows its stationary law.
 func (d *Declaration) levelPrior() posterior.Prior {
 	if y := &d.Dynamics; d.Prior.Form == PriorVague && y.Form == DynamicsMeanReverting {
-		return posterior.Prior{Mean: y.Mean, SD: y.StandardDeviation}
+		return posterior.Prior{Mean: d.Scale.of(y.Mean), SD: y.StandardDeviation}
 	}
 	switch p := d.Prior; p.Form {
 	case PriorNormal:
+		if d.Scale == ScaleLog {
+			return logNormalPrior(p.Mean, p.StandardDeviation)
+		}
 		return posterior.Prior{Mean: p.Mean, SD: p.StandardDeviation}
 	case PriorInterval:
-		return posterior.IntervalPrior(p.Low, p.High, p.Probability)
+		return posterior.IntervalPrior(d.Scale.of(p.Low), d.Scale.of(p.High), p.Probability)
 	}
 	return posterior.Prior{Vague: true}
+}
+
+// logNormalPrior returns the prior of ln x for a lognormal x of that mean and standard
+// deviation: s^2 = ln(1 + (sd/mean)^2), ln mean - s^2/2 (Johnson, Kotz & Balakrishnan
+// 1994, Continuous Univariate Distributions 1, 14.3, from memory).
+func logNormalPrior(mean, sd float64) posterior.Prior {
+	ratio := sd / mean
+	variance := math.Log1p(ratio * ratio)
+	if ratio > 1e8 {
+		variance = 2 * math.Log(ratio)
+	}
+	return posterior.Prior{Mean: math.Log(mean) - variance/2, SD: math.Sqrt(variance)}
+}
+
+// of returns a value on the scale.
+func (s Scale) of(x float64) float64 {
+	if s == ScaleLog {
+		return math.Log(x)
+	}
+	return x
 }
 
 // noise returns what is declared of the repeatability.
@@ -252,9 +341,9 @@ func (d *Declaration) noise() posterior.Noise {
 	case RepeatabilityKnown:
 		return posterior.Noise{Known: true, SD: r.StandardDeviation}
 	case RepeatabilityLearned:
-		return posterior.Noise{Guess: r.Guess, Worth: r.Worth}
+		return posterior.Noise{Guess: r.Guess, Worth: r.Worth, Floor: r.Floor}
 	case RepeatabilityLearnedReference:
-		return posterior.Noise{}
+		return posterior.Noise{Floor: r.Floor}
 	}
 	return posterior.Noise{Absent: true}
 }

@@ -201,6 +201,12 @@ func (d *InstrumentDeclaration) checkRepeatability() *Error {
 	if err := checkRelative(at+"relative", r.Relative); err != nil {
 		return err
 	}
+	if r.Learned.Learned() && (r.StandardDeviation > 0 || r.Relative > 0) {
+		return refuse(InvalidField, at+"learned", "repeatability.learned is given beside a standard_deviation or a relative part, in whose place it stands; give one of them")
+	}
+	if err := r.Learned.checkLearned(at + "learned"); err != nil {
+		return err
+	}
 	if r.Relative > 0 && r.StandardDeviation == 0 {
 		return refuse(MissingField, at+"standard_deviation", "repeatability.standard_deviation is missing beside repeatability.relative, which says nothing of readings around zero; give the standard deviation there")
 	}

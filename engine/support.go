@@ -1,0 +1,356 @@
+package engine
+
+import (
+	"fmt"
+	"slices"
+	"strings"
+)
+
+// Method is how a belief is held and folded.
+type Method string
+
+// Every Method; SupportTable says which serves what, and how well.
+const (
+	MethodSums   Method = "SUMS"   // exact sums
+	MethodFilter Method = "FILTER" // Kalman filter: jointly normal
+	MethodBank   Method = "BANK"   // Kalman filters at nodes of a learned repeatability
+	MethodCounts Method = "COUNTS" // counts of what was displayed or censored, exact when asked
+	MethodGrid   Method = "GRID"   // a density on points, one at each node of a learned repeatability
+)
+
+// Errors tells what readings of a quantity share.
+type Errors uint8
+
+const (
+	NoErrors      Errors = iota // nothing: no calibrated instrument
+	OneBias                     // a bias at a time: all readings are of one instrument whose calibrations state a bias and its uncertainty alone
+	FurtherErrors               // any others
+)
+
+// traits is what a quantity asks of the method by which its belief is held.
+type traits struct {
+	dynamics DynamicsForm
+	plain    bool // no reading names an instrument
+	learned  int  // repeatabilities that are learned
+	floored  bool // with a floor
+	averaged bool // some readings are means of several
+	display  bool // a resolution is coarser than r, as far as r is known
+	censored bool // some readings are censored, or beyond a measuring interval
+	outliers bool
+	log      bool
+	errors   Errors
+	changes  bool // there are renewals, or steps widen the level
+}
+
+// gaussian tells whether readings are normal given the level and r.
+func (t *traits) gaussian() bool { return !t.display && !t.censored && !t.outliers }
+
+// Supported is a row of SupportTable: what a method serves, and its error bound.
+type Supported struct {
+	Method       Method
+	Dynamics     []DynamicsForm
+	Learned      int    // repeatabilities that may be learned
+	Instruments  bool   // readings may name instruments
+	Errors       Errors // at most
+	Displays     bool   // displays coarser than r, and censored readings
+	Outliers     bool
+	Changes      bool // renewals and steps that widen the level
+	Floor        bool // a floor of r, and means of several indications while r is learned
+	Bound        string
+	reservations func(t *traits) bool // what is left out of the row
+}
+
+var anyDynamics = []DynamicsForm{DynamicsConstant, DynamicsRandomWalk, DynamicsLinearTrend, DynamicsMeanReverting}
+
+// SupportTable lists the combinations of what can be declared that are supported; the first
+// row that serves a quantity is how its belief is held. z is the normal
+// quantile of a probability, compared for 1e-9 < p < 1 - 1e-9.
+var SupportTable = []Supported{
+	{
+		Method: MethodSums, Dynamics: []DynamicsForm{DynamicsConstant}, Learned: 1, Errors: NoErrors,
+		Bound: "exact: tails to 1e-10 of themselves",
+	},
+	{
+		Method: MethodFilter, Dynamics: anyDynamics, Instruments: true, Learned: 0, Errors: FurtherErrors, Changes: true, Floor: true,
+		Bound: "exact but for parts relative to the level; a resolution d up to r counts as variance d^2/12",
+	},
+	{
+		Method: MethodBank, Dynamics: anyDynamics, Instruments: true, Learned: 1, Errors: FurtherErrors, Changes: true, Floor: true,
+		Bound: "z to 0.001, mean to 1 % and standard deviation to 3 % of the exact standard deviation",
+	},
+	{
+		Method: MethodCounts, Dynamics: []DynamicsForm{DynamicsConstant}, Learned: 1, Instruments: true, Errors: OneBias, Displays: true, Floor: true,
+		Bound: "z to 0.03, mean to 1 % and standard deviation to 3 % of the exact standard deviation",
+	},
+	{
+		Method: MethodGrid, Dynamics: []DynamicsForm{DynamicsConstant, DynamicsRandomWalk, DynamicsMeanReverting},
+		Learned: 1, Instruments: true, Errors: OneBias, Displays: true, Outliers: true, Changes: true, Floor: true,
+		Bound:        "z to 0.03, mean to 1 % and standard deviation to 3 % of the exact standard deviation",
+		reservations: func(t *traits) bool { return t.errors == OneBias && t.dynamics == DynamicsMeanReverting },
+	},
+}
+
+// serves tells whether the row is for t.
+func (s *Supported) serves(t *traits) bool {
+	switch {
+	case !slices.Contains(s.Dynamics, t.dynamics), t.learned > s.Learned, !t.plain && !s.Instruments, t.errors > s.Errors:
+		return false
+	case (t.display || t.censored) && !s.Displays, t.outliers && !s.Outliers, t.changes && !s.Changes:
+		return false
+	case (t.floored || t.averaged && t.learned > 0) && !s.Floor, t.log && t.errors > NoErrors:
+		return false
+	}
+	return s.reservations == nil || !s.reservations(t)
+}
+
+// method returns how a belief of those traits is held; empty if it isn't supported.
+func (t *traits) method() Method {
+	for i := range SupportTable {
+		if SupportTable[i].serves(t) {
+			return SupportTable[i].Method
+		}
+	}
+	return ""
+}
+
+// relaxation is a change that may make traits supported.
+type relaxation struct {
+	field  string
+	change func(t *traits) bool // false if it changes nothing
+	remedy string
+}
+
+// relaxations in the order in which they are proposed: what costs a user least first.
+var relaxations = []relaxation{
+	{"repeatability.learned.floor", func(t *traits) bool {
+		was := t.display && t.learned > 0
+		t.display, t.floored = t.display && !was, t.floored || was
+		return was
+	}, "repeatability.learned.floor of at least the resolution"},
+	{"repeatability.learned", func(t *traits) bool {
+		was := t.learned > 1
+		t.learned = min(t.learned, 1)
+		return was
+	}, "one learned repeatability, with the standard_deviation of the others declared"},
+	{"outliers", func(t *traits) bool {
+		was := t.outliers
+		t.outliers = false
+		return was
+	}, "no outliers"},
+	{"dynamics", func(t *traits) bool {
+		was := t.dynamics == DynamicsLinearTrend || t.dynamics == DynamicsMeanReverting
+		if was {
+			t.dynamics = DynamicsRandomWalk
+		}
+		return was
+	}, "dynamics.random_walk"},
+	{"instrument", func(t *traits) bool {
+		was := t.errors > OneBias && !t.log
+		if was {
+			t.errors = OneBias
+		}
+		return was
+	}, "all readings by one instrument whose calibrations state bias and uncertainty alone"},
+	{"scale", func(t *traits) bool {
+		was := t.log
+		t.log = false
+		return was
+	}, "scale LINEAR"},
+	{"instrument", func(t *traits) bool {
+		was := t.errors > NoErrors
+		t.errors = NoErrors
+		return was
+	}, "readings without calibrated instruments"},
+	{"censored", func(t *traits) bool {
+		was := t.censored
+		t.censored = false
+		return was
+	}, "readings with a value, within the measuring interval"},
+	{"resolution", func(t *traits) bool {
+		was := t.display
+		t.display = false
+		return was
+	}, "a repeatability of at least the resolution"},
+}
+
+// objection returns why t isn't supported: the field to change, and what is the nearest
+// supported combination; empty if t is supported.
+func (t *traits) objection() (field, sentence string) {
+	if t.method() != "" {
+		return "", ""
+	}
+	for i, first := range relaxations {
+		if near := *t; first.change(&near) && near.method() != "" {
+			return first.field, t.unsupported(first.remedy)
+		}
+		for _, second := range relaxations[:i] {
+			near := *t
+			if first.change(&near) && second.change(&near) && near.method() != "" {
+				return first.field, t.unsupported(second.remedy + " and " + first.remedy)
+			}
+		}
+	}
+	return "dynamics", t.unsupported("dynamics.constant with values alone")
+}
+
+func (t *traits) unsupported(nearest string) string {
+	return fmt.Sprintf("%s are not supported together; the nearest supported combination has %s", t.words(), nearest)
+}
+
+// words names what t combines.
+func (t *traits) words() string {
+	all := []string{"dynamics " + [...]string{"constant", "random_walk", "linear_trend", "mean_reverting"}[t.dynamics]}
+	for _, w := range []struct {
+		has  bool
+		word string
+	}{
+		{t.learned == 1, "a learned repeatability"}, {t.learned > 1, "several learned repeatabilities"},
+		{t.outliers, "outliers"}, {t.censored, "censored readings"}, {t.display, "a display coarser than the repeatability"},
+		{t.log, "scale LOG"}, {t.errors == OneBias, "a calibrated instrument"}, {t.errors == FurtherErrors, "instruments that share further errors"},
+	} {
+		if w.has {
+			all = append(all, w.word)
+		}
+	}
+	if len(all) == 1 {
+		return all[0] + " and its readings"
+	}
+	return strings.Join(all[:len(all)-1], ", ") + " and " + all[len(all)-1]
+}
+
+// instrumentUse is an instrument as readings of a quantity used it.
+type instrumentUse struct {
+	declaration     *InstrumentDeclaration
+	bare            int     // readings without an uncertainty of their own
+	lowest, highest float64 // values
+}
+
+// readAs is what a quantity's readings amount to for the choice of a method.
+type readAs struct {
+	instruments []instrumentUse
+	direct      bool // some readings name no instrument
+	bareDirect  bool // of those, some rest on the quantity's repeatability
+	censored    bool
+	averaged    bool
+}
+
+// traitsOf returns what a quantity declared as d asks for.
+func traitsOf(d *Declaration, renewals int, r *readAs) traits {
+	t := traits{
+		dynamics: d.Dynamics.Form, plain: len(r.instruments) == 0, outliers: d.Outliers != (Outliers{}), log: d.Scale == ScaleLog,
+		censored: r.censored, averaged: r.averaged, changes: renewals > 0 || d.StepDetection.Widen > 0,
+	}
+	own := 0 // instruments that learn a repeatability of their own
+	rests := r.bareDirect || len(r.instruments) == 0
+	for i := range r.instruments {
+		u := &r.instruments[i]
+		n := &u.declaration.Repeatability
+		if n.Learned.Learned() {
+			own++
+			t.floored = t.floored || n.Learned.Floor > 0
+		} else if n.StandardDeviation == 0 {
+			rests = true
+		}
+		t.display = t.display || u.displays(d)
+		m := u.declaration.MeasuringInterval
+		t.censored = t.censored || m.HasUpper && u.highest > m.Upper || m.HasLower && u.lowest < m.Lower
+	}
+	t.learned = own
+	if d.Repeatability.Learned() && rests {
+		t.learned++
+		t.floored = t.floored || d.Repeatability.Floor > 0
+	}
+	t.errors = r.errors()
+	return t
+}
+
+// displays tells whether the display is coarser than the noise, as far as that is known.
+func (u *instrumentUse) displays(d *Declaration) bool {
+	resolution, n := u.declaration.Resolution, &u.declaration.Repeatability
+	if resolution == 0 {
+		return false
+	}
+	if d.Scale == ScaleLog {
+		return true // what it is on the logarithmic scale depends on the level
+	}
+	least := n.StandardDeviation
+	switch {
+	case n.Learned.Learned():
+		least = n.Learned.Floor
+	case least > 0:
+	case d.Repeatability.Learned():
+		least = d.Repeatability.Floor
+	default:
+		least = d.Repeatability.StandardDeviation
+	}
+	return resolution > least
+}
+
+// errors returns what the readings share.
+func (r *readAs) errors() Errors {
+	calibrated, further := 0, false
+	for i := range r.instruments {
+		d := r.instruments[i].declaration
+		further = further || d.Repeatability.Relative > 0 || d.Repeatability.Correlated != (Correlated{}) || d.Repeatability.BetweenOccasions > 0
+		if len(d.Calibrations) > 0 {
+			calibrated++
+		}
+		for n := range d.Calibrations {
+			c := &d.Calibrations[n]
+			further = further || c.Reference != "" && len(d.Calibrations) > 1 || c.DriftPer != 0 || c.RelativeBiasStandardUncertainty > 0
+		}
+	}
+	switch {
+	case further || calibrated > 0 && (len(r.instruments) > 1 || r.direct):
+		return FurtherErrors
+	case calibrated == 1:
+		return OneBias
+	}
+	return NoErrors
+}
+
+// improper returns why r can't be learned under d from readings by an instrument, nil for
+// none: the posterior would be improper, as readings could be explained without any
+// noise. Empty if it can.
+func improper(d *Declaration, by *InstrumentDeclaration) (field, sentence string) {
+	r, at := &d.Repeatability, "repeatability.learned"
+	if by != nil && by.Repeatability.Learned.Learned() {
+		r, at = &by.Repeatability.Learned, "the instrument's repeatability.learned"
+	}
+	if r.Form != RepeatabilityLearnedReference || r.Floor > 0 {
+		return "", ""
+	}
+	why := ""
+	switch {
+	case d.Dynamics.Form != DynamicsConstant:
+		why = "the movement of the level"
+	case by == nil:
+	case by.Repeatability.StandardDeviation > 0:
+	case by.Resolution > 0:
+		why = "the display"
+	case by.Repeatability.BetweenOccasions > 0, by.Repeatability.Correlated != (Correlated{}):
+		why = "noise that readings share"
+	default:
+		for i := range by.Calibrations {
+			if by.Calibrations[i].DriftPer > 0 {
+				why = "the drift of a bias"
+			}
+		}
+	}
+	if why == "" {
+		return "", ""
+	}
+	return "repeatability.learned", fmt.Sprintf("%s has neither guess and worth nor floor, but readings could be explained by %s alone, so that nothing bounds it from below; give guess and worth, or a floor", at, why)
+}
+
+// checkSupport refuses what can't be believed whatever the readings are.
+func (d *Declaration) checkSupport() *Error {
+	if field, sentence := improper(d, nil); field != "" {
+		return refuse(NotSupported, field, "%s", sentence)
+	}
+	t := traitsOf(d, 0, &readAs{})
+	if field, sentence := t.objection(); field != "" {
+		return refuse(NotSupported, field, "%s", sentence)
+	}
+	return nil
+}
