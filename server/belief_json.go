@@ -52,6 +52,13 @@ func (o *jsonObject) integer(name string, value uint32) {
 	o.b = strconv.AppendUint(o.b, uint64(value), 10)
 }
 
+// optionalInteger writes a whole number that may be absent.
+func (o *jsonObject) optionalInteger(name string, value *uint32) {
+	if value != nil {
+		o.integer(name, *value)
+	}
+}
+
 func (o *jsonObject) boolean(name string, value bool) {
 	o.key(name)
 	o.b = strconv.AppendBool(o.b, value)
@@ -111,6 +118,7 @@ func appendBelief(b []byte, m *leadlinev1.Belief) []byte {
 	}
 	o.instruments(m)
 	o.time("renewal_time", m.GetRenewalTime())
+	o.model(m)
 	o.integer("reading_count", m.GetReadingCount())
 	o.time("last_reading_time", m.GetLastReadingTime())
 	if m.Verdict != nil {

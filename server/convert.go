@@ -34,8 +34,10 @@ func declarationOf(q *leadlinev1.Quantity) (engine.Declaration, error) {
 	if d.Rule, err = ruleOf(q.GetDecisionRule()); err != nil {
 		return d, err
 	}
-	d.BreachHorizon, err = horizonOf("breach_horizon", q.GetBreachHorizon())
-	return d, err
+	if d.BreachHorizon, err = horizonOf("breach_horizon", q.GetBreachHorizon()); err != nil {
+		return d, err
+	}
+	return d, setModel(&d, q)
 }
 
 // horizonOf reads how far to look ahead; 0, the engine's word for absent, can't
@@ -115,12 +117,7 @@ func repeatabilityOf(r *leadlinev1.Repeatability) (engine.Repeatability, error) 
 	case r.Learned == nil:
 		return engine.Repeatability{}, refuse(engine.MissingField, "repeatability", "repeatability is empty; give standard_deviation or learned, or leave repeatability out if every reading brings its own")
 	}
-	l := r.GetLearned()
-	if l.Guess == nil && l.Worth == nil {
-		return engine.Repeatability{Form: engine.RepeatabilityLearnedReference}, nil
-	}
-	err := together("repeatability.learned", given{"guess", l.Guess}, given{"worth", l.Worth})
-	return engine.Repeatability{Form: engine.RepeatabilityLearned, Guess: l.GetGuess(), Worth: l.GetWorth()}, err
+	return learnedOf(r.GetLearned())
 }
 
 func toleranceOf(t *leadlinev1.Tolerance) (engine.Tolerance, error) {
@@ -204,6 +201,7 @@ func quantityMessage(q *engine.Quantity) *leadlinev1.Quantity {
 		CreateTime:    timestamp(q.CreateTime),
 		UpdateTime:    timestamp(q.UpdateTime),
 	}
+	setModelMessage(m, d)
 	if d.BreachHorizon != 0 {
 		m.BreachHorizon = durationpb.New(d.BreachHorizon)
 	}
@@ -230,13 +228,11 @@ func priorMessage(p *engine.Prior) *leadlinev1.Prior {
 }
 
 func repeatabilityMessage(r engine.Repeatability) *leadlinev1.Repeatability {
-	switch r.Form {
-	case engine.RepeatabilityKnown:
+	switch {
+	case r.Form == engine.RepeatabilityKnown:
 		return &leadlinev1.Repeatability{StandardDeviation: &r.StandardDeviation}
-	case engine.RepeatabilityLearned:
-		return &leadlinev1.Repeatability{Learned: &leadlinev1.Repeatability_Learned{Guess: &r.Guess, Worth: &r.Worth}}
-	case engine.RepeatabilityLearnedReference:
-		return &leadlinev1.Repeatability{Learned: &leadlinev1.Repeatability_Learned{}}
+	case r.Learned():
+		return &leadlinev1.Repeatability{Learned: learnedMessage(r)}
 	}
 	return nil
 }

@@ -44,11 +44,14 @@ func instrumentRepeatabilityOf(r *leadlinev1.Instrument_Repeatability) (engine.I
 	d := engine.InstrumentRepeatability{
 		StandardDeviation: r.GetStandardDeviation(), Relative: r.GetRelative(), BetweenOccasions: r.GetBetweenOccasions(),
 	}
-	if r.StandardDeviation == nil && r.Relative == nil && r.GetCorrelated() == nil && r.BetweenOccasions == nil {
+	if r.StandardDeviation == nil && r.Relative == nil && r.GetCorrelated() == nil && r.BetweenOccasions == nil && r.GetLearned() == nil {
 		return d, refuse(engine.MissingField, "repeatability", "repeatability is empty; give standard_deviation or another of its parts, or leave repeatability out")
 	}
 	err := noneZero("repeatability.",
 		given{"standard_deviation", r.StandardDeviation}, given{"relative", r.Relative}, given{"between_occasions", r.BetweenOccasions})
+	if err == nil && r.GetLearned() != nil {
+		d.Learned, err = learnedOf(r.GetLearned())
+	}
 	if err != nil || r.GetCorrelated() == nil {
 		return d, err
 	}
@@ -146,7 +149,7 @@ func instrumentRepeatabilityMessage(r *engine.InstrumentRepeatability) *leadline
 	}
 	m := &leadlinev1.Instrument_Repeatability{
 		StandardDeviation: unlessZero(r.StandardDeviation), Relative: unlessZero(r.Relative),
-		BetweenOccasions: unlessZero(r.BetweenOccasions),
+		BetweenOccasions: unlessZero(r.BetweenOccasions), Learned: learnedMessage(r.Learned),
 	}
 	if c := r.Correlated; c != (engine.Correlated{}) {
 		m.Correlated = &leadlinev1.Instrument_Correlated{

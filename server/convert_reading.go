@@ -59,19 +59,24 @@ func readingOfQuantity(id string, m *leadlinev1.Reading) (engine.Reading, error)
 // readingOf reads one reading. What a status of the reading can tell is left to
 // the engine: here is refused only what lacks a value or is over a limit.
 func readingOf(m *leadlinev1.Reading) (engine.Reading, *engine.Error) {
+	if m == nil {
+		m = &leadlinev1.Reading{}
+	}
 	r := engine.Reading{
 		Quantity:                  engine.QuantityID(m.GetQuantity()),
-		Value:                     m.GetValue(),
 		HasTime:                   m.GetTime() != nil,
 		Instrument:                engine.InstrumentID(m.GetInstrument()),
-		HasUncertainty:            m != nil && m.RandomStandardUncertainty != nil,
+		HasUncertainty:            m.RandomStandardUncertainty != nil,
 		RandomStandardUncertainty: m.GetRandomStandardUncertainty(),
 		Unit:                      m.GetUnit(),
 		ID:                        engine.ReadingID(m.GetReadingId()),
 		Occasion:                  m.GetOccasion(),
 	}
-	if m == nil || m.Value == nil {
-		return r, refuse(engine.MissingField, "value", "value is missing; give the indication as a number")
+	if err := setIndication(&r, m); err != nil {
+		return r, err
+	}
+	if err := setSamples(&r, m.SampleCount); err != nil {
+		return r, err
 	}
 	if field, most := overLimit(&r); field != "" {
 		return r, refuse(engine.InvalidField, field, fmt.Sprintf("%s is longer than %d bytes; shorten it", field, most))
@@ -197,9 +202,7 @@ func recordedMessage(r *engine.StoredReading) *leadlinev1.RecordedReading {
 		ReceiveTime:    timestamp(r.ReceiveTime),
 		LedgerPosition: uint64(r.Position),
 	}
-	if finite(r.Value) {
-		m.Value = &r.Value
-	}
+	setRecordedIndication(m, &r.Reading)
 	if r.HasCalibration {
 		m.Calibration = calibrationStateMessage(r.Calibration).Enum()
 	}
@@ -228,8 +231,8 @@ func calibrationStateMessage(s engine.CalibrationState) leadlinev1.RecordedReadi
 // refused for something else.
 func detailOf(r *engine.StoredReading) string {
 	detail := r.Detail
-	if !finite(r.Value) && r.Reason != engine.ValueOutOfRange {
-		detail += fmt.Sprintf("; its value is %v", r.Value)
+	if r.Reason != engine.ValueOutOfRange {
+		detail += unwritten(&r.Reading)
 	}
 	u := r.RandomStandardUncertainty
 	if r.HasUncertainty && !finite(u) && r.Reason != engine.RandomUncertaintyInvalid {

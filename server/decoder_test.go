@@ -213,6 +213,13 @@ func TestScannerTakesThePlainShape(t *testing.T) {
 	if _, ok := scanReading("gap", []byte(`{"value":0.83,"time":"2026-03-01T12:00:00Z","reading_id":"µ","unit":"mm","instrument":"calliper-7","occasion":"round 3"}`)); !ok {
 		t.Error("scanner gave up on a single reading")
 	}
+	for _, body := range []string{
+		`{"above":40,"unit":"mm"}`, `{"below":1e-3}`, `{"between":{"lower":18,"upper":20}}`, `{"value":0.83,"sample_count":600}`,
+	} {
+		if _, ok := scanReading("gap", []byte(body)); !ok {
+			t.Errorf("scanner gave up on %s", body)
+		}
+	}
 }
 
 // batchBody is a batch as a gateway of a plant would send it.
@@ -274,6 +281,10 @@ func FuzzDeclareQuantity(f *testing.F) {
 		`{"dynamics":{"linear_trend":{"standard_deviation":0.01,"per":"3600s","slope":{"mean":0.1,"standard_deviation":0.1,"per":"86400s"},"slope_wander":{"standard_deviation":0.01,"per":"86400s"}}}}`,
 		`{"dynamics":{"linear_trend":{"slope":{"mean":0,"standard_deviation":0.1,"per":"0.5s"}}},"tolerance":{"upper":1},"breach_horizon":"86400s"}`,
 		`{"dynamics":{"mean_reverting":{"mean":-25,"standard_deviation":1.5,"half_life":"3600s"}}}`,
+		`{"repeatability":{"standard_deviation":0.02},"outliers":{"probability":0.01,"inflation":10},"scale":"LINEAR"}`,
+		`{"repeatability":{"learned":{"floor":0.01}},"model_check":{"window":100,"objections_per_year":0.01}}`,
+		`{"repeatability":{"learned":{"guess":0.1,"worth":3,"floor":0.01}},"scale":"LOG","step_detection":{"false_alarm_interval":1e4,"on_step":{"widen":0.5}}}`,
+		`{"repeatability":{"standard_deviation":0.02},"model_check":{},"step_detection":{}}`,
 	} {
 		f.Add([]byte(body))
 	}

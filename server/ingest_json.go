@@ -1,6 +1,8 @@
 package server
 
 import (
+	"math"
+	"math/bits"
 	"strconv"
 	"unicode/utf8"
 
@@ -63,6 +65,12 @@ const (
 	sawUnit
 	sawID
 	sawOccasion
+	sawAbove
+	sawBelow
+	sawBetween
+	sawSamples
+
+	sawIndication = sawValue | sawAbove | sawBelow | sawBetween // one of them
 )
 
 func (s *scanner) reading() (r engine.Reading, ok bool) {
@@ -83,10 +91,8 @@ func (s *scanner) reading() (r engine.Reading, ok bool) {
 		if s.token(',') {
 			continue
 		}
-		if !s.token('}') || seen&sawValue == 0 {
-			return r, false
-		}
-		return r, takenAsIs(&r)
+		one := bits.OnesCount(uint(seen&sawIndication)) == 1
+		return r, s.token('}') && one && takenAsIs(&r)
 	}
 }
 
@@ -100,7 +106,27 @@ func (s *scanner) member(r *engine.Reading, name []byte) (bit int, ok bool) {
 		r.HasUncertainty = true
 		r.RandomStandardUncertainty, ok = s.number()
 		return sawUncertainty, ok
+	case "above":
+		r.Extent = engine.ExtentAbove
+		r.Value, ok = s.number()
+		return sawAbove, ok
+	case "below":
+		r.Extent = engine.ExtentBelow
+		r.Value, ok = s.number()
+		return sawBelow, ok
+	case "between":
+		r.Extent = engine.ExtentBetween
+		r.Value, r.Upper, ok = s.between()
+		return sawBetween, ok
+	case "sample_count":
+		r.Samples, ok = s.count()
+		return sawSamples, ok
 	}
+	return s.textMember(r, name)
+}
+
+// textMember reads the value of the named field, which has to be a text.
+func (s *scanner) textMember(r *engine.Reading, name []byte) (bit int, ok bool) {
 	text, ok := s.text()
 	if !ok {
 		return 0, false
@@ -200,6 +226,29 @@ func (s *scanner) number() (float64, bool) {
 	x, err := strconv.ParseFloat(string(s.b[s.i:s.i+n]), 64)
 	s.i += n
 	return x, err == nil && (x != 0 || zero)
+}
+
+// between reads the two limits of an indication, the lower one first.
+func (s *scanner) between() (lower, upper float64, ok bool) {
+	if !s.token('{') || !s.key("lower") {
+		return 0, 0, false
+	}
+	if lower, ok = s.number(); !ok || !s.token(',') || !s.key("upper") {
+		return 0, 0, false
+	}
+	upper, ok = s.number()
+	return lower, upper, ok && s.token('}')
+}
+
+// count reads a whole number from 1, written in digits alone.
+func (s *scanner) count() (uint32, bool) {
+	s.space()
+	start := s.i
+	var n uint64
+	for ; s.i < len(s.b) && s.b[s.i] >= '0' && s.b[s.i] <= '9' && n <= math.MaxUint32; s.i++ {
+		n = 10*n + uint64(s.b[s.i]-'0')
+	}
+	return uint32(n), n > 0 && n <= math.MaxUint32 && s.b[start] != '0'
 }
 
 // appendResults writes the answer to a batch as marshalJSON would.

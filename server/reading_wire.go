@@ -3,6 +3,7 @@ package server
 import (
 	"encoding/binary"
 	"math"
+	"math/bits"
 	"time"
 	"unicode/utf8"
 
@@ -77,9 +78,18 @@ const (
 	tagUnit        = 6<<3 | byte(protowire.BytesType)
 	tagID          = 7<<3 | byte(protowire.BytesType)
 	tagOccasion    = 8<<3 | byte(protowire.BytesType)
+	tagAbove       = 9<<3 | byte(protowire.Fixed64Type)
+	tagBelow       = 10<<3 | byte(protowire.Fixed64Type)
+	tagBetween     = 11<<3 | byte(protowire.BytesType)
+	tagSamples     = 12<<3 | byte(protowire.VarintType)
+	tagLower       = 1<<3 | byte(protowire.Fixed64Type)
+	tagUpper       = 2<<3 | byte(protowire.Fixed64Type)
 	tagSeconds     = 1<<3 | byte(protowire.VarintType)
 	tagNanoseconds = 2<<3 | byte(protowire.VarintType)
 )
+
+// The fields of an indication, as bits by number: a reading has one of them.
+const indicationFields = 1<<(tagValue>>3) | 1<<(tagAbove>>3) | 1<<(tagBelow>>3) | 1<<(tagBetween>>3)
 
 // Bounds of a Timestamp: the years 1 to 9999.
 const (
@@ -175,13 +185,45 @@ func scanWireReading(b []byte, text string, r *engine.Reading) bool {
 		case tagOccasion:
 			r.Occasion = string(w.text())
 		default:
-			return false
+			w.indication(tag, r)
 		}
 		if w.bad {
 			return false
 		}
 	}
-	return takenAsIs(r) && r.Quantity != "" && seen&(1<<(tagValue>>3)) != 0
+	return takenAsIs(r) && r.Quantity != "" && bits.OnesCount(uint(seen&indicationFields)) == 1
+}
+
+// indication reads a field that says what was indicated, other than a value.
+func (w *wireScanner) indication(tag byte, r *engine.Reading) {
+	switch tag {
+	case tagAbove:
+		r.Extent, r.Value = engine.ExtentAbove, w.double()
+	case tagBelow:
+		r.Extent, r.Value = engine.ExtentBelow, w.double()
+	case tagBetween:
+		r.Extent = engine.ExtentBetween
+		r.Value, r.Upper = w.between()
+	case tagSamples:
+		n := w.varint()
+		r.Samples, w.bad = uint32(n), w.bad || n == 0 || n > math.MaxUint32
+	default:
+		w.bad = true
+	}
+}
+
+// between reads the two limits of an indication, the lower one first.
+func (w *wireScanner) between() (lower, upper float64) {
+	m := wireScanner{rest: w.bytes()}
+	const size = 1 + 8
+	if len(m.rest) != 2*size || m.rest[0] != tagLower || m.rest[size] != tagUpper {
+		w.bad = true
+		return 0, 0
+	}
+	m.tag()
+	lower = m.double()
+	m.tag()
+	return lower, m.double()
 }
 
 // wireScanner reads an encoded message; bad says that it could not.

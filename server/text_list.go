@@ -141,7 +141,10 @@ func readingsText(readings []engine.StoredReading, nextPage string) string {
 	w := p.table("TIME", "QUANTITY", "VALUE", "INSTRUMENT", "READING ID", "STATUS", "DETAIL")
 	for i := range readings {
 		r := &readings[i]
-		value := within(shortest(r.Value), r.Unit)
+		value := indicationText(&r.Reading)
+		if r.Samples > 1 {
+			value += fmt.Sprintf(", mean of %d", r.Samples)
+		}
 		if r.HasUncertainty {
 			value += ", u = " + shortest(r.RandomStandardUncertainty)
 		}

@@ -69,7 +69,10 @@ func randomBatch(random *rand.Rand) *leadlinev1.StreamReadingsRequest {
 	for range random.IntN(4) {
 		r := &leadlinev1.Reading{Quantity: pick(), ReadingId: pick()}
 		if some(20) {
-			r.Value = new(math.Ldexp(random.NormFloat64(), random.IntN(40)))
+			indicate(r, random)
+		}
+		if !some(4) {
+			r.SampleCount = new(random.Uint32() >> random.IntN(33))
 		}
 		if some(4) {
 			r.Time = &timestamppb.Timestamp{Seconds: random.Int64() >> random.IntN(64), Nanos: random.Int32() >> random.IntN(32)}
@@ -80,6 +83,47 @@ func randomBatch(random *rand.Rand) *leadlinev1.StreamReadingsRequest {
 		m.Readings = append(m.Readings, r)
 	}
 	return m
+}
+
+// indicate sets one of the fields of an indication, and now and then another too.
+func indicate(r *leadlinev1.Reading, random *rand.Rand) {
+	x := func() *float64 { return new(math.Ldexp(random.NormFloat64(), random.IntN(40))) }
+	switch random.IntN(6) {
+	case 0:
+		r.Above = x()
+	case 1:
+		r.Below = x()
+	case 2:
+		r.Between = &leadlinev1.Reading_Between{Lower: x(), Upper: x()}
+		if random.IntN(8) == 0 {
+			r.Between.Upper = nil
+		}
+	default:
+		r.Value = x()
+	}
+	if random.IntN(20) == 0 {
+		indicate(r, random)
+	}
+}
+
+// TestCodecTakesEveryIndication: were it to give up on one, the answers would still
+// be right and only slow.
+func TestCodecTakesEveryIndication(t *testing.T) {
+	for _, r := range []*leadlinev1.Reading{
+		{Quantity: "gap", Value: new(0.83), SampleCount: new(uint32(600))},
+		{Quantity: "gap", Above: new(40.0)},
+		{Quantity: "gap", Below: new(0.0)},
+		{Quantity: "gap", Between: &leadlinev1.Reading_Between{Lower: new(18.0), Upper: new(20.0)}},
+	} {
+		b, err := proto.Marshal(&leadlinev1.StreamReadingsRequest{Readings: []*leadlinev1.Reading{r}})
+		if err != nil {
+			t.Fatal(err)
+		}
+		if _, ok := scanBatch(b); !ok {
+			t.Errorf("the codec gave up on %v", r)
+		}
+		checkBatch(t, b)
+	}
 }
 
 // TestCodecReadsWhatGeneratedCodeReads compares both on batches at random, as
@@ -108,6 +152,31 @@ func TestCodecReadsWhatGeneratedCodeReads(t *testing.T) {
 	}
 	if plain < 500 {
 		t.Errorf("only %d batches were of the plain shape", plain)
+	}
+}
+
+// TestCorpusThroughTheWire sends each body of the corpus that decodes as a message too:
+// both codecs have to read from it what the JSON says.
+func TestCorpusThroughTheWire(t *testing.T) {
+	for _, c := range readCorpus(t, `"quantity":"gap",`) {
+		body := []byte(`{"readings":[` + c.body + `]}`)
+		want, jsonErr := decodeReadingsStrictly(body)
+		m := new(leadlinev1.PostReadingsRequest)
+		if err := decodeStrict(body, m, false); err != nil {
+			continue // it has no message
+		}
+		b, err := proto.Marshal(&leadlinev1.StreamReadingsRequest{Readings: m.GetReadings()})
+		if err != nil {
+			t.Fatal(err)
+		}
+		checkBatch(t, b)
+		got, err := decodeGenerated(b)
+		if err != nil {
+			t.Fatal(err)
+		}
+		if d := diffBatches(wireBatch{readings: want, err: jsonErr}, got); d != "" {
+			t.Errorf("line %d (-JSON +message)\n%s", c.line, d)
+		}
 	}
 }
 

@@ -146,6 +146,131 @@ func (Distribution_Form) EnumDescriptor() ([]byte, []int) {
 	return file_leadline_v1_belief_proto_rawDescGZIP(), []int{3, 0}
 }
 
+// Result is what the readings say of the declaration.
+type ModelCheck_Result int32
+
+const (
+	// Never sent.
+	ModelCheck_UNSPECIFIED ModelCheck_Result = 0
+	// There are too few readings to say.
+	ModelCheck_TOO_FEW ModelCheck_Result = 1
+	// The readings are as the declaration lets expect.
+	ModelCheck_NO_OBJECTION ModelCheck_Result = 2
+	// The readings scatter more about what was predicted than they should: the
+	// intervals are too narrow.
+	ModelCheck_INTERVALS_TOO_NARROW ModelCheck_Result = 3
+	// The readings scatter less about what was predicted than they should: the
+	// intervals are too wide.
+	ModelCheck_INTERVALS_TOO_WIDE ModelCheck_Result = 4
+	// Readings that follow each other err alike: the value moves more than was
+	// declared, or the noise is correlated. The explanation compares the two.
+	ModelCheck_SERIAL ModelCheck_Result = 5
+	// The readings contradict the prior.
+	ModelCheck_PRIOR_CONFLICT ModelCheck_Result = 6
+)
+
+// Enum value maps for ModelCheck_Result.
+var (
+	ModelCheck_Result_name = map[int32]string{
+		0: "UNSPECIFIED",
+		1: "TOO_FEW",
+		2: "NO_OBJECTION",
+		3: "INTERVALS_TOO_NARROW",
+		4: "INTERVALS_TOO_WIDE",
+		5: "SERIAL",
+		6: "PRIOR_CONFLICT",
+	}
+	ModelCheck_Result_value = map[string]int32{
+		"UNSPECIFIED":          0,
+		"TOO_FEW":              1,
+		"NO_OBJECTION":         2,
+		"INTERVALS_TOO_NARROW": 3,
+		"INTERVALS_TOO_WIDE":   4,
+		"SERIAL":               5,
+		"PRIOR_CONFLICT":       6,
+	}
+)
+
+func (x ModelCheck_Result) Enum() *ModelCheck_Result {
+	p := new(ModelCheck_Result)
+	*p = x
+	return p
+}
+
+func (x ModelCheck_Result) String() string {
+	return protoimpl.X.EnumStringOf(x.Descriptor(), protoreflect.EnumNumber(x))
+}
+
+func (ModelCheck_Result) Descriptor() protoreflect.EnumDescriptor {
+	return file_leadline_v1_belief_proto_enumTypes[2].Descriptor()
+}
+
+func (ModelCheck_Result) Type() protoreflect.EnumType {
+	return &file_leadline_v1_belief_proto_enumTypes[2]
+}
+
+func (x ModelCheck_Result) Number() protoreflect.EnumNumber {
+	return protoreflect.EnumNumber(x)
+}
+
+// Deprecated: Use ModelCheck_Result.Descriptor instead.
+func (ModelCheck_Result) EnumDescriptor() ([]byte, []int) {
+	return file_leadline_v1_belief_proto_rawDescGZIP(), []int{7, 0}
+}
+
+// Direction is a direction of a step.
+type StepEvent_Direction int32
+
+const (
+	// Never sent.
+	StepEvent_UNSPECIFIED StepEvent_Direction = 0
+	// The readings lie higher than was predicted.
+	StepEvent_UP StepEvent_Direction = 1
+	// The readings lie lower than was predicted.
+	StepEvent_DOWN StepEvent_Direction = 2
+)
+
+// Enum value maps for StepEvent_Direction.
+var (
+	StepEvent_Direction_name = map[int32]string{
+		0: "UNSPECIFIED",
+		1: "UP",
+		2: "DOWN",
+	}
+	StepEvent_Direction_value = map[string]int32{
+		"UNSPECIFIED": 0,
+		"UP":          1,
+		"DOWN":        2,
+	}
+)
+
+func (x StepEvent_Direction) Enum() *StepEvent_Direction {
+	p := new(StepEvent_Direction)
+	*p = x
+	return p
+}
+
+func (x StepEvent_Direction) String() string {
+	return protoimpl.X.EnumStringOf(x.Descriptor(), protoreflect.EnumNumber(x))
+}
+
+func (StepEvent_Direction) Descriptor() protoreflect.EnumDescriptor {
+	return file_leadline_v1_belief_proto_enumTypes[3].Descriptor()
+}
+
+func (StepEvent_Direction) Type() protoreflect.EnumType {
+	return &file_leadline_v1_belief_proto_enumTypes[3]
+}
+
+func (x StepEvent_Direction) Number() protoreflect.EnumNumber {
+	return protoreflect.EnumNumber(x)
+}
+
+// Deprecated: Use StepEvent_Direction.Descriptor instead.
+func (StepEvent_Direction) EnumDescriptor() ([]byte, []int) {
+	return file_leadline_v1_belief_proto_rawDescGZIP(), []int{8, 0}
+}
+
 // Source is a cause of uncertainty.
 type Budget_Source int32
 
@@ -219,11 +344,11 @@ func (x Budget_Source) String() string {
 }
 
 func (Budget_Source) Descriptor() protoreflect.EnumDescriptor {
-	return file_leadline_v1_belief_proto_enumTypes[2].Descriptor()
+	return file_leadline_v1_belief_proto_enumTypes[4].Descriptor()
 }
 
 func (Budget_Source) Type() protoreflect.EnumType {
-	return &file_leadline_v1_belief_proto_enumTypes[2]
+	return &file_leadline_v1_belief_proto_enumTypes[4]
 }
 
 func (x Budget_Source) Number() protoreflect.EnumNumber {
@@ -232,7 +357,7 @@ func (x Budget_Source) Number() protoreflect.EnumNumber {
 
 // Deprecated: Use Budget_Source.Descriptor instead.
 func (Budget_Source) EnumDescriptor() ([]byte, []int) {
-	return file_leadline_v1_belief_proto_rawDescGZIP(), []int{8, 0}
+	return file_leadline_v1_belief_proto_rawDescGZIP(), []int{10, 0}
 }
 
 // Belief is the distribution of a quantity's true value at a time, given its
@@ -281,6 +406,23 @@ type Belief struct {
 	// Time of the latest renewal of the part that the belief takes in; absent if there is
 	// none. Level and slope owe nothing to readings before it.
 	RenewalTime *timestamppb.Timestamp `protobuf:"bytes,26,opt,name=renewal_time,json=renewalTime,proto3" json:"renewal_time,omitempty"`
+	// Geometric mean of the true value, in the quantity's unit: its median. Only under
+	// the scale LOG, where mean and standard_deviation are those of the value itself.
+	GeometricMean *float64 `protobuf:"fixed64,27,opt,name=geometric_mean,json=geometricMean,proto3,oneof" json:"geometric_mean,omitempty"`
+	// Geometric standard deviation of the true value: a factor, above 1. Only under the
+	// scale LOG.
+	GeometricStandardDeviation *float64 `protobuf:"fixed64,28,opt,name=geometric_standard_deviation,json=geometricStandardDeviation,proto3,oneof" json:"geometric_standard_deviation,omitempty"`
+	// LOG under that scale; else absent.
+	Scale *Quantity_Scale `protobuf:"varint,29,opt,name=scale,proto3,enum=leadline.v1.Quantity_Scale,oneof" json:"scale,omitempty"`
+	// Method by which the belief is held: SUMS (exact sums), FILTER (a Kalman filter),
+	// BANK (filters over a learned repeatability), COUNTS (of what was displayed) or
+	// GRID (a density on points).
+	Method string `protobuf:"bytes,30,opt,name=method,proto3" json:"method,omitempty"`
+	// How the last reading agreed with what those before it predicted; absent if there
+	// is none.
+	LastReading *Belief_LastReading `protobuf:"bytes,31,opt,name=last_reading,json=lastReading,proto3" json:"last_reading,omitempty"`
+	// How the readings agree with the declaration; GetModelCheck tells more.
+	ModelCheck *ModelCheck `protobuf:"bytes,32,opt,name=model_check,json=modelCheck,proto3" json:"model_check,omitempty"`
 	// How many applied readings the belief rests on.
 	ReadingCount uint32 `protobuf:"varint,13,opt,name=reading_count,json=readingCount,proto3" json:"reading_count,omitempty"`
 	// Time of the last of them; absent if there is none.
@@ -460,6 +602,48 @@ func (x *Belief) GetFlagged() *Belief_Flagged {
 func (x *Belief) GetRenewalTime() *timestamppb.Timestamp {
 	if x != nil {
 		return x.RenewalTime
+	}
+	return nil
+}
+
+func (x *Belief) GetGeometricMean() float64 {
+	if x != nil && x.GeometricMean != nil {
+		return *x.GeometricMean
+	}
+	return 0
+}
+
+func (x *Belief) GetGeometricStandardDeviation() float64 {
+	if x != nil && x.GeometricStandardDeviation != nil {
+		return *x.GeometricStandardDeviation
+	}
+	return 0
+}
+
+func (x *Belief) GetScale() Quantity_Scale {
+	if x != nil && x.Scale != nil {
+		return *x.Scale
+	}
+	return Quantity_UNSPECIFIED
+}
+
+func (x *Belief) GetMethod() string {
+	if x != nil {
+		return x.Method
+	}
+	return ""
+}
+
+func (x *Belief) GetLastReading() *Belief_LastReading {
+	if x != nil {
+		return x.LastReading
+	}
+	return nil
+}
+
+func (x *Belief) GetModelCheck() *ModelCheck {
+	if x != nil {
+		return x.ModelCheck
 	}
 	return nil
 }
@@ -955,6 +1139,281 @@ func (x *ReferenceBelief) GetStandardDeviation() float64 {
 	return 0
 }
 
+// ModelCheck tells how the readings agree with the declaration. Each applied reading
+// gets a score: the standard normal quantile of the probability, as the readings
+// before it predicted, of a reading below it. If the declaration is right, the
+// scores are independent and standard normal. They are looked at a window at a time,
+// so that a right declaration meets with no more than the declared number of
+// objections in a year, however often it is read.
+type ModelCheck struct {
+	state protoimpl.MessageState `protogen:"open.v1"`
+	// Result: the gravest objection, or that there is none.
+	Result ModelCheck_Result `protobuf:"varint,1,opt,name=result,proto3,enum=leadline.v1.ModelCheck_Result" json:"result,omitempty"`
+	// All objections in force, the gravest first.
+	Objections []ModelCheck_Result `protobuf:"varint,2,rep,packed,name=objections,proto3,enum=leadline.v1.ModelCheck_Result" json:"objections,omitempty"`
+	// How many readings have a score.
+	ScoredCount uint32 `protobuf:"varint,3,opt,name=scored_count,json=scoredCount,proto3" json:"scored_count,omitempty"`
+	// Share of the scored readings that lay in the central half of what was predicted:
+	// 0.5 if the declaration is right. Absent without a scored reading, as are the next
+	// two.
+	Coverage_50 *float64 `protobuf:"fixed64,4,opt,name=coverage_50,json=coverage50,proto3,oneof" json:"coverage_50,omitempty"`
+	// Share of the scored readings that lay in the central 95 per cent of what was
+	// predicted.
+	Coverage_95 *float64 `protobuf:"fixed64,5,opt,name=coverage_95,json=coverage95,proto3,oneof" json:"coverage_95,omitempty"`
+	// Mean of the squared scores: 1 if the declaration is right, less where the readings
+	// lie closer to what was predicted.
+	MeanSquaredNormalScore *float64 `protobuf:"fixed64,6,opt,name=mean_squared_normal_score,json=meanSquaredNormalScore,proto3,oneof" json:"mean_squared_normal_score,omitempty"`
+	// How many readings had a tail probability below 0.0001.
+	OutlyingCount uint32 `protobuf:"varint,7,opt,name=outlying_count,json=outlyingCount,proto3" json:"outlying_count,omitempty"`
+	// How many steps the readings show.
+	StepCount uint32 `protobuf:"varint,8,opt,name=step_count,json=stepCount,proto3" json:"step_count,omitempty"`
+	// The last of the steps; absent if there is none.
+	LastStep *ModelCheck_LastStep `protobuf:"bytes,9,opt,name=last_step,json=lastStep,proto3" json:"last_step,omitempty"`
+	// The tests of the last look, with what each would object to.
+	Tests []*ModelCheck_Test `protobuf:"bytes,10,rep,name=tests,proto3" json:"tests,omitempty"`
+	// ID of the quantity. Absent within a belief, as is all that follows.
+	Quantity *string `protobuf:"bytes,11,opt,name=quantity,proto3,oneof" json:"quantity,omitempty"`
+	// How many scored readings are looked at together.
+	Window *uint32 `protobuf:"varint,12,opt,name=window,proto3,oneof" json:"window,omitempty"`
+	// Correlation of the scores with those before them: 0 if the declaration is right.
+	// Absent without scored readings enough.
+	Lag_1 *float64 `protobuf:"fixed64,13,opt,name=lag_1,json=lag1,proto3,oneof" json:"lag_1,omitempty"`
+	// The sums by which steps are found.
+	Cusum *ModelCheck_Cusum `protobuf:"bytes,14,opt,name=cusum,proto3" json:"cusum,omitempty"`
+	// Three explanations of the readings of the last window; absent where there are too
+	// few, and where the method gives none.
+	Explanation   *ModelCheck_Explanation `protobuf:"bytes,15,opt,name=explanation,proto3" json:"explanation,omitempty"`
+	unknownFields protoimpl.UnknownFields
+	sizeCache     protoimpl.SizeCache
+}
+
+func (x *ModelCheck) Reset() {
+	*x = ModelCheck{}
+	mi := &file_leadline_v1_belief_proto_msgTypes[7]
+	ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
+	ms.StoreMessageInfo(mi)
+}
+
+func (x *ModelCheck) String() string {
+	return protoimpl.X.MessageStringOf(x)
+}
+
+func (*ModelCheck) ProtoMessage() {}
+
+func (x *ModelCheck) ProtoReflect() protoreflect.Message {
+	mi := &file_leadline_v1_belief_proto_msgTypes[7]
+	if x != nil {
+		ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
+		if ms.LoadMessageInfo() == nil {
+			ms.StoreMessageInfo(mi)
+		}
+		return ms
+	}
+	return mi.MessageOf(x)
+}
+
+// Deprecated: Use ModelCheck.ProtoReflect.Descriptor instead.
+func (*ModelCheck) Descriptor() ([]byte, []int) {
+	return file_leadline_v1_belief_proto_rawDescGZIP(), []int{7}
+}
+
+func (x *ModelCheck) GetResult() ModelCheck_Result {
+	if x != nil {
+		return x.Result
+	}
+	return ModelCheck_UNSPECIFIED
+}
+
+func (x *ModelCheck) GetObjections() []ModelCheck_Result {
+	if x != nil {
+		return x.Objections
+	}
+	return nil
+}
+
+func (x *ModelCheck) GetScoredCount() uint32 {
+	if x != nil {
+		return x.ScoredCount
+	}
+	return 0
+}
+
+func (x *ModelCheck) GetCoverage_50() float64 {
+	if x != nil && x.Coverage_50 != nil {
+		return *x.Coverage_50
+	}
+	return 0
+}
+
+func (x *ModelCheck) GetCoverage_95() float64 {
+	if x != nil && x.Coverage_95 != nil {
+		return *x.Coverage_95
+	}
+	return 0
+}
+
+func (x *ModelCheck) GetMeanSquaredNormalScore() float64 {
+	if x != nil && x.MeanSquaredNormalScore != nil {
+		return *x.MeanSquaredNormalScore
+	}
+	return 0
+}
+
+func (x *ModelCheck) GetOutlyingCount() uint32 {
+	if x != nil {
+		return x.OutlyingCount
+	}
+	return 0
+}
+
+func (x *ModelCheck) GetStepCount() uint32 {
+	if x != nil {
+		return x.StepCount
+	}
+	return 0
+}
+
+func (x *ModelCheck) GetLastStep() *ModelCheck_LastStep {
+	if x != nil {
+		return x.LastStep
+	}
+	return nil
+}
+
+func (x *ModelCheck) GetTests() []*ModelCheck_Test {
+	if x != nil {
+		return x.Tests
+	}
+	return nil
+}
+
+func (x *ModelCheck) GetQuantity() string {
+	if x != nil && x.Quantity != nil {
+		return *x.Quantity
+	}
+	return ""
+}
+
+func (x *ModelCheck) GetWindow() uint32 {
+	if x != nil && x.Window != nil {
+		return *x.Window
+	}
+	return 0
+}
+
+func (x *ModelCheck) GetLag_1() float64 {
+	if x != nil && x.Lag_1 != nil {
+		return *x.Lag_1
+	}
+	return 0
+}
+
+func (x *ModelCheck) GetCusum() *ModelCheck_Cusum {
+	if x != nil {
+		return x.Cusum
+	}
+	return nil
+}
+
+func (x *ModelCheck) GetExplanation() *ModelCheck_Explanation {
+	if x != nil {
+		return x.Explanation
+	}
+	return nil
+}
+
+// StepEvent is a step that was found, as the ledger holds it.
+type StepEvent struct {
+	state protoimpl.MessageState `protogen:"open.v1"`
+	// Time of the reading at which it was found.
+	Time *timestamppb.Timestamp `protobuf:"bytes,1,opt,name=time,proto3" json:"time,omitempty"`
+	// Time of the reading after which it began to show.
+	Since *timestamppb.Timestamp `protobuf:"bytes,2,opt,name=since,proto3" json:"since,omitempty"`
+	// Direction of the step.
+	Direction StepEvent_Direction `protobuf:"varint,3,opt,name=direction,proto3,enum=leadline.v1.StepEvent_Direction" json:"direction,omitempty"`
+	// Standard deviation by which the belief was widened, in the quantity's unit; 0, it
+	// was not.
+	Widen float64 `protobuf:"fixed64,4,opt,name=widen,proto3" json:"widen,omitempty"`
+	// Position of its record in the ledger.
+	LedgerPosition uint64 `protobuf:"varint,5,opt,name=ledger_position,json=ledgerPosition,proto3" json:"ledger_position,omitempty"`
+	// When it was recorded.
+	CreateTime    *timestamppb.Timestamp `protobuf:"bytes,6,opt,name=create_time,json=createTime,proto3" json:"create_time,omitempty"`
+	unknownFields protoimpl.UnknownFields
+	sizeCache     protoimpl.SizeCache
+}
+
+func (x *StepEvent) Reset() {
+	*x = StepEvent{}
+	mi := &file_leadline_v1_belief_proto_msgTypes[8]
+	ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
+	ms.StoreMessageInfo(mi)
+}
+
+func (x *StepEvent) String() string {
+	return protoimpl.X.MessageStringOf(x)
+}
+
+func (*StepEvent) ProtoMessage() {}
+
+func (x *StepEvent) ProtoReflect() protoreflect.Message {
+	mi := &file_leadline_v1_belief_proto_msgTypes[8]
+	if x != nil {
+		ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
+		if ms.LoadMessageInfo() == nil {
+			ms.StoreMessageInfo(mi)
+		}
+		return ms
+	}
+	return mi.MessageOf(x)
+}
+
+// Deprecated: Use StepEvent.ProtoReflect.Descriptor instead.
+func (*StepEvent) Descriptor() ([]byte, []int) {
+	return file_leadline_v1_belief_proto_rawDescGZIP(), []int{8}
+}
+
+func (x *StepEvent) GetTime() *timestamppb.Timestamp {
+	if x != nil {
+		return x.Time
+	}
+	return nil
+}
+
+func (x *StepEvent) GetSince() *timestamppb.Timestamp {
+	if x != nil {
+		return x.Since
+	}
+	return nil
+}
+
+func (x *StepEvent) GetDirection() StepEvent_Direction {
+	if x != nil {
+		return x.Direction
+	}
+	return StepEvent_UNSPECIFIED
+}
+
+func (x *StepEvent) GetWiden() float64 {
+	if x != nil {
+		return x.Widen
+	}
+	return 0
+}
+
+func (x *StepEvent) GetLedgerPosition() uint64 {
+	if x != nil {
+		return x.LedgerPosition
+	}
+	return 0
+}
+
+func (x *StepEvent) GetCreateTime() *timestamppb.Timestamp {
+	if x != nil {
+		return x.CreateTime
+	}
+	return nil
+}
+
 // Forecast is what a belief says of the time to come, without further readings.
 type Forecast struct {
 	state protoimpl.MessageState `protogen:"open.v1"`
@@ -985,7 +1444,7 @@ type Forecast struct {
 
 func (x *Forecast) Reset() {
 	*x = Forecast{}
-	mi := &file_leadline_v1_belief_proto_msgTypes[7]
+	mi := &file_leadline_v1_belief_proto_msgTypes[9]
 	ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
 	ms.StoreMessageInfo(mi)
 }
@@ -997,7 +1456,7 @@ func (x *Forecast) String() string {
 func (*Forecast) ProtoMessage() {}
 
 func (x *Forecast) ProtoReflect() protoreflect.Message {
-	mi := &file_leadline_v1_belief_proto_msgTypes[7]
+	mi := &file_leadline_v1_belief_proto_msgTypes[9]
 	if x != nil {
 		ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
 		if ms.LoadMessageInfo() == nil {
@@ -1010,7 +1469,7 @@ func (x *Forecast) ProtoReflect() protoreflect.Message {
 
 // Deprecated: Use Forecast.ProtoReflect.Descriptor instead.
 func (*Forecast) Descriptor() ([]byte, []int) {
-	return file_leadline_v1_belief_proto_rawDescGZIP(), []int{7}
+	return file_leadline_v1_belief_proto_rawDescGZIP(), []int{9}
 }
 
 func (x *Forecast) GetQuantity() string {
@@ -1113,7 +1572,7 @@ type Budget struct {
 
 func (x *Budget) Reset() {
 	*x = Budget{}
-	mi := &file_leadline_v1_belief_proto_msgTypes[8]
+	mi := &file_leadline_v1_belief_proto_msgTypes[10]
 	ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
 	ms.StoreMessageInfo(mi)
 }
@@ -1125,7 +1584,7 @@ func (x *Budget) String() string {
 func (*Budget) ProtoMessage() {}
 
 func (x *Budget) ProtoReflect() protoreflect.Message {
-	mi := &file_leadline_v1_belief_proto_msgTypes[8]
+	mi := &file_leadline_v1_belief_proto_msgTypes[10]
 	if x != nil {
 		ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
 		if ms.LoadMessageInfo() == nil {
@@ -1138,7 +1597,7 @@ func (x *Budget) ProtoReflect() protoreflect.Message {
 
 // Deprecated: Use Budget.ProtoReflect.Descriptor instead.
 func (*Budget) Descriptor() ([]byte, []int) {
-	return file_leadline_v1_belief_proto_rawDescGZIP(), []int{8}
+	return file_leadline_v1_belief_proto_rawDescGZIP(), []int{10}
 }
 
 func (x *Budget) GetQuantity() string {
@@ -1233,7 +1692,7 @@ type GetBeliefRequest struct {
 
 func (x *GetBeliefRequest) Reset() {
 	*x = GetBeliefRequest{}
-	mi := &file_leadline_v1_belief_proto_msgTypes[9]
+	mi := &file_leadline_v1_belief_proto_msgTypes[11]
 	ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
 	ms.StoreMessageInfo(mi)
 }
@@ -1245,7 +1704,7 @@ func (x *GetBeliefRequest) String() string {
 func (*GetBeliefRequest) ProtoMessage() {}
 
 func (x *GetBeliefRequest) ProtoReflect() protoreflect.Message {
-	mi := &file_leadline_v1_belief_proto_msgTypes[9]
+	mi := &file_leadline_v1_belief_proto_msgTypes[11]
 	if x != nil {
 		ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
 		if ms.LoadMessageInfo() == nil {
@@ -1258,7 +1717,7 @@ func (x *GetBeliefRequest) ProtoReflect() protoreflect.Message {
 
 // Deprecated: Use GetBeliefRequest.ProtoReflect.Descriptor instead.
 func (*GetBeliefRequest) Descriptor() ([]byte, []int) {
-	return file_leadline_v1_belief_proto_rawDescGZIP(), []int{9}
+	return file_leadline_v1_belief_proto_rawDescGZIP(), []int{11}
 }
 
 func (x *GetBeliefRequest) GetQuantity() string {
@@ -1314,7 +1773,7 @@ type ForecastBeliefRequest struct {
 
 func (x *ForecastBeliefRequest) Reset() {
 	*x = ForecastBeliefRequest{}
-	mi := &file_leadline_v1_belief_proto_msgTypes[10]
+	mi := &file_leadline_v1_belief_proto_msgTypes[12]
 	ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
 	ms.StoreMessageInfo(mi)
 }
@@ -1326,7 +1785,7 @@ func (x *ForecastBeliefRequest) String() string {
 func (*ForecastBeliefRequest) ProtoMessage() {}
 
 func (x *ForecastBeliefRequest) ProtoReflect() protoreflect.Message {
-	mi := &file_leadline_v1_belief_proto_msgTypes[10]
+	mi := &file_leadline_v1_belief_proto_msgTypes[12]
 	if x != nil {
 		ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
 		if ms.LoadMessageInfo() == nil {
@@ -1339,7 +1798,7 @@ func (x *ForecastBeliefRequest) ProtoReflect() protoreflect.Message {
 
 // Deprecated: Use ForecastBeliefRequest.ProtoReflect.Descriptor instead.
 func (*ForecastBeliefRequest) Descriptor() ([]byte, []int) {
-	return file_leadline_v1_belief_proto_rawDescGZIP(), []int{10}
+	return file_leadline_v1_belief_proto_rawDescGZIP(), []int{12}
 }
 
 func (x *ForecastBeliefRequest) GetQuantity() string {
@@ -1383,7 +1842,7 @@ type GetBudgetRequest struct {
 
 func (x *GetBudgetRequest) Reset() {
 	*x = GetBudgetRequest{}
-	mi := &file_leadline_v1_belief_proto_msgTypes[11]
+	mi := &file_leadline_v1_belief_proto_msgTypes[13]
 	ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
 	ms.StoreMessageInfo(mi)
 }
@@ -1395,7 +1854,7 @@ func (x *GetBudgetRequest) String() string {
 func (*GetBudgetRequest) ProtoMessage() {}
 
 func (x *GetBudgetRequest) ProtoReflect() protoreflect.Message {
-	mi := &file_leadline_v1_belief_proto_msgTypes[11]
+	mi := &file_leadline_v1_belief_proto_msgTypes[13]
 	if x != nil {
 		ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
 		if ms.LoadMessageInfo() == nil {
@@ -1408,7 +1867,7 @@ func (x *GetBudgetRequest) ProtoReflect() protoreflect.Message {
 
 // Deprecated: Use GetBudgetRequest.ProtoReflect.Descriptor instead.
 func (*GetBudgetRequest) Descriptor() ([]byte, []int) {
-	return file_leadline_v1_belief_proto_rawDescGZIP(), []int{11}
+	return file_leadline_v1_belief_proto_rawDescGZIP(), []int{13}
 }
 
 func (x *GetBudgetRequest) GetQuantity() string {
@@ -1421,6 +1880,144 @@ func (x *GetBudgetRequest) GetQuantity() string {
 func (x *GetBudgetRequest) GetTime() *timestamppb.Timestamp {
 	if x != nil {
 		return x.Time
+	}
+	return nil
+}
+
+// GetModelCheckRequest names a quantity.
+type GetModelCheckRequest struct {
+	state protoimpl.MessageState `protogen:"open.v1"`
+	// ID of the quantity.
+	Quantity      string `protobuf:"bytes,1,opt,name=quantity,proto3" json:"quantity,omitempty"`
+	unknownFields protoimpl.UnknownFields
+	sizeCache     protoimpl.SizeCache
+}
+
+func (x *GetModelCheckRequest) Reset() {
+	*x = GetModelCheckRequest{}
+	mi := &file_leadline_v1_belief_proto_msgTypes[14]
+	ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
+	ms.StoreMessageInfo(mi)
+}
+
+func (x *GetModelCheckRequest) String() string {
+	return protoimpl.X.MessageStringOf(x)
+}
+
+func (*GetModelCheckRequest) ProtoMessage() {}
+
+func (x *GetModelCheckRequest) ProtoReflect() protoreflect.Message {
+	mi := &file_leadline_v1_belief_proto_msgTypes[14]
+	if x != nil {
+		ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
+		if ms.LoadMessageInfo() == nil {
+			ms.StoreMessageInfo(mi)
+		}
+		return ms
+	}
+	return mi.MessageOf(x)
+}
+
+// Deprecated: Use GetModelCheckRequest.ProtoReflect.Descriptor instead.
+func (*GetModelCheckRequest) Descriptor() ([]byte, []int) {
+	return file_leadline_v1_belief_proto_rawDescGZIP(), []int{14}
+}
+
+func (x *GetModelCheckRequest) GetQuantity() string {
+	if x != nil {
+		return x.Quantity
+	}
+	return ""
+}
+
+// ListStepsRequest names a quantity.
+type ListStepsRequest struct {
+	state protoimpl.MessageState `protogen:"open.v1"`
+	// ID of the quantity.
+	Quantity      string `protobuf:"bytes,1,opt,name=quantity,proto3" json:"quantity,omitempty"`
+	unknownFields protoimpl.UnknownFields
+	sizeCache     protoimpl.SizeCache
+}
+
+func (x *ListStepsRequest) Reset() {
+	*x = ListStepsRequest{}
+	mi := &file_leadline_v1_belief_proto_msgTypes[15]
+	ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
+	ms.StoreMessageInfo(mi)
+}
+
+func (x *ListStepsRequest) String() string {
+	return protoimpl.X.MessageStringOf(x)
+}
+
+func (*ListStepsRequest) ProtoMessage() {}
+
+func (x *ListStepsRequest) ProtoReflect() protoreflect.Message {
+	mi := &file_leadline_v1_belief_proto_msgTypes[15]
+	if x != nil {
+		ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
+		if ms.LoadMessageInfo() == nil {
+			ms.StoreMessageInfo(mi)
+		}
+		return ms
+	}
+	return mi.MessageOf(x)
+}
+
+// Deprecated: Use ListStepsRequest.ProtoReflect.Descriptor instead.
+func (*ListStepsRequest) Descriptor() ([]byte, []int) {
+	return file_leadline_v1_belief_proto_rawDescGZIP(), []int{15}
+}
+
+func (x *ListStepsRequest) GetQuantity() string {
+	if x != nil {
+		return x.Quantity
+	}
+	return ""
+}
+
+// ListStepsResponse is all steps that were found in the readings of a quantity.
+type ListStepsResponse struct {
+	state protoimpl.MessageState `protogen:"open.v1"`
+	// Steps, the oldest first.
+	Steps         []*StepEvent `protobuf:"bytes,1,rep,name=steps,proto3" json:"steps,omitempty"`
+	unknownFields protoimpl.UnknownFields
+	sizeCache     protoimpl.SizeCache
+}
+
+func (x *ListStepsResponse) Reset() {
+	*x = ListStepsResponse{}
+	mi := &file_leadline_v1_belief_proto_msgTypes[16]
+	ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
+	ms.StoreMessageInfo(mi)
+}
+
+func (x *ListStepsResponse) String() string {
+	return protoimpl.X.MessageStringOf(x)
+}
+
+func (*ListStepsResponse) ProtoMessage() {}
+
+func (x *ListStepsResponse) ProtoReflect() protoreflect.Message {
+	mi := &file_leadline_v1_belief_proto_msgTypes[16]
+	if x != nil {
+		ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
+		if ms.LoadMessageInfo() == nil {
+			ms.StoreMessageInfo(mi)
+		}
+		return ms
+	}
+	return mi.MessageOf(x)
+}
+
+// Deprecated: Use ListStepsResponse.ProtoReflect.Descriptor instead.
+func (*ListStepsResponse) Descriptor() ([]byte, []int) {
+	return file_leadline_v1_belief_proto_rawDescGZIP(), []int{16}
+}
+
+func (x *ListStepsResponse) GetSteps() []*StepEvent {
+	if x != nil {
+		return x.Steps
 	}
 	return nil
 }
@@ -1445,7 +2042,7 @@ type ListBeliefsRequest struct {
 
 func (x *ListBeliefsRequest) Reset() {
 	*x = ListBeliefsRequest{}
-	mi := &file_leadline_v1_belief_proto_msgTypes[12]
+	mi := &file_leadline_v1_belief_proto_msgTypes[17]
 	ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
 	ms.StoreMessageInfo(mi)
 }
@@ -1457,7 +2054,7 @@ func (x *ListBeliefsRequest) String() string {
 func (*ListBeliefsRequest) ProtoMessage() {}
 
 func (x *ListBeliefsRequest) ProtoReflect() protoreflect.Message {
-	mi := &file_leadline_v1_belief_proto_msgTypes[12]
+	mi := &file_leadline_v1_belief_proto_msgTypes[17]
 	if x != nil {
 		ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
 		if ms.LoadMessageInfo() == nil {
@@ -1470,7 +2067,7 @@ func (x *ListBeliefsRequest) ProtoReflect() protoreflect.Message {
 
 // Deprecated: Use ListBeliefsRequest.ProtoReflect.Descriptor instead.
 func (*ListBeliefsRequest) Descriptor() ([]byte, []int) {
-	return file_leadline_v1_belief_proto_rawDescGZIP(), []int{12}
+	return file_leadline_v1_belief_proto_rawDescGZIP(), []int{17}
 }
 
 func (x *ListBeliefsRequest) GetPrefix() string {
@@ -1521,7 +2118,7 @@ type ListBeliefsResponse struct {
 
 func (x *ListBeliefsResponse) Reset() {
 	*x = ListBeliefsResponse{}
-	mi := &file_leadline_v1_belief_proto_msgTypes[13]
+	mi := &file_leadline_v1_belief_proto_msgTypes[18]
 	ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
 	ms.StoreMessageInfo(mi)
 }
@@ -1533,7 +2130,7 @@ func (x *ListBeliefsResponse) String() string {
 func (*ListBeliefsResponse) ProtoMessage() {}
 
 func (x *ListBeliefsResponse) ProtoReflect() protoreflect.Message {
-	mi := &file_leadline_v1_belief_proto_msgTypes[13]
+	mi := &file_leadline_v1_belief_proto_msgTypes[18]
 	if x != nil {
 		ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
 		if ms.LoadMessageInfo() == nil {
@@ -1546,7 +2143,7 @@ func (x *ListBeliefsResponse) ProtoReflect() protoreflect.Message {
 
 // Deprecated: Use ListBeliefsResponse.ProtoReflect.Descriptor instead.
 func (*ListBeliefsResponse) Descriptor() ([]byte, []int) {
-	return file_leadline_v1_belief_proto_rawDescGZIP(), []int{13}
+	return file_leadline_v1_belief_proto_rawDescGZIP(), []int{18}
 }
 
 func (x *ListBeliefsResponse) GetBeliefs() []*Belief {
@@ -1574,7 +2171,7 @@ type WatchBeliefsRequest struct {
 
 func (x *WatchBeliefsRequest) Reset() {
 	*x = WatchBeliefsRequest{}
-	mi := &file_leadline_v1_belief_proto_msgTypes[14]
+	mi := &file_leadline_v1_belief_proto_msgTypes[19]
 	ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
 	ms.StoreMessageInfo(mi)
 }
@@ -1586,7 +2183,7 @@ func (x *WatchBeliefsRequest) String() string {
 func (*WatchBeliefsRequest) ProtoMessage() {}
 
 func (x *WatchBeliefsRequest) ProtoReflect() protoreflect.Message {
-	mi := &file_leadline_v1_belief_proto_msgTypes[14]
+	mi := &file_leadline_v1_belief_proto_msgTypes[19]
 	if x != nil {
 		ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
 		if ms.LoadMessageInfo() == nil {
@@ -1599,7 +2196,7 @@ func (x *WatchBeliefsRequest) ProtoReflect() protoreflect.Message {
 
 // Deprecated: Use WatchBeliefsRequest.ProtoReflect.Descriptor instead.
 func (*WatchBeliefsRequest) Descriptor() ([]byte, []int) {
-	return file_leadline_v1_belief_proto_rawDescGZIP(), []int{14}
+	return file_leadline_v1_belief_proto_rawDescGZIP(), []int{19}
 }
 
 func (x *WatchBeliefsRequest) GetPrefix() string {
@@ -1625,7 +2222,7 @@ type WatchBeliefsResponse struct {
 
 func (x *WatchBeliefsResponse) Reset() {
 	*x = WatchBeliefsResponse{}
-	mi := &file_leadline_v1_belief_proto_msgTypes[15]
+	mi := &file_leadline_v1_belief_proto_msgTypes[20]
 	ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
 	ms.StoreMessageInfo(mi)
 }
@@ -1637,7 +2234,7 @@ func (x *WatchBeliefsResponse) String() string {
 func (*WatchBeliefsResponse) ProtoMessage() {}
 
 func (x *WatchBeliefsResponse) ProtoReflect() protoreflect.Message {
-	mi := &file_leadline_v1_belief_proto_msgTypes[15]
+	mi := &file_leadline_v1_belief_proto_msgTypes[20]
 	if x != nil {
 		ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
 		if ms.LoadMessageInfo() == nil {
@@ -1650,7 +2247,7 @@ func (x *WatchBeliefsResponse) ProtoReflect() protoreflect.Message {
 
 // Deprecated: Use WatchBeliefsResponse.ProtoReflect.Descriptor instead.
 func (*WatchBeliefsResponse) Descriptor() ([]byte, []int) {
-	return file_leadline_v1_belief_proto_rawDescGZIP(), []int{15}
+	return file_leadline_v1_belief_proto_rawDescGZIP(), []int{20}
 }
 
 func (x *WatchBeliefsResponse) GetEvent() isWatchBeliefsResponse_Event {
@@ -1696,6 +2293,81 @@ func (*WatchBeliefsResponse_Belief) isWatchBeliefsResponse_Event() {}
 
 func (*WatchBeliefsResponse_RetiredQuantity) isWatchBeliefsResponse_Event() {}
 
+// LastReading tells how the last reading agreed with the belief.
+type Belief_LastReading struct {
+	state protoimpl.MessageState `protogen:"open.v1"`
+	// Time of the reading.
+	Time *timestamppb.Timestamp `protobuf:"bytes,1,opt,name=time,proto3" json:"time,omitempty"`
+	// Probability of a reading at least as far out on either side, as the readings
+	// before it predicted. Absent where they predicted nothing: the first readings
+	// under a vague prior.
+	TailProbability *float64 `protobuf:"fixed64,2,opt,name=tail_probability,json=tailProbability,proto3,oneof" json:"tail_probability,omitempty"`
+	// The tail probability is below 0.0001. The reading is applied all the same.
+	Outlying bool `protobuf:"varint,3,opt,name=outlying,proto3" json:"outlying,omitempty"`
+	// Probability that it is an outlier; absent where none are declared.
+	OutlierProbability *float64 `protobuf:"fixed64,4,opt,name=outlier_probability,json=outlierProbability,proto3,oneof" json:"outlier_probability,omitempty"`
+	unknownFields      protoimpl.UnknownFields
+	sizeCache          protoimpl.SizeCache
+}
+
+func (x *Belief_LastReading) Reset() {
+	*x = Belief_LastReading{}
+	mi := &file_leadline_v1_belief_proto_msgTypes[21]
+	ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
+	ms.StoreMessageInfo(mi)
+}
+
+func (x *Belief_LastReading) String() string {
+	return protoimpl.X.MessageStringOf(x)
+}
+
+func (*Belief_LastReading) ProtoMessage() {}
+
+func (x *Belief_LastReading) ProtoReflect() protoreflect.Message {
+	mi := &file_leadline_v1_belief_proto_msgTypes[21]
+	if x != nil {
+		ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
+		if ms.LoadMessageInfo() == nil {
+			ms.StoreMessageInfo(mi)
+		}
+		return ms
+	}
+	return mi.MessageOf(x)
+}
+
+// Deprecated: Use Belief_LastReading.ProtoReflect.Descriptor instead.
+func (*Belief_LastReading) Descriptor() ([]byte, []int) {
+	return file_leadline_v1_belief_proto_rawDescGZIP(), []int{0, 0}
+}
+
+func (x *Belief_LastReading) GetTime() *timestamppb.Timestamp {
+	if x != nil {
+		return x.Time
+	}
+	return nil
+}
+
+func (x *Belief_LastReading) GetTailProbability() float64 {
+	if x != nil && x.TailProbability != nil {
+		return *x.TailProbability
+	}
+	return 0
+}
+
+func (x *Belief_LastReading) GetOutlying() bool {
+	if x != nil {
+		return x.Outlying
+	}
+	return false
+}
+
+func (x *Belief_LastReading) GetOutlierProbability() float64 {
+	if x != nil && x.OutlierProbability != nil {
+		return *x.OutlierProbability
+	}
+	return 0
+}
+
 // Flagged counts readings by how they stand to their instrument's calibration.
 type Belief_Flagged struct {
 	state protoimpl.MessageState `protogen:"open.v1"`
@@ -1711,7 +2383,7 @@ type Belief_Flagged struct {
 
 func (x *Belief_Flagged) Reset() {
 	*x = Belief_Flagged{}
-	mi := &file_leadline_v1_belief_proto_msgTypes[16]
+	mi := &file_leadline_v1_belief_proto_msgTypes[22]
 	ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
 	ms.StoreMessageInfo(mi)
 }
@@ -1723,7 +2395,7 @@ func (x *Belief_Flagged) String() string {
 func (*Belief_Flagged) ProtoMessage() {}
 
 func (x *Belief_Flagged) ProtoReflect() protoreflect.Message {
-	mi := &file_leadline_v1_belief_proto_msgTypes[16]
+	mi := &file_leadline_v1_belief_proto_msgTypes[22]
 	if x != nil {
 		ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
 		if ms.LoadMessageInfo() == nil {
@@ -1736,7 +2408,7 @@ func (x *Belief_Flagged) ProtoReflect() protoreflect.Message {
 
 // Deprecated: Use Belief_Flagged.ProtoReflect.Descriptor instead.
 func (*Belief_Flagged) Descriptor() ([]byte, []int) {
-	return file_leadline_v1_belief_proto_rawDescGZIP(), []int{0, 0}
+	return file_leadline_v1_belief_proto_rawDescGZIP(), []int{0, 1}
 }
 
 func (x *Belief_Flagged) GetOverdue() uint32 {
@@ -1775,7 +2447,7 @@ type Belief_Breach struct {
 
 func (x *Belief_Breach) Reset() {
 	*x = Belief_Breach{}
-	mi := &file_leadline_v1_belief_proto_msgTypes[17]
+	mi := &file_leadline_v1_belief_proto_msgTypes[23]
 	ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
 	ms.StoreMessageInfo(mi)
 }
@@ -1787,7 +2459,7 @@ func (x *Belief_Breach) String() string {
 func (*Belief_Breach) ProtoMessage() {}
 
 func (x *Belief_Breach) ProtoReflect() protoreflect.Message {
-	mi := &file_leadline_v1_belief_proto_msgTypes[17]
+	mi := &file_leadline_v1_belief_proto_msgTypes[23]
 	if x != nil {
 		ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
 		if ms.LoadMessageInfo() == nil {
@@ -1800,7 +2472,7 @@ func (x *Belief_Breach) ProtoReflect() protoreflect.Message {
 
 // Deprecated: Use Belief_Breach.ProtoReflect.Descriptor instead.
 func (*Belief_Breach) Descriptor() ([]byte, []int) {
-	return file_leadline_v1_belief_proto_rawDescGZIP(), []int{0, 1}
+	return file_leadline_v1_belief_proto_rawDescGZIP(), []int{0, 2}
 }
 
 func (x *Belief_Breach) GetBelow() float64 {
@@ -1837,7 +2509,7 @@ type Belief_Threshold struct {
 
 func (x *Belief_Threshold) Reset() {
 	*x = Belief_Threshold{}
-	mi := &file_leadline_v1_belief_proto_msgTypes[18]
+	mi := &file_leadline_v1_belief_proto_msgTypes[24]
 	ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
 	ms.StoreMessageInfo(mi)
 }
@@ -1849,7 +2521,7 @@ func (x *Belief_Threshold) String() string {
 func (*Belief_Threshold) ProtoMessage() {}
 
 func (x *Belief_Threshold) ProtoReflect() protoreflect.Message {
-	mi := &file_leadline_v1_belief_proto_msgTypes[18]
+	mi := &file_leadline_v1_belief_proto_msgTypes[24]
 	if x != nil {
 		ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
 		if ms.LoadMessageInfo() == nil {
@@ -1862,7 +2534,7 @@ func (x *Belief_Threshold) ProtoReflect() protoreflect.Message {
 
 // Deprecated: Use Belief_Threshold.ProtoReflect.Descriptor instead.
 func (*Belief_Threshold) Descriptor() ([]byte, []int) {
-	return file_leadline_v1_belief_proto_rawDescGZIP(), []int{0, 2}
+	return file_leadline_v1_belief_proto_rawDescGZIP(), []int{0, 3}
 }
 
 func (x *Belief_Threshold) GetValue() float64 {
@@ -1894,7 +2566,7 @@ type Predictive_Outside struct {
 
 func (x *Predictive_Outside) Reset() {
 	*x = Predictive_Outside{}
-	mi := &file_leadline_v1_belief_proto_msgTypes[19]
+	mi := &file_leadline_v1_belief_proto_msgTypes[25]
 	ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
 	ms.StoreMessageInfo(mi)
 }
@@ -1906,7 +2578,7 @@ func (x *Predictive_Outside) String() string {
 func (*Predictive_Outside) ProtoMessage() {}
 
 func (x *Predictive_Outside) ProtoReflect() protoreflect.Message {
-	mi := &file_leadline_v1_belief_proto_msgTypes[19]
+	mi := &file_leadline_v1_belief_proto_msgTypes[25]
 	if x != nil {
 		ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
 		if ms.LoadMessageInfo() == nil {
@@ -1943,6 +2615,458 @@ func (x *Predictive_Outside) GetEither() float64 {
 	return 0
 }
 
+// Test is a test of the declaration.
+type ModelCheck_Test struct {
+	state protoimpl.MessageState `protogen:"open.v1"`
+	// What it objects to.
+	Objection ModelCheck_Result `protobuf:"varint,1,opt,name=objection,proto3,enum=leadline.v1.ModelCheck_Result" json:"objection,omitempty"`
+	// Name of the test.
+	Name string `protobuf:"bytes,2,opt,name=name,proto3" json:"name,omitempty"`
+	// Its statistic.
+	Statistic float64 `protobuf:"fixed64,3,opt,name=statistic,proto3" json:"statistic,omitempty"`
+	// Probability of a statistic at least as far out if the declaration is right.
+	Probability float64 `protobuf:"fixed64,4,opt,name=probability,proto3" json:"probability,omitempty"`
+	// Level below which that probability is an objection.
+	Level         float64 `protobuf:"fixed64,5,opt,name=level,proto3" json:"level,omitempty"`
+	unknownFields protoimpl.UnknownFields
+	sizeCache     protoimpl.SizeCache
+}
+
+func (x *ModelCheck_Test) Reset() {
+	*x = ModelCheck_Test{}
+	mi := &file_leadline_v1_belief_proto_msgTypes[26]
+	ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
+	ms.StoreMessageInfo(mi)
+}
+
+func (x *ModelCheck_Test) String() string {
+	return protoimpl.X.MessageStringOf(x)
+}
+
+func (*ModelCheck_Test) ProtoMessage() {}
+
+func (x *ModelCheck_Test) ProtoReflect() protoreflect.Message {
+	mi := &file_leadline_v1_belief_proto_msgTypes[26]
+	if x != nil {
+		ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
+		if ms.LoadMessageInfo() == nil {
+			ms.StoreMessageInfo(mi)
+		}
+		return ms
+	}
+	return mi.MessageOf(x)
+}
+
+// Deprecated: Use ModelCheck_Test.ProtoReflect.Descriptor instead.
+func (*ModelCheck_Test) Descriptor() ([]byte, []int) {
+	return file_leadline_v1_belief_proto_rawDescGZIP(), []int{7, 0}
+}
+
+func (x *ModelCheck_Test) GetObjection() ModelCheck_Result {
+	if x != nil {
+		return x.Objection
+	}
+	return ModelCheck_UNSPECIFIED
+}
+
+func (x *ModelCheck_Test) GetName() string {
+	if x != nil {
+		return x.Name
+	}
+	return ""
+}
+
+func (x *ModelCheck_Test) GetStatistic() float64 {
+	if x != nil {
+		return x.Statistic
+	}
+	return 0
+}
+
+func (x *ModelCheck_Test) GetProbability() float64 {
+	if x != nil {
+		return x.Probability
+	}
+	return 0
+}
+
+func (x *ModelCheck_Test) GetLevel() float64 {
+	if x != nil {
+		return x.Level
+	}
+	return 0
+}
+
+// LastStep is a step that the readings show.
+type ModelCheck_LastStep struct {
+	state protoimpl.MessageState `protogen:"open.v1"`
+	// Time of the reading at which it was found.
+	Time *timestamppb.Timestamp `protobuf:"bytes,1,opt,name=time,proto3" json:"time,omitempty"`
+	// Time of the reading after which it began to show.
+	Since *timestamppb.Timestamp `protobuf:"bytes,2,opt,name=since,proto3" json:"since,omitempty"`
+	// Direction of the step.
+	Direction     StepEvent_Direction `protobuf:"varint,3,opt,name=direction,proto3,enum=leadline.v1.StepEvent_Direction" json:"direction,omitempty"`
+	unknownFields protoimpl.UnknownFields
+	sizeCache     protoimpl.SizeCache
+}
+
+func (x *ModelCheck_LastStep) Reset() {
+	*x = ModelCheck_LastStep{}
+	mi := &file_leadline_v1_belief_proto_msgTypes[27]
+	ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
+	ms.StoreMessageInfo(mi)
+}
+
+func (x *ModelCheck_LastStep) String() string {
+	return protoimpl.X.MessageStringOf(x)
+}
+
+func (*ModelCheck_LastStep) ProtoMessage() {}
+
+func (x *ModelCheck_LastStep) ProtoReflect() protoreflect.Message {
+	mi := &file_leadline_v1_belief_proto_msgTypes[27]
+	if x != nil {
+		ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
+		if ms.LoadMessageInfo() == nil {
+			ms.StoreMessageInfo(mi)
+		}
+		return ms
+	}
+	return mi.MessageOf(x)
+}
+
+// Deprecated: Use ModelCheck_LastStep.ProtoReflect.Descriptor instead.
+func (*ModelCheck_LastStep) Descriptor() ([]byte, []int) {
+	return file_leadline_v1_belief_proto_rawDescGZIP(), []int{7, 1}
+}
+
+func (x *ModelCheck_LastStep) GetTime() *timestamppb.Timestamp {
+	if x != nil {
+		return x.Time
+	}
+	return nil
+}
+
+func (x *ModelCheck_LastStep) GetSince() *timestamppb.Timestamp {
+	if x != nil {
+		return x.Since
+	}
+	return nil
+}
+
+func (x *ModelCheck_LastStep) GetDirection() StepEvent_Direction {
+	if x != nil {
+		return x.Direction
+	}
+	return StepEvent_UNSPECIFIED
+}
+
+// Cusum is the sums of the scores, each less an allowance of 0.5, that find a step
+// once they exceed the limit (Page 1954).
+type ModelCheck_Cusum struct {
+	state protoimpl.MessageState `protogen:"open.v1"`
+	// Sum upwards.
+	Up float64 `protobuf:"fixed64,1,opt,name=up,proto3" json:"up,omitempty"`
+	// Sum downwards.
+	Down float64 `protobuf:"fixed64,2,opt,name=down,proto3" json:"down,omitempty"`
+	// Limit of both.
+	Limit         float64 `protobuf:"fixed64,3,opt,name=limit,proto3" json:"limit,omitempty"`
+	unknownFields protoimpl.UnknownFields
+	sizeCache     protoimpl.SizeCache
+}
+
+func (x *ModelCheck_Cusum) Reset() {
+	*x = ModelCheck_Cusum{}
+	mi := &file_leadline_v1_belief_proto_msgTypes[28]
+	ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
+	ms.StoreMessageInfo(mi)
+}
+
+func (x *ModelCheck_Cusum) String() string {
+	return protoimpl.X.MessageStringOf(x)
+}
+
+func (*ModelCheck_Cusum) ProtoMessage() {}
+
+func (x *ModelCheck_Cusum) ProtoReflect() protoreflect.Message {
+	mi := &file_leadline_v1_belief_proto_msgTypes[28]
+	if x != nil {
+		ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
+		if ms.LoadMessageInfo() == nil {
+			ms.StoreMessageInfo(mi)
+		}
+		return ms
+	}
+	return mi.MessageOf(x)
+}
+
+// Deprecated: Use ModelCheck_Cusum.ProtoReflect.Descriptor instead.
+func (*ModelCheck_Cusum) Descriptor() ([]byte, []int) {
+	return file_leadline_v1_belief_proto_rawDescGZIP(), []int{7, 2}
+}
+
+func (x *ModelCheck_Cusum) GetUp() float64 {
+	if x != nil {
+		return x.Up
+	}
+	return 0
+}
+
+func (x *ModelCheck_Cusum) GetDown() float64 {
+	if x != nil {
+		return x.Down
+	}
+	return 0
+}
+
+func (x *ModelCheck_Cusum) GetLimit() float64 {
+	if x != nil {
+		return x.Limit
+	}
+	return 0
+}
+
+// Explanation compares three explanations of the readings of the last window. The
+// greater a log-likelihood, the better it explains them; a difference below 2
+// decides nothing, as the latter two have something to fit. The service doesn't
+// choose.
+type ModelCheck_Explanation struct {
+	state protoimpl.MessageState `protogen:"open.v1"`
+	// The declaration as it is.
+	AsDeclared *ModelCheck_AsDeclared `protobuf:"bytes,1,opt,name=as_declared,json=asDeclared,proto3" json:"as_declared,omitempty"`
+	// The value moves as a random walk, besides what was declared.
+	Moving *ModelCheck_Moving `protobuf:"bytes,2,opt,name=moving,proto3" json:"moving,omitempty"`
+	// The noise is correlated, besides what was declared.
+	CorrelatedNoise *ModelCheck_CorrelatedNoise `protobuf:"bytes,3,opt,name=correlated_noise,json=correlatedNoise,proto3" json:"correlated_noise,omitempty"`
+	unknownFields   protoimpl.UnknownFields
+	sizeCache       protoimpl.SizeCache
+}
+
+func (x *ModelCheck_Explanation) Reset() {
+	*x = ModelCheck_Explanation{}
+	mi := &file_leadline_v1_belief_proto_msgTypes[29]
+	ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
+	ms.StoreMessageInfo(mi)
+}
+
+func (x *ModelCheck_Explanation) String() string {
+	return protoimpl.X.MessageStringOf(x)
+}
+
+func (*ModelCheck_Explanation) ProtoMessage() {}
+
+func (x *ModelCheck_Explanation) ProtoReflect() protoreflect.Message {
+	mi := &file_leadline_v1_belief_proto_msgTypes[29]
+	if x != nil {
+		ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
+		if ms.LoadMessageInfo() == nil {
+			ms.StoreMessageInfo(mi)
+		}
+		return ms
+	}
+	return mi.MessageOf(x)
+}
+
+// Deprecated: Use ModelCheck_Explanation.ProtoReflect.Descriptor instead.
+func (*ModelCheck_Explanation) Descriptor() ([]byte, []int) {
+	return file_leadline_v1_belief_proto_rawDescGZIP(), []int{7, 3}
+}
+
+func (x *ModelCheck_Explanation) GetAsDeclared() *ModelCheck_AsDeclared {
+	if x != nil {
+		return x.AsDeclared
+	}
+	return nil
+}
+
+func (x *ModelCheck_Explanation) GetMoving() *ModelCheck_Moving {
+	if x != nil {
+		return x.Moving
+	}
+	return nil
+}
+
+func (x *ModelCheck_Explanation) GetCorrelatedNoise() *ModelCheck_CorrelatedNoise {
+	if x != nil {
+		return x.CorrelatedNoise
+	}
+	return nil
+}
+
+// AsDeclared is the declaration as it is.
+type ModelCheck_AsDeclared struct {
+	state protoimpl.MessageState `protogen:"open.v1"`
+	// Log-likelihood.
+	LogLikelihood float64 `protobuf:"fixed64,1,opt,name=log_likelihood,json=logLikelihood,proto3" json:"log_likelihood,omitempty"`
+	unknownFields protoimpl.UnknownFields
+	sizeCache     protoimpl.SizeCache
+}
+
+func (x *ModelCheck_AsDeclared) Reset() {
+	*x = ModelCheck_AsDeclared{}
+	mi := &file_leadline_v1_belief_proto_msgTypes[30]
+	ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
+	ms.StoreMessageInfo(mi)
+}
+
+func (x *ModelCheck_AsDeclared) String() string {
+	return protoimpl.X.MessageStringOf(x)
+}
+
+func (*ModelCheck_AsDeclared) ProtoMessage() {}
+
+func (x *ModelCheck_AsDeclared) ProtoReflect() protoreflect.Message {
+	mi := &file_leadline_v1_belief_proto_msgTypes[30]
+	if x != nil {
+		ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
+		if ms.LoadMessageInfo() == nil {
+			ms.StoreMessageInfo(mi)
+		}
+		return ms
+	}
+	return mi.MessageOf(x)
+}
+
+// Deprecated: Use ModelCheck_AsDeclared.ProtoReflect.Descriptor instead.
+func (*ModelCheck_AsDeclared) Descriptor() ([]byte, []int) {
+	return file_leadline_v1_belief_proto_rawDescGZIP(), []int{7, 4}
+}
+
+func (x *ModelCheck_AsDeclared) GetLogLikelihood() float64 {
+	if x != nil {
+		return x.LogLikelihood
+	}
+	return 0
+}
+
+// Moving is a value that moves.
+type ModelCheck_Moving struct {
+	state protoimpl.MessageState `protogen:"open.v1"`
+	// Log-likelihood, at its greatest.
+	LogLikelihood float64 `protobuf:"fixed64,1,opt,name=log_likelihood,json=logLikelihood,proto3" json:"log_likelihood,omitempty"`
+	// Standard deviation of the movement within per, in the quantity's unit.
+	StandardDeviation float64 `protobuf:"fixed64,2,opt,name=standard_deviation,json=standardDeviation,proto3" json:"standard_deviation,omitempty"`
+	// Time in which the movement has that standard deviation.
+	Per           *durationpb.Duration `protobuf:"bytes,3,opt,name=per,proto3" json:"per,omitempty"`
+	unknownFields protoimpl.UnknownFields
+	sizeCache     protoimpl.SizeCache
+}
+
+func (x *ModelCheck_Moving) Reset() {
+	*x = ModelCheck_Moving{}
+	mi := &file_leadline_v1_belief_proto_msgTypes[31]
+	ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
+	ms.StoreMessageInfo(mi)
+}
+
+func (x *ModelCheck_Moving) String() string {
+	return protoimpl.X.MessageStringOf(x)
+}
+
+func (*ModelCheck_Moving) ProtoMessage() {}
+
+func (x *ModelCheck_Moving) ProtoReflect() protoreflect.Message {
+	mi := &file_leadline_v1_belief_proto_msgTypes[31]
+	if x != nil {
+		ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
+		if ms.LoadMessageInfo() == nil {
+			ms.StoreMessageInfo(mi)
+		}
+		return ms
+	}
+	return mi.MessageOf(x)
+}
+
+// Deprecated: Use ModelCheck_Moving.ProtoReflect.Descriptor instead.
+func (*ModelCheck_Moving) Descriptor() ([]byte, []int) {
+	return file_leadline_v1_belief_proto_rawDescGZIP(), []int{7, 5}
+}
+
+func (x *ModelCheck_Moving) GetLogLikelihood() float64 {
+	if x != nil {
+		return x.LogLikelihood
+	}
+	return 0
+}
+
+func (x *ModelCheck_Moving) GetStandardDeviation() float64 {
+	if x != nil {
+		return x.StandardDeviation
+	}
+	return 0
+}
+
+func (x *ModelCheck_Moving) GetPer() *durationpb.Duration {
+	if x != nil {
+		return x.Per
+	}
+	return nil
+}
+
+// CorrelatedNoise is a noise that readings which follow each other share.
+type ModelCheck_CorrelatedNoise struct {
+	state protoimpl.MessageState `protogen:"open.v1"`
+	// Log-likelihood, at its greatest.
+	LogLikelihood float64 `protobuf:"fixed64,1,opt,name=log_likelihood,json=logLikelihood,proto3" json:"log_likelihood,omitempty"`
+	// Standard deviation of the noise, in the quantity's unit.
+	StandardDeviation float64 `protobuf:"fixed64,2,opt,name=standard_deviation,json=standardDeviation,proto3" json:"standard_deviation,omitempty"`
+	// Time in which its autocorrelation falls to 1/e.
+	CorrelationTime *durationpb.Duration `protobuf:"bytes,3,opt,name=correlation_time,json=correlationTime,proto3" json:"correlation_time,omitempty"`
+	unknownFields   protoimpl.UnknownFields
+	sizeCache       protoimpl.SizeCache
+}
+
+func (x *ModelCheck_CorrelatedNoise) Reset() {
+	*x = ModelCheck_CorrelatedNoise{}
+	mi := &file_leadline_v1_belief_proto_msgTypes[32]
+	ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
+	ms.StoreMessageInfo(mi)
+}
+
+func (x *ModelCheck_CorrelatedNoise) String() string {
+	return protoimpl.X.MessageStringOf(x)
+}
+
+func (*ModelCheck_CorrelatedNoise) ProtoMessage() {}
+
+func (x *ModelCheck_CorrelatedNoise) ProtoReflect() protoreflect.Message {
+	mi := &file_leadline_v1_belief_proto_msgTypes[32]
+	if x != nil {
+		ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
+		if ms.LoadMessageInfo() == nil {
+			ms.StoreMessageInfo(mi)
+		}
+		return ms
+	}
+	return mi.MessageOf(x)
+}
+
+// Deprecated: Use ModelCheck_CorrelatedNoise.ProtoReflect.Descriptor instead.
+func (*ModelCheck_CorrelatedNoise) Descriptor() ([]byte, []int) {
+	return file_leadline_v1_belief_proto_rawDescGZIP(), []int{7, 6}
+}
+
+func (x *ModelCheck_CorrelatedNoise) GetLogLikelihood() float64 {
+	if x != nil {
+		return x.LogLikelihood
+	}
+	return 0
+}
+
+func (x *ModelCheck_CorrelatedNoise) GetStandardDeviation() float64 {
+	if x != nil {
+		return x.StandardDeviation
+	}
+	return 0
+}
+
+func (x *ModelCheck_CorrelatedNoise) GetCorrelationTime() *durationpb.Duration {
+	if x != nil {
+		return x.CorrelationTime
+	}
+	return nil
+}
+
 // Step is the belief at one time to come.
 type Forecast_Step struct {
 	state protoimpl.MessageState `protogen:"open.v1"`
@@ -1966,7 +3090,7 @@ type Forecast_Step struct {
 
 func (x *Forecast_Step) Reset() {
 	*x = Forecast_Step{}
-	mi := &file_leadline_v1_belief_proto_msgTypes[20]
+	mi := &file_leadline_v1_belief_proto_msgTypes[33]
 	ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
 	ms.StoreMessageInfo(mi)
 }
@@ -1978,7 +3102,7 @@ func (x *Forecast_Step) String() string {
 func (*Forecast_Step) ProtoMessage() {}
 
 func (x *Forecast_Step) ProtoReflect() protoreflect.Message {
-	mi := &file_leadline_v1_belief_proto_msgTypes[20]
+	mi := &file_leadline_v1_belief_proto_msgTypes[33]
 	if x != nil {
 		ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
 		if ms.LoadMessageInfo() == nil {
@@ -1991,7 +3115,7 @@ func (x *Forecast_Step) ProtoReflect() protoreflect.Message {
 
 // Deprecated: Use Forecast_Step.ProtoReflect.Descriptor instead.
 func (*Forecast_Step) Descriptor() ([]byte, []int) {
-	return file_leadline_v1_belief_proto_rawDescGZIP(), []int{7, 0}
+	return file_leadline_v1_belief_proto_rawDescGZIP(), []int{9, 0}
 }
 
 func (x *Forecast_Step) GetTime() *timestamppb.Timestamp {
@@ -2053,7 +3177,7 @@ type Forecast_Crossed struct {
 
 func (x *Forecast_Crossed) Reset() {
 	*x = Forecast_Crossed{}
-	mi := &file_leadline_v1_belief_proto_msgTypes[21]
+	mi := &file_leadline_v1_belief_proto_msgTypes[34]
 	ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
 	ms.StoreMessageInfo(mi)
 }
@@ -2065,7 +3189,7 @@ func (x *Forecast_Crossed) String() string {
 func (*Forecast_Crossed) ProtoMessage() {}
 
 func (x *Forecast_Crossed) ProtoReflect() protoreflect.Message {
-	mi := &file_leadline_v1_belief_proto_msgTypes[21]
+	mi := &file_leadline_v1_belief_proto_msgTypes[34]
 	if x != nil {
 		ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
 		if ms.LoadMessageInfo() == nil {
@@ -2078,7 +3202,7 @@ func (x *Forecast_Crossed) ProtoReflect() protoreflect.Message {
 
 // Deprecated: Use Forecast_Crossed.ProtoReflect.Descriptor instead.
 func (*Forecast_Crossed) Descriptor() ([]byte, []int) {
-	return file_leadline_v1_belief_proto_rawDescGZIP(), []int{7, 1}
+	return file_leadline_v1_belief_proto_rawDescGZIP(), []int{9, 1}
 }
 
 func (x *Forecast_Crossed) GetBelow() float64 {
@@ -2121,7 +3245,7 @@ type Forecast_TimeToBreach struct {
 
 func (x *Forecast_TimeToBreach) Reset() {
 	*x = Forecast_TimeToBreach{}
-	mi := &file_leadline_v1_belief_proto_msgTypes[22]
+	mi := &file_leadline_v1_belief_proto_msgTypes[35]
 	ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
 	ms.StoreMessageInfo(mi)
 }
@@ -2133,7 +3257,7 @@ func (x *Forecast_TimeToBreach) String() string {
 func (*Forecast_TimeToBreach) ProtoMessage() {}
 
 func (x *Forecast_TimeToBreach) ProtoReflect() protoreflect.Message {
-	mi := &file_leadline_v1_belief_proto_msgTypes[22]
+	mi := &file_leadline_v1_belief_proto_msgTypes[35]
 	if x != nil {
 		ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
 		if ms.LoadMessageInfo() == nil {
@@ -2146,7 +3270,7 @@ func (x *Forecast_TimeToBreach) ProtoReflect() protoreflect.Message {
 
 // Deprecated: Use Forecast_TimeToBreach.ProtoReflect.Descriptor instead.
 func (*Forecast_TimeToBreach) Descriptor() ([]byte, []int) {
-	return file_leadline_v1_belief_proto_rawDescGZIP(), []int{7, 2}
+	return file_leadline_v1_belief_proto_rawDescGZIP(), []int{9, 2}
 }
 
 func (x *Forecast_TimeToBreach) GetProbability() float64 {
@@ -2198,7 +3322,7 @@ type Budget_Part struct {
 
 func (x *Budget_Part) Reset() {
 	*x = Budget_Part{}
-	mi := &file_leadline_v1_belief_proto_msgTypes[23]
+	mi := &file_leadline_v1_belief_proto_msgTypes[36]
 	ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
 	ms.StoreMessageInfo(mi)
 }
@@ -2210,7 +3334,7 @@ func (x *Budget_Part) String() string {
 func (*Budget_Part) ProtoMessage() {}
 
 func (x *Budget_Part) ProtoReflect() protoreflect.Message {
-	mi := &file_leadline_v1_belief_proto_msgTypes[23]
+	mi := &file_leadline_v1_belief_proto_msgTypes[36]
 	if x != nil {
 		ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
 		if ms.LoadMessageInfo() == nil {
@@ -2223,7 +3347,7 @@ func (x *Budget_Part) ProtoReflect() protoreflect.Message {
 
 // Deprecated: Use Budget_Part.ProtoReflect.Descriptor instead.
 func (*Budget_Part) Descriptor() ([]byte, []int) {
-	return file_leadline_v1_belief_proto_rawDescGZIP(), []int{8, 0}
+	return file_leadline_v1_belief_proto_rawDescGZIP(), []int{10, 0}
 }
 
 func (x *Budget_Part) GetSource() Budget_Source {
@@ -2272,7 +3396,7 @@ var File_leadline_v1_belief_proto protoreflect.FileDescriptor
 
 const file_leadline_v1_belief_proto_rawDesc = "" +
 	"\n" +
-	"\x18leadline/v1/belief.proto\x12\vleadline.v1\x1a\x1cgoogle/api/annotations.proto\x1a\x1fgoogle/api/field_behavior.proto\x1a\x1egoogle/protobuf/duration.proto\x1a\x1fgoogle/protobuf/timestamp.proto\x1a\x1aleadline/v1/quantity.proto\"\x8b\r\n" +
+	"\x18leadline/v1/belief.proto\x12\vleadline.v1\x1a\x1cgoogle/api/annotations.proto\x1a\x1fgoogle/api/field_behavior.proto\x1a\x1egoogle/protobuf/duration.proto\x1a\x1fgoogle/protobuf/timestamp.proto\x1a\x1aleadline/v1/quantity.proto\"\xf9\x11\n" +
 	"\x06Belief\x12\x1a\n" +
 	"\bquantity\x18\x01 \x01(\tR\bquantity\x12\x12\n" +
 	"\x04unit\x18\x02 \x01(\tR\x04unit\x12.\n" +
@@ -2299,16 +3423,30 @@ const file_leadline_v1_belief_proto_rawDesc = "" +
 	"linearised\x124\n" +
 	"\x16resolution_as_variance\x18\x18 \x01(\bR\x14resolutionAsVariance\x125\n" +
 	"\aflagged\x18\x19 \x01(\v2\x1b.leadline.v1.Belief.FlaggedR\aflagged\x12=\n" +
-	"\frenewal_time\x18\x1a \x01(\v2\x1a.google.protobuf.TimestampR\vrenewalTime\x12#\n" +
+	"\frenewal_time\x18\x1a \x01(\v2\x1a.google.protobuf.TimestampR\vrenewalTime\x12*\n" +
+	"\x0egeometric_mean\x18\x1b \x01(\x01H\x03R\rgeometricMean\x88\x01\x01\x12E\n" +
+	"\x1cgeometric_standard_deviation\x18\x1c \x01(\x01H\x04R\x1ageometricStandardDeviation\x88\x01\x01\x126\n" +
+	"\x05scale\x18\x1d \x01(\x0e2\x1b.leadline.v1.Quantity.ScaleH\x05R\x05scale\x88\x01\x01\x12\x16\n" +
+	"\x06method\x18\x1e \x01(\tR\x06method\x12B\n" +
+	"\flast_reading\x18\x1f \x01(\v2\x1f.leadline.v1.Belief.LastReadingR\vlastReading\x128\n" +
+	"\vmodel_check\x18  \x01(\v2\x17.leadline.v1.ModelCheckR\n" +
+	"modelCheck\x12#\n" +
 	"\rreading_count\x18\r \x01(\rR\freadingCount\x12F\n" +
 	"\x11last_reading_time\x18\x0e \x01(\v2\x1a.google.protobuf.TimestampR\x0flastReadingTime\x12:\n" +
-	"\averdict\x18\x0f \x01(\x0e2\x1b.leadline.v1.Belief.VerdictH\x03R\averdict\x88\x01\x01\x12\x1a\n" +
+	"\averdict\x18\x0f \x01(\x0e2\x1b.leadline.v1.Belief.VerdictH\x06R\averdict\x88\x01\x01\x12\x1a\n" +
 	"\brevision\x18\x10 \x01(\rR\brevision\x12'\n" +
 	"\x0fledger_position\x18\x11 \x01(\x04R\x0eledgerPosition\x12\x1e\n" +
 	"\n" +
 	"rebuilding\x18\x12 \x01(\bR\n" +
 	"rebuilding\x12\"\n" +
-	"\fundetermined\x18\x13 \x03(\tR\fundetermined\x1ak\n" +
+	"\fundetermined\x18\x13 \x03(\tR\fundetermined\x1a\xec\x01\n" +
+	"\vLastReading\x12.\n" +
+	"\x04time\x18\x01 \x01(\v2\x1a.google.protobuf.TimestampR\x04time\x12.\n" +
+	"\x10tail_probability\x18\x02 \x01(\x01H\x00R\x0ftailProbability\x88\x01\x01\x12\x1a\n" +
+	"\boutlying\x18\x03 \x01(\bR\boutlying\x124\n" +
+	"\x13outlier_probability\x18\x04 \x01(\x01H\x01R\x12outlierProbability\x88\x01\x01B\x13\n" +
+	"\x11_tail_probabilityB\x16\n" +
+	"\x14_outlier_probability\x1ak\n" +
 	"\aFlagged\x12\x18\n" +
 	"\aoverdue\x18\x01 \x01(\rR\aoverdue\x12\"\n" +
 	"\rnot_yet_valid\x18\x02 \x01(\rR\vnotYetValid\x12\"\n" +
@@ -2327,7 +3465,10 @@ const file_leadline_v1_belief_proto_rawDesc = "" +
 	"\fINCONCLUSIVE\x10\x03B\a\n" +
 	"\x05_meanB\x15\n" +
 	"\x13_standard_deviationB\x1a\n" +
-	"\x18_conformance_probabilityB\n" +
+	"\x18_conformance_probabilityB\x11\n" +
+	"\x0f_geometric_meanB\x1f\n" +
+	"\x1d_geometric_standard_deviationB\b\n" +
+	"\x06_scaleB\n" +
 	"\n" +
 	"\b_verdict\"i\n" +
 	"\bInterval\x12\x14\n" +
@@ -2386,7 +3527,87 @@ const file_leadline_v1_belief_proto_rawDesc = "" +
 	"\x0fReferenceBelief\x12\x1c\n" +
 	"\treference\x18\x01 \x01(\tR\treference\x12\x12\n" +
 	"\x04mean\x18\x02 \x01(\x01R\x04mean\x12-\n" +
-	"\x12standard_deviation\x18\x03 \x01(\x01R\x11standardDeviation\"\x9b\b\n" +
+	"\x12standard_deviation\x18\x03 \x01(\x01R\x11standardDeviation\"\xa4\x0f\n" +
+	"\n" +
+	"ModelCheck\x126\n" +
+	"\x06result\x18\x01 \x01(\x0e2\x1e.leadline.v1.ModelCheck.ResultR\x06result\x12>\n" +
+	"\n" +
+	"objections\x18\x02 \x03(\x0e2\x1e.leadline.v1.ModelCheck.ResultR\n" +
+	"objections\x12!\n" +
+	"\fscored_count\x18\x03 \x01(\rR\vscoredCount\x12$\n" +
+	"\vcoverage_50\x18\x04 \x01(\x01H\x00R\n" +
+	"coverage50\x88\x01\x01\x12$\n" +
+	"\vcoverage_95\x18\x05 \x01(\x01H\x01R\n" +
+	"coverage95\x88\x01\x01\x12>\n" +
+	"\x19mean_squared_normal_score\x18\x06 \x01(\x01H\x02R\x16meanSquaredNormalScore\x88\x01\x01\x12%\n" +
+	"\x0eoutlying_count\x18\a \x01(\rR\routlyingCount\x12\x1d\n" +
+	"\n" +
+	"step_count\x18\b \x01(\rR\tstepCount\x12=\n" +
+	"\tlast_step\x18\t \x01(\v2 .leadline.v1.ModelCheck.LastStepR\blastStep\x122\n" +
+	"\x05tests\x18\n" +
+	" \x03(\v2\x1c.leadline.v1.ModelCheck.TestR\x05tests\x12\x1f\n" +
+	"\bquantity\x18\v \x01(\tH\x03R\bquantity\x88\x01\x01\x12\x1b\n" +
+	"\x06window\x18\f \x01(\rH\x04R\x06window\x88\x01\x01\x12\x18\n" +
+	"\x05lag_1\x18\r \x01(\x01H\x05R\x04lag1\x88\x01\x01\x123\n" +
+	"\x05cusum\x18\x0e \x01(\v2\x1d.leadline.v1.ModelCheck.CusumR\x05cusum\x12E\n" +
+	"\vexplanation\x18\x0f \x01(\v2#.leadline.v1.ModelCheck.ExplanationR\vexplanation\x1a\xae\x01\n" +
+	"\x04Test\x12<\n" +
+	"\tobjection\x18\x01 \x01(\x0e2\x1e.leadline.v1.ModelCheck.ResultR\tobjection\x12\x12\n" +
+	"\x04name\x18\x02 \x01(\tR\x04name\x12\x1c\n" +
+	"\tstatistic\x18\x03 \x01(\x01R\tstatistic\x12 \n" +
+	"\vprobability\x18\x04 \x01(\x01R\vprobability\x12\x14\n" +
+	"\x05level\x18\x05 \x01(\x01R\x05level\x1a\xac\x01\n" +
+	"\bLastStep\x12.\n" +
+	"\x04time\x18\x01 \x01(\v2\x1a.google.protobuf.TimestampR\x04time\x120\n" +
+	"\x05since\x18\x02 \x01(\v2\x1a.google.protobuf.TimestampR\x05since\x12>\n" +
+	"\tdirection\x18\x03 \x01(\x0e2 .leadline.v1.StepEvent.DirectionR\tdirection\x1aA\n" +
+	"\x05Cusum\x12\x0e\n" +
+	"\x02up\x18\x01 \x01(\x01R\x02up\x12\x12\n" +
+	"\x04down\x18\x02 \x01(\x01R\x04down\x12\x14\n" +
+	"\x05limit\x18\x03 \x01(\x01R\x05limit\x1a\xde\x01\n" +
+	"\vExplanation\x12C\n" +
+	"\vas_declared\x18\x01 \x01(\v2\".leadline.v1.ModelCheck.AsDeclaredR\n" +
+	"asDeclared\x126\n" +
+	"\x06moving\x18\x02 \x01(\v2\x1e.leadline.v1.ModelCheck.MovingR\x06moving\x12R\n" +
+	"\x10correlated_noise\x18\x03 \x01(\v2'.leadline.v1.ModelCheck.CorrelatedNoiseR\x0fcorrelatedNoise\x1a3\n" +
+	"\n" +
+	"AsDeclared\x12%\n" +
+	"\x0elog_likelihood\x18\x01 \x01(\x01R\rlogLikelihood\x1a\x8b\x01\n" +
+	"\x06Moving\x12%\n" +
+	"\x0elog_likelihood\x18\x01 \x01(\x01R\rlogLikelihood\x12-\n" +
+	"\x12standard_deviation\x18\x02 \x01(\x01R\x11standardDeviation\x12+\n" +
+	"\x03per\x18\x03 \x01(\v2\x19.google.protobuf.DurationR\x03per\x1a\xad\x01\n" +
+	"\x0fCorrelatedNoise\x12%\n" +
+	"\x0elog_likelihood\x18\x01 \x01(\x01R\rlogLikelihood\x12-\n" +
+	"\x12standard_deviation\x18\x02 \x01(\x01R\x11standardDeviation\x12D\n" +
+	"\x10correlation_time\x18\x03 \x01(\v2\x19.google.protobuf.DurationR\x0fcorrelationTime\"\x8a\x01\n" +
+	"\x06Result\x12\x0f\n" +
+	"\vUNSPECIFIED\x10\x00\x12\v\n" +
+	"\aTOO_FEW\x10\x01\x12\x10\n" +
+	"\fNO_OBJECTION\x10\x02\x12\x18\n" +
+	"\x14INTERVALS_TOO_NARROW\x10\x03\x12\x16\n" +
+	"\x12INTERVALS_TOO_WIDE\x10\x04\x12\n" +
+	"\n" +
+	"\x06SERIAL\x10\x05\x12\x12\n" +
+	"\x0ePRIOR_CONFLICT\x10\x06B\x0e\n" +
+	"\f_coverage_50B\x0e\n" +
+	"\f_coverage_95B\x1c\n" +
+	"\x1a_mean_squared_normal_scoreB\v\n" +
+	"\t_quantityB\t\n" +
+	"\a_windowB\b\n" +
+	"\x06_lag_1\"\xd9\x02\n" +
+	"\tStepEvent\x12.\n" +
+	"\x04time\x18\x01 \x01(\v2\x1a.google.protobuf.TimestampR\x04time\x120\n" +
+	"\x05since\x18\x02 \x01(\v2\x1a.google.protobuf.TimestampR\x05since\x12>\n" +
+	"\tdirection\x18\x03 \x01(\x0e2 .leadline.v1.StepEvent.DirectionR\tdirection\x12\x14\n" +
+	"\x05widen\x18\x04 \x01(\x01R\x05widen\x12'\n" +
+	"\x0fledger_position\x18\x05 \x01(\x04R\x0eledgerPosition\x12;\n" +
+	"\vcreate_time\x18\x06 \x01(\v2\x1a.google.protobuf.TimestampR\n" +
+	"createTime\".\n" +
+	"\tDirection\x12\x0f\n" +
+	"\vUNSPECIFIED\x10\x00\x12\x06\n" +
+	"\x02UP\x10\x01\x12\b\n" +
+	"\x04DOWN\x10\x02\"\x9b\b\n" +
 	"\bForecast\x12\x1a\n" +
 	"\bquantity\x18\x01 \x01(\tR\bquantity\x12\x12\n" +
 	"\x04unit\x18\x02 \x01(\tR\x04unit\x12.\n" +
@@ -2478,7 +3699,13 @@ const file_leadline_v1_belief_proto_rawDesc = "" +
 	"\x15_coverage_probability\"c\n" +
 	"\x10GetBudgetRequest\x12\x1f\n" +
 	"\bquantity\x18\x01 \x01(\tB\x03\xe0A\x02R\bquantity\x12.\n" +
-	"\x04time\x18\x02 \x01(\v2\x1a.google.protobuf.TimestampR\x04time\"\xe9\x01\n" +
+	"\x04time\x18\x02 \x01(\v2\x1a.google.protobuf.TimestampR\x04time\"7\n" +
+	"\x14GetModelCheckRequest\x12\x1f\n" +
+	"\bquantity\x18\x01 \x01(\tB\x03\xe0A\x02R\bquantity\"3\n" +
+	"\x10ListStepsRequest\x12\x1f\n" +
+	"\bquantity\x18\x01 \x01(\tB\x03\xe0A\x02R\bquantity\"A\n" +
+	"\x11ListStepsResponse\x12,\n" +
+	"\x05steps\x18\x01 \x03(\v2\x16.leadline.v1.StepEventR\x05steps\"\xe9\x01\n" +
 	"\x12ListBeliefsRequest\x12\x16\n" +
 	"\x06prefix\x18\x01 \x01(\tR\x06prefix\x126\n" +
 	"\x14coverage_probability\x18\x02 \x01(\x01H\x00R\x13coverageProbability\x88\x01\x01\x12.\n" +
@@ -2495,13 +3722,15 @@ const file_leadline_v1_belief_proto_rawDesc = "" +
 	"\x14WatchBeliefsResponse\x12-\n" +
 	"\x06belief\x18\x01 \x01(\v2\x13.leadline.v1.BeliefH\x00R\x06belief\x12+\n" +
 	"\x10retired_quantity\x18\x02 \x01(\tH\x00R\x0fretiredQuantityB\a\n" +
-	"\x05event2\xbe\x04\n" +
+	"\x05event2\xaf\x06\n" +
 	"\rBeliefService\x12i\n" +
 	"\tGetBelief\x12\x1d.leadline.v1.GetBeliefRequest\x1a\x13.leadline.v1.Belief\"(\x82\xd3\xe4\x93\x02\"\x12 /v1/quantities/{quantity}/belief\x12e\n" +
 	"\vListBeliefs\x12\x1f.leadline.v1.ListBeliefsRequest\x1a .leadline.v1.ListBeliefsResponse\"\x13\x82\xd3\xe4\x93\x02\r\x12\v/v1/beliefs\x12p\n" +
 	"\fWatchBeliefs\x12 .leadline.v1.WatchBeliefsRequest\x1a!.leadline.v1.WatchBeliefsResponse\"\x19\x82\xd3\xe4\x93\x02\x13\x12\x11/v1/beliefs:watch0\x01\x12w\n" +
 	"\x0eForecastBelief\x12\".leadline.v1.ForecastBeliefRequest\x1a\x15.leadline.v1.Forecast\"*\x82\xd3\xe4\x93\x02$\x12\"/v1/quantities/{quantity}/forecast\x12p\n" +
-	"\tGetBudget\x12\x1d.leadline.v1.GetBudgetRequest\x1a\x13.leadline.v1.Budget\"/\x82\xd3\xe4\x93\x02)\x12'/v1/quantities/{quantity}/belief:budgetB/Z-leadline.example/proto/leadline/v1;leadlinev1b\x06proto3"
+	"\tGetBudget\x12\x1d.leadline.v1.GetBudgetRequest\x1a\x13.leadline.v1.Budget\"/\x82\xd3\xe4\x93\x02)\x12'/v1/quantities/{quantity}/belief:budget\x12z\n" +
+	"\rGetModelCheck\x12!.leadline.v1.GetModelCheckRequest\x1a\x17.leadline.v1.ModelCheck\"-\x82\xd3\xe4\x93\x02'\x12%/v1/quantities/{quantity}/model_check\x12s\n" +
+	"\tListSteps\x12\x1d.leadline.v1.ListStepsRequest\x1a\x1e.leadline.v1.ListStepsResponse\"'\x82\xd3\xe4\x93\x02!\x12\x1f/v1/quantities/{quantity}/stepsB/Z-leadline.example/proto/leadline/v1;leadlinev1b\x06proto3"
 
 var (
 	file_leadline_v1_belief_proto_rawDescOnce sync.Once
@@ -2515,95 +3744,139 @@ func file_leadline_v1_belief_proto_rawDescGZIP() []byte {
 	return file_leadline_v1_belief_proto_rawDescData
 }
 
-var file_leadline_v1_belief_proto_enumTypes = make([]protoimpl.EnumInfo, 3)
-var file_leadline_v1_belief_proto_msgTypes = make([]protoimpl.MessageInfo, 24)
+var file_leadline_v1_belief_proto_enumTypes = make([]protoimpl.EnumInfo, 5)
+var file_leadline_v1_belief_proto_msgTypes = make([]protoimpl.MessageInfo, 37)
 var file_leadline_v1_belief_proto_goTypes = []any{
-	(Belief_Verdict)(0),           // 0: leadline.v1.Belief.Verdict
-	(Distribution_Form)(0),        // 1: leadline.v1.Distribution.Form
-	(Budget_Source)(0),            // 2: leadline.v1.Budget.Source
-	(*Belief)(nil),                // 3: leadline.v1.Belief
-	(*Interval)(nil),              // 4: leadline.v1.Interval
-	(*Predictive)(nil),            // 5: leadline.v1.Predictive
-	(*Distribution)(nil),          // 6: leadline.v1.Distribution
-	(*RepeatabilityBelief)(nil),   // 7: leadline.v1.RepeatabilityBelief
-	(*BiasBelief)(nil),            // 8: leadline.v1.BiasBelief
-	(*ReferenceBelief)(nil),       // 9: leadline.v1.ReferenceBelief
-	(*Forecast)(nil),              // 10: leadline.v1.Forecast
-	(*Budget)(nil),                // 11: leadline.v1.Budget
-	(*GetBeliefRequest)(nil),      // 12: leadline.v1.GetBeliefRequest
-	(*ForecastBeliefRequest)(nil), // 13: leadline.v1.ForecastBeliefRequest
-	(*GetBudgetRequest)(nil),      // 14: leadline.v1.GetBudgetRequest
-	(*ListBeliefsRequest)(nil),    // 15: leadline.v1.ListBeliefsRequest
-	(*ListBeliefsResponse)(nil),   // 16: leadline.v1.ListBeliefsResponse
-	(*WatchBeliefsRequest)(nil),   // 17: leadline.v1.WatchBeliefsRequest
-	(*WatchBeliefsResponse)(nil),  // 18: leadline.v1.WatchBeliefsResponse
-	(*Belief_Flagged)(nil),        // 19: leadline.v1.Belief.Flagged
-	(*Belief_Breach)(nil),         // 20: leadline.v1.Belief.Breach
-	(*Belief_Threshold)(nil),      // 21: leadline.v1.Belief.Threshold
-	(*Predictive_Outside)(nil),    // 22: leadline.v1.Predictive.Outside
-	(*Forecast_Step)(nil),         // 23: leadline.v1.Forecast.Step
-	(*Forecast_Crossed)(nil),      // 24: leadline.v1.Forecast.Crossed
-	(*Forecast_TimeToBreach)(nil), // 25: leadline.v1.Forecast.TimeToBreach
-	(*Budget_Part)(nil),           // 26: leadline.v1.Budget.Part
-	(*timestamppb.Timestamp)(nil), // 27: google.protobuf.Timestamp
-	(*Slope)(nil),                 // 28: leadline.v1.Slope
-	(*durationpb.Duration)(nil),   // 29: google.protobuf.Duration
+	(Belief_Verdict)(0),                // 0: leadline.v1.Belief.Verdict
+	(Distribution_Form)(0),             // 1: leadline.v1.Distribution.Form
+	(ModelCheck_Result)(0),             // 2: leadline.v1.ModelCheck.Result
+	(StepEvent_Direction)(0),           // 3: leadline.v1.StepEvent.Direction
+	(Budget_Source)(0),                 // 4: leadline.v1.Budget.Source
+	(*Belief)(nil),                     // 5: leadline.v1.Belief
+	(*Interval)(nil),                   // 6: leadline.v1.Interval
+	(*Predictive)(nil),                 // 7: leadline.v1.Predictive
+	(*Distribution)(nil),               // 8: leadline.v1.Distribution
+	(*RepeatabilityBelief)(nil),        // 9: leadline.v1.RepeatabilityBelief
+	(*BiasBelief)(nil),                 // 10: leadline.v1.BiasBelief
+	(*ReferenceBelief)(nil),            // 11: leadline.v1.ReferenceBelief
+	(*ModelCheck)(nil),                 // 12: leadline.v1.ModelCheck
+	(*StepEvent)(nil),                  // 13: leadline.v1.StepEvent
+	(*Forecast)(nil),                   // 14: leadline.v1.Forecast
+	(*Budget)(nil),                     // 15: leadline.v1.Budget
+	(*GetBeliefRequest)(nil),           // 16: leadline.v1.GetBeliefRequest
+	(*ForecastBeliefRequest)(nil),      // 17: leadline.v1.ForecastBeliefRequest
+	(*GetBudgetRequest)(nil),           // 18: leadline.v1.GetBudgetRequest
+	(*GetModelCheckRequest)(nil),       // 19: leadline.v1.GetModelCheckRequest
+	(*ListStepsRequest)(nil),           // 20: leadline.v1.ListStepsRequest
+	(*ListStepsResponse)(nil),          // 21: leadline.v1.ListStepsResponse
+	(*ListBeliefsRequest)(nil),         // 22: leadline.v1.ListBeliefsRequest
+	(*ListBeliefsResponse)(nil),        // 23: leadline.v1.ListBeliefsResponse
+	(*WatchBeliefsRequest)(nil),        // 24: leadline.v1.WatchBeliefsRequest
+	(*WatchBeliefsResponse)(nil),       // 25: leadline.v1.WatchBeliefsResponse
+	(*Belief_LastReading)(nil),         // 26: leadline.v1.Belief.LastReading
+	(*Belief_Flagged)(nil),             // 27: leadline.v1.Belief.Flagged
+	(*Belief_Breach)(nil),              // 28: leadline.v1.Belief.Breach
+	(*Belief_Threshold)(nil),           // 29: leadline.v1.Belief.Threshold
+	(*Predictive_Outside)(nil),         // 30: leadline.v1.Predictive.Outside
+	(*ModelCheck_Test)(nil),            // 31: leadline.v1.ModelCheck.Test
+	(*ModelCheck_LastStep)(nil),        // 32: leadline.v1.ModelCheck.LastStep
+	(*ModelCheck_Cusum)(nil),           // 33: leadline.v1.ModelCheck.Cusum
+	(*ModelCheck_Explanation)(nil),     // 34: leadline.v1.ModelCheck.Explanation
+	(*ModelCheck_AsDeclared)(nil),      // 35: leadline.v1.ModelCheck.AsDeclared
+	(*ModelCheck_Moving)(nil),          // 36: leadline.v1.ModelCheck.Moving
+	(*ModelCheck_CorrelatedNoise)(nil), // 37: leadline.v1.ModelCheck.CorrelatedNoise
+	(*Forecast_Step)(nil),              // 38: leadline.v1.Forecast.Step
+	(*Forecast_Crossed)(nil),           // 39: leadline.v1.Forecast.Crossed
+	(*Forecast_TimeToBreach)(nil),      // 40: leadline.v1.Forecast.TimeToBreach
+	(*Budget_Part)(nil),                // 41: leadline.v1.Budget.Part
+	(*timestamppb.Timestamp)(nil),      // 42: google.protobuf.Timestamp
+	(*Slope)(nil),                      // 43: leadline.v1.Slope
+	(Quantity_Scale)(0),                // 44: leadline.v1.Quantity.Scale
+	(*durationpb.Duration)(nil),        // 45: google.protobuf.Duration
 }
 var file_leadline_v1_belief_proto_depIdxs = []int32{
-	27, // 0: leadline.v1.Belief.time:type_name -> google.protobuf.Timestamp
-	4,  // 1: leadline.v1.Belief.interval:type_name -> leadline.v1.Interval
-	20, // 2: leadline.v1.Belief.breach:type_name -> leadline.v1.Belief.Breach
-	21, // 3: leadline.v1.Belief.threshold:type_name -> leadline.v1.Belief.Threshold
-	5,  // 4: leadline.v1.Belief.predictive:type_name -> leadline.v1.Predictive
-	6,  // 5: leadline.v1.Belief.distribution:type_name -> leadline.v1.Distribution
-	7,  // 6: leadline.v1.Belief.repeatability:type_name -> leadline.v1.RepeatabilityBelief
-	28, // 7: leadline.v1.Belief.slope:type_name -> leadline.v1.Slope
-	8,  // 8: leadline.v1.Belief.biases:type_name -> leadline.v1.BiasBelief
-	9,  // 9: leadline.v1.Belief.references:type_name -> leadline.v1.ReferenceBelief
-	19, // 10: leadline.v1.Belief.flagged:type_name -> leadline.v1.Belief.Flagged
-	27, // 11: leadline.v1.Belief.renewal_time:type_name -> google.protobuf.Timestamp
-	27, // 12: leadline.v1.Belief.last_reading_time:type_name -> google.protobuf.Timestamp
-	0,  // 13: leadline.v1.Belief.verdict:type_name -> leadline.v1.Belief.Verdict
-	4,  // 14: leadline.v1.Predictive.interval:type_name -> leadline.v1.Interval
-	22, // 15: leadline.v1.Predictive.outside:type_name -> leadline.v1.Predictive.Outside
-	1,  // 16: leadline.v1.Distribution.form:type_name -> leadline.v1.Distribution.Form
-	4,  // 17: leadline.v1.RepeatabilityBelief.interval:type_name -> leadline.v1.Interval
-	27, // 18: leadline.v1.BiasBelief.valid_from:type_name -> google.protobuf.Timestamp
-	27, // 19: leadline.v1.Forecast.time:type_name -> google.protobuf.Timestamp
-	29, // 20: leadline.v1.Forecast.horizon:type_name -> google.protobuf.Duration
-	23, // 21: leadline.v1.Forecast.steps:type_name -> leadline.v1.Forecast.Step
-	25, // 22: leadline.v1.Forecast.time_to_breach:type_name -> leadline.v1.Forecast.TimeToBreach
-	27, // 23: leadline.v1.Budget.time:type_name -> google.protobuf.Timestamp
-	26, // 24: leadline.v1.Budget.parts:type_name -> leadline.v1.Budget.Part
-	27, // 25: leadline.v1.GetBeliefRequest.time:type_name -> google.protobuf.Timestamp
-	29, // 26: leadline.v1.ForecastBeliefRequest.horizon:type_name -> google.protobuf.Duration
-	27, // 27: leadline.v1.GetBudgetRequest.time:type_name -> google.protobuf.Timestamp
-	27, // 28: leadline.v1.ListBeliefsRequest.time:type_name -> google.protobuf.Timestamp
-	3,  // 29: leadline.v1.ListBeliefsResponse.beliefs:type_name -> leadline.v1.Belief
-	3,  // 30: leadline.v1.WatchBeliefsResponse.belief:type_name -> leadline.v1.Belief
-	27, // 31: leadline.v1.Forecast.Step.time:type_name -> google.protobuf.Timestamp
-	4,  // 32: leadline.v1.Forecast.Step.interval:type_name -> leadline.v1.Interval
-	20, // 33: leadline.v1.Forecast.Step.breach:type_name -> leadline.v1.Belief.Breach
-	24, // 34: leadline.v1.Forecast.Step.crossed:type_name -> leadline.v1.Forecast.Crossed
-	29, // 35: leadline.v1.Forecast.TimeToBreach.lower_decile:type_name -> google.protobuf.Duration
-	29, // 36: leadline.v1.Forecast.TimeToBreach.median:type_name -> google.protobuf.Duration
-	29, // 37: leadline.v1.Forecast.TimeToBreach.upper_decile:type_name -> google.protobuf.Duration
-	2,  // 38: leadline.v1.Budget.Part.source:type_name -> leadline.v1.Budget.Source
-	12, // 39: leadline.v1.BeliefService.GetBelief:input_type -> leadline.v1.GetBeliefRequest
-	15, // 40: leadline.v1.BeliefService.ListBeliefs:input_type -> leadline.v1.ListBeliefsRequest
-	17, // 41: leadline.v1.BeliefService.WatchBeliefs:input_type -> leadline.v1.WatchBeliefsRequest
-	13, // 42: leadline.v1.BeliefService.ForecastBelief:input_type -> leadline.v1.ForecastBeliefRequest
-	14, // 43: leadline.v1.BeliefService.GetBudget:input_type -> leadline.v1.GetBudgetRequest
-	3,  // 44: leadline.v1.BeliefService.GetBelief:output_type -> leadline.v1.Belief
-	16, // 45: leadline.v1.BeliefService.ListBeliefs:output_type -> leadline.v1.ListBeliefsResponse
-	18, // 46: leadline.v1.BeliefService.WatchBeliefs:output_type -> leadline.v1.WatchBeliefsResponse
-	10, // 47: leadline.v1.BeliefService.ForecastBelief:output_type -> leadline.v1.Forecast
-	11, // 48: leadline.v1.BeliefService.GetBudget:output_type -> leadline.v1.Budget
-	44, // [44:49] is the sub-list for method output_type
-	39, // [39:44] is the sub-list for method input_type
-	39, // [39:39] is the sub-list for extension type_name
-	39, // [39:39] is the sub-list for extension extendee
-	0,  // [0:39] is the sub-list for field type_name
+	42, // 0: leadline.v1.Belief.time:type_name -> google.protobuf.Timestamp
+	6,  // 1: leadline.v1.Belief.interval:type_name -> leadline.v1.Interval
+	28, // 2: leadline.v1.Belief.breach:type_name -> leadline.v1.Belief.Breach
+	29, // 3: leadline.v1.Belief.threshold:type_name -> leadline.v1.Belief.Threshold
+	7,  // 4: leadline.v1.Belief.predictive:type_name -> leadline.v1.Predictive
+	8,  // 5: leadline.v1.Belief.distribution:type_name -> leadline.v1.Distribution
+	9,  // 6: leadline.v1.Belief.repeatability:type_name -> leadline.v1.RepeatabilityBelief
+	43, // 7: leadline.v1.Belief.slope:type_name -> leadline.v1.Slope
+	10, // 8: leadline.v1.Belief.biases:type_name -> leadline.v1.BiasBelief
+	11, // 9: leadline.v1.Belief.references:type_name -> leadline.v1.ReferenceBelief
+	27, // 10: leadline.v1.Belief.flagged:type_name -> leadline.v1.Belief.Flagged
+	42, // 11: leadline.v1.Belief.renewal_time:type_name -> google.protobuf.Timestamp
+	44, // 12: leadline.v1.Belief.scale:type_name -> leadline.v1.Quantity.Scale
+	26, // 13: leadline.v1.Belief.last_reading:type_name -> leadline.v1.Belief.LastReading
+	12, // 14: leadline.v1.Belief.model_check:type_name -> leadline.v1.ModelCheck
+	42, // 15: leadline.v1.Belief.last_reading_time:type_name -> google.protobuf.Timestamp
+	0,  // 16: leadline.v1.Belief.verdict:type_name -> leadline.v1.Belief.Verdict
+	6,  // 17: leadline.v1.Predictive.interval:type_name -> leadline.v1.Interval
+	30, // 18: leadline.v1.Predictive.outside:type_name -> leadline.v1.Predictive.Outside
+	1,  // 19: leadline.v1.Distribution.form:type_name -> leadline.v1.Distribution.Form
+	6,  // 20: leadline.v1.RepeatabilityBelief.interval:type_name -> leadline.v1.Interval
+	42, // 21: leadline.v1.BiasBelief.valid_from:type_name -> google.protobuf.Timestamp
+	2,  // 22: leadline.v1.ModelCheck.result:type_name -> leadline.v1.ModelCheck.Result
+	2,  // 23: leadline.v1.ModelCheck.objections:type_name -> leadline.v1.ModelCheck.Result
+	32, // 24: leadline.v1.ModelCheck.last_step:type_name -> leadline.v1.ModelCheck.LastStep
+	31, // 25: leadline.v1.ModelCheck.tests:type_name -> leadline.v1.ModelCheck.Test
+	33, // 26: leadline.v1.ModelCheck.cusum:type_name -> leadline.v1.ModelCheck.Cusum
+	34, // 27: leadline.v1.ModelCheck.explanation:type_name -> leadline.v1.ModelCheck.Explanation
+	42, // 28: leadline.v1.StepEvent.time:type_name -> google.protobuf.Timestamp
+	42, // 29: leadline.v1.StepEvent.since:type_name -> google.protobuf.Timestamp
+	3,  // 30: leadline.v1.StepEvent.direction:type_name -> leadline.v1.StepEvent.Direction
+	42, // 31: leadline.v1.StepEvent.create_time:type_name -> google.protobuf.Timestamp
+	42, // 32: leadline.v1.Forecast.time:type_name -> google.protobuf.Timestamp
+	45, // 33: leadline.v1.Forecast.horizon:type_name -> google.protobuf.Duration
+	38, // 34: leadline.v1.Forecast.steps:type_name -> leadline.v1.Forecast.Step
+	40, // 35: leadline.v1.Forecast.time_to_breach:type_name -> leadline.v1.Forecast.TimeToBreach
+	42, // 36: leadline.v1.Budget.time:type_name -> google.protobuf.Timestamp
+	41, // 37: leadline.v1.Budget.parts:type_name -> leadline.v1.Budget.Part
+	42, // 38: leadline.v1.GetBeliefRequest.time:type_name -> google.protobuf.Timestamp
+	45, // 39: leadline.v1.ForecastBeliefRequest.horizon:type_name -> google.protobuf.Duration
+	42, // 40: leadline.v1.GetBudgetRequest.time:type_name -> google.protobuf.Timestamp
+	13, // 41: leadline.v1.ListStepsResponse.steps:type_name -> leadline.v1.StepEvent
+	42, // 42: leadline.v1.ListBeliefsRequest.time:type_name -> google.protobuf.Timestamp
+	5,  // 43: leadline.v1.ListBeliefsResponse.beliefs:type_name -> leadline.v1.Belief
+	5,  // 44: leadline.v1.WatchBeliefsResponse.belief:type_name -> leadline.v1.Belief
+	42, // 45: leadline.v1.Belief.LastReading.time:type_name -> google.protobuf.Timestamp
+	2,  // 46: leadline.v1.ModelCheck.Test.objection:type_name -> leadline.v1.ModelCheck.Result
+	42, // 47: leadline.v1.ModelCheck.LastStep.time:type_name -> google.protobuf.Timestamp
+	42, // 48: leadline.v1.ModelCheck.LastStep.since:type_name -> google.protobuf.Timestamp
+	3,  // 49: leadline.v1.ModelCheck.LastStep.direction:type_name -> leadline.v1.StepEvent.Direction
+	35, // 50: leadline.v1.ModelCheck.Explanation.as_declared:type_name -> leadline.v1.ModelCheck.AsDeclared
+	36, // 51: leadline.v1.ModelCheck.Explanation.moving:type_name -> leadline.v1.ModelCheck.Moving
+	37, // 52: leadline.v1.ModelCheck.Explanation.correlated_noise:type_name -> leadline.v1.ModelCheck.CorrelatedNoise
+	45, // 53: leadline.v1.ModelCheck.Moving.per:type_name -> google.protobuf.Duration
+	45, // 54: leadline.v1.ModelCheck.CorrelatedNoise.correlation_time:type_name -> google.protobuf.Duration
+	42, // 55: leadline.v1.Forecast.Step.time:type_name -> google.protobuf.Timestamp
+	6,  // 56: leadline.v1.Forecast.Step.interval:type_name -> leadline.v1.Interval
+	28, // 57: leadline.v1.Forecast.Step.breach:type_name -> leadline.v1.Belief.Breach
+	39, // 58: leadline.v1.Forecast.Step.crossed:type_name -> leadline.v1.Forecast.Crossed
+	45, // 59: leadline.v1.Forecast.TimeToBreach.lower_decile:type_name -> google.protobuf.Duration
+	45, // 60: leadline.v1.Forecast.TimeToBreach.median:type_name -> google.protobuf.Duration
+	45, // 61: leadline.v1.Forecast.TimeToBreach.upper_decile:type_name -> google.protobuf.Duration
+	4,  // 62: leadline.v1.Budget.Part.source:type_name -> leadline.v1.Budget.Source
+	16, // 63: leadline.v1.BeliefService.GetBelief:input_type -> leadline.v1.GetBeliefRequest
+	22, // 64: leadline.v1.BeliefService.ListBeliefs:input_type -> leadline.v1.ListBeliefsRequest
+	24, // 65: leadline.v1.BeliefService.WatchBeliefs:input_type -> leadline.v1.WatchBeliefsRequest
+	17, // 66: leadline.v1.BeliefService.ForecastBelief:input_type -> leadline.v1.ForecastBeliefRequest
+	18, // 67: leadline.v1.BeliefService.GetBudget:input_type -> leadline.v1.GetBudgetRequest
+	19, // 68: leadline.v1.BeliefService.GetModelCheck:input_type -> leadline.v1.GetModelCheckRequest
+	20, // 69: leadline.v1.BeliefService.ListSteps:input_type -> leadline.v1.ListStepsRequest
+	5,  // 70: leadline.v1.BeliefService.GetBelief:output_type -> leadline.v1.Belief
+	23, // 71: leadline.v1.BeliefService.ListBeliefs:output_type -> leadline.v1.ListBeliefsResponse
+	25, // 72: leadline.v1.BeliefService.WatchBeliefs:output_type -> leadline.v1.WatchBeliefsResponse
+	14, // 73: leadline.v1.BeliefService.ForecastBelief:output_type -> leadline.v1.Forecast
+	15, // 74: leadline.v1.BeliefService.GetBudget:output_type -> leadline.v1.Budget
+	12, // 75: leadline.v1.BeliefService.GetModelCheck:output_type -> leadline.v1.ModelCheck
+	21, // 76: leadline.v1.BeliefService.ListSteps:output_type -> leadline.v1.ListStepsResponse
+	70, // [70:77] is the sub-list for method output_type
+	63, // [63:70] is the sub-list for method input_type
+	63, // [63:63] is the sub-list for extension type_name
+	63, // [63:63] is the sub-list for extension extendee
+	0,  // [0:63] is the sub-list for field type_name
 }
 
 func init() { file_leadline_v1_belief_proto_init() }
@@ -2616,22 +3889,24 @@ func file_leadline_v1_belief_proto_init() {
 	file_leadline_v1_belief_proto_msgTypes[2].OneofWrappers = []any{}
 	file_leadline_v1_belief_proto_msgTypes[3].OneofWrappers = []any{}
 	file_leadline_v1_belief_proto_msgTypes[4].OneofWrappers = []any{}
-	file_leadline_v1_belief_proto_msgTypes[8].OneofWrappers = []any{}
-	file_leadline_v1_belief_proto_msgTypes[9].OneofWrappers = []any{}
+	file_leadline_v1_belief_proto_msgTypes[7].OneofWrappers = []any{}
 	file_leadline_v1_belief_proto_msgTypes[10].OneofWrappers = []any{}
+	file_leadline_v1_belief_proto_msgTypes[11].OneofWrappers = []any{}
 	file_leadline_v1_belief_proto_msgTypes[12].OneofWrappers = []any{}
-	file_leadline_v1_belief_proto_msgTypes[15].OneofWrappers = []any{
+	file_leadline_v1_belief_proto_msgTypes[17].OneofWrappers = []any{}
+	file_leadline_v1_belief_proto_msgTypes[20].OneofWrappers = []any{
 		(*WatchBeliefsResponse_Belief)(nil),
 		(*WatchBeliefsResponse_RetiredQuantity)(nil),
 	}
-	file_leadline_v1_belief_proto_msgTypes[20].OneofWrappers = []any{}
+	file_leadline_v1_belief_proto_msgTypes[21].OneofWrappers = []any{}
+	file_leadline_v1_belief_proto_msgTypes[33].OneofWrappers = []any{}
 	type x struct{}
 	out := protoimpl.TypeBuilder{
 		File: protoimpl.DescBuilder{
 			GoPackagePath: reflect.TypeOf(x{}).PkgPath(),
 			RawDescriptor: unsafe.Slice(unsafe.StringData(file_leadline_v1_belief_proto_rawDesc), len(file_leadline_v1_belief_proto_rawDesc)),
-			NumEnums:      3,
-			NumMessages:   24,
+			NumEnums:      5,
+			NumMessages:   37,
 			NumExtensions: 0,
 			NumServices:   1,
 		},

@@ -257,6 +257,84 @@ func local_request_BeliefService_GetBudget_0(ctx context.Context, marshaler runt
 	return msg, metadata, err
 }
 
+func request_BeliefService_GetModelCheck_0(ctx context.Context, marshaler runtime.Marshaler, client BeliefServiceClient, req *http.Request, pathParams map[string]string) (proto.Message, runtime.ServerMetadata, error) {
+	var (
+		protoReq GetModelCheckRequest
+		metadata runtime.ServerMetadata
+		err      error
+	)
+	val, ok := pathParams["quantity"]
+	if !ok {
+		return nil, metadata, status.Errorf(codes.InvalidArgument, "missing parameter %s", "quantity")
+	}
+	protoReq.Quantity, err = runtime.String(val)
+	if err != nil {
+		return nil, metadata, status.Errorf(codes.InvalidArgument, "type mismatch, parameter: %s, error: %v", "quantity", err)
+	}
+	if req.Body != nil {
+		_, _ = io.Copy(io.Discard, req.Body)
+	}
+	msg, err := client.GetModelCheck(ctx, &protoReq, grpc.Header(&metadata.HeaderMD), grpc.Trailer(&metadata.TrailerMD))
+	return msg, metadata, err
+}
+
+func local_request_BeliefService_GetModelCheck_0(ctx context.Context, marshaler runtime.Marshaler, server BeliefServiceServer, req *http.Request, pathParams map[string]string) (proto.Message, runtime.ServerMetadata, error) {
+	var (
+		protoReq GetModelCheckRequest
+		metadata runtime.ServerMetadata
+		err      error
+	)
+	val, ok := pathParams["quantity"]
+	if !ok {
+		return nil, metadata, status.Errorf(codes.InvalidArgument, "missing parameter %s", "quantity")
+	}
+	protoReq.Quantity, err = runtime.String(val)
+	if err != nil {
+		return nil, metadata, status.Errorf(codes.InvalidArgument, "type mismatch, parameter: %s, error: %v", "quantity", err)
+	}
+	msg, err := server.GetModelCheck(ctx, &protoReq)
+	return msg, metadata, err
+}
+
+func request_BeliefService_ListSteps_0(ctx context.Context, marshaler runtime.Marshaler, client BeliefServiceClient, req *http.Request, pathParams map[string]string) (proto.Message, runtime.ServerMetadata, error) {
+	var (
+		protoReq ListStepsRequest
+		metadata runtime.ServerMetadata
+		err      error
+	)
+	val, ok := pathParams["quantity"]
+	if !ok {
+		return nil, metadata, status.Errorf(codes.InvalidArgument, "missing parameter %s", "quantity")
+	}
+	protoReq.Quantity, err = runtime.String(val)
+	if err != nil {
+		return nil, metadata, status.Errorf(codes.InvalidArgument, "type mismatch, parameter: %s, error: %v", "quantity", err)
+	}
+	if req.Body != nil {
+		_, _ = io.Copy(io.Discard, req.Body)
+	}
+	msg, err := client.ListSteps(ctx, &protoReq, grpc.Header(&metadata.HeaderMD), grpc.Trailer(&metadata.TrailerMD))
+	return msg, metadata, err
+}
+
+func local_request_BeliefService_ListSteps_0(ctx context.Context, marshaler runtime.Marshaler, server BeliefServiceServer, req *http.Request, pathParams map[string]string) (proto.Message, runtime.ServerMetadata, error) {
+	var (
+		protoReq ListStepsRequest
+		metadata runtime.ServerMetadata
+		err      error
+	)
+	val, ok := pathParams["quantity"]
+	if !ok {
+		return nil, metadata, status.Errorf(codes.InvalidArgument, "missing parameter %s", "quantity")
+	}
+	protoReq.Quantity, err = runtime.String(val)
+	if err != nil {
+		return nil, metadata, status.Errorf(codes.InvalidArgument, "type mismatch, parameter: %s, error: %v", "quantity", err)
+	}
+	msg, err := server.ListSteps(ctx, &protoReq)
+	return msg, metadata, err
+}
+
 // RegisterBeliefServiceHandlerServer registers the http handlers for service BeliefService to "mux".
 // UnaryRPC     :call BeliefServiceServer directly.
 // StreamingRPC :currently unsupported pending https://github.com/grpc/grpc-go/issues/906.
@@ -349,6 +427,46 @@ func RegisterBeliefServiceHandlerServer(ctx context.Context, mux *runtime.ServeM
 			return
 		}
 		forward_BeliefService_GetBudget_0(annotatedContext, mux, outboundMarshaler, w, req, resp, mux.GetForwardResponseOptions()...)
+	})
+	mux.Handle(http.MethodGet, pattern_BeliefService_GetModelCheck_0, func(w http.ResponseWriter, req *http.Request, pathParams map[string]string) {
+		ctx, cancel := context.WithCancel(req.Context())
+		defer cancel()
+		var stream runtime.ServerTransportStream
+		ctx = grpc.NewContextWithServerTransportStream(ctx, &stream)
+		inboundMarshaler, outboundMarshaler := runtime.MarshalerForRequest(mux, req)
+		annotatedContext, err := runtime.AnnotateIncomingContext(ctx, mux, req, "/leadline.v1.BeliefService/GetModelCheck", runtime.WithHTTPPathPattern("/v1/quantities/{quantity}/model_check"))
+		if err != nil {
+			runtime.HTTPError(ctx, mux, outboundMarshaler, w, req, err)
+			return
+		}
+		resp, md, err := local_request_BeliefService_GetModelCheck_0(annotatedContext, inboundMarshaler, server, req, pathParams)
+		md.HeaderMD, md.TrailerMD = metadata.Join(md.HeaderMD, stream.Header()), metadata.Join(md.TrailerMD, stream.Trailer())
+		annotatedContext = runtime.NewServerMetadataContext(annotatedContext, md)
+		if err != nil {
+			runtime.HTTPError(annotatedContext, mux, outboundMarshaler, w, req, err)
+			return
+		}
+		forward_BeliefService_GetModelCheck_0(annotatedContext, mux, outboundMarshaler, w, req, resp, mux.GetForwardResponseOptions()...)
+	})
+	mux.Handle(http.MethodGet, pattern_BeliefService_ListSteps_0, func(w http.ResponseWriter, req *http.Request, pathParams map[string]string) {
+		ctx, cancel := context.WithCancel(req.Context())
+		defer cancel()
+		var stream runtime.ServerTransportStream
+		ctx = grpc.NewContextWithServerTransportStream(ctx, &stream)
+		inboundMarshaler, outboundMarshaler := runtime.MarshalerForRequest(mux, req)
+		annotatedContext, err := runtime.AnnotateIncomingContext(ctx, mux, req, "/leadline.v1.BeliefService/ListSteps", runtime.WithHTTPPathPattern("/v1/quantities/{quantity}/steps"))
+		if err != nil {
+			runtime.HTTPError(ctx, mux, outboundMarshaler, w, req, err)
+			return
+		}
+		resp, md, err := local_request_BeliefService_ListSteps_0(annotatedContext, inboundMarshaler, server, req, pathParams)
+		md.HeaderMD, md.TrailerMD = metadata.Join(md.HeaderMD, stream.Header()), metadata.Join(md.TrailerMD, stream.Trailer())
+		annotatedContext = runtime.NewServerMetadataContext(annotatedContext, md)
+		if err != nil {
+			runtime.HTTPError(annotatedContext, mux, outboundMarshaler, w, req, err)
+			return
+		}
+		forward_BeliefService_ListSteps_0(annotatedContext, mux, outboundMarshaler, w, req, resp, mux.GetForwardResponseOptions()...)
 	})
 
 	return nil
@@ -475,6 +593,40 @@ func RegisterBeliefServiceHandlerClient(ctx context.Context, mux *runtime.ServeM
 		}
 		forward_BeliefService_GetBudget_0(annotatedContext, mux, outboundMarshaler, w, req, resp, mux.GetForwardResponseOptions()...)
 	})
+	mux.Handle(http.MethodGet, pattern_BeliefService_GetModelCheck_0, func(w http.ResponseWriter, req *http.Request, pathParams map[string]string) {
+		ctx, cancel := context.WithCancel(req.Context())
+		defer cancel()
+		inboundMarshaler, outboundMarshaler := runtime.MarshalerForRequest(mux, req)
+		annotatedContext, err := runtime.AnnotateContext(ctx, mux, req, "/leadline.v1.BeliefService/GetModelCheck", runtime.WithHTTPPathPattern("/v1/quantities/{quantity}/model_check"))
+		if err != nil {
+			runtime.HTTPError(ctx, mux, outboundMarshaler, w, req, err)
+			return
+		}
+		resp, md, err := request_BeliefService_GetModelCheck_0(annotatedContext, inboundMarshaler, client, req, pathParams)
+		annotatedContext = runtime.NewServerMetadataContext(annotatedContext, md)
+		if err != nil {
+			runtime.HTTPError(annotatedContext, mux, outboundMarshaler, w, req, err)
+			return
+		}
+		forward_BeliefService_GetModelCheck_0(annotatedContext, mux, outboundMarshaler, w, req, resp, mux.GetForwardResponseOptions()...)
+	})
+	mux.Handle(http.MethodGet, pattern_BeliefService_ListSteps_0, func(w http.ResponseWriter, req *http.Request, pathParams map[string]string) {
+		ctx, cancel := context.WithCancel(req.Context())
+		defer cancel()
+		inboundMarshaler, outboundMarshaler := runtime.MarshalerForRequest(mux, req)
+		annotatedContext, err := runtime.AnnotateContext(ctx, mux, req, "/leadline.v1.BeliefService/ListSteps", runtime.WithHTTPPathPattern("/v1/quantities/{quantity}/steps"))
+		if err != nil {
+			runtime.HTTPError(ctx, mux, outboundMarshaler, w, req, err)
+			return
+		}
+		resp, md, err := request_BeliefService_ListSteps_0(annotatedContext, inboundMarshaler, client, req, pathParams)
+		annotatedContext = runtime.NewServerMetadataContext(annotatedContext, md)
+		if err != nil {
+			runtime.HTTPError(annotatedContext, mux, outboundMarshaler, w, req, err)
+			return
+		}
+		forward_BeliefService_ListSteps_0(annotatedContext, mux, outboundMarshaler, w, req, resp, mux.GetForwardResponseOptions()...)
+	})
 	return nil
 }
 
@@ -484,6 +636,8 @@ var (
 	pattern_BeliefService_WatchBeliefs_0   = runtime.MustPattern(runtime.NewPattern(1, []int{2, 0, 2, 1}, []string{"v1", "beliefs"}, "watch"))
 	pattern_BeliefService_ForecastBelief_0 = runtime.MustPattern(runtime.NewPattern(1, []int{2, 0, 2, 1, 1, 0, 4, 1, 5, 2, 2, 3}, []string{"v1", "quantities", "quantity", "forecast"}, ""))
 	pattern_BeliefService_GetBudget_0      = runtime.MustPattern(runtime.NewPattern(1, []int{2, 0, 2, 1, 1, 0, 4, 1, 5, 2, 2, 3}, []string{"v1", "quantities", "quantity", "belief"}, "budget"))
+	pattern_BeliefService_GetModelCheck_0  = runtime.MustPattern(runtime.NewPattern(1, []int{2, 0, 2, 1, 1, 0, 4, 1, 5, 2, 2, 3}, []string{"v1", "quantities", "quantity", "model_check"}, ""))
+	pattern_BeliefService_ListSteps_0      = runtime.MustPattern(runtime.NewPattern(1, []int{2, 0, 2, 1, 1, 0, 4, 1, 5, 2, 2, 3}, []string{"v1", "quantities", "quantity", "steps"}, ""))
 )
 
 var (
@@ -492,4 +646,6 @@ var (
 	forward_BeliefService_WatchBeliefs_0   = runtime.ForwardResponseStream
 	forward_BeliefService_ForecastBelief_0 = runtime.ForwardResponseMessage
 	forward_BeliefService_GetBudget_0      = runtime.ForwardResponseMessage
+	forward_BeliefService_GetModelCheck_0  = runtime.ForwardResponseMessage
+	forward_BeliefService_ListSteps_0      = runtime.ForwardResponseMessage
 )

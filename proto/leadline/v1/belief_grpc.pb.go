@@ -24,6 +24,8 @@ const (
 	BeliefService_WatchBeliefs_FullMethodName   = "/leadline.v1.BeliefService/WatchBeliefs"
 	BeliefService_ForecastBelief_FullMethodName = "/leadline.v1.BeliefService/ForecastBelief"
 	BeliefService_GetBudget_FullMethodName      = "/leadline.v1.BeliefService/GetBudget"
+	BeliefService_GetModelCheck_FullMethodName  = "/leadline.v1.BeliefService/GetModelCheck"
+	BeliefService_ListSteps_FullMethodName      = "/leadline.v1.BeliefService/ListSteps"
 )
 
 // BeliefServiceClient is the client API for BeliefService service.
@@ -32,7 +34,8 @@ const (
 //
 // BeliefService answers what the readings say: the value, how sure, how
 // probable a breach, what the next reading would be, and the verdict; also when a
-// limit will be crossed, and where the uncertainty comes from.
+// limit will be crossed, where the uncertainty comes from, and whether the
+// declaration agrees with the readings.
 type BeliefServiceClient interface {
 	// GetBelief answers with the belief of one quantity, now or at a stated time.
 	GetBelief(ctx context.Context, in *GetBeliefRequest, opts ...grpc.CallOption) (*Belief, error)
@@ -55,6 +58,14 @@ type BeliefServiceClient interface {
 	// text/plain gives it as a table. A quantity whose repeatability is learned has
 	// none.
 	GetBudget(ctx context.Context, in *GetBudgetRequest, opts ...grpc.CallOption) (*Budget, error)
+	// GetModelCheck tells how well the belief has predicted the readings so far,
+	// what the readings object to in the declaration, and how likely they are if the
+	// value moves, or the noise is correlated, more than was declared.
+	GetModelCheck(ctx context.Context, in *GetModelCheckRequest, opts ...grpc.CallOption) (*ModelCheck, error)
+	// ListSteps lists the steps that were found in the readings of a quantity, oldest
+	// first. They are events: readings that come late change the belief and its
+	// model_check, and not what is listed here.
+	ListSteps(ctx context.Context, in *ListStepsRequest, opts ...grpc.CallOption) (*ListStepsResponse, error)
 }
 
 type beliefServiceClient struct {
@@ -124,13 +135,34 @@ func (c *beliefServiceClient) GetBudget(ctx context.Context, in *GetBudgetReques
 	return out, nil
 }
 
+func (c *beliefServiceClient) GetModelCheck(ctx context.Context, in *GetModelCheckRequest, opts ...grpc.CallOption) (*ModelCheck, error) {
+	cOpts := append([]grpc.CallOption{grpc.StaticMethod()}, opts...)
+	out := new(ModelCheck)
+	err := c.cc.Invoke(ctx, BeliefService_GetModelCheck_FullMethodName, in, out, cOpts...)
+	if err != nil {
+		return nil, err
+	}
+	return out, nil
+}
+
+func (c *beliefServiceClient) ListSteps(ctx context.Context, in *ListStepsRequest, opts ...grpc.CallOption) (*ListStepsResponse, error) {
+	cOpts := append([]grpc.CallOption{grpc.StaticMethod()}, opts...)
+	out := new(ListStepsResponse)
+	err := c.cc.Invoke(ctx, BeliefService_ListSteps_FullMethodName, in, out, cOpts...)
+	if err != nil {
+		return nil, err
+	}
+	return out, nil
+}
+
 // BeliefServiceServer is the server API for BeliefService service.
 // All implementations must embed UnimplementedBeliefServiceServer
 // for forward compatibility.
 //
 // BeliefService answers what the readings say: the value, how sure, how
 // probable a breach, what the next reading would be, and the verdict; also when a
-// limit will be crossed, and where the uncertainty comes from.
+// limit will be crossed, where the uncertainty comes from, and whether the
+// declaration agrees with the readings.
 type BeliefServiceServer interface {
 	// GetBelief answers with the belief of one quantity, now or at a stated time.
 	GetBelief(context.Context, *GetBeliefRequest) (*Belief, error)
@@ -153,6 +185,14 @@ type BeliefServiceServer interface {
 	// text/plain gives it as a table. A quantity whose repeatability is learned has
 	// none.
 	GetBudget(context.Context, *GetBudgetRequest) (*Budget, error)
+	// GetModelCheck tells how well the belief has predicted the readings so far,
+	// what the readings object to in the declaration, and how likely they are if the
+	// value moves, or the noise is correlated, more than was declared.
+	GetModelCheck(context.Context, *GetModelCheckRequest) (*ModelCheck, error)
+	// ListSteps lists the steps that were found in the readings of a quantity, oldest
+	// first. They are events: readings that come late change the belief and its
+	// model_check, and not what is listed here.
+	ListSteps(context.Context, *ListStepsRequest) (*ListStepsResponse, error)
 	mustEmbedUnimplementedBeliefServiceServer()
 }
 
@@ -177,6 +217,12 @@ func (UnimplementedBeliefServiceServer) ForecastBelief(context.Context, *Forecas
 }
 func (UnimplementedBeliefServiceServer) GetBudget(context.Context, *GetBudgetRequest) (*Budget, error) {
 	return nil, status.Error(codes.Unimplemented, "method GetBudget not implemented")
+}
+func (UnimplementedBeliefServiceServer) GetModelCheck(context.Context, *GetModelCheckRequest) (*ModelCheck, error) {
+	return nil, status.Error(codes.Unimplemented, "method GetModelCheck not implemented")
+}
+func (UnimplementedBeliefServiceServer) ListSteps(context.Context, *ListStepsRequest) (*ListStepsResponse, error) {
+	return nil, status.Error(codes.Unimplemented, "method ListSteps not implemented")
 }
 func (UnimplementedBeliefServiceServer) mustEmbedUnimplementedBeliefServiceServer() {}
 func (UnimplementedBeliefServiceServer) testEmbeddedByValue()                       {}
@@ -282,6 +328,42 @@ func _BeliefService_GetBudget_Handler(srv interface{}, ctx context.Context, dec 
 	return interceptor(ctx, in, info, handler)
 }
 
+func _BeliefService_GetModelCheck_Handler(srv interface{}, ctx context.Context, dec func(interface{}) error, interceptor grpc.UnaryServerInterceptor) (interface{}, error) {
+	in := new(GetModelCheckRequest)
+	if err := dec(in); err != nil {
+		return nil, err
+	}
+	if interceptor == nil {
+		return srv.(BeliefServiceServer).GetModelCheck(ctx, in)
+	}
+	info := &grpc.UnaryServerInfo{
+		Server:     srv,
+		FullMethod: BeliefService_GetModelCheck_FullMethodName,
+	}
+	handler := func(ctx context.Context, req interface{}) (interface{}, error) {
+		return srv.(BeliefServiceServer).GetModelCheck(ctx, req.(*GetModelCheckRequest))
+	}
+	return interceptor(ctx, in, info, handler)
+}
+
+func _BeliefService_ListSteps_Handler(srv interface{}, ctx context.Context, dec func(interface{}) error, interceptor grpc.UnaryServerInterceptor) (interface{}, error) {
+	in := new(ListStepsRequest)
+	if err := dec(in); err != nil {
+		return nil, err
+	}
+	if interceptor == nil {
+		return srv.(BeliefServiceServer).ListSteps(ctx, in)
+	}
+	info := &grpc.UnaryServerInfo{
+		Server:     srv,
+		FullMethod: BeliefService_ListSteps_FullMethodName,
+	}
+	handler := func(ctx context.Context, req interface{}) (interface{}, error) {
+		return srv.(BeliefServiceServer).ListSteps(ctx, req.(*ListStepsRequest))
+	}
+	return interceptor(ctx, in, info, handler)
+}
+
 // BeliefService_ServiceDesc is the grpc.ServiceDesc for BeliefService service.
 // It's only intended for direct use with grpc.RegisterService,
 // and not to be introspected or modified (even as a copy)
@@ -304,6 +386,14 @@ var BeliefService_ServiceDesc = grpc.ServiceDesc{
 		{
 			MethodName: "GetBudget",
 			Handler:    _BeliefService_GetBudget_Handler,
+		},
+		{
+			MethodName: "GetModelCheck",
+			Handler:    _BeliefService_GetModelCheck_Handler,
+		},
+		{
+			MethodName: "ListSteps",
+			Handler:    _BeliefService_ListSteps_Handler,
 		},
 	},
 	Streams: []grpc.StreamDesc{

@@ -39,11 +39,13 @@ type Instrument struct {
 	// Repeatability: the random part of one of its readings. Absent, that of the
 	// quantity counts.
 	Repeatability *Instrument_Repeatability `protobuf:"bytes,4,opt,name=repeatability,proto3" json:"repeatability,omitempty"`
-	// Resolution of its display, above 0, in its unit. It adds resolution^2/12 to the
-	// variance of each reading; the belief then says resolution_as_variance.
+	// Resolution of its display, above 0, in its unit. A reading of y then says that
+	// the indication lay from y - resolution/2 to y + resolution/2. Beliefs held by
+	// COUNTS or a GRID take it as that; others add resolution^2/12 to the variance of
+	// each reading and say resolution_as_variance.
 	Resolution *float64 `protobuf:"fixed64,5,opt,name=resolution,proto3,oneof" json:"resolution,omitempty"`
-	// Range of the values that it can indicate. It is kept and shown here; readings
-	// outside of it are taken all the same.
+	// Range of the values that it can indicate. A value beyond an end says only that
+	// the indication lay beyond that end, as above and below do.
 	MeasuringInterval *Instrument_MeasuringInterval `protobuf:"bytes,6,opt,name=measuring_interval,json=measuringInterval,proto3" json:"measuring_interval,omitempty"`
 	// Its calibrations, up to 1000, in the order of their valid_from. A reading rests
 	// on the last one that was valid by its time; one made before the first rests on
@@ -657,8 +659,12 @@ type Instrument_Repeatability struct {
 	// share: mounting, warming up, the person who reads (ISO 5725-3, intermediate
 	// precision). A reading without occasion is an occasion of its own.
 	BetweenOccasions *float64 `protobuf:"fixed64,4,opt,name=between_occasions,json=betweenOccasions,proto3,oneof" json:"between_occasions,omitempty"`
-	unknownFields    protoimpl.UnknownFields
-	sizeCache        protoimpl.SizeCache
+	// Learned: the white part is learned from the readings, for each quantity by
+	// itself, in the instrument's unit. It stands in place of standard_deviation and
+	// relative.
+	Learned       *Repeatability_Learned `protobuf:"bytes,5,opt,name=learned,proto3" json:"learned,omitempty"`
+	unknownFields protoimpl.UnknownFields
+	sizeCache     protoimpl.SizeCache
 }
 
 func (x *Instrument_Repeatability) Reset() {
@@ -717,6 +723,13 @@ func (x *Instrument_Repeatability) GetBetweenOccasions() float64 {
 		return *x.BetweenOccasions
 	}
 	return 0
+}
+
+func (x *Instrument_Repeatability) GetLearned() *Repeatability_Learned {
+	if x != nil {
+		return x.Learned
+	}
+	return nil
 }
 
 // Correlated is an error with the autocorrelation exp(-h/correlation_time) over
@@ -834,7 +847,8 @@ var File_leadline_v1_instrument_proto protoreflect.FileDescriptor
 
 const file_leadline_v1_instrument_proto_rawDesc = "" +
 	"\n" +
-	"\x1cleadline/v1/instrument.proto\x12\vleadline.v1\x1a\x1cgoogle/api/annotations.proto\x1a\x1fgoogle/api/field_behavior.proto\x1a\x1egoogle/protobuf/duration.proto\x1a\x1fgoogle/protobuf/timestamp.proto\"\xdd\t\n" +
+	"\x1cleadline/v1/instrument.proto\x12\vleadline.v1\x1a\x1cgoogle/api/annotations.proto\x1a\x1fgoogle/api/field_behavior.proto\x1a\x1egoogle/protobuf/duration.proto\x1a\x1fgoogle/protobuf/timestamp.proto\x1a\x1aleadline/v1/quantity.proto\"\x9b\n" +
+	"\n" +
 	"\n" +
 	"Instrument\x12\x13\n" +
 	"\x02id\x18\x01 \x01(\tB\x03\xe0A\x03R\x02id\x12\x12\n" +
@@ -856,14 +870,15 @@ const file_leadline_v1_instrument_proto_rawDesc = "" +
 	"\vretire_time\x18\f \x01(\v2\x1a.google.protobuf.TimestampB\x03\xe0A\x03R\n" +
 	"retireTime\x12*\n" +
 	"\x0equantity_count\x18\r \x01(\rB\x03\xe0A\x03R\rquantityCount\x12.\n" +
-	"\x10rebuilding_count\x18\x0e \x01(\rB\x03\xe0A\x03R\x0frebuildingCount\x1a\x94\x02\n" +
+	"\x10rebuilding_count\x18\x0e \x01(\rB\x03\xe0A\x03R\x0frebuildingCount\x1a\xd2\x02\n" +
 	"\rRepeatability\x122\n" +
 	"\x12standard_deviation\x18\x01 \x01(\x01H\x00R\x11standardDeviation\x88\x01\x01\x12\x1f\n" +
 	"\brelative\x18\x02 \x01(\x01H\x01R\brelative\x88\x01\x01\x12B\n" +
 	"\n" +
 	"correlated\x18\x03 \x01(\v2\".leadline.v1.Instrument.CorrelatedR\n" +
 	"correlated\x120\n" +
-	"\x11between_occasions\x18\x04 \x01(\x01H\x02R\x10betweenOccasions\x88\x01\x01B\x15\n" +
+	"\x11between_occasions\x18\x04 \x01(\x01H\x02R\x10betweenOccasions\x88\x01\x01\x12<\n" +
+	"\alearned\x18\x05 \x01(\v2\".leadline.v1.Repeatability.LearnedR\alearnedB\x15\n" +
 	"\x13_standard_deviationB\v\n" +
 	"\t_relativeB\x14\n" +
 	"\x12_between_occasions\x1a\x9d\x01\n" +
@@ -951,6 +966,7 @@ var file_leadline_v1_instrument_proto_goTypes = []any{
 	(*Instrument_MeasuringInterval)(nil), // 9: leadline.v1.Instrument.MeasuringInterval
 	(*timestamppb.Timestamp)(nil),        // 10: google.protobuf.Timestamp
 	(*durationpb.Duration)(nil),          // 11: google.protobuf.Duration
+	(*Repeatability_Learned)(nil),        // 12: leadline.v1.Repeatability.Learned
 }
 var file_leadline_v1_instrument_proto_depIdxs = []int32{
 	7,  // 0: leadline.v1.Instrument.repeatability:type_name -> leadline.v1.Instrument.Repeatability
@@ -965,20 +981,21 @@ var file_leadline_v1_instrument_proto_depIdxs = []int32{
 	0,  // 9: leadline.v1.DeclareInstrumentRequest.instrument:type_name -> leadline.v1.Instrument
 	0,  // 10: leadline.v1.ListInstrumentsResponse.instruments:type_name -> leadline.v1.Instrument
 	8,  // 11: leadline.v1.Instrument.Repeatability.correlated:type_name -> leadline.v1.Instrument.Correlated
-	11, // 12: leadline.v1.Instrument.Correlated.correlation_time:type_name -> google.protobuf.Duration
-	2,  // 13: leadline.v1.InstrumentService.DeclareInstrument:input_type -> leadline.v1.DeclareInstrumentRequest
-	3,  // 14: leadline.v1.InstrumentService.GetInstrument:input_type -> leadline.v1.GetInstrumentRequest
-	4,  // 15: leadline.v1.InstrumentService.ListInstruments:input_type -> leadline.v1.ListInstrumentsRequest
-	6,  // 16: leadline.v1.InstrumentService.RetireInstrument:input_type -> leadline.v1.RetireInstrumentRequest
-	0,  // 17: leadline.v1.InstrumentService.DeclareInstrument:output_type -> leadline.v1.Instrument
-	0,  // 18: leadline.v1.InstrumentService.GetInstrument:output_type -> leadline.v1.Instrument
-	5,  // 19: leadline.v1.InstrumentService.ListInstruments:output_type -> leadline.v1.ListInstrumentsResponse
-	0,  // 20: leadline.v1.InstrumentService.RetireInstrument:output_type -> leadline.v1.Instrument
-	17, // [17:21] is the sub-list for method output_type
-	13, // [13:17] is the sub-list for method input_type
-	13, // [13:13] is the sub-list for extension type_name
-	13, // [13:13] is the sub-list for extension extendee
-	0,  // [0:13] is the sub-list for field type_name
+	12, // 12: leadline.v1.Instrument.Repeatability.learned:type_name -> leadline.v1.Repeatability.Learned
+	11, // 13: leadline.v1.Instrument.Correlated.correlation_time:type_name -> google.protobuf.Duration
+	2,  // 14: leadline.v1.InstrumentService.DeclareInstrument:input_type -> leadline.v1.DeclareInstrumentRequest
+	3,  // 15: leadline.v1.InstrumentService.GetInstrument:input_type -> leadline.v1.GetInstrumentRequest
+	4,  // 16: leadline.v1.InstrumentService.ListInstruments:input_type -> leadline.v1.ListInstrumentsRequest
+	6,  // 17: leadline.v1.InstrumentService.RetireInstrument:input_type -> leadline.v1.RetireInstrumentRequest
+	0,  // 18: leadline.v1.InstrumentService.DeclareInstrument:output_type -> leadline.v1.Instrument
+	0,  // 19: leadline.v1.InstrumentService.GetInstrument:output_type -> leadline.v1.Instrument
+	5,  // 20: leadline.v1.InstrumentService.ListInstruments:output_type -> leadline.v1.ListInstrumentsResponse
+	0,  // 21: leadline.v1.InstrumentService.RetireInstrument:output_type -> leadline.v1.Instrument
+	18, // [18:22] is the sub-list for method output_type
+	14, // [14:18] is the sub-list for method input_type
+	14, // [14:14] is the sub-list for extension type_name
+	14, // [14:14] is the sub-list for extension extendee
+	0,  // [0:14] is the sub-list for field type_name
 }
 
 func init() { file_leadline_v1_instrument_proto_init() }
@@ -986,6 +1003,7 @@ func file_leadline_v1_instrument_proto_init() {
 	if File_leadline_v1_instrument_proto != nil {
 		return
 	}
+	file_leadline_v1_quantity_proto_init()
 	file_leadline_v1_instrument_proto_msgTypes[0].OneofWrappers = []any{}
 	file_leadline_v1_instrument_proto_msgTypes[1].OneofWrappers = []any{}
 	file_leadline_v1_instrument_proto_msgTypes[7].OneofWrappers = []any{}

@@ -24,6 +24,62 @@ const (
 	_ = protoimpl.EnforceVersion(protoimpl.MaxVersion - 20)
 )
 
+// Scale is a scale on which a value and its errors are normal.
+type Quantity_Scale int32
+
+const (
+	// Never sent, refused in a declaration.
+	Quantity_UNSPECIFIED Quantity_Scale = 0
+	// The value itself.
+	Quantity_LINEAR Quantity_Scale = 1
+	// The natural logarithm of the value, for what is positive by nature, such as a
+	// concentration or a leak rate. Values, limits, intervals, displays and the prior
+	// stay in the unit, and are above 0. The standard deviations of readings and of
+	// dynamics, slopes too, are of the logarithm: 0.1 is about ten per cent.
+	Quantity_LOG Quantity_Scale = 2
+)
+
+// Enum value maps for Quantity_Scale.
+var (
+	Quantity_Scale_name = map[int32]string{
+		0: "UNSPECIFIED",
+		1: "LINEAR",
+		2: "LOG",
+	}
+	Quantity_Scale_value = map[string]int32{
+		"UNSPECIFIED": 0,
+		"LINEAR":      1,
+		"LOG":         2,
+	}
+)
+
+func (x Quantity_Scale) Enum() *Quantity_Scale {
+	p := new(Quantity_Scale)
+	*p = x
+	return p
+}
+
+func (x Quantity_Scale) String() string {
+	return protoimpl.X.EnumStringOf(x.Descriptor(), protoreflect.EnumNumber(x))
+}
+
+func (Quantity_Scale) Descriptor() protoreflect.EnumDescriptor {
+	return file_leadline_v1_quantity_proto_enumTypes[0].Descriptor()
+}
+
+func (Quantity_Scale) Type() protoreflect.EnumType {
+	return &file_leadline_v1_quantity_proto_enumTypes[0]
+}
+
+func (x Quantity_Scale) Number() protoreflect.EnumNumber {
+	return protoreflect.EnumNumber(x)
+}
+
+// Deprecated: Use Quantity_Scale.Descriptor instead.
+func (Quantity_Scale) EnumDescriptor() ([]byte, []int) {
+	return file_leadline_v1_quantity_proto_rawDescGZIP(), []int{0, 0}
+}
+
 // Quantity is what is measured, as it was declared, with what the service adds.
 type Quantity struct {
 	state protoimpl.MessageState `protogen:"open.v1"`
@@ -60,7 +116,18 @@ type Quantity struct {
 	// When its declaration last changed.
 	UpdateTime *timestamppb.Timestamp `protobuf:"bytes,12,opt,name=update_time,json=updateTime,proto3" json:"update_time,omitempty"`
 	// When it was retired; absent while it is in use.
-	RetireTime    *timestamppb.Timestamp `protobuf:"bytes,13,opt,name=retire_time,json=retireTime,proto3" json:"retire_time,omitempty"`
+	RetireTime *timestamppb.Timestamp `protobuf:"bytes,13,opt,name=retire_time,json=retireTime,proto3" json:"retire_time,omitempty"`
+	// Outliers: how often a reading is one, and how far it then strays. Absent, none
+	// is: a reading far out counts like any other, and is flagged.
+	Outliers *Outliers `protobuf:"bytes,15,opt,name=outliers,proto3" json:"outliers,omitempty"`
+	// Scale on which the value and its errors are normal. Absent, LINEAR.
+	Scale *Quantity_Scale `protobuf:"varint,16,opt,name=scale,proto3,enum=leadline.v1.Quantity_Scale,oneof" json:"scale,omitempty"`
+	// Model check: how the declaration is held against the readings. Absent, with its
+	// defaults.
+	ModelCheck *ModelCheckSettings `protobuf:"bytes,17,opt,name=model_check,json=modelCheck,proto3" json:"model_check,omitempty"`
+	// Step detection: when the readings are taken to have stepped. Absent, with its
+	// defaults.
+	StepDetection *StepDetection `protobuf:"bytes,18,opt,name=step_detection,json=stepDetection,proto3" json:"step_detection,omitempty"`
 	unknownFields protoimpl.UnknownFields
 	sizeCache     protoimpl.SizeCache
 }
@@ -193,6 +260,205 @@ func (x *Quantity) GetRetireTime() *timestamppb.Timestamp {
 	return nil
 }
 
+func (x *Quantity) GetOutliers() *Outliers {
+	if x != nil {
+		return x.Outliers
+	}
+	return nil
+}
+
+func (x *Quantity) GetScale() Quantity_Scale {
+	if x != nil && x.Scale != nil {
+		return *x.Scale
+	}
+	return Quantity_UNSPECIFIED
+}
+
+func (x *Quantity) GetModelCheck() *ModelCheckSettings {
+	if x != nil {
+		return x.ModelCheck
+	}
+	return nil
+}
+
+func (x *Quantity) GetStepDetection() *StepDetection {
+	if x != nil {
+		return x.StepDetection
+	}
+	return nil
+}
+
+// Outliers says that a reading is, with a probability, one whose random error is
+// larger than it otherwise would be. Such a reading counts for less the farther it
+// lies out; it is not thrown away.
+type Outliers struct {
+	state protoimpl.MessageState `protogen:"open.v1"`
+	// Probability that a reading is an outlier, above 0 and at most 0.5.
+	Probability *float64 `protobuf:"fixed64,1,opt,name=probability,proto3,oneof" json:"probability,omitempty"`
+	// Inflation: the standard deviation of an outlier's random error divided by that
+	// of another reading, above 1 and at most 1e6.
+	Inflation     *float64 `protobuf:"fixed64,2,opt,name=inflation,proto3,oneof" json:"inflation,omitempty"`
+	unknownFields protoimpl.UnknownFields
+	sizeCache     protoimpl.SizeCache
+}
+
+func (x *Outliers) Reset() {
+	*x = Outliers{}
+	mi := &file_leadline_v1_quantity_proto_msgTypes[1]
+	ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
+	ms.StoreMessageInfo(mi)
+}
+
+func (x *Outliers) String() string {
+	return protoimpl.X.MessageStringOf(x)
+}
+
+func (*Outliers) ProtoMessage() {}
+
+func (x *Outliers) ProtoReflect() protoreflect.Message {
+	mi := &file_leadline_v1_quantity_proto_msgTypes[1]
+	if x != nil {
+		ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
+		if ms.LoadMessageInfo() == nil {
+			ms.StoreMessageInfo(mi)
+		}
+		return ms
+	}
+	return mi.MessageOf(x)
+}
+
+// Deprecated: Use Outliers.ProtoReflect.Descriptor instead.
+func (*Outliers) Descriptor() ([]byte, []int) {
+	return file_leadline_v1_quantity_proto_rawDescGZIP(), []int{1}
+}
+
+func (x *Outliers) GetProbability() float64 {
+	if x != nil && x.Probability != nil {
+		return *x.Probability
+	}
+	return 0
+}
+
+func (x *Outliers) GetInflation() float64 {
+	if x != nil && x.Inflation != nil {
+		return *x.Inflation
+	}
+	return 0
+}
+
+// ModelCheckSettings says how the declaration is held against the readings.
+type ModelCheckSettings struct {
+	state protoimpl.MessageState `protogen:"open.v1"`
+	// Window: how many scored readings are looked at together, from 16 to 10,000;
+	// absent, 64.
+	Window *uint32 `protobuf:"varint,1,opt,name=window,proto3,oneof" json:"window,omitempty"`
+	// Objections that a right declaration may meet with in a year, from 1e-9 to 1e6;
+	// absent, 0.001: one in a thousand years of a quantity.
+	ObjectionsPerYear *float64 `protobuf:"fixed64,2,opt,name=objections_per_year,json=objectionsPerYear,proto3,oneof" json:"objections_per_year,omitempty"`
+	unknownFields     protoimpl.UnknownFields
+	sizeCache         protoimpl.SizeCache
+}
+
+func (x *ModelCheckSettings) Reset() {
+	*x = ModelCheckSettings{}
+	mi := &file_leadline_v1_quantity_proto_msgTypes[2]
+	ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
+	ms.StoreMessageInfo(mi)
+}
+
+func (x *ModelCheckSettings) String() string {
+	return protoimpl.X.MessageStringOf(x)
+}
+
+func (*ModelCheckSettings) ProtoMessage() {}
+
+func (x *ModelCheckSettings) ProtoReflect() protoreflect.Message {
+	mi := &file_leadline_v1_quantity_proto_msgTypes[2]
+	if x != nil {
+		ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
+		if ms.LoadMessageInfo() == nil {
+			ms.StoreMessageInfo(mi)
+		}
+		return ms
+	}
+	return mi.MessageOf(x)
+}
+
+// Deprecated: Use ModelCheckSettings.ProtoReflect.Descriptor instead.
+func (*ModelCheckSettings) Descriptor() ([]byte, []int) {
+	return file_leadline_v1_quantity_proto_rawDescGZIP(), []int{2}
+}
+
+func (x *ModelCheckSettings) GetWindow() uint32 {
+	if x != nil && x.Window != nil {
+		return *x.Window
+	}
+	return 0
+}
+
+func (x *ModelCheckSettings) GetObjectionsPerYear() float64 {
+	if x != nil && x.ObjectionsPerYear != nil {
+		return *x.ObjectionsPerYear
+	}
+	return 0
+}
+
+// StepDetection says when readings are taken to have stepped, and what follows.
+type StepDetection struct {
+	state protoimpl.MessageState `protogen:"open.v1"`
+	// Mean number of readings between two steps that are found where none is, from 100
+	// to 1e12; absent, 1e6. Fewer find a step sooner.
+	FalseAlarmInterval *float64 `protobuf:"fixed64,1,opt,name=false_alarm_interval,json=falseAlarmInterval,proto3,oneof" json:"false_alarm_interval,omitempty"`
+	// What a step does to the belief; absent, nothing: it is reported only.
+	OnStep        *StepDetection_OnStep `protobuf:"bytes,2,opt,name=on_step,json=onStep,proto3" json:"on_step,omitempty"`
+	unknownFields protoimpl.UnknownFields
+	sizeCache     protoimpl.SizeCache
+}
+
+func (x *StepDetection) Reset() {
+	*x = StepDetection{}
+	mi := &file_leadline_v1_quantity_proto_msgTypes[3]
+	ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
+	ms.StoreMessageInfo(mi)
+}
+
+func (x *StepDetection) String() string {
+	return protoimpl.X.MessageStringOf(x)
+}
+
+func (*StepDetection) ProtoMessage() {}
+
+func (x *StepDetection) ProtoReflect() protoreflect.Message {
+	mi := &file_leadline_v1_quantity_proto_msgTypes[3]
+	if x != nil {
+		ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
+		if ms.LoadMessageInfo() == nil {
+			ms.StoreMessageInfo(mi)
+		}
+		return ms
+	}
+	return mi.MessageOf(x)
+}
+
+// Deprecated: Use StepDetection.ProtoReflect.Descriptor instead.
+func (*StepDetection) Descriptor() ([]byte, []int) {
+	return file_leadline_v1_quantity_proto_rawDescGZIP(), []int{3}
+}
+
+func (x *StepDetection) GetFalseAlarmInterval() float64 {
+	if x != nil && x.FalseAlarmInterval != nil {
+		return *x.FalseAlarmInterval
+	}
+	return 0
+}
+
+func (x *StepDetection) GetOnStep() *StepDetection_OnStep {
+	if x != nil {
+		return x.OnStep
+	}
+	return nil
+}
+
 // Prior is the belief before any reading. Give exactly one of: mean and
 // standard_deviation; low, high and probability; vague. Under mean_reverting
 // dynamics a vague prior means the law that they settle to.
@@ -221,7 +487,7 @@ type Prior struct {
 
 func (x *Prior) Reset() {
 	*x = Prior{}
-	mi := &file_leadline_v1_quantity_proto_msgTypes[1]
+	mi := &file_leadline_v1_quantity_proto_msgTypes[4]
 	ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
 	ms.StoreMessageInfo(mi)
 }
@@ -233,7 +499,7 @@ func (x *Prior) String() string {
 func (*Prior) ProtoMessage() {}
 
 func (x *Prior) ProtoReflect() protoreflect.Message {
-	mi := &file_leadline_v1_quantity_proto_msgTypes[1]
+	mi := &file_leadline_v1_quantity_proto_msgTypes[4]
 	if x != nil {
 		ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
 		if ms.LoadMessageInfo() == nil {
@@ -246,7 +512,7 @@ func (x *Prior) ProtoReflect() protoreflect.Message {
 
 // Deprecated: Use Prior.ProtoReflect.Descriptor instead.
 func (*Prior) Descriptor() ([]byte, []int) {
-	return file_leadline_v1_quantity_proto_rawDescGZIP(), []int{1}
+	return file_leadline_v1_quantity_proto_rawDescGZIP(), []int{4}
 }
 
 func (x *Prior) GetMean() float64 {
@@ -313,7 +579,7 @@ type Repeatability struct {
 
 func (x *Repeatability) Reset() {
 	*x = Repeatability{}
-	mi := &file_leadline_v1_quantity_proto_msgTypes[2]
+	mi := &file_leadline_v1_quantity_proto_msgTypes[5]
 	ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
 	ms.StoreMessageInfo(mi)
 }
@@ -325,7 +591,7 @@ func (x *Repeatability) String() string {
 func (*Repeatability) ProtoMessage() {}
 
 func (x *Repeatability) ProtoReflect() protoreflect.Message {
-	mi := &file_leadline_v1_quantity_proto_msgTypes[2]
+	mi := &file_leadline_v1_quantity_proto_msgTypes[5]
 	if x != nil {
 		ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
 		if ms.LoadMessageInfo() == nil {
@@ -338,7 +604,7 @@ func (x *Repeatability) ProtoReflect() protoreflect.Message {
 
 // Deprecated: Use Repeatability.ProtoReflect.Descriptor instead.
 func (*Repeatability) Descriptor() ([]byte, []int) {
-	return file_leadline_v1_quantity_proto_rawDescGZIP(), []int{2}
+	return file_leadline_v1_quantity_proto_rawDescGZIP(), []int{5}
 }
 
 func (x *Repeatability) GetStandardDeviation() float64 {
@@ -373,7 +639,7 @@ type Dynamics struct {
 
 func (x *Dynamics) Reset() {
 	*x = Dynamics{}
-	mi := &file_leadline_v1_quantity_proto_msgTypes[3]
+	mi := &file_leadline_v1_quantity_proto_msgTypes[6]
 	ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
 	ms.StoreMessageInfo(mi)
 }
@@ -385,7 +651,7 @@ func (x *Dynamics) String() string {
 func (*Dynamics) ProtoMessage() {}
 
 func (x *Dynamics) ProtoReflect() protoreflect.Message {
-	mi := &file_leadline_v1_quantity_proto_msgTypes[3]
+	mi := &file_leadline_v1_quantity_proto_msgTypes[6]
 	if x != nil {
 		ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
 		if ms.LoadMessageInfo() == nil {
@@ -398,7 +664,7 @@ func (x *Dynamics) ProtoReflect() protoreflect.Message {
 
 // Deprecated: Use Dynamics.ProtoReflect.Descriptor instead.
 func (*Dynamics) Descriptor() ([]byte, []int) {
-	return file_leadline_v1_quantity_proto_rawDescGZIP(), []int{3}
+	return file_leadline_v1_quantity_proto_rawDescGZIP(), []int{6}
 }
 
 func (x *Dynamics) GetModel() isDynamics_Model {
@@ -493,7 +759,7 @@ type Slope struct {
 
 func (x *Slope) Reset() {
 	*x = Slope{}
-	mi := &file_leadline_v1_quantity_proto_msgTypes[4]
+	mi := &file_leadline_v1_quantity_proto_msgTypes[7]
 	ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
 	ms.StoreMessageInfo(mi)
 }
@@ -505,7 +771,7 @@ func (x *Slope) String() string {
 func (*Slope) ProtoMessage() {}
 
 func (x *Slope) ProtoReflect() protoreflect.Message {
-	mi := &file_leadline_v1_quantity_proto_msgTypes[4]
+	mi := &file_leadline_v1_quantity_proto_msgTypes[7]
 	if x != nil {
 		ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
 		if ms.LoadMessageInfo() == nil {
@@ -518,7 +784,7 @@ func (x *Slope) ProtoReflect() protoreflect.Message {
 
 // Deprecated: Use Slope.ProtoReflect.Descriptor instead.
 func (*Slope) Descriptor() ([]byte, []int) {
-	return file_leadline_v1_quantity_proto_rawDescGZIP(), []int{4}
+	return file_leadline_v1_quantity_proto_rawDescGZIP(), []int{7}
 }
 
 func (x *Slope) GetMean() float64 {
@@ -555,7 +821,7 @@ type Tolerance struct {
 
 func (x *Tolerance) Reset() {
 	*x = Tolerance{}
-	mi := &file_leadline_v1_quantity_proto_msgTypes[5]
+	mi := &file_leadline_v1_quantity_proto_msgTypes[8]
 	ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
 	ms.StoreMessageInfo(mi)
 }
@@ -567,7 +833,7 @@ func (x *Tolerance) String() string {
 func (*Tolerance) ProtoMessage() {}
 
 func (x *Tolerance) ProtoReflect() protoreflect.Message {
-	mi := &file_leadline_v1_quantity_proto_msgTypes[5]
+	mi := &file_leadline_v1_quantity_proto_msgTypes[8]
 	if x != nil {
 		ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
 		if ms.LoadMessageInfo() == nil {
@@ -580,7 +846,7 @@ func (x *Tolerance) ProtoReflect() protoreflect.Message {
 
 // Deprecated: Use Tolerance.ProtoReflect.Descriptor instead.
 func (*Tolerance) Descriptor() ([]byte, []int) {
-	return file_leadline_v1_quantity_proto_rawDescGZIP(), []int{5}
+	return file_leadline_v1_quantity_proto_rawDescGZIP(), []int{8}
 }
 
 func (x *Tolerance) GetLower() float64 {
@@ -611,7 +877,7 @@ type DecisionRule struct {
 
 func (x *DecisionRule) Reset() {
 	*x = DecisionRule{}
-	mi := &file_leadline_v1_quantity_proto_msgTypes[6]
+	mi := &file_leadline_v1_quantity_proto_msgTypes[9]
 	ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
 	ms.StoreMessageInfo(mi)
 }
@@ -623,7 +889,7 @@ func (x *DecisionRule) String() string {
 func (*DecisionRule) ProtoMessage() {}
 
 func (x *DecisionRule) ProtoReflect() protoreflect.Message {
-	mi := &file_leadline_v1_quantity_proto_msgTypes[6]
+	mi := &file_leadline_v1_quantity_proto_msgTypes[9]
 	if x != nil {
 		ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
 		if ms.LoadMessageInfo() == nil {
@@ -636,7 +902,7 @@ func (x *DecisionRule) ProtoReflect() protoreflect.Message {
 
 // Deprecated: Use DecisionRule.ProtoReflect.Descriptor instead.
 func (*DecisionRule) Descriptor() ([]byte, []int) {
-	return file_leadline_v1_quantity_proto_rawDescGZIP(), []int{6}
+	return file_leadline_v1_quantity_proto_rawDescGZIP(), []int{9}
 }
 
 func (x *DecisionRule) GetConformProbability() float64 {
@@ -666,7 +932,7 @@ type DeclareQuantityRequest struct {
 
 func (x *DeclareQuantityRequest) Reset() {
 	*x = DeclareQuantityRequest{}
-	mi := &file_leadline_v1_quantity_proto_msgTypes[7]
+	mi := &file_leadline_v1_quantity_proto_msgTypes[10]
 	ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
 	ms.StoreMessageInfo(mi)
 }
@@ -678,7 +944,7 @@ func (x *DeclareQuantityRequest) String() string {
 func (*DeclareQuantityRequest) ProtoMessage() {}
 
 func (x *DeclareQuantityRequest) ProtoReflect() protoreflect.Message {
-	mi := &file_leadline_v1_quantity_proto_msgTypes[7]
+	mi := &file_leadline_v1_quantity_proto_msgTypes[10]
 	if x != nil {
 		ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
 		if ms.LoadMessageInfo() == nil {
@@ -691,7 +957,7 @@ func (x *DeclareQuantityRequest) ProtoReflect() protoreflect.Message {
 
 // Deprecated: Use DeclareQuantityRequest.ProtoReflect.Descriptor instead.
 func (*DeclareQuantityRequest) Descriptor() ([]byte, []int) {
-	return file_leadline_v1_quantity_proto_rawDescGZIP(), []int{7}
+	return file_leadline_v1_quantity_proto_rawDescGZIP(), []int{10}
 }
 
 func (x *DeclareQuantityRequest) GetId() string {
@@ -719,7 +985,7 @@ type GetQuantityRequest struct {
 
 func (x *GetQuantityRequest) Reset() {
 	*x = GetQuantityRequest{}
-	mi := &file_leadline_v1_quantity_proto_msgTypes[8]
+	mi := &file_leadline_v1_quantity_proto_msgTypes[11]
 	ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
 	ms.StoreMessageInfo(mi)
 }
@@ -731,7 +997,7 @@ func (x *GetQuantityRequest) String() string {
 func (*GetQuantityRequest) ProtoMessage() {}
 
 func (x *GetQuantityRequest) ProtoReflect() protoreflect.Message {
-	mi := &file_leadline_v1_quantity_proto_msgTypes[8]
+	mi := &file_leadline_v1_quantity_proto_msgTypes[11]
 	if x != nil {
 		ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
 		if ms.LoadMessageInfo() == nil {
@@ -744,7 +1010,7 @@ func (x *GetQuantityRequest) ProtoReflect() protoreflect.Message {
 
 // Deprecated: Use GetQuantityRequest.ProtoReflect.Descriptor instead.
 func (*GetQuantityRequest) Descriptor() ([]byte, []int) {
-	return file_leadline_v1_quantity_proto_rawDescGZIP(), []int{8}
+	return file_leadline_v1_quantity_proto_rawDescGZIP(), []int{11}
 }
 
 func (x *GetQuantityRequest) GetId() string {
@@ -772,7 +1038,7 @@ type ListQuantitiesRequest struct {
 
 func (x *ListQuantitiesRequest) Reset() {
 	*x = ListQuantitiesRequest{}
-	mi := &file_leadline_v1_quantity_proto_msgTypes[9]
+	mi := &file_leadline_v1_quantity_proto_msgTypes[12]
 	ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
 	ms.StoreMessageInfo(mi)
 }
@@ -784,7 +1050,7 @@ func (x *ListQuantitiesRequest) String() string {
 func (*ListQuantitiesRequest) ProtoMessage() {}
 
 func (x *ListQuantitiesRequest) ProtoReflect() protoreflect.Message {
-	mi := &file_leadline_v1_quantity_proto_msgTypes[9]
+	mi := &file_leadline_v1_quantity_proto_msgTypes[12]
 	if x != nil {
 		ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
 		if ms.LoadMessageInfo() == nil {
@@ -797,7 +1063,7 @@ func (x *ListQuantitiesRequest) ProtoReflect() protoreflect.Message {
 
 // Deprecated: Use ListQuantitiesRequest.ProtoReflect.Descriptor instead.
 func (*ListQuantitiesRequest) Descriptor() ([]byte, []int) {
-	return file_leadline_v1_quantity_proto_rawDescGZIP(), []int{9}
+	return file_leadline_v1_quantity_proto_rawDescGZIP(), []int{12}
 }
 
 func (x *ListQuantitiesRequest) GetPrefix() string {
@@ -841,7 +1107,7 @@ type ListQuantitiesResponse struct {
 
 func (x *ListQuantitiesResponse) Reset() {
 	*x = ListQuantitiesResponse{}
-	mi := &file_leadline_v1_quantity_proto_msgTypes[10]
+	mi := &file_leadline_v1_quantity_proto_msgTypes[13]
 	ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
 	ms.StoreMessageInfo(mi)
 }
@@ -853,7 +1119,7 @@ func (x *ListQuantitiesResponse) String() string {
 func (*ListQuantitiesResponse) ProtoMessage() {}
 
 func (x *ListQuantitiesResponse) ProtoReflect() protoreflect.Message {
-	mi := &file_leadline_v1_quantity_proto_msgTypes[10]
+	mi := &file_leadline_v1_quantity_proto_msgTypes[13]
 	if x != nil {
 		ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
 		if ms.LoadMessageInfo() == nil {
@@ -866,7 +1132,7 @@ func (x *ListQuantitiesResponse) ProtoReflect() protoreflect.Message {
 
 // Deprecated: Use ListQuantitiesResponse.ProtoReflect.Descriptor instead.
 func (*ListQuantitiesResponse) Descriptor() ([]byte, []int) {
-	return file_leadline_v1_quantity_proto_rawDescGZIP(), []int{10}
+	return file_leadline_v1_quantity_proto_rawDescGZIP(), []int{13}
 }
 
 func (x *ListQuantitiesResponse) GetQuantities() []*Quantity {
@@ -897,7 +1163,7 @@ type RetireQuantityRequest struct {
 
 func (x *RetireQuantityRequest) Reset() {
 	*x = RetireQuantityRequest{}
-	mi := &file_leadline_v1_quantity_proto_msgTypes[11]
+	mi := &file_leadline_v1_quantity_proto_msgTypes[14]
 	ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
 	ms.StoreMessageInfo(mi)
 }
@@ -909,7 +1175,7 @@ func (x *RetireQuantityRequest) String() string {
 func (*RetireQuantityRequest) ProtoMessage() {}
 
 func (x *RetireQuantityRequest) ProtoReflect() protoreflect.Message {
-	mi := &file_leadline_v1_quantity_proto_msgTypes[11]
+	mi := &file_leadline_v1_quantity_proto_msgTypes[14]
 	if x != nil {
 		ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
 		if ms.LoadMessageInfo() == nil {
@@ -922,7 +1188,7 @@ func (x *RetireQuantityRequest) ProtoReflect() protoreflect.Message {
 
 // Deprecated: Use RetireQuantityRequest.ProtoReflect.Descriptor instead.
 func (*RetireQuantityRequest) Descriptor() ([]byte, []int) {
-	return file_leadline_v1_quantity_proto_rawDescGZIP(), []int{11}
+	return file_leadline_v1_quantity_proto_rawDescGZIP(), []int{14}
 }
 
 func (x *RetireQuantityRequest) GetId() string {
@@ -962,7 +1228,7 @@ type RenewQuantityRequest struct {
 
 func (x *RenewQuantityRequest) Reset() {
 	*x = RenewQuantityRequest{}
-	mi := &file_leadline_v1_quantity_proto_msgTypes[12]
+	mi := &file_leadline_v1_quantity_proto_msgTypes[15]
 	ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
 	ms.StoreMessageInfo(mi)
 }
@@ -974,7 +1240,7 @@ func (x *RenewQuantityRequest) String() string {
 func (*RenewQuantityRequest) ProtoMessage() {}
 
 func (x *RenewQuantityRequest) ProtoReflect() protoreflect.Message {
-	mi := &file_leadline_v1_quantity_proto_msgTypes[12]
+	mi := &file_leadline_v1_quantity_proto_msgTypes[15]
 	if x != nil {
 		ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
 		if ms.LoadMessageInfo() == nil {
@@ -987,7 +1253,7 @@ func (x *RenewQuantityRequest) ProtoReflect() protoreflect.Message {
 
 // Deprecated: Use RenewQuantityRequest.ProtoReflect.Descriptor instead.
 func (*RenewQuantityRequest) Descriptor() ([]byte, []int) {
-	return file_leadline_v1_quantity_proto_rawDescGZIP(), []int{12}
+	return file_leadline_v1_quantity_proto_rawDescGZIP(), []int{15}
 }
 
 func (x *RenewQuantityRequest) GetId() string {
@@ -1057,7 +1323,7 @@ type Renewal struct {
 
 func (x *Renewal) Reset() {
 	*x = Renewal{}
-	mi := &file_leadline_v1_quantity_proto_msgTypes[13]
+	mi := &file_leadline_v1_quantity_proto_msgTypes[16]
 	ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
 	ms.StoreMessageInfo(mi)
 }
@@ -1069,7 +1335,7 @@ func (x *Renewal) String() string {
 func (*Renewal) ProtoMessage() {}
 
 func (x *Renewal) ProtoReflect() protoreflect.Message {
-	mi := &file_leadline_v1_quantity_proto_msgTypes[13]
+	mi := &file_leadline_v1_quantity_proto_msgTypes[16]
 	if x != nil {
 		ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
 		if ms.LoadMessageInfo() == nil {
@@ -1082,7 +1348,7 @@ func (x *Renewal) ProtoReflect() protoreflect.Message {
 
 // Deprecated: Use Renewal.ProtoReflect.Descriptor instead.
 func (*Renewal) Descriptor() ([]byte, []int) {
-	return file_leadline_v1_quantity_proto_rawDescGZIP(), []int{13}
+	return file_leadline_v1_quantity_proto_rawDescGZIP(), []int{16}
 }
 
 func (x *Renewal) GetRequestId() string {
@@ -1154,7 +1420,7 @@ type WithdrawRenewalRequest struct {
 
 func (x *WithdrawRenewalRequest) Reset() {
 	*x = WithdrawRenewalRequest{}
-	mi := &file_leadline_v1_quantity_proto_msgTypes[14]
+	mi := &file_leadline_v1_quantity_proto_msgTypes[17]
 	ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
 	ms.StoreMessageInfo(mi)
 }
@@ -1166,7 +1432,7 @@ func (x *WithdrawRenewalRequest) String() string {
 func (*WithdrawRenewalRequest) ProtoMessage() {}
 
 func (x *WithdrawRenewalRequest) ProtoReflect() protoreflect.Message {
-	mi := &file_leadline_v1_quantity_proto_msgTypes[14]
+	mi := &file_leadline_v1_quantity_proto_msgTypes[17]
 	if x != nil {
 		ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
 		if ms.LoadMessageInfo() == nil {
@@ -1179,7 +1445,7 @@ func (x *WithdrawRenewalRequest) ProtoReflect() protoreflect.Message {
 
 // Deprecated: Use WithdrawRenewalRequest.ProtoReflect.Descriptor instead.
 func (*WithdrawRenewalRequest) Descriptor() ([]byte, []int) {
-	return file_leadline_v1_quantity_proto_rawDescGZIP(), []int{14}
+	return file_leadline_v1_quantity_proto_rawDescGZIP(), []int{17}
 }
 
 func (x *WithdrawRenewalRequest) GetId() string {
@@ -1207,7 +1473,7 @@ type ListRenewalsRequest struct {
 
 func (x *ListRenewalsRequest) Reset() {
 	*x = ListRenewalsRequest{}
-	mi := &file_leadline_v1_quantity_proto_msgTypes[15]
+	mi := &file_leadline_v1_quantity_proto_msgTypes[18]
 	ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
 	ms.StoreMessageInfo(mi)
 }
@@ -1219,7 +1485,7 @@ func (x *ListRenewalsRequest) String() string {
 func (*ListRenewalsRequest) ProtoMessage() {}
 
 func (x *ListRenewalsRequest) ProtoReflect() protoreflect.Message {
-	mi := &file_leadline_v1_quantity_proto_msgTypes[15]
+	mi := &file_leadline_v1_quantity_proto_msgTypes[18]
 	if x != nil {
 		ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
 		if ms.LoadMessageInfo() == nil {
@@ -1232,7 +1498,7 @@ func (x *ListRenewalsRequest) ProtoReflect() protoreflect.Message {
 
 // Deprecated: Use ListRenewalsRequest.ProtoReflect.Descriptor instead.
 func (*ListRenewalsRequest) Descriptor() ([]byte, []int) {
-	return file_leadline_v1_quantity_proto_rawDescGZIP(), []int{15}
+	return file_leadline_v1_quantity_proto_rawDescGZIP(), []int{18}
 }
 
 func (x *ListRenewalsRequest) GetId() string {
@@ -1253,7 +1519,7 @@ type ListRenewalsResponse struct {
 
 func (x *ListRenewalsResponse) Reset() {
 	*x = ListRenewalsResponse{}
-	mi := &file_leadline_v1_quantity_proto_msgTypes[16]
+	mi := &file_leadline_v1_quantity_proto_msgTypes[19]
 	ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
 	ms.StoreMessageInfo(mi)
 }
@@ -1265,7 +1531,7 @@ func (x *ListRenewalsResponse) String() string {
 func (*ListRenewalsResponse) ProtoMessage() {}
 
 func (x *ListRenewalsResponse) ProtoReflect() protoreflect.Message {
-	mi := &file_leadline_v1_quantity_proto_msgTypes[16]
+	mi := &file_leadline_v1_quantity_proto_msgTypes[19]
 	if x != nil {
 		ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
 		if ms.LoadMessageInfo() == nil {
@@ -1278,7 +1544,7 @@ func (x *ListRenewalsResponse) ProtoReflect() protoreflect.Message {
 
 // Deprecated: Use ListRenewalsResponse.ProtoReflect.Descriptor instead.
 func (*ListRenewalsResponse) Descriptor() ([]byte, []int) {
-	return file_leadline_v1_quantity_proto_rawDescGZIP(), []int{16}
+	return file_leadline_v1_quantity_proto_rawDescGZIP(), []int{19}
 }
 
 func (x *ListRenewalsResponse) GetRenewals() []*Renewal {
@@ -1286,6 +1552,54 @@ func (x *ListRenewalsResponse) GetRenewals() []*Renewal {
 		return x.Renewals
 	}
 	return nil
+}
+
+// OnStep is what a step does to the belief.
+type StepDetection_OnStep struct {
+	state protoimpl.MessageState `protogen:"open.v1"`
+	// Standard deviation, above 0, in the quantity's unit, by which the value may
+	// have moved in the step: the belief is widened by it at the reading at which the
+	// step is found, so that it follows the readings after it quickly.
+	Widen         *float64 `protobuf:"fixed64,1,opt,name=widen,proto3,oneof" json:"widen,omitempty"`
+	unknownFields protoimpl.UnknownFields
+	sizeCache     protoimpl.SizeCache
+}
+
+func (x *StepDetection_OnStep) Reset() {
+	*x = StepDetection_OnStep{}
+	mi := &file_leadline_v1_quantity_proto_msgTypes[20]
+	ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
+	ms.StoreMessageInfo(mi)
+}
+
+func (x *StepDetection_OnStep) String() string {
+	return protoimpl.X.MessageStringOf(x)
+}
+
+func (*StepDetection_OnStep) ProtoMessage() {}
+
+func (x *StepDetection_OnStep) ProtoReflect() protoreflect.Message {
+	mi := &file_leadline_v1_quantity_proto_msgTypes[20]
+	if x != nil {
+		ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
+		if ms.LoadMessageInfo() == nil {
+			ms.StoreMessageInfo(mi)
+		}
+		return ms
+	}
+	return mi.MessageOf(x)
+}
+
+// Deprecated: Use StepDetection_OnStep.ProtoReflect.Descriptor instead.
+func (*StepDetection_OnStep) Descriptor() ([]byte, []int) {
+	return file_leadline_v1_quantity_proto_rawDescGZIP(), []int{3, 0}
+}
+
+func (x *StepDetection_OnStep) GetWiden() float64 {
+	if x != nil && x.Widen != nil {
+		return *x.Widen
+	}
+	return 0
 }
 
 // Vague is the flat prior; it has nothing to set.
@@ -1297,7 +1611,7 @@ type Prior_Vague struct {
 
 func (x *Prior_Vague) Reset() {
 	*x = Prior_Vague{}
-	mi := &file_leadline_v1_quantity_proto_msgTypes[17]
+	mi := &file_leadline_v1_quantity_proto_msgTypes[21]
 	ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
 	ms.StoreMessageInfo(mi)
 }
@@ -1309,7 +1623,7 @@ func (x *Prior_Vague) String() string {
 func (*Prior_Vague) ProtoMessage() {}
 
 func (x *Prior_Vague) ProtoReflect() protoreflect.Message {
-	mi := &file_leadline_v1_quantity_proto_msgTypes[17]
+	mi := &file_leadline_v1_quantity_proto_msgTypes[21]
 	if x != nil {
 		ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
 		if ms.LoadMessageInfo() == nil {
@@ -1322,26 +1636,31 @@ func (x *Prior_Vague) ProtoReflect() protoreflect.Message {
 
 // Deprecated: Use Prior_Vague.ProtoReflect.Descriptor instead.
 func (*Prior_Vague) Descriptor() ([]byte, []int) {
-	return file_leadline_v1_quantity_proto_rawDescGZIP(), []int{1, 0}
+	return file_leadline_v1_quantity_proto_rawDescGZIP(), []int{4, 0}
 }
 
 // Learned says what was known of the repeatability standard deviation. Give
 // both guess and worth, or neither: then nothing was known, and no belief is
-// published until two distinct readings exist.
+// published until two distinct readings exist. A floor can stand beside either.
+// With an instrument that has a resolution give guess and worth, or a floor: equal
+// readings of a display would else say that there is no random part at all.
 type Repeatability_Learned struct {
 	state protoimpl.MessageState `protogen:"open.v1"`
 	// Guess of the repeatability standard deviation, above 0, in the quantity's unit.
 	Guess *float64 `protobuf:"fixed64,1,opt,name=guess,proto3,oneof" json:"guess,omitempty"`
 	// Worth of the guess in degrees of freedom, from 1 to 1e9: about the number of
 	// readings from which such a guess could have been made.
-	Worth         *float64 `protobuf:"fixed64,2,opt,name=worth,proto3,oneof" json:"worth,omitempty"`
+	Worth *float64 `protobuf:"fixed64,2,opt,name=worth,proto3,oneof" json:"worth,omitempty"`
+	// Floor, above 0, in the quantity's unit: the repeatability standard deviation
+	// is known to be no less. Absent, there is none.
+	Floor         *float64 `protobuf:"fixed64,3,opt,name=floor,proto3,oneof" json:"floor,omitempty"`
 	unknownFields protoimpl.UnknownFields
 	sizeCache     protoimpl.SizeCache
 }
 
 func (x *Repeatability_Learned) Reset() {
 	*x = Repeatability_Learned{}
-	mi := &file_leadline_v1_quantity_proto_msgTypes[18]
+	mi := &file_leadline_v1_quantity_proto_msgTypes[22]
 	ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
 	ms.StoreMessageInfo(mi)
 }
@@ -1353,7 +1672,7 @@ func (x *Repeatability_Learned) String() string {
 func (*Repeatability_Learned) ProtoMessage() {}
 
 func (x *Repeatability_Learned) ProtoReflect() protoreflect.Message {
-	mi := &file_leadline_v1_quantity_proto_msgTypes[18]
+	mi := &file_leadline_v1_quantity_proto_msgTypes[22]
 	if x != nil {
 		ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
 		if ms.LoadMessageInfo() == nil {
@@ -1366,7 +1685,7 @@ func (x *Repeatability_Learned) ProtoReflect() protoreflect.Message {
 
 // Deprecated: Use Repeatability_Learned.ProtoReflect.Descriptor instead.
 func (*Repeatability_Learned) Descriptor() ([]byte, []int) {
-	return file_leadline_v1_quantity_proto_rawDescGZIP(), []int{2, 0}
+	return file_leadline_v1_quantity_proto_rawDescGZIP(), []int{5, 0}
 }
 
 func (x *Repeatability_Learned) GetGuess() float64 {
@@ -1383,6 +1702,13 @@ func (x *Repeatability_Learned) GetWorth() float64 {
 	return 0
 }
 
+func (x *Repeatability_Learned) GetFloor() float64 {
+	if x != nil && x.Floor != nil {
+		return *x.Floor
+	}
+	return 0
+}
+
 // Constant has nothing to set.
 type Dynamics_Constant struct {
 	state         protoimpl.MessageState `protogen:"open.v1"`
@@ -1392,7 +1718,7 @@ type Dynamics_Constant struct {
 
 func (x *Dynamics_Constant) Reset() {
 	*x = Dynamics_Constant{}
-	mi := &file_leadline_v1_quantity_proto_msgTypes[19]
+	mi := &file_leadline_v1_quantity_proto_msgTypes[23]
 	ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
 	ms.StoreMessageInfo(mi)
 }
@@ -1404,7 +1730,7 @@ func (x *Dynamics_Constant) String() string {
 func (*Dynamics_Constant) ProtoMessage() {}
 
 func (x *Dynamics_Constant) ProtoReflect() protoreflect.Message {
-	mi := &file_leadline_v1_quantity_proto_msgTypes[19]
+	mi := &file_leadline_v1_quantity_proto_msgTypes[23]
 	if x != nil {
 		ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
 		if ms.LoadMessageInfo() == nil {
@@ -1417,7 +1743,7 @@ func (x *Dynamics_Constant) ProtoReflect() protoreflect.Message {
 
 // Deprecated: Use Dynamics_Constant.ProtoReflect.Descriptor instead.
 func (*Dynamics_Constant) Descriptor() ([]byte, []int) {
-	return file_leadline_v1_quantity_proto_rawDescGZIP(), []int{3, 0}
+	return file_leadline_v1_quantity_proto_rawDescGZIP(), []int{6, 0}
 }
 
 // RandomWalk states how far the true value typically moves, and in which time.
@@ -1434,7 +1760,7 @@ type Dynamics_RandomWalk struct {
 
 func (x *Dynamics_RandomWalk) Reset() {
 	*x = Dynamics_RandomWalk{}
-	mi := &file_leadline_v1_quantity_proto_msgTypes[20]
+	mi := &file_leadline_v1_quantity_proto_msgTypes[24]
 	ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
 	ms.StoreMessageInfo(mi)
 }
@@ -1446,7 +1772,7 @@ func (x *Dynamics_RandomWalk) String() string {
 func (*Dynamics_RandomWalk) ProtoMessage() {}
 
 func (x *Dynamics_RandomWalk) ProtoReflect() protoreflect.Message {
-	mi := &file_leadline_v1_quantity_proto_msgTypes[20]
+	mi := &file_leadline_v1_quantity_proto_msgTypes[24]
 	if x != nil {
 		ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
 		if ms.LoadMessageInfo() == nil {
@@ -1459,7 +1785,7 @@ func (x *Dynamics_RandomWalk) ProtoReflect() protoreflect.Message {
 
 // Deprecated: Use Dynamics_RandomWalk.ProtoReflect.Descriptor instead.
 func (*Dynamics_RandomWalk) Descriptor() ([]byte, []int) {
-	return file_leadline_v1_quantity_proto_rawDescGZIP(), []int{3, 1}
+	return file_leadline_v1_quantity_proto_rawDescGZIP(), []int{6, 1}
 }
 
 func (x *Dynamics_RandomWalk) GetStandardDeviation() float64 {
@@ -1494,7 +1820,7 @@ type Dynamics_LinearTrend struct {
 
 func (x *Dynamics_LinearTrend) Reset() {
 	*x = Dynamics_LinearTrend{}
-	mi := &file_leadline_v1_quantity_proto_msgTypes[21]
+	mi := &file_leadline_v1_quantity_proto_msgTypes[25]
 	ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
 	ms.StoreMessageInfo(mi)
 }
@@ -1506,7 +1832,7 @@ func (x *Dynamics_LinearTrend) String() string {
 func (*Dynamics_LinearTrend) ProtoMessage() {}
 
 func (x *Dynamics_LinearTrend) ProtoReflect() protoreflect.Message {
-	mi := &file_leadline_v1_quantity_proto_msgTypes[21]
+	mi := &file_leadline_v1_quantity_proto_msgTypes[25]
 	if x != nil {
 		ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
 		if ms.LoadMessageInfo() == nil {
@@ -1519,7 +1845,7 @@ func (x *Dynamics_LinearTrend) ProtoReflect() protoreflect.Message {
 
 // Deprecated: Use Dynamics_LinearTrend.ProtoReflect.Descriptor instead.
 func (*Dynamics_LinearTrend) Descriptor() ([]byte, []int) {
-	return file_leadline_v1_quantity_proto_rawDescGZIP(), []int{3, 2}
+	return file_leadline_v1_quantity_proto_rawDescGZIP(), []int{6, 2}
 }
 
 func (x *Dynamics_LinearTrend) GetStandardDeviation() float64 {
@@ -1564,7 +1890,7 @@ type Dynamics_SlopeWander struct {
 
 func (x *Dynamics_SlopeWander) Reset() {
 	*x = Dynamics_SlopeWander{}
-	mi := &file_leadline_v1_quantity_proto_msgTypes[22]
+	mi := &file_leadline_v1_quantity_proto_msgTypes[26]
 	ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
 	ms.StoreMessageInfo(mi)
 }
@@ -1576,7 +1902,7 @@ func (x *Dynamics_SlopeWander) String() string {
 func (*Dynamics_SlopeWander) ProtoMessage() {}
 
 func (x *Dynamics_SlopeWander) ProtoReflect() protoreflect.Message {
-	mi := &file_leadline_v1_quantity_proto_msgTypes[22]
+	mi := &file_leadline_v1_quantity_proto_msgTypes[26]
 	if x != nil {
 		ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
 		if ms.LoadMessageInfo() == nil {
@@ -1589,7 +1915,7 @@ func (x *Dynamics_SlopeWander) ProtoReflect() protoreflect.Message {
 
 // Deprecated: Use Dynamics_SlopeWander.ProtoReflect.Descriptor instead.
 func (*Dynamics_SlopeWander) Descriptor() ([]byte, []int) {
-	return file_leadline_v1_quantity_proto_rawDescGZIP(), []int{3, 3}
+	return file_leadline_v1_quantity_proto_rawDescGZIP(), []int{6, 3}
 }
 
 func (x *Dynamics_SlopeWander) GetStandardDeviation() float64 {
@@ -1622,7 +1948,7 @@ type Dynamics_MeanReverting struct {
 
 func (x *Dynamics_MeanReverting) Reset() {
 	*x = Dynamics_MeanReverting{}
-	mi := &file_leadline_v1_quantity_proto_msgTypes[23]
+	mi := &file_leadline_v1_quantity_proto_msgTypes[27]
 	ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
 	ms.StoreMessageInfo(mi)
 }
@@ -1634,7 +1960,7 @@ func (x *Dynamics_MeanReverting) String() string {
 func (*Dynamics_MeanReverting) ProtoMessage() {}
 
 func (x *Dynamics_MeanReverting) ProtoReflect() protoreflect.Message {
-	mi := &file_leadline_v1_quantity_proto_msgTypes[23]
+	mi := &file_leadline_v1_quantity_proto_msgTypes[27]
 	if x != nil {
 		ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
 		if ms.LoadMessageInfo() == nil {
@@ -1647,7 +1973,7 @@ func (x *Dynamics_MeanReverting) ProtoReflect() protoreflect.Message {
 
 // Deprecated: Use Dynamics_MeanReverting.ProtoReflect.Descriptor instead.
 func (*Dynamics_MeanReverting) Descriptor() ([]byte, []int) {
-	return file_leadline_v1_quantity_proto_rawDescGZIP(), []int{3, 4}
+	return file_leadline_v1_quantity_proto_rawDescGZIP(), []int{6, 4}
 }
 
 func (x *Dynamics_MeanReverting) GetMean() float64 {
@@ -1675,7 +2001,7 @@ var File_leadline_v1_quantity_proto protoreflect.FileDescriptor
 
 const file_leadline_v1_quantity_proto_rawDesc = "" +
 	"\n" +
-	"\x1aleadline/v1/quantity.proto\x12\vleadline.v1\x1a\x1cgoogle/api/annotations.proto\x1a\x1fgoogle/api/field_behavior.proto\x1a\x1egoogle/protobuf/duration.proto\x1a\x1fgoogle/protobuf/timestamp.proto\"\xa7\x05\n" +
+	"\x1aleadline/v1/quantity.proto\x12\vleadline.v1\x1a\x1cgoogle/api/annotations.proto\x1a\x1fgoogle/api/field_behavior.proto\x1a\x1egoogle/protobuf/duration.proto\x1a\x1fgoogle/protobuf/timestamp.proto\"\xd0\a\n" +
 	"\bQuantity\x12\x13\n" +
 	"\x02id\x18\x01 \x01(\tB\x03\xe0A\x03R\x02id\x12\x12\n" +
 	"\x04unit\x18\x02 \x01(\tR\x04unit\x12 \n" +
@@ -1694,7 +2020,36 @@ const file_leadline_v1_quantity_proto_rawDesc = "" +
 	"\vupdate_time\x18\f \x01(\v2\x1a.google.protobuf.TimestampB\x03\xe0A\x03R\n" +
 	"updateTime\x12@\n" +
 	"\vretire_time\x18\r \x01(\v2\x1a.google.protobuf.TimestampB\x03\xe0A\x03R\n" +
-	"retireTime\"\xd5\x02\n" +
+	"retireTime\x121\n" +
+	"\boutliers\x18\x0f \x01(\v2\x15.leadline.v1.OutliersR\boutliers\x126\n" +
+	"\x05scale\x18\x10 \x01(\x0e2\x1b.leadline.v1.Quantity.ScaleH\x00R\x05scale\x88\x01\x01\x12@\n" +
+	"\vmodel_check\x18\x11 \x01(\v2\x1f.leadline.v1.ModelCheckSettingsR\n" +
+	"modelCheck\x12A\n" +
+	"\x0estep_detection\x18\x12 \x01(\v2\x1a.leadline.v1.StepDetectionR\rstepDetection\"-\n" +
+	"\x05Scale\x12\x0f\n" +
+	"\vUNSPECIFIED\x10\x00\x12\n" +
+	"\n" +
+	"\x06LINEAR\x10\x01\x12\a\n" +
+	"\x03LOG\x10\x02B\b\n" +
+	"\x06_scale\"r\n" +
+	"\bOutliers\x12%\n" +
+	"\vprobability\x18\x01 \x01(\x01H\x00R\vprobability\x88\x01\x01\x12!\n" +
+	"\tinflation\x18\x02 \x01(\x01H\x01R\tinflation\x88\x01\x01B\x0e\n" +
+	"\f_probabilityB\f\n" +
+	"\n" +
+	"_inflation\"\x89\x01\n" +
+	"\x12ModelCheckSettings\x12\x1b\n" +
+	"\x06window\x18\x01 \x01(\rH\x00R\x06window\x88\x01\x01\x123\n" +
+	"\x13objections_per_year\x18\x02 \x01(\x01H\x01R\x11objectionsPerYear\x88\x01\x01B\t\n" +
+	"\a_windowB\x16\n" +
+	"\x14_objections_per_year\"\xca\x01\n" +
+	"\rStepDetection\x125\n" +
+	"\x14false_alarm_interval\x18\x01 \x01(\x01H\x00R\x12falseAlarmInterval\x88\x01\x01\x12:\n" +
+	"\aon_step\x18\x02 \x01(\v2!.leadline.v1.StepDetection.OnStepR\x06onStep\x1a-\n" +
+	"\x06OnStep\x12\x19\n" +
+	"\x05widen\x18\x01 \x01(\x01H\x00R\x05widen\x88\x01\x01B\b\n" +
+	"\x06_widenB\x17\n" +
+	"\x15_false_alarm_interval\"\xd5\x02\n" +
 	"\x05Prior\x12\x17\n" +
 	"\x04mean\x18\x01 \x01(\x01H\x00R\x04mean\x88\x01\x01\x122\n" +
 	"\x12standard_deviation\x18\x02 \x01(\x01H\x01R\x11standardDeviation\x88\x01\x01\x12\x15\n" +
@@ -1708,15 +2063,17 @@ const file_leadline_v1_quantity_proto_rawDesc = "" +
 	"\x13_standard_deviationB\x06\n" +
 	"\x04_lowB\a\n" +
 	"\x05_highB\x0e\n" +
-	"\f_probability\"\xed\x01\n" +
+	"\f_probability\"\x92\x02\n" +
 	"\rRepeatability\x122\n" +
 	"\x12standard_deviation\x18\x01 \x01(\x01H\x00R\x11standardDeviation\x88\x01\x01\x12<\n" +
-	"\alearned\x18\x02 \x01(\v2\".leadline.v1.Repeatability.LearnedR\alearned\x1aS\n" +
+	"\alearned\x18\x02 \x01(\v2\".leadline.v1.Repeatability.LearnedR\alearned\x1ax\n" +
 	"\aLearned\x12\x19\n" +
 	"\x05guess\x18\x01 \x01(\x01H\x00R\x05guess\x88\x01\x01\x12\x19\n" +
-	"\x05worth\x18\x02 \x01(\x01H\x01R\x05worth\x88\x01\x01B\b\n" +
+	"\x05worth\x18\x02 \x01(\x01H\x01R\x05worth\x88\x01\x01\x12\x19\n" +
+	"\x05floor\x18\x03 \x01(\x01H\x02R\x05floor\x88\x01\x01B\b\n" +
 	"\x06_guessB\b\n" +
-	"\x06_worthB\x15\n" +
+	"\x06_worthB\b\n" +
+	"\x06_floorB\x15\n" +
 	"\x13_standard_deviation\"\xfb\a\n" +
 	"\bDynamics\x12<\n" +
 	"\bconstant\x18\x01 \x01(\v2\x1e.leadline.v1.Dynamics.ConstantH\x00R\bconstant\x12C\n" +
@@ -1831,89 +2188,100 @@ func file_leadline_v1_quantity_proto_rawDescGZIP() []byte {
 	return file_leadline_v1_quantity_proto_rawDescData
 }
 
-var file_leadline_v1_quantity_proto_msgTypes = make([]protoimpl.MessageInfo, 24)
+var file_leadline_v1_quantity_proto_enumTypes = make([]protoimpl.EnumInfo, 1)
+var file_leadline_v1_quantity_proto_msgTypes = make([]protoimpl.MessageInfo, 28)
 var file_leadline_v1_quantity_proto_goTypes = []any{
-	(*Quantity)(nil),               // 0: leadline.v1.Quantity
-	(*Prior)(nil),                  // 1: leadline.v1.Prior
-	(*Repeatability)(nil),          // 2: leadline.v1.Repeatability
-	(*Dynamics)(nil),               // 3: leadline.v1.Dynamics
-	(*Slope)(nil),                  // 4: leadline.v1.Slope
-	(*Tolerance)(nil),              // 5: leadline.v1.Tolerance
-	(*DecisionRule)(nil),           // 6: leadline.v1.DecisionRule
-	(*DeclareQuantityRequest)(nil), // 7: leadline.v1.DeclareQuantityRequest
-	(*GetQuantityRequest)(nil),     // 8: leadline.v1.GetQuantityRequest
-	(*ListQuantitiesRequest)(nil),  // 9: leadline.v1.ListQuantitiesRequest
-	(*ListQuantitiesResponse)(nil), // 10: leadline.v1.ListQuantitiesResponse
-	(*RetireQuantityRequest)(nil),  // 11: leadline.v1.RetireQuantityRequest
-	(*RenewQuantityRequest)(nil),   // 12: leadline.v1.RenewQuantityRequest
-	(*Renewal)(nil),                // 13: leadline.v1.Renewal
-	(*WithdrawRenewalRequest)(nil), // 14: leadline.v1.WithdrawRenewalRequest
-	(*ListRenewalsRequest)(nil),    // 15: leadline.v1.ListRenewalsRequest
-	(*ListRenewalsResponse)(nil),   // 16: leadline.v1.ListRenewalsResponse
-	(*Prior_Vague)(nil),            // 17: leadline.v1.Prior.Vague
-	(*Repeatability_Learned)(nil),  // 18: leadline.v1.Repeatability.Learned
-	(*Dynamics_Constant)(nil),      // 19: leadline.v1.Dynamics.Constant
-	(*Dynamics_RandomWalk)(nil),    // 20: leadline.v1.Dynamics.RandomWalk
-	(*Dynamics_LinearTrend)(nil),   // 21: leadline.v1.Dynamics.LinearTrend
-	(*Dynamics_SlopeWander)(nil),   // 22: leadline.v1.Dynamics.SlopeWander
-	(*Dynamics_MeanReverting)(nil), // 23: leadline.v1.Dynamics.MeanReverting
-	(*durationpb.Duration)(nil),    // 24: google.protobuf.Duration
-	(*timestamppb.Timestamp)(nil),  // 25: google.protobuf.Timestamp
+	(Quantity_Scale)(0),            // 0: leadline.v1.Quantity.Scale
+	(*Quantity)(nil),               // 1: leadline.v1.Quantity
+	(*Outliers)(nil),               // 2: leadline.v1.Outliers
+	(*ModelCheckSettings)(nil),     // 3: leadline.v1.ModelCheckSettings
+	(*StepDetection)(nil),          // 4: leadline.v1.StepDetection
+	(*Prior)(nil),                  // 5: leadline.v1.Prior
+	(*Repeatability)(nil),          // 6: leadline.v1.Repeatability
+	(*Dynamics)(nil),               // 7: leadline.v1.Dynamics
+	(*Slope)(nil),                  // 8: leadline.v1.Slope
+	(*Tolerance)(nil),              // 9: leadline.v1.Tolerance
+	(*DecisionRule)(nil),           // 10: leadline.v1.DecisionRule
+	(*DeclareQuantityRequest)(nil), // 11: leadline.v1.DeclareQuantityRequest
+	(*GetQuantityRequest)(nil),     // 12: leadline.v1.GetQuantityRequest
+	(*ListQuantitiesRequest)(nil),  // 13: leadline.v1.ListQuantitiesRequest
+	(*ListQuantitiesResponse)(nil), // 14: leadline.v1.ListQuantitiesResponse
+	(*RetireQuantityRequest)(nil),  // 15: leadline.v1.RetireQuantityRequest
+	(*RenewQuantityRequest)(nil),   // 16: leadline.v1.RenewQuantityRequest
+	(*Renewal)(nil),                // 17: leadline.v1.Renewal
+	(*WithdrawRenewalRequest)(nil), // 18: leadline.v1.WithdrawRenewalRequest
+	(*ListRenewalsRequest)(nil),    // 19: leadline.v1.ListRenewalsRequest
+	(*ListRenewalsResponse)(nil),   // 20: leadline.v1.ListRenewalsResponse
+	(*StepDetection_OnStep)(nil),   // 21: leadline.v1.StepDetection.OnStep
+	(*Prior_Vague)(nil),            // 22: leadline.v1.Prior.Vague
+	(*Repeatability_Learned)(nil),  // 23: leadline.v1.Repeatability.Learned
+	(*Dynamics_Constant)(nil),      // 24: leadline.v1.Dynamics.Constant
+	(*Dynamics_RandomWalk)(nil),    // 25: leadline.v1.Dynamics.RandomWalk
+	(*Dynamics_LinearTrend)(nil),   // 26: leadline.v1.Dynamics.LinearTrend
+	(*Dynamics_SlopeWander)(nil),   // 27: leadline.v1.Dynamics.SlopeWander
+	(*Dynamics_MeanReverting)(nil), // 28: leadline.v1.Dynamics.MeanReverting
+	(*durationpb.Duration)(nil),    // 29: google.protobuf.Duration
+	(*timestamppb.Timestamp)(nil),  // 30: google.protobuf.Timestamp
 }
 var file_leadline_v1_quantity_proto_depIdxs = []int32{
-	1,  // 0: leadline.v1.Quantity.prior:type_name -> leadline.v1.Prior
-	2,  // 1: leadline.v1.Quantity.repeatability:type_name -> leadline.v1.Repeatability
-	3,  // 2: leadline.v1.Quantity.dynamics:type_name -> leadline.v1.Dynamics
-	5,  // 3: leadline.v1.Quantity.tolerance:type_name -> leadline.v1.Tolerance
-	6,  // 4: leadline.v1.Quantity.decision_rule:type_name -> leadline.v1.DecisionRule
-	24, // 5: leadline.v1.Quantity.breach_horizon:type_name -> google.protobuf.Duration
-	25, // 6: leadline.v1.Quantity.create_time:type_name -> google.protobuf.Timestamp
-	25, // 7: leadline.v1.Quantity.update_time:type_name -> google.protobuf.Timestamp
-	25, // 8: leadline.v1.Quantity.retire_time:type_name -> google.protobuf.Timestamp
-	17, // 9: leadline.v1.Prior.vague:type_name -> leadline.v1.Prior.Vague
-	25, // 10: leadline.v1.Prior.time:type_name -> google.protobuf.Timestamp
-	18, // 11: leadline.v1.Repeatability.learned:type_name -> leadline.v1.Repeatability.Learned
-	19, // 12: leadline.v1.Dynamics.constant:type_name -> leadline.v1.Dynamics.Constant
-	20, // 13: leadline.v1.Dynamics.random_walk:type_name -> leadline.v1.Dynamics.RandomWalk
-	21, // 14: leadline.v1.Dynamics.linear_trend:type_name -> leadline.v1.Dynamics.LinearTrend
-	23, // 15: leadline.v1.Dynamics.mean_reverting:type_name -> leadline.v1.Dynamics.MeanReverting
-	24, // 16: leadline.v1.Slope.per:type_name -> google.protobuf.Duration
-	0,  // 17: leadline.v1.DeclareQuantityRequest.quantity:type_name -> leadline.v1.Quantity
-	0,  // 18: leadline.v1.ListQuantitiesResponse.quantities:type_name -> leadline.v1.Quantity
-	25, // 19: leadline.v1.RenewQuantityRequest.time:type_name -> google.protobuf.Timestamp
-	1,  // 20: leadline.v1.RenewQuantityRequest.prior:type_name -> leadline.v1.Prior
-	4,  // 21: leadline.v1.RenewQuantityRequest.slope:type_name -> leadline.v1.Slope
-	25, // 22: leadline.v1.Renewal.time:type_name -> google.protobuf.Timestamp
-	1,  // 23: leadline.v1.Renewal.prior:type_name -> leadline.v1.Prior
-	4,  // 24: leadline.v1.Renewal.slope:type_name -> leadline.v1.Slope
-	25, // 25: leadline.v1.Renewal.create_time:type_name -> google.protobuf.Timestamp
-	25, // 26: leadline.v1.Renewal.withdraw_time:type_name -> google.protobuf.Timestamp
-	13, // 27: leadline.v1.ListRenewalsResponse.renewals:type_name -> leadline.v1.Renewal
-	24, // 28: leadline.v1.Dynamics.RandomWalk.per:type_name -> google.protobuf.Duration
-	24, // 29: leadline.v1.Dynamics.LinearTrend.per:type_name -> google.protobuf.Duration
-	4,  // 30: leadline.v1.Dynamics.LinearTrend.slope:type_name -> leadline.v1.Slope
-	22, // 31: leadline.v1.Dynamics.LinearTrend.slope_wander:type_name -> leadline.v1.Dynamics.SlopeWander
-	24, // 32: leadline.v1.Dynamics.SlopeWander.per:type_name -> google.protobuf.Duration
-	24, // 33: leadline.v1.Dynamics.MeanReverting.half_life:type_name -> google.protobuf.Duration
-	7,  // 34: leadline.v1.QuantityService.DeclareQuantity:input_type -> leadline.v1.DeclareQuantityRequest
-	8,  // 35: leadline.v1.QuantityService.GetQuantity:input_type -> leadline.v1.GetQuantityRequest
-	9,  // 36: leadline.v1.QuantityService.ListQuantities:input_type -> leadline.v1.ListQuantitiesRequest
-	11, // 37: leadline.v1.QuantityService.RetireQuantity:input_type -> leadline.v1.RetireQuantityRequest
-	12, // 38: leadline.v1.QuantityService.RenewQuantity:input_type -> leadline.v1.RenewQuantityRequest
-	14, // 39: leadline.v1.QuantityService.WithdrawRenewal:input_type -> leadline.v1.WithdrawRenewalRequest
-	15, // 40: leadline.v1.QuantityService.ListRenewals:input_type -> leadline.v1.ListRenewalsRequest
-	0,  // 41: leadline.v1.QuantityService.DeclareQuantity:output_type -> leadline.v1.Quantity
-	0,  // 42: leadline.v1.QuantityService.GetQuantity:output_type -> leadline.v1.Quantity
-	10, // 43: leadline.v1.QuantityService.ListQuantities:output_type -> leadline.v1.ListQuantitiesResponse
-	0,  // 44: leadline.v1.QuantityService.RetireQuantity:output_type -> leadline.v1.Quantity
-	13, // 45: leadline.v1.QuantityService.RenewQuantity:output_type -> leadline.v1.Renewal
-	13, // 46: leadline.v1.QuantityService.WithdrawRenewal:output_type -> leadline.v1.Renewal
-	16, // 47: leadline.v1.QuantityService.ListRenewals:output_type -> leadline.v1.ListRenewalsResponse
-	41, // [41:48] is the sub-list for method output_type
-	34, // [34:41] is the sub-list for method input_type
-	34, // [34:34] is the sub-list for extension type_name
-	34, // [34:34] is the sub-list for extension extendee
-	0,  // [0:34] is the sub-list for field type_name
+	5,  // 0: leadline.v1.Quantity.prior:type_name -> leadline.v1.Prior
+	6,  // 1: leadline.v1.Quantity.repeatability:type_name -> leadline.v1.Repeatability
+	7,  // 2: leadline.v1.Quantity.dynamics:type_name -> leadline.v1.Dynamics
+	9,  // 3: leadline.v1.Quantity.tolerance:type_name -> leadline.v1.Tolerance
+	10, // 4: leadline.v1.Quantity.decision_rule:type_name -> leadline.v1.DecisionRule
+	29, // 5: leadline.v1.Quantity.breach_horizon:type_name -> google.protobuf.Duration
+	30, // 6: leadline.v1.Quantity.create_time:type_name -> google.protobuf.Timestamp
+	30, // 7: leadline.v1.Quantity.update_time:type_name -> google.protobuf.Timestamp
+	30, // 8: leadline.v1.Quantity.retire_time:type_name -> google.protobuf.Timestamp
+	2,  // 9: leadline.v1.Quantity.outliers:type_name -> leadline.v1.Outliers
+	0,  // 10: leadline.v1.Quantity.scale:type_name -> leadline.v1.Quantity.Scale
+	3,  // 11: leadline.v1.Quantity.model_check:type_name -> leadline.v1.ModelCheckSettings
+	4,  // 12: leadline.v1.Quantity.step_detection:type_name -> leadline.v1.StepDetection
+	21, // 13: leadline.v1.StepDetection.on_step:type_name -> leadline.v1.StepDetection.OnStep
+	22, // 14: leadline.v1.Prior.vague:type_name -> leadline.v1.Prior.Vague
+	30, // 15: leadline.v1.Prior.time:type_name -> google.protobuf.Timestamp
+	23, // 16: leadline.v1.Repeatability.learned:type_name -> leadline.v1.Repeatability.Learned
+	24, // 17: leadline.v1.Dynamics.constant:type_name -> leadline.v1.Dynamics.Constant
+	25, // 18: leadline.v1.Dynamics.random_walk:type_name -> leadline.v1.Dynamics.RandomWalk
+	26, // 19: leadline.v1.Dynamics.linear_trend:type_name -> leadline.v1.Dynamics.LinearTrend
+	28, // 20: leadline.v1.Dynamics.mean_reverting:type_name -> leadline.v1.Dynamics.MeanReverting
+	29, // 21: leadline.v1.Slope.per:type_name -> google.protobuf.Duration
+	1,  // 22: leadline.v1.DeclareQuantityRequest.quantity:type_name -> leadline.v1.Quantity
+	1,  // 23: leadline.v1.ListQuantitiesResponse.quantities:type_name -> leadline.v1.Quantity
+	30, // 24: leadline.v1.RenewQuantityRequest.time:type_name -> google.protobuf.Timestamp
+	5,  // 25: leadline.v1.RenewQuantityRequest.prior:type_name -> leadline.v1.Prior
+	8,  // 26: leadline.v1.RenewQuantityRequest.slope:type_name -> leadline.v1.Slope
+	30, // 27: leadline.v1.Renewal.time:type_name -> google.protobuf.Timestamp
+	5,  // 28: leadline.v1.Renewal.prior:type_name -> leadline.v1.Prior
+	8,  // 29: leadline.v1.Renewal.slope:type_name -> leadline.v1.Slope
+	30, // 30: leadline.v1.Renewal.create_time:type_name -> google.protobuf.Timestamp
+	30, // 31: leadline.v1.Renewal.withdraw_time:type_name -> google.protobuf.Timestamp
+	17, // 32: leadline.v1.ListRenewalsResponse.renewals:type_name -> leadline.v1.Renewal
+	29, // 33: leadline.v1.Dynamics.RandomWalk.per:type_name -> google.protobuf.Duration
+	29, // 34: leadline.v1.Dynamics.LinearTrend.per:type_name -> google.protobuf.Duration
+	8,  // 35: leadline.v1.Dynamics.LinearTrend.slope:type_name -> leadline.v1.Slope
+	27, // 36: leadline.v1.Dynamics.LinearTrend.slope_wander:type_name -> leadline.v1.Dynamics.SlopeWander
+	29, // 37: leadline.v1.Dynamics.SlopeWander.per:type_name -> google.protobuf.Duration
+	29, // 38: leadline.v1.Dynamics.MeanReverting.half_life:type_name -> google.protobuf.Duration
+	11, // 39: leadline.v1.QuantityService.DeclareQuantity:input_type -> leadline.v1.DeclareQuantityRequest
+	12, // 40: leadline.v1.QuantityService.GetQuantity:input_type -> leadline.v1.GetQuantityRequest
+	13, // 41: leadline.v1.QuantityService.ListQuantities:input_type -> leadline.v1.ListQuantitiesRequest
+	15, // 42: leadline.v1.QuantityService.RetireQuantity:input_type -> leadline.v1.RetireQuantityRequest
+	16, // 43: leadline.v1.QuantityService.RenewQuantity:input_type -> leadline.v1.RenewQuantityRequest
+	18, // 44: leadline.v1.QuantityService.WithdrawRenewal:input_type -> leadline.v1.WithdrawRenewalRequest
+	19, // 45: leadline.v1.QuantityService.ListRenewals:input_type -> leadline.v1.ListRenewalsRequest
+	1,  // 46: leadline.v1.QuantityService.DeclareQuantity:output_type -> leadline.v1.Quantity
+	1,  // 47: leadline.v1.QuantityService.GetQuantity:output_type -> leadline.v1.Quantity
+	14, // 48: leadline.v1.QuantityService.ListQuantities:output_type -> leadline.v1.ListQuantitiesResponse
+	1,  // 49: leadline.v1.QuantityService.RetireQuantity:output_type -> leadline.v1.Quantity
+	17, // 50: leadline.v1.QuantityService.RenewQuantity:output_type -> leadline.v1.Renewal
+	17, // 51: leadline.v1.QuantityService.WithdrawRenewal:output_type -> leadline.v1.Renewal
+	20, // 52: leadline.v1.QuantityService.ListRenewals:output_type -> leadline.v1.ListRenewalsResponse
+	46, // [46:53] is the sub-list for method output_type
+	39, // [39:46] is the sub-list for method input_type
+	39, // [39:39] is the sub-list for extension type_name
+	39, // [39:39] is the sub-list for extension extendee
+	0,  // [0:39] is the sub-list for field type_name
 }
 
 func init() { file_leadline_v1_quantity_proto_init() }
@@ -1921,34 +2289,40 @@ func file_leadline_v1_quantity_proto_init() {
 	if File_leadline_v1_quantity_proto != nil {
 		return
 	}
+	file_leadline_v1_quantity_proto_msgTypes[0].OneofWrappers = []any{}
 	file_leadline_v1_quantity_proto_msgTypes[1].OneofWrappers = []any{}
 	file_leadline_v1_quantity_proto_msgTypes[2].OneofWrappers = []any{}
-	file_leadline_v1_quantity_proto_msgTypes[3].OneofWrappers = []any{
+	file_leadline_v1_quantity_proto_msgTypes[3].OneofWrappers = []any{}
+	file_leadline_v1_quantity_proto_msgTypes[4].OneofWrappers = []any{}
+	file_leadline_v1_quantity_proto_msgTypes[5].OneofWrappers = []any{}
+	file_leadline_v1_quantity_proto_msgTypes[6].OneofWrappers = []any{
 		(*Dynamics_Constant_)(nil),
 		(*Dynamics_RandomWalk_)(nil),
 		(*Dynamics_LinearTrend_)(nil),
 		(*Dynamics_MeanReverting_)(nil),
 	}
-	file_leadline_v1_quantity_proto_msgTypes[4].OneofWrappers = []any{}
-	file_leadline_v1_quantity_proto_msgTypes[5].OneofWrappers = []any{}
-	file_leadline_v1_quantity_proto_msgTypes[6].OneofWrappers = []any{}
-	file_leadline_v1_quantity_proto_msgTypes[18].OneofWrappers = []any{}
+	file_leadline_v1_quantity_proto_msgTypes[7].OneofWrappers = []any{}
+	file_leadline_v1_quantity_proto_msgTypes[8].OneofWrappers = []any{}
+	file_leadline_v1_quantity_proto_msgTypes[9].OneofWrappers = []any{}
 	file_leadline_v1_quantity_proto_msgTypes[20].OneofWrappers = []any{}
-	file_leadline_v1_quantity_proto_msgTypes[21].OneofWrappers = []any{}
 	file_leadline_v1_quantity_proto_msgTypes[22].OneofWrappers = []any{}
-	file_leadline_v1_quantity_proto_msgTypes[23].OneofWrappers = []any{}
+	file_leadline_v1_quantity_proto_msgTypes[24].OneofWrappers = []any{}
+	file_leadline_v1_quantity_proto_msgTypes[25].OneofWrappers = []any{}
+	file_leadline_v1_quantity_proto_msgTypes[26].OneofWrappers = []any{}
+	file_leadline_v1_quantity_proto_msgTypes[27].OneofWrappers = []any{}
 	type x struct{}
 	out := protoimpl.TypeBuilder{
 		File: protoimpl.DescBuilder{
 			GoPackagePath: reflect.TypeOf(x{}).PkgPath(),
 			RawDescriptor: unsafe.Slice(unsafe.StringData(file_leadline_v1_quantity_proto_rawDesc), len(file_leadline_v1_quantity_proto_rawDesc)),
-			NumEnums:      0,
-			NumMessages:   24,
+			NumEnums:      1,
+			NumMessages:   28,
 			NumExtensions: 0,
 			NumServices:   1,
 		},
 		GoTypes:           file_leadline_v1_quantity_proto_goTypes,
 		DependencyIndexes: file_leadline_v1_quantity_proto_depIdxs,
+		EnumInfos:         file_leadline_v1_quantity_proto_enumTypes,
 		MessageInfos:      file_leadline_v1_quantity_proto_msgTypes,
 	}.Build()
 	File_leadline_v1_quantity_proto = out.File

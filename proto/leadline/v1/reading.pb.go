@@ -142,13 +142,16 @@ func (RecordedReading_CalibrationState) EnumDescriptor() ([]byte, []int) {
 	return file_leadline_v1_reading_proto_rawDescGZIP(), []int{2, 0}
 }
 
-// Reading is one indication of an instrument.
+// Reading is one indication of an instrument. Give exactly one of value, above,
+// below and between: what was indicated, or, where that is not known, which limits
+// it lay beyond or between.
 type Reading struct {
 	state protoimpl.MessageState `protogen:"open.v1"`
 	// ID of the quantity. Required in a batch; in a request whose path names it,
 	// it may be left out or has to be equal.
 	Quantity string `protobuf:"bytes,1,opt,name=quantity,proto3" json:"quantity,omitempty"`
-	// The indication, in the quantity's unit: 0, or of a magnitude from 1e-100 to 1e100.
+	// The indication, in the quantity's unit: 0, or of a magnitude from 1e-100 to
+	// 1e100; above 0 on the scale LOG. The same holds of the limits in its place.
 	Value *float64 `protobuf:"fixed64,2,opt,name=value,proto3,oneof" json:"value,omitempty"`
 	// When the reading was taken. Absent, the instant at which the request was
 	// received, the same for all its readings. A retry sends the time of the answer.
@@ -167,7 +170,20 @@ type Reading struct {
 	// Occasion, up to 128 printable bytes: readings of one instrument that follow
 	// each other under the same occasion share its between_occasions error. Empty, the
 	// reading is an occasion of its own.
-	Occasion      string `protobuf:"bytes,8,opt,name=occasion,proto3" json:"occasion,omitempty"`
+	Occasion string `protobuf:"bytes,8,opt,name=occasion,proto3" json:"occasion,omitempty"`
+	// The indication was above this, in the quantity's unit: beyond the end of a
+	// measuring interval, or of a scale.
+	Above *float64 `protobuf:"fixed64,9,opt,name=above,proto3,oneof" json:"above,omitempty"`
+	// The indication was below this, in the quantity's unit: beyond the end of a
+	// measuring interval, or under a limit of detection.
+	Below *float64 `protobuf:"fixed64,10,opt,name=below,proto3,oneof" json:"below,omitempty"`
+	// The indication lay between two limits.
+	Between *Reading_Between `protobuf:"bytes,11,opt,name=between,proto3" json:"between,omitempty"`
+	// How many indications the reading is the mean of, from 1; absent, 1. It divides
+	// the white part of the reading's variance, and nothing that readings share: no
+	// bias, no correlated noise, no error of an occasion. A reading's own
+	// random_standard_uncertainty is that of the mean and is not divided.
+	SampleCount   *uint32 `protobuf:"varint,12,opt,name=sample_count,json=sampleCount,proto3,oneof" json:"sample_count,omitempty"`
 	unknownFields protoimpl.UnknownFields
 	sizeCache     protoimpl.SizeCache
 }
@@ -256,6 +272,34 @@ func (x *Reading) GetOccasion() string {
 		return x.Occasion
 	}
 	return ""
+}
+
+func (x *Reading) GetAbove() float64 {
+	if x != nil && x.Above != nil {
+		return *x.Above
+	}
+	return 0
+}
+
+func (x *Reading) GetBelow() float64 {
+	if x != nil && x.Below != nil {
+		return *x.Below
+	}
+	return 0
+}
+
+func (x *Reading) GetBetween() *Reading_Between {
+	if x != nil {
+		return x.Between
+	}
+	return nil
+}
+
+func (x *Reading) GetSampleCount() uint32 {
+	if x != nil && x.SampleCount != nil {
+		return *x.SampleCount
+	}
+	return 0
 }
 
 // ReadingResult is what became of one reading of a request.
@@ -358,8 +402,9 @@ type RecordedReading struct {
 	state protoimpl.MessageState `protogen:"open.v1"`
 	// ID of the quantity.
 	Quantity string `protobuf:"bytes,1,opt,name=quantity,proto3" json:"quantity,omitempty"`
-	// The indication, in the quantity's unit. Absent if it was refused and is no
-	// finite number, which gRPC can send; detail then names it.
+	// The indication, in the quantity's unit. Absent where above, below or between
+	// stands in its place, and if it was refused and is no finite number, which gRPC can
+	// send; detail then names it.
 	Value *float64 `protobuf:"fixed64,2,opt,name=value,proto3,oneof" json:"value,omitempty"`
 	// Time of the reading: as it was sent, or the one it was given. Absent if it
 	// was refused as TIME_OUT_OF_RANGE; detail then names it.
@@ -387,7 +432,16 @@ type RecordedReading struct {
 	Occasion string `protobuf:"bytes,13,opt,name=occasion,proto3" json:"occasion,omitempty"`
 	// How it stands to the calibration it rests on, as its instrument is declared now;
 	// absent without an instrument and for a refused one.
-	Calibration   *RecordedReading_CalibrationState `protobuf:"varint,14,opt,name=calibration,proto3,enum=leadline.v1.RecordedReading_CalibrationState,oneof" json:"calibration,omitempty"`
+	Calibration *RecordedReading_CalibrationState `protobuf:"varint,14,opt,name=calibration,proto3,enum=leadline.v1.RecordedReading_CalibrationState,oneof" json:"calibration,omitempty"`
+	// What the indication was above, if that was sent in place of a value. It and the
+	// limits below are absent too if they are no finite numbers; detail then names them.
+	Above *float64 `protobuf:"fixed64,15,opt,name=above,proto3,oneof" json:"above,omitempty"`
+	// What the indication was below, if that was sent in place of a value.
+	Below *float64 `protobuf:"fixed64,16,opt,name=below,proto3,oneof" json:"below,omitempty"`
+	// What the indication lay between, if that was sent in place of a value.
+	Between *Reading_Between `protobuf:"bytes,17,opt,name=between,proto3" json:"between,omitempty"`
+	// How many indications it is the mean of, if that was sent.
+	SampleCount   *uint32 `protobuf:"varint,18,opt,name=sample_count,json=sampleCount,proto3,oneof" json:"sample_count,omitempty"`
 	unknownFields protoimpl.UnknownFields
 	sizeCache     protoimpl.SizeCache
 }
@@ -518,6 +572,34 @@ func (x *RecordedReading) GetCalibration() RecordedReading_CalibrationState {
 		return *x.Calibration
 	}
 	return RecordedReading_UNSPECIFIED
+}
+
+func (x *RecordedReading) GetAbove() float64 {
+	if x != nil && x.Above != nil {
+		return *x.Above
+	}
+	return 0
+}
+
+func (x *RecordedReading) GetBelow() float64 {
+	if x != nil && x.Below != nil {
+		return *x.Below
+	}
+	return 0
+}
+
+func (x *RecordedReading) GetBetween() *Reading_Between {
+	if x != nil {
+		return x.Between
+	}
+	return nil
+}
+
+func (x *RecordedReading) GetSampleCount() uint32 {
+	if x != nil && x.SampleCount != nil {
+		return *x.SampleCount
+	}
+	return 0
 }
 
 // PostReadingRequest is one reading of a named quantity.
@@ -1144,14 +1226,303 @@ func (x *ApplyRefusedResponse) GetRefusedCount() uint32 {
 	return 0
 }
 
+// AssessReadingsRequest selects applied readings of one quantity.
+type AssessReadingsRequest struct {
+	state protoimpl.MessageState `protogen:"open.v1"`
+	// ID of the quantity.
+	Quantity string `protobuf:"bytes,1,opt,name=quantity,proto3" json:"quantity,omitempty"`
+	// Only readings at this time or later.
+	Start *timestamppb.Timestamp `protobuf:"bytes,2,opt,name=start,proto3" json:"start,omitempty"`
+	// Only readings before this time.
+	End *timestamppb.Timestamp `protobuf:"bytes,3,opt,name=end,proto3" json:"end,omitempty"`
+	// Also give the outlier probabilities in hindsight, for which the belief is folded
+	// anew for each reading.
+	Hindsight bool `protobuf:"varint,4,opt,name=hindsight,proto3" json:"hindsight,omitempty"`
+	// Most readings to answer with: 0 means 100, above 1000 means 1000.
+	PageSize int32 `protobuf:"varint,5,opt,name=page_size,json=pageSize,proto3" json:"page_size,omitempty"`
+	// Where to go on: the next_page_token of the page before, with all other
+	// parameters as they were.
+	PageToken     string `protobuf:"bytes,6,opt,name=page_token,json=pageToken,proto3" json:"page_token,omitempty"`
+	unknownFields protoimpl.UnknownFields
+	sizeCache     protoimpl.SizeCache
+}
+
+func (x *AssessReadingsRequest) Reset() {
+	*x = AssessReadingsRequest{}
+	mi := &file_leadline_v1_reading_proto_msgTypes[13]
+	ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
+	ms.StoreMessageInfo(mi)
+}
+
+func (x *AssessReadingsRequest) String() string {
+	return protoimpl.X.MessageStringOf(x)
+}
+
+func (*AssessReadingsRequest) ProtoMessage() {}
+
+func (x *AssessReadingsRequest) ProtoReflect() protoreflect.Message {
+	mi := &file_leadline_v1_reading_proto_msgTypes[13]
+	if x != nil {
+		ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
+		if ms.LoadMessageInfo() == nil {
+			ms.StoreMessageInfo(mi)
+		}
+		return ms
+	}
+	return mi.MessageOf(x)
+}
+
+// Deprecated: Use AssessReadingsRequest.ProtoReflect.Descriptor instead.
+func (*AssessReadingsRequest) Descriptor() ([]byte, []int) {
+	return file_leadline_v1_reading_proto_rawDescGZIP(), []int{13}
+}
+
+func (x *AssessReadingsRequest) GetQuantity() string {
+	if x != nil {
+		return x.Quantity
+	}
+	return ""
+}
+
+func (x *AssessReadingsRequest) GetStart() *timestamppb.Timestamp {
+	if x != nil {
+		return x.Start
+	}
+	return nil
+}
+
+func (x *AssessReadingsRequest) GetEnd() *timestamppb.Timestamp {
+	if x != nil {
+		return x.End
+	}
+	return nil
+}
+
+func (x *AssessReadingsRequest) GetHindsight() bool {
+	if x != nil {
+		return x.Hindsight
+	}
+	return false
+}
+
+func (x *AssessReadingsRequest) GetPageSize() int32 {
+	if x != nil {
+		return x.PageSize
+	}
+	return 0
+}
+
+func (x *AssessReadingsRequest) GetPageToken() string {
+	if x != nil {
+		return x.PageToken
+	}
+	return ""
+}
+
+// AssessReadingsResponse is one page of assessments.
+type AssessReadingsResponse struct {
+	state protoimpl.MessageState `protogen:"open.v1"`
+	// Assessments in the order of time, then ledger position.
+	Assessments []*Assessment `protobuf:"bytes,1,rep,name=assessments,proto3" json:"assessments,omitempty"`
+	// Token of the next page; empty on the last one.
+	NextPageToken string `protobuf:"bytes,2,opt,name=next_page_token,json=nextPageToken,proto3" json:"next_page_token,omitempty"`
+	unknownFields protoimpl.UnknownFields
+	sizeCache     protoimpl.SizeCache
+}
+
+func (x *AssessReadingsResponse) Reset() {
+	*x = AssessReadingsResponse{}
+	mi := &file_leadline_v1_reading_proto_msgTypes[14]
+	ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
+	ms.StoreMessageInfo(mi)
+}
+
+func (x *AssessReadingsResponse) String() string {
+	return protoimpl.X.MessageStringOf(x)
+}
+
+func (*AssessReadingsResponse) ProtoMessage() {}
+
+func (x *AssessReadingsResponse) ProtoReflect() protoreflect.Message {
+	mi := &file_leadline_v1_reading_proto_msgTypes[14]
+	if x != nil {
+		ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
+		if ms.LoadMessageInfo() == nil {
+			ms.StoreMessageInfo(mi)
+		}
+		return ms
+	}
+	return mi.MessageOf(x)
+}
+
+// Deprecated: Use AssessReadingsResponse.ProtoReflect.Descriptor instead.
+func (*AssessReadingsResponse) Descriptor() ([]byte, []int) {
+	return file_leadline_v1_reading_proto_rawDescGZIP(), []int{14}
+}
+
+func (x *AssessReadingsResponse) GetAssessments() []*Assessment {
+	if x != nil {
+		return x.Assessments
+	}
+	return nil
+}
+
+func (x *AssessReadingsResponse) GetNextPageToken() string {
+	if x != nil {
+		return x.NextPageToken
+	}
+	return ""
+}
+
+// Assessment tells how one applied reading agreed with the belief.
+type Assessment struct {
+	state protoimpl.MessageState `protogen:"open.v1"`
+	// The reading.
+	Reading *RecordedReading `protobuf:"bytes,1,opt,name=reading,proto3" json:"reading,omitempty"`
+	// Probability of a reading at least as far out on either side, as the readings
+	// before it predicted. Absent where they predicted nothing: the first readings
+	// under a vague prior.
+	TailProbability *float64 `protobuf:"fixed64,2,opt,name=tail_probability,json=tailProbability,proto3,oneof" json:"tail_probability,omitempty"`
+	// The tail probability is below 0.0001. The reading is applied all the same.
+	Outlying bool `protobuf:"varint,3,opt,name=outlying,proto3" json:"outlying,omitempty"`
+	// Probability that it is an outlier, given it and the readings before it. Absent
+	// where no outliers are declared.
+	OutlierProbability *float64 `protobuf:"fixed64,4,opt,name=outlier_probability,json=outlierProbability,proto3,oneof" json:"outlier_probability,omitempty"`
+	// Probability that it is an outlier, given all readings. Absent where no outliers
+	// are declared, and unless hindsight was asked for.
+	OutlierProbabilityInHindsight *float64 `protobuf:"fixed64,5,opt,name=outlier_probability_in_hindsight,json=outlierProbabilityInHindsight,proto3,oneof" json:"outlier_probability_in_hindsight,omitempty"`
+	unknownFields                 protoimpl.UnknownFields
+	sizeCache                     protoimpl.SizeCache
+}
+
+func (x *Assessment) Reset() {
+	*x = Assessment{}
+	mi := &file_leadline_v1_reading_proto_msgTypes[15]
+	ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
+	ms.StoreMessageInfo(mi)
+}
+
+func (x *Assessment) String() string {
+	return protoimpl.X.MessageStringOf(x)
+}
+
+func (*Assessment) ProtoMessage() {}
+
+func (x *Assessment) ProtoReflect() protoreflect.Message {
+	mi := &file_leadline_v1_reading_proto_msgTypes[15]
+	if x != nil {
+		ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
+		if ms.LoadMessageInfo() == nil {
+			ms.StoreMessageInfo(mi)
+		}
+		return ms
+	}
+	return mi.MessageOf(x)
+}
+
+// Deprecated: Use Assessment.ProtoReflect.Descriptor instead.
+func (*Assessment) Descriptor() ([]byte, []int) {
+	return file_leadline_v1_reading_proto_rawDescGZIP(), []int{15}
+}
+
+func (x *Assessment) GetReading() *RecordedReading {
+	if x != nil {
+		return x.Reading
+	}
+	return nil
+}
+
+func (x *Assessment) GetTailProbability() float64 {
+	if x != nil && x.TailProbability != nil {
+		return *x.TailProbability
+	}
+	return 0
+}
+
+func (x *Assessment) GetOutlying() bool {
+	if x != nil {
+		return x.Outlying
+	}
+	return false
+}
+
+func (x *Assessment) GetOutlierProbability() float64 {
+	if x != nil && x.OutlierProbability != nil {
+		return *x.OutlierProbability
+	}
+	return 0
+}
+
+func (x *Assessment) GetOutlierProbabilityInHindsight() float64 {
+	if x != nil && x.OutlierProbabilityInHindsight != nil {
+		return *x.OutlierProbabilityInHindsight
+	}
+	return 0
+}
+
+// Between is what is known of an indication that lay between two limits.
+type Reading_Between struct {
+	state protoimpl.MessageState `protogen:"open.v1"`
+	// Lower limit, in the quantity's unit.
+	Lower *float64 `protobuf:"fixed64,1,opt,name=lower,proto3,oneof" json:"lower,omitempty"`
+	// Upper limit, in the quantity's unit, above lower.
+	Upper         *float64 `protobuf:"fixed64,2,opt,name=upper,proto3,oneof" json:"upper,omitempty"`
+	unknownFields protoimpl.UnknownFields
+	sizeCache     protoimpl.SizeCache
+}
+
+func (x *Reading_Between) Reset() {
+	*x = Reading_Between{}
+	mi := &file_leadline_v1_reading_proto_msgTypes[16]
+	ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
+	ms.StoreMessageInfo(mi)
+}
+
+func (x *Reading_Between) String() string {
+	return protoimpl.X.MessageStringOf(x)
+}
+
+func (*Reading_Between) ProtoMessage() {}
+
+func (x *Reading_Between) ProtoReflect() protoreflect.Message {
+	mi := &file_leadline_v1_reading_proto_msgTypes[16]
+	if x != nil {
+		ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
+		if ms.LoadMessageInfo() == nil {
+			ms.StoreMessageInfo(mi)
+		}
+		return ms
+	}
+	return mi.MessageOf(x)
+}
+
+// Deprecated: Use Reading_Between.ProtoReflect.Descriptor instead.
+func (*Reading_Between) Descriptor() ([]byte, []int) {
+	return file_leadline_v1_reading_proto_rawDescGZIP(), []int{0, 0}
+}
+
+func (x *Reading_Between) GetLower() float64 {
+	if x != nil && x.Lower != nil {
+		return *x.Lower
+	}
+	return 0
+}
+
+func (x *Reading_Between) GetUpper() float64 {
+	if x != nil && x.Upper != nil {
+		return *x.Upper
+	}
+	return 0
+}
+
 var File_leadline_v1_reading_proto protoreflect.FileDescriptor
 
 const file_leadline_v1_reading_proto_rawDesc = "" +
 	"\n" +
-	"\x19leadline/v1/reading.proto\x12\vleadline.v1\x1a\x1cgoogle/api/annotations.proto\x1a\x1fgoogle/api/field_behavior.proto\x1a\x1fgoogle/protobuf/timestamp.proto\x1a\x18leadline/v1/belief.proto\"\x97\x03\n" +
+	"\x19leadline/v1/reading.proto\x12\vleadline.v1\x1a\x1cgoogle/api/annotations.proto\x1a\x1fgoogle/api/field_behavior.proto\x1a\x1fgoogle/protobuf/timestamp.proto\x1a\x18leadline/v1/belief.proto\"\xa2\x05\n" +
 	"\aReading\x12\x1a\n" +
-	"\bquantity\x18\x01 \x01(\tR\bquantity\x12\x1e\n" +
-	"\x05value\x18\x02 \x01(\x01B\x03\xe0A\x02H\x00R\x05value\x88\x01\x01\x12.\n" +
+	"\bquantity\x18\x01 \x01(\tR\bquantity\x12\x19\n" +
+	"\x05value\x18\x02 \x01(\x01H\x00R\x05value\x88\x01\x01\x12.\n" +
 	"\x04time\x18\x03 \x01(\v2\x1a.google.protobuf.TimestampR\x04time\x12\x1e\n" +
 	"\n" +
 	"instrument\x18\x04 \x01(\tR\n" +
@@ -1160,14 +1531,27 @@ const file_leadline_v1_reading_proto_rawDesc = "" +
 	"\x04unit\x18\x06 \x01(\tR\x04unit\x12\x1d\n" +
 	"\n" +
 	"reading_id\x18\a \x01(\tR\treadingId\x12\x1a\n" +
-	"\boccasion\x18\b \x01(\tR\boccasion\"B\n" +
+	"\boccasion\x18\b \x01(\tR\boccasion\x12\x19\n" +
+	"\x05above\x18\t \x01(\x01H\x02R\x05above\x88\x01\x01\x12\x19\n" +
+	"\x05below\x18\n" +
+	" \x01(\x01H\x03R\x05below\x88\x01\x01\x126\n" +
+	"\abetween\x18\v \x01(\v2\x1c.leadline.v1.Reading.BetweenR\abetween\x12&\n" +
+	"\fsample_count\x18\f \x01(\rH\x04R\vsampleCount\x88\x01\x01\x1aS\n" +
+	"\aBetween\x12\x19\n" +
+	"\x05lower\x18\x01 \x01(\x01H\x00R\x05lower\x88\x01\x01\x12\x19\n" +
+	"\x05upper\x18\x02 \x01(\x01H\x01R\x05upper\x88\x01\x01B\b\n" +
+	"\x06_lowerB\b\n" +
+	"\x06_upper\"B\n" +
 	"\x06Status\x12\x0f\n" +
 	"\vUNSPECIFIED\x10\x00\x12\v\n" +
 	"\aAPPLIED\x10\x01\x12\r\n" +
 	"\tDUPLICATE\x10\x02\x12\v\n" +
 	"\aREFUSED\x10\x03B\b\n" +
 	"\x06_valueB\x1e\n" +
-	"\x1c_random_standard_uncertainty\"\xd9\x01\n" +
+	"\x1c_random_standard_uncertaintyB\b\n" +
+	"\x06_aboveB\b\n" +
+	"\x06_belowB\x0f\n" +
+	"\r_sample_count\"\xd9\x01\n" +
 	"\rReadingResult\x12\x14\n" +
 	"\x05index\x18\x01 \x01(\rR\x05index\x12\x1d\n" +
 	"\n" +
@@ -1175,7 +1559,7 @@ const file_leadline_v1_reading_proto_rawDesc = "" +
 	"\x04time\x18\x03 \x01(\v2\x1a.google.protobuf.TimestampR\x04time\x123\n" +
 	"\x06status\x18\x04 \x01(\x0e2\x1b.leadline.v1.Reading.StatusR\x06status\x12\x16\n" +
 	"\x06reason\x18\x05 \x01(\tR\x06reason\x12\x16\n" +
-	"\x06detail\x18\x06 \x01(\tR\x06detail\"\xee\x05\n" +
+	"\x06detail\x18\x06 \x01(\tR\x06detail\"\xa9\a\n" +
 	"\x0fRecordedReading\x12\x1a\n" +
 	"\bquantity\x18\x01 \x01(\tR\bquantity\x12\x19\n" +
 	"\x05value\x18\x02 \x01(\x01H\x00R\x05value\x88\x01\x01\x12.\n" +
@@ -1194,7 +1578,11 @@ const file_leadline_v1_reading_proto_rawDesc = "" +
 	"\freceive_time\x18\v \x01(\v2\x1a.google.protobuf.TimestampR\vreceiveTime\x12'\n" +
 	"\x0fledger_position\x18\f \x01(\x04R\x0eledgerPosition\x12\x1a\n" +
 	"\boccasion\x18\r \x01(\tR\boccasion\x12T\n" +
-	"\vcalibration\x18\x0e \x01(\x0e2-.leadline.v1.RecordedReading.CalibrationStateH\x02R\vcalibration\x88\x01\x01\"c\n" +
+	"\vcalibration\x18\x0e \x01(\x0e2-.leadline.v1.RecordedReading.CalibrationStateH\x02R\vcalibration\x88\x01\x01\x12\x19\n" +
+	"\x05above\x18\x0f \x01(\x01H\x03R\x05above\x88\x01\x01\x12\x19\n" +
+	"\x05below\x18\x10 \x01(\x01H\x04R\x05below\x88\x01\x01\x126\n" +
+	"\abetween\x18\x11 \x01(\v2\x1c.leadline.v1.Reading.BetweenR\abetween\x12&\n" +
+	"\fsample_count\x18\x12 \x01(\rH\x05R\vsampleCount\x88\x01\x01\"c\n" +
 	"\x10CalibrationState\x12\x0f\n" +
 	"\vUNSPECIFIED\x10\x00\x12\f\n" +
 	"\bIN_FORCE\x10\x01\x12\v\n" +
@@ -1203,7 +1591,10 @@ const file_leadline_v1_reading_proto_rawDesc = "" +
 	"\fUNCALIBRATED\x10\x04B\b\n" +
 	"\x06_valueB\x1e\n" +
 	"\x1c_random_standard_uncertaintyB\x0e\n" +
-	"\f_calibration\"j\n" +
+	"\f_calibrationB\b\n" +
+	"\x06_aboveB\b\n" +
+	"\x06_belowB\x0f\n" +
+	"\r_sample_count\"j\n" +
 	"\x12PostReadingRequest\x12\x1f\n" +
 	"\bquantity\x18\x01 \x01(\tB\x03\xe0A\x02R\bquantity\x123\n" +
 	"\areading\x18\x02 \x01(\v2\x14.leadline.v1.ReadingB\x03\xe0A\x02R\areading\"v\n" +
@@ -1243,12 +1634,34 @@ const file_leadline_v1_reading_proto_rawDesc = "" +
 	"\x14ApplyRefusedResponse\x12#\n" +
 	"\rapplied_count\x18\x01 \x01(\rR\fappliedCount\x12'\n" +
 	"\x0fduplicate_count\x18\x02 \x01(\rR\x0eduplicateCount\x12#\n" +
-	"\rrefused_count\x18\x03 \x01(\rR\frefusedCount2\x8a\x05\n" +
+	"\rrefused_count\x18\x03 \x01(\rR\frefusedCount\"\xf2\x01\n" +
+	"\x15AssessReadingsRequest\x12\x1f\n" +
+	"\bquantity\x18\x01 \x01(\tB\x03\xe0A\x02R\bquantity\x120\n" +
+	"\x05start\x18\x02 \x01(\v2\x1a.google.protobuf.TimestampR\x05start\x12,\n" +
+	"\x03end\x18\x03 \x01(\v2\x1a.google.protobuf.TimestampR\x03end\x12\x1c\n" +
+	"\thindsight\x18\x04 \x01(\bR\thindsight\x12\x1b\n" +
+	"\tpage_size\x18\x05 \x01(\x05R\bpageSize\x12\x1d\n" +
+	"\n" +
+	"page_token\x18\x06 \x01(\tR\tpageToken\"{\n" +
+	"\x16AssessReadingsResponse\x129\n" +
+	"\vassessments\x18\x01 \x03(\v2\x17.leadline.v1.AssessmentR\vassessments\x12&\n" +
+	"\x0fnext_page_token\x18\x02 \x01(\tR\rnextPageToken\"\xe6\x02\n" +
+	"\n" +
+	"Assessment\x126\n" +
+	"\areading\x18\x01 \x01(\v2\x1c.leadline.v1.RecordedReadingR\areading\x12.\n" +
+	"\x10tail_probability\x18\x02 \x01(\x01H\x00R\x0ftailProbability\x88\x01\x01\x12\x1a\n" +
+	"\boutlying\x18\x03 \x01(\bR\boutlying\x124\n" +
+	"\x13outlier_probability\x18\x04 \x01(\x01H\x01R\x12outlierProbability\x88\x01\x01\x12L\n" +
+	" outlier_probability_in_hindsight\x18\x05 \x01(\x01H\x02R\x1doutlierProbabilityInHindsight\x88\x01\x01B\x13\n" +
+	"\x11_tail_probabilityB\x16\n" +
+	"\x14_outlier_probabilityB#\n" +
+	"!_outlier_probability_in_hindsight2\x95\x06\n" +
 	"\x0eReadingService\x12\x85\x01\n" +
 	"\vPostReading\x12\x1f.leadline.v1.PostReadingRequest\x1a .leadline.v1.PostReadingResponse\"3\x82\xd3\xe4\x93\x02-:\areading\"\"/v1/quantities/{quantity}/readings\x12l\n" +
 	"\fPostReadings\x12 .leadline.v1.PostReadingsRequest\x1a!.leadline.v1.PostReadingsResponse\"\x17\x82\xd3\xe4\x93\x02\x11:\x01*\"\f/v1/readings\x12]\n" +
 	"\x0eStreamReadings\x12\".leadline.v1.StreamReadingsRequest\x1a#.leadline.v1.StreamReadingsResponse(\x010\x01\x12\x8f\x01\n" +
-	"\fListReadings\x12 .leadline.v1.ListReadingsRequest\x1a!.leadline.v1.ListReadingsResponse\":\x82\xd3\xe4\x93\x024Z\x0e\x12\f/v1/readings\x12\"/v1/quantities/{quantity}/readings\x12\x90\x01\n" +
+	"\fListReadings\x12 .leadline.v1.ListReadingsRequest\x1a!.leadline.v1.ListReadingsResponse\":\x82\xd3\xe4\x93\x024Z\x0e\x12\f/v1/readings\x12\"/v1/quantities/{quantity}/readings\x12\x88\x01\n" +
+	"\x0eAssessReadings\x12\".leadline.v1.AssessReadingsRequest\x1a#.leadline.v1.AssessReadingsResponse\"-\x82\xd3\xe4\x93\x02'\x12%/v1/quantities/{quantity}/assessments\x12\x90\x01\n" +
 	"\fApplyRefused\x12 .leadline.v1.ApplyRefusedRequest\x1a!.leadline.v1.ApplyRefusedResponse\";\x82\xd3\xe4\x93\x025:\x01*\"0/v1/quantities/{quantity}/readings:apply_refusedB/Z-leadline.example/proto/leadline/v1;leadlinev1b\x06proto3"
 
 var (
@@ -1264,7 +1677,7 @@ func file_leadline_v1_reading_proto_rawDescGZIP() []byte {
 }
 
 var file_leadline_v1_reading_proto_enumTypes = make([]protoimpl.EnumInfo, 2)
-var file_leadline_v1_reading_proto_msgTypes = make([]protoimpl.MessageInfo, 13)
+var file_leadline_v1_reading_proto_msgTypes = make([]protoimpl.MessageInfo, 17)
 var file_leadline_v1_reading_proto_goTypes = []any{
 	(Reading_Status)(0),                   // 0: leadline.v1.Reading.Status
 	(RecordedReading_CalibrationState)(0), // 1: leadline.v1.RecordedReading.CalibrationState
@@ -1281,43 +1694,55 @@ var file_leadline_v1_reading_proto_goTypes = []any{
 	(*ListReadingsResponse)(nil),          // 12: leadline.v1.ListReadingsResponse
 	(*ApplyRefusedRequest)(nil),           // 13: leadline.v1.ApplyRefusedRequest
 	(*ApplyRefusedResponse)(nil),          // 14: leadline.v1.ApplyRefusedResponse
-	(*timestamppb.Timestamp)(nil),         // 15: google.protobuf.Timestamp
-	(*Belief)(nil),                        // 16: leadline.v1.Belief
+	(*AssessReadingsRequest)(nil),         // 15: leadline.v1.AssessReadingsRequest
+	(*AssessReadingsResponse)(nil),        // 16: leadline.v1.AssessReadingsResponse
+	(*Assessment)(nil),                    // 17: leadline.v1.Assessment
+	(*Reading_Between)(nil),               // 18: leadline.v1.Reading.Between
+	(*timestamppb.Timestamp)(nil),         // 19: google.protobuf.Timestamp
+	(*Belief)(nil),                        // 20: leadline.v1.Belief
 }
 var file_leadline_v1_reading_proto_depIdxs = []int32{
-	15, // 0: leadline.v1.Reading.time:type_name -> google.protobuf.Timestamp
-	15, // 1: leadline.v1.ReadingResult.time:type_name -> google.protobuf.Timestamp
-	0,  // 2: leadline.v1.ReadingResult.status:type_name -> leadline.v1.Reading.Status
-	15, // 3: leadline.v1.RecordedReading.time:type_name -> google.protobuf.Timestamp
-	0,  // 4: leadline.v1.RecordedReading.status:type_name -> leadline.v1.Reading.Status
-	15, // 5: leadline.v1.RecordedReading.receive_time:type_name -> google.protobuf.Timestamp
-	1,  // 6: leadline.v1.RecordedReading.calibration:type_name -> leadline.v1.RecordedReading.CalibrationState
-	2,  // 7: leadline.v1.PostReadingRequest.reading:type_name -> leadline.v1.Reading
-	3,  // 8: leadline.v1.PostReadingResponse.result:type_name -> leadline.v1.ReadingResult
-	16, // 9: leadline.v1.PostReadingResponse.belief:type_name -> leadline.v1.Belief
-	2,  // 10: leadline.v1.PostReadingsRequest.readings:type_name -> leadline.v1.Reading
-	3,  // 11: leadline.v1.PostReadingsResponse.results:type_name -> leadline.v1.ReadingResult
-	2,  // 12: leadline.v1.StreamReadingsRequest.readings:type_name -> leadline.v1.Reading
-	3,  // 13: leadline.v1.StreamReadingsResponse.results:type_name -> leadline.v1.ReadingResult
-	15, // 14: leadline.v1.ListReadingsRequest.start:type_name -> google.protobuf.Timestamp
-	15, // 15: leadline.v1.ListReadingsRequest.end:type_name -> google.protobuf.Timestamp
-	0,  // 16: leadline.v1.ListReadingsRequest.status:type_name -> leadline.v1.Reading.Status
-	4,  // 17: leadline.v1.ListReadingsResponse.readings:type_name -> leadline.v1.RecordedReading
-	5,  // 18: leadline.v1.ReadingService.PostReading:input_type -> leadline.v1.PostReadingRequest
-	7,  // 19: leadline.v1.ReadingService.PostReadings:input_type -> leadline.v1.PostReadingsRequest
-	9,  // 20: leadline.v1.ReadingService.StreamReadings:input_type -> leadline.v1.StreamReadingsRequest
-	11, // 21: leadline.v1.ReadingService.ListReadings:input_type -> leadline.v1.ListReadingsRequest
-	13, // 22: leadline.v1.ReadingService.ApplyRefused:input_type -> leadline.v1.ApplyRefusedRequest
-	6,  // 23: leadline.v1.ReadingService.PostReading:output_type -> leadline.v1.PostReadingResponse
-	8,  // 24: leadline.v1.ReadingService.PostReadings:output_type -> leadline.v1.PostReadingsResponse
-	10, // 25: leadline.v1.ReadingService.StreamReadings:output_type -> leadline.v1.StreamReadingsResponse
-	12, // 26: leadline.v1.ReadingService.ListReadings:output_type -> leadline.v1.ListReadingsResponse
-	14, // 27: leadline.v1.ReadingService.ApplyRefused:output_type -> leadline.v1.ApplyRefusedResponse
-	23, // [23:28] is the sub-list for method output_type
-	18, // [18:23] is the sub-list for method input_type
-	18, // [18:18] is the sub-list for extension type_name
-	18, // [18:18] is the sub-list for extension extendee
-	0,  // [0:18] is the sub-list for field type_name
+	19, // 0: leadline.v1.Reading.time:type_name -> google.protobuf.Timestamp
+	18, // 1: leadline.v1.Reading.between:type_name -> leadline.v1.Reading.Between
+	19, // 2: leadline.v1.ReadingResult.time:type_name -> google.protobuf.Timestamp
+	0,  // 3: leadline.v1.ReadingResult.status:type_name -> leadline.v1.Reading.Status
+	19, // 4: leadline.v1.RecordedReading.time:type_name -> google.protobuf.Timestamp
+	0,  // 5: leadline.v1.RecordedReading.status:type_name -> leadline.v1.Reading.Status
+	19, // 6: leadline.v1.RecordedReading.receive_time:type_name -> google.protobuf.Timestamp
+	1,  // 7: leadline.v1.RecordedReading.calibration:type_name -> leadline.v1.RecordedReading.CalibrationState
+	18, // 8: leadline.v1.RecordedReading.between:type_name -> leadline.v1.Reading.Between
+	2,  // 9: leadline.v1.PostReadingRequest.reading:type_name -> leadline.v1.Reading
+	3,  // 10: leadline.v1.PostReadingResponse.result:type_name -> leadline.v1.ReadingResult
+	20, // 11: leadline.v1.PostReadingResponse.belief:type_name -> leadline.v1.Belief
+	2,  // 12: leadline.v1.PostReadingsRequest.readings:type_name -> leadline.v1.Reading
+	3,  // 13: leadline.v1.PostReadingsResponse.results:type_name -> leadline.v1.ReadingResult
+	2,  // 14: leadline.v1.StreamReadingsRequest.readings:type_name -> leadline.v1.Reading
+	3,  // 15: leadline.v1.StreamReadingsResponse.results:type_name -> leadline.v1.ReadingResult
+	19, // 16: leadline.v1.ListReadingsRequest.start:type_name -> google.protobuf.Timestamp
+	19, // 17: leadline.v1.ListReadingsRequest.end:type_name -> google.protobuf.Timestamp
+	0,  // 18: leadline.v1.ListReadingsRequest.status:type_name -> leadline.v1.Reading.Status
+	4,  // 19: leadline.v1.ListReadingsResponse.readings:type_name -> leadline.v1.RecordedReading
+	19, // 20: leadline.v1.AssessReadingsRequest.start:type_name -> google.protobuf.Timestamp
+	19, // 21: leadline.v1.AssessReadingsRequest.end:type_name -> google.protobuf.Timestamp
+	17, // 22: leadline.v1.AssessReadingsResponse.assessments:type_name -> leadline.v1.Assessment
+	4,  // 23: leadline.v1.Assessment.reading:type_name -> leadline.v1.RecordedReading
+	5,  // 24: leadline.v1.ReadingService.PostReading:input_type -> leadline.v1.PostReadingRequest
+	7,  // 25: leadline.v1.ReadingService.PostReadings:input_type -> leadline.v1.PostReadingsRequest
+	9,  // 26: leadline.v1.ReadingService.StreamReadings:input_type -> leadline.v1.StreamReadingsRequest
+	11, // 27: leadline.v1.ReadingService.ListReadings:input_type -> leadline.v1.ListReadingsRequest
+	15, // 28: leadline.v1.ReadingService.AssessReadings:input_type -> leadline.v1.AssessReadingsRequest
+	13, // 29: leadline.v1.ReadingService.ApplyRefused:input_type -> leadline.v1.ApplyRefusedRequest
+	6,  // 30: leadline.v1.ReadingService.PostReading:output_type -> leadline.v1.PostReadingResponse
+	8,  // 31: leadline.v1.ReadingService.PostReadings:output_type -> leadline.v1.PostReadingsResponse
+	10, // 32: leadline.v1.ReadingService.StreamReadings:output_type -> leadline.v1.StreamReadingsResponse
+	12, // 33: leadline.v1.ReadingService.ListReadings:output_type -> leadline.v1.ListReadingsResponse
+	16, // 34: leadline.v1.ReadingService.AssessReadings:output_type -> leadline.v1.AssessReadingsResponse
+	14, // 35: leadline.v1.ReadingService.ApplyRefused:output_type -> leadline.v1.ApplyRefusedResponse
+	30, // [30:36] is the sub-list for method output_type
+	24, // [24:30] is the sub-list for method input_type
+	24, // [24:24] is the sub-list for extension type_name
+	24, // [24:24] is the sub-list for extension extendee
+	0,  // [0:24] is the sub-list for field type_name
 }
 
 func init() { file_leadline_v1_reading_proto_init() }
@@ -1329,13 +1754,15 @@ func file_leadline_v1_reading_proto_init() {
 	file_leadline_v1_reading_proto_msgTypes[0].OneofWrappers = []any{}
 	file_leadline_v1_reading_proto_msgTypes[2].OneofWrappers = []any{}
 	file_leadline_v1_reading_proto_msgTypes[9].OneofWrappers = []any{}
+	file_leadline_v1_reading_proto_msgTypes[15].OneofWrappers = []any{}
+	file_leadline_v1_reading_proto_msgTypes[16].OneofWrappers = []any{}
 	type x struct{}
 	out := protoimpl.TypeBuilder{
 		File: protoimpl.DescBuilder{
 			GoPackagePath: reflect.TypeOf(x{}).PkgPath(),
 			RawDescriptor: unsafe.Slice(unsafe.StringData(file_leadline_v1_reading_proto_rawDesc), len(file_leadline_v1_reading_proto_rawDesc)),
 			NumEnums:      2,
-			NumMessages:   13,
+			NumMessages:   17,
 			NumExtensions: 0,
 			NumServices:   1,
 		},

@@ -195,6 +195,59 @@ func local_request_ReadingService_ListReadings_1(ctx context.Context, marshaler 
 	return msg, metadata, err
 }
 
+var filter_ReadingService_AssessReadings_0 = &utilities.DoubleArray{Encoding: map[string]int{"quantity": 0}, Base: []int{1, 1, 0}, Check: []int{0, 1, 2}}
+
+func request_ReadingService_AssessReadings_0(ctx context.Context, marshaler runtime.Marshaler, client ReadingServiceClient, req *http.Request, pathParams map[string]string) (proto.Message, runtime.ServerMetadata, error) {
+	var (
+		protoReq AssessReadingsRequest
+		metadata runtime.ServerMetadata
+		err      error
+	)
+	val, ok := pathParams["quantity"]
+	if !ok {
+		return nil, metadata, status.Errorf(codes.InvalidArgument, "missing parameter %s", "quantity")
+	}
+	protoReq.Quantity, err = runtime.String(val)
+	if err != nil {
+		return nil, metadata, status.Errorf(codes.InvalidArgument, "type mismatch, parameter: %s, error: %v", "quantity", err)
+	}
+	if err := req.ParseForm(); err != nil {
+		return nil, metadata, status.Errorf(codes.InvalidArgument, "%v", err)
+	}
+	if err := runtime.PopulateQueryParameters(&protoReq, req.Form, filter_ReadingService_AssessReadings_0); err != nil {
+		return nil, metadata, status.Errorf(codes.InvalidArgument, "%v", err)
+	}
+	if req.Body != nil {
+		_, _ = io.Copy(io.Discard, req.Body)
+	}
+	msg, err := client.AssessReadings(ctx, &protoReq, grpc.Header(&metadata.HeaderMD), grpc.Trailer(&metadata.TrailerMD))
+	return msg, metadata, err
+}
+
+func local_request_ReadingService_AssessReadings_0(ctx context.Context, marshaler runtime.Marshaler, server ReadingServiceServer, req *http.Request, pathParams map[string]string) (proto.Message, runtime.ServerMetadata, error) {
+	var (
+		protoReq AssessReadingsRequest
+		metadata runtime.ServerMetadata
+		err      error
+	)
+	val, ok := pathParams["quantity"]
+	if !ok {
+		return nil, metadata, status.Errorf(codes.InvalidArgument, "missing parameter %s", "quantity")
+	}
+	protoReq.Quantity, err = runtime.String(val)
+	if err != nil {
+		return nil, metadata, status.Errorf(codes.InvalidArgument, "type mismatch, parameter: %s, error: %v", "quantity", err)
+	}
+	if err := req.ParseForm(); err != nil {
+		return nil, metadata, status.Errorf(codes.InvalidArgument, "%v", err)
+	}
+	if err := runtime.PopulateQueryParameters(&protoReq, req.Form, filter_ReadingService_AssessReadings_0); err != nil {
+		return nil, metadata, status.Errorf(codes.InvalidArgument, "%v", err)
+	}
+	msg, err := server.AssessReadings(ctx, &protoReq)
+	return msg, metadata, err
+}
+
 func request_ReadingService_ApplyRefused_0(ctx context.Context, marshaler runtime.Marshaler, client ReadingServiceClient, req *http.Request, pathParams map[string]string) (proto.Message, runtime.ServerMetadata, error) {
 	var (
 		protoReq ApplyRefusedRequest
@@ -326,6 +379,26 @@ func RegisterReadingServiceHandlerServer(ctx context.Context, mux *runtime.Serve
 		}
 		forward_ReadingService_ListReadings_1(annotatedContext, mux, outboundMarshaler, w, req, resp, mux.GetForwardResponseOptions()...)
 	})
+	mux.Handle(http.MethodGet, pattern_ReadingService_AssessReadings_0, func(w http.ResponseWriter, req *http.Request, pathParams map[string]string) {
+		ctx, cancel := context.WithCancel(req.Context())
+		defer cancel()
+		var stream runtime.ServerTransportStream
+		ctx = grpc.NewContextWithServerTransportStream(ctx, &stream)
+		inboundMarshaler, outboundMarshaler := runtime.MarshalerForRequest(mux, req)
+		annotatedContext, err := runtime.AnnotateIncomingContext(ctx, mux, req, "/leadline.v1.ReadingService/AssessReadings", runtime.WithHTTPPathPattern("/v1/quantities/{quantity}/assessments"))
+		if err != nil {
+			runtime.HTTPError(ctx, mux, outboundMarshaler, w, req, err)
+			return
+		}
+		resp, md, err := local_request_ReadingService_AssessReadings_0(annotatedContext, inboundMarshaler, server, req, pathParams)
+		md.HeaderMD, md.TrailerMD = metadata.Join(md.HeaderMD, stream.Header()), metadata.Join(md.TrailerMD, stream.Trailer())
+		annotatedContext = runtime.NewServerMetadataContext(annotatedContext, md)
+		if err != nil {
+			runtime.HTTPError(annotatedContext, mux, outboundMarshaler, w, req, err)
+			return
+		}
+		forward_ReadingService_AssessReadings_0(annotatedContext, mux, outboundMarshaler, w, req, resp, mux.GetForwardResponseOptions()...)
+	})
 	mux.Handle(http.MethodPost, pattern_ReadingService_ApplyRefused_0, func(w http.ResponseWriter, req *http.Request, pathParams map[string]string) {
 		ctx, cancel := context.WithCancel(req.Context())
 		defer cancel()
@@ -454,6 +527,23 @@ func RegisterReadingServiceHandlerClient(ctx context.Context, mux *runtime.Serve
 		}
 		forward_ReadingService_ListReadings_1(annotatedContext, mux, outboundMarshaler, w, req, resp, mux.GetForwardResponseOptions()...)
 	})
+	mux.Handle(http.MethodGet, pattern_ReadingService_AssessReadings_0, func(w http.ResponseWriter, req *http.Request, pathParams map[string]string) {
+		ctx, cancel := context.WithCancel(req.Context())
+		defer cancel()
+		inboundMarshaler, outboundMarshaler := runtime.MarshalerForRequest(mux, req)
+		annotatedContext, err := runtime.AnnotateContext(ctx, mux, req, "/leadline.v1.ReadingService/AssessReadings", runtime.WithHTTPPathPattern("/v1/quantities/{quantity}/assessments"))
+		if err != nil {
+			runtime.HTTPError(ctx, mux, outboundMarshaler, w, req, err)
+			return
+		}
+		resp, md, err := request_ReadingService_AssessReadings_0(annotatedContext, inboundMarshaler, client, req, pathParams)
+		annotatedContext = runtime.NewServerMetadataContext(annotatedContext, md)
+		if err != nil {
+			runtime.HTTPError(annotatedContext, mux, outboundMarshaler, w, req, err)
+			return
+		}
+		forward_ReadingService_AssessReadings_0(annotatedContext, mux, outboundMarshaler, w, req, resp, mux.GetForwardResponseOptions()...)
+	})
 	mux.Handle(http.MethodPost, pattern_ReadingService_ApplyRefused_0, func(w http.ResponseWriter, req *http.Request, pathParams map[string]string) {
 		ctx, cancel := context.WithCancel(req.Context())
 		defer cancel()
@@ -475,17 +565,19 @@ func RegisterReadingServiceHandlerClient(ctx context.Context, mux *runtime.Serve
 }
 
 var (
-	pattern_ReadingService_PostReading_0  = runtime.MustPattern(runtime.NewPattern(1, []int{2, 0, 2, 1, 1, 0, 4, 1, 5, 2, 2, 3}, []string{"v1", "quantities", "quantity", "readings"}, ""))
-	pattern_ReadingService_PostReadings_0 = runtime.MustPattern(runtime.NewPattern(1, []int{2, 0, 2, 1}, []string{"v1", "readings"}, ""))
-	pattern_ReadingService_ListReadings_0 = runtime.MustPattern(runtime.NewPattern(1, []int{2, 0, 2, 1, 1, 0, 4, 1, 5, 2, 2, 3}, []string{"v1", "quantities", "quantity", "readings"}, ""))
-	pattern_ReadingService_ListReadings_1 = runtime.MustPattern(runtime.NewPattern(1, []int{2, 0, 2, 1}, []string{"v1", "readings"}, ""))
-	pattern_ReadingService_ApplyRefused_0 = runtime.MustPattern(runtime.NewPattern(1, []int{2, 0, 2, 1, 1, 0, 4, 1, 5, 2, 2, 3}, []string{"v1", "quantities", "quantity", "readings"}, "apply_refused"))
+	pattern_ReadingService_PostReading_0    = runtime.MustPattern(runtime.NewPattern(1, []int{2, 0, 2, 1, 1, 0, 4, 1, 5, 2, 2, 3}, []string{"v1", "quantities", "quantity", "readings"}, ""))
+	pattern_ReadingService_PostReadings_0   = runtime.MustPattern(runtime.NewPattern(1, []int{2, 0, 2, 1}, []string{"v1", "readings"}, ""))
+	pattern_ReadingService_ListReadings_0   = runtime.MustPattern(runtime.NewPattern(1, []int{2, 0, 2, 1, 1, 0, 4, 1, 5, 2, 2, 3}, []string{"v1", "quantities", "quantity", "readings"}, ""))
+	pattern_ReadingService_ListReadings_1   = runtime.MustPattern(runtime.NewPattern(1, []int{2, 0, 2, 1}, []string{"v1", "readings"}, ""))
+	pattern_ReadingService_AssessReadings_0 = runtime.MustPattern(runtime.NewPattern(1, []int{2, 0, 2, 1, 1, 0, 4, 1, 5, 2, 2, 3}, []string{"v1", "quantities", "quantity", "assessments"}, ""))
+	pattern_ReadingService_ApplyRefused_0   = runtime.MustPattern(runtime.NewPattern(1, []int{2, 0, 2, 1, 1, 0, 4, 1, 5, 2, 2, 3}, []string{"v1", "quantities", "quantity", "readings"}, "apply_refused"))
 )
 
 var (
-	forward_ReadingService_PostReading_0  = runtime.ForwardResponseMessage
-	forward_ReadingService_PostReadings_0 = runtime.ForwardResponseMessage
-	forward_ReadingService_ListReadings_0 = runtime.ForwardResponseMessage
-	forward_ReadingService_ListReadings_1 = runtime.ForwardResponseMessage
-	forward_ReadingService_ApplyRefused_0 = runtime.ForwardResponseMessage
+	forward_ReadingService_PostReading_0    = runtime.ForwardResponseMessage
+	forward_ReadingService_PostReadings_0   = runtime.ForwardResponseMessage
+	forward_ReadingService_ListReadings_0   = runtime.ForwardResponseMessage
+	forward_ReadingService_ListReadings_1   = runtime.ForwardResponseMessage
+	forward_ReadingService_AssessReadings_0 = runtime.ForwardResponseMessage
+	forward_ReadingService_ApplyRefused_0   = runtime.ForwardResponseMessage
 )

@@ -23,6 +23,7 @@ const (
 	ReadingService_PostReadings_FullMethodName   = "/leadline.v1.ReadingService/PostReadings"
 	ReadingService_StreamReadings_FullMethodName = "/leadline.v1.ReadingService/StreamReadings"
 	ReadingService_ListReadings_FullMethodName   = "/leadline.v1.ReadingService/ListReadings"
+	ReadingService_AssessReadings_FullMethodName = "/leadline.v1.ReadingService/AssessReadings"
 	ReadingService_ApplyRefused_FullMethodName   = "/leadline.v1.ReadingService/ApplyRefused"
 )
 
@@ -30,7 +31,8 @@ const (
 //
 // For semantics around ctx use and closing/ending streaming RPCs, please refer to https://pkg.go.dev/google.golang.org/grpc/?tab=doc#ClientConn.NewStream.
 //
-// ReadingService takes readings and lists what became of them. A reading that
+// ReadingService takes readings, lists what became of them, and tells how each
+// agreed with the belief. A reading that
 // cannot be applied is no error: it is answered with status REFUSED and a
 // reason, and kept in the ledger. So check the counts, not only the code of the
 // answer. An answer means that the readings are durable.
@@ -53,6 +55,11 @@ type ReadingServiceClient interface {
 	// Without a quantity it lists refused readings only, of all quantities, and
 	// status has to be REFUSED.
 	ListReadings(ctx context.Context, in *ListReadingsRequest, opts ...grpc.CallOption) (*ListReadingsResponse, error)
+	// AssessReadings tells of each applied reading of a quantity how it agreed with
+	// what the readings before it had predicted, and, where outliers are declared, how
+	// probably it was one: by its own time, and with hindsight given all readings. In
+	// the order of time, then ledger position.
+	AssessReadings(ctx context.Context, in *AssessReadingsRequest, opts ...grpc.CallOption) (*AssessReadingsResponse, error)
 	// ApplyRefused puts through the readings of a quantity that were refused as
 	// UNKNOWN_QUANTITY before it was declared.
 	ApplyRefused(ctx context.Context, in *ApplyRefusedRequest, opts ...grpc.CallOption) (*ApplyRefusedResponse, error)
@@ -109,6 +116,16 @@ func (c *readingServiceClient) ListReadings(ctx context.Context, in *ListReading
 	return out, nil
 }
 
+func (c *readingServiceClient) AssessReadings(ctx context.Context, in *AssessReadingsRequest, opts ...grpc.CallOption) (*AssessReadingsResponse, error) {
+	cOpts := append([]grpc.CallOption{grpc.StaticMethod()}, opts...)
+	out := new(AssessReadingsResponse)
+	err := c.cc.Invoke(ctx, ReadingService_AssessReadings_FullMethodName, in, out, cOpts...)
+	if err != nil {
+		return nil, err
+	}
+	return out, nil
+}
+
 func (c *readingServiceClient) ApplyRefused(ctx context.Context, in *ApplyRefusedRequest, opts ...grpc.CallOption) (*ApplyRefusedResponse, error) {
 	cOpts := append([]grpc.CallOption{grpc.StaticMethod()}, opts...)
 	out := new(ApplyRefusedResponse)
@@ -123,7 +140,8 @@ func (c *readingServiceClient) ApplyRefused(ctx context.Context, in *ApplyRefuse
 // All implementations must embed UnimplementedReadingServiceServer
 // for forward compatibility.
 //
-// ReadingService takes readings and lists what became of them. A reading that
+// ReadingService takes readings, lists what became of them, and tells how each
+// agreed with the belief. A reading that
 // cannot be applied is no error: it is answered with status REFUSED and a
 // reason, and kept in the ledger. So check the counts, not only the code of the
 // answer. An answer means that the readings are durable.
@@ -146,6 +164,11 @@ type ReadingServiceServer interface {
 	// Without a quantity it lists refused readings only, of all quantities, and
 	// status has to be REFUSED.
 	ListReadings(context.Context, *ListReadingsRequest) (*ListReadingsResponse, error)
+	// AssessReadings tells of each applied reading of a quantity how it agreed with
+	// what the readings before it had predicted, and, where outliers are declared, how
+	// probably it was one: by its own time, and with hindsight given all readings. In
+	// the order of time, then ledger position.
+	AssessReadings(context.Context, *AssessReadingsRequest) (*AssessReadingsResponse, error)
 	// ApplyRefused puts through the readings of a quantity that were refused as
 	// UNKNOWN_QUANTITY before it was declared.
 	ApplyRefused(context.Context, *ApplyRefusedRequest) (*ApplyRefusedResponse, error)
@@ -170,6 +193,9 @@ func (UnimplementedReadingServiceServer) StreamReadings(grpc.BidiStreamingServer
 }
 func (UnimplementedReadingServiceServer) ListReadings(context.Context, *ListReadingsRequest) (*ListReadingsResponse, error) {
 	return nil, status.Error(codes.Unimplemented, "method ListReadings not implemented")
+}
+func (UnimplementedReadingServiceServer) AssessReadings(context.Context, *AssessReadingsRequest) (*AssessReadingsResponse, error) {
+	return nil, status.Error(codes.Unimplemented, "method AssessReadings not implemented")
 }
 func (UnimplementedReadingServiceServer) ApplyRefused(context.Context, *ApplyRefusedRequest) (*ApplyRefusedResponse, error) {
 	return nil, status.Error(codes.Unimplemented, "method ApplyRefused not implemented")
@@ -256,6 +282,24 @@ func _ReadingService_ListReadings_Handler(srv interface{}, ctx context.Context, 
 	return interceptor(ctx, in, info, handler)
 }
 
+func _ReadingService_AssessReadings_Handler(srv interface{}, ctx context.Context, dec func(interface{}) error, interceptor grpc.UnaryServerInterceptor) (interface{}, error) {
+	in := new(AssessReadingsRequest)
+	if err := dec(in); err != nil {
+		return nil, err
+	}
+	if interceptor == nil {
+		return srv.(ReadingServiceServer).AssessReadings(ctx, in)
+	}
+	info := &grpc.UnaryServerInfo{
+		Server:     srv,
+		FullMethod: ReadingService_AssessReadings_FullMethodName,
+	}
+	handler := func(ctx context.Context, req interface{}) (interface{}, error) {
+		return srv.(ReadingServiceServer).AssessReadings(ctx, req.(*AssessReadingsRequest))
+	}
+	return interceptor(ctx, in, info, handler)
+}
+
 func _ReadingService_ApplyRefused_Handler(srv interface{}, ctx context.Context, dec func(interface{}) error, interceptor grpc.UnaryServerInterceptor) (interface{}, error) {
 	in := new(ApplyRefusedRequest)
 	if err := dec(in); err != nil {
@@ -292,6 +336,10 @@ var ReadingService_ServiceDesc = grpc.ServiceDesc{
 		{
 			MethodName: "ListReadings",
 			Handler:    _ReadingService_ListReadings_Handler,
+		},
+		{
+			MethodName: "AssessReadings",
+			Handler:    _ReadingService_AssessReadings_Handler,
 		},
 		{
 			MethodName: "ApplyRefused",
