@@ -15,6 +15,7 @@ const (
 	KindRetirement                  // a quantity retired
 	KindInstrument                  // an instrument declared, redeclared, retired or revived
 	KindRenewal                     // the part that a quantity is measured on renewed, or that withdrawn
+	KindStep                        // a step detected in a quantity, and published
 )
 
 // Record is one entry of the ledger. Fields that a kind doesn't use are zero.
@@ -43,6 +44,17 @@ type Record struct {
 
 	Instrument *Instrument // as it is from this record on; never changed once recorded
 	Renewal    *Renewal    // likewise
+	Step       *StepEvent  // likewise
+}
+
+// StepEvent tells of a step as it was detected and published: a lasting shift of the
+// readings of a quantity against their predictions. Late readings and redeclarations
+// don't rewrite it.
+type StepEvent struct {
+	Time  Instant // of the reading at which it was detected
+	Since Instant // of the reading after which the shift began to show
+	Up    bool    // the readings lie above their predictions; else below
+	Widen float64 // standard deviation added to the level, in the quantity's unit; 0: none
 }
 
 // Row is the index entry of an applied reading: what a fold needs of it.
