@@ -81,12 +81,16 @@ func (l *Ledger) stamp(g *engine.Group) (*head, error) {
 // what that kind needs.
 func writable(r *engine.Record) error {
 	switch {
-	case r.Kind < engine.KindReading || r.Kind > engine.KindRenewal:
+	case r.Kind < engine.KindReading || r.Kind > engine.KindStep:
 		return fmt.Errorf("a record is of kind %d, which this version can't write", r.Kind)
 	case r.Kind == engine.KindInstrument && (r.Instrument == nil || r.Instrument.Number == 0):
 		return errors.New("a record of an instrument has none, or one without a number")
 	case r.Kind == engine.KindRenewal && r.Renewal == nil:
 		return errors.New("a record of a renewal has none")
+	case r.Kind == engine.KindStep && r.Step == nil:
+		return errors.New("a record of a step has none")
+	case r.Reading.Extent > engine.ExtentBetween:
+		return fmt.Errorf("a reading has extent %d, which this version can't write", r.Reading.Extent)
 	}
 	return nil
 }

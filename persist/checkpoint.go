@@ -327,7 +327,7 @@ func (r *rowReader) read(tx *bolt.Tx) error {
 	return nil
 }
 
-const rowMemory = 48 // bytes of an engine.Row
+const rowMemory = 64 // bytes of an engine.Row
 
 func (r *rowReader) take(key, value []byte) error {
 	chunk, err := parseRows(key, value)

@@ -9,6 +9,7 @@ import (
 	"math/rand/v2"
 	"os"
 	"path/filepath"
+	"slices"
 	"strings"
 	"testing"
 	"time"
@@ -33,12 +34,12 @@ func written(t *testing.T) (image []byte, records []engine.Record) {
 	t.Helper()
 	path := filepath.Join(t.TempDir(), persist.FileName)
 	l := openAt(t, path)
-	rows := ledgertest.Rows(1, 40)
+	rows := ledgertest.ExtentRows(1, 40)
 	for i, group := range [][]engine.Record{
 		ledgertest.Readings(1, rows[:1]),
 		append(ledgertest.Readings(1, rows[1:]), ledgertest.Records(100, 21)...),
 		ledgertest.Records(200, 1),
-		append(ledgertest.Records(300, 30), ledgertest.FurtherRecords(0, 24)...),
+		slices.Concat(ledgertest.Records(300, 30), ledgertest.FurtherRecords(0, 24), ledgertest.WiderRecords(0, 12)),
 	} {
 		g := &engine.Group{Records: group}
 		if i == 2 {
@@ -113,7 +114,7 @@ func live(t *testing.T, path string) (pages []int, size int) {
 // reading give anything but what was written, or what is missing at the end.
 func TestFlippedByteIsFound(t *testing.T) {
 	image, records := written(t)
-	rows := ledgertest.Rows(1, 40)
+	rows := ledgertest.ExtentRows(1, 40)
 	path := filepath.Join(t.TempDir(), persist.FileName)
 	restore(t, path, image)
 	pages, size := live(t, path)

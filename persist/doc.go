@@ -23,9 +23,10 @@
 // is refused as damaged, though the older meta page leads to a sound state: the
 // torn one can't be told from one that was acknowledged and has rotted since.
 //
-// # Format, versions 1 and 2
+// # Format, versions 1 to 3
 //
-// Version 2 is version 1 with what is marked (2).
+// Version 2 is version 1 with what is marked (2), version 3 is that with what is
+// marked (3).
 //
 // Numbers in keys are big-endian, so that they sort; all others little-endian.
 // "varint" and messages are those of protobuf. crc is CRC-32C (Castagnoli).
@@ -81,7 +82,7 @@
 // others are left out where they are zero or empty.
 //
 //	 1  varint  kind: 0 reading, 1 refusal, 2 declaration, 3 retirement,
-//	            4 instrument (2), 5 renewal (2)
+//	            4 instrument (2), 5 renewal (2), 6 step (3)
 //	 2* varint  number of the quantity
 //	 7* sint64  receive time, as a difference
 //	 8* string  principal
@@ -101,18 +102,31 @@
 //	17  string  quantity ID, if it has no number
 //	18  string  reason, if it isn't in that list
 //	21* string  occasion (2)
+//	24  varint  extent: 1 above the value, 2 below it, 3 between it and upper (3)
+//	25  double  upper (3)
+//	26  varint  number of samples that the value is a mean of (3)
 //	            of declarations and retirements:
 //	19  string  quantity ID
-//	20  message Declaration, see quantity.go and dynamics.go; its fields of
-//	            slope, wander, mean, half-life and horizon are (2)
+//	20  message Declaration, see quantity.go, repeatability.go, dynamics.go and
+//	            model.go; its fields of slope, wander, mean, half-life and
+//	            horizon are (2), those of floor, outliers, scale, model check
+//	            and step detection (3)
 //	            of instruments:
-//	22  message Instrument, whole, see instrument.go (2)
+//	22  message Instrument, whole, see instrument.go (2); its field of a
+//	            learned repeatability is (3)
 //	            of renewals, and of what withdraws one:
 //	23  message Renewal, whole, see renewal.go (2)
+//	            of steps:
+//	27  message StepEvent, see model.go (3)
 //
 // The rows of a chunk, in canonical order:
 //
 //	rows 1 | scale 1 | earliest time 8 | latest time 8, then of each row
+//	if its extent, upper or samples aren't those of the row before (3):
+//	   control 1: bits 0 and 1 extent, bit 2 has an upper, bit 3 the samples
+//	              change, bits 4 to 7 the number 9
+//	   if the samples change: varint
+//	   with an upper: control 1 | n bytes, as for an uncertainty
 //	control 1: bit 0 has an ID, bit 1 has an uncertainty, bit 2 reversed,
 //	           bit 3 has an origin (2), bits 4 to 7 n
 //	sint64 varint: time less that of the row before (of the first: earliest), in units
@@ -124,7 +138,10 @@
 //	with an uncertainty: control 1 (bits 2 and 4 to 7) | n bytes, likewise
 //
 // A row without an origin has that of the row before; before the first stands
-// instrument 0, occasion 0. So rows that name none are those of version 1.
+// instrument 0, occasion 0. So rows that name none are those of version 1. Likewise
+// before the first stand extent, upper and samples 0, and no control byte of
+// versions 1 and 2 holds the number 9, so rows of plain values are those of version 2.
+// An upper's bits are xored with those of the row before, 0 if that has none.
 //
 // # Upgrades
 //
@@ -135,13 +152,20 @@
 // value if the rest can be read without it, of the file if not. A program
 // reads all versions up to its own and refuses newer ones with ErrNewer,
 // without touching the file. testdata/format1.golden holds the bytes of
-// version 1, format2.golden those that version 2 adds.
+// version 1, format2.golden those that version 2 adds, format3.golden those that
+// version 3 adds.
 //
-// A file begins as version 1 and becomes version 2 with the first record that
-// needs it: of an instrument or a renewal, of a reading with an occasion, of a
-// declaration with a linear trend, mean reversion or a horizon. It stays that. So a
-// program that writes version 2 goes on with a file of version 1 as it is, a
-// program that knows only version 1 may take it back until then, and from then on
+// A file begins as version 1 and becomes a later one with the first record that
+// needs it, and never an earlier one again:
+//
+//	2  an instrument; a renewal; a reading with an occasion; a declaration with
+//	   a linear trend, mean reversion or a horizon
+//	3  a reading with an extent or a number of samples; a declaration with a
+//	   floor, outliers, a logarithmic scale, a model check or a step detection;
+//	   an instrument with a learned repeatability; a step
+//
+// So a program that writes version 3 goes on with a file of version 1 or 2 as it is.
+// A program that knows only those may take it back until then, and from then on
 // refuses it with ErrNewer, as it would believe something else.
 //
 // # Damage

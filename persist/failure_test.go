@@ -5,6 +5,7 @@ import (
 	"fmt"
 	"path/filepath"
 	"reflect"
+	"slices"
 	"strings"
 	"testing"
 	"time"
@@ -170,7 +171,7 @@ func testFailedCommit(t *testing.T, mapping int) {
 			g.Records = ledgertest.Readings(1, ledgertest.Rows(1, 1000))
 		}
 		if i == 2 {
-			g.Records = append(g.Records, ledgertest.FurtherRecords(0, 40)...)
+			g.Records = slices.Concat(g.Records, ledgertest.FurtherRecords(0, 40), ledgertest.WiderRecords(0, 40))
 		}
 		if i == 3 {
 			g.Checkpoint = append(ledgertest.Entries(1, 3000), engine.CheckpointEntry{Number: 1, Segment: 1, Rows: ledgertest.Rows(1, 100)})

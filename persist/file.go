@@ -162,8 +162,8 @@ func checkFormatValue(v []byte) error {
 	if len(v) != len(magic)+4 || string(v[:len(magic)]) != magic {
 		return ErrForeign
 	}
-	if version := formatOf(v); version > formatSecond {
-		return fmt.Errorf("%w: its format is %d, this program's %d", ErrNewer, version, formatSecond)
+	if version := formatOf(v); version > formatThird {
+		return fmt.Errorf("%w: its format is %d, this program's %d", ErrNewer, version, formatThird)
 	}
 	return nil
 }

@@ -63,6 +63,7 @@ func drawInstrument(t *rapid.T) *engine.Instrument {
 			Repeatability: engine.InstrumentRepeatability{
 				StandardDeviation: drawFloat(t), Relative: drawFloat(t), BetweenOccasions: drawFloat(t),
 				Correlated: engine.Correlated{StandardDeviation: drawFloat(t), Time: drawDuration(t)},
+				Learned:    drawRepeatability(t),
 			},
 			Resolution: drawFloat(t),
 			MeasuringInterval: engine.MeasuringInterval{
@@ -96,7 +97,7 @@ func TestUnknownFormsAreRefused(t *testing.T) {
 		name string
 		body []byte
 	}{
-		{"a kind of a later version", appendUint(nil, fieldKind, uint64(engine.KindRenewal))},
+		{"a kind of a later version", appendUint(nil, fieldKind, uint64(engine.KindStep))},
 		{"no instrument", appendUint(nil, fieldKind, uint64(engine.KindInstrument)-1)},
 		{"an instrument without a number", about(engine.KindInstrument, fieldDevice, appendText(nil, instrumentID, "dial_gauge_1"))},
 		{"a number beyond 32 bits", about(engine.KindInstrument, fieldDevice, appendUint(nil, instrumentNumber, math.MaxUint32+1))},
@@ -107,6 +108,15 @@ func TestUnknownFormsAreRefused(t *testing.T) {
 			appendMessage(nil, renewalPrior, func(b []byte) []byte { return appendUint(b, priorForm, uint64(engine.PriorInterval)+1) }))},
 		{"dynamics of a later form", about(engine.KindDeclaration, fieldDeclaration,
 			appendMessage(nil, declarationDynamics, func(b []byte) []byte { return appendUint(b, dynamicsForm, uint64(engine.DynamicsMeanReverting)+1) }))},
+		{"no step", appendUint(nil, fieldKind, uint64(engine.KindStep)-1)},
+		{"a step that is no message", about(engine.KindStep, fieldStep, []byte{0xff})},
+		{"an extent of a later form", appendUint(nil, fieldExtent, uint64(engine.ExtentBetween)+1)},
+		{"samples beyond 32 bits", appendUint(nil, fieldSamples, math.MaxUint32+1)},
+		{"a later scale", about(engine.KindDeclaration, fieldDeclaration, appendUint(nil, declarationScale, uint64(engine.ScaleLog)+1))},
+		{"outliers that are no message", about(engine.KindDeclaration, fieldDeclaration, alwaysText(nil, declarationOutliers, "\xff"))},
+		{"a model check that is no message", about(engine.KindDeclaration, fieldDeclaration, alwaysText(nil, declarationModelCheck, "\xff"))},
+		{"a step detection that is no message", about(engine.KindDeclaration, fieldDeclaration, alwaysText(nil, declarationStepDetection, "\xff"))},
+		{"a repeatability learned by a later form", about(engine.KindInstrument, fieldDevice, appendInstrument(nil, learnedBy(engine.RepeatabilityLearnedReference+1)))},
 		{"a slope that is no message", about(engine.KindDeclaration, fieldDeclaration,
 			appendMessage(nil, declarationDynamics, func(b []byte) []byte { return alwaysText(b, dynamicsSlope, "\xff") }))},
 	} {

@@ -33,6 +33,7 @@ const (
 	deviceLower            protowire.Number = 11
 	deviceUpper            protowire.Number = 12
 	deviceCalibration      protowire.Number = 13 // repeated
+	deviceLearned          protowire.Number = 14
 
 	calibrationValidFrom      protowire.Number = 1
 	calibrationBias           protowire.Number = 2
@@ -77,7 +78,7 @@ func appendDevice(b []byte, d *engine.InstrumentDeclaration) []byte {
 		b = appendTag(b, deviceCalibration, protowire.BytesType) // also if it is empty: their number counts
 		b = protowire.AppendBytes(b, appendCalibration(nil, &d.Calibrations[i]))
 	}
-	return b
+	return appendMessage(b, deviceLearned, func(b []byte) []byte { return appendRepeatability(b, &d.Repeatability.Learned) })
 }
 
 func appendCalibration(b []byte, c *engine.Calibration) []byte {
@@ -160,6 +161,8 @@ func decodeDevice(body []byte, d *engine.InstrumentDeclaration) bool {
 			var c engine.Calibration
 			sound = decodeCalibration(m.bytes, &c) && sound
 			d.Calibrations = append(d.Calibrations, c)
+		case text(deviceLearned):
+			sound = decodeRepeatability(m.bytes, &d.Repeatability.Learned) && sound
 		}
 	}
 	return sound && !m.bad

@@ -37,11 +37,14 @@ func TestFormatIsTheLowestThatIsNeeded(t *testing.T) {
 	if occasion.Reading.Occasion == "" {
 		t.Fatal("the reading has no occasion")
 	}
-	horizon := *ledgertest.Records(3, 1)[0].Declaration
-	horizon.BreachHorizon = 1
 	plain := *ledgertest.Entries(1, 0)[0].Quantity
 	renewed := plain
 	renewed.Renewals = []engine.Renewal{*further[1].Renewal}
+	wider := ledgertest.WiderRecords(0, 6)
+	averaged := ledgertest.Records(0, 1)[0]
+	averaged.Reading.Samples = 60
+	leaking := plain
+	leaking.Declaration = *wider[2].Declaration
 	for _, c := range []struct {
 		name string
 		g    engine.Group
@@ -54,9 +57,21 @@ func TestFormatIsTheLowestThatIsNeeded(t *testing.T) {
 		{"a renewal", engine.Group{Records: further[1:2]}, 2},
 		{"a trend", engine.Group{Records: further[2:3]}, 2},
 		{"mean reversion", engine.Group{Records: further[8:9]}, 2},
-		{"a horizon", engine.Group{Records: []engine.Record{{Kind: engine.KindDeclaration, Number: 1, Declaration: &horizon}}}, 2},
+		{"a horizon", declares(func(d *engine.Declaration) { d.BreachHorizon = 1 }), 2},
 		{"an occasion", engine.Group{Records: []engine.Record{occasion}}, 2},
 		{"a quantity with a renewal", engine.Group{Checkpoint: []engine.CheckpointEntry{{Number: 1, Quantity: &renewed}}}, 2},
+		{"a censored reading", engine.Group{Records: wider[1:2]}, 3},
+		{"a mean of several", engine.Group{Records: []engine.Record{averaged}}, 3},
+		{"an instrument of learned repeatability", engine.Group{Records: wider[3:4]}, 3},
+		{"a step", engine.Group{Records: wider[4:5]}, 3},
+		{"outliers", declares(func(d *engine.Declaration) { d.Outliers.Probability = 0.01 }), 3},
+		{"a logarithmic scale", declares(func(d *engine.Declaration) { d.Scale = engine.ScaleLog }), 3},
+		{"a floor", declares(func(d *engine.Declaration) { d.Repeatability.Floor = 0.01 }), 3},
+		{"a model check", declares(func(d *engine.Declaration) { d.ModelCheck.Window = 100 }), 3},
+		{"a step detection", declares(func(d *engine.Declaration) { d.StepDetection.FalseAlarmInterval = 1e6 }), 3},
+		{"a quantity with outliers", engine.Group{Checkpoint: []engine.CheckpointEntry{{Number: 1, Quantity: &leaking}}}, 3},
+		{"rows with extents", engine.Group{Checkpoint: []engine.CheckpointEntry{{Number: 1, Rows: ledgertest.ExtentRows(1, 4)}}}, 3},
+		{"the newest before the older", engine.Group{Records: append(ledgertest.WiderRecords(1, 1), further[1:2]...)}, 3},
 		{"rows of an instrument", engine.Group{Checkpoint: []engine.CheckpointEntry{{Number: 1, Rows: rows}}}, 2},
 	} {
 		t.Run(c.name, func(t *testing.T) {
@@ -75,6 +90,13 @@ func TestFormatIsTheLowestThatIsNeeded(t *testing.T) {
 			}
 		})
 	}
+}
+
+// declares returns a group of one declaration, changed from one that version 1 knows.
+func declares(change func(*engine.Declaration)) engine.Group {
+	d := *ledgertest.Records(3, 1)[0].Declaration
+	change(&d)
+	return engine.Group{Records: []engine.Record{{Kind: engine.KindDeclaration, Number: 1, Declaration: &d}}}
 }
 
 // TestFileOfVersion1IsReadAndGoesOn with a file that the first release wrote:
@@ -99,7 +121,16 @@ func TestFileOfVersion1IsReadAndGoesOn(t *testing.T) {
 	if got := ledgertest.Instruments(t, l); got != nil {
 		t.Errorf("it has instruments: %v", got)
 	}
-	for _, records := range [][]engine.Record{ledgertest.Records(30, 40), ledgertest.FurtherRecords(0, 30)} {
+	l.Close()
+	goesOn(t, path, written, ledgertest.Records(30, 40), ledgertest.FurtherRecords(0, 30), ledgertest.WiderRecords(0, 30))
+}
+
+// goesOn appends each group to a file that has what was written, and returns that
+// with what it has then.
+func goesOn(t *testing.T, path string, written []engine.Record, groups ...[]engine.Record) []engine.Record {
+	t.Helper()
+	for _, records := range groups {
+		l := openAt(t, path)
 		g := &engine.Group{Records: records}
 		if err := l.Append(g); err != nil {
 			t.Fatal(err)
@@ -110,6 +141,44 @@ func TestFileOfVersion1IsReadAndGoesOn(t *testing.T) {
 		l = openAt(t, path)
 		sameRecords(t, written, l)
 		sameInstruments(t, written, l)
+		l.Close()
+	}
+	return written
+}
+
+// TestFileOfVersion2IsReadAndGoesOn with a file that the release before wrote: of the
+// records below all but the last ten, then a sweep, then those.
+func TestFileOfVersion2IsReadAndGoesOn(t *testing.T) {
+	path := filepath.Join(t.TempDir(), persist.FileName)
+	unpack(t, filepath.Join("testdata", "format2.db.gz"), path)
+	if got := formatOf(t, path); got != 2 {
+		t.Fatalf("the format is %d; want 2", got)
+	}
+	verified(t, path)
+	l := openAt(t, path)
+	rows := ledgertest.OriginRows(1, 40)
+	written := append(ledgertest.Readings(1, rows), ledgertest.FurtherRecords(0, 30)...)
+	for i := range written {
+		written[i].Position, written[i].CommitTime = engine.Position(i+1), 1_772_366_400_000_000_000
+	}
+	sameRecords(t, written, l)
+	sameInstruments(t, written, l)
+	if d := cmp.Diff(rows, ledgertest.AllRows(t, l, 1, engine.MinInstant)); d != "" {
+		t.Errorf("rows (-want +got):\n%s", d)
+	}
+	entries := ledgertest.Entries(5, 60)
+	entries[2].Quantity.Renewals = []engine.Renewal{*ledgertest.FurtherRecords(1, 1)[0].Renewal}
+	if d := cmp.Diff(entries, ledgertest.Checkpointed(t, l).Entries); d != "" {
+		t.Errorf("checkpoint (-want +got):\n%s", d)
+	}
+	l.Close()
+	written = goesOn(t, path, written, ledgertest.FurtherRecords(30, 40))
+	if got := formatOf(t, path); got != 2 {
+		t.Errorf("the format is %d; want 2 still", got)
+	}
+	goesOn(t, path, written, ledgertest.WiderRecords(0, 30))
+	if got := formatOf(t, path); got != 3 {
+		t.Errorf("the format is %d; want 3", got)
 	}
 }
 

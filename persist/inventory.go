@@ -52,6 +52,7 @@ func (t *total) add(r *engine.Row) {
 	h := uint64(0)
 	for _, field := range [...]uint64{
 		uint64(r.Position), uint64(r.Time), math.Float64bits(r.Value), math.Float64bits(r.Uncertainty), flags,
+		uint64(r.Extent), math.Float64bits(r.Upper), uint64(r.Samples),
 	} {
 		h = scramble(h ^ field)
 	}

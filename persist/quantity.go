@@ -32,6 +32,10 @@ const (
 	declarationTolerance     protowire.Number = 6
 	declarationRule          protowire.Number = 7
 	declarationHorizon       protowire.Number = 8
+	declarationOutliers      protowire.Number = 9
+	declarationScale         protowire.Number = 10
+	declarationModelCheck    protowire.Number = 11
+	declarationStepDetection protowire.Number = 12
 
 	priorForm        protowire.Number = 1
 	priorMean        protowire.Number = 2
@@ -120,7 +124,8 @@ func appendDeclaration(b []byte, d *engine.Declaration) []byte {
 		b = appendDouble(b, ruleConform, d.Rule.ConformProbability)
 		return appendDouble(b, ruleBreach, d.Rule.BreachProbability)
 	})
-	return appendFixed(b, declarationHorizon, uint64(d.BreachHorizon))
+	b = appendFixed(b, declarationHorizon, uint64(d.BreachHorizon))
+	return appendModel(b, d)
 }
 
 func appendPrior(b []byte, p *engine.Prior) []byte {
@@ -156,6 +161,8 @@ func decodeDeclaration(body []byte, d *engine.Declaration) error {
 			sound = decodeRule(m.bytes, &d.Rule) && sound
 		case fixed(declarationHorizon):
 			d.BreachHorizon = time.Duration(m.number)
+		default:
+			sound = decodeModel(&m, d) && sound
 		}
 	}
 	if m.bad || !sound {

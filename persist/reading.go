@@ -25,6 +25,9 @@ func (c *before) appendReading(b []byte, r *engine.Record) []byte {
 	b = appendChange(b, fieldInstrument, y.Instrument, &c.instrument)
 	b = appendChange(b, fieldUnit, y.Unit, &c.unit)
 	b = appendChange(b, fieldOccasion, y.Occasion, &c.occasion)
+	b = appendUint(b, fieldExtent, uint64(y.Extent))
+	b = appendDouble(b, fieldUpper, y.Upper)
+	b = appendUint(b, fieldSamples, uint64(y.Samples))
 	b = appendReason(b, r.Reason)
 	b = appendText(b, fieldDetail, r.Detail)
 	b = appendUint(b, fieldPutThrough, uint64(r.PutThrough))
@@ -62,6 +65,14 @@ func (c *before) decodeReadingField(m *message, r *engine.Record) bool {
 		c.unit = string(m.bytes)
 	case text(fieldOccasion):
 		c.occasion = string(m.bytes)
+	case varint(fieldExtent):
+		y.Extent = engine.Extent(m.number)
+		return m.number <= uint64(engine.ExtentBetween)
+	case fixed(fieldUpper):
+		y.Upper = math.Float64frombits(m.number)
+	case varint(fieldSamples):
+		y.Samples = uint32(m.number)
+		return m.number <= math.MaxUint32
 	case varint(fieldReason):
 		if m.number == 0 || m.number > uint64(len(engine.ReadingReasons)) {
 			return false

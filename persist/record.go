@@ -37,6 +37,10 @@ const (
 	fieldOccasion     protowire.Number = 21
 	fieldDevice       protowire.Number = 22
 	fieldRenewal      protowire.Number = 23
+	fieldExtent       protowire.Number = 24
+	fieldUpper        protowire.Number = 25
+	fieldSamples      protowire.Number = 26
+	fieldStep         protowire.Number = 27
 )
 
 var castagnoli = crc32.MakeTable(crc32.Castagnoli)
@@ -110,6 +114,9 @@ func (c *before) appendBody(b []byte, r *engine.Record) []byte {
 	case engine.KindRenewal:
 		b = appendTag(b, fieldRenewal, protowire.BytesType)
 		return protowire.AppendBytes(b, appendRenewal(nil, r.Renewal))
+	case engine.KindStep:
+		b = appendTag(b, fieldStep, protowire.BytesType)
+		return protowire.AppendBytes(b, appendStep(nil, r.Step))
 	}
 	return appendText(b, fieldQuantity, string(r.Quantity))
 }
@@ -165,6 +172,9 @@ func (c *before) finish(r *engine.Record) error {
 	case engine.KindRenewal:
 		r.Renewal = all.Renewal
 		return whole(r.Renewal != nil)
+	case engine.KindStep:
+		r.Step = all.Step
+		return whole(r.Step != nil)
 	default:
 		return fmt.Errorf("%w: its kind %d is unknown to this version", errRecord, r.Kind)
 	}
@@ -210,6 +220,9 @@ func (c *before) decodeField(m *message, r *engine.Record) bool {
 	case text(fieldRenewal):
 		r.Renewal = new(engine.Renewal)
 		return decodeRenewal(m.bytes, r.Renewal)
+	case text(fieldStep):
+		r.Step = new(engine.StepEvent)
+		return decodeStep(m.bytes, r.Step)
 	default:
 		return c.decodeReadingField(m, r)
 	}

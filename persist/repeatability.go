@@ -14,13 +14,15 @@ const (
 	repeatabilitySD    protowire.Number = 2
 	repeatabilityGuess protowire.Number = 3
 	repeatabilityWorth protowire.Number = 4
+	repeatabilityFloor protowire.Number = 5
 )
 
 func appendRepeatability(b []byte, r *engine.Repeatability) []byte {
 	b = appendUint(b, repeatabilityForm, uint64(r.Form))
 	b = appendDouble(b, repeatabilitySD, r.StandardDeviation)
 	b = appendDouble(b, repeatabilityGuess, r.Guess)
-	return appendDouble(b, repeatabilityWorth, r.Worth)
+	b = appendDouble(b, repeatabilityWorth, r.Worth)
+	return appendDouble(b, repeatabilityFloor, r.Floor)
 }
 
 func decodeRepeatability(body []byte, r *engine.Repeatability) bool {
@@ -36,6 +38,8 @@ func decodeRepeatability(body []byte, r *engine.Repeatability) bool {
 			r.Guess = v
 		case fixed(repeatabilityWorth):
 			r.Worth = v
+		case fixed(repeatabilityFloor):
+			r.Floor = v
 		}
 	}
 	return !m.bad

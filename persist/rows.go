@@ -69,6 +69,9 @@ func scaleOf(rows []engine.Row, earliest engine.Instant) int {
 }
 
 func appendRow(b []byte, r, before engine.Row, unit int64) []byte {
+	if !sameExtent(&r, &before) {
+		b = appendExtent(b, &r, &before)
+	}
 	change, control := squeeze(r.Value, before.Value)
 	if r.HasID {
 		control |= rowHasID
@@ -170,11 +173,17 @@ func (c rowChunk) appendTo(rows []engine.Row) ([]engine.Row, error) {
 
 // takeRow decodes one row and returns its length, or -1.
 func takeRow(b []byte, before engine.Row, unit int64) (r engine.Row, n int) {
-	if len(b) == 0 {
+	r.Extent, r.Upper, r.Samples = before.Extent, before.Upper, before.Samples
+	if len(b) > 0 && b[0]&escapeMask == extentEscape {
+		if n = takeExtent(b, &r); n < 0 {
+			return r, -1
+		}
+	}
+	if len(b) == n {
 		return r, -1
 	}
-	control := b[0]
-	n = 1
+	control := b[n]
+	n++
 	time, used := protowire.ConsumeVarint(b[n:])
 	if used < 0 {
 		return r, -1
@@ -203,12 +212,7 @@ func takeRow(b []byte, before engine.Row, unit int64) (r engine.Row, n int) {
 	if !r.HasUncertainty {
 		return r, n
 	}
-	if len(b) == n {
-		return r, -1
-	}
-	control = b[n]
-	n++
-	if r.Uncertainty, used = takeLow(b[n:], control, before.Uncertainty); used < 0 {
+	if r.Uncertainty, used = takeNumber(b[n:], before.Uncertainty); used < 0 {
 		return r, -1
 	}
 	return r, n + used
@@ -229,6 +233,17 @@ func takeOrigin(b []byte, r *engine.Row) int {
 	}
 	r.Occasion = binary.LittleEndian.Uint64(b[n:])
 	return n + 8
+}
+
+// takeNumber reads a control byte and the bytes that it announces.
+func takeNumber(b []byte, before float64) (v float64, n int) {
+	if len(b) == 0 {
+		return 0, -1
+	}
+	if v, n = takeLow(b[1:], b[0], before); n < 0 {
+		return 0, -1
+	}
+	return v, 1 + n
 }
 
 func takeLow(b []byte, control byte, before float64) (v float64, n int) {

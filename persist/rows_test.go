@@ -26,6 +26,9 @@ func drawRow(t *rapid.T) engine.Row {
 		r.Instrument = engine.InstrumentNumber(rapid.OneOf(rapid.Uint32(), rapid.Uint32Range(0, 2)).Draw(t, "instrument"))
 		r.Occasion = rapid.OneOf(rapid.Uint64(), rapid.Uint64Range(0, 2)).Draw(t, "occasion")
 	}
+	if rapid.Bool().Draw(t, "wide") {
+		r.Extent, r.Upper, r.Samples = drawExtent(t)
+	}
 	return r
 }
 
@@ -58,6 +61,7 @@ func FuzzDecodeRows(f *testing.F) {
 	f.Add(appendRows(nil, ledgertest.Rows(1, 5)))
 	f.Add(appendRows(nil, ledgertest.Rows(1<<40, 128)))
 	f.Add(appendRows(nil, ledgertest.OriginRows(1, 128)))
+	f.Add(appendRows(nil, ledgertest.ExtentRows(1, 128)))
 	f.Add(appendRows(nil, []engine.Row{{Time: math.MinInt64, Value: math.Inf(1)}, {Time: math.MaxInt64, Position: 1}}))
 	f.Fuzz(func(t *testing.T, body []byte) {
 		c, err := parseRowsBody(body)

@@ -279,6 +279,7 @@ func (v *verifier) record(r *engine.Record) {
 	if r.Kind == engine.KindReading {
 		s.readings.add(&engine.Row{
 			Time: r.Reading.Time, Value: r.Reading.Value, Position: r.Position,
+			Extent: r.Reading.Extent, Upper: r.Reading.Upper, Samples: r.Reading.Samples,
 			HasUncertainty: r.Reading.HasUncertainty, Uncertainty: r.Reading.RandomStandardUncertainty,
 			HasID: r.Reading.ID != "",
 		})

@@ -14,7 +14,7 @@ func Readings(number engine.QuantityNumber, rows []engine.Row) []engine.Record {
 		records[i] = engine.Record{
 			ReceiveTime: r.Time, Kind: engine.KindReading, Number: number, Revision: 1,
 			Reading: engine.Reading{
-				Value: r.Value, HasTime: true, Time: r.Time,
+				Value: r.Value, Upper: r.Upper, Extent: r.Extent, Samples: r.Samples, HasTime: true, Time: r.Time,
 				HasUncertainty: r.HasUncertainty, RandomStandardUncertainty: r.Uncertainty,
 			},
 		}

@@ -169,7 +169,9 @@ func testUnfit(t *testing.T, open Store) {
 		{Kind: engine.KindInstrument},
 		{Kind: engine.KindInstrument, Instrument: &engine.Instrument{ID: "dial_gauge_1"}},
 		{Kind: engine.KindRenewal, Number: 1},
-		{Kind: engine.KindRenewal + 1},
+		{Kind: engine.KindStep, Number: 1},
+		{Kind: engine.KindStep + 1},
+		{Kind: engine.KindReading, Number: 1, Reading: engine.Reading{Extent: engine.ExtentBetween + 1}},
 		{},
 	} {
 		l := open(t)

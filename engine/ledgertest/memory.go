@@ -223,11 +223,19 @@ func (s *store) append(g *engine.Group) error {
 	return nil
 }
 
-// fit tells whether a record is of a known kind and has what that is about.
+// fit tells whether a record is of a known kind, or a reading of a known extent, and
+// has what it is about.
 func fit(r *engine.Record) error {
-	known := engine.KindReading <= r.Kind && r.Kind <= engine.KindRenewal
-	instrument := r.Kind != engine.KindInstrument || r.Instrument != nil && r.Instrument.Number != 0
-	if !known || !instrument || r.Kind == engine.KindRenewal && r.Renewal == nil {
+	useful := engine.KindReading <= r.Kind && r.Kind <= engine.KindStep && r.Reading.Extent <= engine.ExtentBetween
+	switch r.Kind {
+	case engine.KindInstrument:
+		useful = r.Instrument != nil && r.Instrument.Number != 0
+	case engine.KindRenewal:
+		useful = r.Renewal != nil
+	case engine.KindStep:
+		useful = r.Step != nil
+	}
+	if !useful {
 		return fmt.Errorf("a record of kind %d is of no use", r.Kind)
 	}
 	return nil

@@ -192,7 +192,8 @@ func testReplay(t *testing.T, open Store) {
 		l.Close()
 		l = open(t)
 	}
-	written = append(written, appendAll(t, l, &engine.Group{Records: Records(703, 5)}, &engine.Group{Records: FurtherRecords(0, 300)})...)
+	written = append(written, appendAll(t, l, &engine.Group{Records: Records(703, 5)}, &engine.Group{Records: FurtherRecords(0, 300)},
+		&engine.Group{Records: WiderRecords(0, 300)})...)
 	want(t, "records", written, Replayed(t, l, 1))
 }
 
@@ -243,6 +244,13 @@ func quantity(n engine.QuantityNumber) *engine.Quantity {
 	}
 }
 
+// wide returns a quantity whose declaration uses every field of WiderRecords.
+func wide(n engine.QuantityNumber) *engine.Quantity {
+	q := quantity(n)
+	q.Declaration = *leaking(int(n))
+	return q
+}
+
 // renewed returns a quantity with a renewal, and with one that was withdrawn.
 func renewed(n engine.QuantityNumber) *engine.Quantity {
 	q := quantity(n)
@@ -260,7 +268,7 @@ func testCheckpoint(t *testing.T, open Store) {
 		}},
 		&engine.Group{Records: Readings(1, rows[9:18]), Checkpoint: []engine.CheckpointEntry{
 			{Number: 2, State: []byte("new"), Through: 9},
-			{Number: 3, Quantity: quantity(3), State: []byte{}, Through: 8},
+			{Number: 3, Quantity: wide(3), State: []byte{}, Through: 8},
 			rowsEntry(1, 1, 0, rows[:9]),
 		}, Sweep: &engine.Sweep{Segment: 1, Through: 9, Summary: []byte("nine")}},
 		&engine.Group{Records: Readings(1, rows[18:]), Checkpoint: []engine.CheckpointEntry{
@@ -270,7 +278,7 @@ func testCheckpoint(t *testing.T, open Store) {
 		Entries: []engine.CheckpointEntry{
 			{Number: 1, Quantity: renewed(1), State: []byte("one"), Through: 18},
 			{Number: 2, Quantity: quantity(2), State: []byte("new"), Through: 9},
-			{Number: 3, Quantity: quantity(3), State: []byte{}, Through: 8},
+			{Number: 3, Quantity: wide(3), State: []byte{}, Through: 8},
 		},
 		Sweep: engine.Sweep{Segment: 1, Through: 9, Summary: []byte("nine")},
 	}
@@ -299,7 +307,7 @@ func rowsEntry(n engine.QuantityNumber, segment, chunk uint32, rows []engine.Row
 
 func testRows(t *testing.T, open Store) {
 	l := open(t)
-	rows := OriginRows(1, 500)
+	rows := ExtentRows(1, 500)
 	appendAll(t, l,
 		&engine.Group{Records: Readings(1, rows[:200])},
 		&engine.Group{Records: Readings(3, rows[200:201])},
