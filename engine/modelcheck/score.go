@@ -17,15 +17,21 @@ const (
 	// farthest bounds a score: P(Z > 38) is 2.9e-316.
 	farthest = 38
 	// quartile and shoulder bound the central 50 and 95 % of a standard normal
-	// (algorithm AS 241; Wichura 1988).
+	// (Wichura 1988, algorithm AS 241).
 	quartile = 0.67448975019608174
 	shoulder = 1.9599639845400542
 	// OutlyingProbability is the two-sided tail probability below which a
 	// reading counts as outlying (common practice, no source), and outlying the score
 	// that has it.
 	OutlyingProbability = 1e-4
-	outlying            = 3.8905918864131214
+	outlying            = 3.8905918864130940
 )
+
+// ScoreAt returns the score of a value z standard deviations above the mean of a normal predictive.
+func ScoreAt(z float64) Score {
+	z = math.Max(-farthest, math.Min(farthest, z))
+	return Score{z, z}
+}
 
 // ScoreOf returns the score of a value y: below = P(Y < y) and above = P(Y > y) under its
 // predictive, which sum to 1. The smaller one counts, so that no digit of a tail is lost

@@ -4,6 +4,8 @@ import (
 	"math"
 	"testing"
 
+	"gonum.org/v1/gonum/mat"
+
 	"leadline.example/engine/modelcheck"
 )
 
@@ -97,5 +99,39 @@ func TestLoneReadingIsNoStep(t *testing.T) {
 	}
 	if tally.Report(&law).Outlying != 2 {
 		t.Errorf("%d outlying readings, want 2", tally.Report(&law).Outlying)
+	}
+}
+
+// chainRunLength is the run length of one side from a Markov chain whose states are cells of the
+// sum, each at its middle, the first one 0 alone (Brook & Evans 1972, Biometrika 59, 539-549, from
+// memory). Its error falls with the square of the number of states.
+func chainRunLength(t *testing.T, h float64, states int) float64 {
+	t.Helper()
+	cell := 2 * h / float64(2*states-1)
+	below := func(x float64) float64 { return math.Erfc(-x/math.Sqrt2) / 2 }
+	a, ones := mat.NewDense(states, states, nil), mat.NewVecDense(states, nil)
+	for i := range states {
+		for j := range states {
+			to := float64(j-i)*cell + 0.5
+			p := below(to+cell/2) - below(to-cell/2)
+			if j == 0 {
+				p = below(to + cell/2)
+			}
+			a.Set(i, j, -p)
+		}
+		a.Set(i, i, 1+a.At(i, i))
+		ones.SetVec(i, 1)
+	}
+	var l mat.VecDense
+	if err := l.SolveVec(a, ones); err != nil {
+		t.Fatal(err)
+	}
+	return l.AtVec(0)
+}
+
+func TestRunLengthsAgainstMarkovChain(t *testing.T) {
+	for _, h := range []float64{1.5, 3.5, 4, 8.1, 12.66} {
+		coarse, fine := chainRunLength(t, h, 125), chainRunLength(t, h, 250)
+		near(t, "two-sided run length", modelcheck.RunLength(h), (fine+(fine-coarse)/3)/2, 3e-5)
 	}
 }
