@@ -37,6 +37,9 @@ type Posterior struct {
 	scale    float64
 	dof      float64
 	shape    shape // of forms without a formula of their own
+
+	logarithmic bool // all of it is of X, and the distribution is that of exp(X)
+	momentless  bool // exp(X) has no moments, whatever the form says
 }
 
 // shape is a distribution that is neither normal nor Student.
@@ -45,6 +48,13 @@ type shape interface {
 	tail(x float64, s side) float64
 	between(lo, hi float64) float64
 	quantile(tail float64, s side) float64
+}
+
+// finer is a shape that takes points with more digits than a double has. width is
+// hi - lo, rounded once.
+type finer interface {
+	tailAt(x pair, s side) float64
+	betweenAt(lo, hi pair, width float64) float64
 }
 
 // Normal returns the normal distribution with the given mean and standard
@@ -65,24 +75,41 @@ func student(location Level, scale, dof float64) Posterior {
 func (p Posterior) Form() Form { return p.form }
 
 // Mean returns the mean, and whether it exists: Student t has none with one
-// degree of freedom or fewer.
+// degree of freedom or fewer. See Exp for logarithmic scales.
 func (p Posterior) Mean() (float64, bool) {
-	switch p.form {
-	case FormNormal:
-		return p.location.Value(), true
-	case FormStudent:
-		return p.location.Value(), p.dof > 1
-	case FormMixture, FormGrid:
-		has, _ := p.shape.moments()
-		return p.location.Value(), has
+	if p.logarithmic {
+		return p.exponentialMean()
 	}
-	return math.NaN(), false
+	mean, has := p.mean()
+	return mean.Value(), has
 }
 
 // StandardDeviation returns the standard deviation, and whether it exists:
 // scale sqrt(nu / (nu - 2)) for Student t with nu > 2 degrees of freedom, none
-// up to 2 (JCGM 101:2008, 6.4.9.4).
+// up to 2 (JCGM 101:2008, 6.4.9.4). See Exp for logarithmic scales.
 func (p Posterior) StandardDeviation() (float64, bool) {
+	if p.logarithmic {
+		return p.exponentialSD()
+	}
+	return p.sd()
+}
+
+// mean returns that of X, whatever the scale.
+func (p Posterior) mean() (Level, bool) {
+	switch p.form {
+	case FormNormal:
+		return p.location, true
+	case FormStudent:
+		return p.location, p.dof > 1
+	case FormMixture, FormGrid:
+		has, _ := p.shape.moments()
+		return p.location, has
+	}
+	return LevelOf(math.NaN()), false
+}
+
+// sd returns the standard deviation of X, whatever the scale.
+func (p Posterior) sd() (float64, bool) {
 	switch {
 	case p.form == FormNormal:
 		return p.scale, true
@@ -122,27 +149,23 @@ func (p Posterior) DegreesOfFreedom() float64 {
 }
 
 // LowerTail returns P(X < x), with full relative accuracy however small it is.
-func (p Posterior) LowerTail(x float64) float64 {
-	switch p.form {
-	case FormNormal:
-		return normalTail(p.standard(x).negative())
-	case FormStudent:
-		return studentTail(-p.standard(x).value(), p.dof)
-	case FormMixture, FormGrid:
-		return p.shape.tail(x, lower)
-	}
-	return math.NaN()
-}
+func (p Posterior) LowerTail(x float64) float64 { return p.tail(p.point(x), lower) }
 
 // UpperTail returns P(X > x), with full relative accuracy however small it is.
-func (p Posterior) UpperTail(x float64) float64 {
+func (p Posterior) UpperTail(x float64) float64 { return p.tail(p.point(x), upper) }
+
+// tail returns the tail of X beyond x, whatever the scale.
+func (p Posterior) tail(x pair, s side) float64 {
 	switch p.form {
 	case FormNormal:
-		return normalTail(p.standard(x))
+		return normalTail(p.standard(x).towards(s))
 	case FormStudent:
-		return studentTail(p.standard(x).value(), p.dof)
+		return studentTail(p.standard(x).towards(s).value(), p.dof)
 	case FormMixture, FormGrid:
-		return p.shape.tail(x, upper)
+		if f, ok := p.shape.(finer); ok {
+			return f.tailAt(x, s)
+		}
+		return p.shape.tail(x.value(), s)
 	}
 	return math.NaN()
 }
@@ -153,30 +176,40 @@ func (p Posterior) Between(lo, hi float64) float64 {
 	switch {
 	case p.form == FormNone || math.IsNaN(lo) || math.IsNaN(hi):
 		return math.NaN()
-	case hi <= lo:
+	case hi <= lo || p.logarithmic && hi <= 0:
 		return 0
-	case p.form == FormNormal:
-		return normalBetween(p.standard(lo), p.standard(hi), (hi-lo)/p.scale)
-	case p.form == FormStudent:
-		return studentBetween(p.standard(lo).value(), p.standard(hi).value(), (hi-lo)/p.scale, p.dof)
 	}
-	return p.shape.between(lo, hi)
+	return p.between(p.point(lo), p.point(hi), p.breadth(lo, hi))
 }
 
-// Quantile returns the x with P(X < x) = q, 0 < q < 1; -Inf at 0, +Inf at 1,
-// NaN outside.
+// between is Between for X, whatever the scale; width is hi - lo > 0.
+func (p Posterior) between(lo, hi pair, width float64) float64 {
+	switch p.form {
+	case FormNormal:
+		return normalBetween(p.standard(lo), p.standard(hi), width/p.scale)
+	case FormStudent:
+		return studentBetween(p.standard(lo).value(), p.standard(hi).value(), width/p.scale, p.dof)
+	}
+	if f, ok := p.shape.(finer); ok {
+		return f.betweenAt(lo, hi, width)
+	}
+	return p.shape.between(lo.value(), hi.value())
+}
+
+// Quantile returns the x with P(X < x) = q, 0 < q < 1; the end of the scale, -Inf
+// (0 if it is logarithmic) and +Inf, at 0 and 1; NaN outside.
 func (p Posterior) Quantile(q float64) float64 {
 	switch {
 	case p.form == FormNone || !(q >= 0 && q <= 1):
 		return math.NaN()
 	case q == 0:
-		return math.Inf(-1)
+		return p.value(LevelOf(math.Inf(-1)))
 	case q == 1:
 		return math.Inf(1)
 	case q <= 0.5:
-		return p.quantile(q, lower)
+		return p.value(p.quantile(q, lower))
 	}
-	return p.quantile(1-q, upper)
+	return p.value(p.quantile(1-q, upper))
 }
 
 // Interval returns the probabilistically symmetric coverage interval: equal
@@ -193,7 +226,7 @@ func (p Posterior) Interval(coverage float64) (lo, hi float64) {
 	case FormStudent:
 		return p.around(studentQuantile(tail, p.dof))
 	}
-	return p.quantile(tail, lower), p.quantile(tail, upper)
+	return p.value(p.quantile(tail, lower)), p.value(p.quantile(tail, upper))
 }
 
 // side names a tail.
@@ -204,40 +237,48 @@ const (
 	upper side = 1
 )
 
-// quantile returns the point that cuts off the tail probability, at most 1/2,
+// quantile returns the point of X that cuts off the tail probability, at most 1/2,
 // on the given side.
-func (p Posterior) quantile(tail float64, s side) float64 {
+func (p Posterior) quantile(tail float64, s side) Level {
 	switch p.form {
 	case FormNormal:
 		return p.at(float64(s) * -normalQuantile(tail))
 	case FormStudent:
 		return p.at(float64(s) * studentQuantile(tail, p.dof))
 	}
-	return p.shape.quantile(tail, s)
+	return LevelOf(p.shape.quantile(tail, s))
 }
 
 // around returns the two points z scales away from the location.
-func (p Posterior) around(z float64) (lo, hi float64) { return p.at(-z), p.at(z) }
+func (p Posterior) around(z float64) (lo, hi float64) { return p.value(p.at(-z)), p.value(p.at(z)) }
 
-// at returns the point z scales from the location.
-func (p Posterior) at(z float64) float64 {
+// at returns the point of X z scales from the location.
+func (p Posterior) at(z float64) Level {
 	if math.IsInf(z, 0) {
-		return z
+		return LevelOf(z)
 	}
-	return p.location.Plus(z * p.scale).Value()
+	return p.location.Plus(z * p.scale)
 }
 
 // standard returns (x - location) / scale with more digits than a double has: the
 // tail amplifies a relative error of z by z^2.
-func (p Posterior) standard(x float64) pair {
-	if math.IsInf(x, 0) {
-		return pair{hi: x}
+func (p Posterior) standard(x pair) pair {
+	if math.IsInf(x.hi, 0) {
+		return x
 	}
-	d := pair{hi: x}.minus(p.location.pair())
+	d := x.minus(p.location.pair())
 	if q := d.hi / p.scale; math.IsInf(q, 0) {
 		return pair{hi: q}
 	}
 	return d.over(p.scale)
+}
+
+// towards returns p, with its sign changed for the lower side.
+func (p pair) towards(s side) pair {
+	if s == lower {
+		return p.negative()
+	}
+	return p
 }
 
 // negative changes the sign.
