@@ -1,0 +1,151 @@
+package posterior
+
+import (
+	"math"
+	"slices"
+)
+
+// likelihood is what a reading says of a point of a lattice, x from its origin: the
+// density of a value, or the probability of an interval,
+//
+//	sum of w_k phi((y - x) / s_k) / s_k,  sum of w_k [Phi((upper - x) / s_k) - Phi((lower - x) / s_k)]
+//
+// over the one or two parts of the noise.
+type likelihood struct {
+	lower, upper float64 // from the origin
+	exact        bool
+	parts        []noisePart
+	room         [2]noisePart
+}
+
+// noisePart is a normal part of the noise, with the logarithm of its weight; for
+// values less ln(sd sqrt(2 pi)).
+type noisePart struct{ log, sd float64 }
+
+// likelihood returns that of a reading by an instrument of a bias, what is left of
+// which belongs to what the lattice holds.
+func (l *lattice) likelihood(y Indication, noise Spread, bias float64) likelihood {
+	k := likelihood{lower: l.from(y.Lower, bias), upper: l.from(y.Upper, bias), exact: y.Exact()}
+	k.parts = k.room[:0]
+	p := noise.OutlierProbability
+	k.part(math.Log1p(-p), noise.SD)
+	if p > 0 {
+		k.part(math.Log(p), noise.SD*noise.Inflation)
+	}
+	return k
+}
+
+// from returns y less a bias, from the origin.
+func (l *lattice) from(y, bias float64) float64 {
+	if math.IsInf(y, 0) {
+		return y
+	}
+	return twoDiff(y, bias).minus(l.origin.pair()).value()
+}
+
+func (k *likelihood) part(log, sd float64) {
+	if math.IsInf(log, -1) {
+		return
+	}
+	if k.exact {
+		log -= math.Log(sd) + math.Log(2*math.Pi)/2
+	}
+	k.parts = append(k.parts, noisePart{log, sd})
+}
+
+// lowest stands for what is less than any number, so that differences remain numbers.
+const lowest = -1e300
+
+// log returns the logarithm of the likelihood at x.
+func (k *likelihood) log(x float64) float64 {
+	a := k.one(0, x)
+	if len(k.parts) == 1 {
+		return a
+	}
+	b := k.one(1, x)
+	if a < b {
+		a, b = b, a
+	}
+	return a + math.Log1p(math.Exp(b-a))
+}
+
+// outlier returns the share of the second part in the likelihood at x.
+func (k *likelihood) outlier(x float64) float64 {
+	return 1 / (1 + math.Exp(k.one(0, x)-k.one(1, x)))
+}
+
+// one returns a part's share in logarithms.
+func (k *likelihood) one(i int, x float64) float64 {
+	p := &k.parts[i]
+	if k.exact {
+		return math.Max(lowest, p.log+logNormalDensity((k.lower-x)/p.sd))
+	}
+	a, b := (k.lower-x)/p.sd, (k.upper-x)/p.sd
+	if a < -9 && b > 9 {
+		return p.log // but for 1e-19
+	}
+	return math.Max(lowest, p.log+logNormalBetween(a, b, (k.upper-k.lower)/p.sd))
+}
+
+// multiply adds the log likelihood to those of l, in a slice of its own.
+func (k *likelihood) multiply(l *lattice) []float64 {
+	out := make([]float64, len(l.logs))
+	if k.exact && len(k.parts) == 1 {
+		p, y := k.parts[0], k.lower
+		per := 1 / p.sd
+		for i, v := range l.logs {
+			out[i] = math.Max(lowest, v+(p.log+logNormalDensity((y-l.x(i))*per)))
+		}
+		return out
+	}
+	for i, v := range l.logs {
+		out[i] = v + k.log(l.x(i))
+	}
+	return out
+}
+
+// ends returns the finite ends of the indication.
+func (k *likelihood) ends() []float64 {
+	switch {
+	case k.exact || math.IsInf(k.upper, 1):
+		return []float64{k.lower}
+	case math.IsInf(k.lower, -1):
+		return []float64{k.upper}
+	}
+	return []float64{k.lower, k.upper}
+}
+
+// marks appends the points about which the product with l may have its maxima: about
+// each end of the indication, by each part; and where the parabolas by which l goes on
+// meet those of the likelihood.
+func (k *likelihood) marks(l *lattice, out []float64) []float64 {
+	ends := k.ends()
+	for _, p := range k.parts {
+		for _, e := range ends {
+			for _, z := range [...]float64{-14, -9, -3, -1, 0, 1, 3, 9, 14} {
+				out = append(out, e+z*p.sd)
+			}
+		}
+	}
+	if len(ends) == 2 {
+		out = append(out, ends[0]/2+ends[1]/2)
+	}
+	if l.flat() {
+		return out
+	}
+	for _, s := range [2]side{lower, upper} {
+		e := l.end(s)
+		for _, p := range k.parts {
+			for _, y := range ends {
+				out = append(out, e.from+(e.slope*p.sd*p.sd+y-e.from)/(1-e.curvature*p.sd*p.sd))
+			}
+		}
+	}
+	return out
+}
+
+// beyond returns the marks outside of l.
+func (k *likelihood) beyond(l *lattice) []float64 {
+	lo, hi := l.x(0), l.x(len(l.logs)-1)
+	return slices.DeleteFunc(k.marks(l, make([]float64, 0, 48)), func(x float64) bool { return x >= lo && x <= hi })
+}
