@@ -58,8 +58,8 @@ func logUpper(z float64) float64 {
 	return -z*z/2 - math.Log(z*math.Sqrt(2*math.Pi)) + math.Log1p(-q+3*q*q-15*q*q*q)
 }
 
-// logInterval is ln P(a < Z < b) from tails on the side of the smaller ones.
-func logInterval(a, b float64) float64 {
+// logInside is ln P(a < Z < b) from tails on the side of the smaller ones.
+func logInside(a, b float64) float64 {
 	if a+b < 0 {
 		a, b = -b, -a
 	}
@@ -77,7 +77,7 @@ func (r *seen) says(x float64) float64 {
 			z := (r.y.Lower - x) / sd
 			return -z*z/2 - math.Log(sd*math.Sqrt(2*math.Pi))
 		}
-		return logInterval((r.y.Lower-x)/sd, (r.y.Upper-x)/sd)
+		return logInside((r.y.Lower-x)/sd, (r.y.Upper-x)/sd)
 	}
 	p := r.noise.OutlierProbability
 	if p == 0 {
