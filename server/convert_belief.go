@@ -78,6 +78,8 @@ func distributionMessage(p posterior.Posterior) *leadlinev1.Distribution {
 		}
 	case posterior.FormMixture:
 		return &leadlinev1.Distribution{Form: leadlinev1.Distribution_MIXTURE}
+	case posterior.FormGrid:
+		return &leadlinev1.Distribution{Form: leadlinev1.Distribution_GRID}
 	}
 	return &leadlinev1.Distribution{Form: leadlinev1.Distribution_NONE}
 }

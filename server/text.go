@@ -3,6 +3,7 @@ package server
 import (
 	"cmp"
 	"fmt"
+	"strconv"
 	"strings"
 	"text/tabwriter"
 	"unicode"
@@ -96,7 +97,7 @@ func (p *sheet) belief(b *engine.Belief) {
 // level writes the result with its standard uncertainty, the interval and
 // where the threshold asked for lies.
 func (p *sheet) level(b *engine.Belief) {
-	unit := b.Quantity.Declaration.Unit
+	unit, spread := b.Quantity.Declaration.Unit, spreadUnit(&b.Quantity.Declaration)
 	if b.Level.Form() == posterior.FormNone {
 		p.line("result", "nothing is known yet")
 		return
@@ -108,8 +109,12 @@ func (p *sheet) level(b *engine.Belief) {
 		lower, upper = roundTo(b.Lower, last), roundTo(b.Upper, last)
 	}
 	p.line("interval", "%s to %s (coverage probability %s)", lower, within(upper, unit), shortest(b.Coverage))
+	if mean, ok := b.Level.GeometricMean(); ok {
+		sd, _ := b.Level.GeometricStandardDeviation()
+		p.line("geometric", "mean %s, standard deviation a factor of %s", within(fourDigits(mean), unit), fourDigits(sd))
+	}
 	if b.HasSlope {
-		p.line("slope", "%s in %s", estimateText(b.SlopeMean, b.SlopeStandardDeviation, unit), elapsedOrShort(b.SlopePer))
+		p.line("slope", "%s in %s", estimateText(b.SlopeMean, b.SlopeStandardDeviation, spread), elapsedOrShort(b.SlopePer))
 	}
 	if b.HasThreshold {
 		p.line("threshold", "below %s with probability %s", within(shortest(b.Threshold), unit), probabilityText(b.ProbabilityBelow))
@@ -127,20 +132,32 @@ func levelPlace(l posterior.Posterior, lower, upper float64) (place, bool) {
 
 // resultText writes "0.8123 mm, u = 0.0071 mm", or says why there is no u.
 func resultText(l posterior.Posterior, lower, upper float64, unit string) string {
-	value := shortest(l.Location())
+	centre, name := centreOf(l)
+	value := shortest(centre)
 	last, ok := levelPlace(l, lower, upper)
 	if ok {
-		value = roundTo(l.Location(), last)
+		value = roundTo(centre, last)
 	}
 	if u, exists := l.StandardDeviation(); exists && ok {
 		return fmt.Sprintf("%s, u = %s", within(value, unit), within(roundTo(u, last), unit))
 	}
-	centre := "median"
-	if _, exists := l.Mean(); exists {
-		centre = "mean"
+	if l.Logarithmic() {
+		return fmt.Sprintf("%s (%s; there is no standard uncertainty)", within(value, unit), name)
 	}
-	return fmt.Sprintf("%s (%s; too few readings for a standard uncertainty)", within(value, unit), centre)
+	return fmt.Sprintf("%s (%s; too few readings for a standard uncertainty)", within(value, unit), name)
 }
+
+// centreOf returns what stands for a distribution, and its name: the mean, or the
+// median where there is none.
+func centreOf(l posterior.Posterior) (centre float64, name string) {
+	if mean, ok := l.Mean(); ok {
+		return mean, "mean"
+	}
+	return l.Quantile(0.5), "median"
+}
+
+// fourDigits writes a number with four significant digits.
+func fourDigits(x float64) string { return strconv.FormatFloat(x, 'g', 4, 64) }
 
 // judgement writes tolerance, breach probabilities and verdict.
 func (p *sheet) judgement(b *engine.Belief) {
@@ -209,7 +226,7 @@ func (p *sheet) prediction(b *engine.Belief) {
 }
 
 func (p *sheet) repeatability(b *engine.Belief) {
-	r, unit := b.Repeatability, b.Quantity.Declaration.Unit
+	r, unit := b.Repeatability, spreadUnit(&b.Quantity.Declaration)
 	switch {
 	case r.Known:
 		p.line("repeatability", "%s (declared)", within(shortest(r.StandardDeviation), unit))

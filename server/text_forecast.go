@@ -20,9 +20,9 @@ func forecastText(f *engine.Forecast) string {
 	if d.Description != "" {
 		p.line("what", "%s", d.Description)
 	}
-	p.line("dynamics", "%s (declared)", dynamicsText(d.Dynamics, d.Unit))
+	p.line("dynamics", "%s (declared)", dynamicsText(d.Dynamics, d.Unit, spreadUnit(d)))
 	if f.HasSlope {
-		p.line("slope", "%s in %s", estimateText(f.SlopeMean, f.SlopeStandardDeviation, d.Unit), elapsedOrShort(f.SlopePer))
+		p.line("slope", "%s in %s", estimateText(f.SlopeMean, f.SlopeStandardDeviation, spreadUnit(d)), elapsedOrShort(f.SlopePer))
 	}
 	p.line("tolerance", "%s", toleranceText(d.Tolerance, d.Unit))
 	p.line("horizon", "%s", elapsedOrShort(f.Horizon))

@@ -37,9 +37,12 @@ func instrumentText(v *engine.InstrumentView) string {
 
 func instrumentRepeatabilityText(r *engine.InstrumentRepeatability, unit string) string {
 	var parts []string
-	if r.StandardDeviation > 0 {
+	switch {
+	case r.StandardDeviation > 0:
 		parts = append(parts, within(shortest(r.StandardDeviation), unit))
-	} else {
+	case r.Learned.Learned():
+		parts = append(parts, repeatabilityText(r.Learned, unit))
+	default:
 		parts = append(parts, "that of the quantity")
 	}
 	if r.Relative > 0 {

@@ -17,8 +17,9 @@ func quantityText(q *engine.Quantity) string {
 	}
 	p.line("unit", "%s", d.Unit)
 	p.line("prior", "%s", priorText(&d.Prior, d.Unit))
-	p.line("repeatability", "%s", repeatabilityText(d.Repeatability, d.Unit))
-	p.line("dynamics", "%s", dynamicsText(d.Dynamics, d.Unit))
+	p.line("repeatability", "%s", repeatabilityText(d.Repeatability, spreadUnit(d)))
+	p.line("dynamics", "%s", dynamicsText(d.Dynamics, d.Unit, spreadUnit(d)))
+	p.model(d)
 	p.line("tolerance", "%s", toleranceText(d.Tolerance, d.Unit))
 	if d.Tolerance.Declared() {
 		r := d.DecisionRule()
@@ -56,29 +57,30 @@ func repeatabilityText(r engine.Repeatability, unit string) string {
 	case engine.RepeatabilityKnown:
 		return within(shortest(r.StandardDeviation), unit)
 	case engine.RepeatabilityLearned:
-		return fmt.Sprintf("learned, from a guess of %s worth %s degrees of freedom", within(shortest(r.Guess), unit), shortest(r.Worth))
+		return fmt.Sprintf("learned, from a guess of %s worth %s degrees of freedom%s", within(shortest(r.Guess), unit), shortest(r.Worth), floorText(r.Floor, unit))
 	case engine.RepeatabilityLearnedReference:
-		return "learned from the readings alone"
+		return "learned from the readings alone" + floorText(r.Floor, unit)
 	}
 	return "comes with each reading or its instrument"
 }
 
-func dynamicsText(d engine.Dynamics, unit string) string {
+// dynamicsText takes the unit of the value and that of movements.
+func dynamicsText(d engine.Dynamics, unit, spread string) string {
 	switch d.Form {
 	case engine.DynamicsRandomWalk:
-		return "random walk, " + movementText(d.StandardDeviation, d.Per, unit)
+		return "random walk, " + movementText(d.StandardDeviation, d.Per, spread)
 	case engine.DynamicsLinearTrend:
-		text := "linear trend, slope " + slopeText(&d.Slope, unit)
+		text := "linear trend, slope " + slopeText(&d.Slope, spread)
 		if d.Wander.Per != 0 {
-			text += ", which changes by " + movementText(d.Wander.StandardDeviation, d.Wander.Per, unit)
+			text += ", which changes by " + movementText(d.Wander.StandardDeviation, d.Wander.Per, spread)
 		}
 		if d.Per != 0 {
-			text += "; random walk, " + movementText(d.StandardDeviation, d.Per, unit)
+			text += "; random walk, " + movementText(d.StandardDeviation, d.Per, spread)
 		}
 		return text
 	case engine.DynamicsMeanReverting:
 		return fmt.Sprintf("reverting to %s, with standard deviation %s and half-life %s",
-			within(shortest(d.Mean), unit), within(shortest(d.StandardDeviation), unit), elapsedOrShort(d.HalfLife))
+			within(shortest(d.Mean), unit), within(shortest(d.StandardDeviation), spread), elapsedOrShort(d.HalfLife))
 	}
 	return "constant"
 }
@@ -124,7 +126,7 @@ func quantitiesText(quantities []engine.Quantity, nextPage string) string {
 		if q.Retired {
 			what = "(retired " + q.RetireTime.String() + ") " + what
 		}
-		w.row(string(q.ID), d.Unit, toleranceText(d.Tolerance, d.Unit), dynamicsText(d.Dynamics, d.Unit), what)
+		w.row(string(q.ID), d.Unit, toleranceText(d.Tolerance, d.Unit), dynamicsText(d.Dynamics, d.Unit, spreadUnit(d)), what)
 	}
 	_ = w.Flush() // into memory
 	p.more(nextPage)

@@ -849,9 +849,10 @@ type Distribution struct {
 	state protoimpl.MessageState `protogen:"open.v1"`
 	// Form of the distribution.
 	Form Distribution_Form `protobuf:"varint,1,opt,name=form,proto3,enum=leadline.v1.Distribution_Form" json:"form,omitempty"`
-	// Location, of STUDENT.
+	// Location, of STUDENT: under the scale LOG that of the logarithm.
 	Location *float64 `protobuf:"fixed64,2,opt,name=location,proto3,oneof" json:"location,omitempty"`
-	// Scale, of STUDENT; it is not the standard deviation.
+	// Scale, of STUDENT; it is not the standard deviation. Under the scale LOG it is that
+	// of the logarithm.
 	Scale *float64 `protobuf:"fixed64,3,opt,name=scale,proto3,oneof" json:"scale,omitempty"`
 	// Degrees of freedom, of STUDENT.
 	DegreesOfFreedom *float64 `protobuf:"fixed64,4,opt,name=degrees_of_freedom,json=degreesOfFreedom,proto3,oneof" json:"degrees_of_freedom,omitempty"`
@@ -1169,7 +1170,8 @@ type ModelCheck struct {
 	StepCount uint32 `protobuf:"varint,8,opt,name=step_count,json=stepCount,proto3" json:"step_count,omitempty"`
 	// The last of the steps; absent if there is none.
 	LastStep *ModelCheck_LastStep `protobuf:"bytes,9,opt,name=last_step,json=lastStep,proto3" json:"last_step,omitempty"`
-	// The tests of the last look, with what each would object to.
+	// The tests of the last look at a window, and at the prior, each with what it would
+	// object to.
 	Tests []*ModelCheck_Test `protobuf:"bytes,10,rep,name=tests,proto3" json:"tests,omitempty"`
 	// ID of the quantity. Absent within a belief, as is all that follows.
 	Quantity *string `protobuf:"bytes,11,opt,name=quantity,proto3,oneof" json:"quantity,omitempty"`
@@ -2827,16 +2829,17 @@ func (x *ModelCheck_Cusum) GetLimit() float64 {
 }
 
 // Explanation compares three explanations of the readings of the last window. The
-// greater a log-likelihood, the better it explains them; a difference below 2
-// decides nothing, as the latter two have something to fit. The service doesn't
-// choose.
+// greater a log-likelihood, the better it explains them; a difference of 2 or 3 is
+// remarkable. The latter two are fitted and contain the first, so neither is less
+// likely than it is. The service doesn't choose. Standard deviations are in the
+// quantity's unit, under the scale LOG of the logarithm.
 type ModelCheck_Explanation struct {
 	state protoimpl.MessageState `protogen:"open.v1"`
 	// The declaration as it is.
 	AsDeclared *ModelCheck_AsDeclared `protobuf:"bytes,1,opt,name=as_declared,json=asDeclared,proto3" json:"as_declared,omitempty"`
-	// The value moves as a random walk, besides what was declared.
+	// The value moves as a random walk, which is fitted in place of what was declared.
 	Moving *ModelCheck_Moving `protobuf:"bytes,2,opt,name=moving,proto3" json:"moving,omitempty"`
-	// The noise is correlated, besides what was declared.
+	// The readings have a correlated noise besides what was declared.
 	CorrelatedNoise *ModelCheck_CorrelatedNoise `protobuf:"bytes,3,opt,name=correlated_noise,json=correlatedNoise,proto3" json:"correlated_noise,omitempty"`
 	unknownFields   protoimpl.UnknownFields
 	sizeCache       protoimpl.SizeCache
@@ -2944,9 +2947,9 @@ type ModelCheck_Moving struct {
 	state protoimpl.MessageState `protogen:"open.v1"`
 	// Log-likelihood, at its greatest.
 	LogLikelihood float64 `protobuf:"fixed64,1,opt,name=log_likelihood,json=logLikelihood,proto3" json:"log_likelihood,omitempty"`
-	// Standard deviation of the movement within per, in the quantity's unit.
+	// Standard deviation of the movement within per.
 	StandardDeviation float64 `protobuf:"fixed64,2,opt,name=standard_deviation,json=standardDeviation,proto3" json:"standard_deviation,omitempty"`
-	// Time in which the movement has that standard deviation.
+	// Time in which the movement has that standard deviation: a day.
 	Per           *durationpb.Duration `protobuf:"bytes,3,opt,name=per,proto3" json:"per,omitempty"`
 	unknownFields protoimpl.UnknownFields
 	sizeCache     protoimpl.SizeCache
@@ -3008,9 +3011,11 @@ type ModelCheck_CorrelatedNoise struct {
 	state protoimpl.MessageState `protogen:"open.v1"`
 	// Log-likelihood, at its greatest.
 	LogLikelihood float64 `protobuf:"fixed64,1,opt,name=log_likelihood,json=logLikelihood,proto3" json:"log_likelihood,omitempty"`
-	// Standard deviation of the noise, in the quantity's unit.
+	// Standard deviation of the noise; 0, none is likelier.
 	StandardDeviation float64 `protobuf:"fixed64,2,opt,name=standard_deviation,json=standardDeviation,proto3" json:"standard_deviation,omitempty"`
-	// Time in which its autocorrelation falls to 1/e.
+	// Time in which its autocorrelation falls to 1/e. An end of what is looked at, a
+	// tenth of the shortest time between readings or ten times that of them all, says
+	// that the readings don't tell it.
 	CorrelationTime *durationpb.Duration `protobuf:"bytes,3,opt,name=correlation_time,json=correlationTime,proto3" json:"correlation_time,omitempty"`
 	unknownFields   protoimpl.UnknownFields
 	sizeCache       protoimpl.SizeCache
