@@ -136,6 +136,8 @@ type truth struct {
 	q    *question
 	l    lattice
 	mass [][]float64 // by r and eta: shares, not yet with Simpson's weights
+	eta  []float64
+	all  []float64 // by eta alone, with Simpson's weights
 	sum  float64
 }
 
@@ -143,6 +145,11 @@ type truth struct {
 func (t *truth) fill() (ofEta, ofR []float64) {
 	l := &t.l
 	logs := make([][]float64, len(l.r))
+	jacobian := make([]float64, l.n)
+	t.eta, t.all, t.sum = make([]float64, l.n), make([]float64, l.n), 0
+	for i := range l.n {
+		t.eta[i], jacobian[i] = l.eta(i), l.logJacobian(i)
+	}
 	ofEta, ofR = make([]float64, l.n), make([]float64, len(l.r))
 	sums := make([]logSum, l.n)
 	top := math.Inf(-1)
@@ -150,17 +157,18 @@ func (t *truth) fill() (ofEta, ofR []float64) {
 		var total logSum
 		logs[j] = make([]float64, l.n)
 		for i := range l.n {
-			logs[j][i] = t.q.log(l.eta(i), r) + l.logJacobian(i) + l.logR[j]
+			logs[j][i] = t.q.log(t.eta[i], r) + jacobian[i] + l.logR[j]
 			total.add(logs[j][i])
 			sums[i].add(logs[j][i])
 			top = math.Max(top, logs[j][i])
 		}
 		ofR[j] = total.value() - l.logR[j]
 	}
-	t.mass, t.sum = logs, 0
+	t.mass = logs
 	for j := range logs {
 		for i := range logs[j] {
 			logs[j][i] = math.Exp(logs[j][i] - top)
+			t.all[i] += t.simpson(i) * logs[j][i]
 			t.sum += t.simpson(i) * logs[j][i]
 		}
 	}
@@ -209,7 +217,7 @@ func (q *question) solve(points, panels int) *truth {
 	} else {
 		t.l.r, t.l.logR = []float64{q.noise.SD}, []float64{0}
 	}
-	const rounds = 4
+	const rounds = 6
 	for round := range rounds {
 		ofEta, ofR := t.fill()
 		n, count := 241, 4
@@ -307,13 +315,11 @@ func (t *truth) at(eta float64) (mean, sd float64) {
 func (t *truth) moments() (mean, sd float64) {
 	origin, _ := t.at(t.l.centre)
 	var first, second float64
-	for j := range t.mass {
-		for i, m := range t.mass[j] {
-			at, sd := t.at(t.l.eta(i))
-			d := at - origin
-			first += t.simpson(i) * m * d
-			second += t.simpson(i) * m * (d*d + sd*sd)
-		}
+	for i, m := range t.all {
+		at, sd := t.at(t.eta[i])
+		d := at - origin
+		first += m * d
+		second += m * (d*d + sd*sd)
 	}
 	first, second = first/t.sum, second/t.sum
 	return origin + first, math.Sqrt(second - first*first)
@@ -322,25 +328,21 @@ func (t *truth) moments() (mean, sd float64) {
 // tails returns P(level < x) and P(level > x) where x is the level at lattice
 // point k, an even number: without a bias by Simpson's rule on either side of it.
 func (t *truth) tails(k int) (x, below, above float64) {
-	x, spread := t.at(t.l.eta(k))
-	for j := range t.mass {
-		for i, m := range t.mass[j] {
-			if spread > 0 {
-				mean, sd := t.at(t.l.eta(i))
-				z := (x - mean) / sd / math.Sqrt2
-				below += t.simpson(i) * m * math.Erfc(-z) / 2
-				above += t.simpson(i) * m * math.Erfc(z) / 2
-				continue
-			}
-			switch {
-			case i < k:
-				below += t.simpson(i) * m
-			case i > k:
-				above += t.simpson(i) * m
-			default:
-				below += t.l.step / 3 * m
-				above += t.l.step / 3 * m
-			}
+	x, spread := t.at(t.eta[k])
+	for i, m := range t.all {
+		switch {
+		case spread > 0:
+			mean, sd := t.at(t.eta[i])
+			z := (x - mean) / sd / math.Sqrt2
+			below += m * math.Erfc(-z) / 2
+			above += m * math.Erfc(z) / 2
+		case i < k:
+			below += m
+		case i > k:
+			above += m
+		default: // Simpson's rule ends here on both sides
+			below += m / 2
+			above += m / 2
 		}
 	}
 	return x, below / t.sum, above / t.sum
@@ -355,7 +357,7 @@ func (t *truth) next(x, sd float64) (below, above float64) {
 			sigma = r
 		}
 		for i, m := range t.mass[j] {
-			z := (x - t.l.eta(i)) / sigma / math.Sqrt2
+			z := (x - t.eta[i]) / sigma / math.Sqrt2
 			below += t.simpson(i) * m * math.Erfc(-z) / 2
 			above += t.simpson(i) * m * math.Erfc(z) / 2
 		}

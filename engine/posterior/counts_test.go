@@ -10,7 +10,7 @@ import (
 	"leadline.example/engine/posterior"
 )
 
-var countsCases = flag.Int("counts", 12, "random cases for each combination in the tests of counts")
+var countsCases = flag.Int("counts", 12, "random cases for each combination in the tests of counts, a quarter if r is learned")
 
 // mix says which readings a random question has.
 type mix struct{ display, censored, exact, own bool }
@@ -73,7 +73,7 @@ func randomQuestion(random *rand.Rand, m mix, noise string, biased bool) *questi
 		y := eta + sigma*random.NormFloat64()
 		switch kind := random.IntN(3); {
 		case m.exact && (kind == 0 || !m.display && !m.censored):
-			s.y = posterior.Exactly(math.Round(y/r*16) / 16 * r)
+			s.y = posterior.Exactly(math.Round(y/r*4) / 4 * r)
 		case m.censored && (kind == 1 || !m.display):
 			s.y = posterior.Indication{Lower: limit, Upper: math.Inf(1)}
 			if y < limit {
@@ -105,8 +105,11 @@ func TestCountsAgainstIntegration(t *testing.T) {
 				"mixed": {display: true, censored: true, exact: true, own: true},
 			} {
 				t.Run(fmt.Sprintf("%s/%s/bias=%v", name, noise, biased), func(t *testing.T) {
-					random := source(t)
-					for i := range *countsCases {
+					random, cases := source(t), *countsCases
+					if noise != "known" {
+						cases = (cases + 3) / 4
+					}
+					for i := range cases {
 						q := randomQuestion(random, m, noise, biased)
 						checkQuestion(t, fmt.Sprintf("case %d", i), q)
 					}
@@ -116,12 +119,17 @@ func TestCountsAgainstIntegration(t *testing.T) {
 	}
 }
 
-// points returns how many points of eta and panels of ln r the oracle needs.
+// points returns how many points of eta and panels of ln r the oracle needs: a density
+// that a display cuts out has edges as wide as r.
 func points(q *question) (eta, panels int) {
-	if q.noise.Known || q.noise.Absent {
-		return 4001, 1
+	width, r := 0.0, q.noise.SD+q.noise.Guess+q.noise.Floor
+	for _, s := range q.readings {
+		if w := s.y.Upper - s.y.Lower; !math.IsInf(w, 0) {
+			width = math.Max(width, w)
+		}
 	}
-	return 2401, 10
+	n := 401 + 2*int(math.Min(1800, 40*width/r))
+	return n, 10
 }
 
 // checkQuestion holds a posterior against the oracle.
