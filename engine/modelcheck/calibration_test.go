@@ -30,13 +30,13 @@ const (
 // however irregular the readings are in time.
 func TestFalseObjectionsAreAsManyAsDeclared(t *testing.T) {
 	rng := source(t)
-	const perYear = 2.5 // so that no look reaches the highest level
+	const perYear = 2 // so that no look reaches the highest level
 	law := modelcheck.LawOf(modelcheck.Settings{ObjectionsPerYear: perYear})
 	var tally modelcheck.Tally
 	var at int64
 	counts := map[modelcheck.Result]float64{}
-	for range 120000 {
-		pace := float64(hour) * math.Exp2(float64(rng.IntN(4)-4))
+	for range 80000 {
+		pace := float64(hour) * math.Exp2(float64(rng.IntN(2)-2))
 		for range modelcheck.DefaultWindow {
 			at += int64(pace * rng.ExpFloat64())
 			tally.Add(&law, modelcheck.ScoreAt(rng.NormFloat64()), at)
@@ -96,7 +96,7 @@ func TestIntervalsStayBelowTheirLevel(t *testing.T) {
 	} {
 		law := eager(modelcheck.DefaultWindow)
 		var tally modelcheck.Tally
-		const windows = 6000
+		const windows = 3000
 		for i := range int64(windows * modelcheck.DefaultWindow) {
 			tally.Add(&law, test.score(rng.NormFloat64()), i*hour)
 		}
@@ -142,8 +142,8 @@ func TestRightBeliefsAreBelieved(t *testing.T) {
 		windows  int
 		quantity func() func() modelcheck.Score
 	}{
-		{"walk", 4000, func() func() modelcheck.Score { return walking(rng, 0.3, 0.3) }},
-		{"learned repeatability", 4000, func() func() modelcheck.Score { return learning(rng) }},
+		{"walk", 3000, func() func() modelcheck.Score { return walking(rng, 0.3, 0.3) }},
+		{"learned repeatability", 3000, func() func() modelcheck.Score { return learning(rng) }},
 	} {
 		want := float64(test.windows) * perLook
 		got := float64(simulate(test.windows, &law, test.quantity))

@@ -47,7 +47,7 @@ type Law struct {
 	lagHigh               float64
 }
 
-// LawOf derives the law; some 0.1 ms.
+// LawOf derives the law; some 0.3 ms.
 func LawOf(s Settings) Law {
 	if s.Window == 0 {
 		s.Window = DefaultWindow

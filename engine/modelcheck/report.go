@@ -93,6 +93,15 @@ type Report struct {
 	LastStep           LastStep
 }
 
+// Total returns how all scored readings fell.
+func (t *Tally) Total() Coverage { return coverage(t.scored, t.within50, t.within95, t.square) }
+
+// Steps returns how many steps were detected.
+func (t *Tally) Steps() int { return int(t.steps) }
+
+// Outlying returns how many readings had a tail below OutlyingProbability.
+func (t *Tally) Outlying() int { return int(t.outlying) }
+
 // Report tells what the tally says under the law it was kept by: some 20 us.
 func (t *Tally) Report(l *Law) Report {
 	r := Report{

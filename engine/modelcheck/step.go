@@ -1,7 +1,5 @@
 package modelcheck
 
-import "math"
-
 // Step is a shift of the readings against their predictions, or none.
 type Step uint8
 
@@ -40,16 +38,16 @@ type cusum struct {
 }
 
 func (c *cusum) add(z float64, at int64) {
-	c.sum += z - reference
-	if !(c.sum > 0) {
-		c.sum, c.since = 0, at
+	c.sum = max(0, c.sum+z-reference)
+	if c.sum == 0 {
+		c.since = at
 	}
 }
 
 // cumulate adds the score of a reading to both sums. When one exceeds the threshold,
 // both begin anew.
 func (t *Tally) cumulate(l *Law, z float64, at int64) Step {
-	z = math.Max(-clip, math.Min(clip, z))
+	z = max(-clip, min(clip, z))
 	t.up.add(z, at)
 	t.down.add(-z, at)
 	switch {

@@ -102,6 +102,13 @@ func TestLoneReadingIsNoStep(t *testing.T) {
 	}
 }
 
+// The table of testdata/reference is made by modelcheck.py there, with mpmath.
+func TestRunLengthsAgainstReference(t *testing.T) {
+	for _, row := range table(t, "reference/runlength.csv") {
+		near(t, "two-sided run length", modelcheck.RunLength(row[0]), row[1], 1e-7)
+	}
+}
+
 // chainRunLength is the run length of one side from a Markov chain whose states are cells of the
 // sum, each at its middle, the first one 0 alone (Brook & Evans 1972, Biometrika 59, 539-549, from
 // memory). Its error falls with the square of the number of states.

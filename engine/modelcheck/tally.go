@@ -87,6 +87,9 @@ func (t *Tally) Tail() (p float64, ok bool) {
 	return t.last.Tail(), true
 }
 
+// LastStep returns the latest detected step.
+func (t *Tally) LastStep() LastStep { return LastStep{t.stepAt, t.stepSince, t.direction} }
+
 // start sets the clock going at the first reading.
 func (t *Tally) start(at int64) {
 	if !t.started {

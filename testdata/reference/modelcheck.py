@@ -10,12 +10,14 @@ writes beside itself
 - truncated.csv: a, b, E Z and E Z^2 for a standard normal Z between a and b, by quadrature of
   its density;
 - squares.csv: n, x, P(X < x) and P(X > x) for chi-squared X, by the incomplete gamma functions;
-- scores.csv: z, P(Z < z) and P(Z > z), by erfc.
+- scores.csv: z, P(Z < z) and P(Z > z), by erfc;
+- runlength.csv: h and the mean run length of the two-sided CUSUM with k = 1/2, by Page's integral
+  equation in piecewise Gauss-Legendre quadrature with 30 digits; with more pieces the same.
 """
 import csv
 import os
 
-from mpmath import atan, cos, erfc, exp, gammainc, inf, log, mp, mpf, nstr, pi, quad, sin, sqrt
+from mpmath import atan, binomial, cos, erfc, exp, gammainc, legendre, log, lu_solve, matrix, mp, mpf, nstr, pi, polyroots, quad, sin, sqrt
 
 HERE = os.path.dirname(os.path.abspath(__file__))
 
@@ -71,6 +73,28 @@ def truncated(a, b):
     return quad(lambda x: x * f(x), cuts) / mass, quad(lambda x: x * x * f(x), cuts) / mass
 
 
+def gauss(n):
+    # Nodes and weights on [0, 1]: roots of the Legendre polynomial (DLMF 18.5.8).
+    terms = [(-1) ** (m // 2) * binomial(n, m // 2) * binomial(2 * n - m, n) if m % 2 == 0 else 0 for m in range(n + 1)]
+    x = polyroots(terms, maxsteps=200, extraprec=200)
+    slope = lambda t: n * (t * legendre(n, t) - legendre(n - 1, t)) / (t * t - 1)
+    return [((1 + t) / 2, 1 / ((1 - t * t) * slope(t) ** 2)) for t in x]
+
+
+def run_length(h, pieces, rule):
+    # L(z) = 1 + L(0) F(k - z) + int_0^h L(x) f(x + k - z) dx on one side; both have half.
+    k, width = mpf(1) / 2, mpf(h) / pieces
+    nodes = [((i + x) * width, w * width) for i in range(pieces) for x, w in rule]
+    z = [x for x, _ in nodes] + [mpf(0)]
+    a = matrix(len(z), len(z))
+    for i, y in enumerate(z):
+        for j, (x, w) in enumerate(nodes):
+            a[i, j] = -w * exp(-((x + k - y) ** 2) / 2) / sqrt(2 * pi)
+        a[i, len(z) - 1] = -erfc((y - k) / sqrt(2)) / 2
+        a[i, i] += 1
+    return lu_solve(a, matrix([1] * len(z)))[len(z) - 1] / 2
+
+
 if __name__ == "__main__":
     rows = []
     for n, rs in ((16, (0.05, 0.3, 0.5, 0.7, 0.9)), (64, (0.01, 0.1, 0.2, 0.3, 0.4, 0.5, 0.6, 0.7, 0.9)), (200, (0.03, 0.2, 0.4))):
@@ -99,3 +123,11 @@ if __name__ == "__main__":
     for z in (-37, -20.5, -8, -3.9, -1, -1e-3, 0.5, 1.96, 5, 9.25, 25, 36.5):
         rows.append((float(z), number(erfc(-mpf(z) / sqrt(2)) / 2), number(erfc(mpf(z) / sqrt(2)) / 2)))
     table("scores.csv", ("z", "below", "above"), rows)
+
+    rule, rows = gauss(12), []
+    for h in (1.5, 3.5, 4.0, 5.0, 8.1, 12.66, 19.5):
+        pieces = 3 + int(h / 2)
+        fine = run_length(h, pieces + 1, rule)
+        assert abs(run_length(h, pieces, rule) / fine - 1) < 1e-11
+        rows.append((h, number(fine)))
+    table("runlength.csv", ("h", "run_length"), rows)
