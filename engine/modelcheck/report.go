@@ -102,7 +102,8 @@ func (t *Tally) Steps() int { return int(t.steps) }
 // Outlying returns how many readings had a tail below OutlyingProbability.
 func (t *Tally) Outlying() int { return int(t.outlying) }
 
-// Report tells what the tally says under the law it was kept by: some 20 us.
+// Report tells what the tally says under the law it was kept by: some 30 us, most of it for
+// the probability of the serial correlation.
 func (t *Tally) Report(l *Law) Report {
 	r := Report{
 		Tests: t.tests(l), Raised: int(t.raised),
