@@ -4,6 +4,7 @@ import (
 	"cmp"
 	"fmt"
 	"math"
+	"slices"
 	"time"
 )
 
@@ -24,16 +25,16 @@ func (k *Keeper) admit(r *Reading, at resolved, receive Instant) (res Result, wr
 	case earlier == nil:
 		res.Status = Applied
 		k.window.add(seenID{
-			hash: at.hash, time: r.Time, value: r.Value,
+			hash: at.hash, time: r.Time, said: r.said(),
 			position: k.decidedTo + 1, receive: receive, untimed: !r.HasTime,
 		})
 		return res, true
-	case earlier.value == r.Value && (earlier.time == r.Time || earlier.untimed || !r.HasTime):
+	case earlier.said == r.said() && (earlier.time == r.Time || earlier.untimed || !r.HasTime):
 		res.Status, res.Time, res.Position = Duplicate, earlier.time, earlier.position
 		return res, false
 	}
 	res.Status, res.Reason = Refused, ReadingIDConflict
-	res.Detail = fmt.Sprintf("reading_id %q stands for the reading of %v at %v already; give a new reading another reading_id, and send a retry unchanged", r.ID, earlier.value, earlier.time)
+	res.Detail = fmt.Sprintf("reading_id %q stands for the reading of %v at %v already; give a new reading another reading_id, and send a retry unchanged", r.ID, earlier.said, earlier.time)
 	return res, true
 }
 
@@ -59,14 +60,62 @@ func (k *Keeper) objection(t *Track, i *instrumentTrack, r *Reading, receive Ins
 	if reason, detail := t.rules.objectionToNumbers(r, i); reason != "" {
 		return reason, detail
 	}
-	return k.objectionToTime(&t.rules, r, receive)
+	if reason, detail := k.objectionToTime(&t.rules, r, receive); reason != "" {
+		return reason, detail
+	}
+	return k.objectionToMethod(t, i, r)
+}
+
+// objectionToMethod returns why there is no method by which the belief could be held with a
+// reading that is the first of its kind, or "".
+func (k *Keeper) objectionToMethod(t *Track, i *instrumentTrack, r *Reading) (Reason, string) {
+	row := Row{Time: r.Time, Value: r.Value, Upper: r.Upper, Extent: r.Extent, Samples: r.Samples, HasUncertainty: r.HasUncertainty}
+	isNew := t.decidedTally.asks(&row)
+	if i != nil {
+		row.Instrument = i.number
+		n := slices.IndexFunc(t.decidedUsed, func(u use) bool { return u.number == i.number })
+		isNew = isNew || n < 0 || i.decided.Declaration.asks(&t.decidedUsed[n], &row)
+	}
+	if !isNew {
+		return "", ""
+	}
+	counted := t.decidedTally
+	counted.add(&row)
+	uses := t.decidedUsed
+	if i != nil {
+		uses, _ = addUse(slices.Clone(uses), &row)
+	}
+	d := &t.decided.Declaration
+	if sentence := k.objectionToReadings(d, len(t.decided.InForce()), &counted, uses); sentence != "" {
+		return NotSupported, "the reading can't be taken in: " + sentence
+	}
+	return "", ""
+}
+
+// objectionToReadings returns why a belief under d can't be held after readings, or "".
+func (k *Keeper) objectionToReadings(d *Declaration, renewals int, a *tally, uses []use) string {
+	decided := func(n InstrumentNumber) *InstrumentDeclaration { return &k.instruments[n-1].decided.Declaration }
+	return objectionToAll(d, renewals, a, uses, decided)
+}
+
+func objectionToAll(d *Declaration, renewals int, a *tally, uses []use, of func(InstrumentNumber) *InstrumentDeclaration) string {
+	for _, u := range uses {
+		if _, sentence := improper(d, of(u.number)); sentence != "" {
+			return sentence
+		}
+	}
+	all := a.readAs(uses, of)
+	asked := traitsOf(d, renewals, &all)
+	_, sentence := asked.objection()
+	return sentence
 }
 
 func (a *rules) objectionToNumbers(r *Reading, i *instrumentTrack) (Reason, string) {
 	u := a.noiseOf(i)
+	if field, detail := a.objectionToSaid(r); field != "" {
+		return ValueOutOfRange, detail
+	}
 	switch {
-	case !inRange(r.Value):
-		return ValueOutOfRange, fmt.Sprintf("value is %v; give 0 or a number of magnitude 1e-100 to 1e100", r.Value)
 	case r.HasUncertainty:
 		if u = r.RandomStandardUncertainty; !(u >= MinMagnitude && u <= MaxMagnitude) {
 			return RandomUncertaintyInvalid, fmt.Sprintf("random_standard_uncertainty is %v; give a number above 0, from 1e-100 to 1e100", u)
@@ -74,11 +123,35 @@ func (a *rules) objectionToNumbers(r *Reading, i *instrumentTrack) (Reason, stri
 	case math.IsNaN(u):
 		return NoRepeatability, "random_standard_uncertainty is missing and neither quantity nor instrument declares a repeatability; give one of them and send the reading again"
 	}
+	if a.log {
+		return "", "" // logarithms are of a magnitude that no ratio overflows
+	}
 	if math.Abs(r.Value)/u > maxRatio {
 		return ValueOutOfRange, fmt.Sprintf("value %v is more than 1e150 times its random standard uncertainty %v; check both", r.Value, u)
 	}
 	if p := &a.prior; !p.Vague && math.Abs(r.Value-p.Mean)/p.SD > maxRatio {
 		return ValueOutOfRange, fmt.Sprintf("value %v is more than 1e150 prior standard deviations %v away from the prior mean %v; check it", r.Value, p.SD, p.Mean)
+	}
+	return "", ""
+}
+
+// objectionToSaid returns what is wrong with the numbers that a reading says: the field and a
+// sentence, or "".
+func (a *rules) objectionToSaid(r *Reading) (field, detail string) {
+	field = [...]string{"value", "above", "below", "between.lower"}[r.Extent]
+	switch {
+	case !inRange(r.Value):
+		return field, fmt.Sprintf("%s is %v; give 0 or a number of magnitude 1e-100 to 1e100", field, r.Value)
+	case r.Extent == ExtentBetween && !inRange(r.Upper):
+		return "between.upper", fmt.Sprintf("between.upper is %v; give 0 or a number of magnitude 1e-100 to 1e100", r.Upper)
+	case r.Extent == ExtentBetween && r.Value >= r.Upper:
+		return "between.upper", fmt.Sprintf("between.upper is %v, not above between.lower %v; give lower < upper, or value for a reading that is exact", r.Upper, r.Value)
+	case !a.log:
+		return "", ""
+	case r.Extent == ExtentBetween && r.Upper <= 0:
+		return "between.upper", fmt.Sprintf("between.upper is %v but the quantity's scale is LOG, on which every value is positive; give a number above 0", r.Upper)
+	case r.Extent != ExtentBetween && r.Value <= 0:
+		return field, fmt.Sprintf("%[1]s is %[2]v but the quantity's scale is LOG, on which every value is positive; give a number above 0, or below with the limit of detection", field, r.Value)
 	}
 	return "", ""
 }
@@ -131,7 +204,7 @@ func (k *Keeper) exact(r *Reading, at resolved) *seenID {
 func (t *Track) inMemory(r *Reading) *seenID {
 	for i := range t.rows {
 		if e := &t.rows[i]; e.Time == r.Time && e.HasID && e.ID == r.ID {
-			return &seenID{time: e.Time, value: e.Value, position: e.Position}
+			return &seenID{time: e.Time, said: e.said(), position: e.Position}
 		}
 	}
 	return nil

@@ -12,6 +12,7 @@ import (
 // while serving and while replaying alike.
 func (k *Keeper) apply(r *Record) {
 	k.count(r)
+	k.received = r.ReceiveTime
 	switch r.Kind {
 	case KindRefusal:
 	case KindInstrument:
@@ -40,9 +41,7 @@ func (k *Keeper) applyToTrack(r *Record) {
 	var e entry
 	if r.Kind == KindReading {
 		e = entry{Row: k.rowOf(r), ID: r.Reading.ID}
-		if e.Instrument != 0 {
-			k.useInstrument(t, &e.Row) // may begin a rebuild, which is of the readings before this one
-		}
+		k.readAs(t, &e.Row) // may begin a rebuild, which is of the readings before this one
 	}
 	t.position = r.Position
 	switch r.Kind {
@@ -59,8 +58,9 @@ func (k *Keeper) applyToTrack(r *Record) {
 		t.quantity = &q
 		k.rebase(t)
 	case KindReading:
-		t.tally.add(&e.Row)
 		t.add(&e)
+	case KindStep:
+		t.step(r)
 	}
 }
 
@@ -155,7 +155,7 @@ func (k *Keeper) settle(t *Track) {
 	steps, ok := t.settle(k.budget)
 	k.budget = max(0, k.budget-steps)
 	switch {
-	case !ok:
+	case !ok || t.outgrown && t.job == nil:
 		k.startJob(t, t.basis)
 	case t.job == nil:
 		t.foldedTo = t.position
@@ -249,7 +249,7 @@ func (k *Keeper) finishJob(j *job) {
 	since := slices.Clone(t.rows[len(j.recent):])
 	t.job = nil
 	t.rest(k.modelOf(t)) // which gives the same belief, but may have another tolerance or text
-	t.fold, t.foldedTo = j.fold, j.position
+	t.fold, t.foldedTo, t.outgrown = j.fold, j.position, false
 	t.rows, t.marks, t.markFrom = j.rows, j.marks, 0
 	t.last, t.behind, t.saved = j.last, j.behind, 0 // and the checkpoint, if any, has no fold
 	t.trim(k.sweep.trimmed)

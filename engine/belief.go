@@ -8,6 +8,7 @@ import (
 	"time"
 
 	"leadline.example/engine/decide"
+	"leadline.example/engine/modelcheck"
 	"leadline.example/engine/posterior"
 )
 
@@ -58,6 +59,11 @@ type Belief struct {
 	OutsideBelow, OutsideAbove, OutsideEither float64 // under a tolerance
 
 	Repeatability posterior.Repeatability
+
+	Method     Method
+	Check      modelcheck.Report // of the readings up to Time
+	HasOutlier bool              // outliers are declared, and there is a reading
+	Outlier    float64           // probability that the last reading was one, given it and those before
 
 	HasRenewal                        bool // the part has been renewed since the prior
 	RenewalTime                       Instant
@@ -169,9 +175,9 @@ func (k *Keeper) belief(v *View, q *BeliefQuery) (Belief, error) {
 	b.evaluateLevel(m.level(v.basis, at), d, q)
 	b.evaluatePredictive(m.predictive(v.basis, at, by), d)
 	b.Repeatability = m.repeatability(v.basis, b.Coverage)
-	if j := m.jointAt(v.basis, at); v.basis.form == jointForm && j != nil {
-		b.evaluateJoint(v.basis, j)
-	}
+	b.Method, b.Check = v.basis.method(), m.check.Report(&v.basis.check)
+	b.HasOutlier, b.Outlier = d.Outliers != (Outliers{}) && m.count > 0, m.outlier
+	b.evaluateShared(v.basis, m, at)
 	if r := b.Repeatability; d.Repeatability.Learned() && !r.HasMedian {
 		b.lacks("repeatability")
 	}
@@ -182,10 +188,7 @@ func (k *Keeper) belief(v *View, q *BeliefQuery) (Belief, error) {
 // foretold: the one asked for, else the last one used, else nil.
 func (k *Keeper) predictiveInstrument(m *model, f *fold, q *BeliefQuery) (*Instrument, error) {
 	if q.Instrument == "" {
-		if f.joint == nil {
-			return nil, nil
-		}
-		return m.instrument(f.joint.last), nil
+		return m.instrument(f.last), nil
 	}
 	t := k.directory.Load().instrument(q.Instrument)
 	if t == nil || t.shown.Load() == nil {
@@ -194,8 +197,6 @@ func (k *Keeper) predictiveInstrument(m *model, f *fold, q *BeliefQuery) (*Instr
 	i := t.shown.Load().instrument
 	if d := m.declaration(); i.Declaration.Unit != d.Unit {
 		return nil, refuse(InvalidField, "instrument", "instrument %q is in %q but the quantity is in %q; ask for an instrument in the quantity's unit", i.ID, i.Declaration.Unit, d.Unit)
-	} else if d.Repeatability.Learned() {
-		return nil, refuse(NotSupported, "instrument", "instrument is not supported together with repeatability.learned; leave instrument out")
 	}
 	if basis := m.instrument(i.Number); basis != nil {
 		return basis, nil
@@ -203,17 +204,27 @@ func (k *Keeper) predictiveInstrument(m *model, f *fold, q *BeliefQuery) (*Instr
 	return i, nil
 }
 
-// evaluateJoint gives what only a joint belief has.
-func (b *Belief) evaluateJoint(m *model, j *joint) {
-	b.Flagged, b.Linearised = j.flagged, j.linearised
-	if b.HasRenewal = j.renewed > 0; b.HasRenewal {
-		b.RenewalTime = m.renewals[j.renewed-1].Time
+// evaluateShared gives what is believed beside the level.
+func (b *Belief) evaluateShared(m *model, f *fold, at Instant) {
+	b.Flagged, b.Linearised = f.flagged, f.linearised
+	renewed := sort.Search(len(m.renewals), func(i int) bool { return m.renewals[i].Time > at })
+	if b.HasRenewal = renewed > 0; b.HasRenewal {
+		b.RenewalTime = m.renewals[renewed-1].Time
 	}
 	for _, i := range m.instruments {
-		b.ResolutionAsVariance = b.ResolutionAsVariance || i.Declaration.Resolution > 0
+		b.ResolutionAsVariance = b.ResolutionAsVariance || i.Declaration.Resolution > 0 && (m.form == jointForm || m.form == bankForm)
 	}
-	b.Biases, b.References = j.biases(m), j.commons()
-	b.HasSlope, b.SlopeMean, b.SlopeStandardDeviation, b.SlopePer = j.slope(m)
+	switch m.form {
+	case jointForm:
+		if j := f.jointAt(m, at); j != nil {
+			b.Biases, b.References = j.biases(m), j.commons()
+			b.HasSlope, b.SlopeMean, b.SlopeStandardDeviation, b.SlopePer = j.slope(m)
+		}
+	case bankForm, gridForm:
+		s := f.bank.shared(m, at)
+		b.Biases, b.References = s.biases, s.references
+		b.HasSlope, b.SlopeMean, b.SlopeStandardDeviation, b.SlopePer = s.hasSlope, s.slope, s.slopeSD, s.slopePer
+	}
 }
 
 func (b *Belief) lacks(fields ...string) { b.Undetermined = append(b.Undetermined, fields...) }

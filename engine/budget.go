@@ -70,7 +70,7 @@ type Budget struct {
 const smallHistory = 2_000
 
 // Budget splits the variance of the level. It folds the quantity's readings
-// anew, in the caller's goroutine. A quantity with a learned repeatability has
+// anew, in the caller's goroutine. A quantity whose belief isn't jointly normal has
 // none.
 func (k *Keeper) Budget(ctx context.Context, id QuantityID, q BudgetQuery) (Budget, error) {
 	check := BeliefQuery{HasTime: q.HasTime, Time: q.Time}
@@ -83,8 +83,8 @@ func (k *Keeper) Budget(ctx context.Context, id QuantityID, q BudgetQuery) (Budg
 	}
 	v := t.View()
 	m := v.basis.joint()
-	if m.declaration().Repeatability.Learned() {
-		return Budget{}, refuse(NotSupported, "quantity", "quantity %q learns its repeatability, for which a budget is not supported; declare repeatability.standard_deviation", id)
+	if held := v.basis.form; held >= bankForm || held == sumForm && m.declaration().Repeatability.Learned() {
+		return Budget{}, refuse(NotSupported, "quantity", "quantity %q learns a repeatability, or has outliers, censored readings or a display coarser than its repeatability, for which a budget is not supported; declare what its belief can be jointly normal with", id)
 	}
 	at := q.Time
 	if !q.HasTime {
@@ -120,11 +120,11 @@ func (k *Keeper) Budget(ctx context.Context, id QuantityID, q BudgetQuery) (Budg
 // accounted folds the readings up to an instant, with account of where the
 // uncertainty comes from; nil before a stated prior time.
 func (k *Keeper) accounted(ctx context.Context, v *View, m *model, at Instant) (*joint, error) {
-	all, err := v.entries(k.Ledger(), true)
+	all, err := v.entries(k.Ledger())
 	if err != nil {
 		return nil, err
 	}
-	first := at
+	l, first := lawOf(m), at
 	if len(all) > 0 {
 		first = min(first, all[0].Time)
 	}
@@ -140,7 +140,7 @@ func (k *Keeper) accounted(ctx context.Context, v *View, m *model, at Instant) (
 		if i%64 == 0 && ctx.Err() != nil {
 			return nil, ctx.Err()
 		}
-		j.add(m, &all[i].Row)
+		j.add(m, &all[i].Row, l.value(&all[i].Row))
 	}
 	j.move(m, at)
 	return j, nil

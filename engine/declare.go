@@ -102,8 +102,14 @@ func (k *Keeper) checkRedeclaration(t *Track, d *Declaration) error {
 	if bare := t.decidedBare(k); d.Repeatability.Form == RepeatabilityAbsent && bare > 0 {
 		return refuse(InvalidField, "repeatability", "repeatability is missing but %d readings without a random_standard_uncertainty or an instrument's repeatability have been applied; declare one", bare)
 	}
-	if n := len(t.decidedUsed); n > 0 && d.Repeatability.Learned() {
-		return refuse(NotSupported, "repeatability.learned", "repeatability.learned is not supported together with instruments, of which %d have read the quantity; give repeatability.standard_deviation", n)
+	if least := t.decidedTally.least; d.Scale == ScaleLog && least <= 0 {
+		return refuse(InvalidField, "scale", "scale is LOG, on which every value is positive, but a reading of %v has been applied; keep scale LINEAR", least)
+	}
+	if sentence := k.objectionToReadings(d, len(t.decided.InForce()), &t.decidedTally, t.decidedUsed); sentence != "" {
+		return refuse(NotSupported, "quantity", "with the %d readings applied so far %s", t.decidedTally.count, sentence)
+	}
+	if d.Scale == ScaleLog {
+		return nil
 	}
 	if largest := t.decidedTally.largest; largest/d.Repeatability.scale() > maxRatio {
 		return refuse(InvalidField, "repeatability", "repeatability is less than 1e-150 times the reading %v, which has been applied; give a larger one", largest)
@@ -119,7 +125,7 @@ func (k *Keeper) checkRedeclaration(t *Track, d *Declaration) error {
 func (t *Track) decidedBare(k *Keeper) int {
 	bare := t.decidedTally.bare
 	for _, u := range t.decidedUsed {
-		if k.instruments[u.number-1].decided.Declaration.Repeatability.StandardDeviation == 0 {
+		if r := &k.instruments[u.number-1].decided.Declaration.Repeatability; r.StandardDeviation == 0 && !r.Learned.Learned() {
 			bare += u.bare
 		}
 	}

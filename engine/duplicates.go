@@ -58,7 +58,7 @@ type idHash [2]uint64
 type seenID struct {
 	hash     idHash
 	time     Instant
-	value    float64
+	said     said
 	position Position
 	receive  Instant
 	untimed  bool // its time was given by the service

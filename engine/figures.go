@@ -2,6 +2,7 @@ package engine
 
 import (
 	"slices"
+	"sort"
 
 	"leadline.example/engine/decide"
 	"leadline.example/engine/posterior"
@@ -21,9 +22,28 @@ type Figures struct {
 	Breach                        Breach
 	Verdict                       decide.Verdict // 0 without a tolerance
 	HasHorizon                    bool           // a breach horizon is declared, and the forecaster has looked
-	HorizonProbability            float64        // that a limit is crossed within it
-	HasMedian                     bool           // the time to breach has its median within it
+	Check                         CheckFigures
+	HorizonProbability            float64 // that a limit is crossed within it
+	HasMedian                     bool    // the time to breach has its median within it
 	MedianSeconds                 float64
+}
+
+// CheckFigures is what a scrape publishes of how readings agreed with the model.
+type CheckFigures struct {
+	Result                 string // the word of modelcheck.Result
+	HasCoverage            bool   // some readings had been foretold
+	Coverage50, Coverage95 float64
+	MeanSquare             float64 // of the normal scores
+	Steps, Outlying        int
+}
+
+func (f *fold) checkFigures(m *model) CheckFigures {
+	total := f.check.Total()
+	return CheckFigures{
+		Result: f.check.Result(&m.check).String(), HasCoverage: total.Readings > 0,
+		Coverage50: total.Within50, Coverage95: total.Within95, MeanSquare: total.MeanSquare,
+		Steps: f.check.Steps(), Outlying: f.check.Outlying(),
+	}
 }
 
 // Figures evaluates a view at an instant, from the readings up to then. It
@@ -48,6 +68,7 @@ func (k *Keeper) figures(v *View, at Instant) (Figures, error) {
 	}
 	f := figuresOf(m.level(v.basis, at), &v.Declared().Declaration)
 	f.ReadingCount, f.HasLast, f.LastTime = m.count, m.count > 0, m.lastTime
+	f.Check = m.checkFigures(v.basis)
 	if v.basis.still() && m.count == v.ReadingCount {
 		still := f
 		v.still.Store(&still)
@@ -83,50 +104,49 @@ func (k *Keeper) moment(v *View, at Instant) (*fold, error) {
 	}
 	l := lawOf(v.basis)
 	if base := &v.marks[0]; !v.Rebuilding && (base.count == 0 || base.lastTime <= at) {
-		return v.recentMoment(&l, at), nil
+		if f := v.recentMoment(&l, at); f != nil {
+			return f, nil
+		}
 	}
-	all, err := v.entries(k.Ledger(), l.ordered)
+	all, err := v.entries(k.Ledger())
 	if err != nil {
 		return nil, err
 	}
-	var f fold
-	for i := range all {
-		if all[i].Time > at {
-			break
-		}
-		f.add(&l, &all[i].Row)
-	}
-	return &f, nil
+	n := sort.Search(len(all), func(i int) bool { return all[i].Time > at })
+	return foldAll(&l, all[:n]), nil
 }
 
-// recentMoment folds on from the last mark that is not later than at.
+// recentMoment folds on from the last mark that is not later than at; nil if that takes
+// all readings.
 func (v *View) recentMoment(l *law, at Instant) *fold {
 	mark := 0
-	for l.ordered && mark+1 < len(v.marks) && v.marks[mark+1].lastTime <= at {
+	for mark+1 < len(v.marks) && v.marks[mark+1].lastTime <= at {
 		mark++
 	}
 	f := v.marks[mark].copied()
 	for i := v.markFrom + mark*markSpacing; i < len(v.rows); i++ {
-		if e := &v.rows[i]; e.Time <= at {
-			f.add(l, &e.Row)
-		} else if l.ordered {
+		e := &v.rows[i]
+		if e.Time > at {
 			break
+		}
+		if f.add(l, &e.Row); f.outgrown(l.model) {
+			return nil
 		}
 	}
 	return &f
 }
 
-// entries returns all readings in the belief: while it is rebuilt, those of the
-// position that it shows.
-func (v *View) entries(from Ledger, ordered bool) ([]entry, error) {
+// entries returns all readings in the belief in canonical order: while it is rebuilt,
+// those of the position that it shows.
+func (v *View) entries(from Ledger) ([]entry, error) {
 	through, count, recent := v.Position, v.applied, v.rows
 	if v.Rebuilding {
 		through, count = v.foldedTo, v.fold.count
 		recent = slices.DeleteFunc(slices.Clone(recent), func(e entry) bool { return e.Position > through })
 	}
 	all, err := loadEntries(from, v.Quantity.Number, through, count, recent)
-	if err != nil || !ordered {
-		return all, err
+	if err != nil {
+		return nil, err
 	}
 	return all, orderTies(from, all)
 }

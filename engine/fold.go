@@ -2,7 +2,9 @@ package engine
 
 import (
 	"cmp"
+	"math"
 
+	"leadline.example/engine/modelcheck"
 	"leadline.example/engine/posterior"
 )
 
@@ -35,14 +37,26 @@ func compareEntries(a, b *entry) int {
 func (e entry) compare(f entry) int { return compareEntries(&e, &f) }
 
 // fold is the belief after a set of readings, as the numbers from which the
-// posterior follows. The zero value is the belief before any reading. Copies are
-// made by copied, so that they share nothing that changes.
+// posterior follows, and what the readings said of the model. The zero value is the
+// belief before any reading. Copies are made by copied, so that they share nothing
+// that changes.
 type fold struct {
-	count    int
-	lastTime Instant // of the latest reading in count
+	count      int
+	since      int     // of those, readings since the prior or the last renewal
+	renewed    int     // renewals before the latest reading
+	first      Instant // of the earliest reading in count
+	lastTime   Instant // of the latest
+	last       InstrumentNumber
+	flagged    [len(CalibrationStates)]int
+	linearised bool
+	check      modelcheck.Tally
+	outlier    float64 // probability that the latest reading was one
+
 	constant posterior.Constant
 	walk     posterior.Walk // at lastTime
 	joint    *joint         // at lastTime; nil before any reading, and in other forms
+	counts   *tallied
+	bank     *bank
 }
 
 func (f *fold) copied() fold {
@@ -50,26 +64,29 @@ func (f *fold) copied() fold {
 	if f.joint != nil {
 		c.joint = f.joint.clone()
 	}
+	c.counts, c.bank = f.counts.clone(), f.bank.clone()
 	return c
 }
 
 // law is what folding a reading needs of a model, in one place beside the fold.
 type law struct {
-	model   *model
-	form    form
-	ordered bool
-	known   bool    // r is
-	r       float64 // where it is known
-	step    float64 // standard deviation that a walk gains in per
-	per     float64 // nanoseconds
+	model *model
+	form  form
+	known bool    // r is
+	r     float64 // where it is known
+	step  float64 // standard deviation that a walk gains in per
+	per   float64 // nanoseconds
+	log   bool
+	widen float64 // variance that a step adds to the level
 }
 
 func lawOf(m *model) law {
 	d := m.declaration()
 	return law{
-		model: m, form: m.form, ordered: m.ordered(),
+		model: m, form: m.form,
 		known: d.Repeatability.Form == RepeatabilityKnown, r: d.Repeatability.StandardDeviation,
 		step: d.Dynamics.StandardDeviation, per: float64(d.Dynamics.Per),
+		log: d.Scale == ScaleLog, widen: d.StepDetection.Widen * d.StepDetection.Widen,
 	}
 }
 
@@ -80,35 +97,167 @@ func (l *law) variance(nanoseconds float64) float64 {
 	return l.step * l.step * (nanoseconds / l.per)
 }
 
-// add folds one reading in; where order matters e must not precede any
-// reading already in f in canonical order.
-func (f *fold) add(l *law, e *Row) {
+// value returns what a reading that says a value says of the level, on its scale.
+func (l *law) value(e *Row) float64 {
+	if l.log {
+		return math.Log(e.Value)
+	}
+	return e.Value
+}
+
+// outgrown tells whether the nodes of a learned repeatability are to be placed anew, for
+// which all readings are folded again.
+func (f *fold) outgrown(m *model) bool { return f.bank != nil && f.bank.ruined(m) }
+
+// foldAll folds rows, which are all of a quantity up to some instant.
+func foldAll(l *law, rows []entry) *fold {
+	f := new(fold)
+	for i := range rows {
+		f.add(l, &rows[i].Row)
+		if f.outgrown(l.model) {
+			f.bank.replace(l.model, rows[:i+1])
+		}
+	}
+	return f
+}
+
+// add folds one reading in, which must not precede any reading already in f in canonical
+// order, and returns what it said of the model.
+func (f *fold) add(l *law, e *Row) word {
+	for f.renewed < len(l.model.renewals) && l.model.renewals[f.renewed].Time <= e.Time {
+		f.renewed++
+		f.since = 0
+		f.check.Renewed()
+	}
+	var said word
 	switch l.form {
 	case sumForm:
-		f.addConstant(l, e)
+		said = f.addConstant(l, e)
 	case walkForm:
-		f.addWalk(l, e)
+		said = f.addWalk(l, e)
+	case jointForm:
+		said = f.addJoint(l, e)
+	case countsForm:
+		said = f.addCounts(l, e)
 	default:
-		f.addJoint(l, e)
+		said = f.addBank(l, e)
+	}
+	f.note(l, e)
+	f.judge(l, e, &said)
+	return said
+}
+
+// note counts a reading.
+func (f *fold) note(l *law, e *Row) {
+	if f.count == 0 {
+		f.first = e.Time
 	}
 	if f.count == 0 || e.Time > f.lastTime {
 		f.lastTime = e.Time
 	}
 	f.count++
-}
-
-func (f *fold) addConstant(l *law, e *Row) {
-	switch {
-	case e.HasUncertainty:
-		f.constant.AddKnown(e.Value, e.Uncertainty)
-	case l.known:
-		f.constant.AddKnown(e.Value, l.r)
-	default:
-		f.constant.AddLearned(e.Value)
+	f.since++
+	f.last = e.Instrument
+	if e.Instrument != 0 {
+		d := &l.model.instrument(e.Instrument).Declaration
+		f.flagged[d.State(e.Time)]++
+		f.linearised = f.linearised || d.linearised(e.Time)
 	}
 }
 
-func (f *fold) addWalk(l *law, e *Row) {
+// word is what a reading said of the model: where it fell in what the readings before
+// it foretold.
+type word struct {
+	foretold     bool
+	normal       bool // score is it
+	score        float64
+	below, above float64 // else: probabilities that the indication would be beyond its ends
+	between      bool    // it is known to lie between two ends
+	outlier      float64
+}
+
+// surprised returns the word of a reading whose predictive is normal.
+func surprised(s posterior.Surprise) word {
+	z, ok := s.Score()
+	return word{foretold: ok, normal: true, score: z}
+}
+
+// foretold returns the word of a reading of the value y.
+func foretold(p posterior.Posterior, y float64) word {
+	if p.Form() == posterior.FormNormal {
+		return word{foretold: true, normal: true, score: p.Standard(y)}
+	}
+	return word{foretold: p.Form() != posterior.FormNone, below: p.LowerTail(y), above: p.UpperTail(y)}
+}
+
+// judge lets the model be checked by what the reading that was just folded in said of it.
+func (f *fold) judge(l *law, e *Row, said *word) {
+	f.outlier = said.outlier
+	step := modelcheck.NoStep
+	switch {
+	case !said.foretold:
+		f.check.Pass(int64(e.Time))
+	case said.normal:
+		step = f.check.Add(&l.model.check, modelcheck.Score{Lower: said.score, Upper: said.score}, int64(e.Time))
+	case said.between:
+		z := modelcheck.ScoreBetween(said.below, max(1-said.below, said.above), max(1-said.above, said.below), said.above)
+		step = f.check.Add(&l.model.check, z, int64(e.Time))
+	default:
+		step = f.check.Add(&l.model.check, modelcheck.ScoreOf(said.below, said.above), int64(e.Time))
+	}
+	if step != modelcheck.NoStep && l.widen > 0 {
+		f.widen(l)
+	}
+	if f.check.PriorLook(f.since) {
+		f.lookAtPrior(l.model, e.Time)
+	}
+}
+
+// widen lets the level be less known after a step.
+func (f *fold) widen(l *law) {
+	switch {
+	case l.form == walkForm:
+		f.walk.Predict(l.widen)
+	case f.joint != nil:
+		f.joint.filter.WidenLevel(l.widen)
+	case f.bank != nil:
+		f.bank.widen(l.widen)
+	}
+}
+
+// lookAtPrior lets the model check compare what is believed at an instant with what would
+// be without readings.
+func (f *fold) lookAtPrior(m *model, at Instant) {
+	j := startJoint(m, f.first)
+	j.move(m, max(at, j.at))
+	before, after := j.level(), f.state(m, at)
+	mean, hasMean := after.Mean()
+	sd, hasSD := after.StandardDeviation()
+	if before.Form() == posterior.FormNone || !hasMean || !hasSD {
+		return
+	}
+	f.check.Prior(&m.check, f.since, mean-before.Location(), before.Scale()*before.Scale(), sd*sd)
+}
+
+func (f *fold) addConstant(l *law, e *Row) word {
+	y := l.value(e)
+	n := l.model.declaration().noise()
+	switch {
+	case e.HasUncertainty || l.known:
+		u := e.white(l.r)
+		var said word
+		if l.known || n.Absent { // else r is learned, which this reading doesn't share
+			said = foretold(f.constant.Predictive(l.model.prior, posterior.Noise{Known: true, SD: u}), y)
+		}
+		f.constant.AddKnown(y, u)
+		return said
+	}
+	said := foretold(f.constant.Predictive(l.model.prior, n), y)
+	f.constant.AddLearned(y)
+	return said
+}
+
+func (f *fold) addWalk(l *law, e *Row) word {
 	from := f.lastTime
 	if f.count == 0 {
 		f.walk = posterior.NewWalk(l.model.prior)
@@ -117,23 +266,33 @@ func (f *fold) addWalk(l *law, e *Row) {
 		}
 	}
 	f.walk.Predict(l.variance(e.Time.Sub(from)))
-	u := l.r
-	if e.HasUncertainty {
-		u = e.Uncertainty
-	}
-	f.walk.Update(e.Value, u)
+	y, u := l.value(e), e.white(l.r)
+	said := foretold(f.walk.Predictive(u), y)
+	f.walk.Update(y, u)
+	return said
 }
 
-func (f *fold) addJoint(l *law, e *Row) {
+func (f *fold) addJoint(l *law, e *Row) word {
 	if f.joint == nil {
 		f.joint = startJoint(l.model, e.Time)
 	}
-	f.joint.add(l.model, e)
+	return surprised(f.joint.add(l.model, e, l.value(e)))
 }
 
 // level returns the distribution of the level at an instant that is not
 // before the last reading in f.
-func (f *fold) level(m *model, at Instant) posterior.Posterior {
+func (f *fold) level(m *model, at Instant) posterior.Posterior { return m.shown(f.state(m, at)) }
+
+// shown returns a distribution in the quantity's unit.
+func (m *model) shown(p posterior.Posterior) posterior.Posterior {
+	if m.declaration().Scale == ScaleLog {
+		return p.Exp()
+	}
+	return p
+}
+
+// state is level on the scale on which it is held.
+func (f *fold) state(m *model, at Instant) posterior.Posterior {
 	switch m.form {
 	case sumForm:
 		return f.constant.Posterior(m.prior, m.declaration().noise())
@@ -141,13 +300,23 @@ func (f *fold) level(m *model, at Instant) posterior.Posterior {
 		if w, ok := f.walkAt(m, at); ok {
 			return w.Posterior()
 		}
-	default:
+	case jointForm:
 		if j := f.joint; j != nil && !j.renewsBy(m, at) {
 			return j.filter.PosteriorAfter(lasting(j.at, at))
 		}
 		if j := f.jointAt(m, at); j != nil {
 			return j.level()
 		}
+	case countsForm:
+		return f.counts.level(m)
+	default:
+		if f.count == 0 {
+			if j := f.jointAt(m, at); j != nil {
+				return j.level()
+			}
+			return posterior.Posterior{}
+		}
+		return f.bank.level(m, at)
 	}
 	return posterior.Posterior{}
 }
@@ -155,8 +324,17 @@ func (f *fold) level(m *model, at Instant) posterior.Posterior {
 // predictive returns the distribution of an indication at that instant, by an
 // instrument or, if that is nil, by none.
 func (f *fold) predictive(m *model, at Instant, by *Instrument) posterior.Posterior {
+	return m.shown(f.foresight(m, at, by))
+}
+
+// foresight is predictive on the scale on which the level is held.
+func (f *fold) foresight(m *model, at Instant, by *Instrument) posterior.Posterior {
 	d := m.declaration()
 	switch {
+	case m.form == countsForm:
+		return f.counts.predictive(m, at, by)
+	case m.form >= bankForm:
+		return f.bank.predictive(m, at, by)
 	case m.form == sumForm && by == nil:
 		return f.constant.Predictive(m.prior, d.noise())
 	case m.form == walkForm && by == nil:
@@ -173,14 +351,18 @@ func (f *fold) predictive(m *model, at Instant, by *Instrument) posterior.Poster
 
 // repeatability returns what is known of r.
 func (f *fold) repeatability(m *model, coverage float64) posterior.Repeatability {
-	switch d := m.declaration(); d.Repeatability.Form {
-	case RepeatabilityAbsent:
-		return posterior.Repeatability{}
-	case RepeatabilityKnown:
-		return posterior.Repeatability{Known: true, StandardDeviation: d.Repeatability.StandardDeviation}
-	default:
-		return f.constant.Repeatability(m.prior, d.noise(), coverage)
+	r := m.learns()
+	switch {
+	case r != nil && m.form == countsForm:
+		return f.counts.repeatability(m, coverage)
+	case r != nil && m.form >= bankForm:
+		return f.bank.repeatability(m, coverage)
+	case r != nil && m.form == sumForm:
+		return f.constant.Repeatability(m.prior, m.declaration().noise(), coverage)
+	case m.declaration().Repeatability.Form == RepeatabilityKnown:
+		return posterior.Repeatability{Known: true, StandardDeviation: m.declaration().Repeatability.StandardDeviation}
 	}
+	return posterior.Repeatability{}
 }
 
 // walkAt moves the walk on to an instant. Before a stated prior time nothing
@@ -222,7 +404,7 @@ func (f *fold) jointAt(m *model, at Instant) *joint {
 
 // jointOfLevel makes a joint of a belief that is held otherwise.
 func (f *fold) jointOfLevel(m *model, at Instant) *joint {
-	p := f.level(m, at)
+	p := f.state(m, at)
 	if p.Form() != posterior.FormNormal {
 		return nil
 	}

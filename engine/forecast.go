@@ -142,9 +142,9 @@ func (f *Forecast) look(v *View, d *Declaration, steps int) error {
 	if v.fold.level(v.basis, f.Time).Form() == posterior.FormNone {
 		f.Undetermined = append(f.Undetermined, "steps")
 	}
-	if j := v.fold.jointAt(v.basis, f.Time); j != nil {
-		f.HasSlope, f.SlopeMean, f.SlopeStandardDeviation, f.SlopePer = j.slope(v.basis)
-	}
+	b := Belief{}
+	b.evaluateShared(v.basis, &v.fold, f.Time)
+	f.HasSlope, f.SlopeMean, f.SlopeStandardDeviation, f.SlopePer = b.HasSlope, b.SlopeMean, b.SlopeStandardDeviation, b.SlopePer
 	if f.HasCrossing = crossing != nil; !f.HasCrossing {
 		if d.Tolerance.Declared() {
 			f.Undetermined = append(f.Undetermined, "time_to_breach")
@@ -156,11 +156,13 @@ func (f *Forecast) look(v *View, d *Declaration, steps int) error {
 	return nil
 }
 
-// crossing is when a limit is crossed: by a moving level, or, if passage is nil,
-// now or never.
+// crossing is when a limit is crossed: by a moving level, whose belief may be a mixture of
+// normal ones, or, without passages, now or never.
 type crossing struct {
-	passage *posterior.Passage
-	now     posterior.Crossing
+	passages []*posterior.Passage
+	weights  []float64 // sum to 1
+	now      posterior.Crossing
+	horizon  time.Duration
 }
 
 // crossing returns when the tolerance in force is breached from an instant on;
@@ -175,21 +177,50 @@ func (v *View) crossing(at Instant, horizon time.Duration) (*crossing, error) {
 		b := breachOf(level, tolerance)
 		return &crossing{now: posterior.Crossing{Below: b.Below, Above: b.Above, Either: b.Either}}, nil
 	}
-	p, err := posterior.NewPassage(v.course(level, at), posterior.Limits(tolerance), horizon.Seconds())
-	if err != nil {
-		return nil, err
+	limits := posterior.Limits(tolerance)
+	if s := v.basis.declaration().Scale; s == ScaleLog {
+		limits.Lower, limits.Upper = s.of(limits.Lower), s.of(limits.Upper)
 	}
-	return &crossing{passage: p}, nil
+	c := &crossing{horizon: horizon}
+	for _, w := range v.courses(at) {
+		p, err := posterior.NewPassage(w.course, limits, horizon.Seconds())
+		if err != nil {
+			return nil, err
+		}
+		c.passages, c.weights = append(c.passages, p), append(c.weights, w.weight)
+	}
+	return c, nil
 }
 
-// course returns how the level goes on from an instant. It is normal, as every
-// moving level is.
-func (v *View) course(level posterior.Posterior, at Instant) posterior.Course {
-	c := posterior.Course{Mean: level.Location(), SD: level.Scale(), Motion: v.basis.motion}
+// weightedCourse is a normal part of how the level goes on.
+type weightedCourse struct {
+	course posterior.Course
+	weight float64
+}
+
+// courses returns how the level, of which something is known, goes on from an instant:
+// normal parts, whose weights sum to 1.
+func (v *View) courses(at Instant) []weightedCourse {
+	m := v.basis
+	switch m.form {
+	case bankForm:
+		return v.fold.bank.courses(m, at)
+	case gridForm:
+		return slicesOf(v.fold.state(m, at), m.motion)
+	case walkForm:
+		p := v.fold.state(m, at)
+		return []weightedCourse{{posterior.Course{Mean: p.Location(), SD: p.Scale(), Motion: m.motion}, 1}}
+	}
+	return []weightedCourse{{v.fold.jointAt(m, at).course(m), 1}}
+}
+
+// course returns how the level goes on from where the joint stands.
+func (j *joint) course(m *model) posterior.Course {
+	p := j.level()
+	c := posterior.Course{Mean: p.Location(), SD: p.Scale(), Motion: m.motion}
 	if c.Motion.Form != posterior.MotionTrend {
 		return c
 	}
-	j := v.fold.jointAt(v.basis, at)
 	c.Slope, c.SlopeSD = j.filter.Mean(1), math.Sqrt(j.filter.Variance(1))
 	if c.SD > 0 && c.SlopeSD > 0 {
 		c.Correlation = max(-1, min(1, j.filter.Covariance(0, 1)/(c.SD*c.SlopeSD)))
@@ -197,29 +228,117 @@ func (v *View) course(level posterior.Posterior, at Instant) posterior.Course {
 	return c
 }
 
+const (
+	// maxCourses bounds the nodes of a learned repeatability from which a level goes on:
+	// each takes as long as a quantity of known repeatability.
+	maxCourses = 9
+	// sliceWidth is that of the normal parts by which a belief on points is replaced, and
+	// sliceReach how far they go, in normal scores.
+	sliceWidth, sliceReach = 0.5, 7.0
+)
+
+// courses takes every so many nodes, so that there aren't too many: the trapezoid rule
+// again, with a wider step.
+func (b *bank) courses(m *model, at Instant) []weightedCourse {
+	weights := b.weights()
+	first, last := 0, len(weights)-1
+	const negligible = 1e-6
+	for first < last && weights[first] < negligible {
+		first++
+	}
+	for last > first && weights[last] < negligible {
+		last--
+	}
+	every := (last-first)/maxCourses + 1
+	var all []weightedCourse
+	sum := 0.0
+	s := m.scale()
+	for i := first + (last-first)%every/2; i <= last; i += every {
+		n := &b.nodes[i]
+		l := n.held.(*lone)
+		given := l.model(m, s.r(n.v))
+		j := l.joint.clone()
+		j.move(given, at)
+		all = append(all, weightedCourse{j.course(given), weights[i]})
+		sum += weights[i]
+	}
+	for i := range all {
+		all[i].weight /= sum
+	}
+	return all
+}
+
+// slicesOf replaces a belief on points by normal parts: one about the quantile of every
+// half normal score, of the width that slices of a normal have, so that a normal belief is
+// given back (derived for this package).
+func slicesOf(p posterior.Posterior, motion posterior.Motion) []weightedCourse {
+	standard := posterior.Normal(posterior.Level{}, 1)
+	quantile := func(z float64) float64 {
+		if z <= 0 {
+			return p.Quantile(standard.LowerTail(z))
+		}
+		_, upper := p.Interval(1 - 2*standard.UpperTail(z))
+		return upper
+	}
+	// exp(-z^2/2) is the convolution of slices of variance w^2 with weights of variance 1 - w^2.
+	narrow := math.Sqrt(1 - sliceWidth*sliceWidth)
+	var all []weightedCourse
+	sum := 0.0
+	for z := -sliceReach; z <= sliceReach; z += sliceWidth / 2 {
+		weight := math.Exp(-z * z / (2 * narrow * narrow))
+		sd := quantile(z+sliceWidth/2) - quantile(z-sliceWidth/2)
+		all = append(all, weightedCourse{posterior.Course{Mean: quantile(z), SD: sd, Motion: motion}, weight})
+		sum += weight
+	}
+	for i := range all {
+		all[i].weight /= sum
+	}
+	return all
+}
+
 // by returns what has been crossed after a time; nothing is known of a nil crossing.
 func (c *crossing) by(after time.Duration) posterior.Crossing {
 	if c == nil {
 		return posterior.Crossing{}
 	}
-	if c.passage == nil {
+	if c.passages == nil {
 		return c.now
 	}
-	return c.passage.By(after.Seconds())
+	var sum posterior.Crossing
+	for i, p := range c.passages {
+		x := p.By(after.Seconds())
+		sum.Below += c.weights[i] * x.Below
+		sum.Above += c.weights[i] * x.Above
+		sum.Either += c.weights[i] * x.Either
+	}
+	return sum
 }
 
 // quantile returns when the probability of a crossing reaches p; -1 if it
 // doesn't within the horizon.
 func (c *crossing) quantile(p float64) time.Duration {
-	if c.passage == nil {
+	switch {
+	case c.passages == nil:
 		if c.now.Either >= p {
 			return 0
 		}
 		return -1
-	}
-	seconds, ok := c.passage.Quantile(p)
-	if !ok {
+	case len(c.passages) == 1:
+		seconds, ok := c.passages[0].Quantile(p)
+		if !ok {
+			return -1
+		}
+		return time.Duration(seconds * float64(time.Second))
+	case c.by(c.horizon).Either < p:
 		return -1
 	}
-	return time.Duration(seconds * float64(time.Second))
+	early, late := time.Duration(-1), c.horizon
+	for late-early > max(1, c.horizon>>30) {
+		if middle := early + (late-early)/2; c.by(middle).Either >= p {
+			late = middle
+		} else {
+			early = middle
+		}
+	}
+	return late
 }

@@ -6,11 +6,78 @@ import (
 	"leadline.example/engine/posterior"
 )
 
+// indication returns what a reading says that was indicated, on the scale of the level. A
+// value beyond the measuring interval says no more than that; one that is displayed, where
+// the method takes account of that, that it was rounded (JCGM 100:2008, F.2.2.1).
+func (m *model) indication(e *Row) posterior.Indication {
+	y := posterior.Indication{Lower: e.Value, Upper: e.Value}
+	switch e.Extent {
+	case ExtentAbove:
+		y.Upper = math.Inf(1)
+	case ExtentBelow:
+		y.Lower = math.Inf(-1)
+	case ExtentBetween:
+		y.Upper = e.Upper
+	default:
+		if i := m.instrument(e.Instrument); i != nil && m.form >= countsForm {
+			y = i.Declaration.displayed(e.Value)
+		}
+	}
+	if m.declaration().Scale == ScaleLog {
+		return posterior.Indication{Lower: logOf(y.Lower), Upper: logOf(y.Upper)}
+	}
+	return y
+}
+
+// displayed returns what a displayed value says.
+func (d *InstrumentDeclaration) displayed(y float64) posterior.Indication {
+	switch r := &d.MeasuringInterval; {
+	case r.HasUpper && y > r.Upper:
+		return posterior.Indication{Lower: r.Upper, Upper: math.Inf(1)}
+	case r.HasLower && y < r.Lower:
+		return posterior.Indication{Lower: math.Inf(-1), Upper: r.Lower}
+	}
+	return posterior.Indication{Lower: y - d.Resolution/2, Upper: y + d.Resolution/2}
+}
+
+// logOf returns ln x, -Inf for what isn't positive.
+func logOf(x float64) float64 {
+	if x <= 0 {
+		return math.Inf(-1)
+	}
+	return math.Log(x)
+}
+
+// spread returns the white noise of a reading where r is the repeatability that is learned.
+func (m *model) spread(e *Row, r float64) posterior.Spread {
+	o := m.declaration().Outliers
+	s := posterior.Spread{SD: r, OutlierProbability: o.Probability, Inflation: o.Inflation}
+	switch {
+	case e.HasUncertainty:
+		s.SD = e.Uncertainty
+	case m.teaches(e):
+		s.SD = e.white(r)
+	default:
+		s.SD = m.declaration().Repeatability.StandardDeviation
+		if i := m.instrument(e.Instrument); i != nil && i.Declaration.Repeatability.StandardDeviation > 0 {
+			s.SD = i.Declaration.Repeatability.StandardDeviation
+		}
+		s.SD = e.white(s.SD)
+	}
+	if f := m.forced; f != nil && f.position == e.Position {
+		s.OutlierProbability = 0
+		if f.outlier {
+			s.SD *= o.Inflation
+		}
+	}
+	return s
+}
+
 // indication is how a reading of an instrument rests on the states.
 type indication struct {
 	d        *InstrumentDeclaration
 	s        float64 // of the white part, but for what is relative or displayed
-	relative bool    // whether the instrument's relative part counts
+	relative float64 // the white part that is relative to the level
 	terms    []posterior.Term
 	noise    posterior.White
 }
@@ -22,10 +89,25 @@ func (y *indication) white(m *model, e *Row) {
 	case e.HasUncertainty:
 		y.s = e.Uncertainty
 	case r.StandardDeviation > 0:
-		y.s, y.relative = r.StandardDeviation, true
+		y.s, y.relative = e.white(r.StandardDeviation), r.Relative/math.Sqrt(e.samples())
 	default:
-		y.s = m.declaration().Repeatability.StandardDeviation
+		y.s = e.white(m.declaration().Repeatability.StandardDeviation)
 	}
+}
+
+// samples returns of how many indications the reading is the mean.
+func (e *Row) samples() float64 { return float64(max(1, e.Samples)) }
+
+// white returns the white part's standard deviation of a reading whose single
+// indications have r: its own, else that of a mean.
+func (e *Row) white(r float64) float64 {
+	switch {
+	case e.HasUncertainty:
+		return e.Uncertainty
+	case e.Samples > 1:
+		return r / math.Sqrt(float64(e.Samples))
+	}
+	return r
 }
 
 // shared adds the states that r's instrument shares between readings, the gain last,
@@ -60,7 +142,7 @@ func (y *indication) shared(r *route) (offset float64) {
 // over the level.
 func (y *indication) about(m *model, r *route, level, variance float64) {
 	y.noise.Variance = y.s*y.s + y.d.Resolution*y.d.Resolution/12
-	if u := y.d.Repeatability.Relative; y.relative && u > 0 {
+	if u := y.relative; u > 0 {
 		y.noise.Variance += u * u * (level*level + variance)
 		y.noise.Relative = u
 	}
@@ -94,10 +176,10 @@ func (j *joint) restate(d *InstrumentDeclaration, r *route, level float64) {
 // refine lets a gain that is met for the first time be relative to the level as the reading
 // at hand leaves it, weighed as it deserves: what was known before may be far off. Two
 // rounds settle it.
-func (j *joint) refine(e *Row, r *route, y *indication, offset float64) {
+func (j *joint) refine(value float64, r *route, y *indication, offset float64) {
 	for range 2 {
 		trial := j.filter.Clone()
-		trial.UpdateFrom(e.Value, offset, 1, y.terms, y.noise)
+		trial.UpdateFrom(value, offset, 1, y.terms, y.noise)
 		r.relate(trial.Mean(0), trial.Variance(0))
 		y.terms[len(y.terms)-1].Coefficient = r.scale
 	}

@@ -95,11 +95,11 @@ type InstrumentDeclaration struct {
 // Equal tells whether d and e state the same.
 func (d *InstrumentDeclaration) Equal(e *InstrumentDeclaration) bool {
 	return d.sameNoise(e) && d.Unit == e.Unit && d.Description == e.Description &&
-		d.MeasuringInterval == e.MeasuringInterval && slices.Equal(d.Calibrations, e.Calibrations)
+		slices.Equal(d.Calibrations, e.Calibrations)
 }
 
 func (d *InstrumentDeclaration) sameNoise(e *InstrumentDeclaration) bool {
-	return d.Repeatability == e.Repeatability && d.Resolution == e.Resolution
+	return d.Repeatability == e.Repeatability && d.Resolution == e.Resolution && d.MeasuringInterval == e.MeasuringInterval
 }
 
 // SameBelief tells whether d and e give every set of readings the same belief.

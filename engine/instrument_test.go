@@ -96,6 +96,7 @@ func TestReadingsByInstrumentsAreRefusedWithReason(t *testing.T) {
 	r.declare("bare", with(gap(), func(d *engine.Declaration) { d.Repeatability = engine.Repeatability{} }))
 	r.declareInstrument("gauge", gauge())
 	r.declareInstrument("silent", with(gauge(), func(d *engine.InstrumentDeclaration) { d.Repeatability = engine.InstrumentRepeatability{} }))
+	r.declareInstrument("fine", engine.InstrumentDeclaration{Unit: "mm", Resolution: 0.01})
 	r.declareInstrument("inches", with(gauge(), func(d *engine.InstrumentDeclaration) { d.Unit = "in" }))
 	r.declareInstrument("old", gauge())
 	if _, err := r.keeper.RetireInstrument(context.Background(), "old", engine.Condition{}, start); err != nil {
@@ -114,7 +115,8 @@ func TestReadingsByInstrumentsAreRefusedWithReason(t *testing.T) {
 		{gapID, "stranger", "", engine.UnknownInstrument},
 		{gapID, "old", "", engine.InstrumentRetired},
 		{gapID, "inches", "", engine.UnitMismatch},
-		{"learned", "gauge", "", engine.NotSupported},
+		{"learned", "gauge", "", ""},
+		{"learned", "fine", "", engine.NotSupported}, // whose display could explain all differences
 		{gapID, "", "visit 1", engine.NotSupported},
 	} {
 		res := r.post(start, engine.Reading{Quantity: test.quantity, Value: 100, Instrument: test.instrument, Occasion: test.occasion})[0]
@@ -177,9 +179,10 @@ func TestInstrumentInUseChangesWithinBounds(t *testing.T) {
 		t.Errorf("got %+v (%v), want 2 quantities and revision 3", v, err)
 	}
 	if _, _, err := r.keeper.Declare(context.Background(), gapID, with(gap(), func(d *engine.Declaration) {
-		d.Repeatability = engine.Repeatability{Form: engine.RepeatabilityLearnedReference}
+		d.Outliers = engine.Outliers{Probability: 0.01, Inflation: 10}
+		d.Dynamics = engine.Dynamics{Form: engine.DynamicsMeanReverting, Mean: 100, StandardDeviation: 1, HalfLife: time.Hour}
 	}), engine.Condition{}, start); err == nil {
-		t.Error("a quantity read by an instrument learns its repeatability")
+		t.Error("a reverting quantity read by a calibrated instrument has outliers")
 	}
 }
 

@@ -56,9 +56,10 @@ func (s *span) join(t span) {
 
 // use is what a quantity's readings by one instrument amount to.
 type use struct {
-	number InstrumentNumber
-	bare   int // of those readings without an uncertainty of their own
-	span   span
+	number          InstrumentNumber
+	bare            int // of those readings without an uncertainty of their own
+	span            span
+	lowest, highest float64 // values
 }
 
 // addUse counts a reading by an instrument in uses sorted by number; isNew tells
@@ -66,9 +67,12 @@ type use struct {
 func addUse(uses []use, r *Row) (all []use, isNew bool) {
 	n, found := slices.BinarySearchFunc(uses, r.Instrument, func(u use, n InstrumentNumber) int { return int(u.number) - int(n) })
 	if !found {
-		uses = slices.Insert(uses, n, use{number: r.Instrument})
+		uses = slices.Insert(uses, n, use{number: r.Instrument, lowest: math.Inf(1), highest: math.Inf(-1)})
 	}
 	uses[n].span.add(r.Time)
+	if r.Extent == ExtentValue {
+		uses[n].lowest, uses[n].highest = min(uses[n].lowest, r.Value), max(uses[n].highest, r.Value)
+	}
 	if !r.HasUncertainty {
 		uses[n].bare++
 	}
@@ -232,6 +236,27 @@ func (k *Keeper) checkInstrumentChange(t *instrumentTrack, d *InstrumentDeclarat
 		if err := user.checkNoiseOf(t.number, d); err != nil {
 			return err
 		}
+		if err := k.checkMethodOf(user, t.number, d); err != nil {
+			return err
+		}
+	}
+	return nil
+}
+
+// checkMethodOf refuses a declaration of an instrument under which there is no method for the
+// readings of a quantity.
+func (k *Keeper) checkMethodOf(t *Track, n InstrumentNumber, d *InstrumentDeclaration) error {
+	if !slices.ContainsFunc(t.decidedUsed, func(u use) bool { return u.number == n }) {
+		return nil
+	}
+	sentence := objectionToAll(&t.decided.Declaration, len(t.decided.InForce()), &t.decidedTally, t.decidedUsed, func(i InstrumentNumber) *InstrumentDeclaration {
+		if i == n {
+			return d
+		}
+		return &k.instruments[i-1].decided.Declaration
+	})
+	if sentence != "" {
+		return refuse(NotSupported, "instrument", "the belief about %q, whose readings rest on the instrument, could not be held: %s", t.id, sentence)
 	}
 	return nil
 }
@@ -265,7 +290,7 @@ func (t *Track) checkNoiseOf(n InstrumentNumber, d *InstrumentDeclaration) error
 		return nil
 	}
 	s := d.Repeatability.StandardDeviation
-	if s == 0 && t.rules.needsOwnNoise {
+	if s == 0 && t.rules.needsOwnNoise && !d.Repeatability.Learned.Learned() {
 		return refuse(InvalidField, "repeatability.standard_deviation", "repeatability.standard_deviation is missing but %d readings of %q, which declares no repeatability, rest on it; keep it", t.decidedUsed[i].bare, t.id)
 	}
 	if largest := t.decidedTally.largest; s > 0 && largest/s > maxRatio {
@@ -293,16 +318,43 @@ func (k *Keeper) applyInstrument(r *Record) {
 	}
 }
 
-// useInstrument takes note that a durable reading of t names an instrument.
-func (k *Keeper) useInstrument(t *Track, r *Row) {
-	var isNew bool
-	if t.used, isNew = addUse(t.used, r); !isNew {
-		return
+// readAs takes note of what a durable reading of t asks of the method by which its belief is
+// held.
+func (k *Keeper) readAs(t *Track, r *Row) {
+	isNew := t.tally.asks(r)
+	var before use
+	if r.Instrument != 0 {
+		n := slices.IndexFunc(t.used, func(u use) bool { return u.number == r.Instrument })
+		if n >= 0 {
+			before = t.used[n]
+		}
+		t.used, _ = addUse(t.used, r)
+		if n < 0 {
+			i := k.instruments[r.Instrument-1]
+			i.users = append(i.users, t)
+			i.publish()
+		}
+		isNew = isNew || n < 0 || k.instruments[r.Instrument-1].current.Declaration.asks(&before, r)
 	}
-	i := k.instruments[r.Instrument-1]
-	i.users = append(i.users, t)
-	i.publish()
-	k.rebase(t)
+	t.tally.note(r)
+	if isNew {
+		k.rebase(t)
+	}
+	t.tally.count++
+}
+
+// asks tells whether a reading is the first of its kind.
+func (a *tally) asks(r *Row) bool {
+	return r.Extent != ExtentValue && a.censored == 0 || r.Samples > 1 && a.averaged == 0 ||
+		r.Instrument == 0 && (a.direct == 0 || !r.HasUncertainty && a.bare == 0)
+}
+
+// asks tells whether a reading is the first of an instrument that is beyond its measuring
+// interval, or under another calibration than those before.
+func (d *InstrumentDeclaration) asks(u *use, r *Row) bool {
+	m := d.MeasuringInterval
+	beyond := r.Extent == ExtentValue && (m.HasUpper && r.Value > m.Upper && u.highest <= m.Upper || m.HasLower && r.Value < m.Lower && u.lowest >= m.Lower)
+	return beyond || d.at(r.Time) != d.at(u.span.first)
 }
 
 // modelOf returns the model that t's belief is to rest on.
@@ -311,7 +363,18 @@ func (k *Keeper) modelOf(t *Track) *model {
 	for _, u := range t.used {
 		instruments = append(instruments, k.instruments[u.number-1].current)
 	}
-	return newModel(t.quantity, instruments)
+	current := func(n InstrumentNumber) *InstrumentDeclaration { return &k.instruments[n-1].current.Declaration }
+	r := t.tally.readAs(t.used, current)
+	return newModel(t.quantity, instruments, &r, k.checkLaw(&t.quantity.Declaration))
+}
+
+// readAs returns what readings amount to for the choice of a method.
+func (a *tally) readAs(uses []use, of func(InstrumentNumber) *InstrumentDeclaration) readAs {
+	r := readAs{direct: a.direct > 0, bareDirect: a.bare > 0, censored: a.censored > 0, averaged: a.averaged > 0}
+	for _, u := range uses {
+		r.instruments = append(r.instruments, instrumentUse{of(u.number), u.lowest, u.highest, u.span.first, u.span.last})
+	}
+	return r
 }
 
 // loadInstruments takes the latest record of each instrument.
@@ -353,8 +416,6 @@ func (t *Track) objectionToInstrument(r *Reading, i *instrumentTrack) (Reason, s
 		return InstrumentRetired, fmt.Sprintf("instrument %q was retired at %v; declare it again to revive it, then send the reading again", i.id, i.decided.RetireTime)
 	case i.decided.Declaration.Unit != t.rules.unit:
 		return UnitMismatch, fmt.Sprintf("instrument %q is in %q but the quantity is in %q; declare an instrument in the quantity's unit and convert the value", i.id, i.decided.Declaration.Unit, t.rules.unit)
-	case t.rules.learned:
-		return NotSupported, "instrument is given but the quantity's repeatability is learned, which is not supported together; declare the quantity's repeatability.standard_deviation (without instrument its bias would count as 0)"
 	case len(t.decidedUsed) >= MaxQuantityInstruments && !slices.ContainsFunc(t.decidedUsed, func(u use) bool { return u.number == i.number }):
 		return NotSupported, fmt.Sprintf("instrument %q would be one more than the %d by which a quantity can be read; use one of those", i.id, MaxQuantityInstruments)
 	}
@@ -364,8 +425,14 @@ func (t *Track) objectionToInstrument(r *Reading, i *instrumentTrack) (Reason, s
 // noiseOf returns what a reading without its own uncertainty has: the
 // instrument's repeatability, else the quantity's scale; NaN if there is none.
 func (a *rules) noiseOf(i *instrumentTrack) float64 {
-	if i != nil && i.decided.Declaration.Repeatability.StandardDeviation > 0 {
-		return i.decided.Declaration.Repeatability.StandardDeviation
+	if i != nil {
+		r := &i.decided.Declaration.Repeatability
+		if r.StandardDeviation > 0 {
+			return r.StandardDeviation
+		}
+		if r.Learned.Learned() {
+			return r.Learned.scale()
+		}
 	}
 	if a.needsOwnNoise {
 		return math.NaN()

@@ -20,15 +20,12 @@ import (
 //
 // A joint belongs to the fold it is in; others take a clone.
 type joint struct {
-	filter     posterior.Filter
-	at         Instant  // where the filter stands
-	renewed    int      // of the model's renewals, those taken in
-	routes     []route  // one for each instrument met
-	states     []source // what each state is, by its index in the filter
-	last       InstrumentNumber
-	flagged    [len(CalibrationStates)]int
-	linearised bool
-	terms      []posterior.Term // of the reading at hand; its space is used again
+	filter  posterior.Filter
+	at      Instant          // where the filter stands
+	renewed int              // of the model's renewals, those taken in
+	routes  []route          // one for each instrument met
+	states  []source         // what each state is, by its index in the filter
+	terms   []posterior.Term // of the reading at hand; its space is used again
 }
 
 // route is how an instrument's errors enter its readings. An index of 0, which is
@@ -137,45 +134,40 @@ func (j *joint) step(to Instant) {
 	}
 }
 
-// add takes in a reading that is not before any other.
-func (j *joint) add(m *model, e *Row) {
+// add takes in a reading of the value y that is not before any other. It returns how
+// far y was off what the readings before foretold, and the variance of that; none
+// while nothing is known of the level.
+func (j *joint) add(m *model, e *Row, y float64) posterior.Surprise {
 	j.move(m, e.Time)
-	j.last = e.Instrument
 	if e.Instrument == 0 {
-		s := m.declaration().Repeatability.StandardDeviation
-		if e.HasUncertainty {
-			s = e.Uncertainty
-		}
-		j.filter.Update(e.Value, 0, 1, nil, s*s)
-		return
+		s := e.white(m.declaration().Repeatability.StandardDeviation)
+		return j.filter.Update(y, 0, 1, nil, s*s)
 	}
 	d := &m.instrument(e.Instrument).Declaration
-	j.flagged[d.State(e.Time)]++
-	j.linearised = j.linearised || d.linearised(e.Time)
-	y := indication{d: d, terms: j.terms[:0]}
-	y.white(m, e)
+	i := indication{d: d, terms: j.terms[:0]}
+	i.white(m, e)
 	r := j.route(d, e)
-	offset := y.shared(r)
-	j.terms = y.terms
-	level, variance := e.Value-offset, 0.0
+	offset := i.shared(r)
+	j.terms = i.terms
+	level, variance := y-offset, 0.0
 	if !j.filter.Vague() {
 		level, variance = j.filter.Mean(0), j.filter.Variance(0)
 	}
-	y.noise.Label = int(e.Instrument)
+	i.noise.Label = int(e.Instrument)
 	first := r.gain > 0 && r.scale == 0
 	if !first && r.gain > 0 && m.motion.Form == posterior.MotionConstant {
 		j.restate(d, r, math.Sqrt(level*level+variance))
 		level, variance = j.filter.Mean(0), j.filter.Variance(0)
 	}
-	y.about(m, r, level, variance)
+	i.about(m, r, level, variance)
 	if first && !j.filter.Vague() {
-		j.refine(e, r, &y, offset)
-		y.noise.Gain, y.noise.Scale = math.Sqrt(j.filter.Variance(r.gain)), r.scale
+		j.refine(y, r, &i, offset)
+		i.noise.Gain, i.noise.Scale = math.Sqrt(j.filter.Variance(r.gain)), r.scale
 	}
 	if first {
 		r.restated = math.Abs(r.scale)
 	}
-	j.filter.UpdateFrom(e.Value, offset, 1, y.terms, y.noise)
+	return j.filter.UpdateFrom(y, offset, 1, i.terms, i.noise)
 }
 
 // route returns how the errors of a reading's instrument enter it, after adding

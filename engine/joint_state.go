@@ -24,18 +24,23 @@ func (t *Track) appendUses(b []byte) []byte {
 		b = binary.AppendUvarint(b, uint64(u.span.count))
 		b = binary.AppendVarint(b, int64(u.span.first))
 		b = binary.AppendVarint(b, int64(u.span.last))
+		b = binary.BigEndian.AppendUint64(b, math.Float64bits(u.lowest))
+		b = binary.BigEndian.AppendUint64(b, math.Float64bits(u.highest))
 	}
 	return b
 }
 
 // uses decodes what appendUses encoded; stale tells that an instrument has been
 // declared anew since.
-func (r *stateReader) uses(known []*instrumentTrack) (all []use, stale bool) {
+func (r *stateReader) uses(version byte, known []*instrumentTrack) (all []use, stale bool) {
 	for n := r.uvarint(); n > 0 && r.err == nil; n-- {
 		u := use{number: InstrumentNumber(r.uvarint())}
 		revision := uint32(r.uvarint())
 		u.bare = int(r.uvarint())
 		u.span = span{count: int(r.uvarint()), first: Instant(r.varint()), last: Instant(r.varint())}
+		if version == stateVersion {
+			u.lowest, u.highest = r.float(), r.float()
+		}
 		if r.err == nil && (u.number == 0 || int(u.number) > len(known)) {
 			r.err = fmt.Errorf("instrument number %d, of which there are %d", u.number, len(known))
 			return nil, true
@@ -54,11 +59,6 @@ func (j *joint) append(b []byte) []byte {
 	b = append(b, 1)
 	b = binary.AppendVarint(b, int64(j.at))
 	b = binary.AppendUvarint(b, uint64(j.renewed))
-	b = binary.AppendUvarint(b, uint64(j.last))
-	b = append(b, flag(j.linearised))
-	for _, n := range j.flagged {
-		b = binary.AppendUvarint(b, uint64(n))
-	}
 	b = binary.AppendUvarint(b, uint64(len(j.routes)))
 	for i := range j.routes {
 		b = j.routes[i].append(b)
@@ -105,10 +105,7 @@ func (r *stateReader) joint() *joint {
 	if r.byte() == 0 {
 		return nil
 	}
-	j := &joint{at: Instant(r.varint()), renewed: int(r.uvarint()), last: InstrumentNumber(r.uvarint()), linearised: r.byte() == 1}
-	for i := range j.flagged {
-		j.flagged[i] = int(r.uvarint())
-	}
+	j := &joint{at: Instant(r.varint()), renewed: int(r.uvarint())}
 	for n := r.uvarint(); n > 0 && r.err == nil; n-- {
 		j.routes = append(j.routes, r.route())
 	}

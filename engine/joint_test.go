@@ -25,7 +25,7 @@ func randomInstrument(rng *rand.Rand) engine.InstrumentDeclaration {
 		}
 		return 0
 	}
-	d := engine.InstrumentDeclaration{Unit: "mm", Resolution: maybe(0.05)}
+	d := engine.InstrumentDeclaration{Unit: "mm", Resolution: maybe(0.02)}
 	d.Repeatability.StandardDeviation = maybe(0.1)
 	d.Repeatability.BetweenOccasions = maybe(0.2)
 	if s := maybe(0.2); s > 0 {

@@ -6,6 +6,8 @@ import (
 	"sync"
 	"sync/atomic"
 	"time"
+
+	"leadline.example/engine/modelcheck"
 )
 
 // Options configures a Keeper.
@@ -97,6 +99,9 @@ type Keeper struct {
 	jobs        []*job   // waiting for the rebuilder
 	working     bool     // the rebuilder has a job
 	sweep       sweeper
+	laws        map[modelcheck.Settings]modelcheck.Law
+	received    Instant  // when the latest record was
+	due         []*Track // whose newest step is to be published
 	failed      error
 	warmed      uint64 // no number of interest, see warm
 
@@ -339,6 +344,7 @@ func (k *Keeper) foldGroup(records []Record) {
 		k.apply(&records[i])
 	}
 	k.settleTouched()
+	k.dueSteps(k.touched)
 	k.publish(records[len(records)-1].Position)
 }
 

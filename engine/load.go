@@ -3,6 +3,8 @@ package engine
 import (
 	"errors"
 	"fmt"
+
+	"leadline.example/engine/modelcheck"
 )
 
 // load opens the ledger and brings the state up to its end: from the last
@@ -24,6 +26,7 @@ func (k *Keeper) loadFrom(l Ledger) error {
 	k.directory.Store(newDirectory())
 	k.byNumber = nil
 	k.window = newWindow(k.options.DuplicateWindow, k.options.minGeneration)
+	k.laws = map[modelcheck.Settings]modelcheck.Law{}
 	k.refusals.init(k.options.RefusedLog)
 	k.touched, k.arrived, k.jobs, k.partial, k.fresh = nil, nil, nil, nil, 0
 	k.change++
@@ -64,6 +67,10 @@ func (k *Keeper) restore(e CheckpointEntry) error {
 		return err
 	}
 	t.rest(k.modelOf(t))
+	rebuild = rebuild || t.held != t.basis.form && t.fold.count > 0
+	if rebuild {
+		t.fold, t.last = fold{}, entry{}
+	}
 	t.marks[0], t.behind = t.fold.copied(), t.last
 	t.hollow = rebuild
 	for _, u := range t.used {
@@ -137,6 +144,7 @@ func (k *Keeper) replayFrom(through Position, sum summaryPositions) error {
 			return nil
 		}
 		k.replay(r, sum.countedTo)
+		k.received = r.ReceiveTime
 		k.position.Store(uint64(r.Position))
 		if n++; n%maxGroupRecords == 0 {
 			k.settleReplayed()
@@ -157,7 +165,7 @@ func (k *Keeper) checkReplayed(r *Record) error {
 		}
 		return fmt.Errorf("record %d is of an instrument that the ledger doesn't list", r.Position)
 	case r.Kind == KindDeclaration && r.Declaration != nil && r.Number != 0 && int(r.Number) <= len(k.byNumber)+1,
-		(r.Kind == KindRetirement || r.Kind == KindReading || r.Kind == KindRenewal && r.Renewal != nil) && r.Number != 0 && known,
+		(r.Kind == KindRetirement || r.Kind == KindReading || r.Kind == KindRenewal && r.Renewal != nil || r.Kind == KindStep && r.Step != nil) && r.Number != 0 && known,
 		r.Kind == KindRefusal && known:
 		return nil
 	}
@@ -168,7 +176,7 @@ func (k *Keeper) checkReplayed(r *Record) error {
 func (k *Keeper) remember(r *Record) {
 	if r.Kind == KindReading && r.Reading.ID != "" {
 		k.window.add(seenID{
-			hash: k.seeds.hash(r.Number, r.Reading.ID), time: r.Reading.Time, value: r.Reading.Value,
+			hash: k.seeds.hash(r.Number, r.Reading.ID), time: r.Reading.Time, said: r.Reading.said(),
 			position: r.Position, receive: r.ReceiveTime, untimed: !r.Reading.HasTime,
 		})
 	}
@@ -206,9 +214,33 @@ func (k *Keeper) settleReplayed() {
 	k.touched = k.touched[:0]
 }
 
+// recount counts all readings of a track whose checkpoint is of an earlier version.
+func (k *Keeper) recount(t *Track) error {
+	all, err := loadEntries(k.ledger, t.number, t.position, t.tally.count, t.rows)
+	if err != nil {
+		return err
+	}
+	t.tally, t.used, t.recount = tally{}, nil, false
+	for i := range all {
+		t.tally.add(&all[i].Row)
+		if all[i].Instrument != 0 {
+			t.used, _ = addUse(t.used, &all[i].Row)
+		}
+	}
+	if t.job == nil {
+		t.rest(k.modelOf(t))
+	}
+	return nil
+}
+
 // present rebuilds what the checkpoint left to be rebuilt and publishes all.
 func (k *Keeper) present() error {
 	for _, t := range k.byNumber {
+		if t.recount {
+			if err := k.recount(t); err != nil {
+				return err
+			}
+		}
 		if t.hollow && t.job == nil {
 			k.startJob(t, t.basis)
 		}
@@ -233,6 +265,11 @@ func (k *Keeper) present() error {
 	}
 	k.presentInstruments()
 	k.decidedTo = Position(k.position.Load())
+	k.due = nil
+	for _, t := range k.byNumber {
+		t.decidedStep = t.lastStep()
+	}
+	k.dueSteps(k.byNumber)
 	k.tracks.Store(nil)
 	k.publish(k.decidedTo)
 	return nil

@@ -78,7 +78,7 @@ func (k *Keeper) lookUpTrack(c *command, t *Track, all []late) error {
 				break
 			}
 			if c.batch.Readings[l.index].ID == rec.Reading.ID {
-				c.found[l.index].stored = &seenID{time: rec.Reading.Time, value: rec.Reading.Value, position: rec.Position}
+				c.found[l.index].stored = &seenID{time: rec.Reading.Time, said: rec.Reading.said(), position: rec.Position}
 			}
 		}
 		return nil

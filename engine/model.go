@@ -6,6 +6,7 @@ import (
 	"sort"
 	"time"
 
+	"leadline.example/engine/modelcheck"
 	"leadline.example/engine/posterior"
 )
 
@@ -13,9 +14,12 @@ import (
 type form uint8
 
 const (
-	sumForm   form = iota // sums, which no order can change
-	walkForm              // the local level filter alone
-	jointForm             // level, slope and what instruments share, jointly
+	sumForm    form = iota // sums
+	walkForm               // the local level filter alone
+	jointForm              // level, slope and what instruments share, jointly
+	bankForm               // such a joint at each node of a learned repeatability
+	countsForm             // sums and counts of what was displayed
+	gridForm               // a density on points, at each node of a repeatability
 )
 
 // model is what a belief is a function of beside its readings. It is
@@ -25,30 +29,69 @@ type model struct {
 	instruments []*Instrument // those that the readings name, by number
 	renewals    []Renewal     // in force and not before the prior's time, by time
 	form        form
+	check       modelcheck.Law
 	prior       posterior.Prior
 	slope       posterior.SlopePrior
 	motion      posterior.Motion
+	forced      *forced
 }
 
-func newModel(q *Quantity, instruments []*Instrument) *model {
+// forced says of one reading whether it is an outlier.
+type forced struct {
+	position Position
+	outlier  bool
+}
+
+func newModel(q *Quantity, instruments []*Instrument, r *readAs, check modelcheck.Law) *model {
 	d := &q.Declaration
 	m := &model{
-		quantity: q, instruments: instruments, renewals: q.InForce(),
-		prior: d.levelPrior(), slope: d.Dynamics.Slope.prior(), motion: d.Dynamics.motion(),
+		quantity: q, instruments: instruments, renewals: q.InForce(), check: check,
+		prior: d.levelPrior(), slope: d.Dynamics.Slope.prior(), motion: d.motion(),
 	}
 	if d.Prior.HasTime {
 		first := sort.Search(len(m.renewals), func(i int) bool { return m.renewals[i].Time >= d.Prior.Time })
 		m.renewals = m.renewals[first:]
 	}
-	switch plain := len(instruments) == 0 && len(m.renewals) == 0; {
-	case plain && d.Dynamics.Form == DynamicsConstant:
-		m.form = sumForm
-	case plain && d.Dynamics.Form == DynamicsRandomWalk:
-		m.form = walkForm
-	default:
-		m.form = jointForm
-	}
+	m.form = m.formFor(r)
 	return m
+}
+
+// formFor returns how the belief is held for readings as those.
+func (m *model) formFor(r *readAs) form {
+	t := traitsOf(m.declaration(), len(m.renewals), r)
+	switch t.method() {
+	case MethodSums:
+		return sumForm
+	case MethodBank:
+		return bankForm
+	case MethodCounts:
+		return countsForm
+	case MethodGrid:
+		return gridForm
+	}
+	if t.plain && len(m.renewals) == 0 && m.motion.Form == posterior.MotionWalk {
+		return walkForm
+	}
+	return jointForm
+}
+
+// method names how the belief is held.
+func (m *model) method() Method {
+	return [...]Method{MethodSums, MethodFilter, MethodFilter, MethodBank, MethodCounts, MethodGrid}[m.form]
+}
+
+// checkLaw returns by what the model of a quantity is checked. Making one takes as long as
+// thousands of readings, and most quantities have the same.
+func (k *Keeper) checkLaw(d *Declaration) modelcheck.Law {
+	s := modelcheck.Settings{
+		Window: d.ModelCheck.Window, ObjectionsPerYear: d.ModelCheck.ObjectionsPerYear, FalseAlarmInterval: d.StepDetection.FalseAlarmInterval,
+	}
+	l, known := k.laws[s]
+	if !known {
+		l = modelcheck.LawOf(s)
+		k.laws[s] = l
+	}
+	return l
 }
 
 // joint returns m for a belief that is held jointly, whatever form m has.
@@ -73,10 +116,6 @@ func (m *model) from(at Instant, read bool) *model {
 // declaration returns what is declared of the quantity.
 func (m *model) declaration() *Declaration { return &m.quantity.Declaration }
 
-// ordered tells whether a fold depends on the order of its readings; where it
-// doesn't, readings are added as they arrive.
-func (m *model) ordered() bool { return m.form != sumForm }
-
 // still tells whether time alone leaves the belief as it is.
 func (m *model) still() bool {
 	return m.motion.Form == posterior.MotionConstant && len(m.renewals) == 0
@@ -84,7 +123,7 @@ func (m *model) still() bool {
 
 // same tells whether m and n give every set of readings the same belief.
 func (m *model) same(n *model) bool {
-	return m.declaration().SameBelief(*n.declaration()) && m.sameRenewals(n) &&
+	return m.form == n.form && m.declaration().SameBelief(*n.declaration()) && m.sameRenewals(n) &&
 		len(m.instruments) == len(n.instruments) && m.within(n)
 }
 
@@ -137,9 +176,9 @@ func (s Slope) prior() posterior.SlopePrior {
 	return posterior.SlopePrior{Mean: s.Mean / s.Per.Seconds(), SD: s.StandardDeviation / s.Per.Seconds()}
 }
 
-// motion returns the dynamics by the second.
-func (d *Dynamics) motion() posterior.Motion {
-	switch d.Form {
+// motion returns the dynamics by the second, on the scale of the level.
+func (q *Declaration) motion() posterior.Motion {
+	switch d := &q.Dynamics; d.Form {
 	case DynamicsRandomWalk:
 		return posterior.Motion{Form: posterior.MotionWalk, Walk: perSecond(d.StandardDeviation, d.Per)}
 	case DynamicsLinearTrend:
@@ -151,7 +190,7 @@ func (d *Dynamics) motion() posterior.Motion {
 	case DynamicsMeanReverting:
 		return posterior.Motion{
 			Form: posterior.MotionReverting,
-			Mean: d.Mean, Variance: d.StandardDeviation * d.StandardDeviation, Rate: math.Ln2 / d.HalfLife.Seconds(),
+			Mean: q.Scale.of(d.Mean), Variance: d.StandardDeviation * d.StandardDeviation, Rate: math.Ln2 / d.HalfLife.Seconds(),
 		}
 	}
 	return posterior.Motion{Form: posterior.MotionConstant}

@@ -1,5 +1,7 @@
 package engine
 
+import "fmt"
+
 // Extent tells what a reading says of the indication.
 type Extent uint8
 
@@ -9,6 +11,29 @@ const (
 	ExtentBelow                 // it was below Value
 	ExtentBetween               // it was between Value and Upper
 )
+
+// said is what a reading says: a repeat says the same.
+type said struct {
+	value, upper float64
+	extent       Extent
+}
+
+// String gives it in words.
+func (s said) String() string {
+	switch s.extent {
+	case ExtentAbove:
+		return fmt.Sprint("above ", s.value)
+	case ExtentBelow:
+		return fmt.Sprint("below ", s.value)
+	case ExtentBetween:
+		return fmt.Sprint("between ", s.value, " and ", s.upper)
+	}
+	return fmt.Sprint(s.value)
+}
+
+func (r *Reading) said() said { return said{r.Value, r.Upper, r.Extent} }
+
+func (r *Row) said() said { return said{r.Value, r.Upper, r.Extent} }
 
 // Reading is one indication as it was sent.
 type Reading struct {

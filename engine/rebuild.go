@@ -21,7 +21,7 @@ type job struct {
 	fold   fold
 	last   entry
 	behind entry   // the latest reading in marks[0]
-	rows   []entry // canonical if ordered, else the recent ones
+	rows   []entry // canonical
 	marks  []fold
 	fault  error // of the index, which the ledger made good
 	err    error
@@ -39,13 +39,10 @@ func (j *job) run() {
 	var t Track
 	t.rest(j.model)
 	t.reset()
-	if !t.law.ordered {
-		j.sum(&t, all)
-		return
-	}
 	if j.err = orderTies(j.ledger, all); j.err != nil {
 		return
 	}
+	t.history = all
 	for i := range all {
 		t.extend(&all[i])
 		if i%trimEvery == 0 {
@@ -58,22 +55,6 @@ func (j *job) run() {
 // trimEvery is how many rows a rebuild folds before it lets go of those that are
 // stored.
 const trimEvery = 4_096
-
-// sum folds where the order doesn't matter: what is no longer in memory makes
-// the mark, and the recent rows stay.
-func (j *job) sum(t *Track, all []entry) {
-	recent := make(map[Position]struct{}, len(j.recent))
-	for i := range j.recent {
-		recent[j.recent[i].Position] = struct{}{}
-	}
-	for i := range all {
-		t.fold.add(&t.law, &all[i].Row)
-		if _, in := recent[all[i].Position]; !in {
-			t.marks[0].add(&t.law, &all[i].Row)
-		}
-	}
-	j.fold, j.rows, j.marks = t.fold, slices.Clip(j.recent), t.marks
-}
 
 // loadEntries returns, by time, the readings of a quantity up to a ledger
 // position, of which there are count: those in the ledger's complete

@@ -100,6 +100,9 @@ func (k *Keeper) changeRenewals(ctx context.Context, id QuantityID, receive Inst
 		if r == nil || err != nil {
 			return err
 		}
+		if sentence := k.objectionToReadings(&t.decided.Declaration, 1, &t.decidedTally, t.decidedUsed); sentence != "" && !r.Withdrawn {
+			return refuse(NotSupported, "id", "quantity %q can't be renewed: with renewals %s", t.id, sentence)
+		}
 		q, recorded := *t.decided, *r
 		q.Renewals = t.decided.withRenewal(recorded)
 		t.decide(&q)
@@ -145,8 +148,6 @@ func (d *Declaration) checkRenewals(renewals []Renewal) error {
 	}
 	r := &renewals[0]
 	switch {
-	case d.Repeatability.Learned():
-		return refuse(NotSupported, "repeatability.learned", "repeatability.learned is not supported together with renewals, such as that of %v; give repeatability.standard_deviation", r.Time)
 	case d.Prior.HasTime && r.Time < d.Prior.Time:
 		return refuse(InvalidField, "prior.time", "prior.time %v is after the renewal of %v; give that time or an earlier one", d.Prior.Time, r.Time)
 	}

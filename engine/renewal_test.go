@@ -81,7 +81,6 @@ func TestRenewalIsChecked(t *testing.T) {
 		change func(*engine.Renewal)
 	}{
 		{"stranger", "id", func(*engine.Renewal) {}},
-		{"learned", "repeatability.learned", func(*engine.Renewal) {}},
 		{gapID, "time", func(r *engine.Renewal) { r.Time = seconds(100 + 301) }},
 		{gapID, "prior.time", func(r *engine.Renewal) { r.Time = seconds(-1) }},
 		{gapID, "prior.time", func(r *engine.Renewal) { r.Prior.HasTime = true }},

@@ -6,39 +6,80 @@ import (
 	"fmt"
 	"math"
 
+	"leadline.example/engine/modelcheck"
 	"leadline.example/engine/posterior"
 )
 
 // appendState encodes what a checkpoint keeps of a track. A track that is
-// being rebuilt is kept without a fold. Version 2 has what instruments and a joint
-// belief add; a track without either is written as version 1.
+// being rebuilt is kept without a fold.
 func (t *Track) appendState(b []byte) []byte {
-	version := byte(1)
-	if len(t.used) > 0 || t.fold.joint != nil {
-		version = stateVersion
+	b = append(b, stateVersion, flag(t.job != nil))
+	for _, n := range [...]int{t.tally.count, t.tally.bare, t.tally.direct, t.tally.censored, t.tally.averaged} {
+		b = binary.AppendUvarint(b, uint64(n))
 	}
-	b = append(b, version, flag(t.job != nil))
-	b = binary.AppendUvarint(b, uint64(t.tally.count))
-	b = binary.AppendUvarint(b, uint64(t.tally.bare))
-	b = binary.BigEndian.AppendUint64(b, math.Float64bits(t.tally.largest))
+	b = appendFloats(b, t.tally.largest, t.tally.least)
 	b = binary.AppendVarint(b, int64(t.tally.first))
 	b = binary.AppendVarint(b, int64(t.tally.last))
-	if version > 1 {
-		b = t.appendUses(b)
-	}
+	b = appendSteps(t.appendUses(b), t.steps)
 	if t.job != nil {
 		return b
 	}
-	f := &t.fold
-	b = binary.AppendUvarint(b, uint64(f.count))
-	b = binary.AppendVarint(b, int64(f.lastTime))
-	b = appendEntry(b, &t.last)
-	b = appendBlock(b, f.constant.AppendBinary(nil))
-	b = appendBlock(b, f.walk.AppendBinary(nil))
-	if version > 1 {
-		b = f.joint.append(b)
+	return t.fold.append(appendEntry(b, &t.last), t.basis.form)
+}
+
+// append encodes what is held in a form.
+func (f *fold) append(b []byte, held form) []byte {
+	b = append(b, byte(held), flag(f.linearised))
+	for _, n := range [...]int{f.count, f.since, f.renewed, int(f.last)} {
+		b = binary.AppendUvarint(b, uint64(n))
 	}
-	return b
+	b = binary.AppendVarint(b, int64(f.first))
+	b = binary.AppendVarint(b, int64(f.lastTime))
+	for _, n := range f.flagged {
+		b = binary.AppendUvarint(b, uint64(n))
+	}
+	b = binary.BigEndian.AppendUint64(b, math.Float64bits(f.outlier))
+	b = appendBlock(b, f.check.AppendBinary(nil))
+	switch held {
+	case sumForm:
+		return appendBlock(b, f.constant.AppendBinary(nil))
+	case walkForm:
+		return appendBlock(b, f.walk.AppendBinary(nil))
+	case jointForm:
+		return f.joint.append(b)
+	case countsForm:
+		return f.counts.append(b)
+	}
+	return f.bank.append(b)
+}
+
+// fold decodes what fold.append encoded.
+func (r *stateReader) fold() (f fold, held form) {
+	held = form(r.byte())
+	f.linearised = r.byte() == 1
+	f.count, f.since, f.renewed = int(r.uvarint()), int(r.uvarint()), int(r.uvarint())
+	f.last = InstrumentNumber(r.uvarint())
+	f.first, f.lastTime = Instant(r.varint()), Instant(r.varint())
+	for i := range f.flagged {
+		f.flagged[i] = int(r.uvarint())
+	}
+	f.outlier = r.float()
+	f.check = decodeBlock(r, modelcheck.DecodeTally)
+	switch held {
+	case sumForm:
+		f.constant = decodeBlock(r, posterior.DecodeConstant)
+	case walkForm:
+		f.walk = decodeBlock(r, posterior.DecodeWalk)
+	case jointForm:
+		f.joint = r.joint()
+	case countsForm:
+		f.counts = r.tallied()
+	case bankForm, gridForm:
+		f.bank = r.bank()
+	default:
+		r.err = fmt.Errorf("a belief of the unknown form %d", held)
+	}
+	return f, held
 }
 
 func appendEntry(b []byte, e *entry) []byte {
@@ -55,11 +96,20 @@ func appendEntry(b []byte, e *entry) []byte {
 	if e.Instrument != 0 {
 		flags |= 4
 	}
+	further := e.Extent != ExtentValue || e.Samples > 0
+	if further {
+		flags |= 8
+	}
 	b = append(b, flags)
 	b = binary.AppendUvarint(b, uint64(e.Position))
 	if e.Instrument != 0 {
 		b = binary.AppendUvarint(b, uint64(e.Instrument))
 		b = binary.BigEndian.AppendUint64(b, e.Occasion)
+	}
+	if further {
+		b = append(b, byte(e.Extent))
+		b = binary.BigEndian.AppendUint64(b, math.Float64bits(e.Upper))
+		b = binary.AppendUvarint(b, uint64(e.Samples))
 	}
 	return appendBlock(b, []byte(e.ID))
 }
@@ -69,7 +119,8 @@ func appendBlock(b, block []byte) []byte {
 }
 
 // decodeState fills t with an encoded state. rebuild tells that there is no
-// fold in it, or that it rests on instruments as they are no longer declared.
+// fold in it, or one of an earlier version, or that it rests on instruments as they are
+// no longer declared.
 func (t *Track) decodeState(b []byte, known []*instrumentTrack) (rebuild bool, err error) {
 	r := stateReader{rest: b}
 	version := r.byte()
@@ -77,23 +128,28 @@ func (t *Track) decodeState(b []byte, known []*instrumentTrack) (rebuild bool, e
 		return true, fmt.Errorf("state of quantity %q has version %d, not up to %d", t.id, version, stateVersion)
 	}
 	hollow, stale := r.byte() == 1, false
-	t.tally = tally{
-		count: int(r.uvarint()), bare: int(r.uvarint()), largest: r.float(),
-		first: Instant(r.varint()), last: Instant(r.varint()),
+	t.tally = tally{count: int(r.uvarint()), bare: int(r.uvarint())}
+	if version == stateVersion {
+		t.tally.direct, t.tally.censored, t.tally.averaged = int(r.uvarint()), int(r.uvarint()), int(r.uvarint())
 	}
+	t.tally.largest = r.float()
+	if version == stateVersion {
+		t.tally.least = r.float()
+	}
+	t.tally.first, t.tally.last = Instant(r.varint()), Instant(r.varint())
 	if version > 1 {
-		t.used, stale = r.uses(known)
+		t.used, stale = r.uses(version, known)
+	}
+	if version == stateVersion {
+		t.steps = r.steps()
+	}
+	if version < stateVersion { // which say nothing of how readings agreed with the model
+		t.recount = true
+		return true, r.err
 	}
 	if !hollow {
-		f := &t.fold
-		f.count = int(r.uvarint())
-		f.lastTime = Instant(r.varint())
 		t.last = r.entry()
-		f.constant = decodeBlock(&r, posterior.DecodeConstant)
-		f.walk = decodeBlock(&r, posterior.DecodeWalk)
-		if version > 1 {
-			f.joint = r.joint()
-		}
+		t.fold, t.held = r.fold()
 	}
 	if r.err == nil && len(r.rest) > 0 {
 		r.err = errors.New("trailing bytes")
@@ -165,6 +221,9 @@ func (r *stateReader) entry() entry {
 	if flags&4 != 0 {
 		e.Instrument = InstrumentNumber(r.uvarint())
 		e.Occasion = binary.BigEndian.Uint64(r.take(8))
+	}
+	if flags&8 != 0 {
+		e.Extent, e.Upper, e.Samples = Extent(r.byte()), r.float(), uint32(r.uvarint())
 	}
 	e.ID = ReadingID(r.block())
 	return e

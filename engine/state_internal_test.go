@@ -3,6 +3,8 @@ package engine
 import (
 	"bytes"
 	"testing"
+
+	"leadline.example/engine/modelcheck"
 )
 
 // Any text is an error or a state that encodes to the same text again, and
@@ -13,9 +15,16 @@ func FuzzDecodeState(f *testing.F) {
 		Calibrations:  []Calibration{{Bias: 1, BiasStandardUncertainty: 0.5, Reference: "block", CommonStandardUncertainty: 0.1}},
 	}}
 	known := []*instrumentTrack{{number: 1, current: gauge}}
+	law := modelcheck.LawOf(modelcheck.Settings{})
+	modelOf := func(q *Quantity, instruments []*Instrument, r readAs) *model {
+		for _, i := range instruments {
+			r.instruments = append(r.instruments, instrumentUse{declaration: &i.Declaration})
+		}
+		return newModel(q, instruments, &r, law)
+	}
 	var t Track
 	t.quantity = &Quantity{}
-	t.rest(newModel(t.quantity, nil))
+	t.rest(modelOf(t.quantity, nil, readAs{}))
 	t.reset()
 	f.Add(t.appendState(nil))
 	t.fresh = []entry{{Row: Row{Time: 5, Value: 1.5, HasUncertainty: true, Uncertainty: 0.1, HasID: true, Position: 9}, ID: "r"}}
@@ -25,9 +34,18 @@ func FuzzDecodeState(f *testing.F) {
 		Dynamics:      Dynamics{Form: DynamicsRandomWalk, StandardDeviation: 1, Per: 1},
 		Repeatability: Repeatability{Form: RepeatabilityKnown, StandardDeviation: 1},
 	}}
-	for _, instruments := range [][]*Instrument{nil, {gauge}} {
-		t.rest(newModel(moving, instruments))
+	learned := &Quantity{Declaration: Declaration{
+		Dynamics:      moving.Declaration.Dynamics,
+		Repeatability: Repeatability{Form: RepeatabilityLearned, Guess: 1, Worth: 20},
+	}}
+	still := &Quantity{Declaration: Declaration{Repeatability: moving.Declaration.Repeatability}}
+	for _, m := range []*model{
+		modelOf(moving, nil, readAs{}), modelOf(moving, []*Instrument{gauge}, readAs{}), modelOf(learned, nil, readAs{}),
+		modelOf(still, nil, readAs{censored: true}), modelOf(moving, nil, readAs{censored: true}), modelOf(learned, nil, readAs{censored: true}),
+	} {
+		t.rest(m)
 		t.reset()
+		instruments := m.instruments
 		r := Row{Time: 5, Value: 1.5, Instrument: InstrumentNumber(len(instruments)), Occasion: 7}
 		if t.used = nil; r.Instrument > 0 {
 			t.used, _ = addUse(nil, &r)
@@ -50,7 +68,9 @@ func FuzzDecodeState(f *testing.F) {
 			if len(t.used) > 0 {
 				named = append(named, gauge)
 			}
-			t.rest(newModel(moving, named))
+			m := modelOf(moving, named, readAs{})
+			m.form = t.held
+			t.rest(m)
 		}
 		rest(&first)
 		again := first.appendState(nil)

@@ -40,10 +40,8 @@ type traits struct {
 	log      bool
 	errors   Errors
 	changes  bool // there are renewals, or steps widen the level
+	further  bool // readings are under several calibrations
 }
-
-// gaussian tells whether readings are normal given the level and r.
-func (t *traits) gaussian() bool { return !t.display && !t.censored && !t.outliers }
 
 // Supported is a row of SupportTable: what a method serves, and its error bound.
 type Supported struct {
@@ -80,7 +78,8 @@ var SupportTable = []Supported{
 	},
 	{
 		Method: MethodCounts, Dynamics: []DynamicsForm{DynamicsConstant}, Learned: 1, Instruments: true, Errors: OneBias, Displays: true, Floor: true,
-		Bound: "z to 0.03, mean to 1 % and standard deviation to 3 % of the exact standard deviation",
+		Bound:        "z to 0.03, mean to 1 % and standard deviation to 3 % of the exact standard deviation",
+		reservations: func(t *traits) bool { return t.further },
 	},
 	{
 		Method: MethodGrid, Dynamics: []DynamicsForm{DynamicsConstant, DynamicsRandomWalk, DynamicsMeanReverting},
@@ -145,7 +144,7 @@ var relaxations = []relaxation{
 		return was
 	}, "dynamics.random_walk"},
 	{"instrument", func(t *traits) bool {
-		was := t.errors > OneBias && !t.log
+		was := t.errors > OneBias
 		if was {
 			t.errors = OneBias
 		}
@@ -179,18 +178,36 @@ func (t *traits) objection() (field, sentence string) {
 	if t.method() != "" {
 		return "", ""
 	}
-	for i, first := range relaxations {
-		if near := *t; first.change(&near) && near.method() != "" {
-			return first.field, t.unsupported(first.remedy)
-		}
-		for _, second := range relaxations[:i] {
-			near := *t
-			if first.change(&near) && second.change(&near) && near.method() != "" {
-				return first.field, t.unsupported(second.remedy + " and " + first.remedy)
+	for changes := 1; changes <= len(relaxations); changes++ {
+		if r := t.relaxed(0, changes); r != nil {
+			var remedies []string
+			for _, i := range r {
+				remedies = append(remedies, relaxations[i].remedy)
 			}
+			return relaxations[r[len(r)-1]].field, t.unsupported(strings.Join(remedies, " and "))
 		}
 	}
 	return "dynamics", t.unsupported("dynamics.constant with values alone")
+}
+
+// relaxed returns relaxations from an index on, of that number, that make t supported; nil if
+// there are none.
+func (t *traits) relaxed(from, number int) []int {
+	for i := from; i < len(relaxations); i++ {
+		near := *t
+		if !relaxations[i].change(&near) {
+			continue
+		}
+		if number == 1 && near.method() != "" {
+			return []int{i}
+		}
+		if number > 1 {
+			if others := near.relaxed(i+1, number-1); others != nil {
+				return append([]int{i}, others...)
+			}
+		}
+	}
+	return nil
 }
 
 func (t *traits) unsupported(nearest string) string {
@@ -199,7 +216,7 @@ func (t *traits) unsupported(nearest string) string {
 
 // words names what t combines.
 func (t *traits) words() string {
-	all := []string{"dynamics " + [...]string{"constant", "random_walk", "linear_trend", "mean_reverting"}[t.dynamics]}
+	all := []string{"dynamics " + dynamicsWord(t.dynamics)}
 	for _, w := range []struct {
 		has  bool
 		word string
@@ -218,11 +235,16 @@ func (t *traits) words() string {
 	return strings.Join(all[:len(all)-1], ", ") + " and " + all[len(all)-1]
 }
 
+// dynamicsWord is how the interface calls dynamics.
+func dynamicsWord(d DynamicsForm) string {
+	return [...]string{"constant", "random_walk", "linear_trend", "mean_reverting"}[d]
+}
+
 // instrumentUse is an instrument as readings of a quantity used it.
 type instrumentUse struct {
 	declaration     *InstrumentDeclaration
-	bare            int     // readings without an uncertainty of their own
 	lowest, highest float64 // values
+	first, last     Instant
 }
 
 // readAs is what a quantity's readings amount to for the choice of a method.
@@ -253,6 +275,7 @@ func traitsOf(d *Declaration, renewals int, r *readAs) traits {
 		}
 		t.display = t.display || u.displays(d)
 		m := u.declaration.MeasuringInterval
+		t.further = t.further || u.declaration.at(u.first) != u.declaration.at(u.last)
 		t.censored = t.censored || m.HasUpper && u.highest > m.Upper || m.HasLower && u.lowest < m.Lower
 	}
 	t.learned = own

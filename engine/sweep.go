@@ -193,7 +193,7 @@ func (k *Keeper) finalCheckpoint() error {
 // Versions of the texts that are opaque to the ledger. One that changes keeps
 // the decoder of the versions before it.
 const (
-	stateVersion   = 2
+	stateVersion   = 3
 	summaryVersion = 1
 )
 

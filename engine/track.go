@@ -17,14 +17,13 @@ const markSpacing = 16
 // Track is one quantity's place in the keeper. All but its View belongs to the
 // keeper's goroutine.
 //
-// The rows of an ordered track are, from markFrom on, a canonical run that ends
+// The rows are, from markFrom on, a canonical run that ends
 // with the latest reading, and marks[i] is the fold of everything before
 // rows[markFrom + i*markSpacing]; so a reading that comes late, but not before
 // marks[0], costs one merge and a short refold. The obvious way, to fold on
 // arrival, would make the belief depend on the order of arrival; refolding
 // everything would make a late reading cost as much as the quantity's whole
-// life. Where the order doesn't matter, rows are in order of arrival and marks[0], the only one, is the fold of
-// all that is not in rows[markFrom:].
+// life.
 type Track struct {
 	id     QuantityID
 	number QuantityNumber
@@ -48,18 +47,24 @@ type Track struct {
 	used     []use // of instruments, by number
 	fold     fold
 	foldedTo Position
-	last     entry // the latest of an ordered track, in canonical order
+	last     entry // the latest in canonical order
 	rows     []entry
 	marks    []fold
 	markFrom int
 	behind   entry // the latest reading in marks[0]
 
-	fresh         []entry   // late ones of the group being folded
-	touched       bool      // in the group being folded
-	job           *job      // the rebuild under way or waiting; rows behind job.recent then stand in order of arrival
-	saved         Position  // the last record that its checkpoint includes
-	savedQuantity *Quantity // as in its checkpoint
-	hollow        bool      // restored without a fold
+	history       []entry        // in a rebuild: all readings in canonical order
+	steps         []RecordedStep // published, oldest first; appended to only
+	decidedStep   Instant        // of the newest one decided to be
+	fresh         []entry        // late ones of the group being folded
+	touched       bool           // in the group being folded
+	job           *job           // the rebuild under way or waiting; rows behind job.recent then stand in order of arrival
+	saved         Position       // the last record that its checkpoint includes
+	savedQuantity *Quantity      // as in its checkpoint
+	hollow        bool           // restored without a fold
+	recount       bool           // restored without all that its tally has now
+	held          form           // of the fold restored
+	outgrown      bool           // the fold needs all readings again, which aren't at hand
 }
 
 // rules is what a declaration asks of readings, close together because a batch
@@ -71,7 +76,7 @@ type rules struct {
 	prior         posterior.Prior
 	retired       bool
 	needsOwnNoise bool // no repeatability is declared
-	learned       bool // it is learned
+	log           bool // the scale is logarithmic
 	revision      uint32
 }
 
@@ -82,7 +87,7 @@ func (t *Track) decide(q *Quantity) {
 	t.rules = rules{
 		unit: d.Unit, scale: d.Repeatability.scale(), priorTime: MinInstant, retired: q.Retired,
 		needsOwnNoise: d.Repeatability.Form == RepeatabilityAbsent, revision: q.Revision,
-		prior: d.levelPrior(), learned: d.Repeatability.Learned(),
+		prior: d.levelPrior(), log: d.Scale == ScaleLog,
 	}
 	if d.Prior.HasTime {
 		t.rules.priorTime = d.Prior.Time
@@ -94,22 +99,47 @@ func (t *Track) decide(q *Quantity) {
 type tally struct {
 	count       int
 	bare        int     // without an uncertainty of their own or an instrument's
+	direct      int     // without an instrument
+	censored    int     // that don't say a value
+	averaged    int     // means of several indications
 	largest     float64 // magnitude
+	least       float64 // of what is to have a logarithm
 	first, last Instant
 }
 
 func (a *tally) add(r *Row) {
+	a.note(r)
+	a.count++
+}
+
+// note is add without the count.
+func (a *tally) note(r *Row) {
 	if a.count == 0 || r.Time < a.first {
 		a.first = r.Time
 	}
 	if a.count == 0 || r.Time > a.last {
 		a.last = r.Time
 	}
-	a.count++
-	if !r.HasUncertainty && r.Instrument == 0 {
-		a.bare++
+	if r.Instrument == 0 {
+		a.direct++
+		if !r.HasUncertainty {
+			a.bare++
+		}
 	}
-	a.largest = max(a.largest, math.Abs(r.Value))
+	if r.Extent != ExtentValue {
+		a.censored++
+	}
+	if r.Samples > 1 {
+		a.averaged++
+	}
+	a.largest = max(a.largest, math.Abs(r.Value), math.Abs(r.Upper))
+	least := r.Value
+	if r.Extent == ExtentBetween {
+		least = r.Upper
+	}
+	if a.count == 0 || least < a.least {
+		a.least = least
+	}
 }
 
 // ID returns the quantity's ID.
@@ -126,7 +156,7 @@ func (t *Track) publish(change uint64) {
 		Rebuilding: t.job != nil,
 		track:      t, applied: t.tally.count,
 		basis: t.basis, fold: t.fold.copied(), foldedTo: t.foldedTo,
-		rows: t.rows, marks: t.marks, markFrom: t.markFrom,
+		rows: t.rows, marks: t.marks, markFrom: t.markFrom, steps: t.steps,
 	})
 }
 
@@ -140,6 +170,7 @@ func (t *Track) reset() {
 	t.fold, t.last, t.behind = fold{}, entry{}, entry{}
 	t.rows, t.markFrom = nil, 0
 	t.marks = []fold{{}}
+	t.outgrown = false
 }
 
 // settle folds the fresh readings in, as long as that takes at most budget
@@ -153,11 +184,6 @@ func (t *Track) settle(budget int) (steps int, ok bool) {
 		return 0, true
 	case t.job != nil:
 		t.rows = append(t.rows, fresh...)
-		return 0, true
-	case !t.law.ordered:
-		for i := range fresh {
-			t.extend(&fresh[i])
-		}
 		return 0, true
 	}
 	first := fresh[0].Position
@@ -176,7 +202,15 @@ func (t *Track) settle(budget int) (steps int, ok bool) {
 	return steps, ok
 }
 
-// follows tells whether e comes after all readings of an ordered track.
+// growBudget is how many readings are folded again at once, in milliseconds.
+func (m *model) growBudget() int {
+	if m.form == gridForm {
+		return 16
+	}
+	return 256
+}
+
+// follows tells whether e comes after all readings.
 func (t *Track) follows(e *entry) bool {
 	return t.fold.count == 0 || !t.last.tiesNameless(e) && compareEntries(&t.last, e) <= 0
 }
@@ -184,23 +218,38 @@ func (t *Track) follows(e *entry) bool {
 // add takes one durable reading: it folds it at once if that is right without
 // a merge, else keeps it for settle.
 func (t *Track) add(e *entry) {
-	if t.job == nil && len(t.fresh) == 0 && (!t.law.ordered || t.follows(e)) {
+	if t.job == nil && len(t.fresh) == 0 && t.follows(e) {
 		t.extend(e)
 		return
 	}
 	t.fresh = append(t.fresh, *e)
 }
 
-// extend appends and folds a row; on an ordered track it follows all others.
+// extend appends and folds a row, which follows all others.
 func (t *Track) extend(e *entry) {
-	if t.law.ordered {
-		if len(t.rows)-t.markFrom == len(t.marks)*markSpacing {
-			t.marks = append(t.marks, t.fold.copied())
-		}
-		t.last = *e
+	if len(t.rows)-t.markFrom == len(t.marks)*markSpacing {
+		t.marks = append(t.marks, t.fold.copied())
 	}
+	t.last = *e
 	t.fold.add(&t.law, &e.Row)
 	t.rows = append(t.rows, *e)
+	if !t.outgrown && t.fold.outgrown(t.law.model) {
+		t.grow()
+	}
+}
+
+// grow folds all readings again, at nodes that fit what they have come to, if they are few
+// and at hand; else they are left to a rebuild.
+func (t *Track) grow() {
+	rows := t.history
+	if rows == nil {
+		if t.marks[0].count > 0 || len(t.rows)-t.markFrom > t.law.model.growBudget() {
+			t.outgrown = true
+			return
+		}
+		rows = t.rows[t.markFrom:]
+	}
+	t.fold.bank.replace(t.law.model, rows[:t.fold.count])
 }
 
 // insert merges rows of which the first is late. The slices that Views share
@@ -271,10 +320,6 @@ func (t *Track) trim(stored Position) {
 	if t.job != nil || len(t.rows) < minTrim {
 		return
 	}
-	if !t.law.ordered {
-		t.trimSum(stored)
-		return
-	}
 	n := 0
 	for n < len(t.rows) && t.rows[n].Position <= stored {
 		n++
@@ -293,24 +338,4 @@ func (t *Track) trim(stored Position) {
 	t.rows = append(make([]entry, 0, len(kept)+markSpacing), kept...)
 	t.marks = slices.Clone(t.marks[mark:])
 	t.markFrom = 0
-}
-
-// trimSum is trim where the order doesn't matter: the mark takes in the rows
-// that go.
-func (t *Track) trimSum(stored Position) {
-	if !slices.ContainsFunc(t.rows, func(e entry) bool { return e.Position <= stored }) {
-		return
-	}
-	base, rows, from := t.marks[0].copied(), []entry(nil), t.markFrom
-	for i := range t.rows {
-		switch e := &t.rows[i]; {
-		case e.Position > stored:
-			rows = append(rows, *e)
-		case i < from:
-			t.markFrom--
-		default:
-			base.add(&t.law, &e.Row)
-		}
-	}
-	t.rows, t.marks = rows, []fold{base}
 }

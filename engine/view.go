@@ -25,6 +25,7 @@ type View struct {
 	rows     []entry // the applied readings that need not be in storage yet
 	marks    []fold  // as in Track
 	markFrom int
+	steps    []RecordedStep
 	still    atomic.Pointer[Figures] // of a belief that time doesn't move, once asked for
 }
 

@@ -106,7 +106,7 @@ func (c *Counts) count(o outcome) {
 	}
 	c.others++
 	if 2*len(c.seen) >= len(c.slots) {
-		c.grow()
+		c.place()
 	}
 	i := c.find(o)
 	if c.slots[i] == 0 {
@@ -136,28 +136,14 @@ func (o *outcome) hash() uint64 {
 	return h ^ h>>29
 }
 
-// grow makes room for twice the outcomes.
-func (c *Counts) grow() {
-	c.slots = make([]uint32, max(8, 2*len(c.slots)))
+// place makes the hash anew, with room for as many outcomes again.
+func (c *Counts) place() {
+	size := 8
+	for size < 4*len(c.seen) {
+		size *= 2
+	}
+	c.slots = make([]uint32, size)
 	for i := range c.seen {
 		c.slots[c.find(c.seen[i].outcome)] = uint32(i + 1)
 	}
-}
-
-// sorted returns the tallies in ascending order, so that sums over them don't depend
-// on the order in which they came.
-func (c *Counts) sorted() []tally {
-	out := slices.Clone(c.seen)
-	slices.SortFunc(out, func(a, b tally) int {
-		for _, d := range [4]float64{a.Lower - b.Lower, a.Upper - b.Upper, a.sd - b.sd, a.samples - b.samples} {
-			if d < 0 {
-				return -1
-			}
-			if d > 0 {
-				return 1
-			}
-		}
-		return 0
-	})
-	return out
 }

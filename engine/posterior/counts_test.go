@@ -120,16 +120,15 @@ func TestCountsAgainstIntegration(t *testing.T) {
 }
 
 // points returns how many points of eta and panels of ln r the oracle needs: a density
-// that a display cuts out has edges as wide as r.
+// that a display or a limit cuts out of something wide has edges as wide as r.
 func points(q *question) (eta, panels int) {
-	width, r := 0.0, q.noise.SD+q.noise.Guess+q.noise.Floor
+	wide, r := q.prior.SD, q.noise.SD+q.noise.Guess+q.noise.Floor
 	for _, s := range q.readings {
 		if w := s.y.Upper - s.y.Lower; !math.IsInf(w, 0) {
-			width = math.Max(width, w)
+			wide = math.Max(wide, w)
 		}
 	}
-	n := 401 + 2*int(math.Min(1800, 40*width/r))
-	return n, 10
+	return 1201 + 2*int(math.Min(2400, 60*wide/r)), 12
 }
 
 // checkQuestion holds a posterior against the oracle.

@@ -292,6 +292,9 @@ func (f *Filter) Diffuse(state int, variance float64) { f.moves[state].Diffusion
 // Widen has a state after level and slope gain a variance at once, by its movement.
 func (f *Filter) Widen(state int, variance float64) { f.evolve(state, 1, variance) }
 
+// WidenLevel has the level gain a variance at once, unless that is infinite.
+func (f *Filter) WidenLevel(variance float64) { f.walk(variance, 0) }
+
 // forget leaves a state out of the covariance.
 func (f *Filter) forget(k int) {
 	f.split(k, 0, f.d[k])

@@ -1,13 +1,35 @@
 package posterior
 
+import "math"
+
 // Update takes in a reading
 //
 //	y = offset + levelCoefficient level + sum of coefficient state + e,  e ~ N(0, variance)
 //
 // with variance above 0 and levelCoefficient other than 0. Terms name states after
 // the level, each at most once, and aren't kept.
-func (f *Filter) Update(y, offset, levelCoefficient float64, terms []Term, variance float64) {
-	f.UpdateFrom(y, offset, levelCoefficient, terms, White{Variance: variance})
+func (f *Filter) Update(y, offset, levelCoefficient float64, terms []Term, variance float64) Surprise {
+	return f.UpdateFrom(y, offset, levelCoefficient, terms, White{Variance: variance})
+}
+
+// Surprise is how far a reading was off what those before foretold, and the variance of
+// that by the model: 0 where nothing was foretold.
+type Surprise struct{ Innovation, Variance float64 }
+
+// Score returns the innovation in standard deviations, N(0, 1) under the model, and whether
+// anything was foretold.
+func (s Surprise) Score() (z float64, ok bool) {
+	return s.Innovation / math.Sqrt(s.Variance), s.Variance > 0
+}
+
+// LogDensity returns the logarithm of the density of the reading, given those before;
+// 0 where nothing was foretold, as the first reading of a flat level has the same
+// density whatever its noise (Harvey 1989, 3.4, prediction error decomposition, from memory).
+func (s Surprise) LogDensity() float64 {
+	if s.Variance == 0 {
+		return 0
+	}
+	return -(s.Innovation*s.Innovation/s.Variance + math.Log(2*math.Pi*s.Variance)) / 2
 }
 
 // White is the noise of one reading: its variance at the level as predicted, the
@@ -24,7 +46,7 @@ type White struct {
 
 // UpdateFrom is Update with a noise that may depend on the level. Then the reading
 // says something of the level by how far it is off, too, see lean.
-func (f *Filter) UpdateFrom(y, offset, levelCoefficient float64, terms []Term, white White) {
+func (f *Filter) UpdateFrom(y, offset, levelCoefficient float64, terms []Term, white White) Surprise {
 	variance := white.Variance
 	h := f.space[:f.n]
 	clear(h)
@@ -36,7 +58,7 @@ func (f *Filter) UpdateFrom(y, offset, levelCoefficient float64, terms []Term, w
 	h[0] = levelCoefficient
 	if f.vague {
 		f.settle(white.Label, innovation, h, variance)
-		return
+		return Surprise{}
 	}
 	innovation = innovation.minus(f.mean[0].pair().times(levelCoefficient))
 	var before regression
@@ -57,6 +79,7 @@ func (f *Filter) UpdateFrom(y, offset, levelCoefficient float64, terms []Term, w
 	if white.grows() {
 		f.lean(&before, white)
 	}
+	return Surprise{innovation.value(), total}
 }
 
 // weigh updates the covariance by a reading with coefficients h, of which only the

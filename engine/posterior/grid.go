@@ -93,7 +93,7 @@ func (g *Grid) revert(left, variance float64) {
 		g.field = normalLattice(about, math.Sqrt(variance))
 		return
 	}
-	g.field.shrink(about, math.Max(left, forgetting))
+	g.field.shrink(about, max(left, forgetting))
 	g.field.spread(variance)
 }
 
@@ -125,13 +125,24 @@ func (g *Grid) Update(y Indication, noise Spread) Evidence {
 	}
 	e := Evidence{Log: g.field.normalise()}
 	if noise.OutlierProbability > 0 {
-		shift := g.field.origin.Minus(origin)
-		for i, v := range g.field.logs {
-			e.Outlier += math.Exp(v) * k.outlier(g.field.x(i)+shift)
-		}
-		e.Outlier *= g.field.step
+		e.Outlier = g.field.outlying(&k, g.field.origin.Minus(origin))
 	}
 	return e
+}
+
+// outlying returns the probability that the reading just taken in was an outlier; its
+// likelihood is seen from an origin less a shift.
+func (l *lattice) outlying(k *likelihood, shift float64) float64 {
+	stride, top := k.stride(l.step), l.highest()
+	for stride > 1 && !l.resolves(stride, top) {
+		stride /= 2
+	}
+	var m moments
+	for i := 0; i < len(l.logs); i += stride {
+		m.add(math.Exp(l.logs[i]-top), k.outlier(l.x(i)+shift), 0)
+	}
+	p, _ := m.about(0)
+	return p
 }
 
 // observed returns the field after a reading.

@@ -57,10 +57,11 @@ func (f *foreteller) tails(y, sd float64) (below, above float64) {
 		}
 		return below, above
 	}
+	stride := f.stride(sd, f.highest())
 	l := f.reaching(y, sd)
-	for i, v := range l.logs {
+	for i := 0; i < len(l.logs); i += stride {
 		z := (y - l.x(i)) / sd
-		small, p := math.Erfc(math.Abs(z)*sqrtHalf.hi)/2, math.Exp(v)*l.step
+		small, p := math.Erfc(math.Abs(z)*sqrtHalf.hi)/2, math.Exp(l.logs[i])*l.step*float64(stride)
 		if z < 0 {
 			below, above = below+p*small, above+p*(1-small)
 		} else {
@@ -78,7 +79,7 @@ func (f *foreteller) reaching(y, sd float64) *lattice {
 	if y >= lo && y <= hi {
 		return l
 	}
-	far := math.Max(lo-y, y-hi)
-	s := l.stretch(int(math.Min(far/l.step, mostPoints)), -700)
+	far := max(lo-y, y-hi)
+	s := l.stretch(int(min(far/l.step, mostPoints)), -700)
 	return &s
 }

@@ -8,8 +8,8 @@ import (
 // How a lattice is laid.
 const (
 	// depthKept is how far below its highest value a log density is tabulated: to
-	// 9.5 standard deviations of a normal one.
-	depthKept = 45
+	// 8.9 standard deviations of a normal one.
+	depthKept = 40
 	// depthServed is how far below it shall be exact: e^-30 is beyond what a tail of
 	// 1e-9 rests on.
 	depthServed = 30
@@ -112,8 +112,8 @@ func (l *lattice) end(s side) parabola {
 	}
 	one, two := l.logs[last-int(s)*apart], l.logs[last-2*int(s)*apart]
 	h := float64(apart) * l.step
-	p.curvature = math.Min(0, (p.value-2*one+two)/h/h)
-	outward := math.Min((p.value-one)/h+p.curvature*h/2, 0)
+	p.curvature = min(0, (p.value-2*one+two)/h/h)
+	outward := min((p.value-one)/h+p.curvature*h/2, 0)
 	p.slope = float64(s) * outward
 	return p
 }
@@ -183,11 +183,19 @@ func (l *lattice) biasAt(x float64) (mean, variance float64) {
 		return l.mean[i], l.variance[i]
 	}
 	v := interpolate(l.variance, i, f)
-	return interpolate(l.mean, i, f), math.Max(v, math.Min(l.variance[i], l.variance[i+1]))
+	return interpolate(l.mean, i, f), max(v, min(l.variance[i], l.variance[i+1]))
 }
 
 // highest returns the highest log density at a point.
-func (l *lattice) highest() float64 { return slices.Max(l.logs) }
+func (l *lattice) highest() float64 {
+	top := l.logs[0]
+	for _, v := range l.logs[1:] {
+		if v > top {
+			top = v
+		}
+	}
+	return top
+}
 
 // normalise makes the sum over the points times the step 1, and returns the
 // logarithm of what it was.
@@ -274,15 +282,18 @@ func (l *lattice) served(top, depth float64) (i, j int) {
 const settled = 1e-13
 
 // trim leaves out what lies too deep, halves the number of points while there are
-// far more than needed, and moves the origin if it is far.
+// more than needed, doubles it while there are too few, and moves the origin if it is far.
 func (l *lattice) trim() {
 	top := l.highest()
 	l.cut(l.served(top, depthKept))
 	for depth := depthKept - 3.0; len(l.logs) > mostPoints && depth >= depthServed; depth -= 3 {
 		l.cut(l.served(top, depth))
 	}
-	for len(l.logs) > mostPoints || len(l.logs) > 2*fewestPoints+128 && l.resolves(2, top) {
+	for len(l.logs) > mostPoints || len(l.logs) > 2*fewestPoints+64 && l.resolves(2, top) {
 		l.thin()
+	}
+	for l.proper() && len(l.logs) < fewestPoints {
+		l.densify()
 	}
 	if centre := l.first + len(l.logs)/2; centre > 1<<20 || centre < -1<<20 {
 		l.origin = l.origin.Plus(float64(centre) * l.step)
@@ -301,6 +312,27 @@ func (l *lattice) thin() {
 		if l.mean != nil {
 			b.mean[i], b.variance[i] = l.mean[start+2*i], l.variance[start+2*i]
 		}
+	}
+	*l = b
+}
+
+// densify halves the step.
+func (l *lattice) densify() {
+	b := l.bare(2*l.first, 2*len(l.logs)-1)
+	b.step /= 2
+	fill := func(from, to []float64) {
+		for i, v := range from {
+			to[2*i] = v
+			if i > 0 {
+				to[2*i-1] = interpolate(from, i-1, 0.5)
+			}
+		}
+	}
+	fill(l.logs, b.logs)
+	fill(l.mean, b.mean)
+	fill(l.variance, b.variance)
+	for i, v := range b.variance {
+		b.variance[i] = max(0, v)
 	}
 	*l = b
 }

@@ -14,7 +14,7 @@ func (g *Grid) level() lattice {
 	}
 	line := g.field.line()
 	if line.straight || !line.wide {
-		left := math.Max(1-line.slope, 1e-14)
+		left := max(1-line.slope, 1e-14)
 		l.shrink(l.origin.Plus(line.at), left)
 		l.origin = l.origin.Plus(-line.mean)
 		l.spread(line.variance)
@@ -83,7 +83,7 @@ func (l *lattice) differences() lattice {
 		for i, c := range centres {
 			sum += masses[i] * math.Exp(-(x-c)*(x-c)*rates[i])
 		}
-		return top + math.Log(math.Max(sum, math.SmallestNonzeroFloat64))
+		return top + math.Log(max(sum, math.SmallestNonzeroFloat64))
 	}}
 	b := lattice{origin: l.origin, step: powerOfTwo(math.Sqrt(variance) / 14), open: l.open}
 	reach := math.Sqrt(2*depthKept*variance) + b.step

@@ -53,7 +53,7 @@ func (l *lattice) lump() {
 	b.step *= 2
 	for i := range b.logs {
 		k := at + 2*i
-		top := math.Max(s.logs[k], math.Max(s.logs[k-1], s.logs[k+1]))
+		top := max(s.logs[k], max(s.logs[k-1], s.logs[k+1]))
 		w := [3]float64{math.Exp(s.logs[k-1]-top) / 2, math.Exp(s.logs[k] - top), math.Exp(s.logs[k+1]-top) / 2}
 		b.logs[i] = top + math.Log((w[0]+w[1]+w[2])/2)
 		if s.mean != nil {
@@ -88,27 +88,45 @@ type source struct {
 	stride int
 	top    float64
 	mass   []float64 // times exp(-top), 0 between
+	reach  int       // how far away masses count
+}
+
+// stride returns how many points apart those may be that a sum with a normal density
+// of standard deviation sd, at least a step, is taken over: both together need resolve
+// their product only.
+func (l *lattice) stride(sd, top float64) int {
+	stride := 1
+	for 2*stride <= 64 && float64(2*stride)*l.step <= 0.8*sd && l.resolves(2*stride, top) {
+		stride *= 2
+	}
+	return stride
+}
+
+// source returns l, which ends at a depth, as what is spread by a variance q. What comes out
+// at x is made of what lies near x + q d ln p / dx.
+func (l *lattice) source(q float64, reach int) source {
+	top, sd := l.highest(), math.Sqrt(q)
+	s := source{lattice: l.stretch(reach, top-depthKept-depthServed), top: top, stride: l.stride(sd, top)}
+	s.mass = make([]float64, len(s.logs))
+	scale := float64(s.stride) * l.step / math.Sqrt(2*math.Pi*q)
+	for i := 0; i < len(s.logs); i += s.stride {
+		s.mass[i] = math.Exp(s.logs[i]-top) * scale
+	}
+	tilt := q / (l.step * l.step) * s.steepest(depthKept)
+	s.reach = int(min(tilt+7.5*sd/l.step+1, float64(len(s.logs)+2*reach)))
+	return s
 }
 
 // convolve adds a normal step of variance q, at least the square of the lattice's
 // step: the sum over points of their masses times the normal density. All terms
-// are positive, so tails keep their relative accuracy. The sum need
-// resolve only the product of both densities, so it is taken over every second,
-// fourth, ... point while these do; and what comes out is tabulated as coarsely as its
-// own width allows.
+// are positive, so tails keep their relative accuracy. What comes out is tabulated as
+// coarsely as its own width allows.
 func (l *lattice) convolve(q float64) {
-	top, sd := l.highest(), math.Sqrt(q)
+	sd := math.Sqrt(q)
 	reach := int(math.Ceil(10*sd/l.step)) + 8
-	s := source{lattice: l.stretch(reach, top-depthKept-depthServed), stride: 1, top: top}
-	for 2*s.stride <= 64 && float64(2*s.stride)*l.step <= 0.8*sd && l.resolves(2*s.stride, top) {
-		s.stride *= 2
-	}
-	s.mass = make([]float64, len(s.logs))
-	for i := 0; i < len(s.logs); i += s.stride {
-		s.mass[i] = math.Exp(s.logs[i]-top) * float64(s.stride) * l.step / math.Sqrt(2*math.Pi*q)
-	}
+	s := l.source(q, reach)
 	out := l.output(sd, reach)
-	kernel := normalKernel(l.step/sd, len(s.logs)+2*reach)
+	kernel := normalKernel(l.step/sd, s.reach+1)
 	offset := out.first*out.stride - s.first
 	s.fill(&out.lattice, kernel, offset, out.stride, out.inner, len(out.logs)-out.inner)
 	*l = out.lattice
@@ -126,7 +144,7 @@ type output struct {
 func (l *lattice) output(sd float64, reach int) output {
 	o := output{stride: 1}
 	width := math.Hypot(float64(len(l.logs))*l.step, 19*sd)
-	for float64(4*o.stride)*l.step <= sd && width > float64(2*o.stride*(fewestPoints+64))*l.step {
+	for float64(4*o.stride)*l.step <= sd && width > float64(o.stride*(fewestPoints+64))*l.step {
 		o.stride *= 2
 	}
 	low := floorDiv(l.first-reach, o.stride)
@@ -169,15 +187,15 @@ func (s *source) fill(out *lattice, kernel []float64, offset, stride, inner, out
 		return out.logs[i]
 	}
 	for i := inner; i < outer; i++ {
-		top = math.Max(top, at(i))
+		top = max(top, at(i))
 	}
 	low, high := inner, outer
 	for low > 0 && (out.open[0] || out.logs[low] > top-depthKept) {
 		low--
-		top = math.Max(top, at(low))
+		top = max(top, at(low))
 	}
 	for high < len(out.logs) && (out.open[1] || out.logs[high-1] > top-depthKept) {
-		top = math.Max(top, at(high))
+		top = max(top, at(high))
 		high++
 	}
 	out.cut(low, high)
@@ -185,22 +203,35 @@ func (s *source) fill(out *lattice, kernel []float64, offset, stride, inner, out
 
 // value tabulates the convolution at point i of out, which is at point k of s.
 func (s *source) value(out *lattice, i, k int, kernel []float64) {
-	lo := max(0, k-len(kernel)+1)
+	lo := max(0, k-s.reach)
 	lo += (s.stride - lo%s.stride) % s.stride
-	hi := min(len(s.mass), k+len(kernel))
+	hi := min(len(s.mass), k+s.reach+1)
 	if out.mean != nil {
 		s.mix(out, i, k, lo, hi, kernel)
 		return
 	}
-	sum, j := 0.0, lo
-	for ; j < hi && j <= k; j += s.stride {
-		sum += s.mass[j] * kernel[k-j]
+	// Sums apart, as each addition waits for the one before.
+	var even, odd float64
+	j, stride := lo, s.stride
+	for ; j+stride <= k && j+stride < hi; j += 2 * stride {
+		even += s.mass[j] * kernel[k-j]
+		odd += s.mass[j+stride] * kernel[k-j-stride]
 	}
-	for ; j < hi; j += s.stride {
-		sum += s.mass[j] * kernel[j-k]
+	for ; j < hi && j <= k; j += stride {
+		even += s.mass[j] * kernel[k-j]
 	}
-	out.logs[i] = s.top + math.Log(sum)
+	for ; j+stride < hi; j += 2 * stride {
+		even += s.mass[j] * kernel[j-k]
+		odd += s.mass[j+stride] * kernel[j+stride-k]
+	}
+	if j < hi {
+		even += s.mass[j] * kernel[j-k]
+	}
+	out.logs[i] = s.top + math.Log(max(even+odd, nothing))
 }
+
+// nothing stands for a sum that is too small for a double.
+const nothing = 1e-300
 
 // mix is value with the bias: given a point, it is a mixture of what it was given
 // those that the level may have come from, and held as the normal of the same mean and
@@ -211,7 +242,11 @@ func (s *source) mix(out *lattice, i, k, lo, hi int, kernel []float64) {
 	for j := lo; j < hi; j += s.stride {
 		m.add(s.mass[j]*kernel[max(k-j, j-k)], s.mean[j]-origin, s.variance[j])
 	}
-	out.logs[i] = s.top + math.Log(m.weight)
+	out.logs[i] = s.top + math.Log(max(m.weight, nothing))
+	if m.weight == 0 {
+		out.mean[i], out.variance[i] = origin, s.variance[min(max(k, 0), len(s.mean)-1)]
+		return
+	}
 	out.mean[i], out.variance[i] = m.about(origin)
 }
 
@@ -231,20 +266,20 @@ var (
 func (l *lattice) nudge(q float64) {
 	ratio := math.Sqrt(q) / l.step
 	parts := 1.0
-	if s := l.steepest() * ratio; s > 1 {
+	if s := l.steepest(depthServed) * ratio; s > 1 {
 		parts = math.Ceil(s * s)
 	}
-	for range int(math.Min(parts, 1000)) {
+	for range int(min(parts, 1000)) {
 		l.step7(ratio / math.Sqrt(parts))
 	}
 }
 
-// steepest returns the largest change between points of those that matter.
-func (l *lattice) steepest() float64 {
-	top, most := l.highest(), 0.0
+// steepest returns the largest change between points no deeper than that.
+func (l *lattice) steepest(depth float64) float64 {
+	floor, most := l.highest()-depth, 0.0
 	for i, v := range l.logs[1:] {
-		if v > top-depthServed {
-			most = math.Max(most, math.Abs(v-l.logs[i]))
+		if v > floor {
+			most = max(most, math.Abs(v-l.logs[i]))
 		}
 	}
 	return most
@@ -279,7 +314,7 @@ func (s *lattice) mixNear(out *lattice, i int, weights [5]float64, near, far int
 	means := [5]float64{m2[0], m1[0], 0, m1[1], m2[1]}
 	variances := [5]float64{v2[0], v1[0], 0, v1[1], v2[1]}
 	for k, w := range weights {
-		m.add(w, means[k], math.Max(0, variance[3]+variances[k]))
+		m.add(w, means[k], max(0, variance[3]+variances[k]))
 	}
 	out.mean[i], out.variance[i] = m.about(mean[3])
 }

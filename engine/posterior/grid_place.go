@@ -30,9 +30,6 @@ func (product *lattice) serves(l *lattice, k *likelihood) bool {
 	if !product.open[0] && v[0] > top-depthServed || !product.open[1] && v[len(v)-1] > top-depthServed || l.open != product.open {
 		return false
 	}
-	if i, j := product.served(top, depthKept); j-i < fewestPoints {
-		return false
-	}
 	for _, x := range k.beyond(l) {
 		if l.at(x)+k.log(x) > top-depthServed && !product.openAt(x) {
 			return false
@@ -73,7 +70,7 @@ func (l *lattice) place(k *likelihood, open [2]bool, known []float64) lattice {
 			break
 		}
 		if j-i < fewestPoints {
-			lo, hi = math.Max(lo, b.x(i-1)), math.Min(hi, b.x(j))
+			lo, hi = max(lo, b.x(i-1)), min(hi, b.x(j))
 		}
 	}
 	for len(b.logs) <= mostPoints && !b.resolves(1, b.highest()) {
@@ -108,7 +105,7 @@ func (p *placed) bracket(l *lattice, k *likelihood, known []float64) (lo, hi flo
 	})
 	top := lowest
 	for _, a := range all {
-		top = math.Max(top, a.log)
+		top = max(top, a.log)
 	}
 	i, j := 0, len(all)-1
 	for !p.open[0] && all[i].log < top-depthKept {

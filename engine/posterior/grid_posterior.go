@@ -74,9 +74,7 @@ func newDensity(l lattice) *density {
 	d.low, d.high = cells[:n:n], cells[n:]
 	d.low[0] = math.Exp(d.rest(lower, l.x(0)))
 	d.high[n-1] = math.Exp(d.rest(upper, l.x(n-1)))
-	for i := range n - 1 {
-		d.low[i+1] = d.inside(i, 0, 1)
-	}
+	d.cells(top, d.low[1:])
 	for i := n - 2; i >= 0; i-- {
 		d.high[i] = d.high[i+1] + d.low[i+1]
 	}
@@ -90,6 +88,32 @@ func newDensity(l lattice) *density {
 	d.total += math.Log(whole)
 	d.gather(top)
 	return d
+}
+
+// cells integrates between each point and the next, into out: the polynomial through the
+// densities at six points, which is off by 2e-6 where these change by less than exp(0.3)
+// from one to the next; where they change faster the rule of inside.
+func (d *density) cells(top float64, out []float64) {
+	n := len(d.logs)
+	p := make([]float64, n)
+	for i, v := range d.logs {
+		p[i] = math.Exp(v - top)
+	}
+	gentle := 0 // how many changes before were
+	for i := range n - 1 {
+		next := min(i+3, n-1)
+		if math.Abs(d.logs[next]-d.logs[next-1]) < 0.3 {
+			gentle++
+		} else {
+			gentle = 0
+		}
+		if i < 2 || i > n-4 || gentle < 5 {
+			out[i] = d.inside(i, 0, 1)
+			continue
+		}
+		w := p[i-2 : i+4 : i+4]
+		out[i] = (11*(w[0]+w[5]) - 93*(w[1]+w[4]) + 802*(w[2]+w[3])) / 1440 * d.step
+	}
 }
 
 // gather computes mean and standard deviation: sums over points, to which what lies beyond
@@ -165,7 +189,7 @@ func (d *density) tail(x float64, s side) float64 {
 	if math.IsInf(x, 0) {
 		return atInfinity(x, s)
 	}
-	return math.Min(1, math.Exp(d.logTail(LevelOf(x).Minus(d.origin), s)))
+	return min(1, math.Exp(d.logTail(LevelOf(x).Minus(d.origin), s)))
 }
 
 // atInfinity returns the tail beyond an infinite x.

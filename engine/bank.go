@@ -1,0 +1,319 @@
+package engine
+
+import (
+	"math"
+	"slices"
+	"time"
+
+	"leadline.example/engine/posterior"
+)
+
+// bank is a belief while r, a repeatability, is learned: one belief given r at each of some
+// nodes in ln r, with the weight that the readings give it. It also is what a belief
+// on points is held in when r is known, with a single node.
+//
+// Where the nodes ought to lie, the posterior of r says, which narrows as readings
+// come: a fixed grid would need hundreds. So nodes are placed on the posterior, and when that has
+// become too narrow for their distance, or has moved to their end, they
+// are placed anew and all readings folded again (replace). When that happens follows
+// from the readings in canonical order alone, so the belief still is a function of these.
+type bank struct {
+	nodes   []node
+	step    float64 // distance of the nodes in v
+	placed  int     // readings on which they were placed
+	count   int     // readings
+	widened []int   // counts after which the level was widened
+	wide    float64 // variance of that
+	learned spread
+}
+
+// spread is what bounds r from below: whether readings that teach it differ.
+type spread struct {
+	count       int
+	least, most float64
+}
+
+// node is what is held given r.
+type node struct {
+	v     float64 // see scale.r
+	prior float64 // ln of the prior's density in v
+	log   float64 // ln of the readings' density given r, up to what all nodes share
+	held  holder
+}
+
+// holder is a belief given r.
+type holder interface {
+	add(m *model, e *Row, r float64) heard
+	widen(variance float64)
+	// after returns the level at an instant without changing the holder.
+	after(m *model, at Instant) posterior.Posterior
+	// foresee returns the distribution of an indication at an instant.
+	foresee(m *model, at Instant, by *Instrument, r float64) posterior.Posterior
+	shared(m *model, at Instant, r float64) sharedBelief
+	clone() holder
+	append(b []byte) []byte
+}
+
+// heard is what a reading said, given r.
+type heard struct {
+	log          float64 // ln of its density or probability, given the readings before
+	foretold     bool
+	below, above float64 // probabilities that the indication would be beyond its ends
+	outlier      float64 // probability that it is an outlier
+}
+
+func (b *bank) clone() *bank {
+	if b == nil {
+		return nil
+	}
+	c := *b
+	c.nodes = slices.Clone(b.nodes)
+	for i := range c.nodes {
+		c.nodes[i].held = c.nodes[i].held.clone()
+	}
+	c.widened = slices.Clip(b.widened)
+	return &c
+}
+
+// addBank folds a reading into the bank.
+func (f *fold) addBank(l *law, e *Row) word {
+	m := l.model
+	if f.bank == nil {
+		f.bank = &bank{}
+		if s := m.scale(); s.proper {
+			f.bank.nodes = s.fromPrior()
+			f.bank.step = s.step
+			f.bank.start(m, e)
+		}
+	}
+	return f.bank.add(m, e)
+}
+
+// start gives each node the belief before any reading.
+func (b *bank) start(m *model, first *Row) {
+	for i := range b.nodes {
+		b.nodes[i].log, b.nodes[i].held = 0, m.holder(first)
+	}
+}
+
+// holder returns what is held before any reading.
+func (m *model) holder(first *Row) holder {
+	if m.form == gridForm {
+		return startCells(m, first)
+	}
+	return &lone{joint: startJoint(m, first.Time)}
+}
+
+// add folds a reading into every node.
+func (b *bank) add(m *model, e *Row) word {
+	b.count++
+	if m.teaches(e) {
+		b.learned.add(e.Value)
+	}
+	weights := b.weights()
+	s := m.scale()
+	said := word{foretold: len(b.nodes) > 0}
+	for i := range b.nodes {
+		n := &b.nodes[i]
+		h := n.held.add(m, e, s.r(n.v))
+		n.log += h.log
+		said.foretold = said.foretold && h.foretold
+		said.below += weights[i] * h.below
+		said.above += weights[i] * h.above
+		said.outlier += weights[i] * h.outlier
+	}
+	said.between = !m.indication(e).Exact()
+	return said
+}
+
+func (s *spread) add(y float64) {
+	if s.count == 0 {
+		s.least, s.most = y, y
+	}
+	s.least, s.most = min(s.least, y), max(s.most, y)
+	s.count++
+}
+
+// weights returns those of the nodes, which sum to 1.
+func (b *bank) weights() []float64 {
+	logs := b.logWeights()
+	top := slices.Max(append(logs, math.Inf(-1)))
+	sum := 0.0
+	for i, w := range logs {
+		logs[i] = math.Exp(w - top)
+		sum += logs[i]
+	}
+	for i := range logs {
+		logs[i] /= sum
+	}
+	return logs
+}
+
+func (b *bank) logWeights() []float64 {
+	logs := make([]float64, len(b.nodes), len(b.nodes)+1)
+	for i := range b.nodes {
+		logs[i] = b.nodes[i].prior + b.nodes[i].log
+	}
+	return logs
+}
+
+// widen lets the level be less known, at every node.
+func (b *bank) widen(variance float64) {
+	b.widened, b.wide = append(b.widened, b.count), variance
+	for i := range b.nodes {
+		b.nodes[i].held.widen(variance)
+	}
+}
+
+// level returns the distribution of the level at an instant.
+func (b *bank) level(m *model, at Instant) posterior.Posterior {
+	return b.blend(m, func(n *node) posterior.Posterior { return n.held.after(m, at) })
+}
+
+// blend mixes what the nodes say.
+func (b *bank) blend(m *model, say func(*node) posterior.Posterior) posterior.Posterior {
+	parts := make([]posterior.Posterior, len(b.nodes))
+	for i := range b.nodes {
+		parts[i] = say(&b.nodes[i])
+	}
+	p := posterior.Blend(b.logWeights(), parts)
+	if m.learns() != nil {
+		return p.WithoutExponentialMoments()
+	}
+	return p
+}
+
+// predictive returns the distribution of an indication at an instant, by an instrument or none.
+func (b *bank) predictive(m *model, at Instant, by *Instrument) posterior.Posterior {
+	if b == nil {
+		b = &bank{}
+		if s := m.scale(); s.proper {
+			b.nodes = s.fromPrior()
+			b.start(m, &Row{Time: at})
+		}
+	}
+	s := m.scale()
+	return b.blend(m, func(n *node) posterior.Posterior { return n.held.foresee(m, at, by, s.r(n.v)) })
+}
+
+// lone is a joint belief given r.
+type lone struct {
+	joint *joint
+	of    *model // from which given was made
+	given *model // with r known
+}
+
+func (l *lone) clone() holder { return &lone{l.joint.clone(), l.of, l.given} }
+
+// model returns m with r known.
+func (l *lone) model(m *model, r float64) *model {
+	if l.of != m {
+		l.of, l.given = m, m.given(r)
+	}
+	return l.given
+}
+
+func (l *lone) add(m *model, e *Row, r float64) heard {
+	s := l.joint.add(l.model(m, r), e, m.indication(e).Lower)
+	z, ok := s.Score()
+	if !ok {
+		return heard{}
+	}
+	standard := posterior.Normal(posterior.Level{}, 1)
+	return heard{log: s.LogDensity(), foretold: true, below: standard.LowerTail(z), above: standard.UpperTail(z)}
+}
+
+func (l *lone) widen(variance float64) { l.joint.filter.WidenLevel(variance) }
+
+func (l *lone) after(m *model, at Instant) posterior.Posterior {
+	if at <= l.joint.at || !l.joint.renewsBy(m, at) {
+		return l.joint.filter.PosteriorAfter(lasting(l.joint.at, at))
+	}
+	j := l.joint.clone()
+	j.move(m, at)
+	return j.level()
+}
+
+func (l *lone) foresee(m *model, at Instant, by *Instrument, r float64) posterior.Posterior {
+	j := l.joint.clone()
+	given := m.given(r)
+	j.move(given, at)
+	if by != nil {
+		if i := given.instrument(by.Number); i != nil {
+			by = i
+		} else if by.Declaration.Repeatability.Learned.Learned() {
+			return posterior.Posterior{} // nothing is known of its r here
+		}
+	}
+	return j.predictive(given, by)
+}
+
+func (l *lone) append(b []byte) []byte { return l.joint.append(b) }
+
+// sharedBelief is what is believed beside the level.
+type sharedBelief struct {
+	biases         []BiasBelief
+	references     []ReferenceBelief
+	hasSlope       bool
+	slope, slopeSD float64
+	slopePer       time.Duration
+}
+
+// shared returns what the nodes together believe beside the level: means and, by the law
+// of total variance, standard deviations.
+func (b *bank) shared(m *model, at Instant) sharedBelief {
+	if b == nil || len(b.nodes) == 0 {
+		return sharedBelief{}
+	}
+	var sum sharedBelief
+	s := m.scale()
+	moments := map[*float64]*float64{} // means to standard deviations
+	for i, w := range b.weights() {
+		one := b.nodes[i].held.shared(m, at, s.r(b.nodes[i].v))
+		if i == 0 {
+			sum = sharedBelief{slices.Clone(one.biases), slices.Clone(one.references), one.hasSlope, 0, 0, one.slopePer}
+			for k := range sum.biases {
+				sum.biases[k].Mean, sum.biases[k].StandardDeviation = 0, 0
+				moments[&sum.biases[k].Mean] = &sum.biases[k].StandardDeviation
+			}
+			for k := range sum.references {
+				sum.references[k].Mean, sum.references[k].StandardDeviation = 0, 0
+				moments[&sum.references[k].Mean] = &sum.references[k].StandardDeviation
+			}
+			moments[&sum.slope] = &sum.slopeSD
+		}
+		join := func(mean, square *float64, x, sd float64) { *mean, *square = *mean+w*x, *square+w*(x*x+sd*sd) }
+		for k, x := range one.biases {
+			join(&sum.biases[k].Mean, &sum.biases[k].StandardDeviation, x.Mean, x.StandardDeviation)
+		}
+		for k, x := range one.references {
+			join(&sum.references[k].Mean, &sum.references[k].StandardDeviation, x.Mean, x.StandardDeviation)
+		}
+		join(&sum.slope, &sum.slopeSD, one.slope, one.slopeSD)
+	}
+	for mean, square := range moments {
+		*square = math.Sqrt(max(0, *square-*mean**mean))
+	}
+	return sum
+}
+
+func (l *lone) shared(m *model, at Instant, r float64) (s sharedBelief) {
+	given := l.model(m, r)
+	j := l.joint.clone()
+	j.move(given, at)
+	s.biases, s.references = j.biases(given), j.commons()
+	s.hasSlope, s.slope, s.slopeSD, s.slopePer = j.slope(given)
+	return s
+}
+
+func (c *cells) shared(m *model, at Instant, _ float64) (s sharedBelief) {
+	if c.calibration < 0 {
+		return s
+	}
+	i := m.instrument(c.by)
+	mean, sd := c.moved(m, at).grid.BiasBelief()
+	s.biases = []BiasBelief{{
+		Instrument: i.ID, ValidFrom: i.Declaration.Calibrations[c.calibration].ValidFrom, Mean: mean, StandardDeviation: sd,
+	}}
+	return s
+}

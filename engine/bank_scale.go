@@ -1,0 +1,385 @@
+package engine
+
+import (
+	"math"
+
+	"leadline.example/engine/posterior"
+)
+
+// learns returns what is known beforehand of the repeatability that the model learns; nil
+// where it learns none.
+func (m *model) learns() *Repeatability {
+	for _, i := range m.instruments {
+		if r := &i.Declaration.Repeatability.Learned; r.Learned() {
+			return r
+		}
+	}
+	if r := &m.declaration().Repeatability; r.Learned() {
+		return r
+	}
+	return nil
+}
+
+// teaches tells whether a reading says something of the repeatability that is learned.
+func (m *model) teaches(e *Row) bool {
+	if e.HasUncertainty || m.learns() == nil {
+		return false
+	}
+	if e.Instrument == 0 {
+		return m.declaration().Repeatability.Learned()
+	}
+	r := &m.instrument(e.Instrument).Declaration.Repeatability
+	return r.Learned.Learned() || r.StandardDeviation == 0 && m.declaration().Repeatability.Learned()
+}
+
+// given returns the model with the repeatability that is learned being r.
+func (m *model) given(r float64) *model {
+	if m.learns() == nil {
+		return m
+	}
+	g := *m
+	own := false
+	g.instruments = make([]*Instrument, len(m.instruments))
+	for n, i := range m.instruments {
+		g.instruments[n] = i
+		if i.Declaration.Repeatability.Learned.Learned() {
+			own = true
+			known := *i
+			known.Declaration.Repeatability.Learned = Repeatability{}
+			known.Declaration.Repeatability.StandardDeviation = r
+			g.instruments[n] = &known
+		}
+	}
+	if !own {
+		q := *m.quantity
+		q.Declaration.Repeatability = Repeatability{Form: RepeatabilityKnown, StandardDeviation: r}
+		g.quantity = &q
+	}
+	return &g
+}
+
+// scale is the variable v over which a learned r is summed: ln r, or, above a floor f,
+// ln r = ln f + ln(1 + exp v), so that the prior, cut off there, vanishes smoothly at both
+// ends; the trapezoid rule then errs by exp(-2 pi^2 sd^2 / step^2) at most about
+// (Trefethen & Weideman 2014, SIAM Review 56, 3.2, from memory).
+type scale struct {
+	learned bool
+	proper  bool // the prior of r is
+	worth   float64
+	guess   float64
+	floor   float64
+	ruling  ruling
+	step    float64 // between the nodes of the prior
+}
+
+func (m *model) scale() scale {
+	r := m.learns()
+	if r == nil {
+		return scale{proper: true}
+	}
+	return scale{
+		learned: true, proper: r.Form == RepeatabilityLearned,
+		worth: r.Worth, guess: r.Guess, floor: r.Floor, ruling: m.ruling(),
+	}
+}
+
+// r returns the repeatability at v.
+func (s *scale) r(v float64) float64 {
+	if s.floor == 0 {
+		return math.Exp(v)
+	}
+	return s.floor * math.Exp(softplus(v))
+}
+
+// v returns where r is, which is above the floor.
+func (s *scale) v(r float64) float64 {
+	if s.floor == 0 {
+		return math.Log(r)
+	}
+	return logExpm1(math.Log(r / s.floor))
+}
+
+// logPrior is ln of the prior's density of v: for u = ln r, with r^2 ~ scaled
+// inverse chi-squared(worth, guess^2), exp(-worth u - worth guess^2 / (2 r^2)) (Gelman et al. 2013,
+// table A.1); 1 for the reference prior.
+func (s *scale) logPrior(v float64) float64 {
+	if !s.learned {
+		return 0
+	}
+	log := 0.0
+	if s.floor > 0 {
+		log = -softplus(-v) // du/dv
+	}
+	if !s.proper {
+		return log
+	}
+	x := v - math.Log(s.guess)
+	if s.floor > 0 {
+		x = softplus(v) + math.Log(s.floor/s.guess)
+	}
+	return log - s.worth*(x+math.Exp(-2*x)/2-0.5)
+}
+
+// softplus is ln(1 + exp x).
+func softplus(x float64) float64 { return max(x, 0) + math.Log1p(math.Exp(-math.Abs(x))) }
+
+// logExpm1 is ln(exp x - 1) for x > 0, at least -40.
+func logExpm1(x float64) float64 {
+	if x > 30 {
+		return x
+	}
+	return max(-40, math.Log(math.Expm1(x)))
+}
+
+// ruling is how closely nodes are laid, in half-widths of the posterior at exp(-1/2): as placed,
+// and when they are worn, to be placed anew; and ln by which weights fall from the top to
+// the ends, as placed and when worn.
+type ruling struct{ spacing, worn, depth, shallow float64 }
+
+// ruling returns how closely the model's nodes are laid: less so for beliefs on points, a
+// node of which costs a hundred times as much.
+func (m *model) ruling() ruling {
+	if m.form == gridForm {
+		return ruling{spacing: 0.6, worn: 1.1, depth: 24, shallow: 18}
+	}
+	return ruling{spacing: 0.3, worn: 0.6, depth: 29, shallow: 20}
+}
+
+// maxNodes bounds the nodes of a bank.
+const maxNodes = 240
+
+// fromPrior places nodes on a proper prior, which has one maximum, and sets step.
+func (s *scale) fromPrior() []node {
+	if !s.learned {
+		return []node{{}}
+	}
+	top := s.v(max(s.guess, s.floor*(1+1e-3)))
+	width := 1 / math.Sqrt(2*s.worth)
+	for move := width; move > width/64; {
+		switch here := s.logPrior(top); {
+		case s.logPrior(top+move) > here:
+			top += move
+			move *= 2
+		case s.logPrior(top-move) > here:
+			top -= move
+			move *= 2
+		default:
+			move /= 4
+		}
+	}
+	half := (s.drop(top, width) + s.drop(top, -width)) / 2
+	nodes, step := s.place(s.logPrior, top, half)
+	s.step = step
+	return nodes
+}
+
+// drop returns how far from the top the prior falls by exp(-1/2).
+func (s *scale) drop(top, width float64) float64 {
+	target, far := s.logPrior(top)-0.5, width
+	for s.logPrior(top+far) > target {
+		far *= 2
+	}
+	near := 0.0
+	for range 30 {
+		if middle := (near + far) / 2; s.logPrior(top+middle) > target {
+			near = middle
+		} else {
+			far = middle
+		}
+	}
+	return math.Abs(far)
+}
+
+// place puts nodes about the top of a density given by its logarithm, as far as it matters.
+func (s *scale) place(log func(v float64) float64, top, half float64) (nodes []node, step float64) {
+	step = s.ruling.spacing * half
+	for {
+		below, above := s.reach(log, top, -step), s.reach(log, top, step)
+		if below+above+1 <= maxNodes {
+			for i := -below; i <= above; i++ {
+				v := top + float64(i)*step
+				nodes = append(nodes, node{v: v, prior: s.logPrior(v)})
+			}
+			return nodes, step
+		}
+		step *= float64(below+above+1) / (maxNodes - 8)
+	}
+}
+
+// reach returns after how many steps a density has fallen to where it no longer matters.
+func (s *scale) reach(log func(v float64) float64, top, step float64) int {
+	floor := log(top) - s.ruling.depth
+	n := 1
+	for ; n < 16*maxNodes && log(top+float64(n)*step) > floor; n++ {
+	}
+	return n
+}
+
+// ruined tells whether the posterior of r has become too narrow for the nodes, or reaches
+// beyond them: whether they ought to be placed anew.
+func (b *bank) ruined(m *model) bool {
+	s := m.scale()
+	switch {
+	case !s.learned:
+		return false
+	case len(b.nodes) == 0:
+		return b.ready(&s) && b.count > b.placed+b.placed/4
+	case b.count <= b.placed+b.placed/8:
+		return false
+	}
+	return !b.fits(&s.ruling)
+}
+
+// ready tells whether readings can bound r where its prior doesn't.
+func (b *bank) ready(s *scale) bool {
+	return b.learned.count >= 2 && (s.floor > 0 || b.learned.most > b.learned.least)
+}
+
+// fits tells whether the nodes are close enough and cover the posterior.
+func (b *bank) fits(r *ruling) bool {
+	_, half := summit(b.logWeights())
+	return half*r.worn >= 1 && b.covers(r)
+}
+
+// covers tells whether the density at the ends of the nodes is small beside the top.
+func (b *bank) covers(r *ruling) bool {
+	logs := b.logWeights()
+	top, _ := summit(logs)
+	return logs[top]-logs[0] > r.shallow && logs[top]-logs[len(logs)-1] > r.shallow
+}
+
+// summit returns the index of the highest of logarithms of a density at equal distances, and the
+// half-width at which it has fallen by exp(-1/2), in distances.
+func summit(logs []float64) (top int, half float64) {
+	for i := range logs {
+		if logs[i] > logs[top] {
+			top = i
+		}
+	}
+	side := func(by int) float64 {
+		for n := 1; ; n++ {
+			i := top + n*by
+			if i < 0 || i >= len(logs) {
+				return float64(n)
+			}
+			if fallen := logs[top] - logs[i]; fallen >= 0.5 {
+				before := logs[top] - logs[i-by]
+				return float64(n-1) + (0.5-before)/(fallen-before)
+			}
+		}
+	}
+	return top, (side(1) + side(-1)) / 2
+}
+
+// replace places the nodes anew on the posterior after rows, which are all, and folds
+// them again. If r isn't bounded by them, there are no nodes after it.
+func (b *bank) replace(m *model, rows []entry) {
+	s := m.scale()
+	nodes, step := b.nodes, b.step
+	if len(nodes) == 0 {
+		nodes, step = b.survey(m, &s)
+		b.fill(m, nodes, step, rows)
+	}
+	for range 4 {
+		logs := b.logWeights()
+		top, half := summit(logs)
+		nodes, step = s.place(b.outline(logs), b.nodes[top].v, half*b.step)
+		b.fill(m, nodes, step, rows)
+		if tight := s.ruling; b.fits(&ruling{tight.spacing * 1.3, tight.spacing * 1.3, tight.depth, tight.shallow}) {
+			break
+		}
+	}
+	b.placed = len(rows)
+	if !s.proper && !b.covers(&s.ruling) {
+		b.nodes, b.step = nil, 0
+	}
+}
+
+// survey places coarse nodes where readings that teach an improper r can put it.
+func (b *bank) survey(m *model, s *scale) (nodes []node, step float64) {
+	const step0, depth = 0.5, 29.0
+	difference := (b.learned.most - b.learned.least) / 2
+	if m.declaration().Scale == ScaleLog {
+		difference = math.Log(b.learned.most/b.learned.least) / 2
+	}
+	low, high := -depth, 0.0
+	if s.floor == 0 {
+		low, high = math.Log(difference)-depth/2, math.Log(difference)+depth+2
+	} else {
+		high = max(0, math.Log(max(difference, s.floor)/s.floor)) + depth + 2
+	}
+	for v := low; v <= high; v += step0 {
+		nodes = append(nodes, node{v: v, prior: s.logPrior(v)})
+	}
+	return nodes, step0
+}
+
+// outline returns the logarithm of the density between and beyond the nodes: parabolas, and
+// straight lines that go on.
+func (b *bank) outline(logs []float64) func(v float64) float64 {
+	first, last := b.nodes[0].v, len(logs)-1
+	return func(v float64) float64 {
+		x := (v - first) / b.step
+		switch {
+		case x <= 0:
+			return logs[0] + x*max(0, logs[1]-logs[0])
+		case x >= float64(last):
+			return logs[last] + (x-float64(last))*min(0, logs[last]-logs[last-1])
+		}
+		i := min(max(int(x+0.5), 1), last-1)
+		d := x - float64(i)
+		return logs[i] + d*(logs[i+1]-logs[i-1])/2 + d*d*(logs[i+1]-2*logs[i]+logs[i-1])/2
+	}
+}
+
+// fill makes b the bank of nodes after rows.
+func (b *bank) fill(m *model, nodes []node, step float64, rows []entry) {
+	b.nodes, b.step = nodes, step
+	b.start(m, &rows[0].Row)
+	s, widened := m.scale(), b.widened
+	for i := range b.nodes {
+		n := &b.nodes[i]
+		r, next := s.r(n.v), 0
+		for k := range rows {
+			n.log += n.held.add(m, &rows[k].Row, r).log
+			if next < len(widened) && widened[next] == k+1 {
+				n.held.widen(b.wide)
+				next++
+			}
+		}
+	}
+}
+
+// repeatability returns the posterior median and interval of r: the distribution function
+// is summed by the trapezoid rule with its end correction (Euler-Maclaurin), and between
+// nodes its normal score goes along a straight line.
+func (b *bank) repeatability(m *model, coverage float64) posterior.Repeatability {
+	if b == nil || len(b.nodes) < 3 {
+		return posterior.Repeatability{}
+	}
+	w := b.weights()
+	scores := make([]float64, len(w))
+	below := 0.0
+	for i := range w {
+		slope := 0.0
+		if i > 0 && i+1 < len(w) {
+			slope = (w[i+1] - w[i-1]) / 2
+		}
+		p := min(1-1e-16, max(1e-300, below+w[i]/2-slope/12))
+		scores[i] = posterior.Normal(posterior.Level{}, 1).Quantile(p)
+		below += w[i]
+	}
+	s := m.scale()
+	at := func(p float64) float64 {
+		z := posterior.Normal(posterior.Level{}, 1).Quantile(p)
+		for i := 1; i < len(scores); i++ {
+			if scores[i] >= z || i == len(scores)-1 {
+				share := (z - scores[i-1]) / (scores[i] - scores[i-1])
+				return s.r(b.nodes[i-1].v + share*b.step)
+			}
+		}
+		return math.NaN()
+	}
+	tail := (1 - coverage) / 2
+	return posterior.Repeatability{HasMedian: true, Median: at(0.5), Lower: at(tail), Upper: at(1 - tail)}
+}
