@@ -320,21 +320,35 @@ func (l *lattice) thin() {
 func (l *lattice) densify() {
 	b := l.bare(2*l.first, 2*len(l.logs)-1)
 	b.step /= 2
-	fill := func(from, to []float64) {
-		for i, v := range from {
-			to[2*i] = v
-			if i > 0 {
-				to[2*i-1] = interpolate(from, i-1, 0.5)
-			}
-		}
+	halfway(l.logs, b.logs)
+	if l.mean != nil {
+		halfway(l.mean, b.mean)
+		halfway(l.variance, b.variance)
 	}
-	fill(l.logs, b.logs)
-	fill(l.mean, b.mean)
-	fill(l.variance, b.variance)
 	for i, v := range b.variance {
 		b.variance[i] = max(0, v)
 	}
 	*l = b
+}
+
+// halfway puts the values and what interpolate returns halfway between them into out.
+func halfway(v, out []float64) {
+	n := len(v)
+	for i, at := range v {
+		out[2*i] = at
+	}
+	for i := range n - 1 {
+		if i < 2 || i > n-4 {
+			out[2*i+1] = interpolate(v, i, 0.5)
+			continue
+		}
+		w := v[i-2 : i+4 : i+4]
+		if fifth := w[5] - w[0] - 5*(w[4]-w[1]) + 10*(w[3]-w[2]); math.Abs(fifth) < 1 {
+			out[2*i+1] = (3*(w[0]+w[5]) - 25*(w[1]+w[4]) + 150*(w[2]+w[3])) / 256
+		} else {
+			out[2*i+1] = (w[2] + w[3]) / 2
+		}
+	}
 }
 
 // stretch adds below and above points, at most, on either side, where the log density is

@@ -18,9 +18,9 @@ type likelihood struct {
 	room         [2]noisePart
 }
 
-// noisePart is a normal part of the noise, with the logarithm of its weight; for
-// values less ln(sd sqrt(2 pi)).
-type noisePart struct{ log, sd float64 }
+// noisePart is a normal part of the noise. Its factor is its weight, for values over
+// sd sqrt(2 pi).
+type noisePart struct{ factor, log, sd, per float64 }
 
 // likelihood returns that of a reading by an instrument of a bias, what is left of
 // which belongs to what the lattice holds.
@@ -50,41 +50,83 @@ func (k *likelihood) part(log, sd float64) {
 	if k.exact {
 		log -= math.Log(sd) + math.Log(2*math.Pi)/2
 	}
-	k.parts = append(k.parts, noisePart{log, sd})
+	k.parts = append(k.parts, noisePart{math.Exp(log), log, sd, 1 / sd})
 }
 
 // lowest stands for what is less than any number, so that differences remain numbers.
 const lowest = -1e300
 
+// vanishing is a likelihood beside which another might have been lost.
+const vanishing = 1e-250
+
 // log returns the logarithm of the likelihood at x.
 func (k *likelihood) log(x float64) float64 {
-	a := k.one(0, x)
-	if len(k.parts) == 1 {
-		return a
+	p := k.one(0, x)
+	if len(k.parts) > 1 {
+		p += k.one(1, x)
 	}
-	b := k.one(1, x)
-	if a < b {
-		a, b = b, a
+	if p > vanishing {
+		return math.Log(p)
 	}
-	return a + math.Log1p(math.Exp(b-a))
+	a := k.logOne(0, x)
+	if len(k.parts) > 1 {
+		a = logAdd(a, k.logOne(1, x))
+	}
+	return max(lowest, a)
 }
 
 // outlier returns the share of the second part in the likelihood at x.
 func (k *likelihood) outlier(x float64) float64 {
-	return 1 / (1 + math.Exp(k.one(0, x)-k.one(1, x)))
+	a, b := k.one(0, x), k.one(1, x)
+	if a+b > vanishing {
+		return b / (a + b)
+	}
+	return 1 / (1 + math.Exp(max(lowest, k.logOne(0, x))-max(lowest, k.logOne(1, x))))
 }
 
-// one returns a part's share in logarithms.
+// one returns a part's likelihood, with full relative accuracy unless it vanishes.
 func (k *likelihood) one(i int, x float64) float64 {
 	p := &k.parts[i]
+	a := (k.lower - x) * p.per
 	if k.exact {
-		return max(lowest, p.log+logNormalDensity((k.lower-x)/p.sd))
+		return p.factor * math.Exp(logNormalDensity(a))
 	}
-	a, b := (k.lower-x)/p.sd, (k.upper-x)/p.sd
-	if a < -9 && b > 9 {
-		return p.log // but for 1e-19
+	return p.factor * inInterval(a, (k.upper-x)*p.per, (k.upper-k.lower)*p.per)
+}
+
+// logOne returns a part's likelihood in logarithms.
+func (k *likelihood) logOne(i int, x float64) float64 {
+	p := &k.parts[i]
+	a := (k.lower - x) * p.per
+	if k.exact {
+		return p.log + logNormalDensity(a)
 	}
-	return max(lowest, p.log+logNormalBetween(a, b, (k.upper-k.lower)/p.sd))
+	return p.log + logNormalBetween(a, (k.upper-x)*p.per, (k.upper-k.lower)*p.per)
+}
+
+// inInterval is normalBetween for one digit less: relative error 1e-12 within 30 of 0,
+// which is all a grid's likelihood needs; by the rule of three points where the interval
+// is narrow.
+func inInterval(a, b, width float64) float64 {
+	if a < 0 && b < 0 {
+		a, b = -b, -a
+	}
+	switch steep := width * max(1, math.Abs(a), math.Abs(b)); {
+	case steep < 0.3:
+		sum := 0.0
+		for i, node := range cellNodes {
+			z := a + width*node
+			sum += cellWeights[i] * math.Exp(-z*z/2)
+		}
+		return width * sum / math.Sqrt(2*math.Pi)
+	case steep < 1:
+		return width * meanNormalDensity(a, width)
+	case a > 0:
+		return (math.Erfc(a*sqrtHalf.hi) - math.Erfc(b*sqrtHalf.hi)) / 2
+	case a < -9 && b > 9:
+		return 1 // but for 1e-19
+	}
+	return 1 - (math.Erfc(-a*sqrtHalf.hi)+math.Erfc(b*sqrtHalf.hi))/2
 }
 
 // multiply adds the log likelihood to those of l, in a slice of its own.
@@ -92,9 +134,8 @@ func (k *likelihood) multiply(l *lattice) []float64 {
 	out := make([]float64, len(l.logs))
 	if k.exact && len(k.parts) == 1 {
 		p, y := k.parts[0], k.lower
-		per := 1 / p.sd
 		for i, v := range l.logs {
-			out[i] = max(lowest, v+(p.log+logNormalDensity((y-l.x(i))*per)))
+			out[i] = max(lowest, v+(p.log+logNormalDensity((y-l.x(i))*p.per)))
 		}
 		return out
 	}
