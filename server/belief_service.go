@@ -27,6 +27,7 @@ type beliefService struct {
 	leadlinev1.UnimplementedBeliefServiceServer
 	keeper   beliefKeeper
 	outlook  outlookKeeper
+	checks   checkKeeper
 	now      func() time.Time
 	stopping <-chan struct{} // closed when streams have to end
 	logger   *slog.Logger

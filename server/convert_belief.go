@@ -45,6 +45,7 @@ func beliefMessage(b *engine.Belief) *leadlinev1.Belief {
 	if b.HasLast {
 		m.LastReadingTime = timestamp(b.LastTime)
 	}
+	setModelFigures(m, b)
 	if b.HasRenewal {
 		m.RenewalTime = timestamp(b.RenewalTime)
 	}

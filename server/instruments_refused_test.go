@@ -92,7 +92,10 @@ func TestChangesThatReadingsForbid(t *testing.T) {
 	r.call("PUT", path, `{"unit":"mm","repeatability":{"standard_deviation":0.02}}`).wantProblem(400, engine.InvalidField, "calibrations")
 	r.call("PUT", path, strings.Replace(calliperDeclaration, `"repeatability":{"standard_deviation":0.02},`, ``, 1)).
 		wantProblem(400, engine.InvalidField, "repeatability.standard_deviation")
-	r.call("PUT", "/v1/quantities/gap", `{"unit":"mm","repeatability":{"learned":{}}}`).wantProblem(501, engine.NotSupported, "repeatability.learned")
+	if reason, _ := r.call("PUT", "/v1/quantities/gap", `{"unit":"mm","scale":"LOG"}`).want(501).problem(); reason != string(engine.NotSupported) {
+		t.Errorf("a logarithmic scale for readings with a bias: %s", reason)
+	}
+	r.call("PUT", "/v1/quantities/gap", `{"unit":"mm","repeatability":{"learned":{}}}`).want(200)
 }
 
 func TestReadingsThatTheirInstrumentForbids(t *testing.T) {
@@ -100,13 +103,14 @@ func TestReadingsThatTheirInstrumentForbids(t *testing.T) {
 	r.call("PUT", "/v1/instruments/thermometer", `{"unit":"Cel"}`).want(200)
 	r.call("PUT", "/v1/instruments/feeler", `{"unit":"mm"}`).want(200)
 	r.call("PUT", "/v1/quantities/gap", `{"unit":"mm"}`).want(200)
-	r.call("PUT", "/v1/quantities/lining", `{"unit":"mm","repeatability":{"learned":{}}}`).want(200)
+	r.call("PUT", "/v1/quantities/lining", liningDeclaration).want(200)
 	for _, test := range []struct{ name, quantity, reading, reason string }{
 		{"not declared", "gap", `{"value":1,"instrument":"calliper"}`, "UNKNOWN_INSTRUMENT"},
 		{"not an ID", "gap", `{"value":1,"instrument":"a b"}`, "UNKNOWN_INSTRUMENT"},
 		{"another unit", "gap", `{"value":1,"instrument":"thermometer"}`, "UNIT_MISMATCH"},
 		{"nobody's repeatability", "gap", `{"value":1,"instrument":"feeler"}`, "NO_REPEATABILITY"},
-		{"a learned repeatability", "lining", `{"value":1,"instrument":"feeler"}`, "NOT_SUPPORTED"},
+		{"beyond a limit, of a trend", "lining", `{"above":1,"instrument":"feeler"}`, "NOT_SUPPORTED"},
+		{"limits in disorder", "gap", `{"between":{"lower":2,"upper":1},"random_standard_uncertainty":1}`, "VALUE_OUT_OF_RANGE"},
 		{"an occasion of no instrument", "lining", `{"value":1,"occasion":"round 3"}`, "NOT_SUPPORTED"},
 	} {
 		a := r.call("POST", "/v1/quantities/"+test.quantity+"/readings", test.reading).want(200)

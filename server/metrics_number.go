@@ -19,6 +19,9 @@ const (
 	aboveNumber
 	horizonNumber
 	medianNumber
+	halfNumber // of the readings within the central half of what was predicted
+	mostNumber // and within 95 per cent
+	squareNumber
 	numberCount
 )
 
@@ -41,6 +44,7 @@ func (n *numberTexts) update(f *engine.Figures) {
 		meanNumber: f.Mean, deviationNumber: f.StandardDeviation, lowerNumber: f.Lower, upperNumber: f.Upper,
 		belowNumber: f.Breach.Below, eitherNumber: f.Breach.Either, aboveNumber: f.Breach.Above,
 		horizonNumber: f.HorizonProbability, medianNumber: f.MedianSeconds,
+		halfNumber: f.Check.Coverage50, mostNumber: f.Check.Coverage95, squareNumber: f.Check.MeanSquare,
 	}
 	for i, v := range values {
 		if i > 0 && v == values[i-1] {

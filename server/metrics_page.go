@@ -26,6 +26,11 @@ const (
 	lastMetric
 	horizonMetric
 	medianMetric
+	checkMetric
+	coverageMetric
+	squareMetric
+	stepsMetric
+	outlyingMetric
 	metricCount
 )
 
@@ -33,7 +38,7 @@ const (
 type header struct{ name, kind, help string }
 
 // quantityMetrics heads the metrics of a quantity. With every one present a
-// quantity has 15 series, and 17 if it declares a breach horizon.
+// quantity has 21 series, and 23 if it declares a breach horizon.
 func quantityMetrics() [metricCount]header {
 	const gauge, counter = "gauge", "counter"
 	return [metricCount]header{
@@ -49,6 +54,11 @@ func quantityMetrics() [metricCount]header {
 		lastMetric:      {"leadline_last_reading_timestamp_seconds", gauge, "Time of the newest reading applied to the quantity, in seconds since 1970."},
 		horizonMetric:   {"leadline_breach_within_horizon_probability", gauge, "Probability that a limit of the tolerance is crossed within the declared breach horizon, as last found out, up to a minute ago or longer where many are to be."},
 		medianMetric:    {"leadline_median_time_to_breach_seconds", gauge, "Time by which a limit is crossed with probability one half; absent where that is beyond the breach horizon. Found out together with leadline_breach_within_horizon_probability."},
+		checkMetric:     {"leadline_model_check", gauge, "1 for what the readings now say of the declaration; there is a series for that result alone."},
+		coverageMetric:  {"leadline_predictive_coverage", gauge, "Share of the scored readings within the central predictive interval of the coverage probability, which is expected."},
+		squareMetric:    {"leadline_normal_score_mean_square", gauge, "Mean squared normal score of the readings in what was predicted; 1 is expected."},
+		stepsMetric:     {"leadline_steps_total", counter, "Steps found in the readings of the quantity. It begins anew where late readings have it found out again."},
+		outlyingMetric:  {"leadline_outlying_readings_total", counter, "Readings so far out that their predicted tail probability was below 0.0001, applied all the same. It begins anew where late readings have it found out again."},
 	}
 }
 
@@ -156,6 +166,7 @@ func appendHeader(b []byte, h header) []byte {
 const (
 	endLabels     = `} `
 	coverageLabel = `,coverage_probability="0.95"} ` // engine.DefaultCoverage
+	halfLabel     = `,coverage_probability="0.5"} `
 	sideBelow     = `,side="below"} `
 	sideAbove     = `,side="above"} `
 	sideEither    = `,side="either"} `
@@ -186,8 +197,7 @@ func (p *part) quantity(l *quantityLabels, n *numberTexts) {
 	for _, end := range p.verdicts[f.Verdict] {
 		p.text(verdictMetric, l.quantity, end)
 	}
-	p.text(readingsMetric, l.quantity, endLabels)
-	p.lines[readingsMetric] = append(strconv.AppendInt(p.lines[readingsMetric], int64(f.ReadingCount), 10), '\n')
+	p.count(readingsMetric, l.quantity, f.ReadingCount)
 	if f.HasLast {
 		p.text(lastMetric, l.quantity, endLabels)
 		p.lines[lastMetric] = append(appendSeconds(p.lines[lastMetric], f.LastTime), '\n')
@@ -198,6 +208,29 @@ func (p *part) quantity(l *quantityLabels, n *numberTexts) {
 	if f.HasHorizon && f.HasMedian {
 		p.number(medianMetric, l.quantity, endLabels, n.text(medianNumber))
 	}
+	if f.Check.Result != "" {
+		p.check(l, n)
+	}
+}
+
+// check writes the lines of how a quantity's readings agree with its declaration.
+func (p *part) check(l *quantityLabels, n *numberTexts) {
+	c := &n.figures.Check
+	p.text(checkMetric, l.quantity, `,result="`)
+	p.lines[checkMetric] = append(append(p.lines[checkMetric], c.Result...), "\"} 1\n"...)
+	if c.HasCoverage {
+		p.number(coverageMetric, l.quantity, halfLabel, n.text(halfNumber))
+		p.number(coverageMetric, l.quantity, coverageLabel, n.text(mostNumber))
+		p.number(squareMetric, l.quantity, endLabels, n.text(squareNumber))
+	}
+	p.count(stepsMetric, l.quantity, c.Steps)
+	p.count(outlyingMetric, l.quantity, c.Outlying)
+}
+
+// count writes a series whose value is a whole number.
+func (p *part) count(m metric, labels string, value int) {
+	p.text(m, labels, endLabels)
+	p.lines[m] = append(strconv.AppendInt(p.lines[m], int64(value), 10), '\n')
 }
 
 // number writes one series.

@@ -41,6 +41,9 @@ func quantityWith(id, unit, description string) published {
 			HasInterval: true, Lower: 0.7984, Upper: 0.8262,
 			HasBreach: true, Breach: engine.Breach{Below: 1.2e-56, Above: 2.4e-35, Either: 2.4e-35, Conformance: 1},
 			Verdict: decide.Conforms,
+			Check: engine.CheckFigures{
+				Result: "NO_OBJECTION", HasCoverage: true, Coverage50: 0.48, Coverage95: 0.9375, MeanSquare: 1.07, Steps: 2, Outlying: 1,
+			},
 		},
 	}
 }
@@ -119,6 +122,12 @@ func TestPageCarriesWhatABeliefSays(t *testing.T) {
 		"leadline_verdict{quantity=pump-3.gap,verdict=INCONCLUSIVE}":                               0,
 		"leadline_quantity_readings_total{quantity=pump-3.gap}":                                    12,
 		"leadline_last_reading_timestamp_seconds{quantity=pump-3.gap}":                             1772366400.25,
+		"leadline_model_check{quantity=pump-3.gap,result=NO_OBJECTION}":                            1,
+		"leadline_predictive_coverage{quantity=pump-3.gap,coverage_probability=0.5}":               0.48,
+		"leadline_predictive_coverage{quantity=pump-3.gap,coverage_probability=0.95}":              0.9375,
+		"leadline_normal_score_mean_square{quantity=pump-3.gap}":                                   1.07,
+		"leadline_steps_total{quantity=pump-3.gap}":                                                2,
+		"leadline_outlying_readings_total{quantity=pump-3.gap}":                                    1,
 	}
 	for k, v := range want {
 		if g, ok := got[k]; !ok || g != v {
@@ -128,8 +137,8 @@ func TestPageCarriesWhatABeliefSays(t *testing.T) {
 	if len(got) != len(want) {
 		t.Errorf("%d series are published, want %d: %v", len(got), len(want), got)
 	}
-	if len(got) > 16 {
-		t.Errorf("a quantity without a horizon has %d series, the interface promises at most 16", len(got))
+	if len(got) != 21 {
+		t.Errorf("a quantity without a horizon has %d series, the page of DEVELOPERS.md says 21", len(got))
 	}
 }
 
@@ -146,6 +155,27 @@ func TestPageLooksAheadWhereDeclared(t *testing.T) {
 	got = seriesOf(t, renderQuantities(t, []published{q}))
 	if s, ok := got["leadline_median_time_to_breach_seconds{quantity=winch.lining}"]; !ok || s != 86400.5 || len(got) != without+2 {
 		t.Errorf("%d series with a median, %d without: %v", len(got), without, got)
+	}
+}
+
+// Before the first scored reading there is a result and no share.
+func TestPageShowsOneResultOfAModelCheck(t *testing.T) {
+	q := quantityWith("winch.lining", "mm", "")
+	q.Check = engine.CheckFigures{Result: "TOO_FEW"}
+	got := seriesOf(t, renderQuantities(t, []published{q}))
+	for key, want := range map[string]float64{
+		"leadline_model_check{quantity=winch.lining,result=TOO_FEW}": 1,
+		"leadline_steps_total{quantity=winch.lining}":                0,
+		"leadline_outlying_readings_total{quantity=winch.lining}":    0,
+	} {
+		if v, ok := got[key]; !ok || v != want {
+			t.Errorf("%s is %v (published: %t), want %v", key, v, ok, want)
+		}
+	}
+	for key := range got {
+		if strings.HasPrefix(key, "leadline_predictive_coverage") || strings.HasPrefix(key, "leadline_normal_score") || strings.Contains(key, "NO_OBJECTION") {
+			t.Errorf("%s is published", key)
+		}
 	}
 }
 
@@ -198,12 +228,13 @@ func TestNumbersFollowTheBelief(t *testing.T) {
 	greatest, least, above := first, first, first
 	greatest.Mean, greatest.StandardDeviation, greatest.Lower, greatest.Upper = -math.MaxFloat64, math.MaxFloat64, -1.2345678901234567e-300, math.SmallestNonzeroFloat64
 	greatest.HorizonProbability, greatest.MedianSeconds = -math.MaxFloat64, -1.2345678901234567e-300
+	greatest.Check.Coverage50, greatest.Check.Coverage95, greatest.Check.MeanSquare = math.MaxFloat64, -1.2345678901234567e-300, math.SmallestNonzeroFloat64
 	least.Breach = engine.Breach{Below: 0.25, Either: 0.25, Above: 0}
 	above.Breach = engine.Breach{Below: 0, Either: 0.25, Above: 0.25}
 	var n numberTexts
 	for i, f := range []engine.Figures{first, first, greatest, least, above, first} {
 		n.update(&f)
-		for number, want := range [numberCount]float64{f.Mean, f.StandardDeviation, f.Lower, f.Upper, f.Breach.Below, f.Breach.Either, f.Breach.Above, f.HorizonProbability, f.MedianSeconds} {
+		for number, want := range [numberCount]float64{f.Mean, f.StandardDeviation, f.Lower, f.Upper, f.Breach.Below, f.Breach.Either, f.Breach.Above, f.HorizonProbability, f.MedianSeconds, f.Check.Coverage50, f.Check.Coverage95, f.Check.MeanSquare} {
 			if got, err := strconv.ParseFloat(string(n.text(number)), 64); err != nil || got != want {
 				t.Errorf("belief %d: number %d is written %q, want %v", i, number, n.text(number), want)
 			}

@@ -6,6 +6,7 @@ import (
 	"io"
 	"net/http"
 	"net/http/httptest"
+	"slices"
 	"strings"
 	"testing"
 	"time"
@@ -192,9 +193,36 @@ func TestPageLeavesOutReadingsAfterItsInstant(t *testing.T) {
 
 func TestPageSaysNothingOfWhatIsUnknown(t *testing.T) {
 	page := plantFixture(t, nil).scrape(t)
+	known := []string{"quantity_info", "quantity_readings_total", "model_check", "steps_total", "outlying_readings_total"}
 	for line := range strings.Lines(page) {
-		if strings.Contains(line, `"winch.rope"`) && !strings.HasPrefix(line, "leadline_quantity_info{") && !strings.HasPrefix(line, "leadline_quantity_readings_total{") {
+		name, _, _ := strings.Cut(strings.TrimPrefix(line, "leadline_"), "{")
+		if strings.Contains(line, `"winch.rope"`) && !slices.Contains(known, name) {
 			t.Errorf("a quantity without prior, readings and tolerance has the series %s", line)
+		}
+	}
+}
+
+// TestPageGivesTheNumbersOfTheModelCheck: those of the belief at the page's instant.
+func TestPageGivesTheNumbersOfTheModelCheck(t *testing.T) {
+	f := plantFixture(t, nil)
+	got := seriesOf(t, f.scrape(t))
+	b, err := f.keeper.Belief(t.Context(), "room-2.temperature", engine.BeliefQuery{Now: engine.InstantOf(scrapeTime)})
+	if err != nil {
+		t.Fatal(err)
+	}
+	if b.Check.Total.Readings != 3 {
+		t.Fatalf("%d scored readings, want 3", b.Check.Total.Readings)
+	}
+	for key, want := range map[string]float64{
+		"leadline_model_check{quantity=room-2.temperature,result=" + b.Check.Result.String() + "}": 1,
+		"leadline_predictive_coverage{quantity=room-2.temperature,coverage_probability=0.5}":       b.Check.Total.Within50,
+		"leadline_predictive_coverage{quantity=room-2.temperature,coverage_probability=0.95}":      b.Check.Total.Within95,
+		"leadline_normal_score_mean_square{quantity=room-2.temperature}":                           b.Check.Total.MeanSquare,
+		"leadline_steps_total{quantity=room-2.temperature}":                                        float64(b.Check.Steps),
+		"leadline_outlying_readings_total{quantity=room-2.temperature}":                            float64(b.Check.Outlying),
+	} {
+		if v, ok := got[key]; !ok || v != want {
+			t.Errorf("%s is %v (published: %t), the belief says %v", key, v, ok, want)
 		}
 	}
 }

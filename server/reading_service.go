@@ -2,7 +2,6 @@ package server
 
 import (
 	"context"
-	"encoding/binary"
 	"strconv"
 	"time"
 
@@ -24,6 +23,7 @@ type ReadingKeeper interface {
 type readingService struct {
 	leadlinev1.UnimplementedReadingServiceServer
 	keeper   ReadingKeeper
+	assess   assessKeeper
 	now      func() time.Time
 	stopping <-chan struct{} // closed when streams have to end
 }
@@ -109,9 +109,7 @@ func (s *readingService) ListReadings(ctx context.Context, r *leadlinev1.ListRea
 		response.Readings = append(response.Readings, recordedMessage(&page[i]))
 	}
 	if more {
-		last := &page[len(page)-1]
-		cursor := binary.BigEndian.AppendUint64(nil, uint64(last.Time))
-		response.NextPageToken = encodePageToken(bound, binary.BigEndian.AppendUint64(cursor, uint64(last.Position)))
+		response.NextPageToken = encodePageToken(bound, readingCursor(&page[len(page)-1]))
 	}
 	inWords(ctx, func() string { return readingsText(page, response.NextPageToken) })
 	return response, nil
@@ -142,20 +140,10 @@ func readingsQueryOf(r *leadlinev1.ListReadingsRequest) (q engine.ReadingsQuery,
 		}
 	}
 	bound = binding("readings", r.GetQuantity(), timeKey(r.GetStart()), timeKey(r.GetEnd()), strconv.Itoa(int(q.Status)))
-	if r.GetPageToken() == "" {
-		return q, bound, nil
+	if q.HasAfter = r.GetPageToken() != ""; q.HasAfter {
+		q.After, err = decodeReadingCursor(r.GetPageToken(), bound)
 	}
-	cursor, err := decodePageToken(r.GetPageToken(), bound)
-	if err == nil && len(cursor) != 16 {
-		err = invalidToken("page_token is not one of this list; send the next_page_token of the page before, unchanged")
-	}
-	if err != nil {
-		return q, 0, err
-	}
-	q.HasAfter = true
-	q.After.Time = engine.Instant(binary.BigEndian.Uint64(cursor))
-	q.After.Position = engine.Position(binary.BigEndian.Uint64(cursor[8:]))
-	return q, bound, nil
+	return q, bound, err
 }
 
 func listedStatus(r *leadlinev1.ListReadingsRequest) (engine.Status, error) {

@@ -130,7 +130,6 @@ func TestRefusedRenewalsSayWhy(t *testing.T) {
 	r := startServer(t)
 	r.call("PUT", "/v1/quantities/lining", liningDeclaration).want(200)
 	r.call("PUT", "/v1/quantities/gap", flatDeclaration).want(200)
-	r.call("PUT", "/v1/quantities/learned", `{"repeatability":{"learned":{}}}`).want(200)
 	for _, test := range []struct {
 		name, path, body string
 		code             int
@@ -152,7 +151,6 @@ func TestRefusedRenewalsSayWhy(t *testing.T) {
 		{"half a slope", "lining:renew", `{"prior":{"vague":{}},"slope":{"mean":1,"standard_deviation":1}}`, 400, engine.MissingField, "slope.per"},
 		{"negative slope's uncertainty", "lining:renew", `{"prior":{"vague":{}},"slope":{"mean":1,"standard_deviation":-1,"per":"1s"}}`, 400, engine.InvalidField, "slope.standard_deviation"},
 		{"slope without a trend", "gap:renew", `{"prior":{"vague":{}},"slope":{"mean":1,"standard_deviation":1,"per":"1s"}}`, 400, engine.InvalidField, "slope"},
-		{"learned repeatability", "learned:renew", `{"prior":{"vague":{}}}`, 501, engine.NotSupported, "repeatability.learned"},
 		{"reason too long", "lining:renew", `{"prior":{"vague":{}},"reason":"` + strings.Repeat("x", 513) + `"}`, 400, engine.InvalidField, "reason"},
 		{"request ID too long", "lining:renew", `{"prior":{"vague":{}},"request_id":"` + strings.Repeat("x", 129) + `"}`, 400, engine.InvalidField, "request_id"},
 		{"withdrawing what", "lining:withdraw_renewal", `{}`, 400, engine.MissingField, "request_id"},

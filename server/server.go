@@ -112,8 +112,8 @@ func New(o Options) (*Server, error) {
 	implementations := &services{
 		quantities:  &quantityService{keeper: o.Keeper, renewals: o.Keeper, now: o.Now},
 		instruments: &instrumentService{keeper: o.Keeper, now: o.Now},
-		readings:    &readingService{keeper: o.Readings, now: o.Now, stopping: s.stopping},
-		beliefs:     &beliefService{keeper: o.Keeper, outlook: o.Keeper, now: o.Now, stopping: s.stopping, logger: o.Logger},
+		readings:    &readingService{keeper: o.Readings, assess: o.Keeper, now: o.Now, stopping: s.stopping},
+		beliefs:     &beliefService{keeper: o.Keeper, outlook: o.Keeper, checks: o.Keeper, now: o.Now, stopping: s.stopping, logger: o.Logger},
 	}
 	h, err := newREST(context.Background(), implementations, newOrigins(o.AnyHost), o.Logger)
 	if err != nil {

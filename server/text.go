@@ -91,6 +91,8 @@ func (p *sheet) belief(b *engine.Belief) {
 	} else {
 		p.line("readings", "none yet")
 	}
+	p.lastReading(b)
+	p.modelCheck(&b.Check)
 	p.basis(b.Quantity.Revision, b.Position, b.Rebuilding)
 }
 

@@ -1235,8 +1235,8 @@ type AssessReadingsRequest struct {
 	Start *timestamppb.Timestamp `protobuf:"bytes,2,opt,name=start,proto3" json:"start,omitempty"`
 	// Only readings before this time.
 	End *timestamppb.Timestamp `protobuf:"bytes,3,opt,name=end,proto3" json:"end,omitempty"`
-	// Also give the outlier probabilities in hindsight, for which the belief is folded
-	// anew for each reading.
+	// Also give the outlier probabilities in hindsight. For each reading all are folded
+	// twice, so a page then has at most 20.
 	Hindsight bool `protobuf:"varint,4,opt,name=hindsight,proto3" json:"hindsight,omitempty"`
 	// Most readings to answer with: 0 means 100, above 1000 means 1000.
 	PageSize int32 `protobuf:"varint,5,opt,name=page_size,json=pageSize,proto3" json:"page_size,omitempty"`
