@@ -152,13 +152,12 @@ func (k *likelihood) multiply(l *lattice) []float64 {
 
 // stride returns how many points apart the logarithm of the likelihood needs to be known,
 // to interpolate between. It changes its course within a standard deviation, by
-// less than a parabola would leave; where one part of the noise gives way to the
-// other, within a third. The polynomial is off by 1e-6 at most, so that a thousand like
-// readings leave 0.1 % of the density.
+// less than a parabola would leave, so the polynomial is off by 2e-6 at most; where
+// one part of the noise gives way to the other within half of that, and by 3e-4.
 func (k *likelihood) stride(step float64) int {
 	apart := k.parts[0].sd / 3
 	if len(k.parts) > 1 {
-		apart /= 3
+		apart /= 2
 	}
 	stride := 1
 	for float64(2*stride)*step <= apart && stride < 32 {
