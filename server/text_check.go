@@ -42,7 +42,7 @@ func checkText(r *modelcheck.Report) string {
 	if t.Readings == 0 {
 		return strings.Join(words, ", ") + "; no scored readings"
 	}
-	return fmt.Sprintf("%s; of %d scored readings %s lay within the central 50 %%, %s within 95 %%",
+	return fmt.Sprintf("%s; scored readings: %d, %s of them within the central 50 %%, %s within 95 %%",
 		strings.Join(words, ", "), t.Readings, percent(t.Within50), percent(t.Within95))
 }
 
