@@ -13,7 +13,7 @@ type blend struct {
 
 // Blend returns the mixture of the parts with weights proportional to
 // exp(logWeights), as many as parts, each finite or -Inf. A part whose weight
-// vanishes beside the largest (below e^-745 of it) counts for nothing. The parts
+// vanishes beside the largest (below 1e-300 of it) counts for nothing. The parts
 // are all of one scale, linear or logarithmic (Exp), which is that of the blend.
 //
 // Its form is GRID if a part's is and MIXTURE else; FormNone without a part of any
@@ -104,7 +104,7 @@ func weighed(logWeights []float64, parts []Posterior) (*blend, bool) {
 	for i, p := range parts {
 		w := math.Exp(logWeights[i] - top)
 		switch {
-		case w == 0:
+		case w < 1e-300:
 			continue
 		case p.form == FormNone:
 			return nil, false
