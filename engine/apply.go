@@ -257,6 +257,7 @@ func (k *Keeper) finishJob(j *job) {
 	k.change++
 	k.budget = refoldBudget
 	k.settle(t)
+	k.dueSteps([]*Track{t})
 	t.publish(k.change)
 	k.published.Store(k.change)
 }

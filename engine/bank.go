@@ -123,7 +123,25 @@ func (b *bank) add(m *model, e *Row) word {
 		said.outlier += weights[i] * h.outlier
 	}
 	said.between = !m.indication(e).Exact()
+	b.prune()
 	return said
+}
+
+// prune lets go of nodes at the ends whose weight has vanished for good.
+func (b *bank) prune() {
+	if len(b.nodes) == 0 {
+		return
+	}
+	const vanished = 60 // beyond e^-60 of the top
+	logs := b.logWeights()
+	top, first, last := slices.Max(logs), 0, len(logs)-1
+	for top-logs[first] > vanished {
+		first++
+	}
+	for top-logs[last] > vanished {
+		last--
+	}
+	b.nodes = b.nodes[first : last+1]
 }
 
 func (s *spread) add(y float64) {
@@ -167,7 +185,11 @@ func (b *bank) widen(variance float64) {
 
 // level returns the distribution of the level at an instant.
 func (b *bank) level(m *model, at Instant) posterior.Posterior {
-	return b.blend(m, func(n *node) posterior.Posterior { return n.held.after(m, at) })
+	p := b.blend(m, func(n *node) posterior.Posterior { return n.held.after(m, at) })
+	if m.prior.Vague {
+		return b.existing(m, p)
+	}
+	return p
 }
 
 // blend mixes what the nodes say.
@@ -183,6 +205,29 @@ func (b *bank) blend(m *model, say func(*node) posterior.Posterior) posterior.Po
 	return p
 }
 
+// falls returns the exponent with which the density of ln r falls in the end, as r^-falls:
+// each reading that teaches r gives 1/r, but the first of a flat level, which that takes.
+func (b *bank) falls(m *model) float64 {
+	falls := float64(b.learned.count)
+	if m.learns() != nil {
+		falls += m.learns().Worth
+	}
+	if m.prior.Vague {
+		falls--
+	}
+	return falls
+}
+
+// existing takes away the moments that don't exist where a distribution is as wide as r:
+// those of r up to its own order.
+func (b *bank) existing(m *model, p posterior.Posterior) posterior.Posterior {
+	if m.learns() == nil {
+		return p
+	}
+	falls := b.falls(m)
+	return p.WithMoments(falls > 1, falls > 2)
+}
+
 // predictive returns the distribution of an indication at an instant, by an instrument or none.
 func (b *bank) predictive(m *model, at Instant, by *Instrument) posterior.Posterior {
 	if b == nil {
@@ -193,7 +238,7 @@ func (b *bank) predictive(m *model, at Instant, by *Instrument) posterior.Poster
 		}
 	}
 	s := m.scale()
-	return b.blend(m, func(n *node) posterior.Posterior { return n.held.foresee(m, at, by, s.r(n.v)) })
+	return b.existing(m, b.blend(m, func(n *node) posterior.Posterior { return n.held.foresee(m, at, by, s.r(n.v)) }))
 }
 
 // lone is a joint belief given r.

@@ -62,6 +62,8 @@ type Belief struct {
 
 	Method     Method
 	Check      modelcheck.Report // of the readings up to Time
+	HasTail    bool              // something had been foretold of the last reading
+	Tail       float64           // two-sided tail probability of the last reading under that
 	HasOutlier bool              // outliers are declared, and there is a reading
 	Outlier    float64           // probability that the last reading was one, given it and those before
 
@@ -176,6 +178,9 @@ func (k *Keeper) belief(v *View, q *BeliefQuery) (Belief, error) {
 	b.evaluatePredictive(m.predictive(v.basis, at, by), d)
 	b.Repeatability = m.repeatability(v.basis, b.Coverage)
 	b.Method, b.Check = v.basis.method(), m.check.Report(&v.basis.check)
+	if m.scored {
+		b.Tail, b.HasTail = m.check.Tail()
+	}
 	b.HasOutlier, b.Outlier = d.Outliers != (Outliers{}) && m.count > 0, m.outlier
 	b.evaluateShared(v.basis, m, at)
 	if r := b.Repeatability; d.Repeatability.Learned() && !r.HasMedian {

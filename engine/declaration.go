@@ -5,6 +5,7 @@ import (
 	"time"
 
 	"leadline.example/engine/decide"
+	"leadline.example/engine/modelcheck"
 	"leadline.example/engine/posterior"
 )
 
@@ -208,28 +209,26 @@ func (d *Declaration) checkOutliers() *Error {
 func (d *Declaration) checkModelCheck() *Error {
 	c := &d.ModelCheck
 	switch {
-	case c.Window != 0 && !(c.Window >= minWindow && c.Window <= maxWindow):
-		return refuse(InvalidField, "model_check.window", "model_check.window is %d; give a number of readings from %d to %d", c.Window, minWindow, maxWindow)
-	case c.ObjectionsPerYear != 0 && !(c.ObjectionsPerYear >= 1e-9 && c.ObjectionsPerYear <= maxObjections):
-		return refuse(InvalidField, "model_check.objections_per_year", "model_check.objections_per_year is %v; give the rate of false objections from 1e-9 to 1e6", c.ObjectionsPerYear)
+	case c.Window != 0 && !(c.Window >= modelcheck.MinWindow && c.Window <= modelcheck.MaxWindow):
+		return refuse(InvalidField, "model_check.window", "model_check.window is %d; give a number of readings from %d to %d", c.Window, modelcheck.MinWindow, modelcheck.MaxWindow)
+	case c.ObjectionsPerYear != 0 && !(c.ObjectionsPerYear >= minObjections && c.ObjectionsPerYear <= modelcheck.MaxObjectionsPerYear):
+		return refuse(InvalidField, "model_check.objections_per_year", "model_check.objections_per_year is %v; give the rate of false objections from %v to %v", c.ObjectionsPerYear, minObjections, modelcheck.MaxObjectionsPerYear)
 	}
 	return nil
 }
 
 func (d *Declaration) checkStepDetection() *Error {
 	s := &d.StepDetection
-	if n := s.FalseAlarmInterval; n != 0 && !(n >= minFalseAlarmInterval && n <= maxFalseAlarmInterval) {
-		return refuse(InvalidField, "step_detection.false_alarm_interval", "step_detection.false_alarm_interval is %v; give a mean number of readings from %v to %v", n, minFalseAlarmInterval, maxFalseAlarmInterval)
+	if n := s.FalseAlarmInterval; n != 0 && !(n >= modelcheck.MinFalseAlarmInterval && n <= modelcheck.MaxFalseAlarmInterval) {
+		return refuse(InvalidField, "step_detection.false_alarm_interval", "step_detection.false_alarm_interval is %v; give a mean number of readings from %v to %v", n, modelcheck.MinFalseAlarmInterval, modelcheck.MaxFalseAlarmInterval)
 	}
 	return checkOptional("step_detection.on_step.widen", s.Widen)
 }
 
 // Bounds of what checks of the model can be asked for.
 const (
-	minWindow, maxWindow                         = 16, 10_000
-	maxObjections                                = 1e6
-	minFalseAlarmInterval, maxFalseAlarmInterval = 100, 1e12
-	maxInflation                                 = 1e6
+	minObjections = 1e-9
+	maxInflation  = 1e6
 )
 
 // checkScale refuses what has no logarithm.

@@ -106,7 +106,7 @@ func (k *Keeper) checkRedeclaration(t *Track, d *Declaration) error {
 		return refuse(InvalidField, "scale", "scale is LOG, on which every value is positive, but a reading of %v has been applied; keep scale LINEAR", least)
 	}
 	if sentence := k.objectionToReadings(d, len(t.decided.InForce()), &t.decidedTally, t.decidedUsed); sentence != "" {
-		return refuse(NotSupported, "quantity", "with the %d readings applied so far %s", t.decidedTally.count, sentence)
+		return refuse(NotSupported, "dynamics", "with what its readings so far were, %s", sentence)
 	}
 	if d.Scale == ScaleLog {
 		return nil

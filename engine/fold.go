@@ -50,7 +50,9 @@ type fold struct {
 	flagged    [len(CalibrationStates)]int
 	linearised bool
 	check      modelcheck.Tally
-	outlier    float64 // probability that the latest reading was one
+	scored     bool        // something was foretold of the latest reading
+	outlier    float64     // probability that it was an outlier
+	detected   []StepEvent // in readings folded since they were last taken; not part of the state
 
 	constant posterior.Constant
 	walk     posterior.Walk // at lastTime
@@ -61,6 +63,7 @@ type fold struct {
 
 func (f *fold) copied() fold {
 	c := *f
+	c.detected = nil
 	if f.joint != nil {
 		c.joint = f.joint.clone()
 	}
@@ -192,7 +195,7 @@ func foretold(p posterior.Posterior, y float64) word {
 
 // judge lets the model be checked by what the reading that was just folded in said of it.
 func (f *fold) judge(l *law, e *Row, said *word) {
-	f.outlier = said.outlier
+	f.outlier, f.scored = said.outlier, said.foretold
 	step := modelcheck.NoStep
 	switch {
 	case !said.foretold:
@@ -205,11 +208,23 @@ func (f *fold) judge(l *law, e *Row, said *word) {
 	default:
 		step = f.check.Add(&l.model.check, modelcheck.ScoreOf(said.below, said.above), int64(e.Time))
 	}
-	if step != modelcheck.NoStep && l.widen > 0 {
-		f.widen(l)
+	if step != modelcheck.NoStep {
+		f.detect(l, step)
 	}
 	if f.check.PriorLook(f.since) {
 		f.lookAtPrior(l.model, e.Time)
+	}
+}
+
+// detect takes note of a step at the reading just folded in.
+func (f *fold) detect(l *law, step modelcheck.Step) {
+	last := f.check.LastStep()
+	widen := l.model.declaration().StepDetection.Widen
+	f.detected = append(f.detected, StepEvent{
+		Time: Instant(last.At), Since: Instant(last.Since), Up: step == modelcheck.StepUp, Widen: widen,
+	})
+	if widen > 0 {
+		f.widen(l)
 	}
 }
 
@@ -252,7 +267,8 @@ func (f *fold) addConstant(l *law, e *Row) word {
 		f.constant.AddKnown(y, u)
 		return said
 	}
-	said := foretold(f.constant.Predictive(l.model.prior, n), y)
+	var said word
+	said.below, said.above, said.foretold = f.constant.Foretell(l.model.prior, n, y)
 	f.constant.AddLearned(y)
 	return said
 }

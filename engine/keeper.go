@@ -101,7 +101,7 @@ type Keeper struct {
 	sweep       sweeper
 	laws        map[modelcheck.Settings]modelcheck.Law
 	received    Instant  // when the latest record was
-	due         []*Track // whose newest step is to be published
+	due         []dueStep
 	failed      error
 	warmed      uint64 // no number of interest, see warm
 

@@ -29,7 +29,7 @@ func (t *Track) appendState(b []byte) []byte {
 
 // append encodes what is held in a form.
 func (f *fold) append(b []byte, held form) []byte {
-	b = append(b, byte(held), flag(f.linearised))
+	b = append(b, byte(held), flag(f.linearised), flag(f.scored))
 	for _, n := range [...]int{f.count, f.since, f.renewed, int(f.last)} {
 		b = binary.AppendUvarint(b, uint64(n))
 	}
@@ -56,7 +56,7 @@ func (f *fold) append(b []byte, held form) []byte {
 // fold decodes what fold.append encoded.
 func (r *stateReader) fold() (f fold, held form) {
 	held = form(r.byte())
-	f.linearised = r.byte() == 1
+	f.linearised, f.scored = r.byte() == 1, r.byte() == 1
 	f.count, f.since, f.renewed = int(r.uvarint()), int(r.uvarint()), int(r.uvarint())
 	f.last = InstrumentNumber(r.uvarint())
 	f.first, f.lastTime = Instant(r.varint()), Instant(r.varint())

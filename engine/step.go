@@ -4,8 +4,6 @@ import (
 	"encoding/binary"
 	"math"
 	"slices"
-
-	"leadline.example/engine/modelcheck"
 )
 
 // RecordedStep is a step as it was published: what becomes of the belief by later readings
@@ -42,21 +40,31 @@ func (t *Track) step(r *Record) {
 	t.steps = append(all[max(0, len(all)-maxListedSteps+1):], RecordedStep{*r.Step, r.Position, r.ReceiveTime})
 }
 
+// dueStep is a step that is to be recorded.
+type dueStep struct {
+	track *Track
+	event StepEvent
+}
+
 // dueSteps has what the tracks' folds newly found recorded in a group to come. A fold that
 // is replayed finds it again; the record, once durable, says that it was published.
 func (k *Keeper) dueSteps(tracks []*Track) {
 	for _, t := range tracks {
-		if step := t.fold.check.LastStep(); step.Direction != modelcheck.NoStep && Instant(step.At) > t.decidedStep && !slices.Contains(k.due, t) {
-			k.due = append(k.due, t)
+		if t.job != nil {
+			continue // its fold is to be replaced
 		}
+		for _, event := range t.fold.detected {
+			k.due = append(k.due, dueStep{t, event})
+		}
+		t.fold.detected = nil
 	}
 	if len(k.due) == 0 {
 		return
 	}
 	all := k.due
 	record := &command{done: func() {}, action: func(w *work) error {
-		for _, t := range all {
-			k.recordStep(w, t)
+		for i := range all {
+			k.recordStep(w, all[i].track, &all[i].event)
 		}
 		return nil
 	}}
@@ -65,19 +73,16 @@ func (k *Keeper) dueSteps(tracks []*Track) {
 	}
 }
 
-func (k *Keeper) recordStep(w *work, t *Track) {
-	step := t.fold.check.LastStep()
-	if step.Direction == modelcheck.NoStep || Instant(step.At) <= t.decidedStep {
+// recordStep records a step unless one as late has been: what a refold finds anew of the past
+// isn't news.
+func (k *Keeper) recordStep(w *work, t *Track, event *StepEvent) {
+	if event.Time <= t.decidedStep {
 		return
 	}
-	t.decidedStep = Instant(step.At)
+	t.decidedStep = event.Time
 	k.decidedTo++
 	*w.next(declarationBytes) = Record{
-		Kind: KindStep, ReceiveTime: k.received, Number: t.number, Revision: t.rules.revision,
-		Step: &StepEvent{
-			Time: Instant(step.At), Since: Instant(step.Since), Up: step.Direction == modelcheck.StepUp,
-			Widen: t.quantity.Declaration.StepDetection.Widen,
-		},
+		Kind: KindStep, ReceiveTime: k.received, Number: t.number, Revision: t.rules.revision, Step: event,
 	}
 }
 

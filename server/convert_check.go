@@ -26,8 +26,8 @@ func setModelFigures(m *leadlinev1.Belief, b *engine.Belief) {
 		return
 	}
 	m.LastReading = &leadlinev1.Belief_LastReading{Time: timestamp(b.LastTime)}
-	if p, ok := lastTail(b); ok {
-		m.LastReading.TailProbability, m.LastReading.Outlying = &p, p < modelcheck.OutlyingProbability
+	if b.HasTail {
+		m.LastReading.TailProbability, m.LastReading.Outlying = &b.Tail, b.Tail < modelcheck.OutlyingProbability
 	}
 	if b.HasOutlier {
 		m.LastReading.OutlierProbability = &b.Outlier
@@ -39,14 +39,6 @@ func ifExists(x float64, ok bool) *float64 {
 		return nil
 	}
 	return &x
-}
-
-// lastTail returns the tail probability of the last reading, if it has one.
-func lastTail(b *engine.Belief) (p float64, ok bool) {
-	if b.Check.Total.Readings == 0 {
-		return 0, false
-	}
-	return b.Check.Last.Tail(), true
 }
 
 // modelCheckMessage is nil where nothing was checked yet.

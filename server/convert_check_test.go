@@ -151,12 +151,13 @@ func TestBeliefTellsOfItsLastReading(t *testing.T) {
 		t.Errorf("without a score: %v", m)
 	}
 	b.Check, b.HasOutlier, b.Outlier = objected(t), true, 0.875
+	b.HasTail, b.Tail = true, b.Check.Last.Tail()
 	m := beliefMessage(&b).GetLastReading()
 	// 0.00001 below: twice that is the two-sided tail.
 	if p := m.GetTailProbability(); math.Abs(p/2e-5-1) > 1e-9 || !m.GetOutlying() || m.GetOutlierProbability() != 0.875 || !m.GetTime().AsTime().Equal(b.LastTime.Time()) {
 		t.Errorf("%v", m)
 	}
-	b.Check.Last = modelcheck.ScoreOf(0.25, 0.75)
+	b.Tail = modelcheck.ScoreOf(0.25, 0.75).Tail()
 	if m := beliefMessage(&b).GetLastReading(); m.GetOutlying() || math.Abs(m.GetTailProbability()-0.5) > 1e-12 {
 		t.Errorf("%v", m)
 	}

@@ -12,7 +12,7 @@ import (
 // lastReading writes how the last reading agreed with the belief, where it stands out
 // or outliers are declared.
 func (p *sheet) lastReading(b *engine.Belief) {
-	if tail, ok := lastTail(b); ok && tail < modelcheck.OutlyingProbability {
+	if tail := b.Tail; b.HasTail && tail < modelcheck.OutlyingProbability {
 		p.line("last reading", "outlying: one so far out had probability %s", probabilityText(tail))
 	}
 	if b.HasOutlier {

@@ -11,9 +11,10 @@ import (
 func TestBeliefTellsWhetherItIsHonest(t *testing.T) {
 	b := gapBelief(t)
 	b.Check, b.HasOutlier, b.Outlier = objected(t), true, 0.9712
+	b.HasTail, b.Tail = true, b.Check.Last.Tail()
 	checkGolden(t, "belief-objected-to", beliefText(&b))
 	b.Check = modelcheck.Report{Result: modelcheck.TooFew}
-	b.HasOutlier = false
+	b.HasOutlier, b.HasTail = false, false
 	checkGolden(t, "belief-too-few", beliefText(&b))
 }
 

@@ -40,6 +40,8 @@ type Posterior struct {
 
 	logarithmic bool // all of it is of X, and the distribution is that of exp(X)
 	momentless  bool // exp(X) has no moments, whatever the form says
+	meanless    bool // likewise X has no mean
+	sdless      bool // and no standard deviation
 }
 
 // shape is a distribution that is neither normal nor Student.
@@ -96,6 +98,9 @@ func (p Posterior) StandardDeviation() (float64, bool) {
 
 // mean returns that of X, whatever the scale.
 func (p Posterior) mean() (Level, bool) {
+	if p.meanless {
+		return p.location, false
+	}
 	switch p.form {
 	case FormNormal:
 		return p.location, true
@@ -111,6 +116,8 @@ func (p Posterior) mean() (Level, bool) {
 // sd returns the standard deviation of X, whatever the scale.
 func (p Posterior) sd() (float64, bool) {
 	switch {
+	case p.sdless:
+		return math.NaN(), false
 	case p.form == FormNormal:
 		return p.scale, true
 	case p.form == FormStudent && p.dof > 2:
@@ -146,6 +153,14 @@ func (p Posterior) DegreesOfFreedom() float64 {
 		return p.dof
 	}
 	return math.NaN()
+}
+
+// WithMoments returns p, of which the mean or the standard deviation don't exist where
+// false is given: a blend at finitely many values of a learned r has both, the integral that it
+// stands for need not.
+func (p Posterior) WithMoments(mean, sd bool) Posterior {
+	p.meanless, p.sdless = p.meanless || !mean, p.sdless || !sd
+	return p
 }
 
 // LowerTail returns P(X < x), with full relative accuracy however small it is.

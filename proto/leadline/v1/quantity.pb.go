@@ -349,10 +349,10 @@ func (x *Outliers) GetInflation() float64 {
 // ModelCheckSettings says how the declaration is held against the readings.
 type ModelCheckSettings struct {
 	state protoimpl.MessageState `protogen:"open.v1"`
-	// Window: how many scored readings are looked at together, from 16 to 10,000;
+	// Window: how many scored readings are looked at together, from 16 to 4,096;
 	// absent, 64.
 	Window *uint32 `protobuf:"varint,1,opt,name=window,proto3,oneof" json:"window,omitempty"`
-	// Objections that a right declaration may meet with in a year, from 1e-9 to 1e6;
+	// Objections that a right declaration may meet with in a year, from 1e-9 to 1,000;
 	// absent, 0.001: one in a thousand years of a quantity.
 	ObjectionsPerYear *float64 `protobuf:"fixed64,2,opt,name=objections_per_year,json=objectionsPerYear,proto3,oneof" json:"objections_per_year,omitempty"`
 	unknownFields     protoimpl.UnknownFields
@@ -407,7 +407,7 @@ func (x *ModelCheckSettings) GetObjectionsPerYear() float64 {
 type StepDetection struct {
 	state protoimpl.MessageState `protogen:"open.v1"`
 	// Mean number of readings between two steps that are found where none is, from 100
-	// to 1e12; absent, 1e6. Fewer find a step sooner.
+	// to 1e9; absent, 1e6. Fewer find a step sooner.
 	FalseAlarmInterval *float64 `protobuf:"fixed64,1,opt,name=false_alarm_interval,json=falseAlarmInterval,proto3,oneof" json:"false_alarm_interval,omitempty"`
 	// What a step does to the belief; absent, nothing: it is reported only.
 	OnStep        *StepDetection_OnStep `protobuf:"bytes,2,opt,name=on_step,json=onStep,proto3" json:"on_step,omitempty"`
