@@ -87,11 +87,11 @@ func compare(a, b tally) int {
 	return slices.Compare(x[:], y[:])
 }
 
-// Points are encoded as a version, what is learned and spent, the origin, the weight at the ends,
-// the number of rows, the rows and their weights.
+// Points are encoded as a version, what is learned and spent, the origin, the number of
+// rows, the rows and their weights.
 const (
 	pointsVersion = 1
-	pointsHead    = 3 + 3*8
+	pointsHead    = 3 + 2*8
 	rowBytes      = 4 * 8
 	mostRows      = 1 << 16
 )
@@ -99,7 +99,7 @@ const (
 // AppendBinary appends the encoding of p to b.
 func (p *Points) AppendBinary(b []byte) []byte {
 	b = append(b, pointsVersion, flag(p.learned), flag(p.spent))
-	b = appendFloats(b, p.origin, p.ends)
+	b = appendFloats(b, p.origin)
 	b = appendUint(b, uint64(len(p.rows)))
 	for i := range p.rows {
 		at := &p.rows[i]
@@ -115,7 +115,7 @@ func DecodePoints(b []byte) (Points, error) {
 		return Points{}, fmt.Errorf("decode points of %d bytes: %w", len(b), errState)
 	}
 	d := decoder{rest: b[3:]}
-	p := Points{learned: b[1] == 1, spent: b[2] == 1, origin: d.float(), ends: d.least()}
+	p := Points{learned: b[1] == 1, spent: b[2] == 1, origin: d.float()}
 	rows := d.count()
 	if rows < 0 || rows > mostRows || int64(len(d.rest)) < rows*rowBytes {
 		return Points{}, fmt.Errorf("decode %d rows in %d bytes: %w", rows, len(b), errState)

@@ -31,8 +31,8 @@ type hill struct {
 const (
 	degree    = 8
 	fallen    = 36   // e^-36 is 2e-16
-	mostSplit = 10   // halvings of a stretch
-	mostParts = 80   // stretches
+	mostSplit = 20   // halvings of a stretch
+	mostParts = 120  // stretches
 	smooth    = 1e-6 // what a polynomial's last coefficients may be
 	steep     = 6    // how much h may change in one application of the Gauss rule
 )
@@ -138,7 +138,11 @@ func (b *builder) split(lo, hi, first, last float64, depth int) {
 	p := stretch{lo: lo, hi: hi, c: coefficients(&f)}
 	height := math.Max(first, math.Max(last, f[degree/2]))
 	rest := math.Max(math.Abs(p.c[degree-2])/8, math.Abs(p.c[degree-1])) + math.Abs(p.c[degree])
-	if rest <= b.smooth*(1-height/8)+1e-13*math.Abs(b.top) || depth == mostSplit || len(b.stretches) >= mostParts {
+	done := rest <= b.smooth*(1-height/8)+1e-13*math.Abs(b.top)
+	if !done && (depth == mostSplit || len(b.stretches) >= mostParts) { // the chord: concave h lies above it
+		p.c, done = [degree + 1]float64{(first + last) / 2, (last - first) / 2}, true
+	}
+	if done {
 		b.stretches = append(b.stretches, p)
 		return
 	}
@@ -224,16 +228,19 @@ func (p *stretch) within(a, b float64) float64 {
 // log returns h - top at a distance t >= 0 from the end.
 func (e *ending) log(t float64) float64 { return e.height - t*(e.slope+e.bend*t/2) }
 
-// beyond returns the mass beyond a distance t >= 0 from the end: with the square
-// completed it is a normal tail, written as exp(h(t)) times Mills' ratio (DLMF 7.8.1),
-// and 1 / (slope + bend t) where h is all but straight.
-func (e *ending) beyond(t float64) float64 {
+// logBeyond returns ln of the mass beyond a distance t >= 0 from the end: with the
+// square completed it is a normal tail, written as exp(h(t)) times Mills' ratio (DLMF
+// 7.8.1), and 1 / (slope + bend t) where h is all but straight.
+func (e *ending) logBeyond(t float64) float64 {
 	slope, root := e.slope+e.bend*t, math.Sqrt(e.bend)
 	if z := slope / root; z < 1e4 {
-		return math.Exp(e.log(t)+logNormalTail(z)+z*z/2+logRootTwoPi) / root
+		return e.log(t) + logNormalTail(z) + z*z/2 + logRootTwoPi - math.Log(root)
 	}
-	return math.Exp(e.log(t)) / slope
+	return e.log(t) - math.Log(slope)
 }
+
+// beyond returns the mass itself.
+func (e *ending) beyond(t float64) float64 { return math.Exp(e.logBeyond(t)) }
 
 // sum computes the masses and moments.
 func (g *hill) sum() {
@@ -303,6 +310,17 @@ func (g *hill) tail(x float64, s side) float64 {
 		return (g.below[i] + p.within(p.lo, x)) / g.mass
 	}
 	return (g.above[i+1] + p.within(x, p.hi)) / g.mass
+}
+
+// logTail returns the logarithm of tail, also where that vanishes.
+func (g *hill) logTail(x float64, s side) float64 {
+	switch lo, hi := g.stretches[0].lo, g.stretches[len(g.stretches)-1].hi; {
+	case s == lower && x < lo:
+		return g.ends[0].logBeyond(lo-x) - math.Log(g.mass)
+	case s == upper && x > hi:
+		return g.ends[1].logBeyond(x-hi) - math.Log(g.mass)
+	}
+	return math.Log(g.tail(x, s))
 }
 
 // between returns the share of the mass of [a, b], a < b.

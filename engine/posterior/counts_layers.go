@@ -22,11 +22,14 @@ type layers struct {
 	scale   float64
 	hasMean bool
 	hasSD   bool
-	known   bool // r is: there is one layer
+	known   bool  // r is: there is one layer
+	index   []int // of the nodes' layers in all
+	ridge   *ridge
 }
 
-// layerAt returns the layer of r, without a weight.
-func (e *evidence) layerAt(r float64) layer {
+// layerAt returns the layer of r, without a weight, its polynomials as good as smooth
+// says.
+func (e *evidence) layerAt(r, smooth float64) layer {
 	c := e.given(r, nil)
 	if len(c.edges) == 0 {
 		return layer{r: r, mean: c.mean, sd: 1 / math.Sqrt(c.weight), logMass: c.height + logRootTwoPi - math.Log(c.weight)/2}
@@ -37,16 +40,30 @@ func (e *evidence) layerAt(r float64) layer {
 
 // tail returns the probability of more, or less, than d for a layer.
 func (k *layer) tail(d, gain float64, s side) float64 {
-	if k.hill == nil {
+	switch {
+	case k.hill == nil:
 		return normalTail(pair{hi: float64(s) * (d - gain*k.mean) / math.Hypot(gain*k.sd, k.noise)})
-	}
-	if k.noise == 0 {
+	case k.sharp(gain):
 		return k.hill.tail(d/gain, s)
+	}
+	return math.Exp(k.logTail(d, gain, s))
+}
+
+// logTail returns the logarithm of tail, also where that vanishes.
+func (k *layer) logTail(d, gain float64, s side) float64 {
+	switch {
+	case k.hill == nil:
+		return logNormalTail(float64(s) * (d - gain*k.mean) / math.Hypot(gain*k.sd, k.noise))
+	case k.sharp(gain):
+		return k.hill.logTail(d/gain, s)
 	}
 	return k.average(gain, d, func(x float64) float64 {
 		return logNormalTail(float64(s) * (d - gain*x) / k.noise)
 	})
 }
+
+// sharp tells whether the noise is too small to matter.
+func (k *layer) sharp(gain float64) bool { return k.noise <= 1e-4*gain*k.sd }
 
 // between returns the probability of [a, b] for a layer.
 func (k *layer) between(a, b, gain float64) float64 {
@@ -54,23 +71,29 @@ func (k *layer) between(a, b, gain float64) float64 {
 		sd := math.Hypot(gain*k.sd, k.noise)
 		return normalBetween(pair{hi: (a - gain*k.mean) / sd}, pair{hi: (b - gain*k.mean) / sd}, (b-a)/sd)
 	}
-	if k.noise == 0 {
+	if k.sharp(gain) {
 		return k.hill.between(a/gain, b/gain)
 	}
-	return k.average(gain, a+(b-a)/2, func(x float64) float64 {
+	return math.Exp(k.average(gain, a+(b-a)/2, func(x float64) float64 {
 		return logBetween((a-gain*x)/k.noise, (b-gain*x)/k.noise, (b-a)/k.noise)
-	})
+	}))
 }
 
-// average returns the mean over eta of exp(f), f concave and largest about where
+// average returns ln of the mean over eta of exp(f), f concave and largest about where
 // gain eta is d: the product is a hill again.
 func (k *layer) average(gain, d float64, f func(float64) float64) float64 {
 	v, w := gain*gain*k.sd*k.sd, k.noise*k.noise
+	if z := math.Abs(d-gain*k.mean) / math.Sqrt(v+w); z > farOut {
+		return math.Min(0, f(k.mean)*w/(v+w)) // both are normal out there, and this is e^-5e5
+	}
 	start := k.mean + gain*k.sd*k.sd/(v+w)*(d-gain*k.mean)
 	scale := k.sd * k.noise / math.Sqrt(v+w)
 	g := newHill(func(x float64) float64 { return k.hill.log(x) + f(x) }, start, scale, rough)
-	return math.Exp(g.top) * g.mass / k.hill.mass
+	return g.top + math.Log(g.mass/k.hill.mass)
 }
+
+// farOut is how many standard deviations away no probability is left.
+const farOut = 1e3
 
 // rough is how smooth the polynomials of a product of a hill must be.
 const rough = 1e-5
@@ -114,6 +137,9 @@ func (l *layers) tail(x float64, s side) float64 {
 // beyond is tail, at a distance from the origin. Layers that can't change the sum by
 // 1e-9 of it are left out.
 func (l *layers) beyond(d float64, s side) float64 {
+	if l.ridge != nil {
+		return math.Min(1, l.ridge.tail(l.all, d, l.gain, s))
+	}
 	sum := 0.0
 	for i := range l.all {
 		k := &l.all[i]
@@ -133,6 +159,13 @@ func (l *layers) between(lo, hi float64) float64 {
 		return l.tail(lo, upper)
 	}
 	a, b := LevelOf(lo).Minus(l.origin), LevelOf(hi).Minus(l.origin)
+	if l.ridge != nil {
+		for _, s := range [2]side{lower, upper} {
+			if p, q := l.beyond(a, s), l.beyond(b, s); math.Max(p, q) < 0.6 && math.Abs(p-q) > 1e-6*(p+q) {
+				return math.Abs(p - q)
+			}
+		}
+	}
 	sum := 0.0
 	for i := range l.all {
 		sum += l.all[i].weight * l.all[i].between(a, b, l.gain)

@@ -217,14 +217,14 @@ func (q *question) solve(points, panels int) *truth {
 	} else {
 		t.l.r, t.l.logR = []float64{q.noise.SD}, []float64{0}
 	}
-	const rounds = 6
+	const rounds = 5
 	for round := range rounds {
 		ofEta, ofR := t.fill()
-		n, count := 241, 4
+		n, count := 241, panels
 		if round == rounds-1 {
 			n, count = points, panels
 		}
-		next := t.closer(ofEta, n)
+		next := t.closer(ofEta, n, round < rounds-1)
 		next.r, next.logR = t.l.r, t.l.logR
 		if learned {
 			c, d := matters(ofR, 34)
@@ -243,14 +243,18 @@ func (q *question) solve(points, panels int) *truth {
 	return t
 }
 
-// closer returns a lattice of eta about the core of the density, as wide as needed.
-func (t *truth) closer(ofEta []float64, n int) lattice {
+// closer returns a lattice of eta about the core of the density, as wide as needed, or
+// rather wider, since a coarse one may have missed something.
+func (t *truth) closer(ofEta []float64, n int, wider bool) lattice {
 	flat := make([]float64, len(ofEta))
 	for i := range ofEta {
 		flat[i] = ofEta[i] - t.l.logJacobian(i)
 	}
 	a, b := matters(ofEta, 34)
 	from, to := t.l.eta(a), t.l.eta(b)
+	if width := to - from; wider {
+		from, to = from-width/3, to+width/3
+	}
 	c, d := matters(flat, 2)
 	next := lattice{centre: t.l.eta((c + d) / 2), n: n}
 	next.unit = math.Max((t.l.eta(d)-t.l.eta(c))/4, 1e-13*math.Abs(next.centre))
@@ -292,13 +296,13 @@ func (q *question) scales() (lo, hi float64) {
 
 // centre is some finite value among all that is stated.
 func (q *question) centre() float64 {
-	for _, s := range q.readings {
-		if !math.IsInf(s.y.Lower, 0) {
-			return s.y.Lower
-		}
-		return s.y.Upper
+	if len(q.readings) == 0 {
+		return q.prior.Mean + q.bias.Mean
 	}
-	return q.prior.Mean + q.bias.Mean
+	if y := q.readings[0].y; math.IsInf(y.Lower, 0) {
+		return y.Upper
+	}
+	return q.readings[0].y.Lower
 }
 
 // at returns how the level is distributed given eta.

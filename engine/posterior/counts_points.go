@@ -15,7 +15,6 @@ type Points struct {
 	learned bool
 	rows    []row
 	weights []float64 // row after row
-	ends    float64   // their sum in the first and last row and at either end of the others, at first
 	spent   bool      // the weights have vanished
 }
 
@@ -26,16 +25,15 @@ type row struct {
 }
 
 const (
-	mostInRow   = 256  // in a row
-	pointsReach = 16   // how far h falls to the end of a row: e^-16 is 1e-7
-	pointsStep  = 0.75 // in standard deviations of the row
-	rowsStep    = 0.75 // the same between rows
-	mostRowStep = 0.5  // between rows at most, in ln r
+	mostInRow   = 400  // in a row
+	pointsReach = 19   // how far h falls to the end of a row: e^-19 is 6e-9
+	mostRowStep = 0.5  // between rows, in ln r
 	leastAbove  = 1e-9 // of the heaviest row, where r is larger: they make the tails
 	leastBelow  = 1e-5 // where it is smaller
 	sharpest    = 0.55 // the least noise, in steps, for which a row serves
-	leastPoints = 3    // effective number below which points are worn
-	mostAtEnds  = 3e-4 // of the weight, unless it was a quarter of that to begin with
+	newFlank    = 2.5  // points of a flank at first
+	leastFlank  = 1.6  // below which points are worn
+	mostAtEnds  = 2e-5 // of the weight
 	notMissed   = 1e-12
 )
 
@@ -54,7 +52,7 @@ func (c *Counts) Points(p Prior, n Noise, b Bias) Points {
 		if !n.Known {
 			r = 0
 		}
-		k := e.layerAt(r)
+		k := e.layerAt(r, smooth)
 		k.r, k.weight = r, 1
 		pts.lay(&k, e.smallest)
 		return pts
@@ -78,31 +76,55 @@ func (c *Counts) Points(p Prior, n Noise, b Bias) Points {
 		}
 	}
 	pts.scale()
-	pts.ends, _, _ = pts.spread()
 	return pts
 }
 
 // strideOf returns of how many nodes of r one will do.
 func strideOf(nodes []ruled, top float64) int {
-	var sum, squares float64
+	weights := make([]float64, len(nodes))
 	for i := range nodes {
-		w := math.Exp(nodes[i].logWeight - top)
-		sum += w
-		squares += w * w
+		weights[i] = math.Exp(nodes[i].logWeight - top)
 	}
-	// Of a normal the effective number of nodes is 2 sqrt(pi) sd / step.
-	sd := sum * sum / squares / (2 * math.Sqrt(math.Pi))
-	return max(1, int(math.Min(rowsStep*sd, mostRowStep/nodes[0].step)))
+	return max(1, int(math.Min(flankOf(weights)/newFlank, mostRowStep/nodes[0].step)))
+}
+
+// flankOf returns in how many points the steeper flank of a density rises from e^-6 to
+// e^-1 of its top: 2.05 standard deviations of a normal. The trapezoid rule needs some
+// 1.6 (2 exp(-2 pi^2 s^2) = 1e-5 of an error for a normal of s = 0.8 steps).
+func flankOf(weights []float64) float64 {
+	top := slices.Max(weights)
+	rise := func(at func(i int) float64) float64 {
+		low, high := -1., -1.
+		for i := 0; i < len(weights) && high < 0; i++ {
+			for _, c := range [2]struct {
+				level float64
+				at    *float64
+			}{{top * math.Exp(-6), &low}, {top * math.Exp(-1), &high}} {
+				if w := at(i); *c.at < 0 && w >= c.level {
+					*c.at = float64(i)
+					if i > 0 && at(i-1) > 0 {
+						*c.at -= math.Log(w/c.level) / math.Log(w/at(i-1))
+					}
+				}
+			}
+		}
+		return high - low
+	}
+	return math.Min(
+		rise(func(i int) float64 { return weights[i] }),
+		rise(func(i int) float64 { return weights[len(weights)-1-i] }))
 }
 
 // lay appends the row of a layer, fine enough for noise of r or, if that is less, of
 // other.
 func (p *Points) lay(k *layer, other float64) {
 	reach := math.Sqrt(2 * pointsReach)
-	at := row{r: k.r, first: k.mean - reach*k.sd, step: pointsStep * k.sd}
+	at := row{r: k.r, first: k.mean - reach*k.sd, step: 2.05 / newFlank * k.sd}
 	last := k.mean + reach*k.sd
 	if g := k.hill; g != nil {
-		at.first, last = g.reach(lower), g.reach(upper)
+		at.first, last = g.fallen(lower, pointsReach), g.fallen(upper, pointsReach)
+		left, right := g.fallen(lower, 1)-g.fallen(lower, 6), g.fallen(upper, 6)-g.fallen(upper, 1)
+		at.step = math.Min(left, right) / newFlank
 	}
 	if k.r > 0 {
 		other = math.Min(other, k.r)
@@ -129,22 +151,6 @@ func (p *Points) lay(k *layer, other float64) {
 	p.rows = append(p.rows, at)
 }
 
-// reach returns where h has fallen by pointsReach on a side, nearly.
-func (g *hill) reach(s side) float64 {
-	lo, hi := g.at, g.stretches[len(g.stretches)-1].hi
-	if s == lower {
-		hi = g.stretches[0].lo
-	}
-	for range 6 {
-		if m := lo + (hi-lo)/2; g.log(m) > -pointsReach {
-			lo = m
-		} else {
-			hi = m
-		}
-	}
-	return hi
-}
-
 // scale makes the weights sum to 1.
 func (p *Points) scale() {
 	sum := 0.0
@@ -169,7 +175,8 @@ func (at *row) sigma(sd, samples float64) float64 {
 }
 
 // Foretell returns the probabilities that the next indication will be below y.Lower and
-// above y.Upper, for noise as in Add; relative error about 1e-3 down to 1e-6. Not ok
+// above y.Upper, for noise as in Add; relative error mostly 1e-3, at
+// most 1e-2 down to 1e-3 and 5e-2 at 1e-6, when points are about to wear out. Not ok
 // where nothing is known, the points are worn out, or lie too far apart for noise so
 // sharp; Predictive then knows more.
 func (p *Points) Foretell(y Indication, sd, samples float64) (below, above float64, ok bool) {
@@ -177,24 +184,26 @@ func (p *Points) Foretell(y Indication, sd, samples float64) (below, above float
 		return 0, 0, false
 	}
 	lo, hi := y.Lower-p.origin, y.Upper-p.origin
-	coarse, from := 0.0, 0
+	var coarse [2]float64 // what comes from rows too coarse for this noise
+	from := 0
 	for i := range p.rows {
 		at := &p.rows[i]
 		weights := p.weights[from : from+at.count]
 		from += at.count
 		sigma := at.sigma(sd, samples)
-		b, a, all := at.foretell(weights, lo, hi, 1/sigma)
+		b, a := at.foretell(weights, lo, hi, 1/sigma)
 		below += b
 		above += a
 		if sigma < sharpest*at.step {
-			coarse += all
+			coarse[0] += b
+			coarse[1] += a
 		}
 	}
-	return below, above, coarse < 1e-3
+	return below, above, coarse[0] <= below/100 && coarse[1] <= above/100
 }
 
-// foretell returns the row's shares below lo and above hi, and its weight.
-func (at *row) foretell(weights []float64, lo, hi, precision float64) (below, above, all float64) {
+// foretell returns the row's shares below lo and above hi.
+func (at *row) foretell(weights []float64, lo, hi, precision float64) (below, above float64) {
 	scale := precision * sqrtHalf.hi
 	x, step := (at.first-lo)*scale, at.step*scale
 	gap := (lo - hi) * scale
@@ -204,7 +213,6 @@ func (at *row) foretell(weights []float64, lo, hi, precision float64) (below, ab
 		gap = 0
 	}
 	for i, w := range weights {
-		all += w
 		if w < notMissed {
 			continue
 		}
@@ -218,7 +226,7 @@ func (at *row) foretell(weights []float64, lo, hi, precision float64) (below, ab
 	if math.IsInf(hi, 1) {
 		above = 0
 	}
-	return below / 2, above / 2, all
+	return below / 2, above / 2
 }
 
 // Update takes in a reading, as Add does.
@@ -265,32 +273,25 @@ func (p *Points) Worn() bool {
 	if len(p.rows) == 0 || p.spent {
 		return true
 	}
-	ends, used, rows := p.spread()
-	return used < leastPoints || p.learned && rows < leastPoints || ends > mostAtEnds && ends > 4*p.ends
-}
-
-// spread returns the weight at the ends, and the effective numbers of points in a row and
-// of rows: the square of the sum over the sum of squares.
-func (p *Points) spread() (ends, points, rows float64) {
-	from, squares := 0, 0.0
+	sums := make([]float64, 0, len(p.rows))
+	ends, from := 0.0, 0
 	for i := range p.rows {
 		weights := p.weights[from : from+p.rows[i].count]
 		from += p.rows[i].count
-		sum, square := 0.0, 0.0
+		sum := 0.0
 		for _, w := range weights {
 			sum += w
-			square += w * w
 		}
-		squares += sum * sum
-		if square > 0 {
-			points += sum * math.Min(2*leastPoints, sum*sum/square)
+		if sum > 1e-7 && flankOf(weights) < leastFlank {
+			return true
 		}
+		sums = append(sums, sum)
 		ends += weights[0] + weights[len(weights)-1]
-		if p.learned && (i == 0 || i == len(p.rows)-1) {
-			ends += sum
-		}
 	}
-	return ends, points, 1 / squares
+	if !p.learned {
+		return ends > mostAtEnds
+	}
+	return ends+sums[len(sums)-1] > mostAtEnds || flankOf(sums) < leastFlank
 }
 
 // Clone returns a copy that shares nothing with p.

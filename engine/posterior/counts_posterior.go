@@ -83,8 +83,8 @@ func (c *Counts) Posterior(p Prior, n Noise, b Bias) Posterior {
 	if !s.proper {
 		return Posterior{}
 	}
-	all, origin, step := c.layers(p, n, b, s.mixed, s.falls)
-	l := &layers{gain: 1, all: all, known: !s.mixed}
+	l, nodes := c.layers(p, n, b, s.mixed, s.falls)
+	origin := l.origin.Hi
 	l.origin = levelOf(twoDiff(origin, b.Mean))
 	noise := b.SD
 	if !p.Vague {
@@ -97,8 +97,7 @@ func (c *Counts) Posterior(p Prior, n Noise, b Bias) Posterior {
 	for i := range l.all {
 		l.all[i].noise = noise
 	}
-	l.hasMean, l.hasSD = s.pinned || s.falls > 1, s.pinned || s.falls > 2
-	return l.closed(s, step)
+	return l.closed(s, nodes)
 }
 
 // Predictive returns the distribution of the next indication, before any display, by
@@ -116,8 +115,7 @@ func (c *Counts) Predictive(p Prior, n Noise, b Bias, sd float64) Posterior {
 		}
 		mixed, s.pinned = true, false
 	}
-	all, origin, step := c.layers(p, n, b, mixed, s.falls)
-	l := &layers{origin: LevelOf(origin), gain: 1, all: all, known: !mixed}
+	l, nodes := c.layers(p, n, b, mixed, s.falls)
 	for i := range l.all {
 		k := &l.all[i]
 		k.noise = sd
@@ -125,40 +123,43 @@ func (c *Counts) Predictive(p Prior, n Noise, b Bias, sd float64) Posterior {
 			k.noise = k.r
 		}
 	}
-	l.hasMean, l.hasSD = s.pinned || s.falls > 1, s.pinned || s.falls > 2
-	return l.closed(s, step)
+	return l.closed(s, nodes)
 }
 
-// closed computes the moments, closing the sums over r where eta, or the noise, grows
-// with it.
-func (l *layers) closed(s standing, step float64) Posterior {
-	if s.pinned || l.known {
+// closed computes what answers need: the moments, closing the sums over r where eta, or
+// the noise, grows with it.
+func (l *layers) closed(s standing, nodes []ruled) Posterior {
+	l.hasMean, l.hasSD = s.pinned || s.falls > 1, s.pinned || s.falls > 2
+	if l.known {
+		return l.posterior(0, 0)
+	}
+	l.ridge = newRidge(nodes, l.index, l.all, l.gain)
+	if s.pinned {
 		return l.posterior(0, 0)
 	}
 	closing := func(falls float64) float64 {
 		if falls <= 0 {
 			return 0
 		}
-		return 1 / math.Expm1(falls*step)
+		return 1 / math.Expm1(falls*nodes[len(nodes)-1].step)
 	}
 	return l.posterior(closing(s.falls-1), closing(s.falls-2))
 }
 
-// layers returns eta's distribution in layers over r, the origin of their numbers,
-// which lies near eta, and the step between the last two.
-func (c *Counts) layers(p Prior, n Noise, b Bias, mixed bool, falls float64) (all []layer, origin, step float64) {
+// layers returns eta's distribution in layers over r, from an origin that lies near eta,
+// and the nodes they belong to.
+func (c *Counts) layers(p Prior, n Noise, b Bias, mixed bool, falls float64) (*layers, []ruled) {
 	e := c.centred(p, n, b)
-	if !mixed {
-		r := e.r
-		if n.learned() || n.Absent {
-			r = 0
-		}
-		k := e.layerAt(r)
-		k.weight = 1
-		return []layer{k}, e.origin, 0
+	l := &layers{origin: LevelOf(e.origin), gain: 1}
+	if mixed {
+		nodes := e.nodesOf(n, falls)
+		l.all, l.index = layersOf(nodes)
+		return l, nodes
 	}
-	all, step = layersOf(e.nodesOf(n, falls))
-	return all, e.origin, step
+	k := e.layerAt(n.SD, smooth)
+	k.weight = 1
+	l.all, l.known = []layer{k}, true
+	return l, nil
 }
 
 // centred returns the evidence from an origin near where eta is.

@@ -56,6 +56,7 @@ func quantilesOf(nodes []ruled, p ...float64) []float64 {
 // gap is the interval between two nodes, where ln p(w) is the cubic through those two
 // and their neighbours (Lagrange; DLMF 3.3(i)).
 type gap struct {
+	first    int // of the four nodes
 	w, width float64
 	f        [4]float64 // ln p at -1, 0, 1, 2 widths, less the top
 }
@@ -68,7 +69,7 @@ func cellsOf(nodes []ruled) []gap {
 	}
 	var out []gap
 	for i := 1; i+2 < len(nodes); i++ {
-		g := gap{w: nodes[i].w, width: nodes[i].step}
+		g := gap{first: i - 1, w: nodes[i].w, width: nodes[i].step}
 		near := true
 		for k := range g.f {
 			g.f[k] = nodes[i-1+k].logWeight - top
@@ -82,9 +83,12 @@ func cellsOf(nodes []ruled) []gap {
 }
 
 // log returns the cubic at t widths from the left node.
-func (g *gap) log(t float64) float64 {
+func (g *gap) log(t float64) float64 { return cubic(&g.f, t) }
+
+// cubic returns the cubic through f at -1, 0, 1 and 2.
+func cubic(f *[4]float64, t float64) float64 {
 	a, b, c, d := t+1, t, t-1, t-2
-	return -g.f[0]*b*c*d/6 + g.f[1]*a*c*d/2 - g.f[2]*a*b*d/2 + g.f[3]*a*b*c/6
+	return -f[0]*b*c*d/6 + f[1]*a*c*d/2 - f[2]*a*b*d/2 + f[3]*a*b*c/6
 }
 
 // within returns the mass of the first t widths.

@@ -35,9 +35,9 @@ func (e *evidence) nodesOf(n Noise, falls float64) []ruled {
 	}
 	switch {
 	case !e.depends:
-		s.same, s.small = e.layerAt(1), math.Inf(1)
+		s.same, s.small = e.layerAt(1, smooth), math.Inf(1)
 	case n.Floor > 0:
-		s.same, s.small = e.layerAt(n.Floor), math.Log(n.Floor)-math.Log(1e7*(count+n.Worth+1))
+		s.same, s.small = e.layerAt(n.Floor, smooth), math.Log(n.Floor)-math.Log(1e7*(count+n.Worth+1))
 	}
 	look := s.span(count)
 	for _, part := range look.survey(s.logWeight).parts {
@@ -49,12 +49,12 @@ func (e *evidence) nodesOf(n Noise, falls float64) []ruled {
 // r returns r at w.
 func (s *repeatabilities) r(w float64) float64 { return s.noise.Floor + math.Exp(w) }
 
-// at returns the node at w.
-func (s *repeatabilities) at(w float64) ruled {
+// at returns the node at w, its layer as good as smooth says.
+func (s *repeatabilities) at(w, smooth float64) ruled {
 	r := s.r(w)
 	l := s.same
 	if w > s.small {
-		l = s.e.layerAt(r)
+		l = s.e.layerAt(r, smooth)
 	}
 	l.r = r
 	g := s.noise.Guess / r
@@ -65,7 +65,11 @@ func (s *repeatabilities) at(w float64) ruled {
 	return ruled{w: w, logWeight: prior + l.logMass, layer: l}
 }
 
-func (s *repeatabilities) logWeight(w float64) float64 { return s.at(w).logWeight }
+// logWeight returns ln p(w) to some 1e-2, which will do for finding where it matters.
+func (s *repeatabilities) logWeight(w float64) float64 { return s.at(w, coarse).logWeight }
+
+// coarse is how smooth polynomials must be in a search.
+const coarse = 0.03
 
 // span returns where p(w) may have its maxima. Below
 //
@@ -128,15 +132,18 @@ const mostRuled = 400
 // odd ones agree to 1e-5, which makes the whole good to the square of that.
 func (s *repeatabilities) resolve(r reach) {
 	step := math.Max(1.3*r.step, (r.hi-r.lo)/mostRuled)
+	if r.step > 0.15 { // a broad maximum, its width not asked for
+		step = math.Max(step, 0.8)
+	}
 	first, last := math.Floor((r.lo-r.peak)/step), math.Ceil((r.hi-r.peak)/step)
 	nodes := make([]ruled, 0, int(last-first)+1)
 	for i := first; i <= last; i++ {
-		nodes = append(nodes, s.at(r.peak+i*step))
+		nodes = append(nodes, s.at(r.peak+i*step, smooth))
 	}
 	for {
 		odd := make([]ruled, 0, len(nodes))
 		for i := range nodes[1:] {
-			odd = append(odd, s.at(nodes[i].w+step/2))
+			odd = append(odd, s.at(nodes[i].w+step/2, smooth))
 		}
 		a, b := total(nodes, r.height), total(odd, r.height)
 		nodes = interleave(nodes, odd)
@@ -173,8 +180,8 @@ func interleave(even, odd []ruled) []ruled {
 }
 
 // layersOf returns the layers with weights that sum to 1, without those that weigh
-// nothing, and the last step.
-func layersOf(nodes []ruled) (out []layer, step float64) {
+// nothing, and for each node the index of its layer, or -1.
+func layersOf(nodes []ruled) (out []layer, index []int) {
 	top := math.Inf(-1)
 	for i := range nodes {
 		top = math.Max(top, nodes[i].logWeight)
@@ -184,18 +191,19 @@ func layersOf(nodes []ruled) (out []layer, step float64) {
 		k := nodes[i].layer
 		k.weight = nodes[i].step * math.Exp(nodes[i].logWeight-top)
 		if k.weight < 1e-18 {
+			index = append(index, -1)
 			continue
 		}
 		sum += k.weight
-		step = nodes[i].step
 		if n := len(out); n > 0 && k.hill != nil && k.hill == out[n-1].hill && k.r < out[n-1].r*(1+1e-6) {
 			out[n-1].weight += k.weight
-			continue
+		} else {
+			out = append(out, k)
 		}
-		out = append(out, k)
+		index = append(index, len(out)-1)
 	}
 	for i := range out {
 		out[i].weight /= sum
 	}
-	return out, step
+	return out, index
 }

@@ -10,7 +10,7 @@ import (
 	"leadline.example/engine/posterior"
 )
 
-var countsCases = flag.Int("counts", 12, "random cases for each combination in the tests of counts, a quarter if r is learned")
+var countsCases = flag.Int("counts", 4, "random cases for each combination in the tests of counts, a quarter if r is learned")
 
 // mix says which readings a random question has.
 type mix struct{ display, censored, exact, own bool }
