@@ -35,6 +35,7 @@ const (
 	leastFlank  = 1.6  // below which points are worn
 	mostAtEnds  = 2e-5 // of the weight
 	notMissed   = 1e-12
+	vanishing   = 1e-60 // and soon a number too small to reckon with at full speed
 )
 
 // Points returns points for the posterior of eta; none, with which Foretell is not ok,
@@ -162,7 +163,9 @@ func (p *Points) scale() {
 		return
 	}
 	for i := range p.weights {
-		p.weights[i] /= sum
+		if p.weights[i] /= sum; p.weights[i] < vanishing {
+			p.weights[i] = 0
+		}
 	}
 }
 
@@ -175,10 +178,10 @@ func (at *row) sigma(sd, samples float64) float64 {
 }
 
 // Foretell returns the probabilities that the next indication will be below y.Lower and
-// above y.Upper, for noise as in Add; relative error mostly 1e-3, at
-// most 1e-2 down to 1e-3 and 5e-2 at 1e-6, when points are about to wear out. Not ok
-// where nothing is known, the points are worn out, or lie too far apart for noise so
-// sharp; Predictive then knows more.
+// above y.Upper, for noise as in Add; relative error mostly 1e-3, and when points are
+// about to wear out up to 1e-2, 5e-2 where the probability is 1e-6. Not ok where nothing
+// is known, the points are worn out, or lie too far apart for noise so sharp;
+// Predictive then knows more.
 func (p *Points) Foretell(y Indication, sd, samples float64) (below, above float64, ok bool) {
 	if len(p.rows) == 0 || p.spent {
 		return 0, 0, false
