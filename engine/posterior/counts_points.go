@@ -35,7 +35,7 @@ const (
 	leastFlank  = 1.6  // below which points are worn
 	mostAtEnds  = 2e-5 // of the weight
 	notMissed   = 1e-12
-	vanishing   = 1e-60 // and soon a number too small to reckon with at full speed
+	lightest    = 1e-60 // and soon a number too small to reckon with at full speed
 )
 
 // Points returns points for the posterior of eta; none, with which Foretell is not ok,
@@ -163,7 +163,7 @@ func (p *Points) scale() {
 		return
 	}
 	for i := range p.weights {
-		if p.weights[i] /= sum; p.weights[i] < vanishing {
+		if p.weights[i] /= sum; p.weights[i] < lightest {
 			p.weights[i] = 0
 		}
 	}
