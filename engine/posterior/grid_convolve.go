@@ -30,17 +30,17 @@ func (l *lattice) stride(sd, top float64) int {
 }
 
 // source returns l as what is spread by a variance q, with as much of what lies beyond
-// its ends as is within reach and counts.
-func (l *lattice) source(q float64, reach int) source {
+// its ends as is within reach and counts; nothing if whole, when all mass is in the points.
+func (l *lattice) source(q float64, reach int, whole bool) source {
 	top, sd := l.highest(), math.Sqrt(q)
 	s := source{top: top, stride: l.stride(sd, top)}
 	low, high, n := l.end(lower), l.end(upper), len(l.logs)
 	floor := top - depthKept - depthServed
 	below, above := 0, 0
-	for below < reach && low.at(l.x(-below-1)) > floor {
+	for !whole && below < reach && low.at(l.x(-below-1)) > floor {
 		below++
 	}
-	for above < reach && high.at(l.x(n+above)) > floor {
+	for !whole && above < reach && high.at(l.x(n+above)) > floor {
 		above++
 	}
 	if l.open[0] {
@@ -97,10 +97,10 @@ func (l *lattice) biasNear(i int) (mean, variance float64) {
 // step: the sum over points of their masses times the normal density. All terms
 // are positive, so tails keep their relative accuracy. What comes out is tabulated as
 // coarsely as its own width allows.
-func (l *lattice) convolve(q float64) {
+func (l *lattice) convolve(q float64, whole bool) {
 	sd := math.Sqrt(q)
 	reach := int(math.Ceil(10*sd/l.step)) + 8
-	s := l.source(q, reach)
+	s := l.source(q, reach, whole)
 	out := l.output(sd, reach)
 	rows := newNormalRows(l.step/sd, s.reach, s.stride)
 	offset := out.first*out.stride - l.first - s.first

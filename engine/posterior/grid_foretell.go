@@ -57,18 +57,19 @@ func (f *foreteller) tails(y, sd float64) (below, above float64) {
 		}
 		return below, above
 	}
-	stride := f.stride(sd, f.highest())
+	stride, sum := f.stride(sd, f.highest()), 0.0
 	l := f.reaching(y, sd)
 	for i := 0; i < len(l.logs); i += stride {
 		z := (y - l.x(i)) / sd
-		small, p := math.Erfc(math.Abs(z)*sqrtHalf.hi)/2, math.Exp(l.logs[i])*l.step*float64(stride)
+		small, p := math.Erfc(math.Abs(z)*sqrtHalf.hi)/2, math.Exp(l.logs[i])
+		sum += p
 		if z < 0 {
 			below, above = below+p*small, above+p*(1-small)
 		} else {
 			below, above = below+p*(1-small), above+p*small
 		}
 	}
-	return below, above
+	return below / sum, above / sum
 }
 
 // reaching returns the lattice, stretched towards y as far as what lies there weighs more

@@ -91,7 +91,7 @@ type parabola struct{ from, value, slope, curvature float64 }
 
 func (p parabola) at(x float64) float64 {
 	t := x - p.from
-	return p.value + t*(p.slope+t*p.curvature/2)
+	return max(lowest, p.value+t*(p.slope+t*p.curvature/2))
 }
 
 // end returns how l goes on beyond its last point on a side. It never grows outwards.
@@ -112,7 +112,7 @@ func (l *lattice) end(s side) parabola {
 	}
 	one, two := l.logs[last-int(s)*apart], l.logs[last-2*int(s)*apart]
 	h := float64(apart) * l.step
-	p.curvature = min(0, (p.value-2*one+two)/h/h)
+	p.curvature = max(lowest, min(0, (p.value-2*one+two)/h/h))
 	outward := min((p.value-one)/h+p.curvature*h/2, 0)
 	p.slope = float64(s) * outward
 	return p
@@ -229,14 +229,20 @@ func (l *lattice) resolves(stride int, top float64) bool {
 	if len(v) < 16*stride {
 		return false
 	}
-	for i := 3 * stride; i < len(v)-3*stride; i += stride {
+	for i := stride; i < len(v)-stride; i += stride {
 		depth := top - v[i]
 		if depth > depthServed {
 			continue
 		}
-		a, b, c := v[i-stride]+v[i+stride], v[i-2*stride]+v[i+2*stride], v[i-3*stride]+v[i+3*stride]
-		second := math.Abs(a - 2*v[i])
-		if second > 1.5 || second > 0.3 && depth < 8 || math.Abs(c-6*b+15*a-20*v[i]) > 0.05 {
+		a := v[i-stride] + v[i+stride]
+		if second := math.Abs(a - 2*v[i]); second > 1.5 || second > 0.3 && depth < 8 {
+			return false
+		}
+		if i < 3*stride || i >= len(v)-3*stride {
+			continue
+		}
+		b, c := v[i-2*stride]+v[i+2*stride], v[i-3*stride]+v[i+3*stride]
+		if math.Abs(c-6*b+15*a-20*v[i]) > 0.05 {
 			return false
 		}
 	}
@@ -253,7 +259,8 @@ func (l *lattice) cut(i, j int) {
 }
 
 // served returns the first point and the one after the last within a depth of the
-// top, and on an open side all until the density stays the same.
+// top, with one more that isn't, so that an edge between two points is seen; on an open
+// side all until the density stays the same.
 func (l *lattice) served(top, depth float64) (i, j int) {
 	v := l.logs
 	i, j = 0, len(v)
@@ -265,6 +272,7 @@ func (l *lattice) served(top, depth float64) (i, j int) {
 		for i+9 < j && v[i] < top-depth {
 			i++
 		}
+		i = max(0, i-1)
 	}
 	if l.open[1] {
 		for i+9 < j && math.Abs(v[j-9]-v[len(v)-1]) < settled {
@@ -274,6 +282,7 @@ func (l *lattice) served(top, depth float64) (i, j int) {
 		for i+9 < j && v[j-1] < top-depth {
 			j--
 		}
+		j = min(len(v), j+1)
 	}
 	return i, j
 }
@@ -301,16 +310,16 @@ func (l *lattice) trim() {
 	}
 }
 
-// thin keeps every second point.
+// thin keeps every second point, and one beyond each end.
 func (l *lattice) thin() {
-	start := l.first & 1
-	n := (len(l.logs) - start + 1) / 2
-	b := l.bare((l.first+start)/2, n)
+	s := l.stretch(1, math.Inf(-1))
+	start := s.first & 1
+	b := s.bare((s.first+start)/2, (len(s.logs)-start+1)/2)
 	b.step *= 2
-	for i := range n {
-		b.logs[i] = l.logs[start+2*i]
-		if l.mean != nil {
-			b.mean[i], b.variance[i] = l.mean[start+2*i], l.variance[start+2*i]
+	for i := range b.logs {
+		b.logs[i] = s.logs[start+2*i]
+		if s.mean != nil {
+			b.mean[i], b.variance[i] = s.mean[start+2*i], s.variance[start+2*i]
 		}
 	}
 	*l = b

@@ -235,7 +235,9 @@ func (k *likelihood) marks(l *lattice, out []float64) []float64 {
 		e := l.end(s)
 		for _, p := range k.parts {
 			for _, y := range ends {
-				out = append(out, e.from+(e.slope*p.sd*p.sd+y-e.from)/(1-e.curvature*p.sd*p.sd))
+				if x := e.from + (e.slope*p.sd*p.sd+y-e.from)/(1-e.curvature*p.sd*p.sd); isFinite(x) {
+					out = append(out, x)
+				}
 			}
 		}
 	}

@@ -17,12 +17,14 @@ func (l *lattice) spread(q float64) {
 	}
 	// A step much longer than the lattice is wide needs no lattice so fine. Lumping
 	// adds half the square of the step to the variance, which q then lacks.
+	whole := false
 	for q > lumped*lumped*l.step*l.step {
 		q -= l.step * l.step / 2
 		l.lump()
+		whole = true
 	}
 	if q >= l.step*l.step {
-		l.convolve(q)
+		l.convolve(q, whole)
 	} else {
 		l.nudge(q)
 	}
@@ -101,17 +103,18 @@ func (l *lattice) nudge(q float64) {
 	if s := l.steepest(depthServed) * ratio; s > 1 {
 		parts = math.Ceil(s * s)
 	}
-	for range int(min(parts, 1000)) {
+	for range int(parts) {
 		l.step7(ratio / math.Sqrt(parts))
 	}
 }
 
-// steepest returns the largest change between points no deeper than that.
+// steepest returns the largest change between points no deeper than that, but for edges
+// that the points don't resolve.
 func (l *lattice) steepest(depth float64) float64 {
 	floor, most := l.highest()-depth, 0.0
 	for i, v := range l.logs[1:] {
-		if v > floor {
-			most = max(most, math.Abs(v-l.logs[i]))
+		if change := math.Abs(v - l.logs[i]); v > floor && change < 4 {
+			most = max(most, change)
 		}
 	}
 	return most
@@ -119,11 +122,16 @@ func (l *lattice) steepest(depth float64) float64 {
 
 // step7 is a part of nudge, of a standard deviation of so many steps.
 func (l *lattice) step7(ratio float64) {
-	s := l.stretch(6, math.Inf(-1))
+	s, floor := l.stretch(6, math.Inf(-1)), l.highest()-depthKept-depthServed
 	out := s.bare(s.first+3, len(s.logs)-6)
 	even, odd := interpolants(ratio*hermiteNodes[0]), interpolants(ratio*hermiteNodes[1])
 	for i := range out.logs {
 		w := s.logs[i : i+7 : i+7]
+		sixth := w[0] + w[6] - 6*(w[1]+w[5]) + 15*(w[2]+w[4]) - 20*w[3]
+		if !(math.Abs(sixth) < 1) || w[3] < floor {
+			s.exchange(&out, i, ratio*ratio/2)
+			continue
+		}
 		near, far := even.at(w), odd.at(w)
 		v := [5]float64{math.Exp(far[0]), math.Exp(near[0]), 1, math.Exp(near[1]), math.Exp(far[1])}
 		for k := range v {
@@ -135,6 +143,25 @@ func (l *lattice) step7(ratio float64) {
 		}
 	}
 	*l = out
+}
+
+// exchange is step7 for a point next to an edge between points, where no polynomial
+// follows the logarithm, or beyond one: a share goes to either neighbour.
+func (s *lattice) exchange(out *lattice, i int, share float64) {
+	top := max(s.logs[i+2], s.logs[i+3], s.logs[i+4])
+	var m moments
+	for k, w := range [3]float64{share, 1 - 2*share, share} {
+		w *= math.Exp(s.logs[i+2+k] - top)
+		mean, variance := 0.0, 0.0
+		if s.mean != nil {
+			mean, variance = s.mean[i+2+k]-s.mean[i+3], s.variance[i+2+k]
+		}
+		m.add(w, mean, variance)
+	}
+	out.logs[i] = top + math.Log(m.weight)
+	if s.mean != nil {
+		out.mean[i], out.variance[i] = m.about(s.mean[i+3])
+	}
 }
 
 // mixNear is mix for the five places from which point i of out is reached.

@@ -35,7 +35,12 @@ func (product *lattice) serves(l *lattice, k *likelihood) bool {
 			return false
 		}
 	}
-	return product.resolves(1, top)
+	if product.resolves(1, top) {
+		return true
+	}
+	// More points would be cut down again.
+	i, j := product.served(top, depthServed)
+	return j-i > mostPoints/2
 }
 
 // openAt tells whether x lies beyond the points on a side that is open.

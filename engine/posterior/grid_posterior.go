@@ -138,6 +138,11 @@ var (
 // inside returns the integral from a to b, fractions of the step that follows point i,
 // in units of exp(total).
 func (d *density) inside(i int, a, b float64) float64 {
+	if rise := d.logs[i+1] - d.logs[i]; !(math.Abs(rise) < 8) {
+		// An edge between points, straight in logarithms.
+		low, high := d.logs[i]+a*rise-d.total, d.logs[i]+b*rise-d.total
+		return (math.Exp(high) - math.Exp(low)) / rise * d.step
+	}
 	sum := 0.0
 	for k, node := range cellNodes {
 		sum += cellWeights[k] * math.Exp(interpolate(d.logs, i, a+(b-a)*node)-d.total)
@@ -173,16 +178,17 @@ func (d *density) logTail(x float64, s side) float64 {
 		return d.rest(s, x)
 	case outside != 0:
 		return math.Log1p(-math.Exp(d.rest(outside, x)))
-	case s == lower:
-		p := d.low[i]
-		if f > 0 {
-			p += d.inside(i, 0, f)
-		}
-		return math.Log(p)
+	case f == 0 && s == lower:
+		return math.Log(d.low[i])
 	case f == 0:
 		return math.Log(d.high[i])
 	}
-	return math.Log(d.high[i+1] + d.inside(i, f, 1))
+	// The cell's two parts, made to sum to it.
+	before, after := d.inside(i, 0, f), d.inside(i, f, 1)
+	if s == lower {
+		return math.Log(d.low[i] + (d.low[i+1]-d.low[i])*(before/(before+after)))
+	}
+	return math.Log(d.high[i+1] + (d.high[i]-d.high[i+1])*(after/(before+after)))
 }
 
 func (d *density) tail(x float64, s side) float64 {
@@ -271,7 +277,7 @@ func (j *joined) between(lo, hi float64) float64 {
 
 func (j *joined) quantile(p float64, s side) float64 {
 	return outwards(p, s, j.mean, j.sd, func(distance float64) float64 {
-		sum := logZero
+		sum := math.Inf(-1)
 		for i, d := range j.parts {
 			sum = logAdd(sum, math.Log(j.weights[i])+d.logTail(j.mean.Minus(d.origin)+distance, s))
 		}
@@ -279,8 +285,44 @@ func (j *joined) quantile(p float64, s side) float64 {
 	})
 }
 
-// logZero is the logarithm of nothing.
-var logZero = math.Inf(-1)
+// exponentialMoments returns mean and standard deviation of exp(X), and whether they
+// exist: the sums over points, and as far beyond them as the weight of exp(2 X) asks
+// for. They don't where the density doesn't fall faster than that.
+func (d *density) exponentialMoments() (mean, sd float64, ok bool) {
+	centre := d.x(len(d.logs) / 2)
+	first, ok1 := d.weighted(1, centre)
+	second, ok2 := d.weighted(2, centre)
+	scale := math.Exp(d.origin.Plus(centre).Value())
+	return scale * first, scale * math.Sqrt(max(0, second-first*first)), ok1 && ok2
+}
+
+// weighted returns E exp(k (X - centre)).
+func (d *density) weighted(k, centre float64) (sum float64, ok bool) {
+	top, total := d.highest(), 0.0
+	at := func(i int) float64 {
+		w := math.Exp(d.lattice.at(d.x(i)) - top)
+		total += w
+		return w * math.Exp(k*(d.x(i)-centre))
+	}
+	term := 0.0
+	for i := range d.logs {
+		term = at(i)
+		sum += term
+	}
+	for i := len(d.logs); i < len(d.logs)+mostPoints && term > 1e-12*sum; i++ {
+		term = at(i)
+		sum += term
+	}
+	return sum / total, term <= 1e-12*sum
+}
+
+// exponentialMoments mixes those of the parts.
+func (j *joined) exponentialMoments() (mean, sd float64, ok bool) {
+	a, s, ok1 := j.parts[0].exponentialMoments()
+	b, u, ok2 := j.parts[1].exponentialMoments()
+	v, w := j.weights[0], j.weights[1]
+	return v*a + w*b, math.Sqrt(v*s*s + w*u*u + v*w*(a-b)*(a-b)), ok1 && ok2
+}
 
 // logAdd returns ln(exp(a) + exp(b)).
 func logAdd(a, b float64) float64 {

@@ -73,10 +73,10 @@ func TestGridOfConstantEqualsIntegration(t *testing.T) {
 	for _, k := range kinds {
 		t.Run(k.name, func(t *testing.T) {
 			var worst gap
-			for range 200 {
+			for range cases(200) {
 				c := k.kind.constantCase(random, 1+random.IntN(6), math.Exp(random.NormFloat64()-1), math.Exp(random.NormFloat64()-1))
 				lo, hi := c.window(0)
-				const n = 8192
+				const n = 4096
 				worst.widen(c.check(t, c.solve(lo, (hi-lo)/n, n+1, 0).table()))
 			}
 			t.Logf("at most %+v", worst)
@@ -89,7 +89,7 @@ func TestGridOfWalkEqualsIntegration(t *testing.T) {
 	for _, k := range kinds {
 		t.Run(k.name, func(t *testing.T) {
 			var worst gap
-			for range 50 {
+			for range cases(10) {
 				c := k.kind.movingCase(random)
 				lo, hi, h := c.span()
 				worst.widen(c.check(t, c.solve(lo, h, int((hi-lo)/h)+1, 0).table()))
