@@ -128,7 +128,7 @@ func (t *Track) refold(m *model) bool {
 // trackOf returns the track with that number, making it if it is new.
 func (k *Keeper) trackOf(n QuantityNumber, id QuantityID) *Track {
 	if int(n) > len(k.byNumber) {
-		t := &Track{id: id, number: n}
+		t := &Track{id: id, number: n, decidedStep: math.MinInt64}
 		t.stored.Store(math.MinInt64)
 		k.byNumber = append(k.byNumber, t)
 		k.directory.Load().add(t)

@@ -25,6 +25,9 @@ type bank struct {
 	widened []int   // counts after which the level was widened
 	wide    float64 // variance of that
 	learned spread
+	part    part // of the readings since the prior or the last renewal
+	lost    int  // earlier parts whose level took a reading that would have taught r
+	blank   bool // no reading taught r yet, of which the prior says nothing: the node stands for any r
 }
 
 // spread is what bounds r from below: whether readings that teach it differ.
@@ -32,6 +35,17 @@ type spread struct {
 	count       int
 	least, most float64
 }
+
+// part is what bounds the level of a part that is measured.
+type part struct {
+	renewed int  // renewals before it
+	vague   bool // its prior is flat
+	pinned  bool // a reading that doesn't teach r bounds it
+	taught  bool // a reading that does was made of it
+}
+
+// floats tells whether only readings that teach r bound the level.
+func (p *part) floats() bool { return p.vague && !p.pinned }
 
 // node is what is held given r.
 type node struct {
@@ -80,13 +94,21 @@ func (f *fold) addBank(l *law, e *Row) word {
 	m := l.model
 	if f.bank == nil {
 		f.bank = &bank{}
-		if s := m.scale(); s.proper {
-			f.bank.nodes = s.fromPrior()
-			f.bank.step = s.step
-			f.bank.start(m, e)
-		}
+		f.bank.begin(m, e)
 	}
 	return f.bank.add(m, e)
+}
+
+// begin places the first nodes.
+func (b *bank) begin(m *model, first *Row) {
+	s := m.scale()
+	if b.blank = !s.proper; b.blank {
+		b.nodes = []node{{v: s.v(max(1, 2*s.floor))}}
+	} else {
+		b.nodes, b.step = s.fromPrior()
+	}
+	b.part = part{vague: m.prior.Vague}
+	b.start(m, first)
 }
 
 // start gives each node the belief before any reading.
@@ -107,8 +129,16 @@ func (m *model) holder(first *Row) holder {
 // add folds a reading into every node.
 func (b *bank) add(m *model, e *Row) word {
 	b.count++
-	if m.teaches(e) {
+	b.renew(m, e.Time)
+	switch {
+	case m.teaches(e):
 		b.learned.add(e.Value)
+		b.part.taught = true
+		if b.blank {
+			b.nodes, b.blank = nil, false
+		}
+	case e.Extent == ExtentValue || e.Extent == ExtentBetween:
+		b.part.pinned = true
 	}
 	weights := b.weights()
 	s := m.scale()
@@ -135,13 +165,24 @@ func (b *bank) prune() {
 	const vanished = 60 // beyond e^-60 of the top
 	logs := b.logWeights()
 	top, first, last := slices.Max(logs), 0, len(logs)-1
-	for top-logs[first] > vanished {
+	for top-logs[first] > vanished/2 {
 		first++
 	}
 	for top-logs[last] > vanished {
 		last--
 	}
 	b.nodes = b.nodes[first : last+1]
+}
+
+// renew begins new parts for the renewals up to an instant.
+func (b *bank) renew(m *model, at Instant) {
+	for b.part.renewed < len(m.renewals) && m.renewals[b.part.renewed].Time <= at {
+		if b.part.floats() && b.part.taught {
+			b.lost++
+		}
+		prior, _ := m.renewalPrior(&m.renewals[b.part.renewed])
+		b.part = part{renewed: b.part.renewed + 1, vague: prior.Vague}
+	}
 }
 
 func (s *spread) add(y float64) {
@@ -185,22 +226,24 @@ func (b *bank) widen(variance float64) {
 
 // level returns the distribution of the level at an instant.
 func (b *bank) level(m *model, at Instant) posterior.Posterior {
-	p := b.blend(m, func(n *node) posterior.Posterior { return n.held.after(m, at) })
-	if m.prior.Vague {
-		return b.existing(m, p)
-	}
-	return p
+	as := *b
+	as.renew(m, at)
+	return b.blend(m, as.part.floats(), func(n *node) posterior.Posterior { return n.held.after(m, at) })
 }
 
-// blend mixes what the nodes say.
-func (b *bank) blend(m *model, say func(*node) posterior.Posterior) posterior.Posterior {
+// blend mixes what the nodes say; wide tells whether that is as wide as r where r is large.
+func (b *bank) blend(m *model, wide bool, say func(*node) posterior.Posterior) posterior.Posterior {
 	parts := make([]posterior.Posterior, len(b.nodes))
 	for i := range b.nodes {
 		parts[i] = say(&b.nodes[i])
 	}
 	p := posterior.Blend(b.logWeights(), parts)
-	if m.learns() != nil {
-		return p.WithoutExponentialMoments()
+	if m.learns() == nil || len(parts) == 0 {
+		return p
+	}
+	p = p.WithoutExponentialMoments()
+	if wide {
+		return b.existing(m, p, &parts[len(parts)-1])
 	}
 	return p
 }
@@ -208,37 +251,49 @@ func (b *bank) blend(m *model, say func(*node) posterior.Posterior) posterior.Po
 // falls returns the exponent with which the density of ln r falls in the end, as r^-falls:
 // each reading that teaches r gives 1/r, but the first of a flat level, which that takes.
 func (b *bank) falls(m *model) float64 {
-	falls := float64(b.learned.count)
+	falls := float64(b.learned.count - b.lost)
 	if m.learns() != nil {
 		falls += m.learns().Worth
 	}
-	if m.prior.Vague {
+	if b.part.floats() && b.part.taught {
 		falls--
 	}
 	return falls
 }
 
 // existing takes away the moments that don't exist where a distribution is as wide as r:
-// those of r up to its own order.
-func (b *bank) existing(m *model, p posterior.Posterior) posterior.Posterior {
-	if m.learns() == nil {
-		return p
-	}
+// those of r up to its own order. What the second has beyond the last node it adds: a geometric
+// series, as weights fall by the step's share of falls, and variances grow by 2.
+func (b *bank) existing(m *model, p posterior.Posterior, last *posterior.Posterior) posterior.Posterior {
 	falls := b.falls(m)
-	return p.WithMoments(falls > 1, falls > 2)
+	mean, hasMean := p.Mean()
+	sd, hasSD := p.StandardDeviation()
+	if hasMean, hasSD = hasMean && falls > 1, hasSD && falls > 2; hasSD && len(b.nodes) > 1 {
+		weights := b.weights()
+		end, _ := last.Mean()
+		wide, _ := last.StandardDeviation()
+		ratio := math.Exp(-(falls - 2) * b.step)
+		beyond := weights[len(weights)-1] * (wide*wide + (end-mean)*(end-mean)) * ratio / (1 - ratio)
+		p = p.WithStandardDeviation(math.Sqrt(sd*sd + beyond))
+	}
+	return p.WithMoments(hasMean, hasSD)
 }
 
 // predictive returns the distribution of an indication at an instant, by an instrument or none.
 func (b *bank) predictive(m *model, at Instant, by *Instrument) posterior.Posterior {
 	if b == nil {
 		b = &bank{}
-		if s := m.scale(); s.proper {
-			b.nodes = s.fromPrior()
-			b.start(m, &Row{Time: at})
-		}
+		b.begin(m, &Row{Time: at})
+	}
+	next := Row{Time: at}
+	if by != nil {
+		next.Instrument = by.Number
+	}
+	if b.blank && (by == nil || m.instrument(by.Number) != nil) && m.teaches(&next) {
+		return posterior.Posterior{}
 	}
 	s := m.scale()
-	return b.existing(m, b.blend(m, func(n *node) posterior.Posterior { return n.held.foresee(m, at, by, s.r(n.v)) }))
+	return b.blend(m, true, func(n *node) posterior.Posterior { return n.held.foresee(m, at, by, s.r(n.v)) })
 }
 
 // lone is a joint belief given r.

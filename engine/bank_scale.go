@@ -69,7 +69,6 @@ type scale struct {
 	guess   float64
 	floor   float64
 	ruling  ruling
-	step    float64 // between the nodes of the prior
 }
 
 func (m *model) scale() scale {
@@ -133,25 +132,26 @@ func logExpm1(x float64) float64 {
 
 // ruling is how closely nodes are laid, in half-widths of the posterior at exp(-1/2): as placed,
 // and when they are worn, to be placed anew; and ln by which weights fall from the top to
-// the ends, as placed and when worn.
+// the end of large r, on which far tails rest, as placed and when worn. To the end of small r
+// half of that is enough.
 type ruling struct{ spacing, worn, depth, shallow float64 }
 
 // ruling returns how closely the model's nodes are laid: less so for beliefs on points, a
 // node of which costs a hundred times as much.
 func (m *model) ruling() ruling {
 	if m.form == gridForm {
-		return ruling{spacing: 0.6, worn: 1.1, depth: 24, shallow: 18}
+		return ruling{spacing: 0.55, worn: 1, depth: 24, shallow: 18}
 	}
-	return ruling{spacing: 0.3, worn: 0.6, depth: 29, shallow: 20}
+	return ruling{spacing: 0.25, worn: 0.5, depth: 29, shallow: 20}
 }
 
 // maxNodes bounds the nodes of a bank.
 const maxNodes = 240
 
-// fromPrior places nodes on a proper prior, which has one maximum, and sets step.
-func (s *scale) fromPrior() []node {
+// fromPrior places nodes on a proper prior, which has one maximum.
+func (s *scale) fromPrior() (nodes []node, step float64) {
 	if !s.learned {
-		return []node{{}}
+		return []node{{}}, 0
 	}
 	top := s.v(max(s.guess, s.floor*(1+1e-3)))
 	width := 1 / math.Sqrt(2*s.worth)
@@ -167,10 +167,9 @@ func (s *scale) fromPrior() []node {
 			move /= 4
 		}
 	}
-	half := (s.drop(top, width) + s.drop(top, -width)) / 2
-	nodes, step := s.place(s.logPrior, top, half)
-	s.step = step
-	return nodes
+	right, left := s.drop(top, width), s.drop(top, -width)
+	half := min((right+left)/2, steep*min(right, left))
+	return s.place(s.logPrior, top, half)
 }
 
 // drop returns how far from the top the prior falls by exp(-1/2).
@@ -194,7 +193,7 @@ func (s *scale) drop(top, width float64) float64 {
 func (s *scale) place(log func(v float64) float64, top, half float64) (nodes []node, step float64) {
 	step = s.ruling.spacing * half
 	for {
-		below, above := s.reach(log, top, -step), s.reach(log, top, step)
+		below, above := s.reach(log, top, -step, s.ruling.depth/2), s.reach(log, top, step, s.ruling.depth)
 		if below+above+1 <= maxNodes {
 			for i := -below; i <= above; i++ {
 				v := top + float64(i)*step
@@ -207,8 +206,8 @@ func (s *scale) place(log func(v float64) float64, top, half float64) (nodes []n
 }
 
 // reach returns after how many steps a density has fallen to where it no longer matters.
-func (s *scale) reach(log func(v float64) float64, top, step float64) int {
-	floor := log(top) - s.ruling.depth
+func (s *scale) reach(log func(v float64) float64, top, step, depth float64) int {
+	floor := log(top) - depth
 	n := 1
 	for ; n < 16*maxNodes && log(top+float64(n)*step) > floor; n++ {
 	}
@@ -220,19 +219,20 @@ func (s *scale) reach(log func(v float64) float64, top, step float64) int {
 func (b *bank) ruined(m *model) bool {
 	s := m.scale()
 	switch {
-	case !s.learned:
+	case !s.learned || b.blank:
 		return false
 	case len(b.nodes) == 0:
-		return b.ready(&s) && b.count > b.placed+b.placed/4
+		return b.ready(m, &s) && b.count > b.placed+b.placed/4
 	case b.count <= b.placed+b.placed/8:
 		return false
 	}
 	return !b.fits(&s.ruling)
 }
 
-// ready tells whether readings can bound r where its prior doesn't.
-func (b *bank) ready(s *scale) bool {
-	return b.learned.count >= 2 && (s.floor > 0 || b.learned.most > b.learned.least)
+// ready tells whether readings can bound r where its prior doesn't: from above, and, without
+// a floor, from below, for which it takes two that differ.
+func (b *bank) ready(m *model, s *scale) bool {
+	return b.learned.count >= 2 && b.falls(m) > 0 && (s.floor > 0 || b.learned.most > b.learned.least)
 }
 
 // fits tells whether the nodes are close enough and cover the posterior.
@@ -245,8 +245,11 @@ func (b *bank) fits(r *ruling) bool {
 func (b *bank) covers(r *ruling) bool {
 	logs := b.logWeights()
 	top, _ := summit(logs)
-	return logs[top]-logs[0] > r.shallow && logs[top]-logs[len(logs)-1] > r.shallow
+	return logs[top]-logs[0] > r.shallow/2 && logs[top]-logs[len(logs)-1] > r.shallow
 }
+
+// steep bounds the half-width by that of the steeper side, which the nodes have to follow.
+const steep = 1.5
 
 // summit returns the index of the highest of logarithms of a density at equal distances, and the
 // half-width at which it has fallen by exp(-1/2), in distances.
@@ -268,22 +271,22 @@ func summit(logs []float64) (top int, half float64) {
 			}
 		}
 	}
-	return top, (side(1) + side(-1)) / 2
+	right, left := side(1), side(-1)
+	return top, min((right+left)/2, steep*min(right, left))
 }
 
 // replace places the nodes anew on the posterior after rows, which are all, and folds
 // them again. If r isn't bounded by them, there are no nodes after it.
 func (b *bank) replace(m *model, rows []entry) {
 	s := m.scale()
-	nodes, step := b.nodes, b.step
-	if len(nodes) == 0 {
-		nodes, step = b.survey(m, &s)
+	if len(b.nodes) == 0 || b.adrift() {
+		nodes, step := b.survey(m, &s)
 		b.fill(m, nodes, step, rows)
 	}
-	for range 4 {
+	for range 6 {
 		logs := b.logWeights()
 		top, half := summit(logs)
-		nodes, step = s.place(b.outline(logs), b.nodes[top].v, half*b.step)
+		nodes, step := s.place(b.outline(logs), b.nodes[top].v, half*b.step)
 		b.fill(m, nodes, step, rows)
 		if tight := s.ruling; b.fits(&ruling{tight.spacing * 1.3, tight.spacing * 1.3, tight.depth, tight.shallow}) {
 			break
@@ -295,23 +298,37 @@ func (b *bank) replace(m *model, rows []entry) {
 	}
 }
 
-// survey places coarse nodes where readings that teach an improper r can put it.
+// adrift tells whether the posterior of r has its top at the end of the nodes or beyond.
+func (b *bank) adrift() bool {
+	top, _ := summit(b.logWeights())
+	return top < 2 || top > len(b.nodes)-3
+}
+
+// survey places coarse nodes wherever readings and prior together can put r: between what was
+// guessed and what readings differ by, and as far beyond as the density may matter.
 func (b *bank) survey(m *model, s *scale) (nodes []node, step float64) {
-	const step0, depth = 0.5, 29.0
+	const surveyed = 160
 	difference := (b.learned.most - b.learned.least) / 2
 	if m.declaration().Scale == ScaleLog {
 		difference = math.Log(b.learned.most/b.learned.least) / 2
 	}
-	low, high := -depth, 0.0
-	if s.floor == 0 {
-		low, high = math.Log(difference)-depth/2, math.Log(difference)+depth+2
-	} else {
-		high = max(0, math.Log(max(difference, s.floor)/s.floor)) + depth + 2
+	low, high := math.Inf(1), math.Inf(-1)
+	for _, r := range [...]float64{difference, s.guess, 2 * s.floor} {
+		if r = max(r, s.floor*(1+1e-6)); r > 0 {
+			low, high = min(low, s.v(r)), max(high, s.v(r))
+		}
 	}
-	for v := low; v <= high; v += step0 {
+	low -= s.ruling.depth / 2
+	if s.floor > 0 {
+		low -= s.ruling.depth / 2
+	}
+	high += 2 + s.ruling.depth/max(1, b.falls(m))
+	step = (high - low) / (surveyed - 1)
+	for i := range surveyed {
+		v := low + float64(i)*step
 		nodes = append(nodes, node{v: v, prior: s.logPrior(v)})
 	}
-	return nodes, step0
+	return nodes, step
 }
 
 // outline returns the logarithm of the density between and beyond the nodes: parabolas, and

@@ -13,8 +13,8 @@ func (b *bank) append(to []byte) []byte {
 	if b == nil {
 		return append(to, 0)
 	}
-	to = append(to, 1)
-	for _, n := range [...]int{b.placed, b.count, b.learned.count, len(b.widened)} {
+	to = append(to, 1, flag(b.part.vague), flag(b.part.pinned), flag(b.part.taught), flag(b.blank))
+	for _, n := range [...]int{b.part.renewed, b.lost, b.placed, b.count, b.learned.count, len(b.widened)} {
 		to = binary.AppendUvarint(to, uint64(n))
 	}
 	for _, n := range b.widened {
@@ -43,7 +43,9 @@ func (r *stateReader) bank() *bank {
 	if r.byte() == 0 {
 		return nil
 	}
-	b := &bank{placed: int(r.uvarint()), count: int(r.uvarint())}
+	b := new(bank)
+	b.part.vague, b.part.pinned, b.part.taught, b.blank = r.byte() == 1, r.byte() == 1, r.byte() == 1, r.byte() == 1
+	b.part.renewed, b.lost, b.placed, b.count = int(r.uvarint()), int(r.uvarint()), int(r.uvarint()), int(r.uvarint())
 	b.learned.count = int(r.uvarint())
 	for n := r.uvarint(); n > 0 && r.err == nil; n-- {
 		b.widened = append(b.widened, int(r.uvarint()))

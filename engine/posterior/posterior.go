@@ -163,6 +163,13 @@ func (p Posterior) WithMoments(mean, sd bool) Posterior {
 	return p
 }
 
+// WithStandardDeviation returns p, the standard deviation of X being sd: that of the integral
+// for which a blend stands, of which its parts show less.
+func (p Posterior) WithStandardDeviation(sd float64) Posterior {
+	p.scale = sd
+	return p
+}
+
 // LowerTail returns P(X < x), with full relative accuracy however small it is.
 func (p Posterior) LowerTail(x float64) float64 { return p.tail(p.point(x), lower) }
 
