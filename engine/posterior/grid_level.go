@@ -73,6 +73,9 @@ func (l *lattice) differences() lattice {
 	var m moments
 	for i := 0; i < len(s.logs); i += stride {
 		w, v := math.Exp(s.logs[i]-top), s.variance[i]
+		if !(v > 0) {
+			continue // too deep to have had a density to mix
+		}
 		centres, rates = append(centres, s.x(i)-s.mean[i]), append(rates, 1/(2*v))
 		masses = append(masses, w*float64(stride)*s.step/math.Sqrt(2*math.Pi*v))
 		m.add(w, s.x(i)-s.mean[i], v)

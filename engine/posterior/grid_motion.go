@@ -150,6 +150,10 @@ func (l *lattice) step7(ratio float64) {
 func (s *lattice) exchange(out *lattice, i int, share float64) {
 	top := max(s.logs[i+2], s.logs[i+3], s.logs[i+4])
 	var m moments
+	out.logs[i] = s.logs[i+3]
+	if s.mean != nil {
+		out.mean[i], out.variance[i] = s.mean[i+3], s.variance[i+3]
+	}
 	for k, w := range [3]float64{share, 1 - 2*share, share} {
 		w *= math.Exp(s.logs[i+2+k] - top)
 		mean, variance := 0.0, 0.0
@@ -157,6 +161,9 @@ func (s *lattice) exchange(out *lattice, i int, share float64) {
 			mean, variance = s.mean[i+2+k]-s.mean[i+3], s.variance[i+2+k]
 		}
 		m.add(w, mean, variance)
+	}
+	if m.weight == 0 {
+		return
 	}
 	out.logs[i] = top + math.Log(m.weight)
 	if s.mean != nil {
