@@ -36,37 +36,6 @@ func Blend(logWeights []float64, parts []Posterior) Posterior {
 	return b.posterior()
 }
 
-// BlendLearned is Blend for parts given a learned r, in ascending order and, at its
-// upper end, equidistant in ln r: a sum that stands for an integral over r. Given r
-// the variance of a level that was flat grows as r^2, while the weights fall as a
-// power of r that may hardly be more. So what the moments sum goes on beyond the last
-// part as a geometric series, of ratio q that the last two terms show: it is closed as
-// such, the last term times q / (1 - q), and where q isn't below 1 there is no such
-// moment. exp(X) has none at all (WithoutExponentialMoments). Derived for this package.
-//
-// What ends the growth, as a proper prior of the level does, must do so below the last part's r.
-func BlendLearned(logWeights []float64, parts []Posterior) Posterior {
-	p := Blend(logWeights, parts).WithoutExponentialMoments()
-	b, ok := p.shape.(*blend)
-	if !ok || !b.hasSD {
-		return p
-	}
-	last := len(b.parts) - 1
-	term := func(i int, power float64) float64 { // its logarithm
-		d := math.Hypot(b.parts[i].scale, b.parts[i].location.Minus(p.location))
-		return math.Log(b.weights[i]) + power*math.Log(d)
-	}
-	falls := func(power float64) float64 { return term(last-1, power) - term(last, power) } // -ln q
-	b.hasMean, b.hasSD = falls(1) > noFall, falls(2) > noFall
-	if b.hasSD {
-		p.scale = math.Hypot(p.scale, math.Exp(term(last, 2)/2)/math.Sqrt(math.Expm1(falls(2))))
-	}
-	return p
-}
-
-// noFall is the fall of a term's logarithm that is none but for rounding.
-const noFall = 1e-7
-
 // posterior works out form and moments.
 func (b *blend) posterior() Posterior {
 	out := Posterior{form: FormMixture, shape: b, logarithmic: b.parts[0].logarithmic}

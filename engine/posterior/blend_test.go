@@ -204,59 +204,6 @@ func TestBlendsAreDistributions(t *testing.T) {
 	}
 }
 
-// What is known of a level read directly under a flat prior is Student t (Gelman et
-// al. 2013, 3.2), which is normal given r, over ln r with weights r^-nu exp(-nu / (2 r^2)).
-func TestBlendOverALearnedScaleIsStudent(t *testing.T) {
-	for _, dof := range []float64{1, 1.5, 2, 2.01, 2.3, 3, 7, 60} {
-		var logs []float64
-		var parts []posterior.Posterior
-		step := 0.4 / math.Sqrt(dof)
-		for u := -4.0; u < 32/dof+15; u += step { // to weights that no double holds
-			logs = append(logs, -dof*u-dof/2*math.Exp(-2*u))
-			parts = append(parts, posterior.Normal(posterior.LevelOf(3), math.Exp(u)))
-		}
-		p, want := posterior.BlendLearned(logs, parts), posterior.Student(posterior.LevelOf(3), 1, dof)
-		name := fmt.Sprint("degrees of freedom ", dof)
-		_, hasMean := p.Mean()
-		sd, hasSD := p.StandardDeviation()
-		if hasMean != (dof > 1) || hasSD != (dof > 2) {
-			t.Errorf("%s: has mean: %v, sd: %v", name, hasMean, hasSD)
-		}
-		if s, _ := want.StandardDeviation(); hasSD {
-			near(t, name+" sd", sd, s, 1e-4)
-		}
-		for _, q := range []float64{1e-9, 1e-3, 0.3} {
-			near(t, fmt.Sprint(name, " lower tail ", q), p.LowerTail(want.Quantile(q)), q, 1e-4)
-		}
-		if _, has := p.Exp().Mean(); has {
-			t.Errorf("%s: exp(X) has a mean", name)
-		}
-	}
-}
-
-// A level known beforehand has its moments whatever r may be.
-func TestBlendOverALearnedScaleOfABoundedLevel(t *testing.T) {
-	var logs []float64
-	var parts []posterior.Posterior
-	mean, square, whole := 0.0, 0.0, 0.0
-	for u := -3.0; u < 30; u += 0.2 {
-		r := math.Exp(u)
-		v := 1 / (1 + 1/r/r) // of a reading of 2 under N(0, 1)
-		w := math.Exp(-u - math.Exp(-2*u)/2)
-		logs = append(logs, math.Log(w))
-		parts = append(parts, posterior.Normal(posterior.LevelOf(2*v/r/r), math.Sqrt(v)))
-		whole, mean, square = whole+w, mean+w*2*v/r/r, square+w*(v+math.Pow(2*v/r/r, 2))
-	}
-	p := posterior.BlendLearned(logs, parts)
-	m, hasMean := p.Mean()
-	sd, hasSD := p.StandardDeviation()
-	if !hasMean || !hasSD {
-		t.Fatalf("has mean: %v, sd: %v", hasMean, hasSD)
-	}
-	near(t, "mean", m, mean/whole, 1e-12)
-	near(t, "sd", sd, math.Sqrt(square/whole-m*m), 1e-12)
-}
-
 func TestTailsOfABlendOfNormalsAllocateNothing(t *testing.T) {
 	logs, parts := randomBlend(source(t))
 	p := posterior.Blend(logs, parts)
