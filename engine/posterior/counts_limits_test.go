@@ -148,6 +148,26 @@ func TestExactReadingsEqualConstant(t *testing.T) {
 	}
 }
 
+// TestMomentsThatBarelyExist: of one value, worth 2.1 and a flat level the belief is
+// Student t with 2.1 degrees of freedom, whose variance is scale^2 nu / (nu - 2) (JCGM
+// 101:2008, 6.4.9.4). Part of its sum over r lies where no tail has anything left.
+func TestMomentsThatBarelyExist(t *testing.T) {
+	var c posterior.Counts
+	c.Add(posterior.Exactly(5), 0, 1)
+	p := c.Posterior(vaguePrior(), learnedNoise(0.3, 2.1), posterior.Bias{})
+	sd, ok := p.StandardDeviation()
+	if !ok {
+		t.Fatal("no standard deviation")
+	}
+	near(t, "sd", sd, 0.3*math.Sqrt(2.1/0.1), 1e-4)
+	if _, ok := c.Posterior(vaguePrior(), learnedNoise(0.3, 2), posterior.Bias{}).StandardDeviation(); ok {
+		t.Error("2 degrees of freedom, but a standard deviation")
+	}
+	if _, ok := c.Posterior(vaguePrior(), learnedNoise(0.3, 1), posterior.Bias{}).Mean(); ok {
+		t.Error("1 degree of freedom, but a mean")
+	}
+}
+
 func TestImproperCountsSayNothing(t *testing.T) {
 	display := posterior.Indication{Lower: 1, Upper: 2}
 	above := posterior.Indication{Lower: 1, Upper: math.Inf(1)}

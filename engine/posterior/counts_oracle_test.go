@@ -315,8 +315,9 @@ func (t *truth) at(eta float64) (mean, sd float64) {
 	return (w*p.Mean + v*(eta-b.Mean)) / (v + w), p.SD * b.SD / math.Sqrt(v+w)
 }
 
-// moments returns mean and standard deviation of the level.
-func (t *truth) moments() (mean, sd float64) {
+// moments returns mean and standard deviation of the level, and whether the lattice is
+// wide enough for the latter: where it barely exists what matters to it goes on beyond.
+func (t *truth) moments() (mean, sd float64, wide bool) {
 	origin, _ := t.at(t.l.centre)
 	var first, second float64
 	for i, m := range t.all {
@@ -325,8 +326,10 @@ func (t *truth) moments() (mean, sd float64) {
 		first += m * d
 		second += m * (d*d + sd*sd)
 	}
+	far := math.Max(t.all[0]*math.Pow(t.eta[0]-t.l.centre, 2), t.all[len(t.all)-1]*math.Pow(t.eta[len(t.eta)-1]-t.l.centre, 2))
+	wide = far < 1e-6*second
 	first, second = first/t.sum, second/t.sum
-	return origin + first, math.Sqrt(second - first*first)
+	return origin + first, math.Sqrt(second - first*first), wide
 }
 
 // tails returns P(level < x) and P(level > x) where x is the level at lattice
