@@ -15,10 +15,12 @@ import "math"
 // each point carries mean and variance of the normal that the bias has there. A
 // level that stays never changes them. One that walks mixes those of points, which
 // makes a mixture of normals; it is held as the normal of the same mean and variance,
-// exactly so as long as all is normal.
+// exactly so as long as all is normal, and to 0.03 of a normal score of the level as long
+// as the bias is no wider than the noise, or half of it where readings may be
+// outliers; see Bias.Strata for one that is wider.
 //
 // A Grid isn't copied by assignment, see Clone. It takes 8 bytes a point, 24 with a
-// bias: 256 to 640 points, or up to 8192 where a narrow peak and a wide
+// bias: 256 to 576 points, or up to 8192 where a narrow peak and a wide
 // pedestal, or the far and sharp edges of an interval, matter at once.
 type Grid struct {
 	motion Motion
