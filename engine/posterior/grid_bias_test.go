@@ -63,7 +63,7 @@ func TestGridWithBiasEqualsIntegration(t *testing.T) {
 	for _, k := range kinds {
 		t.Run(k.name, func(t *testing.T) {
 			var worst gap
-			for range cases(20) {
+			for range cases(10) {
 				r := math.Exp(random.NormFloat64() - 1)
 				c := k.kind.constantCase(random, 1+random.IntN(6), r, math.Exp(random.NormFloat64()-1))
 				c.prior.SD = math.Min(c.prior.SD, 20*r) // what the oracle's points resolve
@@ -82,7 +82,7 @@ func TestGridWithBiasEqualsIntegration(t *testing.T) {
 func TestWalkWithBiasEqualsIntegration(t *testing.T) {
 	random := source(t)
 	var worst gap
-	for round := range cases(4) {
+	for round := range cases(3) {
 		c := kinds[round%4].kind.movingCase(random)
 		r := c.readings[0].noise.SD
 		c.motion = posterior.Motion{Form: posterior.MotionWalk, Walk: r * r * math.Exp(random.NormFloat64())}

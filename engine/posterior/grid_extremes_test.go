@@ -12,7 +12,7 @@ import (
 // a number, tails together are 1, fall outwards and never end.
 func TestGridAtTheEndsOfTheRange(t *testing.T) {
 	random := source(t)
-	for round := range cases(25) {
+	for round := range cases(12) {
 		size := math.Exp(30 * random.NormFloat64())
 		draw := func(spread float64) float64 { return size * math.Exp(spread*random.NormFloat64()) }
 		m := posterior.Motion{Form: posterior.MotionForm([]int{0, 1, 3}[random.IntN(3)]), Walk: math.Pow(draw(6), 2), Mean: draw(3), Variance: math.Pow(draw(4), 2), Rate: math.Exp(4 * random.NormFloat64())}

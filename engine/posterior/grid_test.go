@@ -73,7 +73,7 @@ func TestGridOfConstantEqualsIntegration(t *testing.T) {
 	for _, k := range kinds {
 		t.Run(k.name, func(t *testing.T) {
 			var worst gap
-			for range cases(200) {
+			for range cases(60) {
 				c := k.kind.constantCase(random, 1+random.IntN(6), math.Exp(random.NormFloat64()-1), math.Exp(random.NormFloat64()-1))
 				lo, hi := c.window(0)
 				const n = 4096
@@ -89,7 +89,7 @@ func TestGridOfWalkEqualsIntegration(t *testing.T) {
 	for _, k := range kinds {
 		t.Run(k.name, func(t *testing.T) {
 			var worst gap
-			for range cases(10) {
+			for range cases(6) {
 				c := k.kind.movingCase(random)
 				lo, hi, h := c.span()
 				worst.widen(c.check(t, c.solve(lo, h, int((hi-lo)/h)+1, 0).table()))
