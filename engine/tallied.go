@@ -48,6 +48,10 @@ func (f *fold) addCounts(l *law, e *Row) word {
 	}
 	said := word{between: !y.Exact()}
 	said.below, said.above, said.foretold = t.points.Foretell(y, sd, samples)
+	if !said.foretold && m.learns() == nil { // the points are too far apart for so sharp a noise
+		p := t.counts.Predictive(m.prior, m.noise(), t.bias, sd)
+		said.below, said.above, said.foretold = p.LowerTail(y.Lower), p.UpperTail(y.Upper), p.Form() != posterior.FormNone
+	}
 	t.counts.Add(y, sd, samples)
 	t.points.Update(y, sd, samples)
 	return said

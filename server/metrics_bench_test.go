@@ -5,6 +5,7 @@ import (
 	"context"
 	"fmt"
 	"io"
+	"math"
 	"math/rand/v2"
 	"net/http"
 	"net/http/httptest"
@@ -18,7 +19,16 @@ import (
 // scaleFixture has 10,000 quantities: 7,000 walks of known repeatability and
 // 3,000 constants whose repeatability is learned, 20 readings each. Between
 // two scrapes nothing changes but the time, which moves every walk's belief.
-func scaleFixture(b *testing.B) pageFixture {
+func scaleFixture(b *testing.B) pageFixture { return populated(b, 0) }
+
+// mixedFixture is scaleFixture where one quantity in ten has readings or a repeatability that
+// take another method: of a hundred, five walks that learn theirs (BANK), two that stay and
+// are displayed coarsely (COUNTS), three walks with outliers (GRID).
+func mixedFixture(b *testing.B) pageFixture { return populated(b, 10) }
+
+// populated declares 10,000 quantities, of whose first hundredths some are mixed in, and posts
+// their readings.
+func populated(b *testing.B, mixed int) pageFixture {
 	now := scrapeTime
 	f := newPageFixture(b, func(o *MetricsOptions) {
 		o.Now = func() time.Time { now = now.Add(15 * time.Second); return now }
@@ -33,27 +43,60 @@ func scaleFixture(b *testing.B) pageFixture {
 			d.Dynamics, d.Prior = engine.Dynamics{}, engine.Prior{}
 			d.Repeatability = engine.Repeatability{Form: engine.RepeatabilityLearnedReference}
 		}
+		if i%100 < mixed {
+			mixIn(&d, i%100)
+		}
 		f.declare(b, string(ids[i]), d)
+	}
+	coarse := engine.InstrumentDeclaration{Unit: roomDeclaration().Unit, Resolution: 2}
+	if _, _, err := f.keeper.DeclareInstrument(context.Background(), "coarse", coarse, engine.Condition{}, engine.InstantOf(scrapeTime)); err != nil {
+		b.Fatal(err)
 	}
 	for n := range 20 {
 		batch := engine.Batch{Receive: engine.InstantOf(scrapeTime)}
 		at := engine.InstantOf(scrapeTime.Add(time.Duration(n-20) * time.Minute))
-		for _, id := range ids {
-			batch.Readings = append(batch.Readings, engine.Reading{Quantity: id, Value: -22 + random.NormFloat64(), HasTime: true, Time: at})
+		for i, id := range ids {
+			r := engine.Reading{Quantity: id, Value: -22 + random.NormFloat64(), HasTime: true, Time: at}
+			if k := i % 100; k < mixed && k >= 5 && k < 7 {
+				r.Instrument, r.Value = "coarse", 2*math.Round(r.Value/2)
+			}
+			batch.Readings = append(batch.Readings, r)
 		}
-		if _, err := f.keeper.Post(context.Background(), batch); err != nil {
+		results, err := f.keeper.Post(context.Background(), batch)
+		if err != nil {
 			b.Fatal(err)
+		}
+		for _, res := range results {
+			if res.Status != engine.Applied {
+				b.Fatal(res)
+			}
 		}
 	}
 	return f
+}
+
+// mixIn changes the declaration of the quantity of that number among a hundred.
+func mixIn(d *engine.Declaration, number int) {
+	switch {
+	case number < 5:
+		d.Repeatability = engine.Repeatability{Form: engine.RepeatabilityLearned, Guess: 1, Worth: 4}
+	case number < 7:
+		d.Dynamics = engine.Dynamics{}
+	default:
+		d.Outliers = engine.Outliers{Probability: 0.01, Inflation: 10}
+	}
 }
 
 // BenchmarkScrape compares a scrape over loopback with sending the same bytes
 // from memory, in turns: x-cached is the ratio of their times. With gzip the
 // cached page is compressed each time too. The server's garbage is measured
 // without a connection.
-func BenchmarkScrape(b *testing.B) {
-	f := scaleFixture(b)
+func BenchmarkScrape(b *testing.B) { scrape(b, scaleFixture(b)) }
+
+// BenchmarkScrapeMixed is BenchmarkScrape with one quantity in ten held otherwise.
+func BenchmarkScrapeMixed(b *testing.B) { scrape(b, mixedFixture(b)) }
+
+func scrape(b *testing.B, f pageFixture) {
 	for _, coding := range []string{"identity", "gzip"} {
 		b.Run("coding="+coding, func(b *testing.B) {
 			live := httptest.NewServer(f.page)
