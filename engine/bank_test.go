@@ -1,6 +1,7 @@
 package engine_test
 
 import (
+	"flag"
 	"fmt"
 	"math"
 	"math/rand/v2"
@@ -10,6 +11,8 @@ import (
 	"leadline.example/engine"
 	"leadline.example/engine/posterior"
 )
+
+var bankCases = flag.Uint64("bankcases", 12, "random cases for each dynamics, with instruments and without, in the tests of learned repeatabilities")
 
 // check compares the level with the exact one: normal scores to 1e-3 between tails of
 // 1e-9, and the moments.
@@ -54,12 +57,8 @@ func TestBankEqualsIntegration(t *testing.T) {
 		for by, instruments := range map[string]bool{"direct": false, "instruments": true} {
 			t.Run(name+"/"+by, func(t *testing.T) {
 				t.Parallel()
-				cases := uint64(200)
-				if testing.Short() {
-					cases = 20
-				}
 				worst := 0.0
-				for _, s := range seeds(cases) {
+				for _, s := range seeds(*bankCases) {
 					rng := rand.New(rand.NewPCG(s, uint64(form)))
 					c := randomLearnedCase(rng, form, instruments)
 					r := newRig(t, engine.Options{CheckpointRecords: 1 + rng.IntN(20)})
