@@ -8,6 +8,10 @@ import "math"
 // at points, of what the instrument sees, eta = level + bias. See lattice for how
 // points are laid and what lies beyond them.
 //
+// Edges are resolved as long as the belief they cut is no more than 1,000 times wider
+// than the noise. Beyond, they lie within a step of where they should, some 1e-3 of the
+// belief's width.
+//
 // A flat level is exact: as long as readings bound it on one side only, or not at
 // all, the density is improper and nothing is published.
 //
