@@ -100,6 +100,12 @@ A gauge past its due date, and a transmitter that is read faster than it settles
   curl -s -H 'Accept: text/plain' %[2]s/v1/quantities/ice-crusher.blade-gap/belief
   curl -s -H 'Accept: text/plain' %[2]s/v1/quantities/brine-pump-1.delivery-pressure/belief:budget
   curl -s -H 'Accept: text/plain' %[2]s/v1/instruments
+A display coarser than the noise, readings some of which are interference, a residual on a logarithmic scale:
+  curl -s -H 'Accept: text/plain' %[2]s/v1/quantities/compressor-1.oil-temperature/belief
+  curl -s -H 'Accept: text/plain' %[2]s/v1/quantities/machine-room.ammonia/belief
+  curl -s -H 'Accept: text/plain' %[2]s/v1/quantities/dosing.chlorine-residual/belief
+Do readings fall where they were foretold?
+  curl -s -H 'Accept: text/plain' %[2]s/v1/quantities/store-1.temperature/model_check
 The bearing is replaced; its play starts anew, as its gauge's bias does not:
   curl -s -d '{"reason":"new bearing","prior":{"mean":0.15,"standard_deviation":0.03}}' %[6]s:renew
 How probable is it that the gap is below 0.85 mm?

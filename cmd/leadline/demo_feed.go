@@ -113,7 +113,11 @@ func (f *feed) post(ctx context.Context, k poster, readings []engine.Reading, no
 // error, and the steps of the display.
 func (f *feed) reading(item plantItem, at time.Time) engine.Reading {
 	f.count++
-	value := item.truth(at.Sub(f.start).Seconds()) + item.noise*f.random.NormFloat64()
+	noise := item.noise
+	if item.odd > 0 && f.random.Float64() < item.odd {
+		noise *= oddInflation
+	}
+	value := item.truth(at.Sub(f.start).Seconds()) + noise*f.random.NormFloat64()
 	by := f.instrumentOf(item)
 	if by != nil {
 		value += by.bias

@@ -42,6 +42,8 @@ const (
 	returnProbe  engine.InstrumentID = "store-4.return-air-probe"
 	fastSender   engine.InstrumentID = "brine-pump-1.pressure-transmitter"
 	bearingGauge engine.InstrumentID = "dial-gauge-5"
+
+	oilThermometer engine.InstrumentID = "compressor-1.oil-thermometer"
 )
 
 const (
@@ -84,6 +86,13 @@ func plantInstruments(start time.Time) []plantInstrument {
 					StandardDeviation: 0.01, Correlated: engine.Correlated{StandardDeviation: 0.03, Time: 15 * time.Second},
 				},
 				Calibrations: []engine.Calibration{{ValidFrom: ago(30 * day), BiasStandardUncertainty: 0.01}},
+			},
+		},
+		{
+			id: oilThermometer,
+			declaration: engine.InstrumentDeclaration{
+				Unit: "Cel", Description: "dial thermometer in the oil line, read to half a degree",
+				Repeatability: engine.InstrumentRepeatability{StandardDeviation: 0.1}, Resolution: 0.5,
 			},
 		},
 		{

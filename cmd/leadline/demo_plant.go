@@ -21,11 +21,15 @@ type plantItem struct {
 	declaration engine.Declaration
 	truth       func(second float64) float64 // the true value; seconds from the start, negative before it
 	noise       float64                      // standard deviation of the random error
+	odd         float64                      // share of readings that are oddInflation times as far off
 	display     float64                      // step of the display; 0: none to speak of
 	every       int                          // seconds between readings
 	silentAfter int                          // the second of the last reading; 0: reports for good
 	instruments []engine.InstrumentID        // that take turns in reading it; none: nobody says which
 }
+
+// oddInflation is how much farther off than others an odd reading is.
+const oddInflation = 12
 
 // pastEvery is how many steps of the past lie between two readings: rare
 // readings are rare there too.
@@ -60,21 +64,20 @@ func refrigeration() []plantItem {
 			},
 		},
 		{
-			// The display has steps of half a degree; the repeatability is
-			// declared wide enough to cover them (0.5/sqrt(12) and some noise).
 			id: "compressor-1.oil-temperature", noise: 0.1, display: 0.5, every: 2, truth: wave(58.2, 0.8, 200),
+			instruments: []engine.InstrumentID{oilThermometer},
 			declaration: engine.Declaration{
 				Unit: "Cel", Description: "oil temperature, screw compressor 1; the display shows steps of 0.5",
-				Prior: normal(55, 8), Repeatability: known(0.18), Dynamics: walk(0.2, 10*time.Second),
-				Tolerance: between(45, 70),
+				Prior: normal(55, 8), Dynamics: walk(0.2, 10*time.Second), Tolerance: between(45, 70),
 			},
 		},
 		{
-			id: "machine-room.ammonia", noise: 0.6, every: 1, truth: wave(3.0, 0.3, 150),
+			// One reading in forty is a burst of interference.
+			id: "machine-room.ammonia", noise: 0.6, odd: 0.025, every: 1, truth: wave(3.0, 0.3, 150),
 			declaration: engine.Declaration{
-				Unit: "ppm", Description: "ammonia in the machine room's air, leak check",
+				Unit: "ppm", Description: "ammonia in the machine room's air, leak check; some readings are interference",
 				Prior: normal(3, 3), Repeatability: known(0.6), Dynamics: walk(0.3, 30*time.Second),
-				Tolerance: below(25),
+				Outliers: engine.Outliers{Probability: 0.02, Inflation: oddInflation}, Tolerance: below(25),
 			},
 		},
 		{
@@ -125,8 +128,9 @@ func brineCircuit() []plantItem {
 		{
 			id: "dosing.chlorine-residual", noise: 0.06, every: 2, truth: wave(0.55, 0.05, 240),
 			declaration: engine.Declaration{
-				Unit: "mg/L", Description: "free chlorine in the wash-down water",
-				Prior: interval(0.2, 1.0, 0.95), Repeatability: known(0.06), Dynamics: walk(0.05, time.Minute),
+				Unit: "mg/L", Description: "free chlorine in the wash-down water; positive, and noisy by per cents",
+				Scale: engine.ScaleLog,
+				Prior: interval(0.2, 1.0, 0.95), Repeatability: known(0.11), Dynamics: walk(0.1, time.Minute),
 				Tolerance: between(0.3, 0.9),
 			},
 		},
