@@ -305,7 +305,7 @@ type lone struct {
 
 func (l *lone) clone() holder { return &lone{l.joint.clone(), l.of, l.given} }
 
-// model returns m with r known.
+// model returns m with r known. It belongs to the fold: a View's is only read.
 func (l *lone) model(m *model, r float64) *model {
 	if l.of != m {
 		l.of, l.given = m, m.given(r)
@@ -398,7 +398,7 @@ func (b *bank) shared(m *model, at Instant) sharedBelief {
 }
 
 func (l *lone) shared(m *model, at Instant, r float64) (s sharedBelief) {
-	given := l.model(m, r)
+	given := m.given(r)
 	j := l.joint.clone()
 	j.move(given, at)
 	s.biases, s.references = j.biases(given), j.commons()

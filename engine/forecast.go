@@ -255,9 +255,8 @@ func (b *bank) courses(m *model, at Instant) []weightedCourse {
 	s := m.scale()
 	for i := first + (last-first)%every/2; i <= last; i += every {
 		n := &b.nodes[i]
-		l := n.held.(*lone)
-		given := l.model(m, s.r(n.v))
-		j := l.joint.clone()
+		given := m.given(s.r(n.v))
+		j := n.held.(*lone).joint.clone()
 		j.move(given, at)
 		all = append(all, weightedCourse{j.course(given), weights[i]})
 		sum += weights[i]
