@@ -87,6 +87,13 @@ func (t *Tally) Tail() (p float64, ok bool) {
 	return t.last.Tail(), true
 }
 
+// Filled returns how many scored readings the window that fills holds: those since the last
+// look, from 0 to one less than Settings.Window. Before the first look they are all scored readings.
+func (t *Tally) Filled() int { return int(t.filled) }
+
+// Looked tells whether a window has been full, which the tests have looked at.
+func (t *Tally) Looked() bool { return t.looked }
+
 // LastStep returns the latest detected step.
 func (t *Tally) LastStep() LastStep { return LastStep{t.stepAt, t.stepSince, t.direction} }
 

@@ -84,6 +84,19 @@ func sums(z []float64) sum {
 	return s
 }
 
+// The window that fills counts scored readings only, and is empty after each look.
+func TestFilledCountsSinceTheLastLook(t *testing.T) {
+	law := modelcheck.LawOf(modelcheck.Settings{Window: 16})
+	var tally modelcheck.Tally
+	for i := range 50 {
+		if got := tally.Filled(); got != i%16 || tally.Looked() != (i >= 16) {
+			t.Errorf("after %d scored readings: %d, %v", i, got, tally.Looked())
+		}
+		tally.Pass(int64(2*i) * hour)
+		tally.Add(&law, modelcheck.ScoreAt(1), int64(2*i+1)*hour)
+	}
+}
+
 // What one window finds stands until the next is full, and no longer.
 func TestObjectionsStandForAWindow(t *testing.T) {
 	law := modelcheck.LawOf(modelcheck.Settings{Window: 16, ObjectionsPerYear: 1})
