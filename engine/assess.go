@@ -14,8 +14,8 @@ type ModelCheckReport struct {
 	Belief         Belief // at the last reading or now
 	Report         modelcheck.Report
 	Law            modelcheck.Law
-	HasExplanation bool // there are readings enough, and the level stays or walks
-	Explanation    modelcheck.Explanation
+	HasExplanation bool                   // there are readings enough, not all alike, and the level stays or walks
+	Explanation    modelcheck.Explanation // of the last full window, before there is one of all readings
 }
 
 // ModelCheck reports how a quantity's readings agreed with what those before them
@@ -34,34 +34,63 @@ func (k *Keeper) ModelCheck(_ context.Context, id QuantityID, now Instant) (Mode
 	if v.basis.motion.Form > posterior.MotionWalk {
 		return r, nil
 	}
-	window := r.Law.Settings().Window
-	rows := v.rows[v.markFrom:]
-	if len(rows) < window && len(rows) < v.applied {
-		if rows, err = v.entries(k.Ledger()); err != nil {
-			return ModelCheckReport{}, err
-		}
+	rows, err := v.lookedAt(k.Ledger())
+	if err != nil {
+		return ModelCheckReport{}, err
 	}
-	points := v.points(rows[max(0, len(rows)-window):], b.Repeatability)
-	if r.HasExplanation = len(points) >= modelcheck.MinWindow; r.HasExplanation {
-		r.Explanation = modelcheck.Explain(points, v.basis.motion.Walk)
+	points := v.points(rows)
+	if len(points) >= modelcheck.MinWindow {
+		n := v.basis.noise()
+		r.Explanation = modelcheck.Explain(points, v.basis.motion.Walk, modelcheck.Learned{Guess: n.Guess, Worth: n.Worth, Floor: n.Floor})
+		r.HasExplanation = r.Explanation.Readings > 0
 	}
 	return r, nil
 }
 
-// points returns readings, of which something two-sided is said, as values with variances.
-func (v *View) points(rows []entry, r posterior.Repeatability) []modelcheck.Point {
+// lookedAt returns the readings of the last full window, which the tests looked at; before there
+// is one, all. Which readings had no score isn't kept; but for those after a renewal of
+// which nothing was known, they are the first of all, which no window counts.
+func (v *View) lookedAt(from Ledger) ([]entry, error) {
+	check := &v.fold.check
+	last, count := 0, v.fold.count // of the readings that came after, and of those asked for
+	if check.Looked() {
+		last, count = check.Filled(), v.basis.check.Settings().Window
+	}
+	rows := v.rows[v.markFrom:]
+	if v.Rebuilding || len(rows) < last+count {
+		var err error
+		if rows, err = v.entries(from); err != nil {
+			return nil, err
+		}
+	}
+	end := len(rows) - last
+	return rows[end-count : end], nil
+}
+
+// points returns readings, of which something two-sided is said, as values with the white
+// noise that is declared.
+func (v *View) points(rows []entry) []modelcheck.Point {
 	m := v.basis
 	var all []modelcheck.Point
 	for i := range rows {
 		e := &rows[i].Row
 		y := m.indication(e)
-		value := y.Lower/2 + y.Upper/2
-		sd := m.spread(e, r.Median).SD
-		variance := sd*sd + (y.Upper-y.Lower)*(y.Upper-y.Lower)/12
-		if math.IsInf(value, 0) || math.IsNaN(value) || !(variance > 0) {
-			continue
+		_, _, bias := m.calibration(e.Instrument, e.Time)
+		p := modelcheck.Point{Seconds: lasting(rows[0].Time, e.Time), Value: y.Lower/2 + y.Upper/2 - bias.Mean}
+		display := y.Upper - y.Lower
+		if by := m.instrument(e.Instrument); by != nil && (m.form == jointForm || m.form == bankForm) {
+			display = by.Declaration.Resolution
 		}
-		all = append(all, modelcheck.Point{Seconds: lasting(rows[0].Time, e.Time), Value: value, Variance: variance})
+		p.Variance = display * display / 12 // JCGM 100:2008, F.2.2.1
+		if m.teaches(e) {
+			p.Learned = 1 / e.samples()
+		} else {
+			sd := m.spread(e, 0).SD
+			p.Variance += sd * sd
+		}
+		if !math.IsInf(p.Value, 0) && !math.IsNaN(p.Value) && p.Variance+p.Learned > 0 {
+			all = append(all, p)
+		}
 	}
 	return all
 }

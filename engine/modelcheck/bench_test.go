@@ -1,6 +1,7 @@
 package modelcheck_test
 
 import (
+	"fmt"
 	"math/rand/v2"
 	"testing"
 
@@ -50,11 +51,20 @@ func BenchmarkLawOf(b *testing.B) {
 
 func BenchmarkExplain(b *testing.B) {
 	rng := rand.New(rand.NewPCG(1, 0))
-	var points [64]modelcheck.Point
-	for i := range points {
-		points[i] = modelcheck.Point{Seconds: float64(i), Value: rng.NormFloat64(), Variance: 1}
-	}
-	for b.Loop() {
-		modelcheck.Explain(points[:], 0)
+	for _, n := range []int{64, 1024} {
+		known, learned := make([]modelcheck.Point, n), make([]modelcheck.Point, n)
+		for i := range known {
+			known[i] = modelcheck.Point{Seconds: float64(i), Value: rng.NormFloat64(), Variance: 1}
+			learned[i] = known[i]
+			learned[i].Variance, learned[i].Learned = 0, 1
+		}
+		for name, points := range map[string][]modelcheck.Point{"known": known, "learned": learned} {
+			b.Run(fmt.Sprintf("%s/readings=%d", name, n), func(b *testing.B) {
+				b.ReportAllocs()
+				for b.Loop() {
+					modelcheck.Explain(points, 0, modelcheck.Learned{})
+				}
+			})
+		}
 	}
 }

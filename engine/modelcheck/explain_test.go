@@ -87,7 +87,7 @@ func TestExplanationsAgainstDenseCovariance(t *testing.T) {
 	} {
 		points := irregular(t, 48, test.walk, test.sd, test.seconds)
 		dense := func(walk, sd, seconds float64) float64 { return denseLogLikelihood(t, points, walk, sd, seconds) }
-		e := modelcheck.Explain(points, test.declared)
+		e := modelcheck.Explain(points, test.declared, modelcheck.Learned{})
 		within(t, test.name+": declared", e.Declared, dense(test.declared, 0, 1), 1e-7)
 		within(t, test.name+": moving", e.Moving.LogLikelihood, dense(e.Moving.Walk, 0, 1), 1e-7)
 		within(t, test.name+": correlated", e.Correlated.LogLikelihood, dense(test.declared, e.Correlated.SD, e.Correlated.Seconds), 1e-5)
@@ -116,14 +116,14 @@ func TestExplanationsAgainstDenseCovariance(t *testing.T) {
 func TestExplanationsFindTheTruth(t *testing.T) {
 	const n = 400
 	points := irregular(t, n, 0.5, 0, 1)
-	e := modelcheck.Explain(points, 0)
+	e := modelcheck.Explain(points, 0, modelcheck.Learned{})
 	within(t, "excess of the walk over the truth", e.Moving.LogLikelihood-denseLogLikelihood(t, points, 0.5, 0, 1), 10.83/4, 10.83/4)
 	if e.Declared > e.Moving.LogLikelihood-20 {
 		t.Errorf("a level that stays is as likely as the true walk: %+v", e)
 	}
 
 	points = irregular(t, n, 0, 3, 40)
-	e = modelcheck.Explain(points, 0)
+	e = modelcheck.Explain(points, 0, modelcheck.Learned{})
 	within(t, "excess of correlated noise over the truth", e.Correlated.LogLikelihood-denseLogLikelihood(t, points, 0, 3, 40), 13.82/4, 13.82/4)
 	if e.Moving.LogLikelihood > e.Correlated.LogLikelihood-3 {
 		t.Errorf("a walk is as likely as the true correlated noise: %+v", e)
@@ -132,8 +132,8 @@ func TestExplanationsFindTheTruth(t *testing.T) {
 
 // Where all readings have the same time neither account has anything to fit.
 func TestExplanationsOfOneInstant(t *testing.T) {
-	points := []modelcheck.Point{{5, 1, 1}, {5, 2, 1}, {5, 4, 2}}
-	e := modelcheck.Explain(points, 0.1)
+	points := []modelcheck.Point{{5, 1, 1, 0}, {5, 2, 1, 0}, {5, 4, 2, 0}}
+	e := modelcheck.Explain(points, 0.1, modelcheck.Learned{})
 	want := denseLogLikelihood(t, points, 0.1, 0, 1)
 	within(t, "declared", e.Declared, want, 1e-12)
 	if e.Moving != (modelcheck.Moving{LogLikelihood: e.Declared, Walk: 0.1}) || e.Correlated != (modelcheck.Correlated{LogLikelihood: e.Declared}) {
