@@ -8,7 +8,7 @@ import "math"
 // at points, of what the instrument sees, eta = level + bias. See lattice for how
 // points are laid and what lies beyond them.
 //
-// Edges are resolved as long as the belief they cut is no more than 1,000 times wider
+// Edges are resolved as long as the belief they cut is no more than 300 times wider
 // than the noise. Beyond, they lie within a step of where they should, some 1e-3 of the
 // belief's width.
 //

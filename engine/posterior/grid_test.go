@@ -33,7 +33,7 @@ func (k kind) spread(random *rand.Rand, r float64) posterior.Spread {
 // constantCase draws a level that stays, in units of 1 about 0, read n times by a noise
 // of standard deviation r.
 func (k kind) constantCase(random *rand.Rand, n int, r, d float64) gridCase {
-	c := gridCase{prior: posterior.Prior{Mean: random.NormFloat64(), SD: math.Min(1000*r, math.Exp(1.5*random.NormFloat64()))}} // as far as Grid promises
+	c := gridCase{prior: posterior.Prior{Mean: random.NormFloat64(), SD: math.Min(300*r, math.Exp(1.5*random.NormFloat64()))}} // as far as Grid promises
 	truth := c.prior.Mean + c.prior.SD*random.NormFloat64()
 	noise := k.spread(random, r)
 	if random.IntN(4) == 0 {
