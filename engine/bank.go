@@ -49,9 +49,10 @@ func (p *part) floats() bool { return p.vague && !p.pinned }
 
 // node is what is held given r.
 type node struct {
-	v     float64 // see scale.r
-	prior float64 // ln of the prior's density in v
-	log   float64 // ln of the readings' density given r, up to what all nodes share
+	v     float64        // see scale.r
+	bias  posterior.Bias // of the first calibration: a stratum of it, see strata
+	prior float64        // ln of the prior's density in v
+	log   float64        // ln of the readings' density given r, up to what all nodes share
 	held  holder
 }
 
@@ -102,10 +103,13 @@ func (f *fold) addBank(l *law, e *Row) word {
 // begin places the first nodes.
 func (b *bank) begin(m *model, first *Row) {
 	s := m.scale()
-	if b.blank = !s.proper; b.blank {
+	switch b.blank = !s.proper; {
+	case b.blank:
 		b.nodes = []node{{v: s.v(max(1, 2*s.floor))}}
-	} else {
+	case s.learned:
 		b.nodes, b.step = s.fromPrior()
+	default:
+		b.nodes = m.strata(first)
 	}
 	b.part = part{vague: m.prior.Vague}
 	b.start(m, first)
@@ -114,16 +118,38 @@ func (b *bank) begin(m *model, first *Row) {
 // start gives each node the belief before any reading.
 func (b *bank) start(m *model, first *Row) {
 	for i := range b.nodes {
-		b.nodes[i].log, b.nodes[i].held = 0, m.holder(first)
+		n := &b.nodes[i]
+		n.log = 0
+		switch {
+		case m.form != gridForm:
+			n.held = &lone{joint: startJoint(m, first.Time)}
+		case n.bias.SD > 0:
+			n.held = startCells(m, first, n.bias)
+		default:
+			_, _, bias := m.calibration(first.Instrument, first.Time)
+			n.held = startCells(m, first, bias)
+		}
 	}
 }
 
-// holder returns what is held before any reading.
-func (m *model) holder(first *Row) holder {
-	if m.form == gridForm {
-		return startCells(m, first)
+// strata returns the nodes of a belief on points with a known repeatability: one, but for a
+// level that walks under a bias wider than the noise, of which each point could keep mean and
+// variance alone. It is split into narrower ones (posterior.Bias.Strata), given which that is enough.
+func (m *model) strata(first *Row) []node {
+	_, _, bias := m.calibration(first.Instrument, first.Time)
+	if m.form != gridForm || bias.SD == 0 || m.motion.Form != posterior.MotionWalk {
+		return []node{{}}
 	}
-	return &lone{joint: startJoint(m, first.Time)}
+	noise := m.spread(first, 0)
+	if noise.OutlierProbability > 0 {
+		noise.SD /= 2
+	}
+	parts, logs := bias.Strata(noise.SD)
+	nodes := make([]node, len(parts))
+	for i := range parts {
+		nodes[i] = node{bias: parts[i], prior: logs[i]}
+	}
+	return nodes
 }
 
 // add folds a reading into every node.

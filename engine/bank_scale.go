@@ -150,9 +150,6 @@ const maxNodes = 240
 
 // fromPrior places nodes on a proper prior, which has one maximum.
 func (s *scale) fromPrior() (nodes []node, step float64) {
-	if !s.learned {
-		return []node{{}}, 0
-	}
 	top := s.v(max(s.guess, s.floor*(1+1e-3)))
 	width := 1 / math.Sqrt(2*s.worth)
 	for move := width; move > width/64; {

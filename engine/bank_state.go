@@ -24,7 +24,7 @@ func (b *bank) append(to []byte) []byte {
 	to = binary.AppendUvarint(to, uint64(len(b.nodes)))
 	for i := range b.nodes {
 		n := &b.nodes[i]
-		to = n.held.append(appendFloats(to, n.v, n.prior, n.log))
+		to = n.held.append(appendFloats(to, n.v, n.prior, n.log, n.bias.Mean, n.bias.SD))
 	}
 	return to
 }
@@ -56,7 +56,7 @@ func (r *stateReader) bank() *bank {
 		r.err = errBank
 	}
 	for ; count > 0 && r.err == nil; count-- {
-		n := node{v: r.float(), prior: r.float(), log: r.float()}
+		n := node{v: r.float(), prior: r.float(), log: r.float(), bias: posterior.Bias{Mean: r.float(), SD: r.float()}}
 		n.held = r.holder()
 		b.nodes = append(b.nodes, n)
 	}

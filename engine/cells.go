@@ -16,13 +16,12 @@ type cells struct {
 	until       Instant // when its next one begins
 }
 
-// startCells starts where the prior holds, with the bias of the first reading's
-// calibration.
-func startCells(m *model, first *Row) *cells {
+// startCells starts where the prior holds, with what is known of the bias under the
+// calibration of the first reading.
+func startCells(m *model, first *Row, bias posterior.Bias) *cells {
 	j := startJoint(m, first.Time)
 	c := &cells{at: j.at, by: first.Instrument}
-	var bias posterior.Bias
-	c.calibration, c.until, bias = m.calibration(first.Instrument, first.Time)
+	c.calibration, c.until, _ = m.calibration(first.Instrument, first.Time)
 	c.grid = posterior.NewGrid(m.motion, m.prior, bias)
 	return c
 }
