@@ -155,7 +155,10 @@ func (k *Keeper) settle(t *Track) {
 	steps, ok := t.settle(k.budget)
 	k.budget = max(0, k.budget-steps)
 	switch {
-	case !ok || t.outgrown && t.job == nil:
+	case !ok:
+		k.startJob(t, t.basis)
+	case t.outgrown && t.job == nil: // whose fold has all readings, at nodes that no longer fit
+		t.foldedTo = t.position
 		k.startJob(t, t.basis)
 	case t.job == nil:
 		t.foldedTo = t.position

@@ -190,7 +190,7 @@ func assess(ctx context.Context, l *law, all []entry, asked map[Position]*Assess
 			a.TailProbability, a.HasTail = f.check.Tail()
 			a.Outlying = a.HasTail && a.TailProbability < modelcheck.OutlyingProbability
 		}
-		if a.HasOutlier = l.model.declaration().Outliers != (Outliers{}); a.HasOutlier {
+		if a.HasOutlier = said.foretold && l.model.declaration().Outliers != (Outliers{}); a.HasOutlier {
 			a.Outlier = said.outlier
 		}
 	}

@@ -169,6 +169,7 @@ func (b *bank) add(m *model, e *Row) word {
 	weights := b.weights()
 	s := m.scale()
 	said := word{foretold: len(b.nodes) > 0}
+	outliers := make([]float64, len(b.nodes))
 	for i := range b.nodes {
 		n := &b.nodes[i]
 		h := n.held.add(m, e, s.r(n.v))
@@ -176,7 +177,10 @@ func (b *bank) add(m *model, e *Row) word {
 		said.foretold = said.foretold && h.foretold
 		said.below += weights[i] * h.below
 		said.above += weights[i] * h.above
-		said.outlier += weights[i] * h.outlier
+		outliers[i] = h.outlier
+	}
+	for i, w := range b.weights() { // which are those after the reading, as the probabilities are
+		said.outlier += w * outliers[i]
 	}
 	said.between = !m.indication(e).Exact()
 	b.prune()

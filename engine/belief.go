@@ -64,7 +64,7 @@ type Belief struct {
 	Check      modelcheck.Report // of the readings up to Time
 	HasTail    bool              // something had been foretold of the last reading
 	Tail       float64           // two-sided tail probability of the last reading under that
-	HasOutlier bool              // outliers are declared, and there is a reading
+	HasOutlier bool              // outliers are declared, and something had been foretold of the last reading
 	Outlier    float64           // probability that the last reading was one, given it and those before
 
 	HasRenewal                        bool // the part has been renewed since the prior
@@ -181,7 +181,7 @@ func (k *Keeper) belief(v *View, q *BeliefQuery) (Belief, error) {
 	if m.scored {
 		b.Tail, b.HasTail = m.check.Tail()
 	}
-	b.HasOutlier, b.Outlier = d.Outliers != (Outliers{}) && m.count > 0, m.outlier
+	b.HasOutlier, b.Outlier = d.Outliers != (Outliers{}) && m.scored, m.outlier
 	b.evaluateShared(v.basis, m, at)
 	if r := b.Repeatability; d.Repeatability.Learned() && !r.HasMedian {
 		b.lacks("repeatability")

@@ -100,7 +100,7 @@ type Keeper struct {
 	working     bool     // the rebuilder has a job
 	sweep       sweeper
 	laws        map[modelcheck.Settings]modelcheck.Law
-	received    Instant  // when the latest record was
+	received    Instant // when the latest record was
 	due         []dueStep
 	failed      error
 	warmed      uint64 // no number of interest, see warm

@@ -3,6 +3,7 @@ package modelcheck
 import (
 	"math"
 	"math/bits"
+	"slices"
 
 	"gonum.org/v1/gonum/mathext"
 )
@@ -79,7 +80,7 @@ type LastStep struct {
 // Report is what can be told of the model.
 type Report struct {
 	Result     Result   // of several objections the one with the smallest probability relative to its level
-	Objections []Result // all, in the order of their words above
+	Objections []Result // all, Result first, the rest in the order of their words above
 	Tests      []Test   // of the last full window, and the last look at the prior
 	Raised     int      // objections since the start, one for each test and look
 
@@ -124,6 +125,15 @@ func (t *Tally) Report(l *Law) Report {
 		}
 	}
 	r.Result = t.gravest(r.Tests)
+	slices.SortStableFunc(r.Objections, func(a, b Result) int { // Result first
+		switch {
+		case a == r.Result && b != r.Result:
+			return -1
+		case b == r.Result && a != r.Result:
+			return 1
+		}
+		return 0
+	})
 	return r
 }
 
