@@ -273,7 +273,7 @@ func (c *gridCase) foretell(t *testing.T, random *rand.Rand, name string, noise 
 			near(t, fmt.Sprint(name, " below ", z), under, below, 1e-4)
 			near(t, fmt.Sprint(name, " above ", z), over, above, 1e-4)
 		} else { // farther out than 11 standard deviations, by the normal score
-			depth = 0.02
+			depth = 0.01 * math.Abs(scale(below, above))
 			within(t, fmt.Sprint(name, " foretold ", z), scale(under, over), scale(below, above), depth)
 		}
 		within(t, fmt.Sprint(name, " predictive ", z), scale(p.LowerTail(y), p.UpperTail(y)), scale(below, above), depth)
