@@ -201,7 +201,7 @@ func (d *Declaration) checkOutliers() *Error {
 	case !(o.Probability > 0 && o.Probability <= 0.5):
 		return refuse(InvalidField, "outliers.probability", "outliers.probability is %v; give a number above 0 and at most 0.5", o.Probability)
 	case !(o.Inflation > 1 && o.Inflation <= maxInflation):
-		return refuse(InvalidField, "outliers.inflation", "outliers.inflation is %v; give a number above 1 and at most 1e6, by which an outlier's standard deviation is larger", o.Inflation)
+		return refuse(InvalidField, "outliers.inflation", "outliers.inflation is %v; give a number above 1 and at most 100, by which an outlier's standard deviation is larger", o.Inflation)
 	}
 	return nil
 }
@@ -228,7 +228,7 @@ func (d *Declaration) checkStepDetection() *Error {
 // Bounds of what checks of the model can be asked for.
 const (
 	minObjections = 1e-9
-	maxInflation  = 1e6
+	maxInflation  = 100 // that a Grid resolves
 )
 
 // checkScale refuses what has no logarithm.

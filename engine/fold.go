@@ -201,7 +201,7 @@ func (f *fold) judge(l *law, e *Row, said *word) {
 	case !said.foretold:
 		f.check.Pass(int64(e.Time))
 	case said.normal:
-		step = f.check.Add(&l.model.check, modelcheck.Score{Lower: said.score, Upper: said.score}, int64(e.Time))
+		step = f.check.Add(&l.model.check, modelcheck.ScoreAt(said.score), int64(e.Time))
 	case said.between:
 		z := modelcheck.ScoreBetween(said.below, max(1-said.below, said.above), max(1-said.above, said.below), said.above)
 		step = f.check.Add(&l.model.check, z, int64(e.Time))
