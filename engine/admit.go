@@ -76,7 +76,8 @@ func (k *Keeper) objectionToMethod(t *Track, i *instrumentTrack, r *Reading) (Re
 		n := slices.IndexFunc(t.decidedUsed, func(u use) bool { return u.number == i.number })
 		isNew = isNew || n < 0 || i.decided.Declaration.asks(&t.decidedUsed[n], &row)
 	}
-	if !isNew {
+	d := &t.decided.Declaration
+	if !isNew && r.Extent == ExtentValue && t.decidedTally.censored == 0 && d.Outliers == (Outliers{}) && (i == nil || i.decided.Declaration.Resolution == 0) {
 		return "", ""
 	}
 	counted := t.decidedTally
@@ -85,7 +86,6 @@ func (k *Keeper) objectionToMethod(t *Track, i *instrumentTrack, r *Reading) (Re
 	if i != nil {
 		uses, _ = addUse(slices.Clone(uses), &row)
 	}
-	d := &t.decided.Declaration
 	if sentence := k.objectionToReadings(d, len(t.decided.InForce()), &counted, uses); sentence != "" {
 		return NotSupported, "the reading can't be taken in: " + sentence
 	}
@@ -106,8 +106,13 @@ func objectionToAll(d *Declaration, renewals int, a *tally, uses []use, of func(
 	}
 	all := a.readAs(uses, of)
 	asked := traitsOf(d, renewals, &all)
-	_, sentence := asked.objection()
-	return sentence
+	if _, sentence := asked.objection(); sentence != "" {
+		return sentence
+	}
+	if m := asked.method(); m == MethodCounts || m == MethodGrid {
+		return all.resolved(d, a)
+	}
+	return ""
 }
 
 func (a *rules) objectionToNumbers(r *Reading, i *instrumentTrack) (Reason, string) {

@@ -94,8 +94,8 @@ func (k *Keeper) rebase(t *Track) {
 	default:
 		k.settle(t)
 		n := len(t.rows)
-		if t.job == nil && n == t.tally.count && n <= k.budget && t.refold(m) {
-			k.budget -= n
+		if t.job == nil && n == t.tally.count && n*m.cost() <= k.budget && t.refold(m) {
+			k.budget -= n * m.cost()
 		} else {
 			k.startJob(t, m)
 		}

@@ -103,6 +103,7 @@ func (t *tallied) append(b []byte) []byte {
 		return append(b, 0)
 	}
 	b = binary.AppendUvarint(append(b, 1), uint64(t.by))
+	b = binary.AppendUvarint(b, uint64(t.laid))
 	b = appendFloats(b, t.bias.Mean, t.bias.SD)
 	b = appendBlock(b, t.counts.AppendBinary(nil))
 	return appendBlock(b, t.points.AppendBinary(nil))
@@ -113,7 +114,7 @@ func (r *stateReader) tallied() *tallied {
 		return nil
 	}
 	return &tallied{
-		by: InstrumentNumber(r.uvarint()), bias: posterior.Bias{Mean: r.float(), SD: r.float()},
+		by: InstrumentNumber(r.uvarint()), laid: int(r.uvarint()), bias: posterior.Bias{Mean: r.float(), SD: r.float()},
 		counts: decodeBlock(r, posterior.DecodeCounts), points: decodeBlock(r, posterior.DecodePoints),
 	}
 }

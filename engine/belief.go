@@ -174,8 +174,8 @@ func (k *Keeper) belief(v *View, q *BeliefQuery) (Belief, error) {
 	if by != nil {
 		b.PredictiveInstrument = by.ID
 	}
-	b.evaluateLevel(m.level(v.basis, at), d, q)
-	b.evaluatePredictive(m.predictive(v.basis, at, by), d)
+	b.evaluateLevel(v.level(m, at), d, q)
+	b.evaluatePredictive(v.predictive(m, at, by), d)
 	b.Repeatability = m.repeatability(v.basis, b.Coverage)
 	b.Method, b.Check = v.basis.method(), m.check.Report(&v.basis.check)
 	if m.scored {
@@ -244,7 +244,9 @@ func (b *Belief) evaluateLevel(p posterior.Posterior, d *Declaration, q *BeliefQ
 	if !f.HasStandardDeviation {
 		b.lacks("standard_deviation")
 	}
-	if !f.HasInterval {
+	if !f.HasInterval && p.Form() != posterior.FormNone {
+		b.lacks("interval")
+	} else if !f.HasInterval {
 		b.lacks("interval")
 		if d.Tolerance.Declared() {
 			b.lacks("breach", "conformance_probability")

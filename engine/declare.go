@@ -102,7 +102,7 @@ func (k *Keeper) checkRedeclaration(t *Track, d *Declaration) error {
 	if bare := t.decidedBare(k); d.Repeatability.Form == RepeatabilityAbsent && bare > 0 {
 		return refuse(InvalidField, "repeatability", "repeatability is missing but %d readings without a random_standard_uncertainty or an instrument's repeatability have been applied; declare one", bare)
 	}
-	if least := t.decidedTally.least; d.Scale == ScaleLog && least <= 0 {
+	if least := t.decidedTally.positive; d.Scale == ScaleLog && t.decidedTally.count > 0 && least <= 0 {
 		return refuse(InvalidField, "scale", "scale is LOG, on which every value is positive, but a reading of %v has been applied; keep scale LINEAR", least)
 	}
 	if sentence := k.objectionToReadings(d, len(t.decided.InForce()), &t.decidedTally, t.decidedUsed); sentence != "" {

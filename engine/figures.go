@@ -1,6 +1,7 @@
 package engine
 
 import (
+	"math"
 	"slices"
 	"sort"
 
@@ -66,7 +67,7 @@ func (k *Keeper) figures(v *View, at Instant) (Figures, error) {
 	if err != nil {
 		return Figures{}, err
 	}
-	f := figuresOf(m.level(v.basis, at), &v.Declared().Declaration)
+	f := figuresOf(v.level(m, at), &v.Declared().Declaration)
 	f.ReadingCount, f.HasLast, f.LastTime = m.count, m.count > 0, m.lastTime
 	f.Check = m.checkFigures(v.basis)
 	if v.basis.still() && m.count == v.ReadingCount {
@@ -87,8 +88,8 @@ func figuresOf(p posterior.Posterior, d *Declaration) Figures {
 	}
 	f.Mean, f.HasMean = p.Mean()
 	f.StandardDeviation, f.HasStandardDeviation = p.StandardDeviation()
-	f.HasInterval = true
 	f.Lower, f.Upper = p.Interval(DefaultCoverage)
+	f.HasInterval = !math.IsInf(f.Lower, 0) && !math.IsInf(f.Upper, 0) // as a logarithm can be too uncertain for its exponential
 	if d.Tolerance.Declared() {
 		f.HasBreach = true
 		f.Breach = breachOf(p, d.Tolerance)

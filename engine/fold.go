@@ -51,6 +51,7 @@ type fold struct {
 	linearised bool
 	check      modelcheck.Tally
 	scored     bool        // something was foretold of the latest reading
+	lost       bool        // readings were beyond what the form can hold
 	outlier    float64     // probability that it was an outlier
 	detected   []StepEvent // in readings folded since they were last taken; not part of the state
 
@@ -110,7 +111,7 @@ func (l *law) value(e *Row) float64 {
 
 // outgrown tells whether the nodes of a learned repeatability are to be placed anew, for
 // which all readings are folded again.
-func (f *fold) outgrown(m *model) bool { return f.bank != nil && f.bank.ruined(m) }
+func (f *fold) outgrown(m *model) bool { return f.bank != nil && !f.lost && f.bank.ruined(m) }
 
 // foldAll folds rows, which are all of a quantity up to some instant.
 func foldAll(l *law, rows []entry) *fold {
@@ -140,14 +141,29 @@ func (f *fold) add(l *law, e *Row) word {
 		said = f.addWalk(l, e)
 	case jointForm:
 		said = f.addJoint(l, e)
-	case countsForm:
-		said = f.addCounts(l, e)
 	default:
-		said = f.addBank(l, e)
+		said = f.addGuarded(l, e)
 	}
 	f.note(l, e)
 	f.judge(l, e, &said)
 	return said
+}
+
+// addGuarded folds a reading into counts or a bank. Should the numbers be beyond them after
+// all, the belief is lost, and says so by being undetermined; others go on.
+func (f *fold) addGuarded(l *law, e *Row) (said word) {
+	if f.lost {
+		return word{}
+	}
+	defer func() {
+		if recover() != nil {
+			f.lost, said = true, word{}
+		}
+	}()
+	if l.form == countsForm {
+		return f.addCounts(l, e)
+	}
+	return f.addBank(l, e)
 }
 
 // note counts a reading.
@@ -307,8 +323,19 @@ func (m *model) shown(p posterior.Posterior) posterior.Posterior {
 	return p
 }
 
-// state is level on the scale on which it is held.
+// state is level on the scale on which it is held. What isn't a number is no belief.
 func (f *fold) state(m *model, at Instant) posterior.Posterior {
+	if f.lost {
+		return posterior.Posterior{}
+	}
+	p := f.held(m, at)
+	if math.IsNaN(p.Location()) {
+		return posterior.Posterior{}
+	}
+	return p
+}
+
+func (f *fold) held(m *model, at Instant) posterior.Posterior {
 	switch m.form {
 	case sumForm:
 		return f.constant.Posterior(m.prior, m.declaration().noise())
@@ -347,6 +374,8 @@ func (f *fold) predictive(m *model, at Instant, by *Instrument) posterior.Poster
 func (f *fold) foresight(m *model, at Instant, by *Instrument) posterior.Posterior {
 	d := m.declaration()
 	switch {
+	case f.lost:
+		return posterior.Posterior{}
 	case m.form == countsForm:
 		return f.counts.predictive(m, at, by)
 	case m.form >= bankForm:
@@ -369,6 +398,8 @@ func (f *fold) foresight(m *model, at Instant, by *Instrument) posterior.Posteri
 func (f *fold) repeatability(m *model, coverage float64) posterior.Repeatability {
 	r := m.learns()
 	switch {
+	case f.lost:
+		return posterior.Repeatability{}
 	case r != nil && m.form == countsForm:
 		return f.counts.repeatability(m, coverage)
 	case r != nil && m.form >= bankForm:

@@ -18,10 +18,9 @@ func (m *model) indication(e *Row) posterior.Indication {
 		y.Lower = math.Inf(-1)
 	case ExtentBetween:
 		y.Upper = e.Upper
-	default:
-		if i := m.instrument(e.Instrument); i != nil && m.form >= countsForm {
-			y = i.Declaration.displayed(e.Value)
-		}
+	}
+	if i := m.instrument(e.Instrument); i != nil && m.form >= countsForm {
+		y = i.Declaration.indicated(y)
 	}
 	if m.declaration().Scale == ScaleLog {
 		return posterior.Indication{Lower: logOf(y.Lower), Upper: logOf(y.Upper)}
@@ -29,15 +28,18 @@ func (m *model) indication(e *Row) posterior.Indication {
 	return y
 }
 
-// displayed returns what a displayed value says.
-func (d *InstrumentDeclaration) displayed(y float64) posterior.Indication {
+// indicated returns what a displayed value or an interval says if the instrument can indicate
+// no more than its measuring interval.
+func (d *InstrumentDeclaration) indicated(y posterior.Indication) posterior.Indication {
 	switch r := &d.MeasuringInterval; {
-	case r.HasUpper && y > r.Upper:
+	case r.HasUpper && y.Lower > r.Upper:
 		return posterior.Indication{Lower: r.Upper, Upper: math.Inf(1)}
-	case r.HasLower && y < r.Lower:
+	case r.HasLower && y.Upper < r.Lower:
 		return posterior.Indication{Lower: math.Inf(-1), Upper: r.Lower}
+	case y.Exact():
+		return posterior.Indication{Lower: y.Lower - d.Resolution/2, Upper: y.Upper + d.Resolution/2}
 	}
-	return posterior.Indication{Lower: y - d.Resolution/2, Upper: y + d.Resolution/2}
+	return y
 }
 
 // logOf returns ln x, -Inf for what isn't positive.

@@ -207,6 +207,9 @@ func (d *InstrumentDeclaration) checkRepeatability() *Error {
 	if err := r.Learned.checkLearned(at + "learned"); err != nil {
 		return err
 	}
+	if _, sentence := improper(&Declaration{}, d); sentence != "" {
+		return refuse(NotSupported, at+"learned", "%s", sentence)
+	}
 	if r.Relative > 0 && r.StandardDeviation == 0 {
 		return refuse(MissingField, at+"standard_deviation", "repeatability.standard_deviation is missing beside repeatability.relative, which says nothing of readings around zero; give the standard deviation there")
 	}

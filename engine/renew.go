@@ -138,6 +138,10 @@ func (q *Quantity) checkRenewal(r *Renewal) error {
 	case r.HasSlope && d.Dynamics.Form != DynamicsLinearTrend:
 		return refuse(InvalidField, "slope", "slope is given, but the quantity's dynamics have none; leave it out")
 	}
+	log := Declaration{Prior: r.Prior, Scale: d.Scale}
+	if err := log.checkScale(); err != nil {
+		return err
+	}
 	return d.checkRenewals([]Renewal{*r})
 }
 

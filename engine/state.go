@@ -17,7 +17,7 @@ func (t *Track) appendState(b []byte) []byte {
 	for _, n := range [...]int{t.tally.count, t.tally.bare, t.tally.direct, t.tally.censored, t.tally.averaged} {
 		b = binary.AppendUvarint(b, uint64(n))
 	}
-	b = appendFloats(b, t.tally.largest, t.tally.least)
+	b = appendFloats(b, t.tally.largest, t.tally.least, t.tally.most, t.tally.finest)
 	b = binary.AppendVarint(b, int64(t.tally.first))
 	b = binary.AppendVarint(b, int64(t.tally.last))
 	b = appendSteps(t.appendUses(b), t.steps)
@@ -29,7 +29,7 @@ func (t *Track) appendState(b []byte) []byte {
 
 // append encodes what is held in a form.
 func (f *fold) append(b []byte, held form) []byte {
-	b = append(b, byte(held), flag(f.linearised), flag(f.scored))
+	b = append(b, byte(held), flag(f.linearised), flag(f.scored), flag(f.lost))
 	for _, n := range [...]int{f.count, f.since, f.renewed, int(f.last)} {
 		b = binary.AppendUvarint(b, uint64(n))
 	}
@@ -56,7 +56,7 @@ func (f *fold) append(b []byte, held form) []byte {
 // fold decodes what fold.append encoded.
 func (r *stateReader) fold() (f fold, held form) {
 	held = form(r.byte())
-	f.linearised, f.scored = r.byte() == 1, r.byte() == 1
+	f.linearised, f.scored, f.lost = r.byte() == 1, r.byte() == 1, r.byte() == 1
 	f.count, f.since, f.renewed = int(r.uvarint()), int(r.uvarint()), int(r.uvarint())
 	f.last = InstrumentNumber(r.uvarint())
 	f.first, f.lastTime = Instant(r.varint()), Instant(r.varint())
@@ -134,7 +134,7 @@ func (t *Track) decodeState(b []byte, known []*instrumentTrack) (rebuild bool, e
 	}
 	t.tally.largest = r.float()
 	if version == stateVersion {
-		t.tally.least = r.float()
+		t.tally.least, t.tally.most, t.tally.finest = r.float(), r.float(), r.float()
 	}
 	t.tally.first, t.tally.last = Instant(r.varint()), Instant(r.varint())
 	if version > 1 {

@@ -2,6 +2,7 @@ package engine
 
 import (
 	"fmt"
+	"math"
 	"slices"
 	"strings"
 )
@@ -164,7 +165,7 @@ var relaxations = []relaxation{
 		was := t.errors > NoErrors
 		t.errors = NoErrors
 		return was
-	}, "readings without calibrated instruments"},
+	}, "readings by instruments without calibrations or noise of their own"},
 	{"censored", func(t *traits) bool {
 		was := t.censored
 		t.censored = false
@@ -228,7 +229,8 @@ func (t *traits) words() string {
 	}{
 		{t.learned == 1, "a learned repeatability"}, {t.learned > 1, "several learned repeatabilities"},
 		{t.outliers, "outliers"}, {t.censored, "censored readings"}, {t.display, "a display coarser than the repeatability"},
-		{t.log, "scale LOG"}, {t.errors == OneBias, "a calibrated instrument"}, {t.errors == FurtherErrors, "instruments that share further errors"},
+		{t.log, "scale LOG"}, {t.errors == OneBias, "a calibrated instrument"}, {t.errors == FurtherErrors && !t.log, "instruments with relative, correlated or occasion parts, drift, shared references or several biases"},
+		{t.errors == FurtherErrors && t.log, "an instrument's own repeatability or calibration"},
 	} {
 		if w.has {
 			all = append(all, w.word)
@@ -289,7 +291,20 @@ func traitsOf(d *Declaration, renewals int, r *readAs) traits {
 		t.floored = t.floored || d.Repeatability.Floor > 0
 	}
 	t.errors = r.errors()
+	if t.log && r.noisy() {
+		t.errors = FurtherErrors
+	}
 	return t
+}
+
+// noisy tells whether an instrument states noise of its own, which is in the unit.
+func (r *readAs) noisy() bool {
+	for i := range r.instruments {
+		if n := r.instruments[i].declaration.Repeatability; n != (InstrumentRepeatability{}) {
+			return true
+		}
+	}
+	return false
 }
 
 // displays tells whether the display is coarser than the noise, as far as that is known.
@@ -312,6 +327,66 @@ func (u *instrumentUse) displays(d *Declaration) bool {
 		least = d.Repeatability.StandardDeviation
 	}
 	return resolution > least
+}
+
+const (
+	// maxApart bounds the distance of readings, and from the prior, that COUNTS and GRID can
+	// hold, in their smallest noise.
+	maxApart = 1e7
+	// maxCoarse bounds a resolution in units of the noise, as far as that is known beforehand.
+	maxCoarse = 300
+)
+
+// resolved returns why readings lie too far apart for their noise, or a display is too coarse
+// for it, to be held as counts or at points; "" if they don't.
+func (r *readAs) resolved(d *Declaration, a *tally) string {
+	least := math.Inf(1)
+	if a.finest > 0 {
+		least = a.finest
+	}
+	for i := range r.instruments {
+		u := r.instruments[i].declaration
+		noise := u.Repeatability.least(d)
+		if noise > 0 {
+			least = min(least, noise)
+		}
+		if noise > 0 && u.Resolution > maxCoarse*noise && d.Scale == ScaleLinear {
+			return fmt.Sprintf("the resolution %v is more than %d times the repeatability %v of the instrument, as far as that is known, which no method resolves; declare a repeatability, guess or floor of at least %v", u.Resolution, maxCoarse, noise, u.Resolution/maxCoarse)
+		}
+	}
+	if r.bareDirect {
+		if noise := (&InstrumentRepeatability{}).least(d); noise > 0 {
+			least = min(least, noise)
+		}
+	}
+	low, high := a.least, a.most
+	if p := d.levelPrior(); d.Scale == ScaleLinear && !p.Vague {
+		least = min(least, max(least, p.SD))
+		low, high = min(low, p.Mean), max(high, p.Mean)
+	}
+	if d.Scale == ScaleLinear && (high-low)/least > maxApart {
+		return fmt.Sprintf("readings and prior from %v to %v lie more than %v times the smallest random standard uncertainty %v apart, which can't be held together with displays, censored readings or outliers; check the value", low, high, float64(maxApart), least)
+	}
+	return ""
+}
+
+// least returns the smallest white noise of an instrument's reading without its own, as far
+// as it is known beforehand; 0 if it isn't.
+func (n *InstrumentRepeatability) least(d *Declaration) float64 {
+	r := &d.Repeatability
+	switch {
+	case n.Learned.Learned():
+		r = &n.Learned
+	case n.StandardDeviation > 0:
+		return n.StandardDeviation
+	}
+	switch {
+	case r.Form == RepeatabilityKnown:
+		return r.StandardDeviation
+	case r.Floor > 0:
+		return r.Floor
+	}
+	return r.Guess
 }
 
 // errors returns what the readings share.

@@ -120,3 +120,33 @@ func (s *Supported) readme() string {
 		[...]string{"none", "one bias", "any"}[s.Errors], yes(s.Displays), yes(s.Outliers), yes(s.Changes), s.Bound,
 	}, " | ") + " |"
 }
+
+// Readings that lie too far apart for their noise, and displays too coarse for it, are refused
+// in words that name the remedy; what can be held is not.
+func TestWhatPointsCannotHoldIsRefused(t *testing.T) {
+	known := Declaration{Repeatability: Repeatability{Form: RepeatabilityKnown, StandardDeviation: 0.5}}
+	shown := func(resolution float64) []instrumentUse {
+		return []instrumentUse{{declaration: &InstrumentDeclaration{Resolution: resolution}}}
+	}
+	for _, test := range []struct {
+		name        string
+		d           Declaration
+		least, most float64
+		instruments []instrumentUse
+		want        string // in the sentence; empty: none
+	}{
+		{"near", known, 5, 1e6, nil, ""},
+		{"far apart", known, 5, 1e10, nil, "check the value"},
+		{"coarse", known, 5, 6, shown(100), ""},
+		{"far too coarse", known, 5, 6, shown(1000), "declare a repeatability, guess or floor of at least 3.33"},
+		{"a floor far below the display", Declaration{Repeatability: Repeatability{Form: RepeatabilityLearnedReference, Floor: 1e-9}}, 5, 6, shown(1), "floor of at least 0.003"},
+	} {
+		t.Run(test.name, func(t *testing.T) {
+			r := readAs{instruments: test.instruments, bareDirect: len(test.instruments) == 0}
+			got := r.resolved(&test.d, &tally{least: test.least, most: test.most})
+			if (got == "") != (test.want == "") || !strings.Contains(got, test.want) {
+				t.Errorf("got %q, want %q in it", got, test.want)
+			}
+		})
+	}
+}

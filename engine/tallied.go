@@ -8,6 +8,7 @@ import "leadline.example/engine/posterior"
 type tallied struct {
 	counts posterior.Counts
 	points posterior.Points
+	laid   int            // readings on which the points were laid
 	bias   posterior.Bias // of the calibration under which all readings are
 	by     InstrumentNumber
 }
@@ -43,7 +44,8 @@ func (f *fold) addCounts(l *law, e *Row) word {
 	if sd > 0 {
 		samples = 1
 	}
-	if t.points.Worn() {
+	if n := t.counts.Count(); t.points.Worn() && n >= t.laid+t.laid/4 {
+		t.laid = n
 		t.points = t.counts.Points(m.prior, m.noise(), t.bias)
 	}
 	said := word{between: !y.Exact()}

@@ -103,7 +103,9 @@ type tally struct {
 	censored    int     // that don't say a value
 	averaged    int     // means of several indications
 	largest     float64 // magnitude
-	least       float64 // of what is to have a logarithm
+	least, most float64 // of the numbers that readings say
+	positive    float64 // the least of what is to have a logarithm
+	finest      float64 // the least uncertainty of a reading's own; 0: there is none
 	first, last Instant
 }
 
@@ -133,12 +135,16 @@ func (a *tally) note(r *Row) {
 		a.averaged++
 	}
 	a.largest = max(a.largest, math.Abs(r.Value), math.Abs(r.Upper))
-	least := r.Value
+	positive, most := r.Value, r.Value
 	if r.Extent == ExtentBetween {
-		least = r.Upper
+		positive, most = r.Upper, r.Upper
 	}
-	if a.count == 0 || least < a.least {
-		a.least = least
+	if a.count == 0 {
+		a.least, a.most, a.positive = r.Value, most, positive
+	}
+	a.least, a.most, a.positive = min(a.least, r.Value), max(a.most, most), min(a.positive, positive)
+	if u := r.Uncertainty; r.HasUncertainty && (a.finest == 0 || u < a.finest) {
+		a.finest = u
 	}
 }
 
@@ -202,10 +208,25 @@ func (t *Track) settle(budget int) (steps int, ok bool) {
 	return steps, ok
 }
 
-// growBudget is how many readings are folded again at once, in milliseconds.
+// cost is what folding a reading takes, about, in steps of a filter of few states.
+func (m *model) cost() int {
+	switch {
+	case m.form == gridForm && m.learns() != nil:
+		return 2_000
+	case m.form == gridForm:
+		return 50
+	case m.form == bankForm:
+		return 10
+	case m.form == countsForm:
+		return 4
+	}
+	return 1
+}
+
+// growBudget is how many readings are folded again at once, in milliseconds; at points, none.
 func (m *model) growBudget() int {
 	if m.form == gridForm {
-		return 16
+		return 0
 	}
 	return 256
 }
@@ -265,8 +286,8 @@ func (t *Track) insert(fresh []entry, budget int) (steps int, ok bool) {
 	mark := (at - t.markFrom) / markSpacing
 	mark = min(mark, len(t.marks)-1)
 	from := t.markFrom + mark*markSpacing
-	steps = len(t.rows) - from + len(fresh)
-	if steps > budget+len(fresh) {
+	steps = (len(t.rows) - from) * t.law.model.cost()
+	if steps > budget {
 		t.rows = append(t.rows, fresh...)
 		return 0, false
 	}

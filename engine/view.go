@@ -26,7 +26,42 @@ type View struct {
 	marks    []fold  // as in Track
 	markFrom int
 	steps    []RecordedStep
-	still    atomic.Pointer[Figures] // of a belief that time doesn't move, once asked for
+	// Of a belief that time doesn't move, once asked for:
+	still    atomic.Pointer[Figures]
+	stays    atomic.Pointer[posterior.Posterior]
+	foreseen atomic.Pointer[foreseen]
+}
+
+// foreseen is the distribution of an indication by an instrument.
+type foreseen struct {
+	by *Instrument
+	p  posterior.Posterior
+}
+
+// level is fold.level of v's own fold or another moment's.
+func (v *View) level(m *fold, at Instant) posterior.Posterior {
+	if m != &v.fold || !v.basis.still() {
+		return m.level(v.basis, at)
+	}
+	if p := v.stays.Load(); p != nil {
+		return *p
+	}
+	p := m.level(v.basis, at)
+	v.stays.Store(&p)
+	return p
+}
+
+// predictive is fold.predictive, likewise where no bias drifts.
+func (v *View) predictive(m *fold, at Instant, by *Instrument) posterior.Posterior {
+	if held := v.basis.form; m != &v.fold || !v.basis.still() || held != sumForm && held != countsForm {
+		return m.predictive(v.basis, at, by)
+	}
+	if f := v.foreseen.Load(); f != nil && f.by == by {
+		return f.p
+	}
+	f := &foreseen{by, m.predictive(v.basis, at, by)}
+	v.foreseen.Store(f)
+	return f.p
 }
 
 // Declared returns the quantity with the declaration that the belief rests on:
