@@ -58,7 +58,15 @@ func (k *Keeper) applyToTrack(r *Record) {
 		t.quantity = &q
 		k.rebase(t)
 	case KindReading:
-		t.add(&e)
+		switch c := t.law.model.cost(); {
+		case !t.law.model.dear():
+			t.add(&e)
+		case k.budget >= c:
+			k.budget -= c
+			t.add(&e)
+		default:
+			t.fresh = append(t.fresh, e)
+		}
 	case KindStep:
 		t.step(r)
 	}

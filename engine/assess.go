@@ -165,7 +165,7 @@ func (k *Keeper) Assess(ctx context.Context, id QuantityID, q AssessQuery) (page
 			return nil, false, ctx.Err()
 		}
 		if at > 0 {
-			a.Hindsight, a.HasHindsight = f.bank.hindsight(v.basis, all, a.Reading.Position)
+			a.Hindsight, a.HasHindsight = f.bank.hindsight(ctx, v.basis, all, a.Reading.Position)
 		}
 	}
 	return page, more, nil
@@ -199,7 +199,7 @@ func assess(ctx context.Context, l *law, all []entry, asked map[Position]*Assess
 
 // hindsight returns the probability that a reading is an outlier, given all: by Bayes'
 // rule from the density of all readings if it is one and if it isn't.
-func (b *bank) hindsight(m *model, all []entry, position Position) (p float64, ok bool) {
+func (b *bank) hindsight(ctx context.Context, m *model, all []entry, position Position) (p float64, ok bool) {
 	if len(b.nodes) == 0 {
 		return 0, false
 	}
@@ -209,7 +209,13 @@ func (b *bank) hindsight(m *model, all []entry, position Position) (p float64, o
 		given := *m
 		given.forced = &forced{position, outlier}
 		c := b.clone()
-		c.fill(&given, c.nodes, c.step, all)
+		for n := range c.nodes { // one by one, so that a caller who leaves isn't waited for
+			if ctx.Err() != nil {
+				return 0, false
+			}
+			one := bank{widened: c.widened, wide: c.wide}
+			one.fill(&given, c.nodes[n:n+1], c.step, all)
+		}
 		if outlier {
 			odds += c.logEvidence()
 		} else {

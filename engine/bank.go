@@ -30,7 +30,8 @@ type bank struct {
 	blank   bool // no reading taught r yet, of which the prior says nothing: the node stands for any r
 }
 
-// spread is what bounds r from below: whether readings that teach it differ.
+// spread is what bounds r from below: whether readings that teach it differ, on the scale of
+// the level.
 type spread struct {
 	count       int
 	least, most float64
@@ -158,8 +159,10 @@ func (b *bank) add(m *model, e *Row) word {
 	b.renew(m, e.Time)
 	switch {
 	case m.teaches(e):
-		b.learned.add(e.Value)
-		b.part.taught = true
+		if y := m.indication(e); !math.IsInf(y.Lower, 0) && !math.IsInf(y.Upper, 0) { // else it doesn't fall with r
+			b.learned.add(y.Lower/2 + y.Upper/2)
+			b.part.taught = true
+		}
 		if b.blank {
 			b.nodes, b.blank = nil, false
 		}
@@ -319,7 +322,13 @@ func (b *bank) predictive(m *model, at Instant, by *Instrument) posterior.Poster
 	if by != nil {
 		next.Instrument = by.Number
 	}
-	if b.blank && (by == nil || m.instrument(by.Number) != nil) && m.teaches(&next) {
+	if by != nil && m.instrument(by.Number) == nil {
+		if by.Declaration.Repeatability.Learned.Learned() {
+			return posterior.Posterior{} // of whose r nothing is known here
+		}
+		m = m.with(by)
+	}
+	if b.blank && m.teaches(&next) {
 		return posterior.Posterior{}
 	}
 	s := m.scale()

@@ -2,9 +2,17 @@ package engine
 
 import (
 	"math"
+	"slices"
 
 	"leadline.example/engine/posterior"
 )
+
+// with returns the model with one more instrument.
+func (m *model) with(i *Instrument) *model {
+	n := *m
+	n.instruments = append(slices.Clip(m.instruments), i)
+	return &n
+}
 
 // learns returns what is known beforehand of the repeatability that the model learns; nil
 // where it learns none.
@@ -283,6 +291,10 @@ func (b *bank) replace(m *model, rows []entry) {
 	for range 6 {
 		logs := b.logWeights()
 		top, half := summit(logs)
+		if width := half * b.step; !(width > 0) || math.IsInf(width, 0) || math.IsNaN(logs[top]) {
+			b.nodes, b.step = nil, 0 // numbers beyond the doubles
+			break
+		}
 		nodes, step := s.place(b.outline(logs), b.nodes[top].v, half*b.step)
 		b.fill(m, nodes, step, rows)
 		if tight := s.ruling; b.fits(&ruling{tight.spacing * 1.3, tight.spacing * 1.3, tight.depth, tight.shallow}) {
@@ -290,7 +302,7 @@ func (b *bank) replace(m *model, rows []entry) {
 		}
 	}
 	b.placed = len(rows)
-	if !s.proper && !b.covers(&s.ruling) {
+	if len(b.nodes) > 0 && !s.proper && !b.covers(&s.ruling) {
 		b.nodes, b.step = nil, 0
 	}
 }
@@ -306,9 +318,6 @@ func (b *bank) adrift() bool {
 func (b *bank) survey(m *model, s *scale) (nodes []node, step float64) {
 	const surveyed = 160
 	difference := (b.learned.most - b.learned.least) / 2
-	if m.declaration().Scale == ScaleLog {
-		difference = math.Log(b.learned.most/b.learned.least) / 2
-	}
 	low, high := math.Inf(1), math.Inf(-1)
 	for _, r := range [...]float64{difference, s.guess, 2 * s.floor} {
 		if r = max(r, s.floor*(1+1e-6)); r > 0 {

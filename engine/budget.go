@@ -83,8 +83,8 @@ func (k *Keeper) Budget(ctx context.Context, id QuantityID, q BudgetQuery) (Budg
 	}
 	v := t.View()
 	m := v.basis.joint()
-	if held := v.basis.form; held >= bankForm || held == sumForm && m.declaration().Repeatability.Learned() || m.declaration().StepDetection.Widen > 0 {
-		return Budget{}, refuse(NotSupported, "quantity", "quantity %q learns a repeatability, has outliers, censored readings or a display coarser than its repeatability, or is widened by steps, for which a budget is not supported; declare repeatability.standard_deviation and none of these", id)
+	if held := v.basis.form; held >= bankForm || held == sumForm && m.declaration().Repeatability.Learned() || m.declaration().StepDetection.Widen > 0 || m.declaration().Scale == ScaleLog {
+		return Budget{}, refuse(NotSupported, "quantity", "quantity %q learns a repeatability, has outliers, censored readings or a display coarser than its repeatability, is widened by steps, or is on a logarithmic scale, for which a budget is not supported; declare repeatability.standard_deviation and none of these", id)
 	}
 	at := q.Time
 	if !q.HasTime {

@@ -1,8 +1,6 @@
 package engine
 
 import (
-	"slices"
-
 	"leadline.example/engine/posterior"
 )
 
@@ -109,9 +107,7 @@ func (c *cells) foresee(m *model, at Instant, by *Instrument, r float64) posteri
 	if by != nil {
 		e.Instrument = by.Number
 		if m.instrument(by.Number) == nil {
-			with := *m
-			with.instruments = append(slices.Clip(m.instruments), by)
-			m = &with
+			m = m.with(by)
 		}
 	}
 	d := c.moved(m, at)

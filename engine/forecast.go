@@ -202,12 +202,13 @@ type weightedCourse struct {
 // normal parts, whose weights sum to 1.
 func (v *View) courses(at Instant) []weightedCourse {
 	m := v.basis
-	switch m.form {
-	case bankForm:
+	switch {
+	case v.fold.count == 0: // whatever the form, what is known is the prior
+	case m.form == bankForm:
 		return v.fold.bank.courses(m, at)
-	case gridForm:
+	case m.form == gridForm:
 		return slicesOf(v.fold.state(m, at), m.motion)
-	case walkForm:
+	case m.form == walkForm:
 		p := v.fold.state(m, at)
 		return []weightedCourse{{posterior.Course{Mean: p.Location(), SD: p.Scale(), Motion: m.motion}, 1}}
 	}

@@ -60,6 +60,8 @@ type use struct {
 	bare            int // of those readings without an uncertainty of their own
 	span            span
 	lowest, highest float64 // values
+	finest          float64 // the least uncertainty of a reading's own; 0: there is none
+	samples         uint32  // the most of a reading without
 }
 
 // addUse counts a reading by an instrument in uses sorted by number; isNew tells
@@ -75,6 +77,9 @@ func addUse(uses []use, r *Row) (all []use, isNew bool) {
 	}
 	if !r.HasUncertainty {
 		uses[n].bare++
+		uses[n].samples = max(uses[n].samples, r.Samples)
+	} else if uses[n].finest == 0 || r.Uncertainty < uses[n].finest {
+		uses[n].finest = r.Uncertainty
 	}
 	return uses, !found
 }
@@ -354,7 +359,9 @@ func (a *tally) asks(r *Row) bool {
 func (d *InstrumentDeclaration) asks(u *use, r *Row) bool {
 	m := d.MeasuringInterval
 	beyond := r.Extent == ExtentValue && (m.HasUpper && r.Value > m.Upper && u.highest <= m.Upper || m.HasLower && r.Value < m.Lower && u.lowest >= m.Lower)
-	return beyond || d.at(r.Time) != d.at(u.span.first)
+	finer := d.Resolution > 0 && (r.HasUncertainty && r.Uncertainty < d.Resolution && (u.finest == 0 || u.finest >= d.Resolution) ||
+		!r.HasUncertainty && r.Samples > max(1, u.samples))
+	return beyond || finer || d.at(r.Time) != d.at(u.span.first)
 }
 
 // modelOf returns the model that t's belief is to rest on.
@@ -372,7 +379,7 @@ func (k *Keeper) modelOf(t *Track) *model {
 func (a *tally) readAs(uses []use, of func(InstrumentNumber) *InstrumentDeclaration) readAs {
 	r := readAs{direct: a.direct > 0, bareDirect: a.bare > 0, censored: a.censored > 0, averaged: a.averaged > 0}
 	for _, u := range uses {
-		r.instruments = append(r.instruments, instrumentUse{of(u.number), u.lowest, u.highest, u.span.first, u.span.last})
+		r.instruments = append(r.instruments, instrumentUse{of(u.number), u.lowest, u.highest, u.span.first, u.span.last, u.finest, u.samples})
 	}
 	return r
 }

@@ -26,6 +26,8 @@ func (t *Track) appendUses(b []byte) []byte {
 		b = binary.AppendVarint(b, int64(u.span.last))
 		b = binary.BigEndian.AppendUint64(b, math.Float64bits(u.lowest))
 		b = binary.BigEndian.AppendUint64(b, math.Float64bits(u.highest))
+		b = binary.BigEndian.AppendUint64(b, math.Float64bits(u.finest))
+		b = binary.AppendUvarint(b, uint64(u.samples))
 	}
 	return b
 }
@@ -39,7 +41,7 @@ func (r *stateReader) uses(version byte, known []*instrumentTrack) (all []use, s
 		u.bare = int(r.uvarint())
 		u.span = span{count: int(r.uvarint()), first: Instant(r.varint()), last: Instant(r.varint())}
 		if version == stateVersion {
-			u.lowest, u.highest = r.float(), r.float()
+			u.lowest, u.highest, u.finest, u.samples = r.float(), r.float(), r.float(), uint32(r.uvarint())
 		}
 		if r.err == nil && (u.number == 0 || int(u.number) > len(known)) {
 			r.err = fmt.Errorf("instrument number %d, of which there are %d", u.number, len(known))

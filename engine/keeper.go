@@ -100,8 +100,8 @@ type Keeper struct {
 	working     bool     // the rebuilder has a job
 	sweep       sweeper
 	laws        map[modelcheck.Settings]modelcheck.Law
-	received    Instant // when the latest record was
-	due         []dueStep
+	received    Instant  // when the latest record was
+	due         []*Track // with steps to be recorded
 	failed      error
 	warmed      uint64 // no number of interest, see warm
 

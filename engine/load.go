@@ -229,6 +229,8 @@ func (k *Keeper) recount(t *Track) error {
 	}
 	if t.job == nil {
 		t.rest(k.modelOf(t))
+	} else {
+		k.startJob(t, k.modelOf(t)) // which was for readings as they had not been counted yet
 	}
 	return nil
 }
@@ -267,7 +269,9 @@ func (k *Keeper) present() error {
 	k.decidedTo = Position(k.position.Load())
 	k.due = nil
 	for _, t := range k.byNumber {
-		t.decidedStep = t.lastStep()
+		if t.decidedStep = t.lastStep(); len(t.unrecorded) > 0 {
+			k.due = append(k.due, t)
+		}
 	}
 	k.dueSteps(k.byNumber)
 	k.tracks.Store(nil)

@@ -144,7 +144,17 @@ func (m *model) sameRenewals(n *model) bool {
 // extends tells whether the fold of any readings under m is also their fold
 // under n.
 func (m *model) extends(n *model) bool {
-	return m.form == n.form && m.declaration().SameBelief(*n.declaration()) && m.sameRenewals(n) && m.within(n)
+	return m.form == n.form && m.declaration().SameBelief(*n.declaration()) && m.sameRenewals(n) && m.within(n) && m.learnsAs(n)
+}
+
+// learnsAs tells whether m and n learn the same repeatability.
+func (m *model) learnsAs(n *model) bool {
+	a, b := m.learns(), n.learns()
+	if a == nil || b == nil {
+		return a == b
+	}
+	ofQuantity := func(m *model, r *Repeatability) bool { return r == &m.declaration().Repeatability }
+	return *a == *b && ofQuantity(m, a) == ofQuantity(n, b)
 }
 
 // instrument returns the instrument with that number, nil if no reading names it.

@@ -138,10 +138,6 @@ func (q *Quantity) checkRenewal(r *Renewal) error {
 	case r.HasSlope && d.Dynamics.Form != DynamicsLinearTrend:
 		return refuse(InvalidField, "slope", "slope is given, but the quantity's dynamics have none; leave it out")
 	}
-	log := Declaration{Prior: r.Prior, Scale: d.Scale}
-	if err := log.checkScale(); err != nil {
-		return err
-	}
 	return d.checkRenewals([]Renewal{*r})
 }
 
@@ -149,6 +145,12 @@ func (q *Quantity) checkRenewal(r *Renewal) error {
 func (d *Declaration) checkRenewals(renewals []Renewal) error {
 	if len(renewals) == 0 {
 		return nil
+	}
+	for i := range renewals {
+		log := Declaration{Prior: renewals[i].Prior, Scale: d.Scale}
+		if err := log.checkScale(); err != nil {
+			return err
+		}
 	}
 	r := &renewals[0]
 	switch {

@@ -5,6 +5,7 @@ import (
 	"errors"
 	"fmt"
 	"math"
+	"slices"
 
 	"leadline.example/engine/modelcheck"
 	"leadline.example/engine/posterior"
@@ -21,6 +22,11 @@ func (t *Track) appendState(b []byte) []byte {
 	b = binary.AppendVarint(b, int64(t.tally.first))
 	b = binary.AppendVarint(b, int64(t.tally.last))
 	b = appendSteps(t.appendUses(b), t.steps)
+	var pending []RecordedStep
+	for _, e := range slices.Concat(t.unrecorded, t.fold.detected) {
+		pending = append(pending, RecordedStep{StepEvent: e})
+	}
+	b = appendSteps(b, pending)
 	if t.job != nil {
 		return b
 	}
@@ -142,6 +148,9 @@ func (t *Track) decodeState(b []byte, known []*instrumentTrack) (rebuild bool, e
 	}
 	if version == stateVersion {
 		t.steps = r.steps()
+		for _, s := range r.steps() {
+			t.unrecorded = append(t.unrecorded, s.StepEvent)
+		}
 	}
 	if version < stateVersion { // which say nothing of how readings agreed with the model
 		t.recount = true

@@ -38,23 +38,18 @@ func (t *Track) lastStep() Instant {
 func (t *Track) step(r *Record) {
 	all := slices.Clip(t.steps)
 	t.steps = append(all[max(0, len(all)-maxListedSteps+1):], RecordedStep{*r.Step, r.Position, r.ReceiveTime})
+	t.unrecorded = slices.DeleteFunc(t.unrecorded, func(e StepEvent) bool { return e.Time <= r.Step.Time })
 }
 
-// dueStep is a step that is to be recorded.
-type dueStep struct {
-	track *Track
-	event StepEvent
-}
-
-// dueSteps has what the tracks' folds newly found recorded in a group to come. A fold that
-// is replayed finds it again; the record, once durable, says that it was published.
+// dueSteps has what the tracks' folds newly found recorded in a group to come. What isn't
+// recorded yet is part of a track's state, so that a crash in between loses nothing.
 func (k *Keeper) dueSteps(tracks []*Track) {
 	for _, t := range tracks {
 		if t.job != nil {
 			continue // its fold is to be replaced
 		}
-		for _, event := range t.fold.detected {
-			k.due = append(k.due, dueStep{t, event})
+		if t.unrecorded = append(t.unrecorded, t.fold.detected...); len(t.fold.detected) > 0 {
+			k.due = append(k.due, t)
 		}
 		t.fold.detected = nil
 	}
@@ -63,8 +58,10 @@ func (k *Keeper) dueSteps(tracks []*Track) {
 	}
 	all := k.due
 	record := &command{done: func() {}, action: func(w *work) error {
-		for i := range all {
-			k.recordStep(w, all[i].track, &all[i].event)
+		for _, t := range all {
+			for i := range t.unrecorded {
+				k.recordStep(w, t, &t.unrecorded[i])
+			}
 		}
 		return nil
 	}}
@@ -79,7 +76,8 @@ func (k *Keeper) recordStep(w *work, t *Track, event *StepEvent) {
 	if event.Time <= t.decidedStep {
 		return
 	}
-	t.decidedStep = event.Time
+	recorded := *event
+	event, t.decidedStep = &recorded, event.Time
 	k.decidedTo++
 	*w.next(declarationBytes) = Record{
 		Kind: KindStep, ReceiveTime: k.received, Number: t.number, Revision: t.rules.revision, Step: event,

@@ -252,6 +252,8 @@ type instrumentUse struct {
 	declaration     *InstrumentDeclaration
 	lowest, highest float64 // values
 	first, last     Instant
+	finest          float64 // the least uncertainty of a reading's own; 0: there is none
+	samples         uint32  // the most of a reading without
 }
 
 // readAs is what a quantity's readings amount to for the choice of a method.
@@ -325,6 +327,10 @@ func (u *instrumentUse) displays(d *Declaration) bool {
 		least = d.Repeatability.Floor
 	default:
 		least = d.Repeatability.StandardDeviation
+	}
+	least /= math.Sqrt(float64(max(1, u.samples)))
+	if u.finest > 0 {
+		least = min(least, u.finest)
 	}
 	return resolution > least
 }

@@ -93,8 +93,9 @@ func (k *Keeper) sweepPiece(g *Group, budget, due int) {
 			continue // neither a row nor anything else since the last sweep
 		}
 		if t.position > t.saved {
-			budget -= stateBytes
-			g.Checkpoint = append(g.Checkpoint, t.checkpoint())
+			e := t.checkpoint()
+			budget -= stateBytes + len(e.State)
+			g.Checkpoint = append(g.Checkpoint, e)
 		}
 		s.rows, s.chunk = t.rowsBetween(s.from, s.through), 0
 		for i := range s.rows {

@@ -74,9 +74,10 @@ func (t *tallied) predictive(m *model, at Instant, by *Instrument) posterior.Pos
 	if by != nil {
 		e.Instrument = by.Number
 		if m.instrument(by.Number) == nil {
-			with := *m
-			with.instruments = []*Instrument{by}
-			m = &with
+			if by.Declaration.Repeatability.Learned.Learned() {
+				return posterior.Posterior{} // of whose r nothing is known here
+			}
+			m = m.with(by)
 		}
 	}
 	if t == nil {

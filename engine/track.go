@@ -55,6 +55,7 @@ type Track struct {
 
 	history       []entry        // in a rebuild: all readings in canonical order
 	steps         []RecordedStep // published, oldest first; appended to only
+	unrecorded    []StepEvent    // detected, and not yet durable as records
 	decidedStep   Instant        // of the newest one decided to be
 	fresh         []entry        // late ones of the group being folded
 	touched       bool           // in the group being folded
@@ -193,6 +194,11 @@ func (t *Track) settle(budget int) (steps int, ok bool) {
 		return 0, true
 	}
 	first := fresh[0].Position
+	if t.law.model.dear() && len(fresh)*t.law.model.cost() > budget {
+		t.rows = append(t.rows, fresh...)
+		t.foldedTo = first - 1
+		return 0, false
+	}
 	if !slices.IsSortedFunc(fresh, entry.compare) {
 		slices.SortFunc(fresh, entry.compare)
 	}
@@ -212,16 +218,17 @@ func (t *Track) settle(budget int) (steps int, ok bool) {
 func (m *model) cost() int {
 	switch {
 	case m.form == gridForm && m.learns() != nil:
-		return 2_000
+		return 250
 	case m.form == gridForm:
-		return 50
-	case m.form == bankForm:
 		return 10
-	case m.form == countsForm:
-		return 4
+	case m.form == bankForm:
+		return 5
 	}
 	return 1
 }
+
+// dear tells whether a reading takes so long that not any number can be folded at once.
+func (m *model) dear() bool { return m.form == gridForm }
 
 // growBudget is how many readings are folded again at once, in milliseconds; at points, none.
 func (m *model) growBudget() int {
