@@ -129,7 +129,7 @@ func (t *Track) refold(m *model) bool {
 	t.rest(m)
 	t.reset()
 	t.fresh = rows
-	t.settle(len(rows))
+	t.settle(len(rows) * m.cost())
 	return true
 }
 

@@ -6,6 +6,7 @@ import (
 	"math"
 	"strings"
 	"testing"
+	"time"
 
 	"leadline.example/engine"
 )
@@ -115,5 +116,20 @@ func TestImproperInstrumentIsRefused(t *testing.T) {
 	var refused *engine.Error
 	if !errors.As(err, &refused) || refused.Field != "repeatability.learned" {
 		t.Errorf("declared with %v", err)
+	}
+}
+
+// The first reading of its kind takes the belief to another method with all readings before it.
+func TestFirstCensoredReadingKeepsTheOthers(t *testing.T) {
+	r := newRig(t, engine.Options{})
+	d := plain()
+	d.Dynamics = engine.Dynamics{Form: engine.DynamicsRandomWalk, StandardDeviation: 0.1, Per: time.Minute}
+	r.declare("pressure", d)
+	for i := range 12 {
+		r.try(t, []tried{{"a value", engine.Reading{Quantity: "pressure", Value: 5 + 0.1*float64(i)}, ""}})
+	}
+	r.try(t, []tried{{"above", engine.Reading{Quantity: "pressure", Extent: engine.ExtentAbove, Value: 5.5}, ""}})
+	if b := r.settled("pressure", engine.BeliefQuery{Now: seconds(20)}); b.ReadingCount != 13 || b.Method != engine.MethodGrid {
+		t.Errorf("%d readings by %s, want 13 by GRID", b.ReadingCount, b.Method)
 	}
 }
