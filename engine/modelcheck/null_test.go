@@ -114,6 +114,49 @@ func TestScoresAreBounded(t *testing.T) {
 	}
 }
 
+// Probabilities that rounding put outside of [0, 1] count as its ends.
+func TestRoundedProbabilitiesHaveScores(t *testing.T) {
+	const over = 1.0000000000000002
+	for _, test := range []struct{ below, above, want float64 }{
+		{-1e-18, 1, -38},
+		{1, -1e-18, 38},
+		{-1e-18, over, -38},
+		{over, -1e-18, 38},
+		{over, 0, 38},
+		{over, 0.5, 0},
+		{over, 1.0000000001, 38}, // contradicts itself, and is a score all the same
+		{math.Inf(-1), math.Inf(1), -38},
+	} {
+		if got := modelcheck.ScoreOf(test.below, test.above); got != (modelcheck.Score{Lower: test.want, Upper: test.want}) {
+			t.Errorf("%v below and %v above: %+v, want %v", test.below, test.above, got, test.want)
+		}
+	}
+	if got := modelcheck.ScoreBetween(-1e-18, over, over, -1e-18); got != (modelcheck.Score{Lower: -38, Upper: 38}) {
+		t.Errorf("an interval that has all: %+v", got)
+	}
+}
+
+// What isn't a number gives no score, on whichever side it is, and counts as no reading.
+func TestNaNGivesNoScore(t *testing.T) {
+	nan := math.NaN()
+	law := modelcheck.LawOf(modelcheck.Settings{})
+	for name, z := range map[string]modelcheck.Score{
+		"below":            modelcheck.ScoreOf(nan, 0.3),
+		"above":            modelcheck.ScoreOf(0.3, nan),
+		"value":            modelcheck.ScoreAt(nan),
+		"below the lower":  modelcheck.ScoreBetween(nan, 0.9, 0.2, 0.8),
+		"from the lower":   modelcheck.ScoreBetween(0.1, nan, 0.2, 0.8),
+		"up to the higher": modelcheck.ScoreBetween(0.1, 0.9, nan, 0.8),
+		"above the higher": modelcheck.ScoreBetween(0.1, 0.9, 0.2, nan),
+	} {
+		var tally modelcheck.Tally
+		tally.Add(&law, z, 1)
+		if r := tally.Report(&law); z.Lower <= z.Upper || r.Total.Readings != 0 {
+			t.Errorf("%s: score %+v, %d readings", name, z, r.Total.Readings)
+		}
+	}
+}
+
 // The bounds of the central intervals have the probabilities that they are for.
 func TestCentralIntervals(t *testing.T) {
 	near(t, "beyond the quartiles", math.Erfc(modelcheck.Quartile/math.Sqrt2), 0.5, 1e-15)

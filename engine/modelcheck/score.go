@@ -29,13 +29,14 @@ const (
 
 // ScoreAt returns the score of a value z standard deviations above the mean of a normal predictive.
 func ScoreAt(z float64) Score {
-	z = math.Max(-farthest, math.Min(farthest, z))
+	z = bounded(z)
 	return Score{z, z}
 }
 
 // ScoreOf returns the score of a value y: below = P(Y < y) and above = P(Y > y) under its
 // predictive, which sum to 1. The smaller one counts, so that no digit of a tail is lost
-// down to 1e-300; relative error 1e-14. NaN gives a score that isn't one, see Tally.Add.
+// down to 1e-300; relative error 1e-14. What lies outside of [0, 1], by rounding, counts as the
+// nearer end. If either is NaN the score isn't one, see Tally.Add.
 func ScoreOf(below, above float64) Score {
 	z := normalScore(below, above)
 	return Score{z, z}
@@ -55,11 +56,17 @@ func ScoreBetween(below, from, upTo, above float64) Score {
 
 // normalScore returns the z with P(Z < z) = below and P(Z > z) = above.
 func normalScore(below, above float64) float64 {
-	if below <= above {
-		return math.Max(mathext.NormalQuantile(below), -farthest)
+	switch {
+	case math.IsNaN(below) || math.IsNaN(above):
+		return math.NaN()
+	case below <= above:
+		return bounded(mathext.NormalQuantile(max(0, min(below, 1))))
 	}
-	return math.Min(-mathext.NormalQuantile(above), farthest)
+	return bounded(-mathext.NormalQuantile(max(0, min(above, 1))))
 }
+
+// bounded returns z, or the end of the range of scores beyond which it lies; NaN for NaN.
+func bounded(z float64) float64 { return max(-farthest, min(z, farthest)) }
 
 // Exact tells whether the score is that of a value.
 func (z Score) Exact() bool { return z.Lower == z.Upper }
