@@ -32,14 +32,23 @@ func BenchmarkAdd(b *testing.B) {
 }
 
 func BenchmarkReport(b *testing.B) {
-	law := modelcheck.LawOf(modelcheck.Settings{})
-	var tally modelcheck.Tally
-	for i := range int64(64) {
-		tally.Add(&law, modelcheck.ScoreAt(float64(i%5-2)), i*hour)
-	}
-	b.ReportAllocs()
-	for b.Loop() {
-		tally.Report(&law)
+	for _, window := range []int{16, 32, 64, 256} {
+		law := modelcheck.LawOf(modelcheck.Settings{Window: window})
+		for name, score := range map[string]func(i int64) float64{
+			"scattered": func(i int64) float64 { return float64(i%5 - 2) },
+			"alike":     func(int64) float64 { return 1 },
+		} {
+			var tally modelcheck.Tally
+			for i := range int64(window) {
+				tally.Add(&law, modelcheck.ScoreAt(score(i)), i*hour)
+			}
+			b.Run(fmt.Sprintf("%s/window=%d", name, window), func(b *testing.B) {
+				b.ReportAllocs()
+				for b.Loop() {
+					tally.Report(&law)
+				}
+			})
+		}
 	}
 }
 

@@ -103,8 +103,10 @@ func (t *Tally) Steps() int { return int(t.steps) }
 // Outlying returns how many readings had a tail below OutlyingProbability.
 func (t *Tally) Outlying() int { return int(t.outlying) }
 
-// Report tells what the tally says under the law it was kept by: some 30 us, most of it for
-// the probability of the serial correlation.
+// Report tells what the tally says under the law it was kept by: some 30 us with the default window,
+// nearly all of it for the probability of the serial correlation. That takes 0.2 ms with a window of 16,
+// and with one of 16 to 256 it takes 0.3 to 1.3 ms at correlations of 0.9 to 0.98, and 10 ms at 0.996. It
+// isn't kept, as it would make every state longer.
 func (t *Tally) Report(l *Law) Report {
 	r := Report{
 		Tests: t.tests(l), Raised: int(t.raised),
@@ -137,7 +139,8 @@ func (t *Tally) Report(l *Law) Report {
 	return r
 }
 
-// Result tells what Report does, but costs next to nothing unless several tests object.
+// Result tells what Report does, but costs next to nothing unless several tests object; then
+// as much as Report.
 func (t *Tally) Result(l *Law) Result {
 	if t.objections.count() > 1 {
 		return t.gravest(t.tests(l))
