@@ -2,6 +2,7 @@ package persist
 
 import (
 	"encoding/hex"
+	"math"
 	"strings"
 	"testing"
 
@@ -29,7 +30,7 @@ func drawRepeatability(t *rapid.T) engine.Repeatability {
 func drawModel(t *rapid.T, d *engine.Declaration) {
 	d.Outliers = engine.Outliers{Probability: drawFloat(t), Inflation: drawFloat(t)}
 	d.Scale = engine.Scale(rapid.IntRange(0, 1).Draw(t, "scale"))
-	d.ModelCheck = engine.ModelCheck{Window: rapid.Int().Draw(t, "window"), ObjectionsPerYear: drawFloat(t)}
+	d.ModelCheck = engine.ModelCheck{Window: rapid.IntRange(0, math.MaxUint16).Draw(t, "window"), ObjectionsPerYear: drawFloat(t)}
 	d.StepDetection = engine.StepDetection{FalseAlarmInterval: drawFloat(t), Widen: drawFloat(t)}
 }
 

@@ -115,6 +115,8 @@ func TestUnknownFormsAreRefused(t *testing.T) {
 		{"a later scale", about(engine.KindDeclaration, fieldDeclaration, appendUint(nil, declarationScale, uint64(engine.ScaleLog)+1))},
 		{"outliers that are no message", about(engine.KindDeclaration, fieldDeclaration, alwaysText(nil, declarationOutliers, "\xff"))},
 		{"a model check that is no message", about(engine.KindDeclaration, fieldDeclaration, alwaysText(nil, declarationModelCheck, "\xff"))},
+		{"a window beyond 16 bits", about(engine.KindDeclaration, fieldDeclaration,
+			appendMessage(nil, declarationModelCheck, func(b []byte) []byte { return appendUint(b, checkWindow, math.MaxUint16+1) }))},
 		{"a step detection that is no message", about(engine.KindDeclaration, fieldDeclaration, alwaysText(nil, declarationStepDetection, "\xff"))},
 		{"a repeatability learned by a later form", about(engine.KindInstrument, fieldDevice, appendInstrument(nil, learnedBy(engine.RepeatabilityLearnedReference+1)))},
 		{"a slope that is no message", about(engine.KindDeclaration, fieldDeclaration,

@@ -78,6 +78,7 @@ func decodeModelCheck(body []byte, c *engine.ModelCheck) bool {
 	for m.next() {
 		switch m.tag {
 		case varint(checkWindow):
+			m.bad = m.bad || m.number > math.MaxUint16
 			c.Window = int(m.number)
 		case fixed(checkObjections):
 			c.ObjectionsPerYear = math.Float64frombits(m.number)
