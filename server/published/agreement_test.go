@@ -93,7 +93,25 @@ func series(b *leadlinev1.Belief) map[string]float64 {
 	if b.LastReadingTime != nil {
 		want["leadline_last_reading_timestamp_seconds"+id+"}"] = seconds(b.GetLastReadingTime().AsTime())
 	}
+	checkSeries(want, id, b.GetModelCheck())
 	return want
+}
+
+// checkSeries adds what the page has to say of a belief's model check; id is the beginning of
+// the labels.
+func checkSeries(want map[string]float64, id string, c *leadlinev1.ModelCheck) {
+	want["leadline_model_check"+id+`,result="`+c.GetResult().String()+`"}`] = 1
+	want["leadline_steps_total"+id+"}"] = float64(c.GetStepCount())
+	want["leadline_outlying_readings_total"+id+"}"] = float64(c.GetOutlyingCount())
+	if c.Coverage_50 != nil {
+		want["leadline_predictive_coverage"+id+`,coverage_probability="0.5"}`] = c.GetCoverage_50()
+	}
+	if c.Coverage_95 != nil {
+		want["leadline_predictive_coverage"+id+`,coverage_probability="0.95"}`] = c.GetCoverage_95()
+	}
+	if c.MeanSquaredNormalScore != nil {
+		want["leadline_normal_score_mean_square"+id+"}"] = c.GetMeanSquaredNormalScore()
+	}
 }
 
 // seconds is the double next to a time's exact seconds since 1970.
@@ -171,7 +189,7 @@ func TestPageAndBothProtocolsAgree(t *testing.T) {
 					t.Errorf("%s: page has %s %s, belief says %v", step.name, name, got, x)
 				}
 			}
-			if got := p.of(q.id); got != len(want)+q.constantSeries || got > 16 {
+			if got := p.of(q.id); got != len(want)+q.constantSeries || got > 21 {
 				t.Errorf("%s: page has %d series of %s, belief and declaration make %d", step.name, got, q.id, len(want)+q.constantSeries)
 			}
 			s.checkNamed(b, p)
