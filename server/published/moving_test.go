@@ -212,6 +212,7 @@ func (s *service) checkEverything(stage string) {
 	s.t.Helper()
 	for _, q := range movingQuantities {
 		s.beliefText(q.id, time.Time{}) // until nothing is being rebuilt
+		s.settle(q.id, q.declaration)
 	}
 	p := s.scrape()
 	for _, q := range movingQuantities {
