@@ -145,13 +145,29 @@ func (s *service) wantSameProblem(r *refusedRequest, err error) {
 	}
 }
 
+// declareUnsupported declares quantities and instruments each of which can be believed, but not
+// all of them together.
+func (s *service) declareUnsupported() {
+	s.t.Helper()
+	s.declareInstrument("display", `{"unit":"Cel","resolution":0.1}`)
+	s.declareInstrument("calibrated-display", `{"unit":"Cel","resolution":0.1,"calibrations":[`+calibrated+`}]}`)
+	s.declareInstrument("drifting-display", `{"unit":"Cel","resolution":0.5,"calibrations":[`+calibrated+`,"drift_standard_deviation":0.1,"drift_per":"86400s"}]}`)
+	s.declareInstrument("own-repeatability", `{"unit":"Cel","repeatability":{"learned":{"guess":0.1,"worth":4}}}`)
+	const guessed = `"repeatability":{"learned":{"guess":0.1,"worth":4}}`
+	s.declare("learned", `{"unit":"Cel","repeatability":{"learned":{}}}`)
+	s.declare("walk", `{"unit":"Cel",`+guessed+`,"dynamics":{"random_walk":{"standard_deviation":1,"per":"3600s"}}}`)
+	s.declare("guessed", `{"unit":"Cel",`+guessed+`}`)
+	s.declare("fine", `{"unit":"Cel","repeatability":{"standard_deviation":0.05}}`)
+	s.postAll([]posted{{Quantity: "guessed", Value: 0.4}, {Quantity: "guessed", Value: 0.6}})
+}
+
 // Readings, renewals and questions that instruments and time forbid, by every way.
 func TestRefusedByInstrumentsOrTime(t *testing.T) {
 	s := startRefusingInstruments(t)
 	now := s.clock.Now()
 	s.declareInstrument("depth-gauge", `{"unit":"mm","repeatability":{"standard_deviation":0.1}}`)
 	s.declareInstrument("bare-probe", `{"unit":"Cel"}`)
-	s.declare("learned", `{"unit":"Cel","repeatability":{"learned":{}}}`)
+	s.declareUnsupported()
 	before := s.snapshotAll(now)
 	by := func(quantity, instrument string, after time.Duration) posted {
 		return posted{Quantity: quantity, Value: 0.5, Instrument: instrument, Time: rfc3339(now.Add(after))}
@@ -160,15 +176,19 @@ func TestRefusedByInstrumentsOrTime(t *testing.T) {
 		name    string
 		reading posted
 		reason  engine.Reason
+		says    string
 	}{
-		{"a retired instrument", by("store-1/air", "probe-3", 0), engine.InstrumentRetired},
-		{"a retired instrument, late", by("store-1/air", "probe-3", -time.Hour), engine.InstrumentRetired},
-		{"an unknown instrument", by("store-1/air", "probe-8", 0), engine.UnknownInstrument},
-		{"an instrument of another unit", by("store-1/air", "depth-gauge", 0), engine.UnitMismatch},
-		{"nobody's repeatability", by("compressor-2/bearing", "bare-probe", 0), engine.NoRepeatability},
-		{"a learned repeatability", by("learned", "probe-1", 0), engine.NotSupported},
-		{"an hour ahead, as by local time", by("store-1/air", "probe-1", time.Hour), engine.TimeInFuture},
-		{"before the prior", by("compressor-2/bearing", "probe-1", -5*time.Hour), engine.BeforePrior},
+		{"a retired instrument", by("store-1/air", "probe-3", 0), engine.InstrumentRetired, "retired"},
+		{"a retired instrument, late", by("store-1/air", "probe-3", -time.Hour), engine.InstrumentRetired, "retired"},
+		{"an unknown instrument", by("store-1/air", "probe-8", 0), engine.UnknownInstrument, "probe-8"},
+		{"an instrument of another unit", by("store-1/air", "depth-gauge", 0), engine.UnitMismatch, `"mm"`},
+		{"nobody's repeatability", by("compressor-2/bearing", "bare-probe", 0), engine.NoRepeatability, "repeatability"},
+		{"a repeatability learned from a display alone", by("learned", "display", 0), engine.NotSupported, "the display alone"},
+		{"a walk that learns its repeatability from a calibrated display", by("walk", "calibrated-display", 0), engine.NotSupported, "repeatability.learned.floor of at least the resolution"},
+		{"a second learned repeatability", by("guessed", "own-repeatability", 0), engine.NotSupported, "one learned repeatability"},
+		{"a coarse display that drifts", by("fine", "drifting-display", 0), engine.NotSupported, "one instrument whose calibrations state bias and uncertainty alone"},
+		{"an hour ahead, as by local time", by("store-1/air", "probe-1", time.Hour), engine.TimeInFuture, "time"},
+		{"before the prior", by("compressor-2/bearing", "probe-1", -5*time.Hour), engine.BeforePrior, "prior"},
 	} {
 		t.Run(tt.name, func(t *testing.T) {
 			u := s.under(t)
@@ -178,6 +198,9 @@ func TestRefusedByInstrumentsOrTime(t *testing.T) {
 					t.Errorf("%v, want %s", r, tt.reason)
 				}
 				checkSentence(t, r.GetDetail(), "")
+				if !strings.Contains(r.GetDetail(), tt.says) {
+					t.Errorf("%q doesn't speak of %s", r.GetDetail(), tt.says)
+				}
 			}
 		})
 	}
