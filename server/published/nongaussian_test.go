@@ -6,6 +6,7 @@ import (
 	"testing"
 	"time"
 
+	"leadline.example/engine"
 	leadlinev1 "leadline.example/proto/leadline/v1"
 )
 
@@ -150,10 +151,11 @@ func TestOneSidedReadingsTruncateThePrior(t *testing.T) {
 
 // One reading of a display of resolution 1, nothing known before: its error is a normal one and one
 // uniform over the step, so the variance is r^2 + 1/12, at any r (Sheppard 1898, from memory; exact
-// here as the level is flat). At r = 0 that is the 0.29 of JCGM 100:2008, F.2.2.1.
+// here as the level is flat). At r = 0 that is the 0.29 of JCGM 100:2008, F.2.2.1. A display more than
+// 300 times as coarse as r is refused.
 func TestDisplayHasTheVarianceOfSheppard(t *testing.T) {
 	s := start(t)
-	for _, r := range []float64{0.001, 0.02, 0.1, 0.3, 0.5, 0.9, 1, 2} {
+	for _, r := range []float64{0.0034, 0.02, 0.1, 0.3, 0.5, 0.9, 1, 2} {
 		id := "display-" + number(r)
 		s.call("PUT", "/v1/instruments/"+id, `{"unit":"","resolution":1,"repeatability":{"standard_deviation":`+number(r)+`}}`).ok()
 		s.declare(id, `{"unit":""}`)
@@ -161,10 +163,17 @@ func TestDisplayHasTheVarianceOfSheppard(t *testing.T) {
 		b := s.belief(id, time.Time{})
 		wantNear(t, id+": mean", b.GetMean(), 20, 1e-9)
 		wantNear(t, id+": standard deviation", b.GetStandardDeviation(), math.Sqrt(r*r+1.0/12), 1e-6)
-		if r == 0.001 {
+		if r == 0.0034 {
 			wantPrinted(t, "JCGM 100:2008, F.2.2.1", b.GetStandardDeviation(), "0.29")
 		}
 	}
+	s.declareInstrument("display-0.0033", `{"unit":"","resolution":1,"repeatability":{"standard_deviation":0.0033}}`)
+	s.declare("display-0.0033", `{"unit":""}`)
+	refused := s.postHTTP([]posted{{Quantity: "display-0.0033", Value: 20, Instrument: "display-0.0033"}}).GetResults()[0]
+	if refused.GetReason() != string(engine.NotSupported) {
+		t.Errorf("a display 303 times as coarse as its noise: %v", refused)
+	}
+	checkSentence(t, refused.GetDetail(), "resolution")
 }
 
 // A hundred equal readings of a display: each says that the level lies within the step, but for what
