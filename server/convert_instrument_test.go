@@ -20,7 +20,7 @@ var instrumentBodies = []string{
 	`{"repeatability":{"between_occasions":0.02},"measuring_interval":{"upper":40}}`,
 	`{"repeatability":{"correlated":{"standard_deviation":0.3,"correlation_time":"0.5s"}},"measuring_interval":{"lower":-40}}`,
 	`{"repeatability":{"learned":{"guess":0.02,"worth":4,"floor":0.005},"between_occasions":0.02}}`,
-	`{"repeatability":{"learned":{}},"resolution":0.1}`,
+	`{"repeatability":{"learned":{"floor":0.1}},"resolution":0.1}`,
 	`{"calibrations":[{"valid_from":"1700-01-01T00:00:00Z","bias":-3,"bias_standard_uncertainty":1e-9}]}`,
 }
 
