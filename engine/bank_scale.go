@@ -153,8 +153,8 @@ func (m *model) ruling() ruling {
 	return ruling{spacing: 0.25, worn: 0.5, depth: 29, shallow: 20}
 }
 
-// maxNodes bounds the nodes of a bank.
-const maxNodes = 240
+// maxNodes bounds the nodes of a bank, farthest |ln r|, so that r stays a double.
+const maxNodes, farthest = 240, 600
 
 // fromPrior places nodes on a proper prior, which has one maximum.
 func (s *scale) fromPrior() (nodes []node, step float64) {
@@ -214,7 +214,7 @@ func (s *scale) place(log func(v float64) float64, top, half float64) (nodes []n
 func (s *scale) reach(log func(v float64) float64, top, step, depth float64) int {
 	floor := log(top) - depth
 	n := 1
-	for ; n < 16*maxNodes && log(top+float64(n)*step) > floor; n++ {
+	for ; n < 16*maxNodes && math.Abs(top+float64(n)*step) < farthest && log(top+float64(n)*step) > floor; n++ {
 	}
 	return n
 }
