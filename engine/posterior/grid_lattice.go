@@ -94,7 +94,8 @@ func (p parabola) at(x float64) float64 {
 	return max(lowest, p.value+t*(p.slope+t*p.curvature/2))
 }
 
-// end returns how l goes on beyond its last point on a side. It never grows outwards.
+// end returns how l goes on beyond its last point on a side. Unless that is open it falls
+// outwards, at least by 1 in the width of l, so that it has an integral.
 func (l *lattice) end(s side) parabola {
 	n := len(l.logs)
 	last, apart := n-1, min(2, (n-1)/2)
@@ -113,7 +114,7 @@ func (l *lattice) end(s side) parabola {
 	one, two := l.logs[last-int(s)*apart], l.logs[last-2*int(s)*apart]
 	h := float64(apart) * l.step
 	p.curvature = max(lowest, min(0, (p.value-2*one+two)/h/h))
-	outward := min((p.value-one)/h+p.curvature*h/2, 0)
+	outward := min((p.value-one)/h+p.curvature*h/2, -1/(float64(n)*l.step))
 	p.slope = float64(s) * outward
 	return p
 }

@@ -93,7 +93,7 @@ func (l *lattice) differences() lattice {
 	lo, hi := mean-reach, mean+reach
 	for range 20 {
 		b.lay(lo, hi, &p)
-		if !p.wider(&b, b.highest(), &lo, &hi) {
+		if !b.wider(b.highest(), &lo, &hi) {
 			break
 		}
 	}

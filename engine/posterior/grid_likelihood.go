@@ -249,3 +249,30 @@ func (k *likelihood) beyond(l *lattice) []float64 {
 	lo, hi := l.x(0), l.x(len(l.logs)-1)
 	return slices.DeleteFunc(k.marks(l, make([]float64, 0, 48)), func(x float64) bool { return x >= lo && x <= hi })
 }
+
+// hidden returns the highest value of the product f that the points of b don't show:
+// about the ends of the indication, where it isn't too deep and what lies between the
+// points is off it by more than 0.05; -Inf if there is none. For a sharp part of the
+// noise may stand between points at which there is but a wide part's smooth product,
+// which resolves can't tell. Points half a standard deviation apart show all.
+func (k *likelihood) hidden(b *lattice, f func(x float64) float64, top float64) float64 {
+	highest := math.Inf(-1)
+	if b.step <= k.parts[0].sd/2 {
+		return highest
+	}
+	lo, hi := b.x(0), b.x(len(b.logs)-1)
+	for _, p := range k.parts {
+		for _, e := range k.ends() {
+			for z := -3.0; z <= 3; z++ {
+				x := e + z*p.sd
+				if !(x >= lo && x <= hi) {
+					continue
+				}
+				if v := f(x); v > top-depthServed && math.Abs(b.at(x)-v) > 0.05 {
+					highest = max(highest, v)
+				}
+			}
+		}
+	}
+	return highest
+}

@@ -25,9 +25,8 @@ func (l *lattice) times(k *likelihood) lattice {
 // serves tells whether the product of l and the likelihood on l's points is all there
 // is of it, and resolved.
 func (product *lattice) serves(l *lattice, k *likelihood) bool {
-	v := product.logs
 	top := product.highest()
-	if !product.open[0] && v[0] > top-depthServed || !product.open[1] && v[len(v)-1] > top-depthServed || l.open != product.open {
+	if product.goesOn(lower, top) || product.goesOn(upper, top) || l.open != product.open {
 		return false
 	}
 	for _, x := range k.beyond(l) {
@@ -35,12 +34,24 @@ func (product *lattice) serves(l *lattice, k *likelihood) bool {
 			return false
 		}
 	}
-	if product.resolves(1, top) {
+	hidden := k.hidden(product, func(x float64) float64 { return l.at(x) + k.log(x) }, top)
+	if math.IsInf(hidden, -1) && product.resolves(1, top) {
 		return true
 	}
 	// More points would be cut down again.
-	i, j := product.served(top, depthServed)
+	i, j := product.served(max(top, hidden), depthServed)
 	return j-i > mostPoints/2
+}
+
+// goesOn tells whether there may be more beyond the last point on a side that isn't open:
+// the density there isn't deep yet, or rises outwards to what may be another maximum.
+func (l *lattice) goesOn(s side, top float64) bool {
+	v := l.logs
+	last, inner, open := len(v)-1, max(0, len(v)-3), l.open[1]
+	if s == lower {
+		last, inner, open = 0, min(2, len(v)-1), l.open[0]
+	}
+	return !open && (v[last] > top-depthServed || v[last] > top-depthKept && v[last] > v[inner])
 }
 
 // openAt tells whether x lies beyond the points on a side that is open.
@@ -71,14 +82,17 @@ func (l *lattice) place(k *likelihood, open [2]bool, known []float64) lattice {
 		b.lay(lo, hi, &p)
 		top := b.highest()
 		i, j := p.within(&b, top)
-		if j-i >= fewestPoints && !p.wider(&b, top, &lo, &hi) {
+		if j-i >= fewestPoints && !b.wider(top, &lo, &hi) {
 			break
 		}
 		if j-i < fewestPoints {
 			lo, hi = max(lo, b.x(i-1)), min(hi, b.x(j))
 		}
 	}
-	for len(b.logs) <= mostPoints && !b.resolves(1, b.highest()) {
+	for len(b.logs) <= mostPoints {
+		if top := b.highest(); b.resolves(1, top) && math.IsInf(k.hidden(&b, p.f, top), -1) {
+			break
+		}
 		b.halve(&p)
 	}
 	if l.mean != nil {
@@ -150,13 +164,13 @@ func (p *placed) within(b *lattice, top float64) (i, j int) {
 	return i, j
 }
 
-// wider moves lo and hi outwards where what lies there isn't deep yet.
-func (p *placed) wider(b *lattice, top float64, lo, hi *float64) bool {
+// wider moves lo and hi outwards where b goes on.
+func (b *lattice) wider(top float64, lo, hi *float64) bool {
 	width, moved := *hi-*lo, false
-	if !p.open[0] && b.logs[0] > top-depthServed {
+	if b.goesOn(lower, top) {
 		*lo, moved = *lo-width/2, true
 	}
-	if !p.open[1] && b.logs[len(b.logs)-1] > top-depthServed {
+	if b.goesOn(upper, top) {
 		*hi, moved = *hi+width/2, true
 	}
 	return moved

@@ -185,10 +185,14 @@ func (d *density) logTail(x float64, s side) float64 {
 	}
 	// The cell's two parts, made to sum to it.
 	before, after := d.inside(i, 0, f), d.inside(i, f, 1)
-	if s == lower {
-		return math.Log(d.low[i] + (d.low[i+1]-d.low[i])*(before/(before+after)))
+	whole := before + after
+	if whole == 0 { // a valley so deep that nothing of it is left
+		before, after, whole = 1, 1, 2
 	}
-	return math.Log(d.high[i+1] + (d.high[i]-d.high[i+1])*(after/(before+after)))
+	if s == lower {
+		return math.Log(d.low[i] + (d.low[i+1]-d.low[i])*(before/whole))
+	}
+	return math.Log(d.high[i+1] + (d.high[i]-d.high[i+1])*(after/whole))
 }
 
 func (d *density) tail(x float64, s side) float64 {

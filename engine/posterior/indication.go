@@ -14,5 +14,6 @@ func (y Indication) Exact() bool { return y.Lower == y.Upper }
 
 // Spread is the white noise of one reading: normal with standard deviation SD, or,
 // with OutlierProbability, SD times Inflation (the contaminated normal of Tukey 1960,
-// from memory).
+// from memory). SD is finite and above 0, OutlierProbability lies in [0, 1), Inflation
+// above 1 and up to 100, which is as much as a Grid resolves.
 type Spread struct{ SD, OutlierProbability, Inflation float64 }
