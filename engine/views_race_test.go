@@ -45,7 +45,7 @@ func TestQueriesShareAViewSafely(t *testing.T) {
 			var all sync.WaitGroup
 			for range 3 {
 				all.Go(func() {
-					for i := range 10 {
+					for i := range 3 {
 						b, err := r.keeper.Belief(context.Background(), "residual", engine.BeliefQuery{Now: seconds(float64(40 + i))})
 						if err != nil || b.Method != test.method {
 							t.Errorf("%s: %v", b.Method, err)
