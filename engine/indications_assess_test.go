@@ -28,7 +28,9 @@ func TestAssessmentsEqualIntegration(t *testing.T) {
 			for _, s := range seeds(max(1, *indicationCases/10)) {
 				rng := rand.New(rand.NewPCG(s, uint64(n)+500))
 				c := randomIndicated(rng, of)
-				c.renewals = nil
+				if len(c.renewals) > 0 {
+					continue // with which the oracle's evidence isn't of one life
+				}
 				r := newRig(t, engine.Options{})
 				c.send(r, rng)
 				r.settled(gapID, engine.BeliefQuery{Now: c.last})

@@ -152,7 +152,7 @@ func (w *drawn) declareGauge() {
 	rng := w.rng
 	i := engine.InstrumentDeclaration{Unit: "mm"}
 	if w.displays() {
-		i.Resolution = w.d * w.unit(0)
+		i.Resolution = w.d
 		if w.log {
 			i.Resolution = w.d * w.unit(w.base)
 		}
@@ -163,7 +163,7 @@ func (w *drawn) declareGauge() {
 	if w.combination.by == byCalibrated {
 		u := w.scale * math.Exp(uniformly(rng, -1.2, 0.4))
 		calibrations := 1 + rng.IntN(3)
-		if *indicationCases == 0 && w.form == engine.DynamicsRandomWalk {
+		if *indicationCases == 0 {
 			calibrations = 1
 		}
 		for k := range calibrations {

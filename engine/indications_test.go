@@ -56,6 +56,9 @@ func (o *off) widen(p off) {
 func (c *indicated) check(r *rig, at engine.Instant) (off, error) {
 	b := r.settled(gapID, engine.BeliefQuery{HasTime: true, Time: at})
 	o := c.exact()
+	if b.Level.Form() == posterior.FormNone && o.unpublished() {
+		return off{}, nil
+	}
 	e := o.belief(at)
 	if e == nil || b.Level.Form() == posterior.FormNone {
 		if (e == nil) != (b.Level.Form() == posterior.FormNone) {
@@ -68,6 +71,20 @@ func (c *indicated) check(r *rig, at engine.Instant) (off, error) {
 		err = fmt.Errorf("%s: %w", b.Method, err)
 	}
 	return worst, err
+}
+
+// unpublished tells whether fewer than two readings bound a repeatability of which nothing was known.
+func (o *dense) unpublished() bool {
+	if _, known := o.learned(); known.Form != engine.RepeatabilityLearnedReference {
+		return false
+	}
+	n := 0
+	for i := range o.readings {
+		if y := o.says(i); y.sd == 0 && !math.IsInf(y.lower, 0) && !math.IsInf(y.upper, 0) {
+			n++
+		}
+	}
+	return n < 2
 }
 
 func (m *mixed) compare(level posterior.Posterior, o *dense) (worst off, err error) {
