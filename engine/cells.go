@@ -126,3 +126,15 @@ func (c *cells) foresee(m *model, at Instant, by *Instrument, r float64) posteri
 	}
 	return d.grid.Predictive(noise)
 }
+
+func (c *cells) shared(m *model, at Instant, _ float64) (s sharedBelief) {
+	if c.calibration < 0 {
+		return s
+	}
+	i := m.instrument(c.by)
+	mean, sd := c.moved(m, at).grid.BiasBelief()
+	s.biases = []BiasBelief{{
+		Instrument: i.ID, ValidFrom: i.Declaration.Calibrations[c.calibration].ValidFrom, Mean: mean, StandardDeviation: sd,
+	}}
+	return s
+}
