@@ -296,7 +296,7 @@ type Outliers struct {
 	// Probability that a reading is an outlier, above 0 and at most 0.5.
 	Probability *float64 `protobuf:"fixed64,1,opt,name=probability,proto3,oneof" json:"probability,omitempty"`
 	// Inflation: the standard deviation of an outlier's random error divided by that
-	// of another reading, above 1 and at most 1e6.
+	// of another reading, above 1 and at most 100.
 	Inflation     *float64 `protobuf:"fixed64,2,opt,name=inflation,proto3,oneof" json:"inflation,omitempty"`
 	unknownFields protoimpl.UnknownFields
 	sizeCache     protoimpl.SizeCache
