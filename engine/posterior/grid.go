@@ -16,9 +16,9 @@ import "math"
 // beyond to 0.4. What values without outliers leave is held exactly.
 //
 // Outliers may be inflated up to 100 times: the peak of a reading and its pedestal are
-// then both held, and the mean, the standard deviation and the probability that a reading
-// was an outlier are good to 1e-3. From 300 on, the most points there are can't
-// resolve both, and beyond 1000 what is published is wrong.
+// then both held, normal scores to 0.01, the mean, the standard deviation and the
+// probability that a reading was an outlier to 1e-3. From 300 on the most points there
+// are don't resolve both, and what is published is wrong.
 //
 // A flat level is exact: as long as readings bound it on one side only, or not at
 // all, the density is improper and nothing is published.
@@ -150,9 +150,9 @@ func (g *Grid) Update(y Indication, noise Spread) Evidence {
 // outlying returns the probability that the reading just taken in was an outlier; its
 // likelihood is seen from an origin less a shift.
 func (l *lattice) outlying(k *likelihood, shift float64) float64 {
-	stride, widest, top := 1, k.stride(l.step), l.highest()
-	for 2*stride <= widest && l.resolves(2*stride, top) {
-		stride *= 2
+	stride, top := k.stride(l.step), l.highest()
+	for stride > 1 && !l.resolves(stride, top) {
+		stride /= 2
 	}
 	var m moments
 	for i := 0; i < len(l.logs); i += stride {

@@ -122,7 +122,7 @@ func (c *gridCase) checkMixture(t *testing.T, name string) gap {
 		evidence += last.Log
 	}
 	d := compare(e, g.Posterior())
-	if !(d.z <= 0.01 && d.mean <= 1e-3 && d.sd <= 2e-3) {
+	if !(d.z <= 0.01 && d.mean <= 1e-3 && d.sd <= 1e-3) {
 		t.Errorf("%s: off by %+v: %+v", name, d, *c)
 	}
 	within(t, name+" evidence", evidence, e.evidence, math.Max(3e-3, 1e-8*math.Abs(e.evidence)))
@@ -170,7 +170,9 @@ func TestGridFindsSharpReadingsWithOutliers(t *testing.T) {
 	for _, c := range []struct{ sd, inflation, y, p float64 }{
 		{300, 100, 8, 0.01}, {300, 50, 8, 0.01}, {300, 30, 8, 0.01}, {230, 30, 8, 0.01}, {450, 30, 8, 0.01},
 		{300, 20, 8, 0.01}, {200, 20, 4, 0.01}, {100, 10, 4, 0.01}, {150, 15, 4, 0.05}, {1000, 100, 24, 0.01},
-		{230, 100, 8, 1e-4}, {1000, 200, 32, 0.01}, {1000, 200, 36, 0.1}, {1e4, 200, 301, 0.1},
+		{230, 100, 8, 1e-4}, {1000, 200, 32, 0.01},
+		// more than is promised, but what points laid anew are too far apart for at first
+		{1e4, 300, 298.2, 0.1}, {1e5, 300, 312, 0.01},
 	} {
 		noise := posterior.Spread{SD: 1, OutlierProbability: c.p, Inflation: c.inflation}
 		for _, y := range []posterior.Indication{posterior.Exactly(c.y), {Lower: c.y - 0.1, Upper: c.y + 0.1}} {
