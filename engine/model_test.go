@@ -374,7 +374,11 @@ func (j *journey) list() {
 // A service that is asked, fed late and repeated readings, redeclared, killed
 // and restarted at random equals the naive one at every step.
 func TestKeeperEqualsNaiveModel(t *testing.T) {
-	for _, s := range seeds(30) {
+	journeys := uint64(30)
+	if testing.Short() {
+		journeys = 12
+	}
+	for _, s := range seeds(journeys) {
 		t.Run(fmt.Sprint("seed=", s), func(t *testing.T) {
 			rng := rand.New(rand.NewPCG(s, 0))
 			j := &journey{
