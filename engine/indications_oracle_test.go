@@ -271,9 +271,9 @@ func (o *dense) belief(at engine.Instant) *mixed {
 	if !ok {
 		return nil
 	}
-	panels := 7
+	panels := max(7, int((hi-lo)/0.8)) // where few readings bound r, its density falls slowly
 	if o.fineness > 1 {
-		panels = 16
+		panels *= 2
 	}
 	return o.integrate(known, at, lo, hi, panels)
 }
