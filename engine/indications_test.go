@@ -99,8 +99,10 @@ func (m *mixed) compare(level posterior.Posterior, o *dense) (worst off, err err
 			worst.z = d
 		}
 		bound := 0.03
-		if o.by != nil && len(o.by.Calibrations) > 1 && math.Abs(z) > 4.75 {
-			bound = 0.1 // as SupportTable says of several calibrations beyond 1e-6
+		if o.by != nil && len(o.by.Calibrations) > 1 { // as SupportTable says of several
+			if bound = 0.06; math.Abs(z) > 4.1 {
+				bound = 0.3
+			}
 		}
 		if !(math.Abs(got-want) <= bound) && err == nil {
 			err = fmt.Errorf("P(level < %v) has z = %v, want %v", x, got, want)
