@@ -100,7 +100,7 @@ func (m *mixed) compare(level posterior.Posterior, o *dense) (worst off, err err
 		}
 		bound := 0.03
 		if o.by != nil && len(o.by.Calibrations) > 1 { // as SupportTable says of several
-			if bound = 0.06; math.Abs(z) > 4.1 {
+			if bound = 0.1; math.Abs(z) > 4.1 {
 				bound = 0.3
 			}
 		}

@@ -64,7 +64,7 @@ var SupportTable = []Supported{
 	{
 		Method: MethodGrid, Dynamics: []DynamicsForm{DynamicsConstant, DynamicsRandomWalk},
 		Learned: 1, Instruments: true, Errors: OneBias, Displays: true, Outliers: true, Changes: true, Floor: true,
-		Bound:        "likewise under one calibration; under several z to 0.06 for p from 2e-5, to 0.3 beyond; a walk with known r only",
+		Bound:        "likewise under one calibration; under several z to 0.1 for p from 2e-5, to 0.3 beyond; a walk with known r only",
 		reservations: func(t *traits) bool { return t.dynamics == DynamicsRandomWalk && t.learned > 0 },
 	},
 }
