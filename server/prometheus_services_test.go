@@ -192,7 +192,26 @@ func expected(belief map[string]any) stored {
 		}
 		want["leadline_verdict{"+id+",verdict="+verdict+"}"] = 1
 	}
+	if check, ok := belief["model_check"].(map[string]any); ok {
+		want.check(id, check)
+	}
 	return want
+}
+
+// check adds what a page must carry of a model check.
+func (want stored) check(id string, check map[string]any) {
+	want["leadline_model_check{"+id+",result="+check["result"].(string)+"}"] = 1
+	want["leadline_steps_total{"+id+"}"] = check["step_count"].(float64)
+	want["leadline_outlying_readings_total{"+id+"}"] = check["outlying_count"].(float64)
+	for field, name := range map[string]string{
+		"coverage_50":               "leadline_predictive_coverage{coverage_probability=0.5," + id + "}",
+		"coverage_95":               "leadline_predictive_coverage{coverage_probability=0.95," + id + "}",
+		"mean_squared_normal_score": "leadline_normal_score_mean_square{" + id + "}",
+	} {
+		if v, ok := check[field].(float64); ok {
+			want[name] = v
+		}
+	}
 }
 
 // compare checks every series of the belief's quantity that depends on time.
