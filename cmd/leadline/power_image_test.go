@@ -178,6 +178,10 @@ func readImage(path string) (map[identity]entry, error) {
 		case engine.KindDeclaration:
 			names[rec.Number] = rec.Quantity
 		case engine.KindInstrument: // those of the plan, which name no reading
+		case engine.KindStep: // found in the readings
+			if names[rec.Number] == "" {
+				return fmt.Errorf("a step of quantity number %d, which isn't declared", rec.Number)
+			}
 		case engine.KindReading:
 			key := identity{names[rec.Number], rec.Reading.ID}
 			if _, ok := found[key]; ok {
